@@ -1,0 +1,2 @@
+// Package fittest holds data of known truth for testing estimators.
+package fittest
