@@ -1,0 +1,56 @@
+package data
+
+// An Experiment is one log, ready for a fit: plain numbers in stretches of constant period.
+type Experiment struct {
+	File   string
+	SHA256 string // of the file's bytes as given (compressed, if it came so), in hex
+	Rows   int    // rows of numbers in the file
+	Used   int    // rows in Segments
+
+	// Period is the time between rows in s: the median step of the stamps, or [log] sample_period where there
+	// are no stamps.
+	Period   float64
+	Segments []Segment
+	Flaws    []Flaw   // in the order of the file's reading: time base, then column by column
+	Columns  []string // names as in the header, or c1, c2, …
+}
+
+// A Segment is a stretch of a log without a gap: rows Period apart, all numbers finite.
+type Segment struct {
+	Line  int     // 1-based line in the file of its first row
+	Start float64 // time stamp of its first row, s; 0-based row times Period where there are no stamps
+
+	// U[k] acts from the moment of Y[k] on, until Y[k+1]: already shifted where the rig file says input_row =
+	// "before". Equal length.
+	U, Y []float64
+	R, D []float64 // reference and dither of the same rows as Y and U; nil when not logged
+}
+
+// A Flaw is something in a log that a fit should not take silently.
+type Flaw struct {
+	Name   string // one of the Flaw... names
+	Column string // name in the header; empty where the flaw is the log's as a whole
+	Count  int    // rows (or places) concerned
+	Line   int    // 1-based line of the first place; 0 where it has none
+	Detail string // figures with units, one line
+	Effect string // what reading did about it, or what it means for a fit; one line
+}
+
+// Names of flaws.
+const (
+	FlawJitter       = "jitter"              // stamps off the grid by more than rounding
+	FlawGap          = "gap"                 // a step of the stamps longer than a period
+	FlawRepeat       = "repeated stamp"      // a stamp equal to the one before
+	FlawBackward     = "backward stamp"      // a stamp before the one before
+	FlawMissing      = "missing value"       // an empty cell, NaN, infinity
+	FlawCut          = "cut last line"       // the last line ends within a row
+	FlawStuck        = "stuck sensor"        // the output repeats one value far longer than usual
+	FlawSpike        = "spike"               // one sample far off its neighbours
+	FlawSaturated    = "saturated input"     // input flat at a limit
+	FlawBeyondLimits = "input beyond limits" // input past [limits] input: logged before its limits
+	FlawQuantised    = "quantisation"        // values lie on a grid of a step
+	FlawTrip         = "trip"                // output left [limits] output
+	FlawDrift        = "drift"               // the mean moves through the log
+	FlawShort        = "short segment"       // too few rows between two gaps
+	FlawConstant     = "constant column"     // a column of one value
+)
