@@ -1,0 +1,2 @@
+// Package design turns a model with its uncertainty into two loops with proof.
+package design

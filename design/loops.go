@@ -1,0 +1,423 @@
+package design
+
+import (
+	"bytes"
+	"encoding/json"
+	"errors"
+	"fmt"
+	"io"
+	"math"
+)
+
+// LoopsSchema is the schema name of loops.json.
+const LoopsSchema = "steadyrig/loops/1"
+
+// LawText is the control law in words, as loops.json carries it.
+const LawText = "v = outer(z) (prefilter(z) (r - y0) - (y - y0)) held within outer_limits; " +
+	"u = u0 + inner(z) (v - (y - y0)) held within input_limits"
+
+// Verdicts of a design.
+const (
+	Sound   = "sound"
+	Weak    = "weak"
+	Refused = "refused"
+)
+
+// Loops is loops.json: two loops about an operating point, what physics says about them, their margins and the
+// promise over the plants that the data allow. Times in s, angular frequencies in rad/s, input and output in the
+// units of the log.
+type Loops struct {
+	Schema         string         `json:"schema"`
+	Tool           string         `json:"tool,omitempty"`
+	Rig            string         `json:"rig"`
+	Made           string         `json:"made,omitempty"`
+	ModelSHA256    string         `json:"model_sha256"`
+	SamplePeriod   float64        `json:"sample_period"`
+	ComputeDelay   float64        `json:"compute_delay"` // from sampling the output to the input's change
+	OperatingPoint OperatingPoint `json:"operating_point"`
+	Law            string         `json:"law"`
+	InnerForm      string         `json:"inner_form,omitempty"` // the form in words, e.g. "lead with roll-off"
+	OuterForm      string         `json:"outer_form,omitempty"`
+	Inner          *Block         `json:"inner"`                // nil only in a design refused before tuning
+	Outer          *Block         `json:"outer"`                // nil: no outer loop, v = r - y0
+	Prefilter      *Block         `json:"prefilter"`            // nil: 1
+	InputLimits    *[2]float64    `json:"input_limits"`         // absolute; nil: none
+	InputRate      float64        `json:"input_rate,omitempty"` // units of input per second; 0: no limit
+	OuterLimits    *[2]float64    `json:"outer_limits"`         // deviation of v; nil: none
+	Bounds         []Bound        `json:"bounds"`
+	Margins        *LoopMargins   `json:"margins"`
+	Forms          []FormResult   `json:"forms,omitempty"` // what each step of simplicity costs
+	Promise        *Promise       `json:"promise"`
+	FirstClosure   *FirstClosure  `json:"first_closure"`
+	Verdict        string         `json:"verdict"`
+	Warnings       []string       `json:"warnings"`
+}
+
+// OperatingPoint is the pair about which the loops work; deviations count from it.
+type OperatingPoint struct {
+	Input  float64 `json:"input"`
+	Output float64 `json:"output"`
+}
+
+// Block is one controller block. Continuous is what it was designed as (nil where only coefficients were given),
+// Discrete what runs.
+type Block struct {
+	Continuous *Rational `json:"continuous,omitempty"` // descending powers of s
+	Discrete   Rational  `json:"discrete"`             // powers of z^-1, Denominator[0] == 1
+}
+
+// Rational is a ratio of polynomials; the order of its powers is said where it is used.
+type Rational struct {
+	Numerator   []float64 `json:"numerator"`
+	Denominator []float64 `json:"denominator"`
+}
+
+// Bound is one limit that physics sets, whatever the controller.
+type Bound struct {
+	Name     string      `json:"name"`
+	Value    float64     `json:"value"`                 // at the nominal model
+	Interval *[2]float64 `json:"interval_95,omitempty"` // over the plants that the data allow
+	Limit    string      `json:"limit"`                 // "least": no design gets below Value; "most": none gets above
+	Unit     string      `json:"unit,omitempty"`
+	Asked    *float64    `json:"asked"`     // nil: the spec asks nothing here
+	OK       bool        `json:"reachable"` // judged at the unfavourable end of the interval
+	Source   string      `json:"source"`
+	Advice   string      `json:"advice,omitempty"` // nearest spec within reach and what to change, when not reachable
+}
+
+// LoopMargins are the margins of the sampled loop at three places.
+type LoopMargins struct {
+	PlantInput *Margins `json:"plant_input"` // both loops closed, loop gain G K1 (1 + K2)
+	InnerAlone *Margins `json:"inner_alone"` // what is left when the outer loop is clamped or off
+	OuterBreak *Margins `json:"outer_break"` // loop gain K2 G K1 / (1 + G K1); looks better than the loop is
+}
+
+// Margins of one loop gain. GainUp and GainDown are factors.
+type Margins struct {
+	GainUp            *float64 `json:"gain_up"`   // nil: any increase
+	GainDown          *float64 `json:"gain_down"` // nil: any reduction
+	PhaseDeg          *float64 `json:"phase_deg"` // nil: the gain never crosses one
+	Delay             *float64 `json:"delay"`     // s; nil: any
+	Crossover         float64  `json:"crossover"` // rad/s
+	PeakSensitivity   float64  `json:"peak_sensitivity"`
+	PeakSensitivityAt float64  `json:"peak_sensitivity_at"` // rad/s
+	PeakComplementary float64  `json:"peak_complementary"`
+	Stable            bool     `json:"stable"`
+}
+
+// FormResult says what one controller form reaches on the tuning plants.
+type FormResult struct {
+	Loop            string  `json:"loop"` // "inner" or "outer"
+	Form            string  `json:"form"`
+	Order           int     `json:"order"`
+	PeakSensitivity float64 `json:"peak_sensitivity"` // worst tuning plant; inner alone, or both loops for an outer form
+	InputNoise      float64 `json:"input_noise"`      // worst tuning plant, standard deviation
+	Demand          float64 `json:"demand,omitempty"` // outer forms: worst ratio of reached to asked; below 1 meets the spec
+	Chosen          bool    `json:"chosen"`
+}
+
+// Promise is the count over fresh plants drawn from the model, none of which was used for tuning.
+type Promise struct {
+	Plants        int          `json:"plants"`
+	Stable        int          `json:"stable"`
+	MeetSpec      int          `json:"meet_spec"`
+	LowerBound    float64      `json:"lower_bound_95"` // one-sided Clopper-Pearson bound on the share that meets the spec
+	Confidence    float64      `json:"confidence"`     // 0.95, or 0.975 for a second attempt
+	Attempts      int          `json:"attempts"`
+	Overshoot     Spread       `json:"overshoot"`
+	Settling      Spread       `json:"settling"` // s
+	PeakS         Spread       `json:"peak_sensitivity"`
+	InputNoise    Spread       `json:"input_noise"`         // standard deviation
+	KickPeak      *Spread      `json:"kick_peak,omitempty"` // output units
+	LargestStep   float64      `json:"largest_step"`        // output units
+	Recoverable   float64      `json:"recoverable_offset"`  // output units
+	UnstablePoles []PoleCount  `json:"unstable_poles"`
+	Misses        []MissReason `json:"misses"`
+}
+
+// Spread is a figure at the nominal model and at the worst of the drawn plants that stay stable.
+type Spread struct {
+	Nominal float64 `json:"nominal"`
+	Worst   float64 `json:"worst"`
+}
+
+// PoleCount says how many of the drawn plants have so many unstable poles.
+type PoleCount struct {
+	Unstable int `json:"unstable"`
+	Plants   int `json:"plants"`
+}
+
+// MissReason counts the drawn plants that miss one part of the spec. A plant may miss several.
+type MissReason struct {
+	What   string  `json:"what"`
+	Plants int     `json:"plants"`
+	Worst  float64 `json:"worst"`
+	Asked  float64 `json:"asked"`
+}
+
+// FirstClosure is how to close the loops for the first time.
+type FirstClosure struct {
+	Order      []string   `json:"order"`
+	ExpectedSD SignalPair `json:"expected_sd"`
+	Trip       TripLevels `json:"trip"`
+	Cautions   []string   `json:"cautions"`
+}
+
+// SignalPair is one figure for the input and one for the output.
+type SignalPair struct {
+	Input  float64 `json:"input"`
+	Output float64 `json:"output"`
+}
+
+// TripLevels are absolute levels; nil where nothing bounds the signal.
+type TripLevels struct {
+	Input  *[2]float64 `json:"input"`
+	Output *[2]float64 `json:"output"`
+}
+
+// IsOne reports whether the block passes its input unchanged.
+func (b *Block) IsOne() bool {
+	return b == nil || b.Continuous == nil && len(b.Discrete.Numerator) == 1 && len(b.Discrete.Denominator) == 1 &&
+		b.Discrete.Numerator[0] == 1 && b.Discrete.Denominator[0] == 1
+}
+
+// MarshalJSON writes a block that passes its input unchanged as the number 1.
+func (b Block) MarshalJSON() ([]byte, error) {
+	if b.IsOne() {
+		return []byte("1"), nil
+	}
+	type plain Block
+	return json.Marshal(plain(b))
+}
+
+// UnmarshalJSON reads an object, or the number 1.
+func (b *Block) UnmarshalJSON(text []byte) error {
+	if string(bytes.TrimSpace(text)) == "1" {
+		*b = Block{Discrete: Rational{[]float64{1}, []float64{1}}}
+		return nil
+	}
+	type plain Block
+	return json.Unmarshal(text, (*plain)(b))
+}
+
+// LoopsError says what is wrong in a loops file and what to do about it, in one line.
+type LoopsError struct {
+	File, Field string
+	Err         error
+}
+
+func (e *LoopsError) Error() string {
+	if e.Field == "" {
+		return fmt.Sprintf("reading %q: %v", e.File, e.Err)
+	}
+	return fmt.Sprintf("reading %q: field %q: %v", e.File, e.Field, e.Err)
+}
+
+func (e *LoopsError) Unwrap() error { return e.Err }
+
+// ReadLoops reads loops.json, the tool's or the user's own. A block may be given by its continuous form alone: it
+// is then mapped by Tustin's rule and a warning in the result says so. The file's name serves the messages.
+func ReadLoops(r io.Reader, name string) (*Loops, error) {
+	text, err := io.ReadAll(r)
+	if err != nil {
+		return nil, &LoopsError{File: name, Err: err}
+	}
+	l := new(Loops)
+	if err := json.Unmarshal(text, l); err != nil {
+		return nil, &LoopsError{File: name, Err: jsonFault(text, err)}
+	}
+	if l.Prefilter.IsOne() {
+		l.Prefilter = nil
+	}
+	if l.Verdict == Refused && l.Inner == nil {
+		return nil, &LoopsError{name, "inner", errors.New("this design was refused before any loop was tuned; there is nothing to run or verify")}
+	}
+	if err := l.complete(name); err != nil {
+		return nil, err
+	}
+	return l, nil
+}
+
+// jsonFault turns the decoder's errors into one line with a place.
+func jsonFault(text []byte, err error) error {
+	var syntax *json.SyntaxError
+	var kind *json.UnmarshalTypeError
+	at := int64(-1)
+	switch {
+	case len(bytes.TrimSpace(text)) == 0:
+		return errors.New("the file is empty; give a loops.json as `design` writes it")
+	case errors.As(err, &syntax):
+		at = syntax.Offset
+	case errors.As(err, &kind):
+		at = kind.Offset
+		err = fmt.Errorf("field %q wants %v, the file has %v", kind.Field, kind.Type, kind.Value)
+	}
+	if at < 0 || at > int64(len(text)) {
+		return err
+	}
+	line := 1 + bytes.Count(text[:at], []byte("\n"))
+	return fmt.Errorf("line %d: %w", line, err)
+}
+
+// complete validates what was read and fills in what may be left out.
+func (l *Loops) complete(file string) error {
+	fail := func(field, format string, args ...any) error {
+		return &LoopsError{file, field, fmt.Errorf(format, args...)}
+	}
+	if l.Schema != LoopsSchema {
+		return fail("schema", "want %q, the file has %q", LoopsSchema, l.Schema)
+	}
+	if !(l.SamplePeriod > 0) || math.IsInf(l.SamplePeriod, 0) {
+		return fail("sample_period", "want a positive number of seconds, the file has %v", l.SamplePeriod)
+	}
+	if l.ComputeDelay < 0 {
+		return fail("compute_delay", "want a number of seconds that is not negative, the file has %v", l.ComputeDelay)
+	}
+	if l.InputRate < 0 {
+		return fail("input_rate", "want a positive rate or none, the file has %v", l.InputRate)
+	}
+	if l.Inner == nil {
+		return fail("inner", "is missing; give the controller that stabilises, as numerator and denominator")
+	}
+	for _, b := range []struct {
+		name  string
+		block *Block
+	}{{"inner", l.Inner}, {"outer", l.Outer}, {"prefilter", l.Prefilter}} {
+		if b.block == nil {
+			continue
+		}
+		mapped, err := b.block.complete(l.SamplePeriod)
+		if err != nil {
+			return fail(b.name, "%w", err)
+		}
+		if mapped {
+			l.Warnings = append(l.Warnings, b.name+" was given as a continuous controller: it was mapped by Tustin's rule at the sample period")
+		}
+	}
+	for _, lim := range []struct {
+		name string
+		pair *[2]float64
+	}{{"input_limits", l.InputLimits}, {"outer_limits", l.OuterLimits}} {
+		if lim.pair != nil && !(lim.pair[0] < lim.pair[1]) {
+			return fail(lim.name, "want [low, high] with low below high, the file has %v", *lim.pair)
+		}
+	}
+	if l.OuterLimits != nil && (l.OuterLimits[0] > 0 || l.OuterLimits[1] < 0) {
+		return fail("outer_limits", "are deviations and must hold zero, the file has %v", *l.OuterLimits)
+	}
+	if l.InputLimits != nil && (l.OperatingPoint.Input < l.InputLimits[0] || l.OperatingPoint.Input > l.InputLimits[1]) {
+		return fail("operating_point", "its input %v lies outside input_limits %v", l.OperatingPoint.Input, *l.InputLimits)
+	}
+	return nil
+}
+
+// complete validates one block and reports whether its discrete form was made from the continuous one.
+func (b *Block) complete(period float64) (mapped bool, err error) {
+	if len(b.Discrete.Numerator) == 0 && len(b.Discrete.Denominator) == 0 && b.Continuous != nil {
+		if b.Discrete, err = tustinRational(*b.Continuous, period); err != nil {
+			return false, err
+		}
+		mapped = true
+	}
+	d := b.Discrete
+	if len(d.Numerator) == 0 || len(d.Denominator) == 0 {
+		return false, errors.New("want discrete numerator and denominator in powers of z^-1, one of them is empty")
+	}
+	for _, v := range append(append([]float64(nil), d.Numerator...), d.Denominator...) {
+		if math.IsNaN(v) || math.IsInf(v, 0) {
+			return false, fmt.Errorf("coefficient %v is not a finite number", v)
+		}
+	}
+	if lead := d.Denominator[0]; lead == 0 {
+		return false, errors.New("the first coefficient of the discrete denominator is zero; it multiplies the present output and must not be")
+	} else if lead != 1 {
+		num, den := make([]float64, len(d.Numerator)), make([]float64, len(d.Denominator))
+		for i, v := range d.Numerator {
+			num[i] = v / lead
+		}
+		for i, v := range d.Denominator {
+			den[i] = v / lead
+		}
+		b.Discrete = Rational{num, den}
+	}
+	return mapped, nil
+}
+
+// tustinRational maps a continuous controller (descending powers of s) by s = (2/T)(1 - z^-1)/(1 + z^-1).
+func tustinRational(c Rational, period float64) (Rational, error) {
+	num, den := leadingNonzero(c.Numerator), leadingNonzero(c.Denominator)
+	if len(den) == 0 || len(num) == 0 {
+		return Rational{}, errors.New("the continuous numerator or denominator is empty or zero")
+	}
+	n := len(den) - 1
+	if len(num) > len(den) {
+		return Rational{}, fmt.Errorf("the continuous controller has more zeros (%d) than poles (%d): add roll-off so that it can be built", len(num)-1, n)
+	}
+	expand := func(desc []float64) []float64 {
+		sum := make([]float64, n+1)
+		for i, v := range desc {
+			p := len(desc) - 1 - i // power of s
+			term := []float64{v * math.Pow(2/period, float64(p))}
+			for j := 0; j < n; j++ {
+				sign := 1.0
+				if j < p {
+					sign = -1
+				}
+				next := make([]float64, len(term)+1)
+				for k, t := range term {
+					next[k] += t
+					next[k+1] += sign * t
+				}
+				term = next
+			}
+			for k, t := range term {
+				sum[k] += t
+			}
+		}
+		return sum
+	}
+	zn, zd := expand(num), expand(den)
+	if zd[0] == 0 {
+		return Rational{}, fmt.Errorf("the continuous controller has a pole at 2/T = %g rad/s, which Tustin's rule cannot map: shorten the sample period or move the pole", 2/period)
+	}
+	lead := zd[0]
+	for i := range zd {
+		zn[i] /= lead
+		zd[i] /= lead
+	}
+	return Rational{zn, zd}, nil
+}
+
+func leadingNonzero(p []float64) []float64 {
+	for len(p) > 0 && p[0] == 0 {
+		p = p[1:]
+	}
+	return p
+}
+
+// Write writes loops.json, indented, with a final newline. Numbers that JSON cannot hold are an error.
+func (l *Loops) Write(w io.Writer) error {
+	c := *l
+	c.Schema = LoopsSchema
+	if c.Law == "" {
+		c.Law = LawText
+	}
+	if c.Bounds == nil {
+		c.Bounds = []Bound{}
+	}
+	if c.Warnings == nil {
+		c.Warnings = []string{}
+	}
+	if c.Prefilter == nil && c.Inner != nil {
+		c.Prefilter = &Block{Discrete: Rational{[]float64{1}, []float64{1}}}
+	}
+	var buf bytes.Buffer
+	enc := json.NewEncoder(&buf)
+	enc.SetEscapeHTML(false)
+	enc.SetIndent("", "  ")
+	if err := enc.Encode(c); err != nil {
+		return fmt.Errorf("writing loops: %w", err)
+	}
+	_, err := w.Write(buf.Bytes())
+	return err
+}
