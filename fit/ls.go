@@ -4,6 +4,10 @@ import (
 	"fmt"
 	"math"
 
+	"gonum.org/v1/gonum/blas"
+	"gonum.org/v1/gonum/blas/blas64"
+	"gonum.org/v1/gonum/floats"
+	"gonum.org/v1/gonum/lapack/lapack64"
 	"gonum.org/v1/gonum/mat"
 )
 
@@ -34,10 +38,11 @@ type LSResult struct {
 	Condition float64 // of the columns scaled to unit length, estimated
 }
 
-// LeastSquares minimises the squared length of y - x b by Householder QR of x with its columns scaled to unit length
-// (Golub, Numerical methods for solving linear least squares problems, Numer. Math. 7 (1965) 206-216). The error is a
-// Condition, with the answer still returned, when the columns are nearly dependent; with Condition(+Inf) there is no
-// answer. It panics if the shapes differ.
+// LeastSquares minimises the squared length of y - x b by Householder QR of x with its columns scaled (Golub, Numerical
+// methods for solving linear least squares problems, Numer. Math. 7 (1965) 206-216), refined with compensated residuals
+// (Björck, Iterative refinement of linear least squares solutions I, BIT 7 (1967) 257-278). The error is a Condition,
+// with the answer still returned, when the columns are nearly dependent; with Condition(+Inf) there is no answer. It
+// panics if the shapes differ.
 func LeastSquares(x *mat.Dense, y []float64) (*LSResult, error) {
 	m, n := x.Dims()
 	if len(y) != m {
@@ -46,29 +51,25 @@ func LeastSquares(x *mat.Dense, y []float64) (*LSResult, error) {
 	if m < n {
 		return nil, fmt.Errorf("least squares: %d rows are too few for %d parameters", m, n)
 	}
-	aug := mat.NewDense(max(m, n+1), n+1, nil)
+	cols := make([][]float64, n)
 	centred := false
-	for j := range n {
-		constant := true
-		for i := range m {
-			v := x.At(i, j)
-			aug.Set(i, j, v)
-			constant = constant && v == x.At(0, j)
+	for j := range cols {
+		cols[j] = mat.Col(nil, j, x)
+		centred = centred || constant(cols[j])
+		if holdsNonFinite(cols[j]) {
+			return nil, errNotFinite
 		}
-		centred = centred || constant && x.At(0, j) != 0
 	}
-	for i, v := range y {
-		aug.Set(i, n, v)
-	}
-	t := newTriangle(aug, m)
-	if t.bad() {
+	if holdsNonFinite(y) {
 		return nil, errNotFinite
 	}
-	s := t.solve(n)
-	res := &LSResult{Coef: s.coef, RSS: s.rss, DF: m - n, Condition: s.cond}
+	h := newHouseholder(cols, m)
+	s := h.triangle().solve(n)
 	if math.IsInf(s.cond, 1) {
 		return nil, Condition(s.cond)
 	}
+	b, r := h.refined(y)
+	res := &LSResult{Coef: b, RSS: floats.Dot(r, r), DF: m - n, Condition: s.cond}
 	res.Sigma = math.Sqrt(res.RSS / float64(res.DF))
 	if res.DF == 0 {
 		res.Sigma = math.NaN()
@@ -80,9 +81,7 @@ func LeastSquares(x *mat.Dense, y []float64) (*LSResult, error) {
 	}
 	var centre, tss float64
 	if centred {
-		for _, v := range y {
-			centre += v / float64(m)
-		}
+		centre = mean(y)
 	}
 	for _, v := range y {
 		tss += (v - centre) * (v - centre)
@@ -93,3 +92,132 @@ func LeastSquares(x *mat.Dense, y []float64) (*LSResult, error) {
 	}
 	return res, nil
 }
+
+func constant(x []float64) bool {
+	for _, v := range x {
+		if v != x[0] {
+			return false
+		}
+	}
+	return x[0] != 0
+}
+
+func holdsNonFinite(x []float64) bool {
+	for _, v := range x {
+		if math.IsNaN(v) || math.IsInf(v, 0) {
+			return true
+		}
+	}
+	return false
+}
+
+// householder is the QR factorisation of columns scaled by powers of two, which is exact.
+type householder struct {
+	cols  [][]float64 // scaled
+	scale []float64
+	qr    blas64.General
+	tau   []float64
+}
+
+func newHouseholder(cols [][]float64, m int) *householder {
+	n := len(cols)
+	h := &householder{cols: cols, scale: make([]float64, n), tau: make([]float64, n)}
+	h.qr = blas64.General{Rows: m, Cols: n, Stride: n, Data: make([]float64, m*n)}
+	for j, c := range cols {
+		h.scale[j] = 1
+		if length := floats.Norm(c, 2); length > 0 {
+			_, e := math.Frexp(length)
+			h.scale[j] = math.Ldexp(1, e)
+		}
+		for i := range c {
+			c[i] /= h.scale[j]
+			h.qr.Data[i*n+j] = c[i]
+		}
+	}
+	work := make([]float64, 1)
+	lapack64.Geqrf(h.qr, h.tau, work, -1)
+	work = make([]float64, int(work[0]))
+	lapack64.Geqrf(h.qr, h.tau, work, len(work))
+	return h
+}
+
+// triangle returns R with its columns scaled to unit length, without a response.
+func (h *householder) triangle() *triangle {
+	n := len(h.cols)
+	r := mat.NewDense(n+1, n+1, nil)
+	for i := range n {
+		copy(r.RawRowView(i)[i:n], h.qr.Data[i*n+i:i*n+n])
+	}
+	t := scaleTriangle(r, h.qr.Rows)
+	for j := range t.scale {
+		t.scale[j] *= h.scale[j]
+	}
+	return t
+}
+
+func (h *householder) applyQ(t blas.Transpose, v []float64) {
+	c := blas64.General{Rows: len(v), Cols: 1, Stride: 1, Data: v}
+	work := make([]float64, 1)
+	lapack64.Ormqr(blas.Left, t, h.qr, h.tau, c, work, -1)
+	work = make([]float64, int(work[0]))
+	lapack64.Ormqr(blas.Left, t, h.qr, h.tau, c, work, len(work))
+}
+
+// Two refinements reach the accuracy of the working precision unless the condition is near its inverse.
+const refinements = 2
+
+// refined solves r + X b = y, X'r = 0. Each pass solves the same system for the corrections, with the right-hand sides
+// f = y - r - X b and g = -X'r in twice the working precision (Björck 1967, eqs. 3.1-3.5); the first pass, from zero, is
+// the plain solution.
+func (h *householder) refined(y []float64) (b, r []float64) {
+	m, n := h.qr.Rows, h.qr.Cols
+	upper := blas64.Triangular{Uplo: blas.Upper, Diag: blas.NonUnit, N: n, Stride: n, Data: h.qr.Data}
+	b, r = make([]float64, n), make([]float64, m)
+	f, g := make([]float64, m), make([]float64, n)
+	for range 1 + refinements {
+		for i := range f {
+			var s twice
+			s.add(y[i], 1)
+			s.add(-r[i], 1)
+			for j, c := range h.cols {
+				s.add(-c[i], b[j])
+			}
+			f[i] = s.sum()
+		}
+		for j, c := range h.cols {
+			var s twice
+			for i, v := range c {
+				s.add(-v, r[i])
+			}
+			g[j] = s.sum()
+		}
+		blas64.Trsv(blas.Trans, upper, blas64.Vector{N: n, Data: g, Inc: 1})
+		h.applyQ(blas.Trans, f)
+		d := make([]float64, n)
+		for j := range d {
+			d[j] = f[j] - g[j]
+			f[j] = g[j]
+		}
+		blas64.Trsv(blas.NoTrans, upper, blas64.Vector{N: n, Data: d, Inc: 1})
+		h.applyQ(blas.NoTrans, f)
+		floats.Add(b, d)
+		floats.Add(r, f)
+	}
+	floats.Div(b, h.scale)
+	return b, r
+}
+
+// twice sums products as if in twice the working precision (Ogita, Rump & Oishi, Accurate sum and dot product, SIAM J.
+// Sci. Comput. 26 (2005) 1955-1988, algorithm 5.3).
+type twice struct{ hi, lo float64 }
+
+func (s *twice) add(a, b float64) {
+	p := a * b
+	e := math.FMA(a, b, -p)
+	t := s.hi + p
+	z := t - s.hi
+	s.lo += (s.hi - (t - z)) + (p - z) + e
+	s.hi = t
+}
+
+func (s *twice) sum() float64 { return s.hi + s.lo }

@@ -168,6 +168,9 @@ func mean(x []float64) float64 {
 	return s / float64(len(x))
 }
 
+// productsChunk samples of two columns stay in the nearest cache over all lags.
+const productsChunk = 1024
+
 // laggedProducts returns S[i][j], the sum over k in [first, len) of a(k-i) b(k-j), i to maxA, j to maxB.
 func laggedProducts(a, b []float64, first, maxA, maxB int) [][]float64 {
 	n := len(a)
@@ -175,11 +178,16 @@ func laggedProducts(a, b []float64, first, maxA, maxB int) [][]float64 {
 	for i := range s {
 		s[i] = make([]float64, maxB+1)
 	}
-	for j := range s[0] {
-		s[0][j] = floats.Dot(a[first:], b[first-j:n-j])
+	for from := first; from < n; from += productsChunk {
+		to := min(from+productsChunk, n)
+		for j := range s[0] {
+			s[0][j] += floats.Dot(a[from:to], b[from-j:to-j])
+		}
+		for i := 1; i <= maxA; i++ {
+			s[i][0] += floats.Dot(a[from-i:to-i], b[from:to])
+		}
 	}
 	for i := 1; i <= maxA; i++ {
-		s[i][0] = floats.Dot(a[first-i:n-i], b[first:])
 		for j := 1; j <= maxB; j++ {
 			s[i][j] = s[i-1][j-1] + a[first-i]*b[first-j] - a[n-i]*b[n-j]
 		}

@@ -22,10 +22,12 @@ type triangle struct {
 	rows  int
 }
 
-// newTriangle reduces a = [X y] by Householder QR, which no scaling of columns disturbs, and scales the factor. a has at
-// least as many rows as columns, if need be by rows of zeros; rows counts those that hold data.
-func newTriangle(a *mat.Dense, rows int) *triangle {
-	r := upperTriangle(a)
+// newTriangle reduces a = [X y] by Householder QR, which no scaling of columns disturbs. a has at least as many rows as
+// columns, if need be by rows of zeros; rows counts those that hold data.
+func newTriangle(a *mat.Dense, rows int) *triangle { return scaleTriangle(upperTriangle(a), rows) }
+
+// scaleTriangle scales the columns of r but the last to unit length, in place.
+func scaleTriangle(r *mat.Dense, rows int) *triangle {
 	n, _ := r.Dims()
 	t := &triangle{r: r, scale: make([]float64, n-1), rows: rows}
 	for j := range t.scale {
