@@ -102,14 +102,16 @@ func constant(x []float64) bool {
 	return x[0] != 0
 }
 
-func holdsNonFinite(x []float64) bool {
+func allFinite(x ...float64) bool {
 	for _, v := range x {
 		if math.IsNaN(v) || math.IsInf(v, 0) {
-			return true
+			return false
 		}
 	}
-	return false
+	return true
 }
+
+func holdsNonFinite(x []float64) bool { return !allFinite(x...) }
 
 // householder is the QR factorisation of columns scaled by powers of two, which is exact.
 type householder struct {

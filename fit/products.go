@@ -141,13 +141,25 @@ func (g *regression) products() *mat.SymDense {
 
 // sums returns the sum over the rows of every lag and of y.
 func (g *regression) sums(r Record) []float64 {
+	byLag := func(x []float64, maxLag int) []float64 {
+		n := len(x)
+		s := make([]float64, maxLag+1)
+		s[0] = floats.Sum(x[g.first:])
+		for i := 1; i <= maxLag; i++ {
+			s[i] = s[i-1] + x[g.first-i] - x[n-i]
+		}
+		return s
+	}
+	u, y := byLag(r.U, g.first), byLag(r.Y, g.first)
 	out := make([]float64, len(g.lags)+1)
-	for j, l := range append(append([]lag(nil), g.lags...), lag{}) {
-		c := r.column(l)
-		for _, v := range c[g.first-l.steps : len(c)-l.steps] {
-			out[j] += v
+	for j, l := range g.lags {
+		if l.input {
+			out[j] = u[l.steps]
+		} else {
+			out[j] = y[l.steps]
 		}
 	}
+	out[len(g.lags)] = y[0]
 	return out
 }
 
