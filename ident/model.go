@@ -1,0 +1,390 @@
+package ident
+
+import (
+	"bytes"
+	"encoding/json"
+	"fmt"
+	"io"
+	"math"
+	"math/rand/v2"
+
+	"gonum.org/v1/gonum/mat"
+
+	"steadyrig/fit/lti"
+)
+
+// Schema names the version of the model file that this package reads and writes.
+const Schema = "steadyrig/model/1"
+
+// Verdicts on a model. A refused model is still written, so that what was
+// found out is not lost.
+const (
+	Sound   = "sound"
+	Weak    = "weak"
+	Refused = "refused"
+)
+
+// Confidence is the two-sided level of every interval in a Model.
+const Confidence = 0.95
+
+// Model is a fitted plant with what the logs say about its uncertainty. Its
+// JSON form is the file model.json.
+type Model struct {
+	Schema         string         `json:"schema"`
+	Tool           string         `json:"tool"`
+	Rig            string         `json:"rig"`
+	Made           string         `json:"made"` // RFC 3339
+	Logs           []LogUse       `json:"logs"`
+	Verdict        string         `json:"verdict"`
+	Warnings       []string       `json:"warnings"`
+	OperatingPoint OperatingPoint `json:"operating_point"`
+	Plant          Plant          `json:"plant"`
+	Poles          []Root         `json:"poles"`
+	Zeros          []Root         `json:"zeros"`
+	Gain           Gain           `json:"gain"`
+	Noise          Noise          `json:"noise"`
+	Evidence       Evidence       `json:"evidence"`
+}
+
+// LogUse says which rows of which log a model rests on.
+type LogUse struct {
+	File     string `json:"file"`
+	SHA256   string `json:"sha256"`
+	Rows     int    `json:"rows"`     // rows in the file
+	Used     int    `json:"used"`     // rows in the fit
+	Segments int    `json:"segments"` // unbroken stretches
+}
+
+// OperatingPoint is where input and output rest, in the units of the log.
+type OperatingPoint struct {
+	Input  float64 `json:"input"`
+	Output float64 `json:"output"`
+}
+
+// Plant is the transfer function from input to output deviations.
+type Plant struct {
+	Numerator   []float64 `json:"numerator"`   // descending powers of s
+	Denominator []float64 `json:"denominator"` // descending powers of s, leading 1
+	Delay       float64   `json:"delay"`       // s, from the logged input to the output
+	// Parameters names the rows of Covariance: "b0", "b1", … multiply s^0,
+	// s^1, … in the numerator, "a1" … "an" multiply s^(n-1) … s^0 in the
+	// denominator, "delay" is in s.
+	Parameters []string    `json:"parameters"`
+	Covariance [][]float64 `json:"covariance"`
+}
+
+// Root is a pole or a zero in rad/s with its bounds. A complex pair is two
+// Roots. For a zero Unstable means that it lies in the right half-plane.
+type Root struct {
+	Re                  float64  `json:"re"`
+	Im                  float64  `json:"im"`
+	ReSD                float64  `json:"re_sd"`
+	ImSD                float64  `json:"im_sd"`
+	Re95                Interval `json:"re_95"`
+	Im95                Interval `json:"im_95"`
+	Unstable            bool     `json:"unstable"`
+	ProbabilityUnstable float64  `json:"probability_unstable"`
+}
+
+// Interval is [Lo, Hi]; an infinite end is written as null.
+type Interval struct{ Lo, Hi float64 }
+
+// Contains reports whether x lies in the interval, ends included.
+func (iv Interval) Contains(x float64) bool { return iv.Lo <= x && x <= iv.Hi }
+
+// MarshalJSON writes [lo, hi], with null for an end that is open.
+func (iv Interval) MarshalJSON() ([]byte, error) {
+	end := func(x float64) string {
+		if math.IsInf(x, 0) || math.IsNaN(x) {
+			return "null"
+		}
+		b, _ := json.Marshal(x)
+		return string(b)
+	}
+	return []byte("[" + end(iv.Lo) + "," + end(iv.Hi) + "]"), nil
+}
+
+// UnmarshalJSON reads what MarshalJSON writes.
+func (iv *Interval) UnmarshalJSON(b []byte) error {
+	var ends []*float64
+	if err := json.Unmarshal(b, &ends); err != nil {
+		return err
+	}
+	if len(ends) != 2 {
+		return fmt.Errorf("interval has %d ends, want 2", len(ends))
+	}
+	iv.Lo, iv.Hi = math.Inf(-1), math.Inf(1)
+	if ends[0] != nil {
+		iv.Lo = *ends[0]
+	}
+	if ends[1] != nil {
+		iv.Hi = *ends[1]
+	}
+	return nil
+}
+
+// Gain holds the steady-state gain, nil where the plant integrates, and the
+// leading numerator coefficient, which the plant tends to over s^(m-n) at high
+// frequency.
+type Gain struct {
+	DC            *Estimate `json:"dc"`
+	HighFrequency *Estimate `json:"high_frequency"`
+}
+
+// Estimate is a number with its standard deviation and interval.
+type Estimate struct {
+	Value      float64  `json:"value"`
+	SD         float64  `json:"sd"`
+	Interval95 Interval `json:"interval_95"`
+}
+
+// Noise is the disturbance as the fit sees it: y = G u + H e, H monic with a
+// stable inverse, in powers of z^-1. SD is that of the one-step prediction
+// error e, in units of the output; it is not the sensor's.
+type Noise struct {
+	Numerator    []float64 `json:"numerator"`
+	Denominator  []float64 `json:"denominator"`
+	SD           float64   `json:"sd"`
+	SamplePeriod float64   `json:"sample_period"`
+}
+
+// Evidence is what a reader needs to believe the model, or not to.
+type Evidence struct {
+	Structures     []Structure `json:"structures"`
+	Methods        []Method    `json:"methods"`
+	Residuals      Residuals   `json:"residuals"`
+	ExplainedShare float64     `json:"explained_share"` // on rows not used in the fit
+	OutsideShare   float64     `json:"outside_share"`   // of the input's variance, not explained by past outputs and inputs
+	Memories       float64     `json:"memories"`        // length of the logs in predictor memories
+}
+
+// Structure is one candidate and how far it lost, in units of BIC.
+type Structure struct {
+	Poles   int     `json:"poles"`
+	Zeros   int     `json:"zeros"`
+	Colour  int     `json:"colour"` // poles of the disturbance's own
+	Delay   float64 `json:"delay"`  // s
+	BIC     float64 `json:"bic"`    // above the winner's
+	Chosen  bool    `json:"chosen"`
+	Verdict string  `json:"verdict"`
+}
+
+// Method is one way of estimating the same poles, named by what it assumes:
+// "prediction", "state", "long", "outside".
+type Method struct {
+	Name   string       `json:"name"`
+	Poles  [][2]float64 `json:"poles"` // re, im in rad/s
+	Agrees bool         `json:"agrees"`
+	Note   string       `json:"note,omitempty"`
+}
+
+// Residuals are the tests on what the model leaves unexplained. The
+// probabilities are those of a statistic as large by chance.
+type Residuals struct {
+	Lags       int     `json:"lags"`
+	Whiteness  float64 `json:"whiteness_probability"`
+	CrossInput float64 `json:"input_probability"`
+}
+
+// RefusedError says that the data cannot carry what was asked. What says what
+// is wrong, Do what to do about it.
+type RefusedError struct{ What, Do string }
+
+func (e *RefusedError) Error() string {
+	if e.Do == "" {
+		return e.What
+	}
+	return e.What + "; " + e.Do
+}
+
+// TF returns the plant with its delay. Polynomials of lti ascend.
+func (m *Model) TF() lti.TF {
+	return lti.TF{Num: reversed(m.Plant.Numerator), Den: reversed(m.Plant.Denominator), Delay: m.Plant.Delay}
+}
+
+// NoiseShape returns H of y = G u + H e.
+func (m *Model) NoiseShape() lti.DTF {
+	return lti.DTF{
+		Num:    append(lti.Poly(nil), m.Noise.Numerator...),
+		Den:    append(lti.Poly(nil), m.Noise.Denominator...),
+		Period: m.Noise.SamplePeriod,
+	}
+}
+
+// Draw returns n plants from the joint normal distribution of the estimate.
+// Draw k depends on seed and k only. A drawn delay below zero is taken as
+// zero, since no plant answers before its input.
+func (m *Model) Draw(n int, seed uint64) []lti.TF {
+	root := m.spread()
+	plants := make([]lti.TF, n)
+	p := len(m.Plant.Parameters)
+	z := make([]float64, p)
+	for k := range plants {
+		rnd := rand.New(rand.NewPCG(seed, uint64(k)))
+		for i := range z {
+			z[i] = rnd.NormFloat64()
+		}
+		g := m.TF()
+		order := len(g.Den) - 1
+		for i, name := range m.Plant.Parameters {
+			var d float64
+			for j := 0; j <= i; j++ {
+				d += root.At(i, j) * z[j]
+			}
+			var index int
+			switch {
+			case name == "delay":
+				g.Delay = math.Max(0, g.Delay+d)
+			case name[0] == 'b':
+				fmt.Sscanf(name, "b%d", &index)
+				g.Num[index] += d
+			default:
+				fmt.Sscanf(name, "a%d", &index)
+				g.Den[order-index] += d
+			}
+		}
+		plants[k] = g
+	}
+	return plants
+}
+
+// spread returns a lower triangular root of the covariance. The covariance is
+// equilibrated first because its parameters differ by many orders of
+// magnitude; directions that carry no variance get none.
+func (m *Model) spread() *mat.Dense {
+	p := len(m.Plant.Parameters)
+	sd := make([]float64, p)
+	for i := range sd {
+		sd[i] = math.Sqrt(math.Max(0, m.Plant.Covariance[i][i]))
+	}
+	root := mat.NewDense(max(p, 1), max(p, 1), nil)
+	for i := range p {
+		for j := 0; j <= i; j++ {
+			if sd[i] == 0 || sd[j] == 0 {
+				continue
+			}
+			s := m.Plant.Covariance[i][j] / (sd[i] * sd[j])
+			for k := range j {
+				s -= root.At(i, k) * root.At(j, k)
+			}
+			switch {
+			case i == j:
+				root.Set(i, i, math.Sqrt(math.Max(0, s)))
+			case root.At(j, j) > 1e-9:
+				root.Set(i, j, s/root.At(j, j))
+			}
+		}
+	}
+	for i := range p {
+		for j := 0; j <= i; j++ {
+			root.Set(i, j, root.At(i, j)*sd[i])
+		}
+	}
+	return root
+}
+
+// Write writes the model as JSON, indented.
+func (m *Model) Write(w io.Writer) error {
+	b, err := json.MarshalIndent(m, "", "  ")
+	if err != nil {
+		return fmt.Errorf("writing the model: %w", err)
+	}
+	_, err = w.Write(append(b, '\n'))
+	return err
+}
+
+// ReadModel reads a model file and checks that its parts fit together. name
+// is the file's, for messages.
+func ReadModel(r io.Reader, name string) (*Model, error) {
+	b, err := io.ReadAll(r)
+	if err != nil {
+		return nil, fmt.Errorf("reading %q: %w", name, err)
+	}
+	m := new(Model)
+	if err := json.Unmarshal(b, m); err != nil {
+		if at, ok := jsonOffset(err); ok {
+			return nil, fmt.Errorf("%s:%d: %w", name, 1+bytes.Count(b[:min(at, len(b))], []byte("\n")), err)
+		}
+		return nil, fmt.Errorf("%s: %w", name, err)
+	}
+	if err := m.validate(); err != nil {
+		return nil, fmt.Errorf("%s: %w", name, err)
+	}
+	return m, nil
+}
+
+func jsonOffset(err error) (int, bool) {
+	switch e := err.(type) {
+	case *json.SyntaxError:
+		return int(e.Offset), true
+	case *json.UnmarshalTypeError:
+		return int(e.Offset), true
+	}
+	return 0, false
+}
+
+// validate reports the first way in which the model contradicts itself.
+func (m *Model) validate() error {
+	if m.Schema != Schema {
+		return fmt.Errorf("schema is %q, want %q: is this a model file?", m.Schema, Schema)
+	}
+	switch m.Verdict {
+	case Sound, Weak, Refused:
+	default:
+		return fmt.Errorf("verdict is %q, want sound, weak or refused", m.Verdict)
+	}
+	num, den := m.Plant.Numerator, m.Plant.Denominator
+	if m.Verdict == Refused && len(den) == 0 {
+		return nil
+	}
+	if len(num) == 0 || len(den) < 2 || den[0] != 1 || len(num) >= len(den) {
+		return fmt.Errorf("plant has numerator %v and denominator %v, want a denominator that starts with 1 and is longer than the numerator", num, den)
+	}
+	for _, v := range append(append([]float64{m.Plant.Delay, m.Noise.SD, m.Noise.SamplePeriod}, num...), den...) {
+		if math.IsNaN(v) || math.IsInf(v, 0) {
+			return fmt.Errorf("plant or noise holds %v, want finite numbers", v)
+		}
+	}
+	if !(m.Noise.SamplePeriod > 0) {
+		return fmt.Errorf("noise sample_period is %v s, want a positive one", m.Noise.SamplePeriod)
+	}
+	if m.Noise.SD < 0 {
+		return fmt.Errorf("noise sd is %v, want 0 or more", m.Noise.SD)
+	}
+	if len(m.Noise.Denominator) == 0 || len(m.Noise.Numerator) == 0 || m.Noise.Denominator[0] != 1 || m.Noise.Numerator[0] != 1 {
+		return fmt.Errorf("noise shape is not monic")
+	}
+	if len(m.Plant.Covariance) != len(m.Plant.Parameters) {
+		return fmt.Errorf("covariance has %d rows for %d parameters", len(m.Plant.Covariance), len(m.Plant.Parameters))
+	}
+	for i, row := range m.Plant.Covariance {
+		if len(row) != len(m.Plant.Parameters) {
+			return fmt.Errorf("covariance row %d has %d columns for %d parameters", i+1, len(row), len(m.Plant.Parameters))
+		}
+	}
+	for _, name := range m.Plant.Parameters {
+		var index int
+		switch {
+		case name == "delay":
+		case len(name) > 1 && name[0] == 'b':
+			if _, err := fmt.Sscanf(name, "b%d", &index); err != nil || index < 0 || index >= len(num) {
+				return fmt.Errorf("parameter %q is not in the numerator", name)
+			}
+		case len(name) > 1 && name[0] == 'a':
+			if _, err := fmt.Sscanf(name, "a%d", &index); err != nil || index < 1 || index >= len(den) {
+				return fmt.Errorf("parameter %q is not in the denominator", name)
+			}
+		default:
+			return fmt.Errorf("parameter %q is none of b0 …, a1 …, delay", name)
+		}
+	}
+	return nil
+}
+
+func reversed(p []float64) lti.Poly {
+	q := make(lti.Poly, len(p))
+	for i, v := range p {
+		q[len(p)-1-i] = v
+	}
+	return q
+}
