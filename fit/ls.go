@@ -102,16 +102,14 @@ func constant(x []float64) bool {
 	return x[0] != 0
 }
 
-func allFinite(x ...float64) bool {
+func holdsNonFinite(x []float64) bool {
 	for _, v := range x {
 		if math.IsNaN(v) || math.IsInf(v, 0) {
-			return false
+			return true
 		}
 	}
-	return true
+	return false
 }
-
-func holdsNonFinite(x []float64) bool { return !allFinite(x...) }
 
 // householder is the QR factorisation of columns scaled by powers of two, which is exact.
 type householder struct {
