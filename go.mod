@@ -1,6 +1,6 @@
 module steadyrig
 
-go 1.26
+go 1.26.0
 
 require (
 	codeberg.org/go-fonts/liberation v0.5.0 // indirect

@@ -1,0 +1,225 @@
+package design
+
+import (
+	"fmt"
+	"math"
+	"math/cmplx"
+
+	"steadyrig/data"
+	"steadyrig/fit/lti"
+	"steadyrig/ident"
+)
+
+// A problem is what is to be solved, in deviations from the operating point, with the frequencies at which loops
+// are looked at. It is read-only once made and shared by all workers.
+type problem struct {
+	model   *ident.Model
+	rig     *data.Rig
+	period  float64 // s
+	compute float64 // s, added to the delay of every plant
+	point   OperatingPoint
+	input   [2]float64  // limits as deviations, input[0] < 0 < input[1]
+	output  *[2]float64 // limits as deviations, nil: none
+	rate    float64     // units of input per second, 0: none
+	spec    demands
+	noise   noise
+	nominal plant
+
+	omega []float64    // rad/s, from 0 to pi/period
+	z1    []complex128 // e^{-i omega period}
+	inner []complex128 // e^{-(decay + i omega) period}: the circle on which the inner loop's decay is counted
+
+	regions  []region // where no controller zero may lie
+	warnings []string
+}
+
+// demands is the spec with its defaults resolved.
+type demands struct {
+	step, overshoot, settling, band, peakS, noise, kick, kickPeak float64
+}
+
+// noiseShare is the default limit on the input's standard deviation due to sensor noise, as a share of the range.
+const noiseShare = 1.0 / 20
+
+// decayPerSettling sets the slowest decay that the inner loop may have, in units of 1/settling: an outer loop
+// cannot settle faster than what the inner one leaves behind.
+const decayPerSettling = 1.5
+
+func newProblem(model *ident.Model, rig *data.Rig) (*problem, error) {
+	if err := rig.NeedDesign(); err != nil {
+		return nil, err
+	}
+	if len(model.Plant.Denominator) == 0 {
+		return nil, &ident.RefusedError{What: "the model holds no plant: the fit was refused", Do: "take a log as the fit's refusal says, and fit again"}
+	}
+	p := &problem{model: model, rig: rig, period: rig.Loop.SamplePeriod, rate: rig.Limits.InputRate}
+	p.point = OperatingPoint(model.OperatingPoint)
+	if o := rig.OperatingPoint; o != nil {
+		p.point = OperatingPoint(*o)
+	}
+	lim := rig.Limits.Input
+	p.input = [2]float64{lim[0] - p.point.Input, lim[1] - p.point.Input}
+	if !(p.input[0] < 0 && p.input[1] > 0) {
+		return nil, &ident.RefusedError{
+			What: fmt.Sprintf("the operating point needs an input of %.4g, the limits are [%.4g, %.4g]", p.point.Input, lim[0], lim[1]),
+			Do:   "nothing is left to stabilise with: correct [operating_point] or [limits] input",
+		}
+	}
+	if o := rig.Limits.Output; o != nil {
+		p.output = &[2]float64{o[0] - p.point.Output, o[1] - p.point.Output}
+		if !(p.output[0] < 0 && p.output[1] > 0) {
+			return nil, &ident.RefusedError{
+				What: fmt.Sprintf("the operating point has the output at %.4g, outside the trip limits [%.4g, %.4g]", p.point.Output, o[0], o[1]),
+				Do:   "correct [operating_point] or [limits] output",
+			}
+		}
+	}
+	s := rig.Spec
+	p.spec = demands{s.Step, s.Overshoot, s.Settling, s.Band, s.PeakSensitivity, s.InputNoise, s.Kick, s.KickPeak}
+	if p.spec.noise == 0 {
+		p.spec.noise = noiseShare * (lim[1] - lim[0])
+	}
+	p.compute = rig.Loop.ComputeDelay
+	if rig.Log.InputStamp == data.InputComputed {
+		// The model's delay counts from the computed input: it holds the compute delay of the loop that ran.
+		p.compute = 0
+		if rig.Loop.ComputeDelay > model.Plant.Delay {
+			p.compute = rig.Loop.ComputeDelay - model.Plant.Delay
+		}
+		p.warnings = append(p.warnings, "the log's input was stamped when computed, so the model's delay already holds the compute delay of the loop that ran: none was added; the new loop must not compute longer than the old one")
+	}
+	if rig.Loop.Hold == data.HoldBandLimited {
+		p.warnings = append(p.warnings, "the loops were designed for an input held between samples (zero-order); a band-limited hold adds its own delay")
+	}
+	p.grid(model.TF().Delay + p.compute)
+	var err error
+	if p.nominal, err = p.newPlant(model.TF()); err != nil {
+		return nil, err
+	}
+	p.noise = p.splitNoise()
+	p.regions = forbidden(model, p.spec.settling)
+	return p, nil
+}
+
+// grid lays out the frequencies: evenly in their logarithm, but never so far apart that the phase of the delay
+// runs away between neighbours.
+func (p *problem) grid(delay float64) {
+	nyquist := math.Pi / p.period
+	widest := nyquist / math.Max(40, 5*(delay/p.period+1))
+	p.omega = []float64{0}
+	for w := math.Min(0.05/p.spec.settling, nyquist/100); w < nyquist; w += math.Min(0.085*w, widest) {
+		p.omega = append(p.omega, w)
+	}
+	if last := len(p.omega) - 1; nyquist-p.omega[last] < 1e-3*nyquist {
+		p.omega = p.omega[:last]
+	}
+	p.omega = append(p.omega, nyquist)
+	p.z1, p.inner = make([]complex128, len(p.omega)), make([]complex128, len(p.omega))
+	r := math.Exp(decayPerSettling / p.spec.settling * p.period)
+	for j, w := range p.omega {
+		p.z1[j] = cmplx.Exp(complex(0, -w*p.period))
+		p.inner[j] = p.z1[j] * complex(r, 0)
+	}
+	p.z1[len(p.z1)-1] = -1
+	p.inner[len(p.z1)-1] = complex(-r, 0)
+}
+
+// plant is one sampled plant with what is needed to judge loops about it: B/A is its transfer function at each
+// frequency of the problem. The delay of the computer is in it.
+type plant struct {
+	tf       lti.TF // with the compute delay
+	lag      int    // samples from the input to its first effect
+	num      []float64
+	den      []float64 // den[0] = 1
+	a, b     []complex128
+	ai, bi   []complex128 // on the circle of the inner loop's decay
+	unstable int          // poles outside the unit circle
+}
+
+// newPlant samples a plant behind the hold.
+func (p *problem) newPlant(g lti.TF) (plant, error) {
+	g.Delay += p.compute
+	d, err := lti.ZOHTF(g, p.period)
+	if err != nil {
+		return plant{}, err
+	}
+	pl := plant{tf: g, den: d.Den}
+	for pl.lag < len(d.Num)-1 && d.Num[pl.lag] == 0 {
+		pl.lag++
+	}
+	pl.num = d.Num[pl.lag:]
+	if pl.lag == 0 {
+		return plant{}, fmt.Errorf("the plant answers at once (as many zeros as poles and no delay): no sampled loop can be closed about it")
+	}
+	pl.unstable = g.UnstablePoles(0)
+	n := len(p.omega)
+	buf := make([]complex128, 4*n)
+	pl.a, pl.b, pl.ai, pl.bi = buf[:n], buf[n:2*n], buf[2*n:3*n], buf[3*n:]
+	for j := range p.omega {
+		pl.a[j] = d.Den.Eval(p.z1[j])
+		pl.b[j] = d.Num.Eval(p.z1[j])
+		pl.ai[j] = d.Den.Eval(p.inner[j])
+		pl.bi[j] = d.Num.Eval(p.inner[j])
+	}
+	return pl, nil
+}
+
+// plants samples draws of the model; draws that cannot be sampled count as lost and come back as an error.
+func (p *problem) plants(n int, seed uint64) ([]plant, error) {
+	draws := p.model.Draw(n, seed)
+	out := make([]plant, n)
+	for i, g := range draws {
+		var err error
+		if out[i], err = p.newPlant(g); err != nil {
+			return nil, fmt.Errorf("plant %d of the draw: %w", i, err)
+		}
+	}
+	return out, nil
+}
+
+// A region is a disc (Im != 0) or an interval of the real axis about an unstable pole, widened beyond its 95 %
+// bounds: a controller zero in it would cancel the pole on some plant that the data allow, or nearly so.
+type region struct {
+	center complex128
+	radius float64
+	pole   string // for messages
+}
+
+// cancelMargin widens the regions: as a share of the pole's size.
+const cancelMargin = 0.25
+
+// forbidden returns the regions of all poles that may be unstable and, where the plant needs an outer loop's
+// integrator, of s = 0. A region never reaches further left than its pole's interval.
+func forbidden(model *ident.Model, settling float64) []region {
+	var out []region
+	for _, r := range model.Poles {
+		if r.Im < 0 || !r.Unstable && r.ProbabilityUnstable < 0.025 {
+			continue
+		}
+		half := math.Max(2*r.ReSD, 2*r.ImSD)
+		if r.Im == 0 && !math.IsInf(r.Re95.Lo, 0) && !math.IsInf(r.Re95.Hi, 0) {
+			half = math.Max(r.Re95.Hi-r.Re, r.Re-r.Re95.Lo)
+		}
+		size := math.Hypot(r.Re, r.Im)
+		if math.IsNaN(half) || math.IsInf(half, 0) {
+			half = size
+		}
+		reg := region{complex(r.Re, r.Im), half + cancelMargin*size, fmt.Sprintf("%.4g rad/s", r.Re)}
+		if r.Im != 0 {
+			reg.pole = fmt.Sprintf("%.4g ± %.4gi rad/s", r.Re, r.Im)
+		}
+		out = append(out, reg)
+	}
+	return append(out, region{0, 0.02 / settling, "s = 0, the integrator"})
+}
+
+// cancelled returns the region in which a zero lies, or nil.
+func cancelled(regions []region, zero complex128) *region {
+	zero = complex(real(zero), math.Abs(imag(zero)))
+	for i := range regions {
+		if cmplx.Abs(zero-regions[i].center) < regions[i].radius {
+			return &regions[i]
+		}
+	}
+	return nil
+}
