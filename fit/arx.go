@@ -26,6 +26,8 @@ type ARX struct {
 	First     int           // first row of each record
 	Order     int           // the longer of NA and Delay+NB-1
 	Condition float64       // of the regressors scaled to unit length, their means removed
+
+	root *mat.Dense // rows of any order: root'root is the inverse of Cov times Variance
 }
 
 // ARXOptions are taken literally: no field but First has a default.
@@ -111,6 +113,12 @@ func (g *regression) arx(t *triangle, opt ARXOptions) (*ARX, error) {
 	for i := range q {
 		for j := i; j < q; j++ {
 			m.Cov.SetSym(at[i], at[j], sign[i]*sign[j]*cov.At(i, j))
+		}
+	}
+	m.root = mat.NewDense(q, q, nil)
+	for i := range q {
+		for j := i; j < q; j++ {
+			m.root.Set(i, at[j], sign[j]*t.r.At(i, j)*t.scale[j])
 		}
 	}
 	for i := range m.Const {
