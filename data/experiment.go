@@ -13,6 +13,7 @@ type Experiment struct {
 	Segments []Segment
 	Flaws    []Flaw   // in the order of the file's reading: time base, then column by column
 	Columns  []string // names as in the header, or c1, c2, …
+	Layout   string   // how the log is written, in words
 }
 
 // A Segment is a stretch of a log without a gap: rows Period apart, all numbers finite.
@@ -23,7 +24,8 @@ type Segment struct {
 	// U[k] acts from the moment of Y[k] on, until Y[k+1]: already shifted where the rig file says input_row =
 	// "before". Equal length.
 	U, Y []float64
-	R, D []float64 // reference and dither of the same rows as Y and U; nil when not logged
+	// R is the reference in the rows of Y; D is the dither in the rows of U, shifted with it. nil when not logged.
+	R, D []float64
 }
 
 // A Flaw is something in a log that a fit should not take silently.
@@ -38,19 +40,24 @@ type Flaw struct {
 
 // Names of flaws.
 const (
-	FlawJitter       = "jitter"              // stamps off the grid by more than rounding
-	FlawGap          = "gap"                 // a step of the stamps longer than a period
-	FlawRepeat       = "repeated stamp"      // a stamp equal to the one before
-	FlawBackward     = "backward stamp"      // a stamp before the one before
-	FlawMissing      = "missing value"       // an empty cell, NaN, infinity
-	FlawCut          = "cut last line"       // the last line ends within a row
-	FlawStuck        = "stuck sensor"        // the output repeats one value far longer than usual
-	FlawSpike        = "spike"               // one sample far off its neighbours
-	FlawSaturated    = "saturated input"     // input flat at a limit
-	FlawBeyondLimits = "input beyond limits" // input past [limits] input: logged before its limits
-	FlawQuantised    = "quantisation"        // values lie on a grid of a step
-	FlawTrip         = "trip"                // output left [limits] output
-	FlawDrift        = "drift"               // the mean moves through the log
-	FlawShort        = "short segment"       // too few rows between two gaps
-	FlawConstant     = "constant column"     // a column of one value
+	FlawClock     = "time unit"       // stamps in another unit than s, converted
+	FlawJitter    = "jitter"          // stamps off their grid
+	FlawCoarse    = "coarse stamps"   // stamps with a resolution above the period
+	FlawGap       = "gap"             // a step of the stamps longer than a period
+	FlawShortStep = "short step"      // a step of the stamps shorter than a period
+	FlawRepeat    = "repeated stamp"  // a stamp equal to the one before
+	FlawBackward  = "backward stamp"  // a stamp before the one before
+	FlawHeader    = "repeated header" // the header again among the rows
+	FlawCut       = "cut last line"   // the file ends within a row
+	FlawMissing   = "missing value"   // an empty cell, NaN, infinity
+	FlawBeyond    = "beyond limits"   // input past [limits] input: logged before its limits
+	FlawRate      = "beyond rate"     // input moves faster than [limits] input_rate
+	FlawSaturated = "saturation"      // input flat at a limit
+	FlawTrip      = "trip"            // output left [limits] output
+	FlawStuck     = "stuck sensor"    // output repeats one value far longer than usual
+	FlawSpike     = "spike"           // one sample of the output far off its neighbours
+	FlawQuantised = "quantisation"    // values on a grid
+	FlawDrift     = "drift"           // the mean moves through the log
+	FlawShort     = "short segment"   // too few rows between two breaks
+	FlawConstant  = "constant column" // reference or dither that never moves
 )

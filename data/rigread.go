@@ -8,6 +8,7 @@ import (
 	"path"
 	"reflect"
 	"regexp"
+	"slices"
 	"strconv"
 	"strings"
 
@@ -169,15 +170,6 @@ var known = func() map[string][]string {
 // tableNames are the tables in the order of Rig's fields.
 func tableNames() []string { return known[""][1:] }
 
-func contains(list []string, s string) bool {
-	for _, x := range list {
-		if x == s {
-			return true
-		}
-	}
-	return false
-}
-
 // checkKeys reports the first key, in the order of the file, that no rig file has.
 func (g *Rig) checkKeys(keys []toml.Key) error {
 	for _, key := range keys {
@@ -189,7 +181,7 @@ func (g *Rig) checkKeys(keys []toml.Key) error {
 			e.Hint = "take it out, and check that nothing else is left uncontrolled"
 			return e
 		}
-		if len(key) == 1 && contains(known[""], last) || len(key) == 2 && contains(known[key[0]], last) {
+		if len(key) == 1 && slices.Contains(known[""], last) || len(key) == 2 && slices.Contains(known[key[0]], last) {
 			continue
 		}
 		if len(key) == 1 || len(known[key[0]]) == 0 {
@@ -219,7 +211,7 @@ func (g *Rig) suggest(table, word string) string {
 		return "did you mean " + quote(name) + "?"
 	}
 	for _, t := range append([]string{""}, tableNames()...) {
-		if t == table || !contains(known[t], word) {
+		if t == table || !slices.Contains(known[t], word) {
 			continue
 		}
 		if t == "" {

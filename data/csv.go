@@ -1,0 +1,470 @@
+package data
+
+import (
+	"bufio"
+	"bytes"
+	"compress/gzip"
+	"crypto/sha256"
+	"encoding/hex"
+	"errors"
+	"fmt"
+	"hash"
+	"io"
+	"math"
+	"strings"
+)
+
+// A source is a log's bytes, unpacked where they came packed, and their checksum as they came.
+type source struct {
+	io.Reader
+	raw  io.Reader
+	sum  hash.Hash
+	gzip bool
+}
+
+func newSource(r io.Reader) (*source, error) {
+	s := &source{sum: sha256.New()}
+	s.raw = io.TeeReader(r, s.sum)
+	buffered := bufio.NewReaderSize(s.raw, 1<<16)
+	s.Reader = buffered
+	if magic, _ := buffered.Peek(2); string(magic) == "\x1f\x8b" {
+		unpacked, err := gzip.NewReader(buffered)
+		if err != nil {
+			return nil, err
+		}
+		s.Reader, s.gzip = unpacked, true
+	}
+	return s, nil
+}
+
+// checksum reads what is left and returns the SHA-256 of all bytes in hex.
+func (s *source) checksum() (string, error) {
+	if _, err := io.Copy(io.Discard, s.raw); err != nil {
+		return "", err
+	}
+	return hex.EncodeToString(s.sum.Sum(nil)), nil
+}
+
+// A table holds the wanted columns of a log, row by row; NaN where a cell holds no number.
+type table struct {
+	layout
+	columns [][]float64 // as asked for; the one of the stamps, if any, in s
+	clock   clock
+	lines   lineMap
+	rows    int
+	ragged  int // line of a last line that ends within its row, or 0
+	again   []int
+}
+
+// A lineMap knows the line of each row. It keeps only the rows whose line is not one after that of the row before.
+type lineMap struct{ row, line []int }
+
+func (m *lineMap) add(row, line int) {
+	if n := len(m.row); n > 0 && m.line[n-1]+row-m.row[n-1] == line {
+		return
+	}
+	m.row, m.line = append(m.row, row), append(m.line, line)
+}
+
+// at returns the line of a row.
+func (m *lineMap) at(row int) int {
+	lo, hi := 0, len(m.row) // m.row[lo] <= row < m.row[hi]
+	for hi-lo > 1 {
+		if mid := (lo + hi) / 2; m.row[mid] <= row {
+			lo = mid
+		} else {
+			hi = mid
+		}
+	}
+	if hi == 0 {
+		return 0
+	}
+	return m.line[lo] + row - m.row[lo]
+}
+
+// A reader cuts a log into lines and those into numbers.
+type reader struct {
+	table
+	file   string
+	want   []int // column asked for -> field
+	stamps int   // field of the stamps, or -1
+	part   []int // field -> column asked for, or -1
+	last   int   // last field wanted
+	values []float64
+	header []byte // for a header that comes again
+	cells  [][]byte
+	faults faults
+}
+
+// faults collects cells that should be numbers and are not.
+type faults struct {
+	first []*ParseError
+	count int
+}
+
+const faultsShown = 4
+
+func (f *faults) add(e *ParseError) {
+	f.count++
+	if len(f.first) < faultsShown {
+		f.first = append(f.first, e)
+	}
+}
+
+// err returns all faults in one line, or nil.
+func (f *faults) err() error {
+	if f.count == 0 {
+		return nil
+	}
+	first := *f.first[0]
+	if f.count == 1 {
+		return &first
+	}
+	var b strings.Builder
+	b.WriteString(first.Err.Error())
+	for _, e := range f.first[1:] {
+		fmt.Fprintf(&b, "; line %d", e.Line)
+		if e.Column > 0 {
+			fmt.Fprintf(&b, ", column %d", e.Column)
+		}
+		fmt.Fprintf(&b, ": %v", e.Err)
+	}
+	if more := f.count - len(f.first); more > 0 {
+		fmt.Fprintf(&b, "; and %d more", more)
+	}
+	first.Err = errors.New(b.String())
+	return &first
+}
+
+// readTable reads a log. choose is told the layout and returns the fields wanted, and which of them holds stamps (an
+// index into them, or -1).
+func readTable(src io.Reader, file string, choose func(*layout) (fields []int, stamps int, err error)) (*table, error) {
+	head := make([]byte, headSize)
+	n, err := io.ReadFull(src, head)
+	head = head[:n]
+	whole := errors.Is(err, io.EOF) || errors.Is(err, io.ErrUnexpectedEOF)
+	if err != nil && !whole {
+		return nil, readingError(file, err)
+	}
+	if err == io.ErrUnexpectedEOF && n < len(head) {
+		// ReadFull and a packed file cut short give the same error: ask again.
+		if _, again := src.Read(make([]byte, 1)); again != nil && again != io.EOF {
+			return nil, readingError(file, again)
+		}
+	}
+	head = bytes.TrimPrefix(head, []byte("\xef\xbb\xbf"))
+	l, err := recognise(head, whole)
+	if err != nil {
+		return nil, inFile(file, err)
+	}
+	fields, stamps, err := choose(l)
+	if err != nil {
+		return nil, inFile(file, err)
+	}
+	r := &reader{table: table{layout: *l}, file: file, want: fields, stamps: -1}
+	r.columns = make([][]float64, len(fields))
+	r.values = make([]float64, len(fields))
+	r.part = make([]int, len(l.names))
+	for i := range r.part {
+		r.part[i] = -1
+	}
+	for i, f := range fields {
+		r.part[f] = i
+		r.last = max(r.last, f)
+		if i == stamps {
+			r.stamps = f
+		}
+	}
+	if err := r.read(head, src, whole); err != nil {
+		return nil, err
+	}
+	return &r.table, nil
+}
+
+// inFile fills in the file of a ParseError.
+func inFile(file string, err error) error {
+	if e, ok := err.(*ParseError); ok {
+		e.File = file
+	}
+	return err
+}
+
+func readingError(file string, err error) error {
+	switch {
+	case errors.Is(err, io.ErrUnexpectedEOF):
+		return &ParseError{File: file, Err: errors.New("the packed file ends before its end"), Hint: "copy it again"}
+	case errors.Is(err, gzip.ErrChecksum), errors.Is(err, gzip.ErrHeader):
+		return &ParseError{File: file, Err: err, Hint: "the packed file is damaged: copy it again"}
+	}
+	return fmt.Errorf("reading %q: %w", file, err)
+}
+
+// read cuts the log into lines, head first.
+func (r *reader) read(head []byte, src io.Reader, whole bool) error {
+	buf := make([]byte, 0, 4*headSize)
+	buf = append(buf, head...)
+	line := 1
+	for {
+		rest := buf
+		for {
+			i := bytes.IndexByte(rest, r.lineEnd)
+			if i < 0 {
+				break
+			}
+			if line >= r.from {
+				r.line(rest[:i], line, false)
+			} else if line == r.layout.header {
+				r.header = bytes.Clone(rest[:i])
+			}
+			rest = rest[i+1:]
+			line++
+		}
+		if whole {
+			if len(rest) > 0 && line >= r.from {
+				r.line(rest, line, true)
+			}
+			break
+		}
+		if len(rest) >= headSize {
+			return &ParseError{File: r.file, Line: line, Err: fmt.Errorf("longer than %d bytes", headSize), Hint: "a log has one row a line"}
+		}
+		buf = buf[:copy(buf[:cap(buf)], rest)]
+		n, err := io.ReadAtLeast(src, buf[len(buf):cap(buf)], 1)
+		buf = buf[:len(buf)+n]
+		if err == io.EOF {
+			whole = true
+		} else if err != nil {
+			return readingError(r.file, err)
+		}
+	}
+	if err := r.faults.err(); err != nil {
+		return err
+	}
+	if r.rows == 0 {
+		return &ParseError{File: r.file, Err: fmt.Errorf("%w: none", ErrTooShort), Hint: "the log has a header and nothing else"}
+	}
+	return nil
+}
+
+// line reads one line of the part of the log where the rows are. open: the file ends in it, without a line end.
+func (r *reader) line(text []byte, line int, open bool) {
+	if n := len(text); n > 0 && text[n-1] == '\r' {
+		text = text[:n-1]
+	}
+	if !r.quick(text) && !r.slow(text, line, open) {
+		return
+	}
+	for i, x := range r.values {
+		r.columns[i] = append(r.columns[i], x)
+	}
+	r.lines.add(r.rows, line)
+	r.rows++
+}
+
+// quick reads a row of plain numbers into r.values. It returns false for any other line, which slow then reads.
+func (r *reader) quick(text []byte) bool {
+	if r.stamps >= 0 && (!r.clock.started || r.clock.iso || r.clock.base != 0) || r.part[0] < 0 && isComment(text) {
+		return false
+	}
+	if r.delimiter == ' ' {
+		return r.quickBlanks(text)
+	}
+	pos := 0
+	for f := 0; ; f++ {
+		i := r.part[f]
+		if i < 0 {
+			j := bytes.IndexByte(text[pos:], r.delimiter)
+			if j < 0 || text[pos] == '"' {
+				return false
+			}
+			pos += j + 1
+			continue
+		}
+		for pos < len(text) && text[pos] == ' ' {
+			pos++
+		}
+		x, n := scanNumber(text[pos:], r.mark)
+		if n == 0 || math.IsInf(x, 0) {
+			return false
+		}
+		pos += n
+		for pos < len(text) && text[pos] == ' ' {
+			pos++
+		}
+		if f == r.stamps {
+			x *= r.clock.scale
+		}
+		r.values[i] = x
+		if pos == len(text) {
+			return f == r.last && f == len(r.part)-1 && !r.trailing
+		}
+		if text[pos] != r.delimiter {
+			return false
+		}
+		if f == r.last {
+			break
+		}
+		pos++
+	}
+	// What is left starts with the delimiter behind the last column wanted.
+	rest := text[pos:]
+	left := len(r.part) - 1 - r.last
+	if r.trailing {
+		left++
+	}
+	return bytes.Count(rest, []byte{r.delimiter}) == left && bytes.IndexByte(rest, '"') < 0
+}
+
+// quickBlanks is quick for cells between runs of blanks and tabs.
+func (r *reader) quickBlanks(text []byte) bool {
+	pos, f := 0, 0
+	for {
+		for pos < len(text) && (text[pos] == ' ' || text[pos] == '\t') {
+			pos++
+		}
+		if pos == len(text) {
+			return f == len(r.part)
+		}
+		if f == len(r.part) || text[pos] == '"' {
+			return false
+		}
+		if i := r.part[f]; i >= 0 {
+			x, n := scanNumber(text[pos:], r.mark)
+			if n == 0 || math.IsInf(x, 0) {
+				return false
+			}
+			pos += n
+			if pos < len(text) && text[pos] != ' ' && text[pos] != '\t' {
+				return false
+			}
+			if f == r.stamps {
+				x *= r.clock.scale
+			}
+			r.values[i] = x
+		} else {
+			for pos < len(text) && text[pos] != ' ' && text[pos] != '\t' {
+				pos++
+			}
+		}
+		f++
+	}
+}
+
+// slow reads any line into r.values, notes what is wrong with it, and tells whether it is a row.
+func (r *reader) slow(text []byte, line int, open bool) bool {
+	if isBlank(text) || isComment(text) {
+		return false
+	}
+	r.cells = r.layout.cells(r.cells, text)
+	cells := r.cells
+	if len(cells) != len(r.part) {
+		if open && len(cells) < len(r.part) {
+			r.ragged = line
+			return false
+		}
+		r.faults.add(&ParseError{File: r.file, Line: line, Err: fmt.Errorf("%s where %d belong", plural(len(cells), "cell", "cells"), len(r.part)),
+			Hint: "mend or remove these lines"})
+		return false
+	}
+	if r.rows > 0 && r.layout.header > 0 && len(r.header) > 0 && bytes.Equal(bytes.TrimSpace(text), bytes.TrimSpace(r.header)) {
+		r.again = append(r.again, r.rows)
+		return false
+	}
+	for i, f := range r.want {
+		x, ok := r.number(cells[f], f)
+		if !ok {
+			e := &ParseError{File: r.file, Line: line, Column: f + 1, Err: fmt.Errorf("%s is no number (column %s)", quote(readable(cells[f])), quote(r.names[f])),
+				Hint: "mend or remove these lines; an empty cell or NaN may stand for a missing value"}
+			if y, n := scanNumber(cells[f], r.mark); n == len(cells[f]) && math.IsInf(y, 0) {
+				e.Err = fmt.Errorf("%s is too large for a number (column %s)", quote(string(cells[f])), quote(r.names[f]))
+			}
+			if f == r.stamps {
+				e.Err = fmt.Errorf("%s is no time stamp (column %s)", quote(readable(cells[f])), quote(r.names[f]))
+				e.Hint = "write s, or ISO 8601 like 2025-12-17T20:58:11.705"
+			}
+			r.faults.add(e)
+		}
+		r.values[i] = x
+	}
+	return true
+}
+
+// number reads one cell of field f.
+func (r *reader) number(cell []byte, f int) (float64, bool) {
+	if isMissing(cell) {
+		return math.NaN(), true
+	}
+	if f == r.stamps {
+		if !r.clock.started {
+			if !r.clock.start(cell, r.mark, r.unit(f)) {
+				return math.NaN(), false
+			}
+		}
+		return r.clock.read(cell, r.mark)
+	}
+	x, n := scanNumber(cell, r.mark)
+	if n == len(cell) && !math.IsInf(x, 0) {
+		return x, true
+	}
+	if n < len(cell) && !r.marked && r.delimiter != ',' { // the first decimal mark of the log is none of the head's
+		if x, n := scanNumber(cell, ','); n == len(cell) {
+			r.mark, r.marked = ',', true
+			return x, true
+		}
+	}
+	return math.NaN(), false
+}
+
+// unit returns what the log says of the unit of a field: its units row, or the brackets in its name.
+func (l *layout) unit(f int) string {
+	if l.units != nil {
+		return l.units[f]
+	}
+	_, unit := splitUnit(l.names[f])
+	return unit
+}
+
+// splitUnit cuts "u [A]" or "u (A)" into "u" and "A".
+func splitUnit(name string) (bare, unit string) {
+	for _, p := range []string{"[]", "()"} {
+		if i := strings.IndexByte(name, p[0]); i > 0 && name[len(name)-1] == p[1] {
+			return strings.TrimSpace(name[:i]), strings.TrimSpace(name[i+1 : len(name)-1])
+		}
+	}
+	return name, ""
+}
+
+// field finds a column by its name: as written, or else without its unit, if that is one column only.
+func (l *layout) field(name string) (int, error) {
+	var found, bare []int
+	for i, n := range l.names {
+		if n == name {
+			found = append(found, i)
+		} else if b, _ := splitUnit(n); b == name {
+			bare = append(bare, i)
+		}
+	}
+	if len(found) == 0 {
+		found = bare
+	}
+	if len(found) == 1 {
+		return found[0], nil
+	}
+	e := &ParseError{Line: l.header}
+	if len(found) > 1 {
+		e.Err = fmt.Errorf("%w as %s: columns %d and %d have that name", ErrNoColumn, quote(name), found[0]+1, found[1]+1)
+		e.Hint = "give each column a name of its own"
+		return 0, e
+	}
+	e.Err = fmt.Errorf("%w as %s", ErrNoColumn, quote(name))
+	list := "the columns are " + quoteList(l.names, 20)
+	if !l.named {
+		list = fmt.Sprintf("the log has no header: its columns are called c1 to c%d", len(l.names))
+	}
+	if near, ok := nearest(name, l.names); ok {
+		e.Hint = "did you mean " + quote(near) + "? " + list
+	} else {
+		e.Hint = list
+	}
+	return 0, e
+}

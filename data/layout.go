@@ -1,0 +1,477 @@
+package data
+
+import (
+	"bytes"
+	"errors"
+	"fmt"
+	"slices"
+	"strings"
+	"unicode/utf8"
+)
+
+// headSize is how much of a log is looked at to recognise its layout. A line, too, may not be longer.
+const headSize = 1 << 18
+
+// A layout is how a log is written: what separates its cells, where its numbers start, what its columns are called.
+type layout struct {
+	delimiter byte // ',' ';' '\t'; ' ' for any run of blanks and tabs
+	mark      byte // decimal mark, '.' or ','
+	marked    bool // the head has a decimal mark, so that the other one is no number
+	lineEnd   byte // '\n', or '\r' where lines end in that alone
+	trailing  bool // each row ends in a delimiter that starts no cell
+
+	names    []string // of the columns, c1, c2, … where the log gives none
+	named    bool     // the names are the log's own
+	units    []string // nil: no units row
+	header   int      // 1-based line of the names; 0: none
+	from     int      // 1-based line of the first row of numbers
+	preamble int      // lines above the header that are neither comments nor blank
+}
+
+// A headLine is one line of the head.
+type headLine struct {
+	number  int
+	text    []byte
+	comment bool
+	blank   bool
+}
+
+// recognise finds the layout of a log from its first bytes. whole tells that head is all there is.
+func recognise(head []byte, whole bool) (*layout, error) {
+	if err := checkText(head); err != nil {
+		return nil, err
+	}
+	l := &layout{lineEnd: '\n'}
+	if bytes.IndexByte(head, '\n') < 0 && bytes.IndexByte(head, '\r') >= 0 {
+		l.lineEnd = '\r'
+	}
+	lines := l.headLines(head, whole)
+	if len(lines) == 0 {
+		if !whole {
+			return nil, &ParseError{Line: 1, Err: fmt.Errorf("longer than %d bytes", headSize), Hint: "a log has one row a line"}
+		}
+		return nil, &ParseError{Err: errors.New("empty")}
+	}
+	first := l.chooseDelimiter(lines)
+	if first < 0 {
+		return nil, noNumbers(lines)
+	}
+	if err := l.findNames(lines, first); err != nil {
+		return nil, err
+	}
+	return l, nil
+}
+
+// checkText refuses what is no text in a single-byte encoding or UTF-8.
+func checkText(head []byte) error {
+	switch {
+	case bytes.HasPrefix(head, []byte("PK\x03\x04")), bytes.HasPrefix(head, []byte("\xd0\xcf\x11\xe0")):
+		return &ParseError{Err: errors.New("a spreadsheet or an archive, no text"), Hint: "export the log as CSV"}
+	case bytes.HasPrefix(head, []byte("\xff\xfe")), bytes.HasPrefix(head, []byte("\xfe\xff")):
+		return &ParseError{Err: errors.New("text in UTF-16"), Hint: "save it as UTF-8"}
+	}
+	if i := bytes.IndexByte(head, 0); i >= 0 {
+		return &ParseError{Line: 1 + bytes.Count(head[:i], []byte{'\n'}), Err: errors.New("a zero byte, so no text"), Hint: "export the log as CSV"}
+	}
+	return nil
+}
+
+// headLines cuts the head into at most 500 lines, without the last one where it may go on beyond the head.
+func (l *layout) headLines(head []byte, whole bool) []headLine {
+	const most = 500
+	var lines []headLine
+	for number := 1; len(head) > 0 && len(lines) < most; number++ {
+		text := head
+		i := bytes.IndexByte(head, l.lineEnd)
+		if i < 0 && !whole {
+			break
+		}
+		if i < 0 {
+			head = nil
+		} else {
+			text, head = head[:i], head[i+1:]
+		}
+		text = bytes.TrimSuffix(text, []byte{'\r'})
+		lines = append(lines, headLine{number, text, isComment(text), isBlank(text)})
+	}
+	return lines
+}
+
+// isComment tells whether a line is for people only.
+func isComment(line []byte) bool {
+	line = bytes.TrimLeft(line, " \t")
+	return len(line) > 0 && (line[0] == '#' || line[0] == '%') && !bytes.HasPrefix(bytes.ToLower(line[:min(len(line), 4)]), []byte("#n/a")) ||
+		bytes.HasPrefix(line, []byte("//"))
+}
+
+func isBlank(line []byte) bool { return len(bytes.TrimSpace(line)) == 0 }
+
+// cells cuts a line into its cells, blanks and quotes trimmed, into dst.
+func (l *layout) cells(dst [][]byte, line []byte) [][]byte {
+	dst = dst[:0]
+	if l.delimiter == ' ' {
+		line = bytes.TrimSpace(line)
+		for len(line) > 0 {
+			var cell []byte
+			if line[0] == '"' {
+				cell, line = quoted(line)
+			} else {
+				i := bytes.IndexAny(line, " \t")
+				if i < 0 {
+					i = len(line)
+				}
+				cell, line = line[:i], line[i:]
+			}
+			dst = append(dst, cell)
+			line = bytes.TrimLeft(line, " \t")
+		}
+		return dst
+	}
+	for {
+		rest := bytes.TrimLeft(line, " ")
+		var cell []byte
+		if len(rest) > 0 && rest[0] == '"' {
+			cell, rest = quoted(rest)
+			line = bytes.TrimLeft(rest, " ")
+			if len(line) > 0 && line[0] != l.delimiter { // text behind a quoted cell: take it as part of the cell
+				i := bytes.IndexByte(line, l.delimiter)
+				if i < 0 {
+					i = len(line)
+				}
+				cell, line = append(bytes.Clone(cell), line[:i]...), line[i:]
+			}
+		} else {
+			i := bytes.IndexByte(line, l.delimiter)
+			if i < 0 {
+				i = len(line)
+			}
+			cell, line = bytes.TrimSpace(line[:i]), line[i:]
+		}
+		dst = append(dst, cell)
+		if len(line) == 0 {
+			break
+		}
+		line = line[1:]
+	}
+	if l.trailing && len(dst) > 1 && len(dst[len(dst)-1]) == 0 {
+		dst = dst[:len(dst)-1]
+	}
+	return dst
+}
+
+// quoted returns the text of the quoted cell that line starts with, and what follows it.
+func quoted(line []byte) (cell, rest []byte) {
+	for i := 1; i < len(line); i++ {
+		if line[i] != '"' {
+			continue
+		}
+		if i+1 < len(line) && line[i+1] == '"' {
+			i++
+			continue
+		}
+		return bytes.TrimSpace(bytes.ReplaceAll(line[1:i], []byte(`""`), []byte(`"`))), line[i+1:]
+	}
+	return bytes.TrimSpace(line[1:]), nil
+}
+
+// What a cell of the head looks like.
+const (
+	cellText = iota
+	cellMissing
+	cellNumber
+	cellStamp
+)
+
+func (l *layout) kind(cell []byte) int {
+	if isMissing(cell) {
+		return cellMissing
+	}
+	if _, n := scanNumber(cell, l.mark); n == len(cell) {
+		return cellNumber
+	}
+	if _, _, ok := scanStamp(cell); ok {
+		return cellStamp
+	}
+	return cellText
+}
+
+// chooseDelimiter tries all ways to cut the lines, keeps the one that makes most cells numbers, and returns the
+// index of the first row of numbers, or -1.
+func (l *layout) chooseDelimiter(lines []headLine) int {
+	best, bestScore, bestFirst := *l, 0, -1
+	for _, try := range []struct{ delimiter, mark byte }{
+		{'\t', '.'}, {';', '.'}, {',', '.'}, {' ', '.'}, {'\t', ','}, {';', ','}, {' ', ','},
+	} {
+		c := layout{lineEnd: l.lineEnd, delimiter: try.delimiter, mark: try.mark}
+		if score, first := c.try(lines); score > bestScore {
+			best, bestScore, bestFirst = c, score, first
+		}
+	}
+	*l = best
+	return bestFirst
+}
+
+// try scores one way to cut the lines: cells that are numbers or stamps, less two for each that is text, over the
+// lines with the usual number of cells. It sets trailing, marked and names to their number.
+func (l *layout) try(lines []headLine) (score, first int) {
+	type row struct{ cells, number, text, index int }
+	var rows []row
+	var cells [][]byte
+	count := map[int]int{}
+	ends := map[int]int{} // rows by number of cells whose last cell is empty
+	for i, line := range lines {
+		if line.comment || line.blank {
+			continue
+		}
+		cells = l.cells(cells, line.text)
+		r := row{cells: len(cells), index: i}
+		for _, c := range cells {
+			switch l.kind(c) {
+			case cellNumber:
+				r.number++
+				l.marked = l.marked || bytes.IndexByte(c, l.mark) >= 0
+			case cellStamp:
+				r.number++
+			case cellText:
+				r.text++
+			}
+		}
+		rows = append(rows, r)
+		if r.cells > 1 && r.number > 1 {
+			count[r.cells]++
+			if len(cells[len(cells)-1]) == 0 {
+				ends[r.cells]++
+			}
+		}
+	}
+	usual := 0
+	for n, c := range count {
+		if c > count[usual] || c == count[usual] && n > usual {
+			usual = n
+		}
+	}
+	if usual == 0 {
+		return 0, -1
+	}
+	first = -1
+	for i, r := range rows {
+		if r.cells != usual || r.number < 2 {
+			continue
+		}
+		score += r.number - 2*r.text
+		alone := i+1 < len(rows) && (rows[i+1].cells != usual || rows[i+1].number < 2)
+		if first < 0 && !alone {
+			first = r.index
+		}
+	}
+	if first < 0 { // rows never follow each other; take the first
+		for _, r := range rows {
+			if r.cells == usual && r.number > 1 {
+				first = r.index
+				break
+			}
+		}
+	}
+	if l.delimiter != ' ' && ends[usual] == count[usual] {
+		l.trailing = true
+		usual--
+	}
+	l.names = make([]string, usual)
+	return score, first
+}
+
+// findNames finds the header, the units row and the first row of numbers, given a line that certainly is one.
+func (l *layout) findNames(lines []headLine, first int) error {
+	n := len(l.names)
+	all := *l
+	all.trailing = false
+	var texts []int // nearest block of lines of text above, with as many cells as the rows
+	var cells [][]byte
+	l.from = lines[first].number
+	last := first // upper end of what is known to be rows
+	for i := first - 1; i >= 0; i-- {
+		if lines[i].comment || lines[i].blank {
+			if len(texts) > 0 {
+				break
+			}
+			continue
+		}
+		cells = all.cells(cells, lines[i].text)
+		if l.trailing && len(cells) == n+1 && len(cells[n]) > 0 && len(texts) == 0 {
+			// A header names the last column, which is empty in all rows.
+			l.trailing, n = false, n+1
+			l.names = make([]string, n)
+		}
+		if l.trailing && len(cells) == n+1 && len(cells[n]) == 0 {
+			cells = cells[:n]
+		}
+		numbers, text := 0, 0
+		for _, c := range cells {
+			switch l.kind(c) {
+			case cellNumber, cellStamp:
+				if string(c) != "1" { // the unit of a ratio
+					numbers++
+				}
+			case cellText:
+				text++
+			}
+		}
+		if len(cells) == n && numbers == 0 && text > 0 {
+			texts = append([]int{i}, texts...)
+			continue
+		}
+		if len(texts) > 0 {
+			break
+		}
+		if len(cells) == n && text > 0 && i == 0 { // a header with numbers in it
+			texts = []int{i}
+			break
+		}
+		if len(cells) != n && numbers == 0 && len(cells) > 1 && last == first {
+			return l.headerMismatch(lines[i], len(cells), n)
+		}
+		last = i
+	}
+	if len(texts) == 0 {
+		for i := range l.names {
+			l.names[i] = fmt.Sprintf("c%d", i+1)
+		}
+		l.namesFromComment(lines, first)
+		for _, line := range lines { // rows may start above the first faultless one
+			if !line.comment && !line.blank {
+				l.from = line.number
+				break
+			}
+		}
+		return nil
+	}
+	header := texts[0]
+	for _, i := range texts { // the first one without a hole, else the first
+		if full(l.cells(cells, lines[i].text)) {
+			header = i
+			break
+		}
+	}
+	l.named, l.header = true, lines[header].number
+	for i, c := range l.cells(cells, lines[header].text) {
+		if l.names[i] = readable(c); l.names[i] == "" {
+			l.names[i] = fmt.Sprintf("c%d", i+1)
+		}
+	}
+	end := header
+	if i := header + 1; i < len(lines) && slices.Contains(texts, i) {
+		l.units = make([]string, n)
+		for j, c := range l.cells(cells, lines[i].text) {
+			l.units[j] = strings.Trim(readable(c), "[]() ")
+		}
+		end = texts[len(texts)-1]
+	}
+	for i := end + 1; i < len(lines); i++ {
+		if !lines[i].comment && !lines[i].blank {
+			l.from = lines[i].number
+			break
+		}
+	}
+	for i := range header {
+		if !lines[i].comment && !lines[i].blank {
+			l.preamble++
+		}
+	}
+	return nil
+}
+
+func full(cells [][]byte) bool {
+	for _, c := range cells {
+		if len(c) == 0 {
+			return false
+		}
+	}
+	return true
+}
+
+func (l *layout) headerMismatch(line headLine, names, n int) error {
+	e := &ParseError{Line: line.number, Err: fmt.Errorf("%s in the header, %s in the rows below", plural(names, "name", "names"), plural(n, "cell", "cells"))}
+	switch {
+	case l.delimiter == ',' && n == 2*names:
+		e.Hint = "decimal commas cannot be told from commas between cells: export with ';' between cells"
+	case l.delimiter == ' ':
+		e.Hint = "put names with blanks in them in double quotes"
+	default:
+		e.Hint = "one name a column"
+	}
+	return e
+}
+
+// namesFromComment takes the names from the nearest comment above the rows, if it has as many words as there are
+// columns, after an optional label that ends in ':'.
+func (l *layout) namesFromComment(lines []headLine, first int) {
+	for i := first - 1; i >= 0; i-- {
+		if lines[i].blank {
+			continue
+		}
+		if !lines[i].comment {
+			return
+		}
+		text := strings.TrimLeft(readable(lines[i].text), "#%/ \t")
+		if text == "" {
+			continue
+		}
+		if label, rest, ok := strings.Cut(text, ":"); ok && !strings.ContainsAny(label, ",;\t") {
+			text = rest
+		}
+		words := strings.Fields(text)
+		if l.delimiter != ' ' && strings.IndexByte(text, l.delimiter) >= 0 {
+			words = nil
+			for _, c := range l.cells(nil, []byte(text)) {
+				words = append(words, string(c))
+			}
+		}
+		if len(words) == len(l.names) {
+			copy(l.names, words)
+			l.named, l.header = true, lines[i].number
+		}
+		return
+	}
+}
+
+// readable returns text as UTF-8: as it is, or read as Latin-1 where it is not UTF-8.
+func readable(text []byte) string {
+	if utf8.Valid(text) {
+		return string(text)
+	}
+	runes := make([]rune, len(text))
+	for i, c := range text {
+		runes[i] = rune(c)
+	}
+	return string(runes)
+}
+
+func noNumbers(lines []headLine) error {
+	for _, line := range lines {
+		if !line.comment && !line.blank {
+			return &ParseError{Line: line.number, Err: errors.New("no row of two or more numbers below this line"),
+				Hint: "a log has a header and rows of numbers, separated by commas, semicolons, tabs or blanks"}
+		}
+	}
+	return &ParseError{Err: errors.New("no row of numbers"), Hint: "there are only comments and blank lines"}
+}
+
+// describe says the layout in words.
+func (l *layout) describe() string {
+	var b strings.Builder
+	b.WriteString(map[byte]string{',': "commas", ';': "semicolons", '\t': "tabs", ' ': "blanks"}[l.delimiter])
+	b.WriteString(" between cells")
+	if l.mark == ',' {
+		b.WriteString(", decimal comma")
+	}
+	if l.header > 0 {
+		fmt.Fprintf(&b, ", names on line %d", l.header)
+	} else {
+		b.WriteString(", no names")
+	}
+	if l.units != nil {
+		fmt.Fprintf(&b, ", units on line %d", l.header+1)
+	}
+	fmt.Fprintf(&b, ", numbers from line %d", l.from)
+	return b.String()
+}
