@@ -19,7 +19,11 @@ type Run struct {
 	// Reference is absolute (nil: Y0), Dither adds to u before its limits, InputDisturbance to the input at the
 	// plant (held, and delayed like u), OutputDisturbance to the output itself, Noise to the measured y only.
 	Reference, Dither, InputDisturbance, OutputDisturbance, Noise []float64
-	Initial                                                       []float64 // plant state at the start, in the basis of Plant.SS (delay taken out); nil: rest
+	// Innovations act as identified noise that shares the plant's denominator: A y = B u + Shape e with A the monic
+	// sampled denominator of Plant and Shape = C/D stable (nil: 1). They drive the plant's state and the measured y.
+	Innovations []float64
+	Shape       *DTF
+	Initial     []float64 // plant state at the start, in the basis of Plant.SS (delay taken out); nil: rest
 	// OutputOffset starts the plant on the mode of its pole with the largest real part, with the input at rest and
 	// the output this far from Y0: e^{pt} for a real pole, Re e^{pt} for a pair, a constant for a double integrator.
 	// It adds to Initial.
@@ -59,6 +63,10 @@ type Simulator struct {
 	fineRow []float64 // fine × (n + 2): the output at a sub-instant from x, w[k-delay], w[k-delay-1]
 	x, next []float64
 	mode    []float64 // unstable mode of unit output, nil until asked for
+	inj     *injection
+	shape   DTF
+	xd      []float64 // states of the noise shape
+	nextD   []float64
 	w       []float64 // past plant inputs, newest first
 	law     Law
 	state   *LawState
@@ -81,7 +89,7 @@ func (s *Simulator) prepare(r *Run) error {
 		name string
 		x    []float64
 	}{{"reference", r.Reference}, {"dither", r.Dither}, {"input disturbance", r.InputDisturbance},
-		{"output disturbance", r.OutputDisturbance}, {"noise", r.Noise}} {
+		{"output disturbance", r.OutputDisturbance}, {"noise", r.Noise}, {"innovations", r.Innovations}} {
 		if q.x != nil && len(q.x) < r.Steps {
 			return fmt.Errorf("simulating a loop: %s has %d values for %d steps", q.name, len(q.x), r.Steps)
 		}
@@ -101,6 +109,25 @@ func (s *Simulator) prepare(r *Run) error {
 		s.x, s.next = make([]float64, p.n()), make([]float64, p.n())
 		s.w = make([]float64, p.delay+2)
 		s.prepareFine()
+		s.inj = nil
+	}
+	if r.Innovations != nil {
+		shape := DTF{Num: Poly{1}, Den: Poly{1}, Period: r.Period}
+		if r.Shape != nil {
+			shape = *r.Shape
+		}
+		if shape.Period != r.Period || len(shape.Den) == 0 || shape.Den[0] == 0 {
+			return fmt.Errorf("simulating a loop: the noise shape needs period %g s and a denominator", r.Period)
+		}
+		if s.inj == nil || !s.shape.same(&shape) {
+			inj, err := s.p.inject(r.Plant, shape)
+			if err != nil {
+				return fmt.Errorf("simulating a loop: %w", err)
+			}
+			s.inj, s.shape = inj, *shape.clone()
+			s.xd, s.nextD = make([]float64, len(inj.rest.b)), make([]float64, len(inj.rest.b))
+		}
+		clear(s.xd)
 	}
 	if s.state == nil || !s.law.same(r.Law) {
 		if err := r.Law.Validate(); err != nil {
@@ -224,6 +251,9 @@ func (s *Simulator) Simulate(dst *Trace, r Run) error {
 		if r.Noise != nil {
 			measured += r.Noise[k]
 		}
+		if r.Innovations != nil {
+			measured += r.Innovations[k]
+		}
 		ref, dither := r.Law.Y0, 0.0
 		if r.Reference != nil {
 			ref = r.Reference[k]
@@ -247,6 +277,9 @@ func (s *Simulator) Simulate(dst *Trace, r Run) error {
 			break
 		}
 		s.advance()
+		if r.Innovations != nil {
+			s.disturb(r.Innovations[k])
+		}
 	}
 	dst.U, dst.Y, dst.YTrue, dst.R, dst.V = dst.U[:n], dst.Y[:n], dst.YTrue[:n], dst.R[:n], dst.V[:n]
 	if s.fine > 1 {
@@ -290,6 +323,25 @@ func (s *Simulator) advance() {
 		s.next[i] = v
 	}
 	s.x, s.next = s.next, s.x
+}
+
+// disturb adds what the innovation e of this sample does to the state at the next one.
+func (s *Simulator) disturb(e float64) {
+	c := &s.inj.rest
+	n := len(s.xd)
+	rest := 0.0
+	for i, x := range s.xd {
+		rest += c.c[i] * x
+		v := x + c.b[i]*e
+		for j, a := range c.a[i*n : i*n+n] {
+			v += a * s.xd[j]
+		}
+		s.nextD[i] = v
+	}
+	s.xd, s.nextD = s.nextD, s.xd
+	for i := range s.x {
+		s.x[i] += s.inj.k[i]*e + s.inj.l[i]*rest
+	}
 }
 
 // sub writes the output at the sub-instants of the present period.

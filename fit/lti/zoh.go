@@ -202,3 +202,42 @@ func ZOHTF(g TF, period float64) (DTF, error) {
 	}
 	return DTF{Num: num, Den: den, Period: period}, nil
 }
+
+// ZOHResponse returns the frequency response of ZOH(g, period) as a function of omega, rad/s, without the states of
+// the delay. It may be called concurrently.
+func ZOHResponse(g TF, period float64) (func(omega float64) complex128, error) {
+	p, err := sample(g, period)
+	if err != nil {
+		return nil, err
+	}
+	n := p.n()
+	return func(omega float64) complex128 {
+		var space [72]complex128 // up to 8 states without an allocation
+		work := space[:]
+		if n*(n+1) > len(space) {
+			work = make([]complex128, n*(n+1))
+		}
+		m, b := work[:n*n], work[n*n:n*(n+1)]
+		sin, cos := math.Sincos(omega * period / 2)
+		z1 := complex(-2*sin*sin, 2*sin*cos) // z - 1 without cancellation
+		q := cmplx.Exp(complex(0, -omega*period))
+		for i := range n {
+			for j := range n {
+				m[i*n+j] = complex(-p.phi[i*n+j], 0)
+			}
+			m[i*n+i] = z1 + complex(1-p.phi[i*n+i], 0)
+			b[i] = complex(p.g0[i], 0) + complex(p.g1[i], 0)*q
+		}
+		if !solveComplex(m, b) {
+			return cmplx.Inf()
+		}
+		v := complex(p.d0, 0) + complex(p.d1, 0)*q
+		for i := range n {
+			v += complex(p.c[i], 0) * b[i]
+		}
+		if p.delay > 0 {
+			v *= cmplx.Exp(complex(0, -omega*period*float64(p.delay)))
+		}
+		return v
+	}, nil
+}
