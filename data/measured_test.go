@@ -53,7 +53,7 @@ func TestMeasuredFurnace(t *testing.T) {
 			}
 		}
 		// Number, mean and standard deviation (divisor N) of the input: -0.05683 and 1.070952, published for series J of
-		// Box & Jenkins, Time Series Analysis (1976) in a time-series manual; see ../../shared/checkvalues.md.
+		// Box & Jenkins, Time Series Analysis (1976), in a time-series manual that the data set's NOTE.md quotes.
 		sd := math.Sqrt(s.s / float64(s.n))
 		if s.n != 296 || math.Abs(s.mean+0.05683) > 5e-6 || math.Abs(sd-1.070952) > 5e-7 {
 			t.Errorf("%s: input: N %d, mean %v, sd %v", name, s.n, s.mean, sd)
@@ -84,4 +84,3 @@ func TestMeasuredWithoutHeader(t *testing.T) {
 		}
 	}
 }
-
