@@ -86,6 +86,10 @@ const (
 	formRollOff = "lead with roll-off"
 )
 
+// furthestRollOff is the highest roll-off in units of the crossover rate: further out it buys next to no margin and
+// lets through what the model does not know.
+const furthestRollOff = 12
+
 // rollOffDamping of the second-order roll-off.
 const rollOffDamping = 0.8
 
@@ -102,7 +106,7 @@ func innerBlock(form string, x []float64, scale innerScale, period float64) bloc
 	}
 	k0, k1 := k*math.Cos(x[1]), k*math.Sin(x[1])/scale.rate
 	// Beyond 2/T Tustin's rule would put the pole at negative z: a controller that rings.
-	wf := math.Min(scale.rate*math.Exp(x[2]), 1.9/period)
+	wf := math.Min(scale.rate*math.Min(math.Exp(x[2]), furthestRollOff), 1.9/period)
 	if form == formLead {
 		return block{1, [3]float64{k0, k1}, [3]float64{1, 1 / wf}}
 	}

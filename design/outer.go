@@ -166,11 +166,11 @@ func (p *problem) tuneOuter(ctx context.Context, inner innerResult, plants []pla
 	for _, form := range []string{formI, formPI, formPILead} {
 		starts := p.outerStarts(form, inner, t)
 		done := make([]pair, len(starts))
-		group, ctx := errgroup.WithContext(ctx)
+		group, within := errgroup.WithContext(ctx)
 		group.SetLimit(limit(workers))
 		for i, s := range starts {
 			group.Go(func() error {
-				if err := ctx.Err(); err != nil {
+				if err := within.Err(); err != nil {
 					return err
 				}
 				done[i] = p.polishOuter(s, plants, t)

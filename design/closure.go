@@ -1,0 +1,121 @@
+package design
+
+import (
+	"fmt"
+	"math"
+)
+
+// expectedSD returns the standard deviations of input and measured output in closed loop under all that the fit saw
+// beside the input, at the nominal model.
+func (p *problem) expectedSD(g *gridLoop) SignalPair {
+	var u, y, uLast, yLast float64
+	for j := range g.d {
+		c := g.d[j]*p.nominal.a[j] + g.k[j]*p.nominal.b[j]
+		c2 := real(c)*real(c) + imag(c)*imag(c)
+		k, d := g.k[j], g.d[j]
+		uv := (real(k)*real(k) + imag(k)*imag(k)) * p.noise.shape[j] / c2
+		yv := (real(d)*real(d) + imag(d)*imag(d)) * p.noise.shape[j] / c2
+		if j > 0 {
+			h := (p.omega[j] - p.omega[j-1]) / 2 * p.period / math.Pi
+			u += h * (uv + uLast)
+			y += h * (yv + yLast)
+		}
+		uLast, yLast = uv, yv
+	}
+	return SignalPair{Input: math.Sqrt(u), Output: math.Sqrt(y)}
+}
+
+// firstClosure says how to close the loops for the first time.
+func (p *problem) firstClosure(l *Loops) {
+	law := l.LTI()
+	f := &FirstClosure{ExpectedSD: p.expectedSD(p.lawGrid(law))}
+	in := *l.InputLimits
+	f.Trip.Input = &in
+	out := [2]float64{math.Inf(-1), math.Inf(1)}
+	if p.output != nil {
+		out = [2]float64{law.Y0 + p.output[0], law.Y0 + p.output[1]}
+	}
+	if q := l.Promise; q != nil && q.Recoverable > 0 {
+		// Beyond the offset from which the loops come back, waiting only makes it worse.
+		least := math.Max(1.5*p.spec.step*(1+p.spec.overshoot), 4*f.ExpectedSD.Output)
+		r := math.Max(q.Recoverable, least)
+		out[0], out[1] = math.Max(out[0], law.Y0-r), math.Min(out[1], law.Y0+r)
+	}
+	if !math.IsInf(out[0], 0) && !math.IsInf(out[1], 0) {
+		f.Trip.Output = &out
+	}
+	ui, yo := unitOf(p.rig.Units.Input), unitOf(p.rig.Units.Output)
+	f.Order = []string{
+		"Check sign, columns and limits with the actuator off: move the output by hand and watch the input that would be sent.",
+		fmt.Sprintf("Set the trips (first_closure.trip), one person at the stop; bring the rig to its operating point, input %.4g%s, output %.4g%s, under the stopgap law.", law.U0, ui, law.Y0, yo),
+		"Hand over to the inner loop alone: v = 0, outer loop off, the inner controller's past filled with what was sent.",
+		fmt.Sprintf("Watch for a hundred settling times. With both loops the standard deviation will be near %.3g%s at the input and %.3g%s at the output; with the inner one alone the output also wanders slowly.",
+			f.ExpectedSD.Input, ui, f.ExpectedSD.Output, yo),
+		"Close the outer loop with its limits at a tenth of outer_limits, then widen them to the full ones.",
+		fmt.Sprintf("Step the reference by a tenth of the spec's step, then by half, then by %.4g%s; compare with the report before each.", p.spec.step, yo),
+	}
+	f.Cautions = []string{
+		"Somebody could be hurt: guards on, nobody within reach, a person at the stop, local codes and licensed practice first.",
+		"A wrong sign shows at once: the input runs to a limit while the output leaves in one direction. Hit the stop, do not wait for it to turn.",
+		"Twice the expected deviation, or a tone that grows, means that the rig is not the plant of the model: stop and recheck.",
+		"The promise covers the plants that the data allow, at this operating point and sample period, and no others.",
+	}
+	l.FirstClosure = f
+}
+
+func unitOf(u string) string {
+	if u == "" {
+		return ""
+	}
+	return " " + u
+}
+
+// Limits behind the warnings of conclude.
+const (
+	slowestSampling  = 0.25 // unstable pole times sample period
+	fewestDeviations = 3.0  // deviations of the input inside its limits
+)
+
+// conclude sets verdict and warnings from margins, noise and model.
+func (p *problem) conclude(l *Loops) {
+	warn := func(format string, args ...any) { l.Warnings = append(l.Warnings, fmt.Sprintf(format, args...)) }
+	weak := false
+	if p.model.Verdict == "weak" {
+		weak = true
+		warn("the model's verdict is weak, and so is what rests on it")
+	}
+	if p.model.Verdict == "refused" {
+		weak = true
+		warn("the model was refused by the fit: these loops rest on nothing that the log could tell")
+	}
+	if !p.noise.split {
+		warn("the noise could not be split into sensor noise and input disturbance: the whole prediction error counts as sensor noise in input_noise")
+	}
+	for _, s := range p.nominal.tf.Poles() {
+		if x := real(s) * p.period; x > slowestSampling {
+			warn("the sample period is long for the unstable pole: pole times period is %.2g, common practice asks for less than %.2g", x, slowestSampling)
+		}
+	}
+	if f := l.FirstClosure; f != nil {
+		side := math.Min(-p.input[0], p.input[1])
+		if sd := f.ExpectedSD.Input; fewestDeviations*sd > side {
+			weak = true
+			warn("noise and disturbance move the input by %.3g (standard deviation), a third or more of what its limits leave on the lesser side (%.3g): it will saturate, and the promise, which is for noise-free steps, does not cover that", sd, side)
+		}
+		if p.output != nil {
+			room := math.Min(-p.output[0], p.output[1])
+			if sd := f.ExpectedSD.Output; 4*sd+p.spec.step > room {
+				warn("four deviations of the output (%.3g each) and the step come near the trip limits", sd)
+			}
+		}
+	}
+	if q := l.Promise; q != nil && len(q.UnstablePoles) > 1 {
+		warn("the drawn plants differ in their number of unstable poles: each was judged with its own")
+	}
+	if m := l.Margins; m != nil && m.InnerAlone != nil && m.InnerAlone.PeakSensitivity > 3 {
+		warn("the inner loop alone has a peak sensitivity of %.3g: little is left when the outer loop is clamped or off", m.InnerAlone.PeakSensitivity)
+	}
+	if weak && l.Verdict == Sound {
+		l.Verdict = Weak
+	}
+}

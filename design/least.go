@@ -1,0 +1,297 @@
+package design
+
+import (
+	"math"
+	"math/cmplx"
+
+	"gonum.org/v1/gonum/mat"
+
+	"steadyrig/fit/lti"
+)
+
+// LeastPeakDelay returns the least peak of |S| and of |T| for one real unstable pole p (rad/s) and a delay tau (s):
+// e^{p tau}. It is 1 without an unstable pole.
+//
+// Source: Åström (2000), Limitations on control system performance, Eur. J. Control 6, 2-20; Skogestad &
+// Postlethwaite, Multivariable Feedback Control, ch. 5.
+func LeastPeakDelay(p, tau float64) float64 { return math.Exp(math.Max(0, p) * tau) }
+
+// LeastPeakZero returns the least peak of |S| and of |T| for a real unstable pole p and a real right-half-plane
+// zero z (rad/s): (z + p)/|z - p|.
+//
+// Source: Freudenberg & Looze (1985), IEEE Trans. Automatic Control 30, 555-565; Zames & Francis (1983).
+func LeastPeakZero(p, z float64) float64 { return (z + p) / math.Abs(z-p) }
+
+// LeastPeakBandwidth returns the least peak of |S| when S may differ from 1 only up to the rate wa (rad/s):
+// exp(pi sum(p)/wa) with sum(p) the sum of the real parts of the unstable poles. In a sampled loop wa is at most
+// the Nyquist frequency, and the bound is the product of the unstable |z|.
+//
+// Source: Stein (2003), Respect the unstable, IEEE Control Systems Mag. 23(4), 12-25; sampled: Sung & Hara (1988),
+// Int. J. Control 48, 2429-2439.
+func LeastPeakBandwidth(sum, wa float64) float64 { return math.Exp(math.Pi * math.Max(0, sum) / wa) }
+
+// LeastEffort returns the least peak of |K S|, input per output, for a plant with one real unstable pole: the
+// reciprocal of |G| at the pole, the pole mirrored into the left half-plane and the delay kept.
+//
+// Source: Glover (1986), IEEE Trans. Automatic Control 31, 1138-1144; Havre & Skogestad (2003), Int. J. Control 76.
+// Several unstable poles or none: NaN.
+func LeastEffort(g lti.TF) float64 {
+	poles := g.Poles()
+	p, rest := math.NaN(), make([]complex128, 0, len(poles))
+	for _, s := range poles {
+		switch {
+		case real(s) <= 0:
+			rest = append(rest, s)
+		case imag(s) != 0 || !math.IsNaN(p):
+			return math.NaN()
+		default:
+			p = real(s)
+		}
+	}
+	if math.IsNaN(p) {
+		return math.NaN()
+	}
+	den := g.Den.Trim()
+	at := lti.FromRoots(append(rest, complex(-p, 0))).Scale(den[len(den)-1])
+	x := complex(p, 0)
+	return cmplx.Abs(at.Eval(x)/g.Num.Eval(x)) * math.Exp(p*g.Delay)
+}
+
+// LeastEnergy returns the least integral of u^2 that brings x' = p x + b u from x0 to rest: 2 p x0^2/b^2.
+//
+// Source: Kwakernaak & Sivan (1972), Linear Optimal Control Systems, sec. 3.4.
+func LeastEnergy(p, b, x0 float64) float64 { return 2 * math.Max(0, p) * x0 * x0 / (b * b) }
+
+// Reach returns the open interval of x from which x' = p x + b u, p > 0, b != 0, can be brought back with
+// lo <= u <= hi, lo < 0 < hi, after a delay tau: the ends are -b hi/p and -b lo/p times e^{-p tau}, in order.
+//
+// Source: Hu & Lin (2001), Control Systems with Actuator Saturation; Stein (2003).
+func Reach(p, b, lo, hi, tau float64) (from, to float64) {
+	k := b / p * math.Exp(-p*tau)
+	return math.Min(-k*lo, -k*hi), math.Max(-k*lo, -k*hi)
+}
+
+// leastPeak returns the least peak |S| over all stabilising controllers of a sampled plant with d >= 1 samples
+// from the input to its first effect, its poles and zeros outside the unit circle given in z. One real pole and no
+// zero: |z|^d exactly. For d > 1 and several poles it is less than the product of their |z|^d, which is the value
+// for d = 1 only.
+//
+// S = B g, B the Blaschke product of the poles in w = 1/z; S = 1 to order d at w = 0 and at the zeros fixes the
+// first d Taylor coefficients of g and its values there. The least norm of such a g is that of the adjoint of
+// multiplication by g on the span of w^0 … w^(d-1) and the Szegő kernels at the zeros (Nevanlinna-Pick and
+// Carathéodory-Fejér in one: Sarason (1967), Trans. AMS 127, 179-203).
+func leastPeak(d int, poles, zeros []complex128) float64 {
+	if len(poles) == 0 {
+		return 1
+	}
+	blaschke := func(w complex128) complex128 {
+		b := complex(1, 0)
+		for _, z := range poles {
+			a := 1 / z
+			b *= (w - a) / (1 - cmplx.Conj(a)*w)
+		}
+		return b
+	}
+	// Taylor coefficients of 1/B = prod (1 - conj(a) w)/(w - a).
+	num, den := []complex128{1}, []complex128{1}
+	for _, z := range poles {
+		a := 1 / z
+		num = mulC(num, []complex128{1, -cmplx.Conj(a)})
+		den = mulC(den, []complex128{-a, 1})
+	}
+	g := make([]complex128, d)
+	for i := range g {
+		if i < len(num) {
+			g[i] = num[i]
+		}
+		for j := 1; j <= i && j < len(den); j++ {
+			g[i] -= den[j] * g[i-j]
+		}
+		g[i] /= den[0]
+	}
+	n := d + len(zeros)
+	gram, x := make([]complex128, n*n), make([]complex128, n*n) // gram[i,j] = <e_j, e_i>
+	for j := range n {
+		for i := range n {
+			switch {
+			case i < d && j < d:
+				if i == j {
+					gram[i*n+j] = 1
+				}
+				if i <= j {
+					x[i*n+j] = cmplx.Conj(g[j-i])
+				}
+			case i < d: // <k_b, w^i> = conj(b)^i
+				gram[i*n+j] = cmplx.Pow(cmplx.Conj(1/zeros[j-d]), complex(float64(i), 0))
+			case j < d:
+				gram[i*n+j] = cmplx.Pow(1/zeros[i-d], complex(float64(j), 0))
+			default:
+				gram[i*n+j] = 1 / (1 - cmplx.Conj(1/zeros[j-d])/zeros[i-d])
+			}
+		}
+		if j >= d {
+			x[j*n+j] = cmplx.Conj(1 / blaschke(1/zeros[j-d]))
+		}
+	}
+	return operatorNorm(x, gram, n)
+}
+
+func mulC(p, q []complex128) []complex128 {
+	r := make([]complex128, len(p)+len(q)-1)
+	for i, a := range p {
+		for j, b := range q {
+			r[i+j] += a * b
+		}
+	}
+	return r
+}
+
+// operatorNorm returns the norm of the operator with matrix x in a basis with the given Gram matrix. A complex
+// matrix is handled as a real one of twice the size, which doubles each singular value.
+func operatorNorm(x, gram []complex128, n int) float64 {
+	realOf := func(c []complex128) *mat.Dense {
+		r := mat.NewDense(2*n, 2*n, nil)
+		for i := range n {
+			for j := range n {
+				v := c[i*n+j]
+				r.Set(i, j, real(v))
+				r.Set(n+i, n+j, real(v))
+				r.Set(i, n+j, -imag(v))
+				r.Set(n+i, j, imag(v))
+			}
+		}
+		return r
+	}
+	gr := realOf(gram)
+	sym := mat.NewSymDense(2*n, nil)
+	for i := range 2 * n {
+		for j := i; j < 2*n; j++ {
+			sym.SetSym(i, j, (gr.At(i, j)+gr.At(j, i))/2)
+		}
+	}
+	var eig mat.EigenSym
+	if !eig.Factorize(sym, true) {
+		return math.NaN()
+	}
+	values := eig.Values(nil)
+	var vec mat.Dense
+	eig.VectorsTo(&vec)
+	// Directions that hardly exist (a zero far out is nearly one more sample of delay) are left out: the result is
+	// then a little low, never high.
+	keep := 0
+	for keep < 2*n && values[keep] < 1e-10*values[2*n-1] {
+		keep++
+	}
+	m := 2*n - keep
+	half, inv := mat.NewDense(2*n, m, nil), mat.NewDense(2*n, m, nil)
+	for c := range m {
+		s := math.Sqrt(values[keep+c])
+		for r := range 2 * n {
+			half.Set(r, c, vec.At(r, keep+c)*s)
+			inv.Set(r, c, vec.At(r, keep+c)/s)
+		}
+	}
+	var t, op mat.Dense
+	t.Mul(realOf(x), inv)
+	op.Mul(half.T(), &t)
+	var svd mat.SVD
+	if !svd.Factorize(&op, mat.SVDNone) {
+		return math.NaN()
+	}
+	return svd.Values(nil)[0]
+}
+
+// leastNoise returns the least standard deviation of the input, over all stabilising controllers of a sampled
+// plant, per unit standard deviation of white noise on the measured output. den and num are in powers of z^-1.
+//
+// K S = B g, with B as in leastPeak; T = 1 at the unstable poles fixes g there, and the least H2 norm of such a g
+// is by Szegő kernels (the same argument as for the least peak: Havre & Skogestad (2003); for one pole in
+// continuous time it is the least-energy law with its pole mirrored, Kwakernaak & Sivan (1972)).
+func leastNoise(num, den lti.Poly, poles []complex128) float64 {
+	n := len(poles)
+	if n == 0 {
+		return 0
+	}
+	// The stable factor of den: divide the unstable ones out.
+	rest := den
+	for _, z := range poles {
+		if imag(z) == 0 {
+			rest = divide(rest, lti.Poly{1, -real(z)})
+		} else if imag(z) > 0 {
+			rest = divide(rest, lti.Poly{1, -2 * real(z), real(z)*real(z) + imag(z)*imag(z)})
+		}
+	}
+	m, c := make([]complex128, n*n), make([]complex128, n)
+	for i, z := range poles {
+		w := 1 / z
+		k := complex(1, 0)
+		for _, y := range poles {
+			a := 1 / y
+			k *= -a / (1 - cmplx.Conj(a)*w)
+		}
+		c[i] = rest.Eval(w) / (num.Eval(w) * k)
+		for j, y := range poles {
+			m[i*n+j] = 1 / (1 - cmplx.Conj(1/y)*w)
+		}
+	}
+	x := append([]complex128(nil), c...)
+	if !solve(m, x) {
+		return math.NaN()
+	}
+	sum := 0.0
+	for i := range x {
+		sum += real(cmplx.Conj(c[i]) * x[i])
+	}
+	return math.Sqrt(math.Max(0, sum))
+}
+
+// divide returns the quotient of p by a divisor in powers of z^-1 with leading 1; the remainder is dropped.
+func divide(p, by lti.Poly) lti.Poly {
+	r := append(lti.Poly(nil), p...)
+	n := len(p) - len(by) + 1
+	if n < 1 {
+		return lti.Poly{1}
+	}
+	for i := range n {
+		for j := 1; j < len(by); j++ {
+			if i+j < len(r) {
+				r[i+j] -= r[i] * by[j]
+			}
+		}
+	}
+	return r[:n]
+}
+
+// solve solves m x = b in place by Gaussian elimination with partial pivoting; m is row-major.
+func solve(m, b []complex128) bool {
+	n := len(b)
+	for k := range n {
+		p := k
+		for i := k + 1; i < n; i++ {
+			if cmplx.Abs(m[i*n+k]) > cmplx.Abs(m[p*n+k]) {
+				p = i
+			}
+		}
+		if cmplx.Abs(m[p*n+k]) < 1e-14 {
+			return false
+		}
+		for j := range n {
+			m[k*n+j], m[p*n+j] = m[p*n+j], m[k*n+j]
+		}
+		b[k], b[p] = b[p], b[k]
+		for i := k + 1; i < n; i++ {
+			f := m[i*n+k] / m[k*n+k]
+			for j := k; j < n; j++ {
+				m[i*n+j] -= f * m[k*n+j]
+			}
+			b[i] -= f * b[k]
+		}
+	}
+	for k := n - 1; k >= 0; k-- {
+		for j := k + 1; j < n; j++ {
+			b[k] -= m[k*n+j] * b[j]
+		}
+		b[k] /= m[k*n+k]
+	}
+	return true
+}
