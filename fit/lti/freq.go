@@ -119,8 +119,9 @@ func refinePeak(pts []point, size func(point) float64, l func(float64) complex12
 	if len(tops) > 3 {
 		tops = tops[:3]
 	}
+	value = math.Inf(-1)
 	for _, t := range tops {
-		if t.v > value || at == 0 {
+		if t.v > value {
 			value, at = t.v, pts[t.i].w
 		}
 		if math.IsInf(t.v, 1) {

@@ -157,7 +157,13 @@ func turnUpAxis(f func(complex128) complex128, poles []complex128, end float64) 
 		if x >= end*(1-1e-9) {
 			last = 0
 		}
-		along(func(t float64) complex128 { return complex(0, x) + cmplx.Rect(radius, first+t*(last-first)) })
+		// In pieces: round a multiple pole f turns by whole circles, which the ends alone would not show.
+		const pieces = 24
+		for i := range pieces {
+			along(func(t float64) complex128 {
+				return complex(0, x) + cmplx.Rect(radius, first+(float64(i)+t)/pieces*(last-first))
+			})
+		}
 		from = x + radius
 	}
 	if from < end {
