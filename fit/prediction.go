@@ -43,8 +43,7 @@ type Prediction struct {
 	Shape
 	Num, Den lti.Poly  // ascending powers of s; Den ends in 1
 	Delay    float64   // s
-	Colour   []float64 // D in powers of z^-1, monic
-	Noise    []float64 // C in powers of z^-1, monic
+	D, C     []float64 // powers of z^-1, monic
 	Period   float64   // s
 
 	Const    []float64 // κ of each record, output units
@@ -68,7 +67,7 @@ func (p *Prediction) BIC() float64 { return BIC.Value(p.RSS, p.Rows, p.Free()+le
 // H returns the noise shape C/(A D), as y = G u + H e.
 func (p *Prediction) H() lti.DTF {
 	d := lti.SampleDelta(p.Num, p.Den, p.Delay, p.Period)
-	return lti.DTF{Num: append(lti.Poly(nil), p.Noise...), Den: lti.Poly(lti.Shift(nil, d.A)).Mul(p.Colour), Period: p.Period}
+	return lti.DTF{Num: append(lti.Poly(nil), p.C...), Den: lti.Poly(lti.Shift(nil, d.A)).Mul(p.D), Period: p.Period}
 }
 
 // ErrNoFit says that no step from the start improved on it in finite numbers.
@@ -854,7 +853,7 @@ func (s *search) scaled(m *Prediction) point {
 	for i := range x.den {
 		x.den[i] = m.Den[i] * math.Pow(s.w0, float64(i-n))
 	}
-	x.d, x.c = unshifted(m.Colour, s.shape.Colour), reflect(unshifted(m.Noise, n+s.shape.Colour))
+	x.d, x.c = unshifted(m.D, s.shape.Colour), reflect(unshifted(m.C, n+s.shape.Colour))
 	return x
 }
 
@@ -880,7 +879,7 @@ func (s *search) result(x point, rss float64, steps int, converged bool) *Predic
 	for i := 1; i <= n; i++ {
 		m.Den[n-i] = x.den[n-i] * unit[len(x.num)+i-1]
 	}
-	m.Colour, m.Noise = lti.Shift(nil, x.d), lti.Shift(nil, x.c)
+	m.D, m.C = lti.Shift(nil, x.d), lti.Shift(nil, x.c)
 	for i := range s.work {
 		m.Const = append(m.Const, s.work[i].local[0]*s.sy)
 	}
@@ -975,6 +974,21 @@ func (p *Predictor) Errors(m *Prediction) ([][]float64, error) {
 	}
 	return out, nil
 }
+
+// Rest returns the input, in the log's units, at which the plant of m rests
+// with the output at y, by the constant of the given record. It is not finite
+// for a plant with a zero at the origin.
+func (p *Predictor) Rest(m *Prediction, record int, y float64) float64 {
+	d := lti.SampleDelta(m.Num, m.Den, m.Delay, m.Period)
+	n := d.Poles
+	colour := sum(m.D)
+	// At rest only the last power of δ counts.
+	a, b := d.A[n], d.B0[n-1]+d.B1[n-1]
+	return p.meanU[record] + (a*(y-p.meanY[record])-m.Const[record]/colour)/b
+}
+
+// Means returns the mean output of each record.
+func (p *Predictor) Means() []float64 { return append([]float64(nil), p.meanY...) }
 
 // Inputs returns the input of each row of Errors, for tests of what is left.
 func (p *Predictor) Inputs() [][]float64 {

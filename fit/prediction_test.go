@@ -65,7 +65,7 @@ func TestPredictionGradient(t *testing.T) {
 	start := &Prediction{
 		Shape: Shape{Poles: 3, Zeros: 1, Colour: 1, FreeDelay: true},
 		Num:   lti.Poly{9, 0.3}, Den: lti.Poly{-100, -9, 11, 1}, Delay: 0.07,
-		Colour: []float64{1, -0.9}, Noise: zPoly([]complex128{0.8, 0.7 + 0.1i, 0.7 - 0.1i, 0.2}),
+		D: []float64{1, -0.9}, C: zPoly([]complex128{0.8, 0.7 + 0.1i, 0.7 - 0.1i, 0.2}),
 	}
 	s, x, err := p.begin(start)
 	if err != nil {
@@ -117,7 +117,7 @@ func TestPredictionFindsPendulum(t *testing.T) {
 		if err := p.Covariance(f); err != nil {
 			t.Fatal(err)
 		}
-		t.Log(f.Num, f.Den, f.Noise, f.Steps, f.Converged, f.RSS, f.Variance, f.Condition)
+		t.Log(f.Num, f.Den, f.C, f.Steps, f.Converged, f.RSS, f.Variance, f.Condition)
 		for i, want := range []float64{g.Num[0], g.Den[1], g.Den[0]} {
 			got := []float64{f.Num[0], f.Den[1], f.Den[0]}[i]
 			sd := math.Sqrt(f.Cov.At(i, i))

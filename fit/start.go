@@ -149,7 +149,7 @@ func (p *Predictor) Start(shape Shape, seed Seed, delay, ratio float64, colour [
 	s := p.newSearch(shape, timeScale(den, p.Period))
 	m := &Prediction{Shape: shape, Num: make(lti.Poly, shape.Zeros+1), Den: den, Delay: delay, Period: p.Period}
 	m.Num[0] = 1
-	m.Colour = zPoly(colour)
+	m.D = zPoly(colour)
 	var noise []complex128
 	switch {
 	case ratio > 0 || seed.Noise == nil:
@@ -167,7 +167,7 @@ func (p *Predictor) Start(shape Shape, seed Seed, delay, ratio float64, colour [
 	if len(noise) > shape.Poles+shape.Colour {
 		noise = noise[:shape.Poles+shape.Colour]
 	}
-	m.Noise = zPoly(noise)
+	m.C = zPoly(noise)
 	x := s.scaled(m)
 	for i := range x.num {
 		x.num[i] = 0

@@ -1,0 +1,555 @@
+package ident
+
+import (
+	"cmp"
+	"context"
+	"errors"
+	"fmt"
+	"math"
+	"math/cmplx"
+	"runtime"
+	"slices"
+
+	"gonum.org/v1/gonum/mat"
+
+	"steadyrig/data"
+	"steadyrig/fit"
+)
+
+// Options of Fit. The zero value is ready.
+type Options struct {
+	Workers  int                   // structures fitted at once; 0: one a core
+	Progress func(done, total int) // called as structures are done; total 0: unknown
+}
+
+// Thresholds of the verdict.
+const (
+	soundMemories = 20   // predictor memories below which intervals are optimistic
+	doubtful      = 1e-3 // probability below which a residual test speaks against the model
+	wide          = 0.5  // half width of the unstable pole's interval over its value
+	tie           = 2    // BIC units within which two structures are not told apart
+	chooseRows    = 50000
+	residualLags  = 25
+)
+
+// Fit finds the plant in the logs of one rig: structure, parameters and their
+// uncertainty, with the evidence for them. With a RefusedError the model still
+// says what is known. Logs of different sample periods are not fitted together.
+func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Options) (*Model, error) {
+	if opt.Workers == 0 {
+		opt.Workers = runtime.GOMAXPROCS(0)
+	}
+	m := newModel(exps, rig)
+	recs, period, err := records(exps)
+	if err != nil {
+		return m, err
+	}
+	m.Noise.SamplePeriod = period
+	m.Evidence.OutsideShare = 0
+	out := outside(exps)
+	m.Evidence.OutsideShare = out.Share
+	if out.Quiet {
+		return m.refuse(refuseQuiet(out))
+	}
+
+	sc := scopeOf(rig, period)
+	p, err := fit.NewPredictor(recs, period, math.Max(sc.delay[1], sc.base))
+	if err != nil {
+		return m.refuse(&RefusedError{What: err.Error(), Do: "log a longer run"})
+	}
+	some, sp := recs, p
+	if p.Rows() > chooseRows {
+		some = spreadOver(recs, chooseRows)
+		if sp, err = fit.NewPredictor(some, period, math.Max(sc.delay[1], sc.base)); err != nil {
+			return m, err
+		}
+	}
+	c, long, err := newChooser(sp, some, sc, opt.Workers)
+	if err != nil {
+		return m.refuse(&RefusedError{What: "no long model could be fitted: " + err.Error(), Do: "log a run in which input and output move"})
+	}
+	ranked, err := c.choose(ctx, opt.Progress)
+	if err != nil {
+		return m, err
+	}
+	if len(ranked) == 0 {
+		return m.refuse(&RefusedError{What: "no plant of 1 to 5 poles could be fitted to the log", Do: "look at the log with audit"})
+	}
+	if err := c.pairing(ctx, some, ranked, opt.Workers); err != nil {
+		return m.refuse(err)
+	}
+
+	best := ranked[0]
+	f, err := p.Fit(best.fit, finalTol, finalSteps)
+	if err != nil {
+		return m, fmt.Errorf("fitting %s: %w", best.structure, err)
+	}
+	if err := p.Covariance(f); err != nil {
+		return m.refuse(&RefusedError{What: "the log does not tell the plant's parameters apart", Do: "log a run with a stronger probe"})
+	}
+	m.describe(p, f, rig)
+	m.Evidence.Structures = structures(ranked)
+	m.Evidence.Methods = methods(some, long, f, m.Poles)
+	if err := m.tests(p, recs, f); err != nil {
+		return m, err
+	}
+	m.judge(ranked, out, f)
+	return m, nil
+}
+
+func newModel(exps []*data.Experiment, rig *data.Rig) *Model {
+	m := &Model{
+		Schema: Schema, Rig: rig.Name, Verdict: Refused, Warnings: []string{}, Poles: []Root{}, Zeros: []Root{},
+		Plant:    Plant{Numerator: []float64{}, Denominator: []float64{}, Parameters: []string{}, Covariance: [][]float64{}},
+		Noise:    Noise{Numerator: []float64{}, Denominator: []float64{}},
+		Evidence: Evidence{Structures: []Structure{}, Methods: []Method{}},
+	}
+	for _, e := range exps {
+		m.Logs = append(m.Logs, LogUse{File: e.File, SHA256: e.SHA256, Rows: e.Rows, Used: e.Used, Segments: len(e.Segments)})
+	}
+	return m
+}
+
+// refuse marks the model and passes the reason on.
+func (m *Model) refuse(err error) (*Model, error) {
+	m.Verdict = Refused
+	m.Warnings = append(m.Warnings, err.Error())
+	return m, err
+}
+
+// records lists the segments of all logs for the estimators.
+func records(exps []*data.Experiment) ([]fit.Record, float64, error) {
+	var recs []fit.Record
+	period := exps[0].Period
+	for _, e := range exps {
+		if math.Abs(e.Period-period) > 1e-3*period {
+			return nil, 0, fmt.Errorf("%s is sampled every %.6g s, %s every %.6g s: fit logs of one period together", exps[0].File, period, e.File, e.Period)
+		}
+		for _, s := range e.Segments {
+			recs = append(recs, fit.Record{U: s.U, Y: s.Y})
+		}
+	}
+	return recs, period, nil
+}
+
+// spreadOver takes at most rows rows in blocks spread evenly over the records.
+func spreadOver(recs []fit.Record, rows int) []fit.Record {
+	const blocks = 5
+	var total int
+	for _, r := range recs {
+		total += len(r.Y)
+	}
+	var out []fit.Record
+	for _, r := range recs {
+		share := rows * len(r.Y) / total
+		k := max(1, min(blocks, share/2000))
+		size := share / k
+		for b := range k {
+			from := 0
+			if k > 1 {
+				from = b * (len(r.Y) - size) / (k - 1)
+			}
+			to := min(from+size, len(r.Y))
+			out = append(out, fit.Record{U: r.U[from:to], Y: r.Y[from:to]})
+		}
+	}
+	return out
+}
+
+func (s structure) String() string {
+	words := fmt.Sprintf("%d poles", s.poles)
+	if s.poles == 1 {
+		words = "1 pole"
+	}
+	switch s.zeros {
+	case 0:
+	case 1:
+		words += ", 1 zero"
+	default:
+		words += fmt.Sprintf(", %d zeros", s.zeros)
+	}
+	if s.delay {
+		words += ", a delay"
+	}
+	switch s.colour {
+	case 0:
+	case 1:
+		words += ", 1 disturbance pole"
+	default:
+		words += fmt.Sprintf(", %d disturbance poles", s.colour)
+	}
+	return words
+}
+
+// pairing refuses logs whose output answers to the input of the next row: then
+// the same plants fit far better with the input moved up by one row. Plants of
+// relative degree one are tried only with the gain's sign that the columns as
+// given show, since a law without delay, y = -u/K, would imitate them.
+func (c *chooser) pairing(ctx context.Context, recs []fit.Record, ranked []*candidate, workers int) error {
+	best := ranked[0]
+	if best.fit.Delay > c.p.Period || c.scope.base > 0 {
+		return nil
+	}
+	moved := make([]fit.Record, len(recs))
+	for i, r := range recs {
+		n := len(r.Y)
+		moved[i] = fit.Record{U: r.U[1:], Y: r.Y[:n-1]}
+	}
+	p, err := fit.NewPredictor(moved, c.p.Period, c.scope.delay[1])
+	if err != nil {
+		return nil
+	}
+	sc := c.scope
+	sc.freeDelay, sc.mustDelay, sc.base, sc.delay = false, false, 0, [2]float64{}
+	late, _, err := newChooser(p, moved, sc, workers)
+	if err != nil {
+		return nil
+	}
+	var list []structure
+	for n := max(2, sc.minPoles); n <= min(4, sc.maxPoles); n++ {
+		for m := sc.minZeros; m <= min(n-2, 1, sc.maxZeros); m++ {
+			for k := range min(best.colour, 1) + 1 {
+				list = append(list, structure{poles: n, zeros: m, colour: k})
+			}
+		}
+	}
+	if err := late.try(ctx, list, nil, nil); err != nil {
+		return err
+	}
+	for _, cand := range late.ranked() {
+		// Criteria per row, since a row is lost.
+		gain := (best.bic/float64(c.p.Rows()) - cand.bic/float64(p.Rows())) * float64(p.Rows())
+		if gain > 20 && math.Signbit(lead(cand.fit)) == math.Signbit(lead(best.fit)) {
+			return &RefusedError{
+				What: fmt.Sprintf("the columns are paired one row off: the output answers to the input of the row after (BIC %.0f better)", gain),
+				Do:   `the input is logged a row late: set input_row = "before" in [log], or shift the column`,
+			}
+		}
+	}
+	return nil
+}
+
+// lead is the leading numerator coefficient.
+func lead(f *fit.Prediction) float64 { return f.Num[len(f.Num)-1] }
+
+// describe fills in plant, poles, zeros, gains, noise and operating point.
+func (m *Model) describe(p *fit.Predictor, f *fit.Prediction, rig *data.Rig) {
+	nz, n := f.Zeros+1, f.Poles
+	m.Plant.Numerator, m.Plant.Denominator = reversed(f.Num), reversed(f.Den)
+	m.Plant.Delay = f.Delay
+	m.Plant.Parameters = m.Plant.Parameters[:0]
+	for i := range nz {
+		m.Plant.Parameters = append(m.Plant.Parameters, fmt.Sprintf("b%d", i))
+	}
+	for i := 1; i <= n; i++ {
+		m.Plant.Parameters = append(m.Plant.Parameters, fmt.Sprintf("a%d", i))
+	}
+	if f.FreeDelay {
+		m.Plant.Parameters = append(m.Plant.Parameters, "delay")
+	}
+	m.Plant.Covariance = make([][]float64, len(m.Plant.Parameters))
+	for i := range m.Plant.Covariance {
+		m.Plant.Covariance[i] = make([]float64, len(m.Plant.Parameters))
+		for j := range m.Plant.Covariance[i] {
+			m.Plant.Covariance[i][j] = f.Cov.At(i, j)
+		}
+	}
+	m.derive()
+
+	h := f.H()
+	m.Noise = Noise{Numerator: h.Num, Denominator: h.Den, SD: math.Sqrt(f.Variance), SamplePeriod: f.Period}
+	switch o := rig.OperatingPoint; {
+	case o != nil:
+		m.OperatingPoint = OperatingPoint{Input: o.Input, Output: o.Output}
+	default:
+		var u, y float64
+		means := p.Means()
+		for i, mean := range means {
+			y += mean / float64(len(means))
+			u += p.Rest(f, i, mean) / float64(len(means))
+		}
+		m.OperatingPoint = OperatingPoint{Input: u, Output: y}
+	}
+}
+
+// derive computes poles, zeros and gains with their intervals from the plant's
+// coefficients and covariance.
+func (m *Model) derive() {
+	nz, n := len(m.Plant.Numerator), len(m.Plant.Denominator)-1
+	at := func(i, j int) float64 { return m.Plant.Covariance[i][j] }
+	den := uncertain{p: reversed(m.Plant.Denominator), cov: mat.NewSymDense(n+1, nil)}
+	for i := range n {
+		for j := i; j < n; j++ {
+			den.cov.SetSym(i, j, at(nz+n-1-i, nz+n-1-j))
+		}
+	}
+	m.Poles = den.roots()
+	m.Zeros = []Root{}
+	if nz > 1 {
+		num := uncertain{p: reversed(m.Plant.Numerator), cov: mat.NewSymDense(nz, nil)}
+		for i := range nz {
+			for j := i; j < nz; j++ {
+				num.cov.SetSym(i, j, at(i, j))
+			}
+		}
+		m.Zeros = num.roots()
+	}
+	high := m.Plant.Numerator[0]
+	m.Gain.HighFrequency = estimate(high, math.Sqrt(at(nz-1, nz-1)))
+	b0, an := m.Plant.Numerator[nz-1], m.Plant.Denominator[n]
+	sd := math.Sqrt(math.Max(0, at(nz+n-1, nz+n-1)))
+	m.Gain.DC = nil
+	if math.Abs(an) > z95*sd {
+		dc := b0 / an
+		v := at(0, 0)/(an*an) + dc*dc*sd*sd/(an*an) - 2*dc*at(0, nz+n-1)/(an*an)
+		m.Gain.DC = estimate(dc, math.Sqrt(math.Max(0, v)))
+	}
+}
+
+func estimate(v, sd float64) *Estimate {
+	return &Estimate{Value: v, SD: sd, Interval95: Interval{v - z95*sd, v + z95*sd}}
+}
+
+// structures lists the best candidates with why the others lost.
+func structures(ranked []*candidate) []Structure {
+	var out []Structure
+	for i, c := range ranked[:min(8, len(ranked))] {
+		s := Structure{Poles: c.poles, Zeros: c.zeros, Colour: c.colour, Delay: c.fit.Delay, BIC: c.bic - ranked[0].bic, Chosen: i == 0}
+		gain := float64(c.fit.Rows) * math.Log(c.fit.RSS/ranked[0].fit.RSS)
+		switch extra := c.fit.Free() - ranked[0].fit.Free(); {
+		case i == 0:
+			s.Verdict = "chosen"
+		case s.BIC < tie:
+			s.Verdict = "tie: the log does not tell it from the winner"
+		case extra > 0:
+			s.Verdict = fmt.Sprintf("%d more parameters bring a likelihood ratio of only %.1f", extra, -gain)
+		default:
+			s.Verdict = fmt.Sprintf("misses a likelihood ratio of %.1f", gain)
+		}
+		out = append(out, s)
+	}
+	return out
+}
+
+// methods estimates the poles by other ways than maximum likelihood and says
+// whether they find the same unstable poles.
+func methods(recs []fit.Record, long *fit.ARX, f *fit.Prediction, poles []Root) []Method {
+	list := []Method{{Name: "prediction", Agrees: true}}
+	for _, r := range poles {
+		list[0].Poles = append(list[0].Poles, [2]float64{r.Re, r.Im})
+	}
+	order := f.Poles + f.Colour + int(math.Ceil(f.Delay/f.Period))
+	add := func(name string, z []complex128, err error) {
+		m := Method{Name: name, Poles: [][2]float64{}}
+		if err != nil {
+			m.Note = err.Error()
+			list = append(list, m)
+			return
+		}
+		for _, v := range z {
+			if s, ok := inContinuousTime(v, f.Period); ok {
+				m.Poles = append(m.Poles, [2]float64{real(s), imag(s)})
+			}
+		}
+		m.Agrees, m.Note = agreement(m.Poles, poles)
+		list = append(list, m)
+	}
+	if s, err := fit.Subspace(recs, fit.SubspaceOptions{Order: order}); err != nil {
+		add("state", nil, err)
+	} else {
+		add("state", s.Poles, nil)
+	}
+	// Null-space fitting wants a long model longer than AICc's choice.
+	n := min(2*long.Order, max(long.Order, long.Rows/(40)))
+	var ns *fit.NullSpaceResult
+	longer, err := fit.FitARX(recs, fit.ARXOptions{NA: n, NB: n, Delay: 1})
+	if longer != nil {
+		k := f.Poles + f.Colour
+		ns, err = fit.NullSpace(longer, fit.NullSpaceOptions{NA: k, NB: order + 1, NC: k})
+	}
+	if err != nil || ns == nil {
+		add("long", nil, cmp.Or(err, errors.New("no long model")))
+	} else {
+		add("long", ns.Poles(), nil)
+	}
+	return list
+}
+
+// inContinuousTime returns log(z)/period where a real plant can have it.
+func inContinuousTime(z complex128, period float64) (complex128, bool) {
+	if cmplx.Abs(z) < 1e-6 || imag(z) == 0 && real(z) < 0 {
+		return 0, false
+	}
+	return cmplx.Log(z) / complex(period, 0), true
+}
+
+// agreementShare is by how much of its modulus an unstable pole of a rougher
+// method may differ, beyond four deviations of the final estimate.
+const agreementShare = 0.1
+
+// agreement compares the unstable poles of a method with the final ones.
+func agreement(found [][2]float64, poles []Root) (bool, string) {
+	agrees, note := true, ""
+	for _, p := range poles {
+		if p.ProbabilityUnstable < 0.5 || p.Im < 0 {
+			continue
+		}
+		at := complex(p.Re, p.Im)
+		near := math.Inf(1)
+		for _, q := range found {
+			near = math.Min(near, cmplx.Abs(complex(q[0], q[1])-at))
+		}
+		allowed := agreementShare*cmplx.Abs(at) + 4*math.Hypot(p.ReSD, p.ImSD)
+		if near > allowed {
+			agrees = false
+		}
+		if note != "" {
+			note += ", "
+		}
+		note += fmt.Sprintf("unstable pole off by %.2g rad/s", near)
+	}
+	return agrees, note
+}
+
+// tests looks at what the model leaves unexplained, on the rows of the fit, and
+// at how much it explains on rows kept out of one.
+func (m *Model) tests(p *fit.Predictor, recs []fit.Record, f *fit.Prediction) error {
+	e, err := p.Errors(f)
+	if err != nil {
+		return err
+	}
+	lags := min(residualLags, p.Rows()/20)
+	m.Evidence.Residuals.Lags = lags
+	if lags < 2 {
+		return nil
+	}
+	fitted := min(f.Poles+f.Colour, lags-1)
+	_, m.Evidence.Residuals.Whiteness = fit.LjungBox(e, lags, fitted)
+	pairs := make([]fit.Record, len(e))
+	for i, u := range p.Inputs() {
+		pairs[i] = fit.Record{U: u, Y: e[i]}
+	}
+	if _, prob, err := fit.PastInputs(pairs, lags); err == nil {
+		m.Evidence.Residuals.CrossInput = prob
+	} else {
+		m.Evidence.Residuals.CrossInput = 1
+	}
+	m.Evidence.Memories = float64(p.Rows()) / memory(f.C)
+	m.Evidence.ExplainedShare = explained(p, recs, f)
+	return nil
+}
+
+// memory is the time constant of the predictor in samples, that of the slowest
+// zero of C.
+func memory(c []float64) float64 {
+	var slow float64
+	for _, z := range zRoots(c) {
+		slow = math.Max(slow, cmplx.Abs(z))
+	}
+	if slow == 0 {
+		return 1
+	}
+	return math.Max(1, -1/math.Log(slow))
+}
+
+// explained refits the structure on the first two thirds of each record and
+// returns 1 - var(e)/var(y) on the rest.
+func explained(p *fit.Predictor, recs []fit.Record, f *fit.Prediction) float64 {
+	var first, rest []fit.Record
+	for _, r := range recs {
+		cut := 2 * len(r.Y) / 3
+		first = append(first, fit.Record{U: r.U[:cut], Y: r.Y[:cut]})
+		rest = append(rest, fit.Record{U: r.U[cut:], Y: r.Y[cut:]})
+	}
+	a, err := fit.NewPredictor(first, p.Period, p.DelayRange[1])
+	if err != nil {
+		return 0
+	}
+	a.DelayRange = p.DelayRange
+	part, err := a.Fit(f, compareTol, compareStep)
+	if err != nil {
+		return 0
+	}
+	b, err := fit.NewPredictor(rest, p.Period, p.DelayRange[1])
+	if err != nil {
+		return 0
+	}
+	b.DelayRange = p.DelayRange
+	e, err := b.Errors(part)
+	if err != nil {
+		return 0
+	}
+	var ee, yy float64
+	for i, x := range e {
+		for _, v := range x {
+			ee += v * v
+		}
+		y := rest[min(i, len(rest)-1)].Y
+		yy += about(y) * float64(len(x)) / float64(len(y))
+	}
+	return 1 - ee/yy
+}
+
+// judge sets the verdict and says why it is not better.
+func (m *Model) judge(ranked []*candidate, out Outside, f *fit.Prediction) {
+	m.Verdict = Sound
+	weak := func(format string, args ...any) {
+		m.Verdict = Weak
+		m.Warnings = append(m.Warnings, fmt.Sprintf(format, args...))
+	}
+	note := func(format string, args ...any) { m.Warnings = append(m.Warnings, fmt.Sprintf(format, args...)) }
+	if out.Share < faintShare {
+		weak("%s: the intervals rest on little", out.Words)
+	}
+	if m.Evidence.Memories < soundMemories {
+		weak("the log is only %.0f predictor memories long, intervals are optimistic below %d: log a longer run", m.Evidence.Memories, soundMemories)
+	}
+	if p := m.Evidence.Residuals.Whiteness; p < doubtful {
+		weak("the prediction errors are not white (probability %.2g): the structure misses something", p)
+	}
+	if p := m.Evidence.Residuals.CrossInput; p < doubtful {
+		weak("past inputs still explain part of the prediction errors (probability %.2g): the plant misses something", p)
+	}
+	for _, c := range ranked[1:] {
+		if c.bic-ranked[0].bic < tie {
+			note("tie of structures: %s is hardly worse than the chosen %s", c.structure, ranked[0].structure)
+		}
+	}
+	unstable := false
+	for _, p := range m.Poles {
+		if p.Im < 0 {
+			continue
+		}
+		size := math.Hypot(p.Re, p.Im)
+		switch {
+		case p.ProbabilityUnstable > 0.025 && p.ProbabilityUnstable < 0.975:
+			note("whether the pole at %.3g rad/s is unstable is open: probability %.2g", p.Re, p.ProbabilityUnstable)
+		case p.Unstable:
+			unstable = true
+			if half := (p.Re95.Hi - p.Re95.Lo) / 2; half > wide*size {
+				weak("the unstable pole is known to %.2g +- %.2g rad/s only: a stronger or longer probe is needed", p.Re, half)
+			}
+		}
+	}
+	if !unstable && slices.IndexFunc(m.Poles, func(p Root) bool { return p.ProbabilityUnstable > 0.025 }) < 0 {
+		note("no unstable pole was found")
+	}
+	for _, method := range m.Evidence.Methods {
+		if !method.Agrees {
+			weak("the method %q does not find the unstable pole where the final estimate has it: %s", method.Name, method.Note)
+		}
+	}
+	if f.FreeDelay && math.Abs(f.Delay/f.Period-1) < 0.1 {
+		note("the delay is about one sample: if the rig has none, the input may be logged a row early or when it is computed")
+	}
+	if !f.Converged {
+		weak("the search for the best fit did not settle")
+	}
+	worst := slices.MaxFunc(m.Poles, func(a, b Root) int { return cmp.Compare(a.Re, b.Re) })
+	if ph := worst.Re * f.Period; ph > 0.3 {
+		note("the unstable pole moves by a factor of %.2g within a sample: the log is slow for it", math.Exp(ph))
+	}
+	if worst.Re*f.Period > math.Ln2 {
+		weak("the log is too slow for the unstable pole")
+	}
+}

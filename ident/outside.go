@@ -1,0 +1,198 @@
+package ident
+
+import (
+	"fmt"
+	"math"
+
+	"steadyrig/data"
+	"steadyrig/fit"
+)
+
+// Shares of the input's variance that come from outside the loop, below which
+// a log is refused and below which it is called weak. A quiet log of a fixed
+// linear law leaves less than 1e-4 even with rounded columns, a well probed one
+// 0.05 and more.
+const (
+	quietShare = 2e-4
+	faintShare = 1e-2
+)
+
+// lawOrder is the longest stopgap law, in samples, that outside power is told
+// from.
+const lawOrder = 12
+
+// Outside says how much of the input came from outside the loop: what past
+// inputs, and outputs up to the present one, leave unexplained of it.
+type Outside struct {
+	Share float64 `json:"share"` // of the input's variance
+	// Logged is the part of Share that the logged reference and dither
+	// explain; null where neither is logged.
+	Logged *float64 `json:"logged"`
+	Quiet  bool     `json:"quiet"` // nothing acted from outside
+	Words  string   `json:"words"`
+}
+
+// outside measures outside power. Under a fixed linear law without it the
+// input is a function of past inputs and outputs, and then the log holds the
+// law, not the plant (Söderström & Stoica, System Identification, Prentice Hall
+// 1989, sec. 10; Gustavsson, Ljung & Söderström, Automatica 13 (1977) 59-75).
+func outside(exps []*data.Experiment) Outside {
+	unexplained := func(less func(s data.Segment, y, u []float64)) float64 {
+		var recs []fit.Record
+		for _, e := range exps {
+			for _, s := range e.Segments {
+				y, u := append([]float64(nil), s.Y...), append([]float64(nil), s.U...)
+				if less != nil {
+					less(s, y, u)
+				}
+				recs = append(recs, fit.Record{U: y, Y: u}) // the law's input is y, its output u
+			}
+		}
+		m, _ := fit.FitARX(recs, fit.ARXOptions{NA: lawOrder, NB: lawOrder + 1, Delay: 0})
+		if m == nil {
+			return 0
+		}
+		return m.RSS
+	}
+	var total float64
+	var reference, dither bool
+	for _, e := range exps {
+		for _, s := range e.Segments {
+			total += about(s.U)
+			reference = reference || s.R != nil
+			dither = dither || s.D != nil
+		}
+	}
+	if total == 0 {
+		return Outside{Quiet: true, Words: "the input does not move"}
+	}
+	o := Outside{Share: unexplained(nil) / total}
+	if (reference || dither) && o.Share > 1e-12 {
+		rest := unexplained(func(s data.Segment, y, u []float64) {
+			for k := range y {
+				if s.R != nil {
+					y[k] -= s.R[k]
+				}
+				if s.D != nil {
+					u[k] -= s.D[k]
+				}
+			}
+		}) / total
+		logged := math.Max(0, 1-rest/o.Share)
+		o.Logged = &logged
+	}
+	switch {
+	case o.Share < quietShare && (o.Logged == nil || *o.Logged < 0.5):
+		o.Quiet = true
+		o.Words = fmt.Sprintf("nothing from outside moves the input: the law explains all but %.2g of it", o.Share)
+	case o.Share < faintShare:
+		o.Words = fmt.Sprintf("only %.2g of the input's variance comes from outside the loop", o.Share)
+	default:
+		o.Words = fmt.Sprintf("%.0f %% of the input's variance comes from outside the loop", 100*o.Share)
+	}
+	if !o.Quiet {
+		switch {
+		case o.Logged == nil:
+			o.Words += "; what acted is not logged, which a fit can do without"
+		case *o.Logged < 0.5:
+			o.Words += fmt.Sprintf("; the logged reference and dither explain %.0f %% of that", 100**o.Logged)
+		default:
+			o.Words += ", from the logged " + named(reference, dither)
+		}
+	}
+	return o
+}
+
+func named(reference, dither bool) string {
+	switch {
+	case reference && dither:
+		return "reference and dither"
+	case reference:
+		return "reference"
+	}
+	return "dither"
+}
+
+// refuseQuiet returns the refusal of a log without outside power.
+func refuseQuiet(o Outside) error {
+	return &RefusedError{
+		What: o.Words + ", so the log shows the stopgap law and not the plant",
+		Do:   "log a run with a probe added to the input, or with steps of the reference",
+	}
+}
+
+// LawCheck compares the stopgap law of the rig file with the log.
+type LawCheck struct {
+	Unexplained float64 `json:"unexplained"` // share of the input's variance that the law leaves
+	Rows        int     `json:"rows"`        // by how many rows the input is logged late (+1) or early (-1)
+	SignWrong   bool    `json:"sign_wrong"`
+	Words       string  `json:"words"`
+}
+
+// checkLaw tests the stopgap law den (u - u0) + num (y - r) = den d on the
+// log, also with the input shifted by a row either way and with the other
+// sign. It returns nil where the rig file has no law.
+func checkLaw(exps []*data.Experiment, rig *data.Rig) *LawCheck {
+	law := rig.Stopgap
+	if law == nil {
+		return nil
+	}
+	score := func(shift int, sign float64) float64 {
+		var rss, all float64
+		for _, e := range exps {
+			for _, s := range e.Segments {
+				n := max(len(law.Numerator), len(law.Denominator))
+				var w, v []float64
+				for k := n + 1; k < len(s.Y)-1; k++ {
+					var left, right float64
+					for i, c := range law.Denominator {
+						u := s.U[k+shift-i]
+						if s.D != nil {
+							u -= s.D[k+shift-i]
+						}
+						left += c * u
+					}
+					for i, c := range law.Numerator {
+						y := s.Y[k-i]
+						if s.R != nil {
+							y -= s.R[k-i]
+						}
+						right += sign * c * y
+					}
+					w, v = append(w, left+right), append(v, left)
+				}
+				if len(w) > 0 {
+					rss += about(w)
+					all += about(v)
+				}
+			}
+		}
+		if all == 0 {
+			return math.Inf(1)
+		}
+		return rss / all
+	}
+	best := LawCheck{Unexplained: math.Inf(1)}
+	for _, sign := range []float64{1, -1} {
+		for _, shift := range []int{0, -1, 1} {
+			// A shift must clearly beat what the rig file says.
+			if v := score(shift, sign); v < 0.5*best.Unexplained {
+				best = LawCheck{Unexplained: v, Rows: shift, SignWrong: sign < 0}
+			}
+		}
+	}
+	switch {
+	case best.Unexplained > 0.9:
+		best.Rows, best.SignWrong = 0, false
+		best.Words = fmt.Sprintf("the stopgap law of the rig file does not explain the input: it leaves %.0f %% of its variance", 100*best.Unexplained)
+	case best.SignWrong:
+		best.Words = "the stopgap law of the rig file fits the log only with the opposite sign"
+	case best.Rows == -1:
+		best.Words = "the stopgap law fits only if the input is logged one row early"
+	case best.Rows == 1:
+		best.Words = "the stopgap law fits only if the input is logged one row late"
+	default:
+		best.Words = fmt.Sprintf("the stopgap law of the rig file explains the input but for %.2g of its variance", best.Unexplained)
+	}
+	return &best
+}
