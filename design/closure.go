@@ -3,6 +3,8 @@ package design
 import (
 	"fmt"
 	"math"
+
+	"steadyrig/ident"
 )
 
 // expectedSD returns the standard deviations of input and measured output in closed loop under all that the fit saw
@@ -80,13 +82,9 @@ const (
 func (p *problem) conclude(l *Loops) {
 	warn := func(format string, args ...any) { l.Warnings = append(l.Warnings, fmt.Sprintf(format, args...)) }
 	weak := false
-	if p.model.Verdict == "weak" {
+	if p.model.Verdict == ident.Weak {
 		weak = true
 		warn("the model's verdict is weak, and so is what rests on it")
-	}
-	if p.model.Verdict == "refused" {
-		weak = true
-		warn("the model was refused by the fit: these loops rest on nothing that the log could tell")
 	}
 	if !p.noise.split {
 		warn("the noise could not be split into sensor noise and input disturbance: the whole prediction error counts as sensor noise in input_noise")
