@@ -11,7 +11,8 @@ import (
 // SubspaceOptions of Subspace.
 type SubspaceOptions struct {
 	// Past is the number of past samples that the state is made of, the order of the long ARX; 0: twice that of least
-	// AICc where the rows allow it, and no less than Future and twice Order.
+	// AICc where the rows allow it, and no less than Future and twice Order. Unlike null-space fitting the state needs no
+	// more, and loses from far more.
 	Past int
 	// Future is the number of coming samples that the state must predict; 0: DefaultFuture, or Past if that is less.
 	Future int
