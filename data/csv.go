@@ -136,23 +136,30 @@ func (f *faults) err() error {
 	return &first
 }
 
+// readHead reads the first bytes of a log, without a byte order mark. whole tells that they are all of it.
+func readHead(src io.Reader, file string) (head []byte, whole bool, err error) {
+	head = make([]byte, headSize)
+	n, err := io.ReadFull(src, head)
+	if err == io.EOF || err == io.ErrUnexpectedEOF {
+		// ReadFull says of a log that has ended what the unpacking says of one that was cut off: ask again.
+		var more int
+		more, err = src.Read(head[n : n+1])
+		n += more
+		whole = err == io.EOF
+	}
+	if err != nil && !whole {
+		return nil, false, readingError(file, err)
+	}
+	return bytes.TrimPrefix(head[:n], []byte("\xef\xbb\xbf")), whole, nil
+}
+
 // readTable reads a log. choose is told the layout and returns the fields wanted, and which of them holds stamps (an
 // index into them, or -1).
 func readTable(src io.Reader, file string, choose func(*layout) (fields []int, stamps int, err error)) (*table, error) {
-	head := make([]byte, headSize)
-	n, err := io.ReadFull(src, head)
-	head = head[:n]
-	whole := errors.Is(err, io.EOF) || errors.Is(err, io.ErrUnexpectedEOF)
-	if err != nil && !whole {
-		return nil, readingError(file, err)
+	head, whole, err := readHead(src, file)
+	if err != nil {
+		return nil, err
 	}
-	if err == io.ErrUnexpectedEOF && n < len(head) {
-		// ReadFull and a packed file cut short give the same error: ask again.
-		if _, again := src.Read(make([]byte, 1)); again != nil && again != io.EOF {
-			return nil, readingError(file, again)
-		}
-	}
-	head = bytes.TrimPrefix(head, []byte("\xef\xbb\xbf"))
 	l, err := recognise(head, whole)
 	if err != nil {
 		return nil, inFile(file, err)
@@ -225,8 +232,8 @@ func (r *reader) read(head []byte, src io.Reader, whole bool) error {
 			}
 			break
 		}
-		if len(rest) >= headSize {
-			return &ParseError{File: r.file, Line: line, Err: fmt.Errorf("longer than %d bytes", headSize), Hint: "a log has one row a line"}
+		if len(rest) > maxLine {
+			return inFile(r.file, tooLong(line))
 		}
 		buf = buf[:copy(buf[:cap(buf)], rest)]
 		n, err := io.ReadAtLeast(src, buf[len(buf):cap(buf)], 1)
@@ -450,13 +457,12 @@ func (l *layout) field(name string) (int, error) {
 	if len(found) == 1 {
 		return found[0], nil
 	}
-	e := &ParseError{Line: l.header}
+	e := &ParseError{Line: l.header, Err: ErrNoColumn}
 	if len(found) > 1 {
-		e.Err = fmt.Errorf("%w as %s: columns %d and %d have that name", ErrNoColumn, quote(name), found[0]+1, found[1]+1)
+		e.Err = fmt.Errorf("columns %d and %d both have that name", found[0]+1, found[1]+1)
 		e.Hint = "give each column a name of its own"
 		return 0, e
 	}
-	e.Err = fmt.Errorf("%w as %s", ErrNoColumn, quote(name))
 	list := "the columns are " + quoteList(l.names, 20)
 	if !l.named {
 		list = fmt.Sprintf("the log has no header: its columns are called c1 to c%d", len(l.names))

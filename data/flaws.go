@@ -297,6 +297,7 @@ func (l *log) findSpikes() {
 		far       = 15  // robust standard deviations off the median of four neighbours
 		alone     = 5   // times as far as the neighbours are off theirs
 		agree     = 0.3 // of that distance may lie between the two neighbours
+		flicker   = 5   // steps of a coarse grid that are no spike yet
 		toMeasure = 100_000
 	)
 	y := l.columns[l.y]
@@ -326,11 +327,12 @@ func (l *log) findSpikes() {
 	if sd == 0 {
 		return
 	}
+	bound := max(far*sd, flicker*grid(l.levels(y)))
 	var rows []int
 	l.runs(func(from, to int) {
 		for k := from + 4; k+4 < to; k++ {
 			e := math.Abs(off(k))
-			if e < far*sd || math.Abs(y[k+1]-y[k-1]) > agree*e {
+			if e < bound || math.Abs(y[k+1]-y[k-1]) > agree*e {
 				continue
 			}
 			rest := max(math.Abs(off(k-2)), math.Abs(off(k-1)), math.Abs(off(k+1)), math.Abs(off(k+2)))

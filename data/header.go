@@ -1,8 +1,6 @@
 package data
 
 import (
-	"bytes"
-	"errors"
 	"io"
 	"math"
 	"strconv"
@@ -50,13 +48,10 @@ func Header(r io.Reader, file string) (*LogHeader, error) {
 	if err != nil {
 		return nil, readingError(file, err)
 	}
-	head := make([]byte, headSize)
-	n, err := io.ReadFull(src, head)
-	whole := errors.Is(err, io.EOF) || errors.Is(err, io.ErrUnexpectedEOF)
-	if err != nil && !whole {
-		return nil, readingError(file, err)
+	head, whole, err := readHead(src, file)
+	if err != nil {
+		return nil, err
 	}
-	head = bytes.TrimPrefix(head[:n], []byte("\xef\xbb\xbf"))
 	l, err := recognise(head, whole)
 	if err != nil {
 		return nil, inFile(file, err)

@@ -9,8 +9,11 @@ import (
 	"unicode/utf8"
 )
 
-// headSize is how much of a log is looked at to recognise its layout. A line, too, may not be longer.
-const headSize = 1 << 18
+// headSize is how much of a log is looked at to recognise its layout, in bytes; maxLine is the longest line accepted.
+const (
+	headSize = 1 << 18
+	maxLine  = headSize / 2
+)
 
 // A layout is how a log is written: what separates its cells, where its numbers start, what its columns are called.
 type layout struct {
@@ -46,11 +49,18 @@ func recognise(head []byte, whole bool) (*layout, error) {
 		l.lineEnd = '\r'
 	}
 	lines := l.headLines(head, whole)
-	if len(lines) == 0 {
-		if !whole {
-			return nil, &ParseError{Line: 1, Err: fmt.Errorf("longer than %d bytes", headSize), Hint: "a log has one row a line"}
-		}
+	if whole && len(bytes.TrimSpace(head)) == 0 {
 		return nil, &ParseError{Err: errors.New("empty")}
+	}
+	for number, rest := 1, head; ; number++ {
+		i := bytes.IndexByte(rest, l.lineEnd)
+		if i > maxLine || i < 0 && len(rest) > maxLine {
+			return nil, tooLong(number)
+		}
+		if i < 0 {
+			break
+		}
+		rest = rest[i+1:]
 	}
 	first := l.chooseDelimiter(lines)
 	if first < 0 {
@@ -60,6 +70,10 @@ func recognise(head []byte, whole bool) (*layout, error) {
 		return nil, err
 	}
 	return l, nil
+}
+
+func tooLong(line int) error {
+	return &ParseError{Line: line, Err: fmt.Errorf("longer than %d bytes", maxLine), Hint: "a log has one row a line"}
 }
 
 // checkText refuses what is no text in a single-byte encoding or UTF-8.

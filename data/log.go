@@ -108,7 +108,7 @@ func (l *log) choose(lay *layout) (fields []int, stamps int, err error) {
 		f, err := lay.field(c.name)
 		if err != nil {
 			e := err.(*ParseError)
-			e.Err = fmt.Errorf("%w ([log] %s in %s)", e.Err, c.key, l.rig.where("log."+c.key))
+			e.Err = fmt.Errorf("[log] %s %s (%s): %w", c.key, quote(c.name), l.rig.where("log."+c.key), e.Err)
 			return nil, 0, e
 		}
 		for i, g := range fields {
