@@ -4,6 +4,7 @@ import (
 	"errors"
 	"math"
 	"math/cmplx"
+	"sync"
 
 	"gonum.org/v1/gonum/floats"
 	"gonum.org/v1/gonum/mat"
@@ -82,11 +83,13 @@ type Predictor struct {
 	DelayRange [2]float64
 
 	recs   []Record // means removed, scaled to unit deviation
+	padded []Record // the same behind pad zeros
 	meanU  []float64
 	meanY  []float64
 	su, sy float64
 	rows   int
 	pad    int
+	spare  sync.Pool // of []workspace, for searches to come
 }
 
 // maxFitPoles and maxColour bound the shapes that a Predictor takes.
@@ -135,6 +138,8 @@ func NewPredictor(recs []Record, period, maxDelay float64) (*Predictor, error) {
 	for _, r := range p.recs {
 		floats.Scale(1/p.su, r.U)
 		floats.Scale(1/p.sy, r.Y)
+		zeros := make([]float64, p.pad)
+		p.padded = append(p.padded, Record{U: append(zeros[:p.pad:p.pad], r.U...), Y: append(zeros[:p.pad:p.pad], r.Y...)})
 	}
 	return p, nil
 }
@@ -181,23 +186,26 @@ func (p *Predictor) newSearch(shape Shape, w0 float64) *search {
 	if shape.Poles < 1 || shape.Poles > maxFitPoles || shape.Zeros < 0 || shape.Zeros >= shape.Poles || shape.Colour < 0 || shape.Colour > maxColour {
 		panic(badShape)
 	}
-	s := &search{Predictor: p, shape: shape, w0: w0, h: p.Period * w0, work: make([]workspace, len(p.recs))}
+	s := &search{Predictor: p, shape: shape, w0: w0, h: p.Period * w0}
+	if w, ok := p.spare.Get().([]workspace); ok {
+		s.work = w
+		return s
+	}
+	s.work = make([]workspace, len(p.recs))
 	for i, r := range p.recs {
 		n := p.pad + len(r.Y)
-		buf := make([]float64, 10*n)
-		cut := func() []float64 {
-			b := buf[:n:n]
-			buf = buf[n:]
-			return b
-		}
+		buf := make([]float64, 8*n)
 		w := &s.work[i]
-		w.y, w.u, w.e, w.yf, w.uf, w.vf, w.ef = cut(), cut(), cut(), cut(), cut(), cut(), cut()
-		w.dy, w.du, w.av = cut(), cut(), cut()
-		copy(w.y[p.pad:], r.Y)
-		copy(w.u[p.pad:], r.U)
+		for _, x := range []*[]float64{&w.e, &w.yf, &w.uf, &w.vf, &w.ef, &w.dy, &w.du, &w.av} {
+			*x, buf = buf[:n:n], buf[n:]
+		}
+		w.y, w.u = p.padded[i].Y, p.padded[i].U
 	}
 	return s
 }
+
+// done hands the workspaces back.
+func (s *search) done() { s.spare.Put(s.work) }
 
 // shifted holds a model's polynomials in powers of q^-1.
 type shifted struct {
@@ -348,21 +356,12 @@ func (s *search) responses(w *workspace, c []float64, t0 int) {
 	rows := len(w.e) - t0
 	sum := floats.Sum(c)
 	final := 1 / sum
-	if len(w.free) != n {
-		w.free = make([][]float64, n)
-	}
-	if cap(w.step) < rows {
+	if w.step == nil {
 		w.step = make([]float64, rows)
-		for i := range w.free {
-			w.free[i] = make([]float64, rows)
-		}
 	}
-	for i := range w.free {
-		if cap(w.free[i]) < rows {
-			w.free[i] = make([]float64, rows)
-		}
+	for len(w.free) < n {
+		w.free = append(w.free, make([]float64, rows))
 	}
-	w.step = w.step[:rows]
 	w.settled = rows
 	scale := math.Abs(final)
 	quiet := 0
@@ -654,6 +653,7 @@ func (s *search) filtered(w *workspace, q shifted, t0 int) {
 		first := s.pad + len(q.a) + len(q.b) + max(q.whole, 0)
 		fir(w.av[first:], w.y, q.a, first, 1, false)
 		fir(w.av[first:], w.u, q.b, first-q.whole, -1, true)
+		clear(w.vf[:first])
 		divide(w.vf, w.av, q.c, first)
 		divide(w.yf, w.dy, q.c, s.pad)
 		divide(w.uf, w.du, q.c, s.pad)
@@ -661,13 +661,8 @@ func (s *search) filtered(w *workspace, q shifted, t0 int) {
 		divide(w.yf, w.y, q.c, s.pad)
 		divide(w.uf, w.u, q.c, s.pad)
 	}
-	for k := t0 - len(q.c) + 1 - s.pad; k < s.pad && k >= 0; k++ {
-		w.ef[k] = 0
-	}
 	start := t0 - (len(q.c) - 1)
-	for k := range start {
-		w.ef[k] = 0
-	}
+	clear(w.ef[:start])
 	divide(w.ef, w.e, q.c, start)
 }
 
@@ -803,10 +798,8 @@ func (s *search) minimise(x point, tol float64, limit int, mask []bool) (point, 
 // at which to stop; below 1e-9 the estimate no longer moves in any digit that
 // matters. limit bounds the number of steps.
 func (p *Predictor) Fit(start *Prediction, tol float64, limit int) (*Prediction, error) {
-	s, x, err := p.begin(start)
-	if err != nil {
-		return nil, err
-	}
+	s, x := p.begin(start)
+	defer s.done()
 	x, rss, steps, converged := s.minimise(x, tol, limit, nil)
 	if !(rss < math.Inf(1)) {
 		return nil, ErrNoFit
@@ -815,12 +808,12 @@ func (p *Predictor) Fit(start *Prediction, tol float64, limit int) (*Prediction,
 }
 
 // begin scales a start for a search.
-func (p *Predictor) begin(start *Prediction) (*search, point, error) {
+func (p *Predictor) begin(start *Prediction) (*search, point) {
 	if start.Delay < p.DelayRange[0]-1e-9*p.Period || start.Delay > p.DelayRange[1]+1e-9*p.Period {
 		panic(badDelay)
 	}
 	s := p.newSearch(start.Shape, timeScale(start.Den, p.Period))
-	return s, s.scaled(start), nil
+	return s, s.scaled(start)
 }
 
 // timeScale returns the geometric mean of the poles' moduli, those near zero
@@ -911,10 +904,8 @@ func (s *search) units() []float64 {
 // where the information is singular: the data do not tell all parameters
 // apart.
 func (p *Predictor) Covariance(m *Prediction) error {
-	s, x, err := p.begin(m)
-	if err != nil {
-		return err
-	}
+	s, x := p.begin(m)
+	defer s.done()
 	_, q, ok := s.errorsAt(x)
 	if !ok {
 		return ErrNoFit
@@ -959,10 +950,8 @@ var ErrSingular = errors.New("fit: information matrix is singular")
 // Errors returns the one-step prediction errors of m, record by record, in the
 // output's units, with the constants and start-up errors that fit best.
 func (p *Predictor) Errors(m *Prediction) ([][]float64, error) {
-	s, x, err := p.begin(m)
-	if err != nil {
-		return nil, err
-	}
+	s, x := p.begin(m)
+	defer s.done()
 	if _, _, ok := s.errorsAt(x); !ok {
 		return nil, ErrNoFit
 	}

@@ -147,6 +147,7 @@ func (p *Predictor) Start(shape Shape, seed Seed, delay, ratio float64, colour [
 	}
 	den := lti.FromRoots(poles)
 	s := p.newSearch(shape, timeScale(den, p.Period))
+	defer s.done()
 	m := &Prediction{Shape: shape, Num: make(lti.Poly, shape.Zeros+1), Den: den, Delay: delay, Period: p.Period}
 	m.Num[0] = 1
 	m.D = zPoly(colour)
