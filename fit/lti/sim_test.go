@@ -104,3 +104,193 @@ func TestSimulatorReuse(t *testing.T) {
 		t.Errorf("%g allocations a run", n)
 	}
 }
+
+func repeat(v float64, n int) []float64 {
+	x := make([]float64, n)
+	for i := range x {
+		x[i] = v
+	}
+	return x
+}
+
+// Row convention and fractional delay: a unit step through 1/(s+1) at h = 1 with 0.3 s of delay, half of it the
+// computer's: y[1] = 1 - e^{-0.7} (G0 = 0.503414696208591 of Åström & Wittenmark, sec. 2.3), and between the samples
+// 1 - e^{-(t-0.3)} in closed form.
+func TestSimulateDelay(t *testing.T) {
+	r := Run{Plant: TF{Num: Poly{1}, Den: Poly{1, 1}, Delay: 0.1}, Period: 1, ComputeDelay: 0.2, Law: proportional(0, 1), Steps: 6,
+		Dither: repeat(1, 6), Fine: 10}
+	tr, err := r.Simulate()
+	if err != nil {
+		t.Fatal(err)
+	}
+	if tr.Y[0] != 0 || !near(tr.Y[1], 0.503414696208591, 1e-14) || tr.U[0] != 1 {
+		t.Errorf("y %v, u %v", tr.Y[:2], tr.U[:1])
+	}
+	for i, y := range tr.Fine {
+		at := float64(i)/10 - 0.3
+		if want := -math.Expm1(-math.Max(at, 0)); !near(y, want, 1e-14) {
+			t.Errorf("at %g s: %.16g, want %.16g", float64(i)/10, y, want)
+		}
+	}
+	for k, y := range tr.YTrue {
+		if y != tr.Fine[10*k] && !near(y, tr.Fine[10*k], 1e-15) {
+			t.Errorf("sample %d: %g, between the samples %g", k, y, tr.Fine[10*k])
+		}
+	}
+	// A whole sample more: everything one row later.
+	r.Plant.Delay = 1.1
+	late, err := r.Simulate()
+	if err != nil {
+		t.Fatal(err)
+	}
+	for k := 1; k < 6; k++ {
+		if !near(late.Y[k], tr.Y[k-1], 1e-14) {
+			t.Errorf("row %d: %g, want %g", k, late.Y[k], tr.Y[k-1])
+		}
+	}
+}
+
+// The closed loop against its difference equation, written out: x+ = a x + b (u + d), u = -k (x + n), y = x + o.
+func TestSimulateSignals(t *testing.T) {
+	const h, n, k = 0.1, 40, 1.7
+	a, b := math.Exp(0.2), (math.Exp(0.2)-1)/2
+	rng := rand.New(rand.NewPCG(3, 3))
+	draw := func() []float64 {
+		x := make([]float64, n)
+		for i := range x {
+			x[i] = rng.NormFloat64()
+		}
+		return x
+	}
+	r := Run{Plant: TF{Num: Poly{1}, Den: Poly{-2, 1}}, Period: h, Law: proportional(k, h), Steps: n, Reference: draw(), Dither: draw(),
+		InputDisturbance: draw(), OutputDisturbance: draw(), Noise: draw(), OutputOffset: 0.5}
+	r.Law.U0, r.Law.Y0 = 2, -3
+	tr, err := r.Simulate()
+	if err != nil {
+		t.Fatal(err)
+	}
+	x := 0.5
+	for i := range n {
+		yTrue := -3 + x + r.OutputDisturbance[i]
+		y := yTrue + r.Noise[i]
+		u := 2 + k*((r.Reference[i]+3)-(y+3)) + r.Dither[i]
+		for _, v := range []struct {
+			name      string
+			got, want float64
+		}{{"y true", tr.YTrue[i], yTrue}, {"y", tr.Y[i], y}, {"u", tr.U[i], u}, {"r", tr.R[i], r.Reference[i]}, {"v", tr.V[i], r.Reference[i] + 3}} {
+			if !near(v.got, v.want, 1e-12) {
+				t.Fatalf("row %d, %s: %g, want %g", i, v.name, v.got, v.want)
+			}
+		}
+		x = a*x + b*(u-2+r.InputDisturbance[i])
+	}
+}
+
+// The start along the unstable mode, free running: e^{pt} for the fastest of real poles, e^{st} cos wt for a pair, a
+// constant for a double integrator, always from the asked offset.
+func TestOutputOffset(t *testing.T) {
+	const h, n = 0.01, 100
+	for _, c := range []struct {
+		name string
+		g    TF
+		y    func(t float64) float64
+	}{
+		{"real", TF{Num: Poly{9, 1}, Den: FromRoots([]complex128{3, 1, -20})}, func(t float64) float64 { return math.Exp(3 * t) }},
+		{"pair with a zero", TF{Num: Poly{2, 1}, Den: FromRoots([]complex128{complex(0.5, 7), complex(0.5, -7), -4})},
+			func(t float64) float64 { return math.Exp(0.5*t) * math.Cos(7*t) }},
+		{"double integrator with lag", TF{Num: Poly{5}, Den: Poly{0, 0, 1, 0.1}, Delay: 0.013}, func(float64) float64 { return 1 }},
+		{"double unstable pole", TF{Num: Poly{5}, Den: Poly{4, -4, 1}}, func(t float64) float64 { return math.Exp(2 * t) }},
+		{"integrator and stable", TF{Num: Poly{5}, Den: Poly{0, 2, 1}}, func(float64) float64 { return 1 }},
+	} {
+		tr, err := Run{Plant: c.g, Period: h, Law: proportional(0, h), Steps: n, OutputOffset: -0.3}.Simulate()
+		if err != nil {
+			t.Fatal(err)
+		}
+		for k, y := range tr.YTrue {
+			if want := -0.3 * c.y(float64(k)*h); !near(y, want, 1e-11*(1+math.Abs(want))) {
+				t.Errorf("%s, step %d: %.15g, want %.15g", c.name, k, y, want)
+				break
+			}
+		}
+	}
+	hidden := TF{Num: Poly{-3, 1}, Den: FromRoots([]complex128{3, -1})}
+	if _, err := (Run{Plant: hidden, Period: h, Law: proportional(0, h), Steps: 1, OutputOffset: 1}).Simulate(); err == nil {
+		t.Error("mode that does not show in the output: no error")
+	}
+}
+
+func TestTrip(t *testing.T) {
+	r := Run{Plant: TF{Num: Poly{1}, Den: Poly{-2, 1}}, Period: 0.1, Law: proportional(0, 0.1), Steps: 100, OutputOffset: 0.1, Trip: [2]float64{-1, 1}, Fine: 3}
+	tr, err := r.Simulate()
+	if err != nil {
+		t.Fatal(err)
+	}
+	// 0.1 e^{0.2 k} > 1 first at k = 12 (11.51).
+	if tr.Tripped != 12 || len(tr.Y) != 13 || len(tr.U) != 13 || len(tr.Fine) != 39 {
+		t.Errorf("tripped at %d, %d rows", tr.Tripped, len(tr.Y))
+	}
+	r.Trip, r.Steps = [2]float64{}, 10000
+	if tr, err = r.Simulate(); err != nil || tr.Tripped < 3000 {
+		t.Errorf("runaway: tripped at %d, %v", tr.Tripped, err)
+	}
+	r.OutputOffset, r.Noise = 0, repeat(0, 10000)
+	r.Noise[5] = math.NaN()
+	if tr, err = r.Simulate(); err != nil || tr.Tripped != 5 {
+		t.Errorf("NaN: tripped at %d, %v", tr.Tripped, err)
+	}
+}
+
+func TestSimulateRefuses(t *testing.T) {
+	for name, breakIt := range map[string]func(r *Run){
+		"no law":        func(r *Run) { r.Law = nil },
+		"law's period":  func(r *Run) { r.Law = proportional(1, 0.5) },
+		"short noise":   func(r *Run) { r.Noise = make([]float64, r.Steps-1) },
+		"steps":         func(r *Run) { r.Steps = -1 },
+		"compute delay": func(r *Run) { r.ComputeDelay = -1 },
+		"state":         func(r *Run) { r.Initial = []float64{1} },
+		"biproper":      func(r *Run) { r.Plant, r.ComputeDelay = TF{Num: Poly{1, 1}, Den: Poly{2, 1}}, 0 },
+		"law":           func(r *Run) { r.Law = &Law{Inner: r.Law.Inner, InputRate: -1} },
+		"shape": func(r *Run) {
+			r.Innovations, r.Shape = repeat(0, r.Steps), &DTF{Num: Poly{1}, Den: Poly{1, -1.5}, Period: r.Period}
+		},
+	} {
+		r := everything(1)
+		breakIt(&r)
+		if _, err := r.Simulate(); err == nil {
+			t.Errorf("%s: no error", name)
+		}
+	}
+}
+
+// A law changed in place between two runs of one simulator must act.
+func TestSimulatorNoticesChanges(t *testing.T) {
+	var s Simulator
+	var tr Trace
+	r := everything(2)
+	if err := s.Simulate(&tr, r); err != nil {
+		t.Fatal(err)
+	}
+	r.Law.Inner.Num[0] *= 0.9
+	r.Plant.Num[0] *= 1.1
+	if err := s.Simulate(&tr, r); err != nil {
+		t.Fatal(err)
+	}
+	want, err := r.Simulate()
+	if err != nil {
+		t.Fatal(err)
+	}
+	sameTrace(t, "after a change in place", tr, want)
+}
+
+func BenchmarkSimulator(b *testing.B) {
+	r := everything(1)
+	r.Fine = 0
+	var s Simulator
+	var tr Trace
+	for b.Loop() {
+		if err := s.Simulate(&tr, r); err != nil {
+			b.Fatal(err)
+		}
+	}
+	b.ReportMetric(float64(b.N)*float64(r.Steps)/b.Elapsed().Seconds()/1e6, "Msteps/s")
+}

@@ -1,0 +1,110 @@
+package lti
+
+import (
+	"math"
+	"testing"
+)
+
+// A clamped integrator I = min(2, max(-2, I + 0.125 e)), e = +1 for 100 steps, then -1: it reaches 2 at step 16, falls at
+// once on reversal and is back at 0 after 16 further steps, where an unclamped one stands at 12.5 and needs 100
+// (arithmetic, exact in binary).
+func TestHeldOutputsStopWindup(t *testing.T) {
+	integrator := DTF{Num: Poly{0.125}, Den: Poly{1, -1}, Period: 1}
+	one := Gain(1, 1)
+	for _, c := range []struct {
+		name string
+		law  Law
+		read func(s *LawState, r float64) float64
+	}{
+		{"inner", Law{Inner: integrator, InputLimits: [2]float64{-2, 2}}, func(s *LawState, r float64) float64 { return s.Step(r, 0) }},
+		{"inner about an operating point", Law{Inner: integrator, U0: 5, Y0: 3, InputLimits: [2]float64{3, 7}},
+			func(s *LawState, r float64) float64 { return s.Step(3+r, 3) - 5 }},
+		{"outer", Law{Inner: one, Outer: &integrator, OuterLimits: [2]float64{-2, 2}}, func(s *LawState, r float64) float64 {
+			s.Step(r, 0)
+			return s.Inner()
+		}},
+	} {
+		s := c.law.Start()
+		for k := 1; k <= 132; k++ {
+			e := 1.0
+			want := math.Min(2, 0.125*float64(k))
+			if k > 100 {
+				e = -1
+				want = math.Max(-2, 2-0.125*float64(k-100))
+			}
+			if got := c.read(s, e); got != want {
+				t.Fatalf("%s, step %d: %g, want %g", c.name, k, got, want)
+			}
+		}
+	}
+}
+
+// Every element of a step in turn, worked by hand: Prefilter 1/2 (r[k] + r[k-1]), Outer gain 2, Inner gain 3, about
+// U0 = 10, Y0 = 1; y in steps of 0.25, u in steps of 0.5.
+func TestLawByHand(t *testing.T) {
+	outer, pre := Gain(2, 0.1), DTF{Num: Poly{0.5, 0.5}, Den: Poly{1}, Period: 0.1}
+	law := Law{Inner: Gain(3, 0.1), Outer: &outer, Prefilter: &pre, U0: 10, Y0: 1, InputLimits: [2]float64{3.2, 18.3},
+		OuterLimits: [2]float64{-1.5, 2}, InputRate: 40, InputStep: 0.5, OutputStep: 0.25}
+	s := law.Start()
+	for k, c := range []struct{ r, y, dither, read, v, u float64 }{
+		// f = 0.2, v = 0.4, u = 10 + 3*0.4 = 11.2 -> 11
+		{1.4, 1.1, 0, 1, 0.4, 11},
+		// f = 0.4, dy = 0.25, v = 0.3, u = 10 + 3*0.05 = 10.15, + 0.3 = 10.45 -> 10.5
+		{1.4, 1.2, 0.3, 1.25, 0.3, 10.5},
+		// f = 1.2, dy = 0.25, v = 1.9, u = 14.95, but the rate allows 4 from 10.45 (before rounding): 14.45 -> 14.5
+		{3, 1.2, 0, 1.25, 1.9, 14.5},
+		// f = 2, v = min(3.5, 2), u = 10 + 3*1.75 = 15.25 -> 15.5 (half away from 0)
+		{3, 1.2, 0, 1.25, 2, 15.5},
+		// y = -1: f = 2, v = 2, u = 22, rate 19.25, limit 18.3 -> 18.5 is beyond it, so 18
+		{3, -1, 0, -1, 2, 18},
+		// y = 3: v = 2 (2 - 2) = 0, u = 10 - 6 = 4, rate 14.3 -> 14.5
+		{3, 3, 0, 3, 0, 14.5},
+	} {
+		u := s.StepProbe(c.r, c.y, c.dither)
+		if s.Read() != c.read || !near(s.Inner(), c.v, 1e-14) || u != c.u {
+			t.Errorf("step %d: read %g, v %g, u %g; want %g, %g, %g", k, s.Read(), s.Inner(), u, c.read, c.v, c.u)
+		}
+	}
+	s.Reset()
+	if u := s.Step(1.4, 1.1); u != 11 {
+		t.Errorf("after a reset: %g, want 11", u)
+	}
+}
+
+// A dither that no limit touches adds to u and leaves the law's own part as it was, memory included.
+func TestDitherIsNoPartOfTheLaw(t *testing.T) {
+	law := Law{Inner: DTF{Num: Poly{2, -1.5}, Den: Poly{1, -0.5, -0.25}, Period: 1}, U0: 4, InputLimits: [2]float64{-100, 100}}
+	plain, probed := law.Start(), law.Start()
+	for k := range 50 {
+		y, d := math.Sin(float64(k)), math.Cos(7*float64(k))
+		a, b := plain.Step(0, y), probed.StepProbe(0, y, d)
+		if !near(b-d, a, 1e-12) {
+			t.Fatalf("step %d: %g with the dither taken off, %g without", k, b-d, a)
+		}
+	}
+}
+
+func TestLawValidate(t *testing.T) {
+	good := func() *Law { return &Law{Inner: Gain(1, 0.1)} }
+	if err := good().Validate(); err != nil {
+		t.Error(err)
+	}
+	other := Gain(1, 0.2)
+	for name, breakIt := range map[string]func(l *Law){
+		"no period":       func(l *Law) { l.Inner.Period = 0 },
+		"no denominator":  func(l *Law) { l.Inner.Den = nil },
+		"leading zero":    func(l *Law) { l.Inner.Den = Poly{0, 1} },
+		"NaN":             func(l *Law) { l.Inner.Num = Poly{math.NaN()} },
+		"mixed periods":   func(l *Law) { l.Outer = &other },
+		"limits reversed": func(l *Law) { l.InputLimits = [2]float64{1, -1} },
+		"outer reversed":  func(l *Law) { l.OuterLimits = [2]float64{1, 1} },
+		"negative rate":   func(l *Law) { l.InputRate = -1 },
+		"negative step":   func(l *Law) { l.OutputStep = -1 },
+	} {
+		l := good()
+		breakIt(l)
+		if l.Validate() == nil {
+			t.Errorf("%s: no error", name)
+		}
+	}
+}
