@@ -53,10 +53,10 @@ func (o ARXOptions) lags() (lags []lag, order int) {
 	// Taken in turn, so that the leading columns are a model of lower order.
 	for i := range max(o.NA, o.NB) {
 		if i < o.NA {
-			lags = append(lags, lag{steps: i + 1})
+			lags = append(lags, lag{output, i + 1})
 		}
 		if i < o.NB {
-			lags = append(lags, lag{input: true, steps: o.Delay + i})
+			lags = append(lags, lag{input, o.Delay + i})
 		}
 	}
 	order = o.NA
@@ -72,7 +72,7 @@ func (o ARXOptions) lags() (lags []lag, order int) {
 func FitARX(recs []Record, opt ARXOptions) (*ARX, error) {
 	checkRecords(recs)
 	lags, order := opt.lags()
-	g := newRegression(recs, lags, max(order, opt.First), opt.NoConstant)
+	g := newRegression(signals(recs), lags, max(order, opt.First), opt.NoConstant)
 	t, err := g.reduce()
 	if err != nil {
 		return nil, fmt.Errorf("ARX of order %d: %w", order, err)
@@ -91,7 +91,7 @@ func (g *regression) arx(t *triangle, opt ARXOptions) (*ARX, error) {
 	m := &ARX{
 		A: make([]float64, opt.NA+1), B: make([]float64, opt.Delay+opt.NB), Delay: opt.Delay,
 		RSS: s.rss, Rows: g.rows, First: g.first, Order: order, Condition: s.cond,
-		Const: make([]float64, len(g.recs)),
+		Const: make([]float64, len(g.data)),
 	}
 	m.A[0] = 1
 	df := g.rows - q - g.constants()
@@ -103,7 +103,7 @@ func (g *regression) arx(t *triangle, opt ARXOptions) (*ARX, error) {
 	m.Cov = mat.NewSymDense(q, nil)
 	at, sign := make([]int, q), make([]float64, q) // place of each lag in the covariance, and sign of its coefficient
 	for j, l := range g.lags[:q] {
-		if l.input {
+		if l.signal == input {
 			m.B[l.steps] = s.coef[j]
 			at[j], sign[j] = opt.NA+l.steps-opt.Delay, 1
 		} else {
@@ -130,12 +130,12 @@ func (g *regression) arx(t *triangle, opt ARXOptions) (*ARX, error) {
 		if g.without {
 			continue
 		}
-		sums := g.sums(g.recs[i])
+		sums := g.sums(g.data[i])
 		c := sums[len(g.lags)]
 		for j := range q {
 			c -= s.coef[j] * sums[j]
 		}
-		m.Const[i] = c / float64(len(g.recs[i].Y)-g.first)
+		m.Const[i] = c / float64(len(g.data[i][output])-g.first)
 	}
 	if s.cond > ConditionLimit {
 		return m, Condition(s.cond)
@@ -188,7 +188,7 @@ func ARXOrders(recs []Record, opt ChooseOptions) ([]OrderScore, error) {
 		panic(badOrder)
 	}
 	lags, order := ARXOptions{NA: hi, NB: hi, Delay: opt.Delay}.lags()
-	g := newRegression(recs, lags, order, opt.NoConstant)
+	g := newRegression(signals(recs), lags, order, opt.NoConstant)
 	t, err := g.reduce()
 	if err != nil {
 		return nil, fmt.Errorf("ARX of order %d: %w", hi, err)
@@ -203,7 +203,7 @@ func ARXOrders(recs []Record, opt ChooseOptions) ([]OrderScore, error) {
 }
 
 func usableRows(recs []Record, first int) int {
-	return newRegression(recs, nil, first, true).rows
+	return newRegression(signals(recs), nil, first, true).rows
 }
 
 // ChooseARX returns the model of the order with the least score, fitted to all rows that this order leaves. Errors are

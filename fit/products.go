@@ -7,33 +7,45 @@ import (
 	"gonum.org/v1/gonum/mat"
 )
 
-// lag names one regressor: the output (input false) or the input, by steps samples ago.
-type lag struct {
-	input bool
-	steps int
-}
+// lag names one regressor: a signal by steps samples ago.
+type lag struct{ signal, steps int }
 
-// regression is the problem of explaining y_k by lags of the records, on rows [first, len) of each record, a constant
-// for each record included unless without.
+// Signals of a regression. The outside signal is there only where it serves as instrument.
+const (
+	output = iota
+	input
+	outside
+)
+
+// regression is the problem of explaining y_k by lags of signals, on rows [first, len) of each record, a constant for
+// each record included unless without.
 type regression struct {
 	lags    []lag
 	first   int
-	without bool  // no constant
-	used    []int // records that are long enough
+	without bool          // no constant
+	data    [][][]float64 // record, signal, sample
+	used    []int         // records that are long enough
 	rows    int
-	recs    []Record
 }
 
 // newRegression leaves out records with fewer than two rows to give.
-func newRegression(recs []Record, lags []lag, first int, without bool) *regression {
-	g := &regression{lags: lags, first: first, without: without, recs: recs}
-	for i, r := range recs {
-		if n := len(r.Y) - first; n >= 2 {
+func newRegression(data [][][]float64, lags []lag, first int, without bool) *regression {
+	g := &regression{lags: lags, first: first, without: without, data: data}
+	for i, s := range data {
+		if n := len(s[output]) - first; n >= 2 {
 			g.used = append(g.used, i)
 			g.rows += n
 		}
 	}
 	return g
+}
+
+func signals(recs []Record) [][][]float64 {
+	out := make([][][]float64, len(recs))
+	for i, r := range recs {
+		out[i] = [][]float64{output: r.Y, input: r.U}
+	}
+	return out
 }
 
 func (g *regression) constants() int {
@@ -43,11 +55,9 @@ func (g *regression) constants() int {
 	return len(g.used)
 }
 
-func (r Record) column(l lag) []float64 {
-	if l.input {
-		return r.U
-	}
-	return r.Y
+// columns are the regressors and then the response.
+func (g *regression) columns() []lag {
+	return append(append([]lag(nil), g.lags...), lag{signal: output})
 }
 
 // reduce returns the triangular factor of [X y], the records' means removed.
@@ -88,51 +98,42 @@ const (
 func (t *triangle) total() float64 { return t.rss(0) }
 
 func (g *regression) products() *mat.SymDense {
-	n := len(g.lags)
-	p := mat.NewSymDense(n+1, nil)
-	all := append(append([]lag(nil), g.lags...), lag{})
-	maxU, maxY := -1, 0
+	all := g.columns()
+	p := mat.NewSymDense(len(all), nil)
+	longest := map[int]int{} // longest lag of each signal that occurs
 	for _, l := range all {
-		if l.input {
-			maxU = max(maxU, l.steps)
-		} else {
-			maxY = max(maxY, l.steps)
-		}
+		longest[l.signal] = max(longest[l.signal], l.steps)
 	}
 	for _, i := range g.used {
-		rec := g.recs[i]
-		u, y := rec.U, rec.Y
-		if !g.without {
-			// About their means the products do not cancel; the means of the shifted rows are then taken out exactly.
-			u, y = lessMean(u), lessMean(y)
+		x := make([][]float64, len(g.data[i]))
+		for s := range longest {
+			x[s] = g.data[i][s]
+			if !g.without {
+				// About their means the products do not cancel; the means of the shifted rows are then taken out exactly.
+				x[s] = lessMean(x[s])
+			}
 		}
-		yy := laggedProducts(y, y, g.first, maxY, maxY)
-		var uu, uy [][]float64
-		if maxU >= 0 {
-			uu = laggedProducts(u, u, g.first, maxU, maxU)
-			uy = laggedProducts(u, y, g.first, maxU, maxY)
+		var pair [outside + 1][outside + 1][][]float64
+		for a, la := range longest {
+			for b, lb := range longest {
+				if a <= b {
+					pair[a][b] = laggedProducts(x[a], x[b], g.first, la, lb)
+				}
+			}
 		}
-		centred := Record{u, y}
-		sums := g.sums(centred)
-		rows := float64(len(y) - g.first)
+		sums := g.sums(x)
+		rows := float64(len(x[output]) - g.first)
 		for a, la := range all {
-			for b := a; b <= n; b++ {
-				lb := all[b]
-				var s float64
-				switch {
-				case la.input && lb.input:
-					s = uu[la.steps][lb.steps]
-				case la.input:
-					s = uy[la.steps][lb.steps]
-				case lb.input:
-					s = uy[lb.steps][la.steps]
-				default:
-					s = yy[la.steps][lb.steps]
+			for b, lb := range all[a:] {
+				p1, p2 := la, lb
+				if p1.signal > p2.signal {
+					p1, p2 = p2, p1
 				}
+				s := pair[p1.signal][p2.signal][p1.steps][p2.steps]
 				if !g.without {
-					s -= sums[a] * sums[b] / rows
+					s -= sums[a] * sums[a+b] / rows
 				}
-				p.SetSym(a, b, p.At(a, b)+s)
+				p.SetSym(a, a+b, p.At(a, a+b)+s)
 			}
 		}
 	}
@@ -140,26 +141,22 @@ func (g *regression) products() *mat.SymDense {
 }
 
 // sums returns the sum over the rows of every lag and of y.
-func (g *regression) sums(r Record) []float64 {
-	byLag := func(x []float64, maxLag int) []float64 {
-		n := len(x)
-		s := make([]float64, maxLag+1)
-		s[0] = floats.Sum(x[g.first:])
-		for i := 1; i <= maxLag; i++ {
-			s[i] = s[i-1] + x[g.first-i] - x[n-i]
+func (g *regression) sums(x [][]float64) []float64 {
+	all := g.columns()
+	byLag := make([][]float64, len(x))
+	out := make([]float64, len(all))
+	for j, l := range all {
+		if byLag[l.signal] == nil {
+			v := x[l.signal]
+			s := make([]float64, g.first+1)
+			s[0] = floats.Sum(v[g.first:])
+			for i := 1; i <= g.first; i++ {
+				s[i] = s[i-1] + v[g.first-i] - v[len(v)-i]
+			}
+			byLag[l.signal] = s
 		}
-		return s
+		out[j] = byLag[l.signal][l.steps]
 	}
-	u, y := byLag(r.U, g.first), byLag(r.Y, g.first)
-	out := make([]float64, len(g.lags)+1)
-	for j, l := range g.lags {
-		if l.input {
-			out[j] = u[l.steps]
-		} else {
-			out[j] = y[l.steps]
-		}
-	}
-	out[len(g.lags)] = y[0]
 	return out
 }
 
@@ -210,37 +207,34 @@ func laggedProducts(a, b []float64, first, maxA, maxB int) [][]float64 {
 // reduceRows reduces the rows themselves, some at a time, by Householder QR: the triangle of what went before is stacked
 // on the next block.
 func (g *regression) reduceRows() *triangle {
-	n := len(g.lags)
-	all := append(append([]lag(nil), g.lags...), lag{})
-	block := max(4*(n+1), 256)
-	work := mat.NewDense(n+1+block, n+1, nil)
-	filled := n + 1
+	all := g.columns()
+	n := len(all)
+	block := max(4*n, 256)
+	work := mat.NewDense(n+block, n, nil)
+	filled := n
 	flush := func() {
-		r := upperTriangle(work.Slice(0, filled, 0, n+1).(*mat.Dense))
+		r := upperTriangle(work.Slice(0, filled, 0, n).(*mat.Dense))
 		work.Zero()
 		work.Copy(r)
-		filled = n + 1
+		filled = n
 	}
 	for _, i := range g.used {
-		rec := g.recs[i]
-		offset := make([]float64, n+1)
+		x := g.data[i]
+		offset := make([]float64, n)
 		if !g.without {
-			rows := float64(len(rec.Y) - g.first)
-			for j, s := range g.sums(rec) {
-				offset[j] = s / rows
-			}
+			floats.ScaleTo(offset, 1/float64(len(x[output])-g.first), g.sums(x))
 		}
-		for k := g.first; k < len(rec.Y); k++ {
-			if filled == n+1+block {
+		for k := g.first; k < len(x[output]); k++ {
+			if filled == n+block {
 				flush()
 			}
 			row := work.RawRowView(filled)
 			for j, l := range all {
-				row[j] = rec.column(l)[k-l.steps] - offset[j]
+				row[j] = x[l.signal][k-l.steps] - offset[j]
 			}
 			filled++
 		}
 	}
 	flush()
-	return newTriangle(mat.DenseCopyOf(work.Slice(0, n+1, 0, n+1)), g.rows)
+	return newTriangle(mat.DenseCopyOf(work.Slice(0, n, 0, n)), g.rows)
 }

@@ -65,7 +65,7 @@ func TestARXAgainstTallQR(t *testing.T) {
 	} {
 		t.Run(c.name, func(t *testing.T) {
 			lags, order := c.opt.lags()
-			g := newRegression(c.recs, lags, max(order, c.opt.First), false)
+			g := newRegression(signals(c.recs), lags, max(order, c.opt.First), false)
 			want, err := tall(c.recs, c.opt, g.first)
 			if err != nil {
 				t.Fatal(err)
@@ -154,7 +154,7 @@ func BenchmarkFitARX(b *testing.B) {
 func BenchmarkReduceRows(b *testing.B) {
 	recs := rough(1, 10000)
 	lags, order := ARXOptions{NA: 50, NB: 50, Delay: 1}.lags()
-	g := newRegression(recs, lags, order, false)
+	g := newRegression(signals(recs), lags, order, false)
 	for b.Loop() {
 		g.reduceRows()
 	}

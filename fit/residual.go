@@ -110,7 +110,7 @@ func PastInputs(recs []Record, lags int) (f, p float64, err error) {
 		panic(badLag)
 	}
 	all, order := ARXOptions{NB: lags, Delay: 1}.lags()
-	g := newRegression(recs, all, order, false)
+	g := newRegression(signals(recs), all, order, false)
 	t, err := g.reduce()
 	if err != nil {
 		return 0, 0, fmt.Errorf("residuals against past inputs: %w", err)

@@ -80,14 +80,14 @@ func Subspace(recs []Record, opt SubspaceOptions) (*StateResult, error) {
 	// Columns y_{k-1}, u_{k-1} ... y_{k-past}, u_{k-past}, then u_k, and y_k as response: the first are the past, the
 	// last two what the next past has more.
 	lags, order := ARXOptions{NA: past, NB: past, Delay: 1}.lags()
-	g := newRegression(recs, append(lags, lag{input: true}), order, false)
+	g := newRegression(signals(recs), append(lags, lag{signal: input}), order, false)
 	t, err := g.reduce()
 	if err != nil {
 		return nil, fmt.Errorf("subspace: %w", err)
 	}
 	arx := t.solve(2 * past)
-	if math.IsInf(arx.cond, 1) {
-		return nil, Condition(arx.cond)
+	if arx.cond > ConditionLimit {
+		return nil, fmt.Errorf("subspace: %w", Condition(arx.cond))
 	}
 	df := g.rows - 2*past - g.constants()
 	if df < 1 {
