@@ -49,7 +49,7 @@ func testRigs() []testRig {
 			name: "exothermic", truth: fromRoots(-0.003, nil, []complex128{0.02, -0.06}, 5), relative: 0.02,
 			period: 2, sensor: 0.03, disturbance: 0.1, point: OperatingPoint{40, 80},
 			input: [2]float64{0, 100}, output: &[2]float64{60, 100},
-			spec: data.Spec{Step: 2, Overshoot: 0.25, Settling: 450, Band: 0.03, PeakSensitivity: 2.2},
+			spec:     data.Spec{Step: 2, Overshoot: 0.25, Settling: 450, Band: 0.03, PeakSensitivity: 2.2},
 			negative: true,
 		},
 		{

@@ -1,0 +1,153 @@
+package design
+
+import (
+	"errors"
+	"math"
+	"math/cmplx"
+	"strings"
+	"testing"
+
+	"steadyrig/fit/lti"
+	"steadyrig/ident"
+)
+
+// The tool's own loops are cleared again, by fresh eyes and on the same seed with the same counts.
+func TestVerifyOwn(t *testing.T) {
+	r := testRigs()[0]
+	l := designed(t, r.name)
+	again, err := Verify(t.Context(), r.model(t), r.rig(), l, Options{Seed: 1})
+	if err != nil {
+		t.Fatal(err)
+	}
+	if again.Promise.MeetSpec != l.Promise.MeetSpec || *again.Margins.PlantInput != *l.Margins.PlantInput && again.Margins.PlantInput.PeakSensitivity != l.Margins.PlantInput.PeakSensitivity {
+		t.Errorf("promise %+v, was %+v", again.Promise, l.Promise)
+	}
+	wrong := r.rig()
+	wrong.Loop.SamplePeriod *= 2
+	if _, err := Verify(t.Context(), r.model(t), wrong, l, Options{}); err == nil || !strings.Contains(err.Error(), "sample period") {
+		t.Errorf("other sample period: %v", err)
+	}
+}
+
+// An unstable pole cancelled, exactly or within 1 %, is refused, though the response to a reference step looks
+// perfect; the pole stays in the loop as the textbooks say: L = 4(s-1.01)/((s-1)(s+1)) has closed-loop poles
+// -2 ± sqrt(9.04), and the growth that the refusal names agrees with the simulation.
+func TestVerifyRefusesCancellation(t *testing.T) {
+	const period = 0.001
+	plant := lti.TF{Num: lti.Poly{4}, Den: lti.Poly{-1, 1}}
+	r := testRig{
+		name: "cancelled", truth: plant, relative: 0.003, period: period, sensor: 1e-4, disturbance: 1e-4, input: [2]float64{-50, 50},
+	}
+	r.spec.Step, r.spec.Overshoot, r.spec.Settling, r.spec.Band, r.spec.PeakSensitivity = 0.1, 0.2, 2, 0.05, 3
+	m := r.model(t)
+	for _, zero := range []float64{1.01, 1, 0.99} {
+		inner := lti.Tustin(lti.TF{Num: lti.Poly{-zero, 1}, Den: lti.Poly{1, 1}}, period)
+		outer := lti.Tustin(lti.TF{Num: lti.Poly{1, 0.5}, Den: lti.Poly{0, 1}}, period)
+		law := &lti.Law{Inner: inner}
+		loops, err := lti.NewTwoLoops(plant, 0, law)
+		if err != nil {
+			t.Fatal(err)
+		}
+		fastest := math.Inf(-1)
+		for _, z := range loops.Poles() {
+			fastest = math.Max(fastest, real(cmplx.Log(z))/period)
+		}
+		// s^2 + 4s + 4(-zero) - 1: 1e-3 for the sampling, half a millisecond of delay.
+		near(t, "growing pole", fastest, -2+math.Sqrt(5+4*zero), 1e-3)
+		l := lawLoops(inner)
+		l.Outer = &Block{Discrete: Rational{outer.Num, outer.Den}}
+		l.pointMissing = true
+		got, err := Verify(t.Context(), m, r.rig(), l, Options{Seed: 1, Plants: 60})
+		var refused *ident.RefusedError
+		if !errors.As(err, &refused) || got.Verdict != Refused {
+			t.Fatalf("zero at %v: %v", zero, err)
+		}
+		if !strings.Contains(refused.What, "grows by e every 1 s") || got.Promise.Stable != 0 {
+			t.Errorf("zero at %v: %q, %d of %d stable", zero, refused.What, got.Promise.Stable, got.Promise.Plants)
+		}
+	}
+	// The growth in simulation: a small offset along the mode, from the exactly cancelling loop.
+	law := &lti.Law{Inner: lti.Tustin(lti.TF{Num: lti.Poly{-1, 1}, Den: lti.Poly{1, 1}}, period)}
+	tr, err := lti.Run{Plant: plant, Period: period, Law: law, Steps: 6001, OutputOffset: 1e-6}.Simulate()
+	if err != nil {
+		t.Fatal(err)
+	}
+	near(t, "e-fold in 1 s", tr.YTrue[6000]/tr.YTrue[5000], math.E, 1e-2)
+}
+
+// A zero of 1 + K2 is a zero of the controller: K2 = -1 + (s - 1)/s has one at the pole, though K2 itself does not.
+func TestVerifySeesOuterCancellation(t *testing.T) {
+	const period = 0.01
+	m := bare(lti.TF{Num: lti.Poly{4}, Den: lti.Poly{-1, 1}}, period)
+	p, err := newProblem(m, bareRig(period, 0, 2))
+	if err != nil {
+		t.Fatal(err)
+	}
+	law := &lti.Law{Inner: lti.Gain(1, period)}
+	outer := lti.Tustin(lti.TF{Num: lti.Poly{-1}, Den: lti.Poly{0, 1}}, period) // 1 + K2 = (s - 1)/s
+	law.Outer = &outer
+	if r := p.cancellations(law); r == nil || !strings.Contains(r.What, "1 + K2") {
+		t.Errorf("%v", r)
+	}
+	outer = lti.Tustin(lti.TF{Num: lti.Poly{1}, Den: lti.Poly{0, 1}}, period)
+	if r := p.cancellations(law); r != nil {
+		t.Errorf("a plain integrator: %v", r)
+	}
+	// A zero of K1 at the integrator of K2.
+	law.Inner = lti.Tustin(lti.TF{Num: lti.Poly{1e-5, 1}, Den: lti.Poly{1, 0.1}}, period)
+	if r := p.cancellations(law); r == nil || !strings.Contains(r.What, "integrator") {
+		t.Errorf("%v", r)
+	}
+}
+
+// A user's stabilising pair that misses the spec is refused with what it misses, and keeps its coefficients.
+func TestVerifyUsersLoops(t *testing.T) {
+	r := testRigs()[1]
+	l, err := ReadLoops(strings.NewReader(`{"schema": "steadyrig/loops/1", "rig": "balanced", "sample_period": 0.03,
+		"inner": {"continuous": {"numerator": [3, 6], "denominator": [0.05, 1]}},
+		"outer": {"continuous": {"numerator": [0.05], "denominator": [1, 0]}}, "prefilter": 1, "outer_limits": null}`), "mine.json")
+	if err != nil {
+		t.Fatal(err)
+	}
+	got, err := Verify(t.Context(), r.model(t), r.rig(), l, Options{Seed: 1, Plants: 100})
+	var refused *ident.RefusedError
+	if !errors.As(err, &refused) || !strings.Contains(refused.What, "settling") {
+		t.Fatalf("%v", err)
+	}
+	if got.Promise.Stable != 100 || got.InputLimits == nil || *got.InputLimits != r.input || got.Inner.Discrete.Numerator[0] != l.Inner.Discrete.Numerator[0] {
+		t.Errorf("%+v", got.Promise)
+	}
+}
+
+// The curves of the report begin at rest, follow the reference and agree with the margins.
+func TestCurves(t *testing.T) {
+	r := testRigs()[3]
+	l := designed(t, r.name)
+	m, rig := r.model(t), r.rig()
+	s, err := l.StepResponses(m, rig, 3, 1)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if len(s.Output) != 4 || len(s.Input) != 4 || len(s.Output[0]) != len(s.Time) {
+		t.Fatalf("shapes %d %d %d %d", len(s.Output), len(s.Input), len(s.Output[0]), len(s.Time))
+	}
+	last := len(s.Time) - 1
+	for i, y := range s.Output {
+		near(t, "start", y[0], r.point.Output, 1e-12)
+		near(t, "end", y[last], r.point.Output+r.spec.Step, 0.01)
+		near(t, "input at the end", s.Input[i][last]-r.point.Input, r.spec.Step/r.truth.DC(), 0.1)
+	}
+	c, err := l.Sensitivity(m, rig, 20, 1)
+	if err != nil {
+		t.Fatal(err)
+	}
+	peak := 0.0
+	for j := range c.Omega {
+		peak = math.Max(peak, c.S[j])
+		if !(c.SLo[j] <= c.S[j] && c.S[j] <= c.SHi[j] && c.InnerSLo[j] <= c.InnerSHi[j]) {
+			t.Fatalf("range at %v", c.Omega[j])
+		}
+	}
+	near(t, "peak", peak, l.Margins.PlantInput.PeakSensitivity, 0.01)
+	near(t, "reference at low frequency", c.Reference[0], 1, 0.01)
+}
