@@ -1,0 +1,90 @@
+package main
+
+import (
+	"context"
+	"errors"
+	"fmt"
+
+	"github.com/spf13/cobra"
+
+	"steadyrig/data"
+	"steadyrig/ident"
+)
+
+const modelFile = "model.json"
+
+func newFit(a *app) *cobra.Command {
+	var s settings
+	cmd := &cobra.Command{
+		Use:   "fit RIG.toml LOG.csv...",
+		Short: "Fit a plant with bounds to logs",
+		Long: `fit finds a continuous-time transfer function of low order in closed-loop logs, with
+its delay, 95 % intervals of its poles, zeros and gain, and the evidence for them.
+It writes model.json, or the file that --out names.`,
+		Example: "  steadyrig fit rig.toml run7.csv run8.csv",
+		Args:    wants(2, -1, "a rig file and one or more logs"),
+		RunE: func(cmd *cobra.Command, args []string) error {
+			if err := a.checkTarget(&s, modelFile); err != nil {
+				return err
+			}
+			rig, exps, err := a.rigAndLogs(args)
+			if err != nil {
+				return err
+			}
+			model, refusal := a.fit(cmd.Context(), exps, rig, &s)
+			if model == nil {
+				return refusal
+			}
+			content, err := rendered(model.Write)
+			if err != nil {
+				return err
+			}
+			a.warn(&s, warningsBeside(model.Warnings, refusal))
+			if err := a.deliver(&s, modelFile, content, func(p *page) { showModel(p, model, rig.Units) }); err != nil {
+				return err
+			}
+			return refusal
+		},
+	}
+	s.add(cmd, "write the model here instead of to model.json")
+	return cmd
+}
+
+// fit fits a model. A refusal comes with the model; any other error without one.
+func (a *app) fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, s *settings) (*ident.Model, error) {
+	bar := a.progress("fit", s.quiet)
+	defer bar.wipe()
+	model, err := ident.Fit(ctx, exps, rig, ident.Options{Progress: bar.step})
+	var refused *ident.RefusedError
+	if err != nil && !(errors.As(err, &refused) && model != nil) {
+		return nil, err
+	}
+	model.Tool, model.Made = a.tool, a.made()
+	return model, err
+}
+
+// warningsBeside leaves out the warning that the error itself will tell.
+func warningsBeside(warnings []string, err error) []string {
+	var rest []string
+	for _, w := range warnings {
+		if err == nil || w != err.Error() {
+			rest = append(rest, w)
+		}
+	}
+	return rest
+}
+
+// units of the log, as they follow a figure.
+type units struct{ data.Units }
+
+func (u units) ratio(num, den string) string {
+	switch {
+	case num == "" && den == "":
+		return ""
+	case num == "":
+		num = "1"
+	case den == "":
+		return num
+	}
+	return fmt.Sprintf("%s/%s", num, den)
+}

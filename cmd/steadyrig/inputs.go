@@ -1,0 +1,90 @@
+package main
+
+import (
+	"bytes"
+	"crypto/sha256"
+	"encoding/hex"
+	"io"
+	"io/fs"
+	"os"
+
+	"steadyrig/data"
+	"steadyrig/ident"
+)
+
+// open opens an input file; "-" is standard input.
+func (a *app) open(path string) (io.ReadCloser, string, error) {
+	if path == "-" {
+		return io.NopCloser(a.stdin), "standard input", nil
+	}
+	f, err := data.Open(path, func(name string) (fs.File, error) { return os.Open(name) })
+	return f, path, err
+}
+
+// load reads one input file with read and returns its bytes' SHA-256 in hex as well.
+func load[T any](a *app, path string, read func(io.Reader, string) (T, error)) (T, string, error) {
+	var none T
+	f, name, err := a.open(path)
+	if err != nil {
+		return none, "", inputError(err)
+	}
+	defer f.Close()
+	sum := sha256.New()
+	v, err := read(io.TeeReader(f, sum), name)
+	if err != nil {
+		return none, "", inputError(err)
+	}
+	return v, hex.EncodeToString(sum.Sum(nil)), nil
+}
+
+func (a *app) rig(path string) (*data.Rig, error) {
+	rig, _, err := load(a, path, data.ReadRig)
+	return rig, err
+}
+
+// rigAndLogs reads a rig file and the logs that follow it.
+func (a *app) rigAndLogs(args []string) (*data.Rig, []*data.Experiment, error) {
+	rig, err := a.rig(args[0])
+	if err != nil {
+		return nil, nil, err
+	}
+	exps, err := a.logs(rig, args[1:])
+	return rig, exps, err
+}
+
+func (a *app) logs(rig *data.Rig, paths []string) ([]*data.Experiment, error) {
+	var exps []*data.Experiment
+	for _, path := range paths {
+		exp, _, err := load(a, path, func(r io.Reader, name string) (*data.Experiment, error) {
+			return data.ReadLog(r, name, rig)
+		})
+		if err != nil {
+			return nil, err
+		}
+		exps = append(exps, exp)
+	}
+	return exps, nil
+}
+
+// rigAndModel reads a rig file and a model, and the model's SHA-256.
+func (a *app) rigAndModel(args []string) (*data.Rig, *ident.Model, string, error) {
+	rig, err := a.rig(args[0])
+	if err != nil {
+		return nil, nil, "", err
+	}
+	model, sum, err := load(a, args[1], ident.ReadModel)
+	return rig, model, sum, err
+}
+
+// sha256Of is the SHA-256 of a file that is about to be written.
+func sha256Of(content []byte) string {
+	sum := sha256.Sum256(content)
+	return hex.EncodeToString(sum[:])
+}
+
+// rendered is what a result writes.
+func rendered(write func(io.Writer) error) ([]byte, error) {
+	var b bytes.Buffer
+	err := write(&b)
+	return b.Bytes(), err
+}

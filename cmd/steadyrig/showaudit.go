@@ -1,0 +1,95 @@
+package main
+
+import (
+	"fmt"
+	"strings"
+
+	"github.com/go-gota/gota/dataframe"
+	"github.com/go-gota/gota/series"
+	"gonum.org/v1/gonum/floats"
+	"gonum.org/v1/gonum/stat"
+
+	"steadyrig/data"
+	"steadyrig/ident"
+)
+
+// showAudit prints an audit in the order in which an engineer checks a log.
+func showAudit(p *page, r *ident.AuditReport, exps []*data.Experiment, rig *data.Rig) {
+	p.verdict(r.Verdict, r.Rig+": "+map[string]string{
+		ident.Sound:   "the log can be fitted.",
+		ident.Weak:    "the log can be fitted, with care.",
+		ident.Refused: "the log cannot be fitted as it is.",
+	}[r.Verdict])
+	u := rig.Units
+	p.heading("First checks")
+	p.item("sign", r.Sign.Words)
+	p.item("operating point", fmt.Sprintf("input %s, output %s; about it the input moves by %s, the output by %s (standard deviations)",
+		withUnit(number(r.OperatingPoint.Input), u.Input), withUnit(number(r.OperatingPoint.Output), u.Output),
+		withUnit(number(r.Spread.Input), u.Input), withUnit(number(r.Spread.Output), u.Output)))
+	p.item("pairing", r.Pairing.Words)
+	p.item("loop rate", r.LoopRate.Words)
+	p.item("from outside", r.Outside.Words)
+	if r.Law != nil {
+		p.item("stopgap law", r.Law.Words)
+	}
+	p.item("next step", r.NextStep)
+
+	p.heading("Columns, rows in use")
+	p.table(describe(exps, rig))
+	for _, l := range r.Logs {
+		p.item("log", fmt.Sprintf("%s: %d of %d rows used, %s", l.File, l.Used, l.Rows, count(l.Segments, "segment")))
+	}
+	for _, e := range exps {
+		p.item("written with", e.Layout)
+	}
+
+	p.heading(fmt.Sprintf("Flaws: %s", map[bool]string{true: "none found", false: fmt.Sprint(len(r.Flaws))}[len(r.Flaws) == 0]))
+	for _, f := range r.Flaws {
+		where := f.Name
+		if f.Column != "" {
+			where += " in " + f.Column
+		}
+		if f.Line > 0 {
+			where += fmt.Sprintf(", first on line %d", f.Line)
+		}
+		if len(r.Logs) > 1 {
+			where += " of " + f.File
+		}
+		p.line("  %s", where)
+		wrap(p.w, "    ", strings.TrimSuffix(f.Detail, ".")+". "+f.Effect)
+	}
+}
+
+// describe tabulates the columns in use over all logs.
+func describe(exps []*data.Experiment, rig *data.Rig) dataframe.DataFrame {
+	parts := []struct {
+		part, column, unit string
+		of                 func(data.Segment) []float64
+	}{
+		{"input", rig.Log.Input, rig.Units.Input, func(s data.Segment) []float64 { return s.U }},
+		{"output", rig.Log.Output, rig.Units.Output, func(s data.Segment) []float64 { return s.Y }},
+		{"reference", rig.Log.Reference, rig.Units.Output, func(s data.Segment) []float64 { return s.R }},
+		{"dither", rig.Log.Dither, rig.Units.Input, func(s data.Segment) []float64 { return s.D }},
+	}
+	var part, column, unit []string
+	var mean, sd, low, high []float64
+	for _, q := range parts {
+		var x []float64
+		for _, e := range exps {
+			for _, s := range e.Segments {
+				x = append(x, q.of(s)...)
+			}
+		}
+		if len(x) == 0 {
+			continue
+		}
+		m, d := stat.MeanStdDev(x, nil)
+		part, column, unit = append(part, q.part), append(column, q.column), append(unit, q.unit)
+		mean, sd, low, high = append(mean, m), append(sd, d), append(low, floats.Min(x)), append(high, floats.Max(x))
+	}
+	return dataframe.New(
+		series.New(part, series.String, "part"), series.New(column, series.String, "column"), series.New(unit, series.String, "unit"),
+		series.New(mean, series.Float, "mean"), series.New(sd, series.Float, "sd"),
+		series.New(low, series.Float, "lowest"), series.New(high, series.Float, "highest"),
+	)
+}

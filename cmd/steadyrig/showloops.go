@@ -1,0 +1,221 @@
+package main
+
+import (
+	"fmt"
+	"math"
+
+	"steadyrig/data"
+	"steadyrig/design"
+	"steadyrig/ident"
+)
+
+// showLoops prints a design: the verdict and the promise, then bounds, loops, margins, and how to close them.
+func showLoops(p *page, l *design.Loops, u data.Units) {
+	p.verdict(l.Verdict, loopsVerdict(l))
+	showBounds(p, l)
+	showControllers(p, l, u)
+	showMargins(p, l)
+	showPromise(p, l, u)
+	showClosure(p, l, u)
+}
+
+func loopsVerdict(l *design.Loops) string {
+	q := l.Promise
+	switch {
+	case l.Inner == nil:
+		return l.Rig + ": no loops are given."
+	case q == nil:
+		return l.Rig + ": the loops were not proven."
+	}
+	return fmt.Sprintf("%s: of the plants that the data allow, at least %s keep the spec (%g %% confidence; %d of %d drawn).",
+		l.Rig, share(q.LowerBound), 100*q.Confidence, q.MeetSpec, q.Plants)
+}
+
+func showBounds(p *page, l *design.Loops) {
+	showBoundsBriefly(p, l)
+	for i, b := range l.Bounds {
+		if i == 0 {
+			p.line("")
+		}
+		text := ""
+		if b.Interval != nil {
+			text = "95 % over the plants allowed: " + interval(ident.Interval{Lo: b.Interval[0], Hi: b.Interval[1]}) + ". "
+		}
+		if b.Advice != "" {
+			text += b.Advice + ". "
+		}
+		p.line("  %s", b.Name)
+		wrap(p.w, "      ", text+"Source: "+b.Source+".")
+	}
+}
+
+func showBoundsBriefly(p *page, l *design.Loops) {
+	if len(l.Bounds) == 0 {
+		return
+	}
+	p.heading("What physics allows, whatever the controller")
+	var name, bound, asked, ok []string
+	for _, b := range l.Bounds {
+		sign := "≥ "
+		if b.Limit == "most" {
+			sign = "≤ "
+		}
+		word, ask := "yes", "-"
+		if b.Asked != nil {
+			ask = withUnit(brief(*b.Asked), b.Unit)
+		}
+		if !b.OK {
+			word = "NO"
+		}
+		name, bound, asked, ok = append(name, b.Name), append(bound, sign+withUnit(brief(b.Value), b.Unit)), append(asked, ask), append(ok, word)
+	}
+	p.table(columns("bound", name, ">no better than", bound, ">asked", asked, "in reach", ok))
+}
+
+func showControllers(p *page, l *design.Loops, u data.Units) {
+	if l.Inner == nil {
+		return
+	}
+	p.heading(fmt.Sprintf("Loops, one step every %s", seconds(l.SamplePeriod)))
+	wrap(p.w, "  ", l.Law)
+	p.item("operating point", fmt.Sprintf("u0 = %s, y0 = %s", withUnit(number(l.OperatingPoint.Input), u.Input), withUnit(number(l.OperatingPoint.Output), u.Output)))
+	block := func(name, form string, b *design.Block) {
+		if b.IsOne() {
+			return
+		}
+		if form != "" {
+			p.item(name, form)
+			name = ""
+		}
+		p.item(name, fraction(b.Discrete, "z^-"))
+	}
+	block("inner", l.InnerForm, l.Inner)
+	block("outer", l.OuterForm, l.Outer)
+	block("prefilter", "", l.Prefilter)
+	if l.InputLimits != nil {
+		p.item("input limits", withUnit(number(l.InputLimits[0])+" to "+number(l.InputLimits[1]), u.Input))
+	}
+	if l.OuterLimits != nil {
+		p.item("outer limits", withUnit(number(l.OuterLimits[0])+" to "+number(l.OuterLimits[1]), u.Output)+", deviation")
+	}
+	if len(l.Forms) == 0 {
+		return
+	}
+	p.heading("What simplicity costs, on the worst of the tuning plants")
+	var loop, form, peak, noise, chosen []string
+	for _, f := range l.Forms {
+		mark := ""
+		if f.Chosen {
+			mark = "chosen"
+		}
+		loop, form, chosen = append(loop, f.Loop), append(form, f.Form), append(chosen, mark)
+		peak, noise = append(peak, number(f.PeakSensitivity)), append(noise, withUnit(number(f.InputNoise), u.Input))
+	}
+	p.table(columns("loop", loop, "form", form, ">peak |S|", peak, ">input noise", noise, " ", chosen))
+}
+
+// fraction formats a ratio of polynomials in powers of z^-1.
+func fraction(r design.Rational, z string) string {
+	side := func(c []float64) string {
+		s := ""
+		for i, v := range c {
+			sign := " + "
+			if v < 0 {
+				sign = " - "
+			}
+			if i == 0 {
+				sign = map[bool]string{true: "-", false: ""}[v < 0]
+			}
+			s += sign + number(math.Abs(v))
+			if i > 0 {
+				s += fmt.Sprintf(" %s%d", z, i)
+			}
+		}
+		return s
+	}
+	return "(" + side(r.Numerator) + ") / (" + side(r.Denominator) + ")"
+}
+
+func showMargins(p *page, l *design.Loops) {
+	if l.Margins == nil {
+		return
+	}
+	p.heading("Margins of the sampled loop, nominal plant (crossing of gain one in rad/s)")
+	var where, gain, phase, delay, peak, cross []string
+	for _, m := range []struct {
+		name string
+		m    *design.Margins
+	}{{"plant input, both loops", l.Margins.PlantInput}, {"inner loop alone", l.Margins.InnerAlone}, {"outer break", l.Margins.OuterBreak}} {
+		if m.m == nil {
+			continue
+		}
+		where = append(where, m.name)
+		gain = append(gain, factor(m.m.GainDown)+" to "+factor(m.m.GainUp))
+		phase = append(phase, orAny(m.m.PhaseDeg, func(x float64) string { return brief(x) + "°" }))
+		delay = append(delay, orAny(m.m.Delay, seconds))
+		peak = append(peak, brief(m.m.PeakSensitivity))
+		cross = append(cross, brief(m.m.Crossover))
+	}
+	p.table(columns("loop", where, ">gain times", gain, ">phase", phase, ">delay", delay, ">peak |S|", peak, ">crossing", cross))
+}
+
+func factor(x *float64) string { return orAny(x, brief) }
+
+func orAny(x *float64, show func(float64) string) string {
+	if x == nil {
+		return "any"
+	}
+	return show(*x)
+}
+
+func showPromise(p *page, l *design.Loops, u data.Units) {
+	q := l.Promise
+	if q == nil {
+		return
+	}
+	p.heading(fmt.Sprintf("Promise, on %d plants drawn afresh, in the sampled and saturating loop", q.Plants))
+	var what, nominal, worst []string
+	add := func(name string, s design.Spread, show func(float64) string) {
+		what, nominal, worst = append(what, name), append(nominal, show(s.Nominal)), append(worst, show(s.Worst))
+	}
+	add("overshoot", q.Overshoot, share)
+	add("settling", q.Settling, seconds)
+	add("peak |S| at the input", q.PeakS, number)
+	add("input noise, sd", q.InputNoise, func(x float64) string { return withUnit(number(x), u.Input) })
+	if q.KickPeak != nil {
+		add("output after the kick", *q.KickPeak, func(x float64) string { return withUnit(number(x), u.Output) })
+	}
+	p.table(columns("figure", what, ">nominal", nominal, ">worst", worst))
+	p.line("")
+	p.item("stable", fmt.Sprintf("%d of %d", q.Stable, q.Plants))
+	p.item("meet the spec", fmt.Sprintf("%d of %d; at least %s of all, with %g %% confidence", q.MeetSpec, q.Plants, share(q.LowerBound), 100*q.Confidence))
+	for _, m := range q.Misses {
+		p.item("missed", fmt.Sprintf("%s on %s: worst %s, asked %s", m.What, count(m.Plants, "plant"), number(m.Worst), number(m.Asked)))
+	}
+	p.item("largest step", withUnit(number(q.LargestStep), u.Output))
+	p.item("comes back from", withUnit(number(q.Recoverable), u.Output)+" off the operating point")
+	if q.Attempts > 1 {
+		p.item("attempts", fmt.Sprintf("%d, so the confidence is shared between them", q.Attempts))
+	}
+}
+
+func showClosure(p *page, l *design.Loops, u data.Units) {
+	c := l.FirstClosure
+	if c == nil {
+		return
+	}
+	p.heading("First closure")
+	for i, step := range c.Order {
+		wrap(p.w, fmt.Sprintf("  %d. ", i+1), step)
+	}
+	trip := func(name string, pair *[2]float64, unit string) {
+		if pair != nil {
+			p.item("trip on "+name, "outside "+withUnit(number(pair[0])+" to "+number(pair[1]), unit))
+		}
+	}
+	trip("input", c.Trip.Input, u.Input)
+	trip("output", c.Trip.Output, u.Output)
+	for _, text := range c.Cautions {
+		wrap(p.w, "  ! ", text)
+	}
+}
