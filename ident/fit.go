@@ -181,10 +181,19 @@ func (s structure) String() string {
 	return words
 }
 
+// pairingGain is the gain in BIC from which the other pairing is believed: odds
+// of 20 to 1. Two far zeros imitate an advance of one row, so that the wrong
+// pairing loses little but their two parameters.
+const pairingGain = 6
+
 // pairing refuses logs whose output answers to the input of the next row: then
-// the same plants fit far better with the input moved up by one row. Plants of
-// relative degree one are tried only with the gain's sign that the columns as
-// given show, since a law without delay, y = -u/K, would imitate them.
+// a plant of the same poles, with no more zeros, fits clearly better with the
+// input moved up by one row.
+//
+// Moved up, the input of a well paired log gives away the output that it
+// answers to, u = -K y, so a model that can undo the move by other means would
+// win. Those means are a relative degree of one, another pole, a zero in the
+// right half-plane; they are left out.
 func (c *chooser) pairing(ctx context.Context, recs []fit.Record, ranked []*candidate, workers int) error {
 	best := ranked[0]
 	if best.fit.Delay > c.p.Period || c.scope.base > 0 {
@@ -206,11 +215,9 @@ func (c *chooser) pairing(ctx context.Context, recs []fit.Record, ranked []*cand
 		return nil
 	}
 	var list []structure
-	for n := max(2, sc.minPoles); n <= min(4, sc.maxPoles); n++ {
-		for m := sc.minZeros; m <= min(n-2, 1, sc.maxZeros); m++ {
-			for k := range min(best.colour, 1) + 1 {
-				list = append(list, structure{poles: n, zeros: m, colour: k})
-			}
+	for n := max(2, sc.minPoles, best.poles-1); n <= best.poles; n++ {
+		for m := sc.minZeros; m <= min(n-2, best.zeros, sc.maxZeros); m++ {
+			list = append(list, structure{poles: n, zeros: m, colour: best.colour})
 		}
 	}
 	if err := late.try(ctx, list, nil, nil); err != nil {
@@ -219,7 +226,10 @@ func (c *chooser) pairing(ctx context.Context, recs []fit.Record, ranked []*cand
 	for _, cand := range late.ranked() {
 		// Criteria per row, since a row is lost.
 		gain := (best.bic/float64(c.p.Rows()) - cand.bic/float64(p.Rows())) * float64(p.Rows())
-		if gain > 20 && math.Signbit(lead(cand.fit)) == math.Signbit(lead(best.fit)) {
+		if slices.ContainsFunc(cand.fit.Num.Roots(), func(z complex128) bool { return real(z) > 0 }) {
+			continue
+		}
+		if gain > pairingGain && math.Signbit(lead(cand.fit)) == math.Signbit(lead(best.fit)) {
 			return &RefusedError{
 				What: fmt.Sprintf("the columns are paired one row off: the output answers to the input of the row after (BIC %.0f better)", gain),
 				Do:   `the input is logged a row late: set input_row = "before" in [log], or shift the column`,

@@ -82,6 +82,8 @@ type Root struct {
 	ImSD                float64  `json:"im_sd"`
 	Re95                Interval `json:"re_95"`
 	Im95                Interval `json:"im_95"`
+	Re95All             Interval `json:"re_95_all"` // holds for all poles, or all zeros, at once
+	Im95All             Interval `json:"im_95_all"`
 	Unstable            bool     `json:"unstable"`
 	ProbabilityUnstable float64  `json:"probability_unstable"`
 }

@@ -49,6 +49,10 @@ func (u uncertain) variance(w []float64) float64 {
 func (u uncertain) roots() []Root {
 	r := u.p.Roots()
 	used := make([]bool, len(r))
+	// As many numbers as roots: Šidák, Rectangular confidence regions for the
+	// means of multivariate normal distributions, J. Amer. Statist. Assoc. 62
+	// (1967) 626-633, whatever their correlation.
+	all := distuv.UnitNormal.Quantile((1 + math.Pow(Confidence, 1/float64(max(1, len(r))))) / 2)
 	var out []Root
 	for i, a := range r {
 		if used[i] {
@@ -66,12 +70,12 @@ func (u uncertain) roots() []Root {
 		}
 		if partner >= 0 {
 			used[i], used[partner] = true, true
-			lo, hi := u.quadratic(a, r[partner])
+			lo, hi := u.quadratic(a, r[partner], all)
 			out = append(out, lo, hi)
 			continue
 		}
 		used[i] = true
-		out = append(out, u.simple(a))
+		out = append(out, u.simple(a, all))
 	}
 	slices.SortStableFunc(out, func(a, b Root) int { return cmp.Or(cmp.Compare(a.Re, b.Re), cmp.Compare(a.Im, b.Im)) })
 	return out
@@ -83,7 +87,7 @@ func pairs(a, b complex128) bool {
 }
 
 // simple treats a root that is clearly apart from all others.
-func (u uncertain) simple(r complex128) Root {
+func (u uncertain) simple(r complex128, all float64) Root {
 	n := len(u.p)
 	slope := u.p.Deriv().Eval(r)
 	re, im := make([]float64, n), make([]float64, n)
@@ -94,12 +98,12 @@ func (u uncertain) simple(r complex128) Root {
 		power *= r
 	}
 	root := Root{Re: real(r), Im: imag(r), ReSD: math.Sqrt(u.variance(re))}
-	root.Re95 = Interval{root.Re - z95*root.ReSD, root.Re + z95*root.ReSD}
-	root.Im95 = Interval{root.Im, root.Im}
 	if root.Im != 0 {
 		root.ImSD = math.Sqrt(u.variance(im))
-		root.Im95 = Interval{root.Im - z95*root.ImSD, root.Im + z95*root.ImSD}
 	}
+	around := func(x, half float64) Interval { return Interval{x - half, x + half} }
+	root.Re95, root.Re95All = around(root.Re, z95*root.ReSD), around(root.Re, all*root.ReSD)
+	root.Im95, root.Im95All = around(root.Im, z95*root.ImSD), around(root.Im, all*root.ImSD)
 	root.Unstable = root.Re > 0
 	root.ProbabilityUnstable = positive(root.Re, root.ReSD)
 	return root
@@ -186,55 +190,54 @@ func (u uncertain) meeting(r1, r2 complex128) float64 {
 }
 
 // quadratic treats two roots that may have met.
-func (u uncertain) quadratic(r1, r2 complex128) (lo, hi Root) {
+func (u uncertain) quadratic(r1, r2 complex128, all float64) (lo, hi Root) {
 	a, b, c := u.factor(r1, r2)
 	l11 := math.Sqrt(c[0][0])
-	var l21, l22 float64
+	var l21 float64
 	if l11 > 0 {
 		l21 = c[0][1] / l11
 	}
-	l22 = math.Sqrt(math.Max(0, c[1][1]-l21*l21))
-	low, high := [2]float64{math.Inf(1), math.Inf(-1)}, [2]float64{math.Inf(1), math.Inf(-1)}
-	var im float64
-	at := func(x, y float64) (complex128, complex128) {
-		da, db := l11*x, l21*x+l22*y
-		return solve2(a+da, b+db)
-	}
-	const turns, rings = 720, 8
-	for ring := 0; ring <= rings; ring++ {
-		radius := z95 * float64(ring) / rings
-		for k := range turns {
-			sin, cos := math.Sincos(2 * math.Pi * float64(k) / turns)
-			p, q := at(radius*cos, radius*sin)
-			low = [2]float64{math.Min(low[0], real(p)), math.Max(low[1], real(p))}
-			high = [2]float64{math.Min(high[0], real(q)), math.Max(high[1], real(q))}
-			im = math.Max(im, math.Abs(imag(q)))
-		}
-	}
+	l22 := math.Sqrt(math.Max(0, c[1][1]-l21*l21))
+	at := func(x, y float64) (complex128, complex128) { return solve2(a+l11*x, b+l21*x+l22*y) }
 	p, q := solve2(a, b)
+	lo, hi = Root{Re: real(p), Im: imag(p)}, Root{Re: real(q), Im: imag(q)}
+	over := func(radius float64) (low, high, im Interval) {
+		low, high = Interval{lo.Re, lo.Re}, Interval{hi.Re, hi.Re}
+		const turns, rings = 720, 8
+		for ring := 1; ring <= rings; ring++ {
+			for k := range turns {
+				sin, cos := math.Sincos(2 * math.Pi * float64(k) / turns)
+				r := radius * float64(ring) / rings
+				p, q := at(r*cos, r*sin)
+				low = Interval{math.Min(low.Lo, real(p)), math.Max(low.Hi, real(p))}
+				high = Interval{math.Min(high.Lo, real(q)), math.Max(high.Hi, real(q))}
+				im.Hi = math.Max(im.Hi, math.Abs(imag(q)))
+			}
+		}
+		im.Lo = -im.Hi
+		return low, high, im
+	}
+	lo.Re95, hi.Re95, lo.Im95 = over(z95)
+	lo.Re95All, hi.Re95All, lo.Im95All = over(all)
+	hi.Im95, hi.Im95All = lo.Im95, lo.Im95All
 	// The share of the normal distribution of a and b with a root to the
 	// right, by draws that are the same every time.
 	const draws = 20000
 	rnd := rand.New(rand.NewPCG(1, 1))
-	var right, left int
 	for range draws {
 		x, y := at(rnd.NormFloat64(), rnd.NormFloat64())
 		if real(x) > 0 {
-			left++
+			lo.ProbabilityUnstable += 1.0 / draws
 		}
 		if real(y) > 0 {
-			right++
+			hi.ProbabilityUnstable += 1.0 / draws
 		}
 	}
-	make1 := func(r complex128, re [2]float64, share int) Root {
-		root := Root{
-			Re: real(r), Im: imag(r), Re95: Interval{re[0], re[1]}, Im95: Interval{-im, im},
-			ReSD: (re[1] - re[0]) / (2 * z95), ImSD: im / z95,
-			Unstable: real(r) > 0, ProbabilityUnstable: float64(share) / draws,
-		}
-		return root
+	for _, r := range []*Root{&lo, &hi} {
+		r.ReSD, r.ImSD = (r.Re95.Hi-r.Re95.Lo)/(2*z95), r.Im95.Hi/z95
+		r.Unstable = r.Re > 0
 	}
-	return make1(p, low, left), make1(q, high, right)
+	return lo, hi
 }
 
 // solve2 returns the roots of s² + a s + b, that with the smaller real part or

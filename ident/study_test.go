@@ -83,7 +83,7 @@ func study(t testing.TB, r demorig.Rig, from, seeds uint64) tally {
 		}
 		all := true
 		for i, p := range m.Poles {
-			in := p.Re95.Contains(real(truth[i])) && p.Im95.Contains(imag(truth[i]))
+			in := p.Re95All.Contains(real(truth[i])) && p.Im95All.Contains(imag(truth[i]))
 			c.poles++
 			if p.Re95.Contains(real(truth[i])) {
 				c.poleIn++
