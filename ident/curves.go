@@ -1,6 +1,7 @@
 package ident
 
 import (
+	"fmt"
 	"math"
 	"math/cmplx"
 	"slices"
@@ -9,11 +10,18 @@ import (
 	"steadyrig/fit/lti"
 )
 
+const noPlant = "ident: the model holds no plant"
+
 // Colour returns C/D of the disturbance A y = B u + (C/D) e, A and B the
 // sampled plant's: the noise shape H without the plant's poles. It is stable
-// where H itself is not.
-func (m *Model) Colour() lti.DTF {
-	a := m.sampled().Den
+// where H itself is not. It errs for a plant that cannot be sampled: one that
+// answers before its input.
+func (m *Model) Colour() (lti.DTF, error) {
+	g, err := lti.ZOHTF(m.TF(), m.Noise.SamplePeriod)
+	if err != nil {
+		return lti.DTF{}, fmt.Errorf("sampling the plant: %w", err)
+	}
+	a := g.Den
 	h := m.NoiseShape()
 	// H = C/(A D): long division in powers of z^-1.
 	d := make(lti.Poly, max(1, len(h.Den)-len(a)+1))
@@ -23,7 +31,7 @@ func (m *Model) Colour() lti.DTF {
 			d[k] -= a[i] * d[k-i]
 		}
 	}
-	return lti.DTF{Num: h.Num, Den: d, Period: h.Period}
+	return lti.DTF{Num: h.Num, Den: d, Period: h.Period}, nil
 }
 
 // Predictions are one-step predictions of one segment: Output[k] is the
@@ -36,19 +44,26 @@ type Predictions struct {
 
 // OneStep predicts each row of a segment from those before it. The first rows,
 // which the unknown past still moves, are left out; the segment's own constant
-// is taken from the mean of the errors. It returns nil for a segment that is
-// too short, and panics where the model holds no plant.
-func (m *Model) OneStep(s data.Segment) *Predictions {
+// is taken from the mean of the errors. It errs for a segment that is too short
+// and for a plant that cannot be sampled, and panics where there is no plant.
+func (m *Model) OneStep(s data.Segment) (*Predictions, error) {
 	if len(m.Plant.Denominator) == 0 {
-		panic("ident: the model holds no plant")
+		panic(noPlant)
 	}
-	g, c := m.sampled(), m.Colour()
+	g, err := lti.ZOHTF(m.TF(), m.Noise.SamplePeriod)
+	if err != nil {
+		return nil, fmt.Errorf("sampling the plant: %w", err)
+	}
+	c, err := m.Colour()
+	if err != nil {
+		return nil, err
+	}
 	// e = (A D y - B D u)/C: each term is stable though G is not.
 	fromY := lti.DTF{Num: g.Den.Mul(c.Den), Den: c.Num, Period: c.Period}
 	fromU := lti.DTF{Num: g.Num.Mul(c.Den), Den: c.Num, Period: c.Period}
 	from := len(fromY.Num) + len(fromU.Num) + int(8*memory(c.Num))
 	if from >= len(s.Y)/2 {
-		return nil
+		return nil, fmt.Errorf("predicting: %d rows are too few for a predictor that remembers %d", len(s.Y), from)
 	}
 	y, u := make([]float64, len(s.Y)), make([]float64, len(s.Y))
 	for k := range y {
@@ -65,16 +80,7 @@ func (m *Model) OneStep(s data.Segment) *Predictions {
 		p.Error = append(p.Error, e[k]-mean)
 		p.Output = append(p.Output, s.Y[k]-(e[k]-mean))
 	}
-	return p
-}
-
-// sampled returns the plant behind a hold at the period of the noise.
-func (m *Model) sampled() lti.DTF {
-	g, err := lti.ZOHTF(m.TF(), m.Noise.SamplePeriod)
-	if err != nil { // a delay below zero, which no model that was fitted has
-		panic("ident: the model's plant cannot be sampled: " + err.Error())
-	}
-	return g
+	return p, nil
 }
 
 // Responses are frequency responses of the plant in the units of the log: that
