@@ -175,15 +175,21 @@ func (l *layout) cells(dst [][]byte, line []byte) [][]byte {
 
 // quoted returns the text of the quoted cell that line starts with, and what follows it.
 func quoted(line []byte) (cell, rest []byte) {
+	doubled := false
 	for i := 1; i < len(line); i++ {
 		if line[i] != '"' {
 			continue
 		}
 		if i+1 < len(line) && line[i+1] == '"' {
+			doubled = true
 			i++
 			continue
 		}
-		return bytes.TrimSpace(bytes.ReplaceAll(line[1:i], []byte(`""`), []byte(`"`))), line[i+1:]
+		cell = line[1:i]
+		if doubled {
+			cell = bytes.ReplaceAll(cell, []byte(`""`), []byte(`"`))
+		}
+		return bytes.TrimSpace(cell), line[i+1:]
 	}
 	return bytes.TrimSpace(line[1:]), nil
 }

@@ -11,6 +11,7 @@ import (
 	"slices"
 	"strconv"
 	"strings"
+	"unicode"
 
 	"github.com/BurntSushi/toml"
 )
@@ -69,7 +70,7 @@ func tomlFault(name, text string, err error) error {
 		return &ParseError{File: name, Err: err}
 	}
 	e := &ParseError{File: name, Line: fault.Position.Line, Err: errors.New(strings.TrimSuffix(oneLine(fault.Message), "."))}
-	if start := fault.Position.Start; start <= len(text) {
+	if start := fault.Position.Start; 0 <= start && start <= len(text) {
 		e.Column = start - strings.LastIndexByte(text[:start], '\n')
 	}
 	line := lineOf(text, e.Line)
@@ -101,7 +102,15 @@ func lineOf(text string, line int) string {
 	return strings.TrimSuffix(first, "\r")
 }
 
-func oneLine(s string) string { return strings.Join(strings.Fields(s), " ") }
+// oneLine puts s on one line and takes out whatever a terminal might take as a command.
+func oneLine(s string) string {
+	return strings.Map(func(r rune) rune {
+		if !unicode.IsPrint(r) {
+			return '?'
+		}
+		return r
+	}, strings.Join(strings.Fields(s), " "))
+}
 
 // keyLines finds the line of each key and each table. It knows the layout people write, one key a line; what it
 // does not find has no line in a message, nothing worse.
