@@ -121,7 +121,7 @@ type householder struct {
 
 func newHouseholder(cols [][]float64, m int) *householder {
 	n := len(cols)
-	h := &householder{cols: cols, scale: make([]float64, n), tau: make([]float64, n)}
+	h := &householder{cols: make([][]float64, n), scale: make([]float64, n), tau: make([]float64, n)}
 	h.qr = blas64.General{Rows: m, Cols: n, Stride: n, Data: make([]float64, m*n)}
 	for j, c := range cols {
 		h.scale[j] = 1
@@ -129,9 +129,10 @@ func newHouseholder(cols [][]float64, m int) *householder {
 			_, e := math.Frexp(length)
 			h.scale[j] = math.Ldexp(1, e)
 		}
-		for i := range c {
-			c[i] /= h.scale[j]
-			h.qr.Data[i*n+j] = c[i]
+		h.cols[j] = make([]float64, m)
+		for i, v := range c {
+			h.cols[j][i] = v / h.scale[j]
+			h.qr.Data[i*n+j] = h.cols[j][i]
 		}
 	}
 	work := make([]float64, 1)

@@ -49,8 +49,15 @@ func Rigs() []Rig {
 
 // Record simulates n samples of trial k: U[k] acts from Y[k] on. The same seed and trial give the same record.
 func (r Rig) Record(n int, seed, trial uint64) (u, y []float64) {
+	u, y, _ = r.RecordWithDither(n, seed, trial)
+	return u, y
+}
+
+// RecordWithDither is Record with the outside signal beside it.
+func (r Rig) RecordWithDither(n int, seed, trial uint64) (u, y, dither []float64) {
 	rnd := rand.New(rand.NewPCG(seed, trial))
-	dither, input, sensor := make([]float64, n), make([]float64, n), make([]float64, n)
+	dither = make([]float64, n)
+	input, sensor := make([]float64, n), make([]float64, n)
 	level := 0.0
 	for k := range n {
 		if k%r.Hold == 0 {
@@ -66,7 +73,7 @@ func (r Rig) Record(n int, seed, trial uint64) (u, y []float64) {
 	if err != nil {
 		panic(err)
 	}
-	return t.U, t.Y
+	return t.U, t.Y, dither
 }
 
 // Truth is the sampled rig as A y = B u + C e in powers of z^-1, deviations from the operating point.
