@@ -17,11 +17,18 @@ func (l *log) findFlaws() {
 		l.findQuantisation(i)
 		l.findDrift(i)
 	}
+	l.findConstant()
+}
+
+// findConstant names a dither that never moves, and a reference that does not where there is no dither that does.
+func (l *log) findConstant() {
+	dithered := l.d >= 0 && moves(l.columns[l.d])
 	for _, i := range []int{l.r, l.d} {
-		if i >= 0 && !moves(l.columns[i]) {
-			l.flaw(Flaw{Name: FlawConstant, Column: l.column(i), Count: l.rows, Line: l.lines.at(0), Detail: "the same number in every row",
-				Effect: "it excites nothing"})
+		if i < 0 || dithered || moves(l.columns[i]) {
+			continue
 		}
+		l.flaw(Flaw{Name: FlawConstant, Column: l.column(i), Count: l.rows, Line: l.lines.at(0), Detail: "the same number in every row",
+			Effect: "it excites nothing"})
 	}
 }
 

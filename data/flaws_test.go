@@ -444,6 +444,17 @@ func TestFlawConstantReference(t *testing.T) {
 	if f := findFlaw(t, exp, FlawConstant); f.Column != "r" || exp.Used != 200 {
 		t.Errorf("%+v", f)
 	}
+
+	g := plainRig()
+	g.Log.Dither = "d"
+	var b strings.Builder
+	b.WriteString("t,u,y,r,d\n")
+	for k := range p.t {
+		b.WriteString(text(p.t[k]) + "," + text(p.u[k]) + "," + text(p.y[k]) + ",3," + strconv.Itoa(k/5%2) + "\n")
+	}
+	if exp := mustRead(t, b.String(), g); len(exp.Flaws) > 0 {
+		t.Errorf("with a dither that moves: %+v", exp.Flaws)
+	}
 }
 
 func TestFlawTimeUnit(t *testing.T) {
