@@ -142,7 +142,7 @@ func (a *AuditReport) glance(ctx context.Context, recs []fit.Record, rig *data.R
 		return &RefusedError{What: err.Error(), Do: a.NextStep}
 	}
 	var list []structure
-	for _, s := range []structure{{poles: 1}, {poles: 2}, {poles: 3}, {poles: 2, colour: 1}, {poles: 3, zeros: 1, colour: 1}, {poles: 2, delay: true}, {poles: 2, colour: 1, delay: true}} {
+	for _, s := range []structure{{poles: 1}, {poles: 2}, {poles: 3}, {poles: 2, colour: 1}, {poles: 3, colour: 1}, {poles: 3, zeros: 1, colour: 1}, {poles: 2, delay: true}, {poles: 2, colour: 1, delay: true}} {
 		if sc.allows(s) {
 			list = append(list, s)
 		}
@@ -160,11 +160,20 @@ func (a *AuditReport) glance(ctx context.Context, recs []fit.Record, rig *data.R
 		return nil
 	}
 	best := ranked[0].fit
-	a.Sign = Sign{Positive: lead(best) > 0, Known: true}
+	// A far zero on the wrong side turns the sign of the very first response;
+	// the direction that counts is that of the best plant without zeros.
+	plain := best
+	for _, cand := range ranked {
+		if cand.zeros == 0 {
+			plain = cand.fit
+			break
+		}
+	}
+	a.Sign = Sign{Positive: lead(plain) > 0, Known: true}
 	if a.Sign.Positive {
-		a.Sign.Words = "more input moves the output up at first (positive gain): a positive inner gain opposes it"
+		a.Sign.Words = "more input pushes the output up (positive gain): a positive inner gain opposes it"
 	} else {
-		a.Sign.Words = "more input moves the output down at first (negative gain): the inner gain must be negative"
+		a.Sign.Words = "more input pushes the output down (negative gain): the inner gain must be negative"
 	}
 	a.Pairing.Words = "input and output of a row belong together"
 	var refused *RefusedError

@@ -1,6 +1,7 @@
 package ident
 
 import (
+	"bytes"
 	"context"
 	"errors"
 	"fmt"
@@ -15,24 +16,22 @@ import (
 	"steadyrig/fit/demorig"
 )
 
-// experiment runs a demo rig and takes its log as package data would hand it
-// over.
+// experiment reads the log of a demo rig as a user would.
 func experiment(t testing.TB, r demorig.Rig, seed uint64) (*data.Experiment, *data.Rig) {
 	t.Helper()
 	rig, err := data.ReadRig(strings.NewReader(r.File()), r.Name+".toml")
 	if err != nil {
 		t.Fatal(err)
 	}
-	s := r.Signals(r.Rows, seed)
-	trace, err := r.Simulate(s)
+	var log bytes.Buffer
+	if err := r.WriteCSV(&log, seed); err != nil {
+		t.Fatal(err)
+	}
+	e, err := data.ReadLog(&log, r.Name+".csv", rig)
 	if err != nil {
 		t.Fatal(err)
 	}
-	seg := data.Segment{Line: 1, U: trace.U, Y: trace.Y, R: s.Reference}
-	if r.Dither > 0 {
-		seg.D = s.Dither
-	}
-	return &data.Experiment{File: r.Name, Rows: r.Rows, Used: len(trace.U), Period: r.Period, Segments: []data.Segment{seg}}, rig
+	return e, rig
 }
 
 // tally counts how a rig's fits came out.
@@ -107,7 +106,7 @@ func TestStudyOfDemoRigs(t *testing.T) {
 		seeds, _ = strconv.Atoi(v)
 	}
 	for _, r := range demorig.All() {
-		if name := os.Getenv("RIG"); name != "" && name != r.Name {
+		if name := os.Getenv("STEADYRIG_RIG"); name != "" && name != r.Name {
 			continue
 		}
 		c := study(t, r, 1000, uint64(seeds))
