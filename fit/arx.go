@@ -34,8 +34,9 @@ type ARX struct {
 // ARXOptions are taken literally: no field but First has a default.
 type ARXOptions struct {
 	NA, NB int
-	// Delay is the index of the first coefficient of B: 1 for a plant sampled through a hold. 0 adds the direct term,
-	// which is zero unless the columns are paired wrongly.
+	// Delay is the index of the first coefficient of B: 1 for a plant sampled through a hold. 0 adds the direct term. In
+	// closed loop under a law that answers to the output of the same sample it is not zero, for u_k then holds e_k:
+	// whether the columns are paired rightly is for Instrument to tell, whose direct term is zero if they are.
 	Delay int
 	// First is the first row of each record; 0 (default), or anything too small, is the least possible, the order. A
 	// common First makes models of different orders comparable.
@@ -218,6 +219,9 @@ func ChooseARX(recs []Record, opt ChooseOptions) (*ARX, error) {
 		if s.Score < best.Score {
 			best = s
 		}
+	}
+	if math.IsInf(best.Score, 1) {
+		return nil, fmt.Errorf("ARX: %d rows are too few for %d parameters", best.Rows, best.Parameters)
 	}
 	return FitARX(recs, ARXOptions{NA: best.Order, NB: best.Order, Delay: opt.Delay, NoConstant: opt.NoConstant})
 }

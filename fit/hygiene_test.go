@@ -1,0 +1,147 @@
+package fit_test
+
+import (
+	"errors"
+	"math"
+	"math/rand/v2"
+	"strings"
+	"testing"
+
+	"steadyrig/fit"
+	"steadyrig/fit/fittest"
+)
+
+// What a bad log may hold comes back as one line, not as a panic or a model.
+func TestBadRecords(t *testing.T) {
+	good := fittest.D2()
+	withNaN := append([]float64(nil), good.Y...)
+	withNaN[700] = math.NaN()
+	flat := make([]float64, len(good.U))
+	quiet := fittest.D2z()
+	for _, c := range []struct {
+		name      string
+		recs      []fit.Record
+		condition bool
+	}{
+		{"no records", nil, false},
+		{"empty record", []fit.Record{{}}, false},
+		{"one row", []fit.Record{{U: []float64{1}, Y: []float64{1}}}, false},
+		{"few rows", []fit.Record{{U: good.U[:5], Y: good.Y[:5]}}, false},
+		{"not a number", []fit.Record{{U: good.U, Y: withNaN}}, false},
+		{"input never moves", []fit.Record{{U: flat, Y: good.Y}}, true},
+		{"output never moves", []fit.Record{{U: good.U, Y: flat}}, true},
+		{"nothing moves", []fit.Record{{U: flat, Y: flat}}, true},
+		{"no power from outside", []fit.Record{{U: quiet.U, Y: quiet.Y}}, true},
+	} {
+		var ill fit.Condition
+		check := func(method string, err error) {
+			if err == nil {
+				t.Errorf("%s: %s: no error", c.name, method)
+			} else if strings.Contains(err.Error(), "\n") || errors.As(err, &ill) != c.condition {
+				t.Errorf("%s: %s: %q, Condition should be %v", c.name, method, err, c.condition)
+			}
+		}
+		_, err := fit.LongARX(c.recs)
+		check("LongARX", err)
+		_, err = fit.FitARX(c.recs, fit.ARXOptions{NA: 3, NB: 3, Delay: 1})
+		check("FitARX", err)
+		_, err = fit.Subspace(c.recs, fit.SubspaceOptions{Past: 4})
+		check("Subspace", err)
+		_, err = fit.Subspace(c.recs, fit.SubspaceOptions{})
+		check("Subspace, past by AICc", err)
+	}
+}
+
+// The same records give the same bits, and are left as they were.
+func TestRepeatable(t *testing.T) {
+	u, y := fittest.Rigs()[2].Record(3000, 3, 3)
+	u0, y0 := append([]float64(nil), u...), append([]float64(nil), y...)
+	run := func() []complex128 {
+		s, err := fit.Subspace([]fit.Record{{U: u, Y: y}}, fit.SubspaceOptions{})
+		if err != nil {
+			t.Fatal(err)
+		}
+		p, err := nullSpacePoles(u, y, 2)
+		if err != nil {
+			t.Fatal(err)
+		}
+		return append(p, s.Poles...)
+	}
+	a, b := run(), run()
+	for i := range a {
+		if a[i] != b[i] {
+			t.Errorf("pole %d: %v, then %v", i, a[i], b[i])
+		}
+	}
+	for i := range u {
+		if u[i] != u0[i] || y[i] != y0[i] {
+			t.Fatal("record changed")
+		}
+	}
+}
+
+// Units do not matter: input in other units by 1e6, output by 1e-6, both far from zero.
+func TestUnitsDoNotMatter(t *testing.T) {
+	u, y := fittest.Rigs()[1].Record(3000, 3, 4)
+	u2, y2 := make([]float64, len(u)), make([]float64, len(y))
+	for i := range u {
+		u2[i], y2[i] = 1e6*u[i]+3e8, 1e-6*y[i]-5e-3
+	}
+	for name, estimate := range map[string]fittest.PoleEstimator{"subspace": subspacePoles, "null-space fitting": nullSpacePoles} {
+		a, err := estimate(u, y, 2)
+		if err != nil {
+			t.Fatal(err)
+		}
+		b, err := estimate(u2, y2, 2)
+		if err != nil {
+			t.Fatal(err)
+		}
+		for i, d := range fittest.Distances(a, b) {
+			if !(d < 1e-5) { // a hundredth of the deviation of a pole here
+				t.Errorf("%s: pole %v moved by %g", name, a[i], d)
+			}
+		}
+	}
+}
+
+// Pairing of columns. The direct term by least squares is no witness where the law answers at once: with u = r - K y it
+// tends to -K lambda/(s + K^2 lambda), s the variance of r and lambda that of e, on rightly paired columns (the regression
+// of e_k on r_k - K e_k, what u_k has beyond the past). By the outside signal it is zero then, and the first coefficient
+// of B if the output is logged a row early.
+func TestDirectTermShowsPairing(t *testing.T) {
+	const k, lambda = 2.0, 0.25
+	for trial := range 10 {
+		rnd := rand.New(rand.NewPCG(11, uint64(trial)))
+		n := 1000
+		rec := fit.Record{U: make([]float64, n), Y: make([]float64, n)}
+		r := make([]float64, n)
+		y, u := 0.0, 0.0
+		for i := range n {
+			y = 1.25*y + 0.5*u + math.Sqrt(lambda)*rnd.NormFloat64()
+			r[i] = rnd.NormFloat64()
+			u = r[i] - k*y
+			rec.U[i], rec.Y[i] = u, y
+		}
+		m, err := fit.FitARX([]fit.Record{rec}, fit.ARXOptions{NA: 1, NB: 2, Delay: 0})
+		if err != nil {
+			t.Fatal(err)
+		}
+		if d := m.B[0] + k*lambda/(1+k*k*lambda); !(math.Abs(d) < 5*math.Sqrt(m.Cov.At(1, 1))) {
+			t.Errorf("least squares: direct term %.3f, want %.3f", m.B[0], -k*lambda/(1+k*k*lambda))
+		}
+		early := fit.Record{U: rec.U[:n-1], Y: rec.Y[1:]}
+		for _, c := range []struct {
+			name string
+			rec  fit.Record
+			want float64
+		}{{"paired rightly", rec, 0}, {"output a row early", early, 0.5}} {
+			iv, err := fit.Instrument([]fit.Record{c.rec}, [][]float64{r[:len(c.rec.Y)]}, fit.InstrumentOptions{NA: 1, NB: 2, Lags: 6})
+			if err != nil {
+				t.Fatal(err)
+			}
+			if sd := math.Sqrt(iv.Cov.At(1, 1)); !(math.Abs(iv.B[0]-c.want) < 5*sd && sd < 0.05) {
+				t.Errorf("%s: direct term %.3f, deviation %.3f, want %g", c.name, iv.B[0], sd, c.want)
+			}
+		}
+	}
+}
