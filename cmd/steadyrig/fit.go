@@ -3,7 +3,6 @@ package main
 import (
 	"context"
 	"errors"
-	"fmt"
 
 	"github.com/spf13/cobra"
 
@@ -72,19 +71,4 @@ func warningsBeside(warnings []string, err error) []string {
 		}
 	}
 	return rest
-}
-
-// units of the log, as they follow a figure.
-type units struct{ data.Units }
-
-func (u units) ratio(num, den string) string {
-	switch {
-	case num == "" && den == "":
-		return ""
-	case num == "":
-		num = "1"
-	case den == "":
-		return num
-	}
-	return fmt.Sprintf("%s/%s", num, den)
 }

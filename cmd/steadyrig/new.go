@@ -10,6 +10,7 @@ import (
 
 	"github.com/spf13/cobra"
 
+	"steadyrig/cmd/steadyrig/words"
 	"steadyrig/data"
 )
 
@@ -138,7 +139,7 @@ func draftRig(h *data.LogHeader, name string) string {
 	line("# [operating_point]  # where input and output rest; estimated from the log if left out")
 	for _, p := range []string{"input", "output"} {
 		if c, ok := column[p]; ok {
-			line("# %-6s = %s  # guess: the mean of the first rows, which went from %s to %s", p, tomlFloat(short(c.Mean)), number(c.Min), number(c.Max))
+			line("# %-6s = %s  # guess: the mean of the first rows, which went from %s to %s", p, tomlFloat(short(c.Mean)), words.Number(c.Min), words.Number(c.Max))
 		}
 	}
 	line("")

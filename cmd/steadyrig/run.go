@@ -13,6 +13,7 @@ import (
 	"github.com/spf13/cobra"
 
 	"steadyrig/cmd/steadyrig/report"
+	"steadyrig/cmd/steadyrig/words"
 	"steadyrig/data"
 	"steadyrig/design"
 	"steadyrig/fit/demorig"
@@ -133,7 +134,7 @@ func (a *app) listRigs(s *settings) error {
 		return printJSON(a.stdout, list)
 	}
 	for _, r := range list {
-		wrap(a.stdout, fmt.Sprintf("%-9s", r.Name), fmt.Sprintf("%s; %d rows every %s", r.About, r.Rows, seconds(r.SamplePeriod)))
+		wrap(a.stdout, fmt.Sprintf("%-9s", r.Name), fmt.Sprintf("%s; %d rows every %s", r.About, r.Rows, words.Seconds(r.SamplePeriod)))
 	}
 	return nil
 }
@@ -278,7 +279,7 @@ func (j *job) verdict() string {
 // show prints what a run came to, on a screen or two; the files have the rest.
 func (j *job) show(p *page) {
 	u := j.rig.Units
-	meaning := loopsVerdict(j.loops)
+	meaning := words.Loops(j.loops)
 	if j.loops.Inner == nil {
 		meaning = j.rig.Name + ": no loops; the line at the end says why."
 	}
@@ -293,7 +294,7 @@ func (j *job) show(p *page) {
 	}
 	if len(j.model.Plant.Denominator) > 0 {
 		p.heading("Model: " + j.model.Verdict)
-		wrap(p.w, "  ", unstableInWords(j.model.Poles))
+		wrap(p.w, "  ", words.Unstable(j.model.Poles))
 		showPlant(p, j.model, u)
 		showRoots(p, "Poles", j.model.Poles, "unstable")
 		showRoots(p, "Zeros", j.model.Zeros, "right half-plane")

@@ -9,6 +9,7 @@ import (
 	"gonum.org/v1/gonum/floats"
 	"gonum.org/v1/gonum/stat"
 
+	"steadyrig/cmd/steadyrig/words"
 	"steadyrig/data"
 	"steadyrig/ident"
 )
@@ -24,8 +25,8 @@ func showAudit(p *page, r *ident.AuditReport, exps []*data.Experiment, rig *data
 	p.heading("First checks")
 	p.item("sign", r.Sign.Words)
 	p.item("operating point", fmt.Sprintf("input %s, output %s; about it the input moves by %s, the output by %s (standard deviations)",
-		withUnit(number(r.OperatingPoint.Input), u.Input), withUnit(number(r.OperatingPoint.Output), u.Output),
-		withUnit(number(r.Spread.Input), u.Input), withUnit(number(r.Spread.Output), u.Output)))
+		words.Unit(words.Number(r.OperatingPoint.Input), u.Input), words.Unit(words.Number(r.OperatingPoint.Output), u.Output),
+		words.Unit(words.Number(r.Spread.Input), u.Input), words.Unit(words.Number(r.Spread.Output), u.Output)))
 	p.item("pairing", r.Pairing.Words)
 	p.item("loop rate", r.LoopRate.Words)
 	p.item("from outside", r.Outside.Words)
@@ -37,7 +38,7 @@ func showAudit(p *page, r *ident.AuditReport, exps []*data.Experiment, rig *data
 	p.heading("Columns, rows in use")
 	p.table(describe(exps, rig))
 	for _, l := range r.Logs {
-		p.item("log", fmt.Sprintf("%s: %d of %d rows used, %s", l.File, l.Used, l.Rows, count(l.Segments, "segment")))
+		p.item("log", fmt.Sprintf("%s: %d of %d rows used, %s", l.File, l.Used, l.Rows, words.Count(l.Segments, "segment")))
 	}
 	for _, e := range exps {
 		p.item("written with", e.Layout)

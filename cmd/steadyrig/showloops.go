@@ -2,8 +2,8 @@ package main
 
 import (
 	"fmt"
-	"math"
 
+	"steadyrig/cmd/steadyrig/words"
 	"steadyrig/data"
 	"steadyrig/design"
 	"steadyrig/ident"
@@ -11,24 +11,12 @@ import (
 
 // showLoops prints a design: the verdict and the promise, then bounds, loops, margins, and how to close them.
 func showLoops(p *page, l *design.Loops, u data.Units) {
-	p.verdict(l.Verdict, loopsVerdict(l))
+	p.verdict(l.Verdict, words.Loops(l))
 	showBounds(p, l)
 	showControllers(p, l, u)
 	showMargins(p, l)
 	showPromise(p, l, u)
 	showClosure(p, l, u)
-}
-
-func loopsVerdict(l *design.Loops) string {
-	q := l.Promise
-	switch {
-	case l.Inner == nil:
-		return l.Rig + ": no loops are given."
-	case q == nil:
-		return l.Rig + ": the loops were not proven."
-	}
-	return fmt.Sprintf("%s: of the plants that the data allow, at least %s keep the spec (%g %% confidence; %d of %d drawn).",
-		l.Rig, share(q.LowerBound), 100*q.Confidence, q.MeetSpec, q.Plants)
 }
 
 func showBounds(p *page, l *design.Loops) {
@@ -39,7 +27,7 @@ func showBounds(p *page, l *design.Loops) {
 		}
 		text := ""
 		if b.Interval != nil {
-			text = "95 % over the plants allowed: " + interval(ident.Interval{Lo: b.Interval[0], Hi: b.Interval[1]}) + ". "
+			text = "95 % over the plants allowed: " + words.Interval(ident.Interval{Lo: b.Interval[0], Hi: b.Interval[1]}) + ". "
 		}
 		if b.Advice != "" {
 			text += b.Advice + ". "
@@ -62,12 +50,12 @@ func showBoundsBriefly(p *page, l *design.Loops) {
 		}
 		word, ask := "yes", "-"
 		if b.Asked != nil {
-			ask = withUnit(brief(*b.Asked), b.Unit)
+			ask = words.Unit(words.Brief(*b.Asked), b.Unit)
 		}
 		if !b.OK {
 			word = "NO"
 		}
-		name, bound, asked, ok = append(name, b.Name), append(bound, sign+withUnit(brief(b.Value), b.Unit)), append(asked, ask), append(ok, word)
+		name, bound, asked, ok = append(name, b.Name), append(bound, sign+words.Unit(words.Brief(b.Value), b.Unit)), append(asked, ask), append(ok, word)
 	}
 	p.table(columns("bound", name, ">no better than", bound, ">asked", asked, "in reach", ok))
 }
@@ -76,9 +64,9 @@ func showControllers(p *page, l *design.Loops, u data.Units) {
 	if l.Inner == nil {
 		return
 	}
-	p.heading(fmt.Sprintf("Loops, one step every %s", seconds(l.SamplePeriod)))
+	p.heading(fmt.Sprintf("Loops, one step every %s", words.Seconds(l.SamplePeriod)))
 	wrap(p.w, "  ", l.Law)
-	p.item("operating point", fmt.Sprintf("u0 = %s, y0 = %s", withUnit(number(l.OperatingPoint.Input), u.Input), withUnit(number(l.OperatingPoint.Output), u.Output)))
+	p.item("operating point", fmt.Sprintf("u0 = %s, y0 = %s", words.Unit(words.Number(l.OperatingPoint.Input), u.Input), words.Unit(words.Number(l.OperatingPoint.Output), u.Output)))
 	block := func(name, form string, b *design.Block) {
 		if b.IsOne() {
 			return
@@ -87,16 +75,16 @@ func showControllers(p *page, l *design.Loops, u data.Units) {
 			p.item(name, form)
 			name = ""
 		}
-		p.item(name, fraction(b.Discrete, "z^-"))
+		p.item(name, words.Fraction(b.Discrete, "z^-"))
 	}
 	block("inner", l.InnerForm, l.Inner)
 	block("outer", l.OuterForm, l.Outer)
 	block("prefilter", "", l.Prefilter)
 	if l.InputLimits != nil {
-		p.item("input limits", withUnit(number(l.InputLimits[0])+" to "+number(l.InputLimits[1]), u.Input))
+		p.item("input limits", words.Unit(words.Number(l.InputLimits[0])+" to "+words.Number(l.InputLimits[1]), u.Input))
 	}
 	if l.OuterLimits != nil {
-		p.item("outer limits", withUnit(number(l.OuterLimits[0])+" to "+number(l.OuterLimits[1]), u.Output)+", deviation")
+		p.item("outer limits", words.Unit(words.Number(l.OuterLimits[0])+" to "+words.Number(l.OuterLimits[1]), u.Output)+", deviation")
 	}
 	if len(l.Forms) == 0 {
 		return
@@ -109,31 +97,9 @@ func showControllers(p *page, l *design.Loops, u data.Units) {
 			mark = "chosen"
 		}
 		loop, form, chosen = append(loop, f.Loop), append(form, f.Form), append(chosen, mark)
-		peak, noise = append(peak, number(f.PeakSensitivity)), append(noise, withUnit(number(f.InputNoise), u.Input))
+		peak, noise = append(peak, words.Number(f.PeakSensitivity)), append(noise, words.Unit(words.Number(f.InputNoise), u.Input))
 	}
 	p.table(columns("loop", loop, "form", form, ">peak |S|", peak, ">input noise", noise, " ", chosen))
-}
-
-// fraction formats a ratio of polynomials in powers of z^-1.
-func fraction(r design.Rational, z string) string {
-	side := func(c []float64) string {
-		s := ""
-		for i, v := range c {
-			sign := " + "
-			if v < 0 {
-				sign = " - "
-			}
-			if i == 0 {
-				sign = map[bool]string{true: "-", false: ""}[v < 0]
-			}
-			s += sign + number(math.Abs(v))
-			if i > 0 {
-				s += fmt.Sprintf(" %s%d", z, i)
-			}
-		}
-		return s
-	}
-	return "(" + side(r.Numerator) + ") / (" + side(r.Denominator) + ")"
 }
 
 func showMargins(p *page, l *design.Loops) {
@@ -151,15 +117,15 @@ func showMargins(p *page, l *design.Loops) {
 		}
 		where = append(where, m.name)
 		gain = append(gain, factor(m.m.GainDown)+" to "+factor(m.m.GainUp))
-		phase = append(phase, orAny(m.m.PhaseDeg, func(x float64) string { return brief(x) + "°" }))
-		delay = append(delay, orAny(m.m.Delay, seconds))
-		peak = append(peak, brief(m.m.PeakSensitivity))
-		cross = append(cross, brief(m.m.Crossover))
+		phase = append(phase, orAny(m.m.PhaseDeg, func(x float64) string { return words.Brief(x) + "°" }))
+		delay = append(delay, orAny(m.m.Delay, words.Seconds))
+		peak = append(peak, words.Brief(m.m.PeakSensitivity))
+		cross = append(cross, words.Brief(m.m.Crossover))
 	}
 	p.table(columns("loop", where, ">gain times", gain, ">phase", phase, ">delay", delay, ">peak |S|", peak, ">crossing", cross))
 }
 
-func factor(x *float64) string { return orAny(x, brief) }
+func factor(x *float64) string { return orAny(x, words.Brief) }
 
 func orAny(x *float64, show func(float64) string) string {
 	if x == nil {
@@ -178,22 +144,22 @@ func showPromise(p *page, l *design.Loops, u data.Units) {
 	add := func(name string, s design.Spread, show func(float64) string) {
 		what, nominal, worst = append(what, name), append(nominal, show(s.Nominal)), append(worst, show(s.Worst))
 	}
-	add("overshoot", q.Overshoot, share)
-	add("settling", q.Settling, seconds)
-	add("peak |S| at the input", q.PeakS, number)
-	add("input noise, sd", q.InputNoise, func(x float64) string { return withUnit(number(x), u.Input) })
+	add("overshoot", q.Overshoot, words.Share)
+	add("settling", q.Settling, words.Seconds)
+	add("peak |S| at the input", q.PeakS, words.Number)
+	add("input noise, sd", q.InputNoise, func(x float64) string { return words.Unit(words.Number(x), u.Input) })
 	if q.KickPeak != nil {
-		add("output after the kick", *q.KickPeak, func(x float64) string { return withUnit(number(x), u.Output) })
+		add("output after the kick", *q.KickPeak, func(x float64) string { return words.Unit(words.Number(x), u.Output) })
 	}
 	p.table(columns("figure", what, ">nominal", nominal, ">worst", worst))
 	p.line("")
 	p.item("stable", fmt.Sprintf("%d of %d", q.Stable, q.Plants))
-	p.item("meet the spec", fmt.Sprintf("%d of %d; at least %s of all, with %g %% confidence", q.MeetSpec, q.Plants, share(q.LowerBound), 100*q.Confidence))
+	p.item("meet the spec", fmt.Sprintf("%d of %d; at least %s of all, with %g %% confidence", q.MeetSpec, q.Plants, words.Share(q.LowerBound), 100*q.Confidence))
 	for _, m := range q.Misses {
-		p.item("missed", fmt.Sprintf("%s on %s: worst %s, asked %s", m.What, count(m.Plants, "plant"), number(m.Worst), number(m.Asked)))
+		p.item("missed", fmt.Sprintf("%s on %s: worst %s, asked %s", m.What, words.Count(m.Plants, "plant"), words.Number(m.Worst), words.Number(m.Asked)))
 	}
-	p.item("largest step", withUnit(number(q.LargestStep), u.Output))
-	p.item("comes back from", withUnit(number(q.Recoverable), u.Output)+" off the operating point")
+	p.item("largest step", words.Unit(words.Number(q.LargestStep), u.Output))
+	p.item("comes back from", words.Unit(words.Number(q.Recoverable), u.Output)+" off the operating point")
 	if q.Attempts > 1 {
 		p.item("attempts", fmt.Sprintf("%d, so the confidence is shared between them", q.Attempts))
 	}
@@ -210,7 +176,7 @@ func showClosure(p *page, l *design.Loops, u data.Units) {
 	}
 	trip := func(name string, pair *[2]float64, unit string) {
 		if pair != nil {
-			p.item("trip on "+name, "outside "+withUnit(number(pair[0])+" to "+number(pair[1]), unit))
+			p.item("trip on "+name, "outside "+words.Unit(words.Number(pair[0])+" to "+words.Number(pair[1]), unit))
 		}
 	}
 	trip("input", c.Trip.Input, u.Input)
