@@ -95,23 +95,29 @@ func newRecursion(g *DTF) recursion {
 
 // next takes the newest input and returns the output; hold must follow with the output that acted.
 func (r *recursion) next(x float64) float64 {
-	copy(r.x[1:], r.x)
-	r.x[0] = x
 	s := 0.0
-	for i, b := range r.b {
-		s += b * r.x[i]
+	past := r.x[:len(r.b)]
+	for i := len(past) - 1; i > 0; i-- {
+		past[i] = past[i-1]
+		s += r.b[i] * past[i]
 	}
+	past[0] = x
+	s += r.b[0] * x
+	acted := r.y[:len(r.a)]
 	for i, a := range r.a {
-		s -= a * r.y[i]
+		s -= a * acted[i]
 	}
 	return s
 }
 
 func (r *recursion) hold(y float64) {
-	if len(r.y) > 0 {
-		copy(r.y[1:], r.y)
-		r.y[0] = y
+	if len(r.y) == 0 {
+		return
 	}
+	for i := len(r.y) - 1; i > 0; i-- {
+		r.y[i] = r.y[i-1]
+	}
+	r.y[0] = y
 }
 
 func (r *recursion) reset() {
@@ -179,15 +185,15 @@ func (s *LawState) StepProbe(r, y, dither float64) float64 {
 	if l.Outer != nil {
 		v = s.outer.next(f - dy)
 	}
-	v = min(max(v, s.outLo), s.outHi)
+	v = held(v, s.outLo, s.outHi)
 	if l.Outer != nil {
 		s.outer.hold(v)
 	}
 	s.v = v
 	want := s.inner.next(v - dy)
 	u := l.U0 + want + dither
-	u = min(max(u, s.last-s.rate), s.last+s.rate)
-	u = min(max(u, s.lo), s.hi)
+	u = held(u, s.last-s.rate, s.last+s.rate)
+	u = held(u, s.lo, s.hi)
 	s.last = u
 	sent := u
 	if q := l.InputStep; q > 0 {
@@ -205,6 +211,17 @@ func (s *LawState) StepProbe(r, y, dither float64) float64 {
 		s.inner.hold(sent - dither - l.U0)
 	}
 	return sent
+}
+
+// held returns x within [lo, hi]; NaN passes.
+func held(x, lo, hi float64) float64 {
+	if x < lo {
+		return lo
+	}
+	if x > hi {
+		return hi
+	}
+	return x
 }
 
 // Inner is the input of the inner loop v of the last step, a deviation, after its clamp.

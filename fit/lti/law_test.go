@@ -84,6 +84,19 @@ func TestDitherIsNoPartOfTheLaw(t *testing.T) {
 	}
 }
 
+// The same where a limit or rounding does act: an integrator of gain 1 with u in whole steps. Law part 0.4 + 0.3 of dither
+// is sent as 1, so the law is held to have put out 0.7; then 0.7 + 0.4 + 0.3 = 1.4 is sent as 1.
+func TestDitherIsTakenOffWhatActed(t *testing.T) {
+	law := Law{Inner: DTF{Num: Poly{1}, Den: Poly{1, -1}, Period: 1}, InputStep: 1}
+	s := law.Start()
+	if u := s.StepProbe(0.4, 0, 0.3); u != 1 {
+		t.Fatalf("first step %g", u)
+	}
+	if u := s.StepProbe(0.4, 0, 0.3); u != 1 { // 0.7 + 0.4 + 0.3 = 1.4; with the dither in its memory 1.7, sent as 2
+		t.Errorf("second step %g, want 1", u)
+	}
+}
+
 func TestLawValidate(t *testing.T) {
 	good := func() *Law { return &Law{Inner: Gain(1, 0.1)} }
 	if err := good().Validate(); err != nil {

@@ -306,7 +306,13 @@ func (s *Simulator) output() float64 {
 
 // push makes w the newest plant input; s.w[i] is then the input i samples ago.
 func (s *Simulator) push(w float64) {
-	copy(s.w[1:], s.w)
+	if len(s.w) > 8 {
+		copy(s.w[1:], s.w)
+	} else {
+		for i := len(s.w) - 1; i > 0; i-- {
+			s.w[i] = s.w[i-1]
+		}
+	}
 	s.w[0] = w
 }
 
@@ -315,10 +321,12 @@ func (s *Simulator) advance() {
 	p := s.p
 	n := len(s.x)
 	w0, w1 := s.w[p.delay], s.w[p.delay+1]
+	x := s.x[:n]
 	for i := range n {
 		v := p.g0[i]*w0 + p.g1[i]*w1
-		for j, a := range p.phi[i*n : i*n+n] {
-			v += a * s.x[j]
+		row := p.phi[i*n : i*n+n]
+		for j := range x {
+			v += row[j] * x[j]
 		}
 		s.next[i] = v
 	}

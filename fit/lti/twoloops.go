@@ -119,10 +119,14 @@ func (t TwoLoops) Closed() SS {
 // circle means internally stable, hidden modes and prefilter included.
 func (t TwoLoops) Poles() []complex128 { return t.Closed().Poles() }
 
+// inside is how far inside the unit circle a pole must lie to count as stable: a mode that neither grows nor decays is
+// not held, whichever way rounding pushes it.
+const inside = 1e-12
+
 // Stable reports whether all poles lie inside the unit circle.
 func (t TwoLoops) Stable() bool {
 	for _, p := range t.Poles() {
-		if !(cmplx.Abs(p) < 1) {
+		if !(cmplx.Abs(p) < 1-inside) {
 			return false
 		}
 	}

@@ -62,6 +62,8 @@ func TestZOHClosedForms(t *testing.T) {
 			Poly{0, 0.161834242728283, 0.0595685154318867}, Poly{1, -1.22140275816017}},
 		{"unstable, delay 2.25 periods", TF{Num: Poly{1}, Den: Poly{-1, 1}, Delay: 0.45}, 0.2,
 			Poly{0, 0, 0, 0.161834242728283, 0.0595685154318867}, Poly{1, -1.22140275816017}},
+		{"whole delay in rounding's reach, from below", TF{Num: Poly{1}, Den: Poly{1, 1}, Delay: 0.3}, 0.1, // 0.3/0.1 < 3
+			Poly{0, 0, 0, 0, 1 - math.Exp(-0.1)}, Poly{1, -math.Exp(-0.1)}},
 		{"whole delay in rounding's reach", TF{Num: Poly{1}, Den: Poly{1, 1}, Delay: 3 * 0.1}, 0.1,
 			Poly{0, 0, 0, 0, 1 - math.Exp(-0.1)}, Poly{1, -math.Exp(-0.1)}},
 	} {
@@ -76,6 +78,9 @@ func TestZOHClosedForms(t *testing.T) {
 			ss, err := ZOH(c.g, c.h)
 			if err != nil {
 				t.Fatal(err)
+			}
+			if n := max(len(c.num), len(c.den)) - 1; ss.Order() != n {
+				t.Errorf("%d states, want %d", ss.Order(), n)
 			}
 			for _, w := range []float64{0.01, 0.3, 1, 2.5} {
 				q := cmplx.Exp(complex(0, -w*c.h))
