@@ -127,10 +127,13 @@ func refinePeak(pts []point, size func(point) float64, l func(float64) complex12
 		if math.IsInf(t.v, 1) {
 			return t.v, pts[t.i].w
 		}
+		if t.v < 0.7*tops[0].v { // neighbours differ by less than that: no higher between them
+			break
+		}
 		a, b := pts[max(t.i-1, 0)].w, pts[min(t.i+1, len(pts)-1)].w
 		x1, x2 := b-goldenRate*(b-a), a+goldenRate*(b-a)
 		f1, f2 := size(point{x1, l(x1)}), size(point{x2, l(x2)})
-		for range 40 { // a maximum is flat: sqrt(eps) of its place gives eps of its height
+		for range 32 { // to 2e-7 of the interval: a maximum is flat, its height is then exact to rounding
 			if f1 > f2 {
 				b, x2, f2 = x2, x1, f1
 				x1 = b - goldenRate*(b-a)
@@ -139,9 +142,6 @@ func refinePeak(pts []point, size func(point) float64, l func(float64) complex12
 				a, x1, f1 = x1, x2, f2
 				x2 = a + goldenRate*(b-a)
 				f2 = size(point{x2, l(x2)})
-			}
-			if b-a < 1e-9*b {
-				break
 			}
 		}
 		if f1 > value {

@@ -213,3 +213,35 @@ func TestSensitivityIntegrals(t *testing.T) {
 		t.Errorf("sampled: %.12f", got)
 	}
 }
+
+// What a proof pays per plant: a third-order plant with delay, both loops.
+func BenchmarkProofPlant(b *testing.B) {
+	const h = 0.001
+	g := TF{Num: Poly{-900 * 250}, Den: Poly{-900, 0, 1}.Mul(Poly{250, 1}), Delay: 0.0013}
+	outer := Tustin(TF{Num: Poly{2, 0.3}, Den: Poly{0, 1}}, h)
+	law := &Law{Inner: Tustin(TF{Num: Poly{-2.5, -0.08}, Den: Poly{1, 0.002}}, h), Outer: &outer}
+	loops, err := NewTwoLoops(g, 0, law)
+	if err != nil {
+		b.Fatal(err)
+	}
+	b.Run("sample", func(b *testing.B) {
+		for b.Loop() {
+			_, _ = NewTwoLoops(g, 0, law)
+		}
+	})
+	b.Run("poles", func(b *testing.B) {
+		for b.Loop() {
+			loops.Poles()
+		}
+	})
+	b.Run("margins", func(b *testing.B) {
+		for b.Loop() {
+			LoopMargins(loops.LoopAtInput, 0.1, math.Pi/h, 1, 0)
+		}
+	})
+	b.Run("noise", func(b *testing.B) {
+		for b.Loop() {
+			_, _ = loops.NoiseCovariance(1)
+		}
+	})
+}

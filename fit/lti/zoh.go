@@ -203,41 +203,52 @@ func ZOHTF(g TF, period float64) (DTF, error) {
 	return DTF{Num: num, Den: den, Period: period}, nil
 }
 
-// ZOHResponse returns the frequency response of ZOH(g, period) as a function of omega, rad/s, without the states of
-// the delay. It may be called concurrently.
+// ZOHResponse returns the frequency response of ZOH(g, period) as a function of omega, rad/s: evaluated in powers of
+// z - 1, which keeps its digits at fast sampling, and without the states of the delay. It may be called concurrently.
 func ZOHResponse(g TF, period float64) (func(omega float64) complex128, error) {
 	p, err := sample(g, period)
 	if err != nil {
 		return nil, err
 	}
-	n := p.n()
+	den := deltaDen(g, period)
+	num0 := p.deltaNum(p.g0, den).Add(den.Scale(p.d0))
+	var num1 Poly
+	if p.frac > 0 {
+		num1 = p.deltaNum(p.g1, den).Add(den.Scale(p.d1))
+	}
 	return func(omega float64) complex128 {
-		var space [72]complex128 // up to 8 states without an allocation
-		work := space[:]
-		if n*(n+1) > len(space) {
-			work = make([]complex128, n*(n+1))
-		}
-		m, b := work[:n*n], work[n*n:n*(n+1)]
 		sin, cos := math.Sincos(omega * period / 2)
-		z1 := complex(-2*sin*sin, 2*sin*cos) // z - 1 without cancellation
-		q := cmplx.Exp(complex(0, -omega*period))
-		for i := range n {
-			for j := range n {
-				m[i*n+j] = complex(-p.phi[i*n+j], 0)
-			}
-			m[i*n+i] = z1 + complex(1-p.phi[i*n+i], 0)
-			b[i] = complex(p.g0[i], 0) + complex(p.g1[i], 0)*q
+		d := complex(-2*sin*sin, 2*sin*cos) // z - 1 without cancellation
+		num := num0.Eval(d)
+		if num1 != nil {
+			num += num1.Eval(d) * cmplx.Conj(1+d) // z^-1
 		}
-		if !solveComplex(m, b) {
-			return cmplx.Inf()
-		}
-		v := complex(p.d0, 0) + complex(p.d1, 0)*q
-		for i := range n {
-			v += complex(p.c[i], 0) * b[i]
-		}
+		v := num / den.Eval(d)
 		if p.delay > 0 {
-			v *= cmplx.Exp(complex(0, -omega*period*float64(p.delay)))
+			sin, cos := math.Sincos(omega * period * float64(p.delay))
+			v *= complex(cos, -sin)
 		}
 		return v
 	}, nil
+}
+
+// deltaNum returns the numerator of c (delta I - (phi - I))^-1 v over den, in powers of delta.
+func (p *sampled) deltaNum(v []float64, den Poly) Poly {
+	n := p.n()
+	num, markov := make(Poly, n), make([]float64, n)
+	x, next := append([]float64(nil), v...), make([]float64, n)
+	for i := range n {
+		for k, c := range p.c {
+			markov[i] += c * x[k]
+		}
+		matvec(next, p.phi, x)
+		for k := range x {
+			next[k] -= x[k]
+		}
+		x, next = next, x
+		for j := 0; j <= i; j++ {
+			num[n-1-i] += den[n-j] * markov[i-j]
+		}
+	}
+	return num
 }
