@@ -193,10 +193,14 @@ const pairingGain = 6
 // Moved up, the input of a well paired log gives away the output that it
 // answers to, u = -K y, so a model that can undo the move by other means would
 // win. Those means are a relative degree of one, another pole, a zero in the
-// right half-plane; they are left out.
+// right half-plane; they are left out. And such an answer within the row shows
+// by itself, as a direct term from input to output against the plant's gain.
 func (c *chooser) pairing(ctx context.Context, recs []fit.Record, ranked []*candidate, workers int) error {
 	best := ranked[0]
 	if best.fit.Delay > c.p.Period || c.scope.base > 0 {
+		return nil
+	}
+	if c.answersWithinRow(recs, lead(best.fit)) {
 		return nil
 	}
 	moved := make([]fit.Record, len(recs))
@@ -237,6 +241,24 @@ func (c *chooser) pairing(ctx context.Context, recs []fit.Record, ranked []*cand
 		}
 	}
 	return nil
+}
+
+// directOrder is the order of the long model in which the direct term is
+// looked for, directSure by how many deviations it must show.
+const (
+	directOrder = 16
+	directSure  = 3
+)
+
+// answersWithinRow reports whether the output of a row and the input of the
+// same row have a direct relation of the sign of feedback, opposite to gain.
+func (c *chooser) answersWithinRow(recs []fit.Record, gain float64) bool {
+	m, _ := fit.FitARX(recs, fit.ARXOptions{NA: directOrder, NB: directOrder, Delay: 0})
+	if m == nil {
+		return false
+	}
+	t := m.B[0] / math.Sqrt(m.Cov.At(directOrder, directOrder))
+	return t < -directSure && gain > 0 || t > directSure && gain < 0
 }
 
 // lead is the leading numerator coefficient.
