@@ -39,6 +39,9 @@ func LoopMargins(l func(w float64) complex128, wLo, wHi float64, unstable int, a
 		integrators++
 		axis = axis[1:]
 	}
+	if len(axis) > 0 {
+		wLo = math.Min(wLo, axis[0]/10)
+	}
 	finite := func(x complex128) bool { return !cmplx.IsNaN(x) && !cmplx.IsInf(x) }
 	l0 := l(0)
 	if integrators == 0 {

@@ -1,6 +1,7 @@
 package lti
 
 import (
+	"errors"
 	"fmt"
 	"math"
 	"math/cmplx"
@@ -108,8 +109,11 @@ func winds(p1, p2 TF) (bool, error) {
 		return false, err
 	}
 	turn, err := turnUpAxis(func(s complex128) complex128 { return 1 + l(s) }, poles, end)
+	if errors.Is(err, errThrough) {
+		return false, nil // 1 + p2~ p1 = 0: the two are 1 apart there
+	}
 	if err != nil {
-		return false, nil // through 0: the two are 1 apart there
+		return false, fmt.Errorf("measuring the distance of two plants: %w", err)
 	}
 	// Up the axis is clockwise round the right half-plane, so the turn counts poles less zeros; the winding number of
 	// the condition counts zeros less poles.

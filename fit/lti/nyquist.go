@@ -1,6 +1,7 @@
 package lti
 
 import (
+	"errors"
 	"fmt"
 	"math"
 	"math/cmplx"
@@ -14,6 +15,8 @@ type Nyquist struct {
 	Open      int // open-loop poles with Re > 0, or |z| > 1
 	Closed    int // closed-loop poles there
 }
+
+var errThrough = errors.New("the loop passes through -1")
 
 // onAxis is the distance, relative to the size of the pole, within which it counts as on the axis. Poles that come
 // out of exact coefficients (integrators) are exact; everything farther away is passed on its true side.
@@ -86,8 +89,7 @@ func farRadius(l func(complex128) complex128, r float64) (float64, error) {
 
 // turnUpAxis returns the turn of f, in rad, from s = 0 to s = i end, past poles on the axis on their right.
 func turnUpAxis(f func(complex128) complex128, poles []complex128, end float64) (float64, error) {
-	// Distinct poles on the axis, and the radius of the way around them: a thousandth of the distance to whatever is
-	// next. A closed-loop pole nearer than that to one of them would mean a gain of no use.
+	// Distinct poles on the axis.
 	var on []float64
 	for _, p := range poles {
 		if w := imag(p); math.Abs(real(p)) <= axisWidth(p) && w >= 0 && w <= end*(1+1e-9) {
@@ -97,15 +99,31 @@ func turnUpAxis(f func(complex128) complex128, poles []complex128, end float64) 
 		}
 	}
 	slices.Sort(on)
-	radius := end
-	for _, x := range on {
+	// The way around each is so near that f is large all along it and nothing else lies within.
+	around := make([]float64, len(on))
+	for i, x := range on {
+		r := end
 		for _, p := range poles {
 			if d := cmplx.Abs(p - complex(0, x)); d > 1e-8*(1+x) {
-				radius = math.Min(radius, d)
+				r = math.Min(r, d)
 			}
 		}
+		for r *= 1e-2; ; r /= 10 {
+			if r < 1e-12*(1+x) {
+				return 0, fmt.Errorf("counting encirclements: the loop gain stays finite at its pole on the axis at %.4g", x)
+			}
+			least := math.Inf(1)
+			for k := -2; k <= 2; k++ {
+				if s := complex(0, x) + cmplx.Rect(r, float64(k)*math.Pi/4); real(s) >= 0 {
+					least = math.Min(least, cmplx.Abs(f(s)))
+				}
+			}
+			if least > 100 {
+				break
+			}
+		}
+		around[i] = r
 	}
-	radius *= 1e-3
 	// Frequencies at which to look in any case: the whole range by decades, and around each pole in units of its
 	// distance from the axis.
 	low := end
@@ -147,7 +165,8 @@ func turnUpAxis(f func(complex128) complex128, poles []complex128, end float64) 
 		}
 	}
 	from := 0.0
-	for _, x := range on {
+	for i, x := range on {
+		radius := around[i]
 		first, last := -math.Pi/2, math.Pi/2
 		if x == 0 {
 			first = 0
@@ -159,9 +178,9 @@ func turnUpAxis(f func(complex128) complex128, poles []complex128, end float64) 
 		}
 		// In pieces: round a multiple pole f turns by whole circles, which the ends alone would not show.
 		const pieces = 24
-		for i := range pieces {
+		for j := range pieces {
 			along(func(t float64) complex128 {
-				return complex(0, x) + cmplx.Rect(radius, first+(float64(i)+t)/pieces*(last-first))
+				return complex(0, x) + cmplx.Rect(radius, first+(float64(j)+t)/pieces*(last-first))
 			})
 		}
 		from = x + radius
@@ -183,7 +202,7 @@ func turnAlong(f func(complex128) complex128, path func(t float64) complex128) (
 		}
 		if depth == 0 || fa == 0 || fb == 0 || math.IsNaN(step) {
 			if fail == nil {
-				fail = fmt.Errorf("counting encirclements: the loop passes through -1 near %.4g", path((a+b)/2))
+				fail = fmt.Errorf("counting encirclements: %w near %.4g", errThrough, path((a+b)/2))
 			}
 			return 0
 		}

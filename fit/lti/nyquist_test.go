@@ -2,6 +2,7 @@ package lti
 
 import (
 	"math"
+	"math/rand/v2"
 	"testing"
 )
 
@@ -110,5 +111,88 @@ func TestNyquistCountSampled(t *testing.T) {
 				t.Errorf("%s, gain %g: %d unstable poles, want %d (%+v)", c.name, k, n.Closed, want, n)
 			}
 		}
+	}
+}
+
+// Random loops, a third of them with poles on the axis: Nyquist's count, the margins' verdict and the gain margins
+// against the roots of the closed loop's polynomial.
+func TestCountsOnRandomLoops(t *testing.T) {
+	rng := rand.New(rand.NewPCG(1, 1))
+	unstableRoots := func(l TF, k float64) int {
+		n := 0
+		for _, r := range l.Num.Scale(k).Add(l.Den).Roots() {
+			if real(r) > 0 {
+				n++
+			}
+		}
+		return n
+	}
+	factor := func() Poly {
+		switch rng.IntN(3) {
+		case 0: // a pair
+			w, z := math.Exp(2*rng.NormFloat64()), rng.NormFloat64()/2
+			return Poly{w * w, 2 * z * w, 1}
+		default:
+			return Poly{math.Exp(2*rng.NormFloat64()) * float64(2*rng.IntN(2)-1), 1}
+		}
+	}
+	held := 0
+	for trial := range 400 {
+		l := TF{Num: Poly{math.Exp(2*rng.NormFloat64()) * float64(2*rng.IntN(2)-1)}, Den: Poly{1}}
+		var poles []complex128
+		var axis []float64
+		unstable := 0
+		for range 1 + rng.IntN(3) {
+			f := factor()
+			l.Den = l.Den.Mul(f)
+			for _, p := range f.Roots() {
+				poles = append(poles, p)
+				if real(p) > 0 {
+					unstable++
+				}
+			}
+		}
+		switch rng.IntN(6) {
+		case 0:
+			l.Den = l.Den.Mul(Poly{0, 1})
+			poles, axis = append(poles, 0), append(axis, 0)
+		case 1:
+			w := math.Exp(rng.NormFloat64())
+			l.Den = l.Den.Mul(Poly{w * w, 0, 1})
+			poles, axis = append(poles, complex(0, w), complex(0, -w)), append(axis, w)
+		}
+		for l.RelDegree() > 1 && rng.IntN(2) == 0 {
+			if f := factor(); f.Degree() < l.RelDegree() {
+				l.Num = l.Num.Mul(f)
+			}
+		}
+		want := unstableRoots(l, 1)
+		n, err := NyquistCount(l.At, poles, 0)
+		if err != nil || n.Closed != want {
+			t.Errorf("trial %d: %v, error %v, want %d unstable: %v", trial, n, err, want, l)
+		}
+		m := LoopMargins(jw(l), 1e-5, 1e6, unstable, axis...)
+		if m.StableNominal != (want == 0) {
+			t.Errorf("trial %d: called stable %v with %d unstable roots: %v", trial, m.StableNominal, want, l)
+		}
+		if want > 0 {
+			continue
+		}
+		held++
+		// Within the gain margins the loop is held, beyond them it is not.
+		for _, c := range []struct {
+			k    float64
+			held bool
+		}{{1 + 0.99*(math.Min(m.GainUp, 1e6)-1), true}, {m.GainUp * 1.01, false}, {m.GainDown + 0.01*(1-m.GainDown), true}, {m.GainDown * 0.99, false}} {
+			if c.k <= 0 || math.IsInf(c.k, 0) {
+				continue
+			}
+			if got := unstableRoots(l, c.k); (got == 0) != c.held {
+				t.Errorf("trial %d: %d unstable roots at a gain of %g, margins %g to %g: %v", trial, got, c.k, m.GainDown, m.GainUp, l)
+			}
+		}
+	}
+	if held < 50 {
+		t.Errorf("only %d loops were held: the test has lost its point", held)
 	}
 }
