@@ -241,7 +241,7 @@ func (a *app) whole(ctx context.Context, j *job, s *settings) error {
 	page, err := rendered(func(w io.Writer) error {
 		return report.Write(w, report.Input{
 			Rig: j.rig, Logs: j.exps, Audit: audit, Model: model, Loops: loops,
-			Refusal: refusal, Command: a.command(), Tool: a.tool, Made: a.now, Seed: s.seed,
+			Verdict: j.verdict(), Refusal: refusal, Command: a.command(), Tool: a.tool, Made: a.now, Seed: s.seed,
 		})
 	})
 	if err != nil {

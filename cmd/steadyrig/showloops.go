@@ -6,7 +6,6 @@ import (
 	"steadyrig/cmd/steadyrig/words"
 	"steadyrig/data"
 	"steadyrig/design"
-	"steadyrig/ident"
 )
 
 // showLoops prints a design: the verdict and the promise, then bounds, loops, margins, and how to close them.
@@ -26,8 +25,8 @@ func showBounds(p *page, l *design.Loops) {
 			p.line("")
 		}
 		text := ""
-		if b.Interval != nil {
-			text = "95 % over the plants allowed: " + words.Interval(ident.Interval{Lo: b.Interval[0], Hi: b.Interval[1]}) + ". "
+		if _, over, _ := words.Bound(b); over != "" {
+			text = "95 % over the plants allowed: " + over + ". "
 		}
 		if b.Advice != "" {
 			text += b.Advice + ". "
@@ -44,18 +43,8 @@ func showBoundsBriefly(p *page, l *design.Loops) {
 	p.heading("What physics allows, whatever the controller")
 	var name, bound, asked, ok []string
 	for _, b := range l.Bounds {
-		sign := "≥ "
-		if b.Limit == "most" {
-			sign = "≤ "
-		}
-		word, ask := "yes", "-"
-		if b.Asked != nil {
-			ask = words.Unit(words.Brief(*b.Asked), b.Unit)
-		}
-		if !b.OK {
-			word = "NO"
-		}
-		name, bound, asked, ok = append(name, b.Name), append(bound, sign+words.Unit(words.Brief(b.Value), b.Unit)), append(asked, ask), append(ok, word)
+		value, _, ask := words.Bound(b)
+		name, bound, asked, ok = append(name, b.Name), append(bound, value), append(asked, ask), append(ok, words.YesNo(b.OK))
 	}
 	p.table(columns("bound", name, ">no better than", bound, ">asked", asked, "in reach", ok))
 }

@@ -2,7 +2,6 @@ package main
 
 import (
 	"fmt"
-	"math"
 
 	"steadyrig/cmd/steadyrig/words"
 	"steadyrig/data"
@@ -26,34 +25,16 @@ func showPlant(p *page, m *ident.Model, u data.Units) {
 	ratio := words.Ratio(u.Output, u.Input)
 	p.item("numerator", words.Polynomial(m.Plant.Numerator, "s"))
 	p.item("denominator", words.Polynomial(m.Plant.Denominator, "s"))
-	delay := words.Seconds(m.Plant.Delay)
-	if sd, ok := parameterSD(m, "delay"); ok {
-		delay += " ± " + words.Seconds(1.96*sd)
-	}
-	p.item("delay", delay+", from the logged input to the output")
+	p.item("delay", words.Delay(m)+", from the logged input to the output")
 	if g := m.Gain.DC; g != nil {
-		p.item("steady gain", estimate(g, ratio))
+		p.item("steady gain", words.Estimate(g, ratio))
 	} else {
 		p.item("steady gain", "none: the plant integrates")
 	}
-	if g := m.Gain.HighFrequency; g != nil {
-		excess := len(m.Plant.Denominator) - len(m.Plant.Numerator)
-		p.item("leading gain", estimate(g, words.Unit(ratio, "s^-"+fmt.Sprint(excess)))+fmt.Sprintf(", over s^%d at high frequency", excess))
+	if m.Gain.HighFrequency != nil {
+		p.item("leading gain", words.Leading(m, ratio))
 	}
 	p.item("operating point", fmt.Sprintf("input %s, output %s", words.Unit(words.Number(m.OperatingPoint.Input), u.Input), words.Unit(words.Number(m.OperatingPoint.Output), u.Output)))
-}
-
-func parameterSD(m *ident.Model, name string) (float64, bool) {
-	for i, n := range m.Plant.Parameters {
-		if n == name && i < len(m.Plant.Covariance) && m.Plant.Covariance[i][i] > 0 {
-			return math.Sqrt(m.Plant.Covariance[i][i]), true
-		}
-	}
-	return 0, false
-}
-
-func estimate(e *ident.Estimate, unit string) string {
-	return fmt.Sprintf("%s (95 %%: %s)", words.Unit(words.Number(e.Value), unit), words.Interval(e.Interval95))
 }
 
 // showRoots prints a table of poles or zeros, a pair on one line.
@@ -62,32 +43,16 @@ func showRoots(p *page, title string, roots []ident.Root, right string) {
 		return
 	}
 	p.heading(title + ", rad/s")
-	var value, re, im, verdict, chance []string
-	pairs := false
+	var value, bounds, verdict, chance []string
 	for _, r := range roots {
 		if r.Im < 0 {
 			continue
 		}
-		v, imag := words.Number(r.Re), ""
-		if r.Im != 0 {
-			v, imag = words.Number(r.Re)+" ± "+words.Number(r.Im)+"i", words.Interval(r.Im95)
-			pairs = true
-		}
-		word := "no"
-		switch {
-		case r.Re95.Lo <= 0 && r.Re95.Hi >= 0:
-			word = "open"
-		case r.Unstable:
-			word = "YES"
-		}
-		value, re, im = append(value, v), append(re, words.Interval(r.Re95)), append(im, imag)
-		verdict, chance = append(verdict, word), append(chance, words.Probability(r.ProbabilityUnstable))
+		v, b := words.Root(r)
+		value, bounds = append(value, v), append(bounds, b)
+		verdict, chance = append(verdict, words.Unstableness(r)), append(chance, words.Probability(r.ProbabilityUnstable))
 	}
-	if pairs {
-		p.table(columns(">value", value, "95 % of real part", re, "of imaginary part", im, right, verdict, "probability", chance))
-		return
-	}
-	p.table(columns(">value", value, "95 % interval", re, right, verdict, "probability", chance))
+	p.table(columns(">value", value, "95 % interval", bounds, right, verdict, "probability", chance))
 }
 
 func showMethods(p *page, m *ident.Model) {
@@ -97,11 +62,7 @@ func showMethods(p *page, m *ident.Model) {
 	p.heading("The same poles by other ways of estimating")
 	var name, takes, poles, agrees []string
 	for _, e := range m.Evidence.Methods {
-		word := "yes"
-		if !e.Agrees {
-			word = "NO"
-		}
-		name, takes, agrees = append(name, e.Name), append(takes, words.Assumes[e.Name]), append(agrees, word)
+		name, takes, agrees = append(name, e.Name), append(takes, words.Assumes[e.Name]), append(agrees, words.YesNo(e.Agrees))
 		poles = append(poles, words.Rightmost(e.Poles))
 	}
 	p.table(columns("method", name, "takes for granted", takes, ">rightmost pole", poles, "agrees", agrees))
@@ -120,8 +81,7 @@ func showEvidence(p *page, m *ident.Model, u data.Units) {
 	if len(m.Plant.Denominator) > 0 {
 		p.item("explained", fmt.Sprintf("%s of the output's variance one step ahead, on rows not used in the fit", words.Share(m.Evidence.ExplainedShare)))
 		p.item("left over", fmt.Sprintf("%s standard deviation of one-step prediction errors", words.Unit(words.Number(m.Noise.SD), u.Output)))
-		p.item("residuals", fmt.Sprintf("white: %s, free of the input: %s (probability of more by chance, %d lags)",
-			words.Probability(m.Evidence.Residuals.Whiteness), words.Probability(m.Evidence.Residuals.CrossInput), m.Evidence.Residuals.Lags))
+		p.item("residuals", words.Residuals(m))
 	}
 	p.item("from outside", fmt.Sprintf("%s of the input's variance", words.Share(m.Evidence.OutsideShare)))
 	if m.Evidence.Memories > 0 {

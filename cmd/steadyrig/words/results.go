@@ -87,3 +87,72 @@ func Loops(l *design.Loops) string {
 	return fmt.Sprintf("%s: of the plants that the data allow, at least %s keep the spec (%g %% confidence; %d of %d drawn).",
 		l.Rig, Share(q.LowerBound), 100*q.Confidence, q.MeetSpec, q.Plants)
 }
+
+// Delay is the plant's delay with the half width of its 95 % interval where it was estimated.
+func Delay(m *ident.Model) string {
+	for i, name := range m.Plant.Parameters {
+		if v := m.Plant.Covariance[i][i]; name == "delay" && v > 0 {
+			return Seconds(m.Plant.Delay) + " ± " + Seconds(1.96*math.Sqrt(v))
+		}
+	}
+	return Seconds(m.Plant.Delay)
+}
+
+// Estimate is a figure with its unit and its 95 % interval.
+func Estimate(e *ident.Estimate, unit string) string {
+	return fmt.Sprintf("%s (95 %%: %s)", Unit(Number(e.Value), unit), Interval(e.Interval95))
+}
+
+// Leading is the leading numerator coefficient, ratio the unit of output over input.
+func Leading(m *ident.Model, ratio string) string {
+	excess := len(m.Plant.Denominator) - len(m.Plant.Numerator)
+	return Estimate(m.Gain.HighFrequency, Unit(ratio, fmt.Sprintf("s^-%d", excess))) + fmt.Sprintf(", over s^%d at high frequency", excess)
+}
+
+// Residuals tells the tests on what a model leaves over.
+func Residuals(m *ident.Model) string {
+	r := m.Evidence.Residuals
+	return fmt.Sprintf("white: %s, free of the input: %s (probability of more by chance, %d lags)",
+		Probability(r.Whiteness), Probability(r.CrossInput), r.Lags)
+}
+
+// Root is a pole or a zero, a pair as one, and its 95 % intervals.
+func Root(r ident.Root) (value, bounds string) {
+	if r.Im == 0 {
+		return Number(r.Re), Interval(r.Re95)
+	}
+	return Number(r.Re) + " ± " + Number(r.Im) + "i", Interval(r.Re95) + "; ± " + Interval(r.Im95)
+}
+
+// Unstableness says whether a root lies in the right half-plane, "open" where its interval holds zero.
+func Unstableness(r ident.Root) string {
+	if r.Re95.Contains(0) {
+		return "open"
+	}
+	return YesNo(r.Unstable)
+}
+
+// YesNo is yes or NO.
+func YesNo(yes bool) string {
+	if yes {
+		return "yes"
+	}
+	return "NO"
+}
+
+// Bound tells a bound's figure, its interval over the plants that the data allow where it has a width, and what the
+// spec asks.
+func Bound(b design.Bound) (value, interval, asked string) {
+	value, asked = "≥ ", "–"
+	if b.Limit == "most" {
+		value = "≤ "
+	}
+	value += Unit(Brief(b.Value), b.Unit)
+	if b.Asked != nil {
+		asked = Unit(Brief(*b.Asked), b.Unit)
+	}
+	if iv := b.Interval; iv != nil && iv[1]-iv[0] > 1e-3*math.Abs(b.Value) {
+		interval = Interval(ident.Interval{Lo: iv[0], Hi: iv[1]})
+	}
+	return value, interval, asked
+}

@@ -1,0 +1,396 @@
+package report
+
+import (
+	"fmt"
+	"strings"
+
+	"steadyrig/cmd/steadyrig/words"
+	"steadyrig/design"
+	"steadyrig/ident"
+)
+
+func hasPlant(m *ident.Model) bool { return len(m.Plant.Denominator) > 0 }
+
+func hasLoops(l *design.Loops) bool { return l.Inner != nil }
+
+// summary says in a few sentences what the run came to.
+func summary(in Input) []string {
+	var s []string
+	if in.Refusal != nil {
+		s = append(s, sentence(in.Refusal.Error()))
+	}
+	if hasLoops(in.Loops) && in.Loops.Promise != nil {
+		s = append(s, sentence(strings.TrimPrefix(words.Loops(in.Loops), in.Rig.Name+": ")))
+	}
+	if hasPlant(in.Model) {
+		s = append(s, sentence(words.Unstable(in.Model.Poles)))
+	}
+	return s
+}
+
+// sentence gives a text a capital and a full stop.
+func sentence(s string) string {
+	s = strings.TrimSpace(s)
+	if s == "" {
+		return s
+	}
+	if s[0] >= 'a' && s[0] <= 'z' {
+		s = strings.ToUpper(s[:1]) + s[1:]
+	}
+	return strings.TrimSuffix(s, ".") + "."
+}
+
+// headFacts are the figures that a reader looks for first.
+func headFacts(in Input) []fact {
+	var f []fact
+	u := in.Rig.Units
+	if l := in.Loops; hasLoops(l) {
+		form := l.InnerForm
+		if l.OuterForm != "" {
+			form += " inside, " + l.OuterForm + " outside"
+		}
+		if form != "" {
+			f = append(f, fact{"Loops", form + ", one step every " + words.Seconds(l.SamplePeriod)})
+		}
+		if m := l.Margins; m != nil && m.PlantInput != nil {
+			f = append(f, fact{"Gain may change by", factors(m.PlantInput)})
+			if d := m.PlantInput.Delay; d != nil {
+				f = append(f, fact{"Delay may grow by", words.Seconds(*d)})
+			}
+		}
+		if q := l.Promise; q != nil {
+			f = append(f,
+				fact{"Peak |S|, worst plant", words.Number(q.PeakS.Worst) + asked(in, func() float64 { return in.Rig.Spec.PeakSensitivity }, "")},
+				fact{"Overshoot, worst plant", words.Share(q.Overshoot.Worst) + asked(in, func() float64 { return 100 * in.Rig.Spec.Overshoot }, "%")},
+				fact{"Settling, worst plant", words.Seconds(q.Settling.Worst) + askedText(in, func() string { return words.Seconds(in.Rig.Spec.Settling) })},
+				fact{"Comes back from", words.Unit(words.Number(q.Recoverable), u.Output)},
+			)
+		}
+	}
+	if len(f) == 0 {
+		f = append(f, fact{"Sign", in.Audit.Sign.Words}, fact{"From outside", in.Audit.Outside.Words})
+		if in.Audit.NextStep != "" {
+			f = append(f, fact{"Next step", in.Audit.NextStep})
+		}
+	}
+	return f
+}
+
+func asked(in Input, get func() float64, unit string) string {
+	return askedText(in, func() string { return words.Unit(words.Number(get()), unit) })
+}
+
+func askedText(in Input, get func() string) string {
+	if in.Rig.Spec == nil {
+		return ""
+	}
+	return " (asked: " + get() + ")"
+}
+
+func factors(m *design.Margins) string {
+	return "times " + orAny(m.GainDown, words.Brief) + " to " + orAny(m.GainUp, words.Brief)
+}
+
+func orAny(x *float64, show func(float64) string) string {
+	if x == nil {
+		return "any"
+	}
+	return show(*x)
+}
+
+// cautions are what must be read before anybody acts on the report.
+func cautions(in Input) []string {
+	c := []string{
+		"An unstable rig can throw, break or burn. Guards on and nobody within reach before any loop is closed, one person at the stop who does nothing else.",
+		"Trips on the output and on the input must work without this controller, and must have been tried first.",
+	}
+	if hasLoops(in.Loops) {
+		c = append(c,
+			"Close the inner loop alone first, then the outer one slowly, in the order given under “First closure”.",
+			"The promise covers the plants that the data allow, at this operating point, sample period and delay, and no others. A changed rig is another plant.")
+	} else {
+		c = append(c, "No loops are given here. Until there are, the stopgap law is all that holds the rig.")
+	}
+	return append(c, "Local codes and the judgement of a licensed practitioner come before anything written here.")
+}
+
+func logSection(in Input) (section, error) {
+	a, u := in.Audit, in.Rig.Units
+	s := section{ID: "log", Title: "Log", Lead: []string{fmt.Sprintf("Verdict on the log: %s.", a.Verdict)}}
+	s.Facts = []fact{
+		{"Sign", a.Sign.Words},
+		{"Operating point", fmt.Sprintf("input %s, output %s; standard deviations about it %s and %s",
+			words.Unit(words.Number(a.OperatingPoint.Input), u.Input), words.Unit(words.Number(a.OperatingPoint.Output), u.Output),
+			words.Unit(words.Number(a.Spread.Input), u.Input), words.Unit(words.Number(a.Spread.Output), u.Output))},
+		{"Pairing of columns", a.Pairing.Words},
+		{"Loop rate", a.LoopRate.Words},
+		{"From outside", a.Outside.Words},
+	}
+	if a.Law != nil {
+		s.Facts = append(s.Facts, fact{"Stopgap law", a.Law.Words})
+	}
+	s.Facts = append(s.Facts, fact{"Next step", a.NextStep})
+	for i, e := range in.Logs {
+		if i == shownLogs {
+			s.Lead = append(s.Lead, fmt.Sprintf("%s drawn of %d.", words.Count(shownLogs, "log"), len(in.Logs)))
+			break
+		}
+		s.Figures = append(s.Figures, logFigures(e, in.Rig)...)
+	}
+	flaws := table{Caption: "Flaws found in the log", Head: []string{"Flaw", "Column", "Count", "First line", "What", "Effect"}, Right: []bool{false, false, true, true, false, false}}
+	for _, f := range a.Flaws {
+		line := ""
+		if f.Line > 0 {
+			line = fmt.Sprint(f.Line)
+		}
+		flaws.Rows = append(flaws.Rows, []string{f.Name, f.Column, fmt.Sprint(f.Count), line, f.Detail, f.Effect})
+	}
+	if len(flaws.Rows) > 0 {
+		s.Tables = append(s.Tables, flaws)
+	} else {
+		s.Lead = append(s.Lead, "No flaw was found in its columns.")
+	}
+	return s, nil
+}
+
+func plantSection(in Input) (section, error) {
+	m, u := in.Model, in.Rig.Units
+	s := section{ID: "plant", Title: "Plant", Lead: []string{sentence("Verdict on the model: " + m.Verdict)}}
+	for _, w := range m.Warnings {
+		s.Lead = append(s.Lead, sentence(w))
+	}
+	if !hasPlant(m) {
+		s.Lead = append(s.Lead, "No plant can be given from this log.")
+		return s, nil
+	}
+	ratio := words.Ratio(u.Output, u.Input)
+	s.Facts = []fact{
+		{"Numerator", words.Polynomial(m.Plant.Numerator, "s")},
+		{"Denominator", words.Polynomial(m.Plant.Denominator, "s")},
+		{"Delay", words.Delay(m) + ", from the logged input to the output"},
+		{"Steady gain", "none: the plant integrates"},
+	}
+	if g := m.Gain.DC; g != nil {
+		s.Facts[3].Value = words.Estimate(g, ratio)
+	}
+	if g := m.Gain.HighFrequency; g != nil {
+		s.Facts = append(s.Facts, fact{"Leading gain", words.Leading(m, ratio)})
+	}
+	s.Facts = append(s.Facts,
+		fact{"Operating point", fmt.Sprintf("input %s, output %s", words.Unit(words.Number(m.OperatingPoint.Input), u.Input), words.Unit(words.Number(m.OperatingPoint.Output), u.Output))},
+		fact{"Explained", words.Share(m.Evidence.ExplainedShare) + " of the output's variance one step ahead, on rows not used in the fit"},
+		fact{"Residuals", words.Residuals(m)},
+		fact{"Length", words.Number(m.Evidence.Memories) + " predictor memories"},
+	)
+	s.Tables = append(s.Tables, rootTable("Poles, rad/s", m.Poles, "Unstable"))
+	if len(m.Zeros) > 0 {
+		s.Tables = append(s.Tables, rootTable("Zeros, rad/s", m.Zeros, "Right half-plane"))
+	}
+	methods := table{Caption: "The same poles by other ways of estimating", Head: []string{"Method", "Takes for granted", "Rightmost pole, rad/s", "Agrees", "Note"}, Right: []bool{false, false, true}}
+	for _, e := range m.Evidence.Methods {
+		methods.Rows = append(methods.Rows, []string{e.Name, words.Assumes[e.Name], words.Rightmost(e.Poles), words.YesNo(e.Agrees), e.Note})
+	}
+	if len(methods.Rows) > 0 {
+		s.Tables = append(s.Tables, methods)
+	}
+	structures := table{Caption: "Structures compared", Head: []string{"Poles", "Zeros", "Colour", "Delay", "BIC above best", ""}, Right: []bool{true, true, true, true, true}}
+	for _, c := range m.Evidence.Structures {
+		note := c.Verdict
+		if c.Chosen && note == "" {
+			note = "chosen"
+		}
+		structures.Rows = append(structures.Rows, []string{fmt.Sprint(c.Poles), fmt.Sprint(c.Zeros), fmt.Sprint(c.Colour), words.Seconds(c.Delay), words.Number(c.BIC), note})
+	}
+	if len(structures.Rows) > 0 {
+		s.Tables = append(s.Tables, structures)
+	}
+	s.Figures = append(s.Figures, fitFigures(m, in.Logs, u)...)
+	s.Figures = append(s.Figures, poleFigure(m))
+	if f, ok := methodFigure(m); ok {
+		s.Figures = append(s.Figures, f)
+	}
+	s.Figures = append(s.Figures, responseFigures(m, u, in.Seed)...)
+	return s, nil
+}
+
+func rootTable(caption string, roots []ident.Root, right string) table {
+	t := table{Caption: caption, Head: []string{"Value", "95 % interval", right, "Probability"}, Right: []bool{true, false, false, true}}
+	for _, r := range roots {
+		if r.Im < 0 {
+			continue
+		}
+		value, bounds := words.Root(r)
+		t.Rows = append(t.Rows, []string{value, bounds, words.Unstableness(r), words.Probability(r.ProbabilityUnstable)})
+	}
+	return t
+}
+
+func boundsSection(in Input) (section, error) {
+	if len(in.Loops.Bounds) == 0 {
+		return section{}, nil
+	}
+	s := section{ID: "bounds", Title: "What physics allows", Lead: []string{"Limits that no controller passes, on this plant with this actuator, delay and sample period."}}
+	t := table{Head: []string{"Bound", "No better than", "95 % over plants", "Asked", "In reach", "Source"}, Right: []bool{false, true, false, true}}
+	for _, b := range in.Loops.Bounds {
+		value, interval, ask := words.Bound(b)
+		t.Rows = append(t.Rows, []string{b.Name, value, interval, ask, words.YesNo(b.OK), b.Source})
+		if b.Advice != "" {
+			s.Lead = append(s.Lead, sentence(b.Name+": "+b.Advice))
+		}
+	}
+	s.Tables = []table{t}
+	return s, nil
+}
+
+func loopsSection(in Input) (section, error) {
+	l, u := in.Loops, in.Rig.Units
+	s := section{ID: "loops", Title: "Loops", Lead: []string{sentence("Verdict on the loops: " + l.Verdict)}}
+	for _, w := range l.Warnings {
+		s.Lead = append(s.Lead, sentence(w))
+	}
+	if !hasLoops(l) {
+		return s, nil
+	}
+	s.Code = l.Law
+	s.Facts = append(s.Facts, fact{"Operating point", fmt.Sprintf("u0 = %s, y0 = %s", words.Unit(words.Number(l.OperatingPoint.Input), u.Input), words.Unit(words.Number(l.OperatingPoint.Output), u.Output))})
+	if l.InputLimits != nil {
+		s.Facts = append(s.Facts, fact{"Input limits", words.Unit(words.Number(l.InputLimits[0])+" to "+words.Number(l.InputLimits[1]), u.Input)})
+	}
+	if l.OuterLimits != nil {
+		s.Facts = append(s.Facts, fact{"Outer limits", words.Unit(words.Number(l.OuterLimits[0])+" to "+words.Number(l.OuterLimits[1]), u.Output) + ", deviation"})
+	}
+	blocks := table{Caption: "Controllers, rounded; loops.json has all digits", Head: []string{"Block", "Form", "As designed, in s", fmt.Sprintf("As run every %s, in z", words.Seconds(l.SamplePeriod))}}
+	for _, b := range []struct {
+		name, form string
+		block      *design.Block
+	}{{"inner", l.InnerForm, l.Inner}, {"outer", l.OuterForm, l.Outer}, {"prefilter", "", l.Prefilter}} {
+		if b.block.IsOne() {
+			continue
+		}
+		continuous := ""
+		if c := b.block.Continuous; c != nil {
+			continuous = "(" + words.Polynomial(c.Numerator, "s") + ") / (" + words.Polynomial(c.Denominator, "s") + ")"
+		}
+		blocks.Rows = append(blocks.Rows, []string{b.name, b.form, continuous, words.Fraction(b.block.Discrete, "z^-")})
+	}
+	s.Tables = append(s.Tables, blocks)
+	forms := table{Caption: "What simplicity costs, on the worst of the tuning plants", Head: []string{"Loop", "Form", "Peak |S|", "Input noise, sd", ""}, Right: []bool{false, false, true, true}}
+	for _, f := range l.Forms {
+		mark := ""
+		if f.Chosen {
+			mark = "chosen"
+		}
+		forms.Rows = append(forms.Rows, []string{f.Loop, f.Form, words.Number(f.PeakSensitivity), words.Unit(words.Number(f.InputNoise), u.Input), mark})
+	}
+	if len(forms.Rows) > 0 {
+		s.Tables = append(s.Tables, forms)
+	}
+	return s, nil
+}
+
+func marginsSection(in Input) (section, error) {
+	l := in.Loops
+	if !hasLoops(l) {
+		return section{}, nil
+	}
+	s := section{ID: "margins", Title: "Margins"}
+	if l.Margins != nil {
+		s.Lead = []string{"Margins count at the plant input with both loops closed. The outer break alone looks better than the loop is."}
+		t := table{Caption: "Margins of the sampled loop, nominal plant", Head: []string{"Loop", "Gain times", "Phase", "Delay", "Peak |S|", "at, rad/s", "Gain one at, rad/s"}, Right: []bool{false, true, true, true, true, true, true}}
+		for _, m := range []struct {
+			name string
+			m    *design.Margins
+		}{{"plant input, both loops", l.Margins.PlantInput}, {"inner loop alone", l.Margins.InnerAlone}, {"outer break", l.Margins.OuterBreak}} {
+			if m.m != nil {
+				t.Rows = append(t.Rows, []string{m.name, strings.TrimPrefix(factors(m.m), "times "), orAny(m.m.PhaseDeg, func(x float64) string { return words.Brief(x) + "°" }),
+					orAny(m.m.Delay, words.Seconds), words.Brief(m.m.PeakSensitivity), words.Brief(m.m.PeakSensitivityAt), words.Brief(m.m.Crossover)})
+			}
+		}
+		s.Tables = []table{t}
+	}
+	curves, err := l.Sensitivity(in.Model, in.Rig, drawnSpectra, in.Seed)
+	if err != nil {
+		return s, err
+	}
+	s.Figures = sensitivityFigures(curves, in.Rig.Spec.PeakSensitivity)
+	return s, nil
+}
+
+func stepsSection(in Input) (section, error) {
+	l, u := in.Loops, in.Rig.Units
+	if !hasLoops(l) {
+		return section{}, nil
+	}
+	s := section{ID: "promise", Title: "Promise"}
+	if q := l.Promise; q != nil {
+		s.Lead = []string{fmt.Sprintf("%s were drawn afresh from the model, none of them used for tuning, and run in the sampled loop with its delay and limits. %d stay stable, %d meet the spec: at least %s of the plants that the data allow, with %g %% confidence.",
+			words.Count(q.Plants, "plant"), q.Stable, q.MeetSpec, words.Share(q.LowerBound), 100*q.Confidence)}
+		t := table{Caption: "Figures over the drawn plants", Head: []string{"Figure", "Nominal", "Worst", "Asked"}, Right: []bool{false, true, true, true}}
+		spec := in.Rig.Spec
+		add := func(name string, sp design.Spread, show func(float64) string, ask float64) {
+			text := "–"
+			if ask > 0 {
+				text = show(ask)
+			}
+			t.Rows = append(t.Rows, []string{name, show(sp.Nominal), show(sp.Worst), text})
+		}
+		input := func(x float64) string { return words.Unit(words.Number(x), u.Input) }
+		add("overshoot", q.Overshoot, words.Share, spec.Overshoot)
+		add("settling", q.Settling, words.Seconds, spec.Settling)
+		add("peak |S| at the plant input", q.PeakS, words.Number, spec.PeakSensitivity)
+		add("input noise, standard deviation", q.InputNoise, input, spec.InputNoise)
+		if q.KickPeak != nil {
+			add("output after the kick", *q.KickPeak, func(x float64) string { return words.Unit(words.Number(x), u.Output) }, spec.KickPeak)
+		}
+		s.Tables = append(s.Tables, t)
+		miss := table{Caption: "What was missed", Head: []string{"Figure", "Plants", "Worst", "Asked"}, Right: []bool{false, true, true, true}}
+		for _, m := range q.Misses {
+			miss.Rows = append(miss.Rows, []string{m.What, fmt.Sprint(m.Plants), words.Number(m.Worst), words.Number(m.Asked)})
+		}
+		if len(miss.Rows) > 0 {
+			s.Tables = append(s.Tables, miss)
+		}
+		s.Facts = []fact{
+			{"Largest step", words.Unit(words.Number(q.LargestStep), u.Output)},
+			{"Comes back from", words.Unit(words.Number(q.Recoverable), u.Output) + " off the operating point"},
+		}
+	}
+	r, err := l.StepResponses(in.Model, in.Rig, drawnSteps, in.Seed)
+	if err != nil {
+		return s, err
+	}
+	s.Figures = stepFigures(r, l, in.Rig.Spec, u)
+	return s, nil
+}
+
+func closureSection(in Input) (section, error) {
+	c, u := in.Loops.FirstClosure, in.Rig.Units
+	if c == nil {
+		return section{}, nil
+	}
+	s := section{ID: "closure", Title: "First closure", Steps: c.Order}
+	trip := func(name string, pair *[2]float64, unit string) {
+		if pair != nil {
+			s.Facts = append(s.Facts, fact{"Trip on the " + name, "outside " + words.Unit(words.Number(pair[0])+" to "+words.Number(pair[1]), unit)})
+		}
+	}
+	trip("output", c.Trip.Output, u.Output)
+	trip("input", c.Trip.Input, u.Input)
+	s.Facts = append(s.Facts, fact{"Expect on the traces", fmt.Sprintf("standard deviations near %s at the input and %s at the output",
+		words.Unit(words.Brief(c.ExpectedSD.Input), u.Input), words.Unit(words.Brief(c.ExpectedSD.Output), u.Output))})
+	for _, text := range c.Cautions {
+		s.Lead = append(s.Lead, sentence(text))
+	}
+	return s, nil
+}
+
+func originSection(in Input) (section, error) {
+	s := section{ID: "origin", Title: "Origin", Lead: []string{"The command that made this report:"}, Code: in.Command}
+	t := table{Caption: "Logs", Head: []string{"File", "Rows used", "of", "Segments", "SHA-256"}, Right: []bool{false, true, true, true}}
+	for _, l := range in.Model.Logs {
+		t.Rows = append(t.Rows, []string{l.File, fmt.Sprint(l.Used), fmt.Sprint(l.Rows), fmt.Sprint(l.Segments), l.SHA256})
+	}
+	s.Tables = []table{t}
+	s.Facts = []fact{{"Tool", in.Tool}, {"Seed", fmt.Sprint(in.Seed)}, {"Figures", fmt.Sprintf("%d drawn plants in step responses, %d behind sensitivity, %d behind the frequency response", drawnSteps, drawnSpectra, drawnResponse)}}
+	return s, nil
+}
