@@ -14,46 +14,50 @@ import (
 	"steadyrig/ident"
 )
 
-// designs of the test rigs, made once.
-var designs = sync.OnceValues(func() (map[string]*Loops, error) {
-	out := map[string]*Loops{}
+// designs of the test rigs, each made once, when it is first asked for.
+var designs = func() map[string]func() (*Loops, error) {
+	out := map[string]func() (*Loops, error){}
 	for _, r := range testRigs() {
-		l, err := Design(context.Background(), r.model(new(testing.T)), r.rig(), Options{Seed: 1})
-		if err != nil {
-			return nil, err
-		}
-		out[r.name] = l
+		out[r.name] = sync.OnceValues(func() (*Loops, error) {
+			return Design(context.Background(), r.model(new(testing.T)), r.rig(), Options{Seed: 1})
+		})
 	}
-	return out, nil
-})
+	return out
+}()
 
 func designed(t *testing.T, name string) *Loops {
 	t.Helper()
-	all, err := designs()
+	l, err := designs[name]()
 	if err != nil {
 		t.Fatal(err)
 	}
-	return all[name]
+	return l
+}
+
+// step simulates the spec's step, times sign, with lti.Run alone, over eight settling times.
+func (r testRig) step(t *testing.T, g lti.TF, law *lti.Law, sign float64) lti.Trace {
+	t.Helper()
+	ref := make([]float64, int(8*r.spec.Settling/r.period))
+	for k := range ref {
+		ref[k] = law.Y0 + sign*r.spec.Step
+	}
+	run := lti.Run{Plant: g, Period: r.period, ComputeDelay: r.compute, Law: law, Steps: len(ref), Reference: ref}
+	if r.output != nil {
+		run.Trip = *r.output
+	}
+	tr, err := run.Simulate()
+	if err != nil {
+		t.Fatal(err)
+	}
+	return tr
 }
 
 // meets simulates one plant with lti.Run alone and says whether it is held and meets overshoot and settling.
 func (r testRig) meets(t *testing.T, g lti.TF, law *lti.Law) (held, spec bool) {
 	t.Helper()
-	n := int(8 * r.spec.Settling / r.period)
-	ref := make([]float64, n)
 	held, spec = true, true
 	for _, sign := range []float64{1, -1} {
-		for k := range ref {
-			ref[k] = law.Y0 + sign*r.spec.Step
-		}
-		run := lti.Run{Plant: g, Period: r.period, ComputeDelay: r.compute, Law: law, Steps: n, Reference: ref}
-		if r.output != nil {
-			run.Trip = *r.output
-		}
-		tr, err := run.Simulate()
-		if err != nil {
-			t.Fatal(err)
-		}
+		tr := r.step(t, g, law, sign)
 		if tr.Tripped >= 0 {
 			return false, false
 		}
@@ -63,7 +67,7 @@ func (r testRig) meets(t *testing.T, g lti.TF, law *lti.Law) (held, spec bool) {
 				spec = false
 			}
 		}
-		if math.Abs(tr.YTrue[n-1]-ref[0]) > 0.01*r.spec.Step {
+		if math.Abs(tr.YTrue[len(tr.YTrue)-1]-law.Y0-sign*r.spec.Step) > 0.01*r.spec.Step {
 			held = false
 		}
 	}
