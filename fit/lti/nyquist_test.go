@@ -136,7 +136,7 @@ func TestCountsOnRandomLoops(t *testing.T) {
 			return Poly{math.Exp(2*rng.NormFloat64()) * float64(2*rng.IntN(2)-1), 1}
 		}
 	}
-	held := 0
+	held, delays := 0, 0
 	for trial := range 400 {
 		l := TF{Num: Poly{math.Exp(2*rng.NormFloat64()) * float64(2*rng.IntN(2)-1)}, Den: Poly{1}}
 		var poles []complex128
@@ -191,6 +191,25 @@ func TestCountsOnRandomLoops(t *testing.T) {
 				t.Errorf("trial %d: %d unstable roots at a gain of %g, margins %g to %g: %v", trial, got, c.k, m.GainDown, m.GainUp, l)
 			}
 		}
+		// Likewise the delay margin.
+		if l.RelDegree() == 0 || math.IsInf(m.Delay, 1) || m.Delay*m.Crossover > 1e3 {
+			continue
+		}
+		delays++
+		for _, c := range []struct {
+			factor float64
+			held   bool
+		}{{0.99, true}, {1.01, false}} {
+			d := l
+			d.Delay = c.factor * m.Delay
+			n, err := NyquistCount(d.At, poles, 0)
+			if err != nil || (n.Closed == 0) != c.held {
+				t.Errorf("trial %d: %+v (%v) at %g times the delay margin %g: %v", trial, n, err, c.factor, m.Delay, l)
+			}
+		}
+	}
+	if delays < 30 {
+		t.Errorf("only %d delay margins", delays)
 	}
 	if held < 50 {
 		t.Errorf("only %d loops were held: the test has lost its point", held)

@@ -3,6 +3,7 @@ package lti
 import (
 	"math"
 	"math/cmplx"
+	"math/rand/v2"
 	"testing"
 
 	"gonum.org/v1/gonum/mat"
@@ -174,5 +175,64 @@ func TestPolesOfFastSampledLoop(t *testing.T) {
 	}
 	if !loops.Stable() {
 		t.Errorf("called unstable: %v", got)
+	}
+}
+
+// Random unstable plants with delay under random laws: eigenvalues of the blocks, the margins' verdict and Nyquist's
+// count must agree, sampled slowly and fast; and a loop called stable must come to rest in the simulator, one called
+// unstable must not.
+func TestVerdictsAgree(t *testing.T) {
+	rng := rand.New(rand.NewPCG(1, 2))
+	held, lost := 0, 0
+	for trial := range 150 {
+		p := math.Exp(rng.NormFloat64())
+		h := 0.3 / p * math.Exp(-3*rng.Float64())
+		g := TF{Num: Poly{p * p}, Den: Poly{-p * p, 0, 1}.Mul(Poly{10 * p, 1}).Scale(0.1 / p), Delay: 2 * h * rng.Float64()}
+		kp, td := 4*rng.Float64(), rng.Float64()/p
+		outer := Tustin(TF{Num: Poly{0.3 * p, 0.5 * rng.Float64()}, Den: Poly{0, 1}}, h)
+		law := &Law{Inner: Tustin(TF{Num: Poly{kp, kp * td}, Den: Poly{1, 0.05 / p}}, h), Outer: &outer}
+		loops, err := NewTwoLoops(g, 0, law)
+		if err != nil {
+			t.Fatal(err)
+		}
+		largest := 0.0
+		for _, z := range loops.Poles() {
+			largest = math.Max(largest, cmplx.Abs(z))
+		}
+		stable := loops.Stable()
+		poles := append(append(loops.Plant.Poles(), law.Inner.Poles()...), 1)
+		unstable := 0
+		for _, z := range poles[:len(poles)-1] {
+			if cmplx.Abs(z) > 1 {
+				unstable++
+			}
+		}
+		if m := LoopMargins(loops.LoopAtInput, 1e-3*p, math.Pi/h, unstable, 0); m.StableNominal != stable {
+			t.Errorf("trial %d: margins say %v, eigenvalues %v (largest %.6f)", trial, m.StableNominal, stable, largest)
+		}
+		in, k1, k2 := loops.Plant, law.Inner.SS(), outer.SS()
+		n, err := NyquistCount(func(z complex128) complex128 { return in.AtPoint(z) * k1.AtPoint(z) * (1 + k2.AtPoint(z)) }, poles, h)
+		if err != nil || (n.Closed == 0) != stable {
+			t.Errorf("trial %d: Nyquist counts %+v (%v), eigenvalues say %v", trial, n, err, stable)
+		}
+		if math.Abs(largest-1) < 0.003 {
+			continue // the run below would have to be very long
+		}
+		tr, err := Run{Plant: g, Period: h, Law: law, Steps: 6000, OutputOffset: 1e-3, Trip: [2]float64{-1e3, 1e3}}.Simulate()
+		if err != nil {
+			t.Fatal(err)
+		}
+		end := math.Abs(tr.YTrue[len(tr.YTrue)-1])
+		if came := tr.Tripped < 0 && end < 1e-6; came != stable {
+			t.Errorf("trial %d: ends at %g, tripped at %d, eigenvalues say stable %v (largest %.6f)", trial, end, tr.Tripped, stable, largest)
+		}
+		if stable {
+			held++
+		} else {
+			lost++
+		}
+	}
+	if held < 20 || lost < 20 {
+		t.Errorf("%d held and %d lost: the test has lost its point", held, lost)
 	}
 }
