@@ -24,11 +24,13 @@ const (
 // How hard a structure is fitted while it is only compared with others, and
 // how hard the winner.
 const (
-	glanceSteps = 4
-	compareTol  = 1e-5
-	compareStep = 25
-	finalTol    = 1e-11
-	finalSteps  = 200
+	glanceStarts = 4
+	glanceSteps  = 4
+	sameOptimum  = 1e-7 // relative difference of two sums of squares
+	compareTol   = 1e-5
+	compareStep  = 25
+	finalTol     = 1e-11
+	finalSteps   = 200
 )
 
 // structure is a candidate: numbers of poles and zeros of the plant, poles of
@@ -253,35 +255,36 @@ func (c *chooser) try(ctx context.Context, list []structure, near *fit.Predictio
 	return nil
 }
 
-// fit finds the best fit of one structure: short searches from every start,
-// then the two best to the end.
+// fit finds the best fit of one structure in rounds: all starts as they are,
+// the best few after some steps, the best two to the end.
 func (c *chooser) fit(s structure, near *fit.Prediction) *candidate {
 	cand := &candidate{structure: s, bic: math.Inf(1)}
 	starts := c.starts(s)
 	if near != nil {
 		starts = append(starts, c.moved(near, s)...)
 	}
-	var short []*fit.Prediction
-	for _, start := range starts {
-		if start == nil {
-			continue
-		}
-		if f, err := c.p.Fit(start, compareTol, glanceSteps); err == nil {
-			short = append(short, f)
-		}
-	}
-	slices.SortStableFunc(short, func(a, b *fit.Prediction) int { return cmp.Compare(a.RSS, b.RSS) })
-	for _, f := range short[:min(2, len(short))] {
-		full := f
-		if !f.Converged {
-			var err error
-			if full, err = c.p.Fit(f, compareTol, compareStep); err != nil {
+	round := func(list []*fit.Prediction, keep, steps int) []*fit.Prediction {
+		var out []*fit.Prediction
+		for _, m := range list {
+			if m == nil {
 				continue
 			}
+			if steps > 0 && m.Converged {
+				out = append(out, m)
+			} else if f, err := c.p.Fit(m, compareTol, steps); err == nil {
+				out = append(out, f)
+			}
 		}
-		if b := full.BIC(); b < cand.bic {
-			cand.fit, cand.bic = full, b
-		}
+		slices.SortStableFunc(out, func(a, b *fit.Prediction) int { return cmp.Compare(a.RSS, b.RSS) })
+		return out[:min(keep, len(out))]
+	}
+	list := round(starts, glanceStarts, 0)
+	list = round(list, 2, glanceSteps)
+	if len(list) == 2 && list[1].RSS-list[0].RSS < sameOptimum*list[0].RSS {
+		list = list[:1]
+	}
+	if list = round(list, 1, compareStep); len(list) > 0 {
+		cand.fit, cand.bic = list[0], list[0].BIC()
 	}
 	return cand
 }
