@@ -301,10 +301,9 @@ func (l *log) stretches(f func(from, to int)) {
 // findSpikes marks single samples of the output far off their neighbours on both sides.
 func (l *log) findSpikes() {
 	const (
-		far       = 15  // robust standard deviations off the median of four neighbours
-		alone     = 5   // times as far as the neighbours are off theirs
-		agree     = 0.3 // of that distance may lie between the two neighbours
-		flicker   = 5   // steps of a coarse grid that are no spike yet
+		far       = 15 // robust standard deviations off the median of four neighbours
+		alone     = 5  // times as far as the neighbours are off theirs
+		flicker   = 5  // steps of a coarse grid that are no spike yet
 		toMeasure = 100_000
 	)
 	y := l.columns[l.y]
@@ -339,7 +338,7 @@ func (l *log) findSpikes() {
 	l.runs(func(from, to int) {
 		for k := from + 4; k+4 < to; k++ {
 			e := math.Abs(off(k))
-			if e < bound || math.Abs(y[k+1]-y[k-1]) > agree*e {
+			if e < bound {
 				continue
 			}
 			rest := max(math.Abs(off(k-2)), math.Abs(off(k-1)), math.Abs(off(k+1)), math.Abs(off(k+2)))

@@ -104,6 +104,20 @@ func TestFlawCoarseStamps(t *testing.T) {
 	}
 }
 
+// Equal rows under one coarse stamp are different samples.
+func TestCoarseStampsKeepEqualRows(t *testing.T) {
+	p := newPlainLog(1000)
+	for k := range p.t {
+		p.t[k] = math.Floor(float64(k)/100*10) / 10
+		p.u[k], p.y[k] = float64(k/2%7), math.Round(5*p.y[k])
+	}
+	g := plainRig()
+	g.Log.SamplePeriod = 0.01
+	if exp := mustRead(t, p.csv(), g); exp.Rows != 1000 || exp.Used != 1000 {
+		t.Errorf("%d of %d rows used", exp.Used, exp.Rows)
+	}
+}
+
 func TestFlawRepeatedStamp(t *testing.T) {
 	p := newPlainLog(300)
 	same := spoil(p.csv(), 102, func(s string) string { return s + "\n" + s })
@@ -296,6 +310,17 @@ func TestFlawSaturated(t *testing.T) {
 	}
 }
 
+// An input that often reaches its extremes without staying there is not saturated.
+func TestPeaksAreNotSaturation(t *testing.T) {
+	p := newPlainLog(2000)
+	for k := range p.u {
+		p.u[k] = math.Abs(float64(k%60)-30) + 0.001*float64(k%7)
+	}
+	if exp := mustRead(t, p.csv(), plainRig()); slices.Contains(flawNames(exp), FlawSaturated) {
+		t.Errorf("%+v", findFlaw(t, exp, FlawSaturated))
+	}
+}
+
 func TestFlawBeyondLimits(t *testing.T) {
 	p := newPlainLog(1000)
 	p.u[300], p.u[700] = 5, -7
@@ -338,6 +363,30 @@ func TestFlawTrip(t *testing.T) {
 	want := Flaw{FlawTrip, "y", 1, 602, "output left [limits] output [-2, 2]", "400 rows from there on not used"}
 	if got := findFlaw(t, exp, FlawTrip); got != want || exp.Used != 600 || len(exp.Segments) != 1 {
 		t.Errorf("got  %+v\nwant %+v\n%d rows used", got, want, exp.Used)
+	}
+}
+
+// After a trip the output may pass through its limits, and may lie between them with the actuator off.
+func TestNoRestart(t *testing.T) {
+	for _, c := range []struct {
+		name   string
+		from   int
+		moving bool
+	}{{"too short", 1000 - restartRows + 1, true}, {"actuator off", 700, false}} {
+		p := newPlainLog(1000)
+		for k := 600; k < 1000; k++ {
+			if !c.moving {
+				p.u[k] = 0
+			}
+			if k < c.from {
+				p.y[k] = 9 + 0.01*float64(k)
+			}
+		}
+		g := plainRig()
+		g.Limits.Output = &[2]float64{-2, 2}
+		if exp := mustRead(t, p.csv(), g); exp.Used != 600 {
+			t.Errorf("%s: %d rows used, want 600", c.name, exp.Used)
+		}
 	}
 }
 
@@ -432,6 +481,17 @@ func TestFlawDrift(t *testing.T) {
 	exp := mustRead(t, p.csv(), plainRig())
 	if f := findFlaw(t, exp, FlawDrift); f.Column != "y" || !strings.HasPrefix(f.Detail, "the mean moves by 3") && !strings.HasPrefix(f.Detail, "the mean moves by 2.9") || len(exp.Flaws) != 1 {
 		t.Errorf("%+v, flaws %q", f, flawNames(exp))
+	}
+}
+
+// A drift far below the noise is none, however long the log that makes it sure.
+func TestSmallDriftIsNone(t *testing.T) {
+	p := newPlainLog(100_000)
+	for k := range p.y {
+		p.y[k] += 0.08 * float64(k) / 100_000
+	}
+	if exp := mustRead(t, p.csv(), plainRig()); len(exp.Flaws) > 0 {
+		t.Errorf("%+v", exp.Flaws)
 	}
 }
 

@@ -47,6 +47,22 @@ func TestHeaderWithoutNames(t *testing.T) {
 	}
 }
 
+// Numbers that rise from row to row are stamps.
+func TestHeaderRisingColumn(t *testing.T) {
+	p := newPlainLog(100)
+	var b strings.Builder
+	for k := range p.t {
+		b.WriteString(text(p.u[k]) + " " + text(p.y[k]) + " " + text(p.t[k]) + "\n")
+	}
+	h, err := Header(strings.NewReader(b.String()), "x.dat")
+	if err != nil {
+		t.Fatal(err)
+	}
+	if h.Time != "c3" || h.Input != "c1" || h.Output != "c2" || h.Period != 0.01 {
+		t.Errorf("guessed time %q, input %q, output %q, period %v", h.Time, h.Input, h.Output, h.Period)
+	}
+}
+
 func TestHeaderMeasured(t *testing.T) {
 	f, err := os.Open(filepath.Join(datasets, "maglev_levitador/dataset_multiescalon_20251217_210203.txt"))
 	if err != nil {

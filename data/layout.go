@@ -273,6 +273,18 @@ func (l *layout) try(lines []headLine) (score, first int) {
 	if usual == 0 {
 		return 0, -1
 	}
+	texts := map[int]int{} // rows by number of cells of text
+	for _, r := range rows {
+		if r.cells == usual && r.number > 1 {
+			texts[r.text]++
+		}
+	}
+	usualText := 0
+	for n, c := range texts {
+		if c > texts[usualText] || c == texts[usualText] && n < usualText {
+			usualText = n
+		}
+	}
 	first = -1
 	for i, r := range rows {
 		if r.cells != usual || r.number < 2 {
@@ -280,7 +292,7 @@ func (l *layout) try(lines []headLine) (score, first int) {
 		}
 		score += r.number - 2*r.text
 		alone := i+1 < len(rows) && (rows[i+1].cells != usual || rows[i+1].number < 2)
-		if first < 0 && !alone {
+		if first < 0 && !alone && r.text <= usualText {
 			first = r.index
 		}
 	}

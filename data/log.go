@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"io"
 	"io/fs"
+	"slices"
 )
 
 // MinSegment is the number of rows below which a segment is dropped: its own initial state and constant would take
@@ -94,6 +95,7 @@ const (
 // choose finds the columns that the rig file names.
 func (l *log) choose(lay *layout) (fields []int, stamps int, err error) {
 	stamps = -1
+	var parts []string
 	for _, c := range []struct {
 		key, name string
 		index     *int
@@ -111,17 +113,15 @@ func (l *log) choose(lay *layout) (fields []int, stamps int, err error) {
 			e.Err = fmt.Errorf("[log] %s %s (%s): %w", c.key, quote(c.name), l.rig.where("log."+c.key), e.Err)
 			return nil, 0, e
 		}
-		for i, g := range fields {
-			if f == g {
-				return nil, 0, &ParseError{Line: lay.header, Err: fmt.Errorf("column %s has two parts in [log]: %s and another", quote(lay.names[f]), c.key),
-					Hint: fmt.Sprintf("each part needs a column of its own (column %d)", fields[i]+1)}
-			}
+		if i := slices.Index(fields, f); i >= 0 {
+			return nil, 0, &ParseError{Line: lay.header, Hint: "each part needs a column of its own",
+				Err: fmt.Errorf("[log] %s and %s (%s) are both column %d, %s", parts[i], c.key, l.rig.where("log."+parts[i]), f+1, quote(lay.names[f]))}
 		}
 		*c.index = len(fields)
 		if c.key == "time" {
 			stamps = len(fields)
 		}
-		fields = append(fields, f)
+		fields, parts = append(fields, f), append(parts, c.key)
 	}
 	l.fields = fields
 	return fields, stamps, nil

@@ -138,6 +138,7 @@ func TestReadRigDefects(t *testing.T) {
 		{"spec without band", "band              = 0.02\n", "", `rig.toml: line 36: [spec] has no band; add it or take the table out`},
 		{"kick without peak", "kick_peak         = 0.4\n", "", `rig.toml: line 36: [spec] has only one of kick and kick_peak; kick says how hard the push is, kick_peak how far it may move the output: give both or neither`},
 		{"overshoot in percent", `overshoot         = 0.10`, `overshoot = 10`, `rig.toml: line 38: spec.overshoot is 10; a fraction of the step, 0 to 1: write 0.10 for 10 %`},
+		{"band in percent", `band              = 0.02`, `band = 2`, `rig.toml: line 40: spec.band is 2; a fraction of the step, below 1: write 0.02 for 2 %`},
 		{"peak below one", `peak_sensitivity  = 2.0`, `peak_sensitivity = 0.9`, `rig.toml: line 41: spec.peak_sensitivity is 0.9; a factor above 1, as a loop has to have a peak: 1.4 is calm, 2 is usual`},
 		{"unknown hold", `"zero-order"`, `"linear"`, `rig.toml: line 28: loop.hold is "linear"; write "zero-order" or "band-limited"`},
 		{"unknown row", `"after"`, `"late"`, `rig.toml: line 9: log.input_row is "late"; write "after" or "before"`},
