@@ -15,6 +15,8 @@
 //	u, y      input and output of the plant                    the log's       absolute in Law and Run
 //	v         input of the inner loop                          output's        deviation from Y0
 //	U0, Y0    operating point                                  the log's
+//	A, B, C, D  (noise) A y = B u + (C/D) e, monic in z^-1  -               C, D stable; A the plant's
+//	e         innovation: white, the one-step prediction error  output's
 //	S, T      1/(1+L), L/(1+L), with negative feedback         -
 //
 // # Invariants
@@ -24,6 +26,9 @@
 //   - A mistake of the caller (shape, sign of a period, improper TF) panics with a constant; numbers that come from
 //     data are refused with an error.
 //   - Row k of a Run: y[k] is read, u[k] is computed from it and acts from then on (after the compute delay).
+//   - Poles on the imaginary axis (unit circle) are passed on their unstable side: they count as stable open-loop poles
+//     in Nyquist's criterion, and a closed-loop pole on the circle counts as unstable.
+//   - A Trace ends with the step that tripped.
 //   - Simulator and Run.Simulate are the same code and give the same bits.
 //
 // Not promised: the last digits of a DTF's poles near z = 1 (see DTF), roots of multiplicity m beyond eps^(1/m).

@@ -156,6 +156,12 @@ func TestPeak(t *testing.T) {
 			t.Errorf("z %g: %.12g at %g, want %.12g", c.z, got, at, c.want)
 		}
 	}
+	// A resonance so narrow that no point of the grid shows how high it is, far down the skirt of a broad one: exactly at
+	// s = 10i the value is 30i/2e-4i/(-99 + 2i).
+	g := TF{Num: Poly{100, 3, 1}, Den: Poly{1, 0.2, 1}.Mul(Poly{100, 2e-5, 1})}
+	if got, at := Peak(jw(g), 1e-2, 137); !near(got*math.Hypot(99, 2)/1.5e5, 1, 1e-6) || !near(at, 10, 1e-5) {
+		t.Errorf("narrow and far down: %g at %g", got, at)
+	}
 	// As a peak of |S|: closed loop with that damping, L = (1 - …)/… such that 1 + L = (s²+2zs+1)/(s+1)².
 	const z = 1e-4
 	l := TF{Num: Poly{0, 2*z - 2}, Den: Poly{1, 2, 1}}

@@ -32,6 +32,11 @@ func TestInterconnections(t *testing.T) {
 			}
 		}
 	}
+	// A block that feeds itself at once: y = 2 (r + y/4) = 4 r.
+	one := mat.NewDense(1, 1, []float64{1})
+	if got := Connect([]SS{{D: mat.NewDense(1, 1, []float64{2})}}, mat.NewDense(1, 1, []float64{0.25}), one, one); got.D.At(0, 0) != 4 {
+		t.Errorf("self-loop: %g, want 4", got.D.At(0, 0))
+	}
 	tf := Series(a.SS(), b.SS()).TF()
 	wantPoly(t, "den", tf.Den, a.Den.Mul(b.Den), 1e-13)
 	wantPoly(t, "num", tf.Num.Trim()[:3], a.Num.Mul(b.Num), 1e-13)
@@ -83,6 +88,15 @@ func TestTwoLoopsClosed(t *testing.T) {
 		loops, err := NewTwoLoops(g, 0.005, &Law{Inner: inner, Outer: c.outer, Prefilter: c.pre})
 		if err != nil {
 			t.Fatal(err)
+		}
+		whole := g
+		whole.Delay = 0.03 // the plant's and the computer's
+		sampled, err := ZOHTF(whole, h)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if p, q := loops.Plant.At(4), sampled.At(4); cmplx.Abs(p-q) > 1e-11*cmplx.Abs(q) {
+			t.Errorf("%s: plant %v, want %v", c.name, p, q)
 		}
 		closed := loops.Closed()
 		for _, w := range []float64{0.3, 4, 60} {
