@@ -264,12 +264,7 @@ func (l *layout) try(lines []headLine) (score, first int) {
 			}
 		}
 	}
-	usual := 0
-	for n, c := range count {
-		if c > count[usual] || c == count[usual] && n > usual {
-			usual = n
-		}
-	}
+	usual := commonest(count)
 	if usual == 0 {
 		return 0, -1
 	}
@@ -279,12 +274,7 @@ func (l *layout) try(lines []headLine) (score, first int) {
 			texts[r.text]++
 		}
 	}
-	usualText := 0
-	for n, c := range texts {
-		if c > texts[usualText] || c == texts[usualText] && n < usualText {
-			usualText = n
-		}
-	}
+	usualText := commonest(texts)
 	first = -1
 	for i, r := range rows {
 		if r.cells != usual || r.number < 2 {
@@ -310,6 +300,17 @@ func (l *layout) try(lines []headLine) (score, first int) {
 	}
 	l.names = make([]string, usual)
 	return score, first
+}
+
+// commonest returns the key with the largest count, the larger key of two; 0 of none.
+func commonest(count map[int]int) int {
+	best := 0
+	for key, n := range count {
+		if n > count[best] || n == count[best] && key > best {
+			best = key
+		}
+	}
+	return best
 }
 
 // findNames finds the header, the units row and the first row of numbers, given a line that certainly is one.
