@@ -15,8 +15,8 @@
 //	u, y      input and output of the plant                    the log's       absolute in Law and Run
 //	v         input of the inner loop                          output's        deviation from Y0
 //	U0, Y0    operating point                                  the log's
-//	A, B, C, D  (noise) A y = B u + (C/D) e, monic in z^-1  -               C, D stable; A the plant's
-//	e         innovation: white, the one-step prediction error  output's
+//	C/D       noise shape, A y = B u + (C/D) e, monic in z^-1  -               stable; A the plant's denominator
+//	e         innovation: white, one-step prediction error     output's
 //	S, T      1/(1+L), L/(1+L), with negative feedback         -
 //
 // # Invariants

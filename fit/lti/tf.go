@@ -43,7 +43,7 @@ func (g TF) Mul(h TF) TF {
 	return TF{Num: g.Num.Mul(h.Num), Den: g.Den.Mul(h.Den), Delay: g.Delay + h.Delay}
 }
 
-// UnstablePoles counts the poles with real part > tol.
+// UnstablePoles counts the poles with real part > tol, rad/s.
 func (g TF) UnstablePoles(tol float64) int {
 	n := 0
 	for _, p := range g.Poles() {
@@ -143,49 +143,32 @@ func (g DTF) inZ() (num, den Poly) {
 	return num, den
 }
 
-// rootsNear1 returns the roots of p(z) computed about z = 1.
-func rootsNear1(p Poly) []complex128 {
-	r := p.Trim().shift(1).Roots()
-	for i := range r {
-		r[i]++
-	}
-	return r
-}
-
 // Poles returns the poles in the z-plane, those of pure delays (z = 0) included.
 func (g DTF) Poles() []complex128 {
-	num, den := g.trimmed().inZ()
-	zeros := 0 // common zeros at z = 0 are neither poles nor zeros
-	for zeros < len(den) && den[zeros] == 0 && num[zeros] == 0 {
-		zeros++
-	}
-	at0 := 0
-	den = den[zeros:]
-	for len(den) > 0 && den[0] == 0 {
-		den = den[1:]
-		at0++
-	}
-	r := append(make([]complex128, at0), rootsNear1(den)...)
-	sortRoots(r)
-	return r
+	_, den := g.trimmed().inZ()
+	return atZeroAndNear1(den)
 }
 
 // Zeros returns the zeros in the z-plane.
 func (g DTF) Zeros() []complex128 {
-	num, den := g.trimmed().inZ()
-	for len(num) > 0 && num[0] == 0 && den[0] == 0 {
-		num, den = num[1:], den[1:]
-	}
-	num = num.Trim()
-	if len(num) == 0 {
+	num, _ := g.trimmed().inZ()
+	if num = num.Trim(); len(num) == 0 {
 		return nil
 	}
-	at0 := 0
-	for num[0] == 0 {
-		num = num[1:]
-		at0++
+	return atZeroAndNear1(num)
+}
+
+// atZeroAndNear1 returns the roots of p(z): those at 0 exactly, the others computed about z = 1. p has a highest
+// coefficient other than 0.
+func atZeroAndNear1(p Poly) []complex128 {
+	var r []complex128
+	for p[0] == 0 {
+		p = p[1:]
+		r = append(r, 0)
 	}
-	r := append(make([]complex128, at0), rootsNear1(num)...)
+	for _, x := range p.Trim().shift(1).Roots() {
+		r = append(r, x+1)
+	}
 	sortRoots(r)
 	return r
 }

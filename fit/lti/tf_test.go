@@ -18,6 +18,9 @@ func TestTFValues(t *testing.T) {
 	if got, want := g.At(s), (s+2)/((s-1)*(s+3))*cmplx.Exp(-0.2*s); cmplx.Abs(got-want) > 1e-15 {
 		t.Errorf("value %v, want %v", got, want)
 	}
+	if a, b := g.UnstablePoles(0), g.UnstablePoles(1.5); a != 1 || b != 0 {
+		t.Errorf("%d unstable poles, %d beyond 1.5", a, b)
+	}
 	z := g.ZPK()
 	if len(z.Zeros) != 1 || !near(real(z.Zeros[0]), -2, 1e-15) || !near(real(z.Poles[1]), 1, 1e-15) || z.Gain != 1 {
 		t.Errorf("zpk %v", z)
