@@ -1,9 +1,11 @@
 package fit
 
 import (
+	"cmp"
 	"errors"
 	"fmt"
 	"math"
+	"slices"
 
 	"gonum.org/v1/gonum/floats"
 	"gonum.org/v1/gonum/mat"
@@ -21,6 +23,7 @@ const (
 	weightedSteps = 5
 	searchSteps   = 50
 	searchGain    = 1e-6 // of the misfit, below which the search ends: a thousandth of a deviation
+	plausible     = 3    // deviations of chi-squared above its mean, up to which a minimum is not doubted
 )
 
 // NullSpaceResult is a model with how well it agrees with the long ARX that it was taken from.
@@ -37,9 +40,10 @@ type NullSpaceResult struct {
 // A/C and B/C of the short one, C A_long - A and C B_long - B vanish up to the errors of A_long and B_long, and are linear
 // in the unknowns; least squares weighted by the inverse of their covariance, which depends on C, is repeated with the C
 // found. Galrinho, Rojas & Hjalmarsson, Parametric identification using weighted null-space fitting, IEEE Trans. Automatic
-// Control 64 (2019) 2798-2813. From the step with the least misfit a damped Gauss-Newton search goes on to the least
-// misfit of all, the weighted distance between A/C, B/C and the long model: Söderström, Stoica & Friedlander, An indirect
-// prediction error method for system identification, Automatica 27 (1991) 183-188.
+// Control 64 (2019) 2798-2813. From the step with the least misfit, and from the others where that ends in a misfit too
+// great for chance, a damped Gauss-Newton search goes on to the least misfit of all, the weighted distance between A/C, B/C
+// and the long model: Söderström, Stoica & Friedlander, An indirect prediction error method for system identification,
+// Automatica 27 (1991) 183-188.
 //
 // Both are asymptotically efficient if the order of the ARX grows with the data. The zeros of C are kept inside the unit
 // circle by reflection; A may be unstable, since A/C and B/C are stable all the same. The model must come from FitARX,
@@ -63,15 +67,26 @@ func NullSpace(m *ARX, opt NullSpaceOptions) (*NullSpaceResult, error) {
 		return nil, errors.New("null-space fitting: the ARX model leaves no residuals")
 	}
 	f := nullSpace{m: m, opt: opt, na: na, nb: nb}
-	best, err := f.weighted()
+	starts, err := f.weighted()
 	if err != nil {
 		return nil, fmt.Errorf("null-space fitting: %w", err)
 	}
-	return f.search(best), nil
+	slices.SortStableFunc(starts, func(a, b *NullSpaceResult) int { return cmp.Compare(a.Misfit, b.Misfit) })
+	best := f.search(starts[0])
+	for _, s := range starts[1:] {
+		df := float64(best.DF)
+		if best.Misfit < df+plausible*math.Sqrt(2*df) {
+			break
+		}
+		if r := f.search(s); r.Misfit < best.Misfit {
+			best = r
+		}
+	}
+	return best, nil
 }
 
-// weighted takes the steps of null-space fitting proper, the first without weighting for C, and returns the best.
-func (f *nullSpace) weighted() (best *NullSpaceResult, err error) {
+// weighted takes the steps of null-space fitting proper, the first without weighting for C, and returns them all.
+func (f *nullSpace) weighted() (steps []*NullSpaceResult, err error) {
 	c := []float64{1}
 	long := append([]float64{0}, f.m.A[1:]...) // the leading one is no unknown
 	for range 1 + weightedSteps {
@@ -86,18 +101,15 @@ func (f *nullSpace) weighted() (best *NullSpaceResult, err error) {
 		if r == nil {
 			break
 		}
-		if best == nil || r.Misfit < best.Misfit {
-			best = r
-		}
-		c = r.C
+		steps, c = append(steps, r), r.C
 	}
-	if best == nil && err == nil {
+	if len(steps) > 0 {
+		return steps, nil
+	}
+	if err == nil {
 		err = errors.New("no finite model found")
 	}
-	if best != nil {
-		err = nil
-	}
-	return best, err
+	return nil, err
 }
 
 // search minimises the misfit from r. The derivatives of A/C and B/C are the columns of the weighted step with A/C and

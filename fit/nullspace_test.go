@@ -2,6 +2,7 @@ package fit_test
 
 import (
 	"math"
+	"math/cmplx"
 	"testing"
 
 	"steadyrig/fit"
@@ -106,6 +107,41 @@ func TestDiscrepancyPredictsResiduals(t *testing.T) {
 		// Of the difference from the long model's RSS, the parts of e that depend on more than 60 samples (0.6^60) and the
 		// chance of the regressors are left.
 		near(t, "RSS beyond that of the long model", m.Variance*long, rss-m.RSS, 0.02)
+	}
+}
+
+// On short records the start is bad and full steps overshoot: the search must still end at a least misfit, which the truth
+// cannot undercut.
+func TestNullSpaceSearchEndsAtLeastMisfit(t *testing.T) {
+	square := func(m *fit.ARX, d *fit.Discrete) (s float64) {
+		for _, v := range m.Discrepancy(d) {
+			s += v * v
+		}
+		return s
+	}
+	for i, rig := range fittest.Rigs() {
+		truth := rig.Truth()
+		n := len(truth.A) - 1
+		for k := range 40 {
+			u, y := rig.Record(400, uint64(30+i), uint64(k))
+			m, err := fit.FitARX([]fit.Record{{U: u, Y: y}}, fit.ARXOptions{NA: 25, NB: 25, Delay: 1})
+			if err != nil {
+				t.Fatal(err)
+			}
+			r, err := fit.NullSpace(m, fit.NullSpaceOptions{NA: n, NB: n, NC: n})
+			if err != nil {
+				t.Fatal(err)
+			}
+			near(t, "misfit", square(m, &r.Discrete), r.Misfit, 1e-9)
+			for _, z := range r.NoiseZeros() {
+				if !(cmplx.Abs(z) < 1) {
+					t.Errorf("%s, record %d: noise zero %v", rig.Name, k, z)
+				}
+			}
+			if best := square(m, &fit.Discrete{A: truth.A, B: truth.B, C: truth.C}); !(r.Misfit <= best) {
+				t.Errorf("%s, record %d: misfit %.2f after %d steps, that of the truth is %.2f", rig.Name, k, r.Misfit, r.Steps, best)
+			}
+		}
 	}
 }
 
