@@ -33,6 +33,7 @@ func TestRoots(t *testing.T) {
 		{"linear", Poly{-3, 2}, []complex128{1.5}, 0},
 		{"zero roots", Poly{0, 0, 6, -5, 1}, []complex128{0, 0, 2, 3}, 1e-15},
 		{"quadratic that cancels", Poly{1, -1e8, 1}, []complex128{1e-8, 1e8}, 1e-16},
+		{"quadratic that cancels on the left", Poly{1, 1e8, 1}, []complex128{-1e8, -1e-8}, 1e-16},
 		{"pair", Poly{13, -4, 1}, []complex128{complex(2, -3), complex(2, 3)}, 1e-15},
 		{"quartic", FromRoots([]complex128{complex(-1, 2), complex(-1, -2), 5, -7}),
 			[]complex128{-7, complex(-1, -2), complex(-1, 2), 5}, 1e-13},
