@@ -23,8 +23,7 @@ type noise struct {
 // noise and input disturbance is believed.
 const splitMisfit = 0.15
 
-// splitNoise fits |A H|^2 var(e) = sensor^2 |A|^2 + disturbance^2 |B|^2 (+ the same with a slow input disturbance)
-// with parts that are not negative. The right-hand side is the spectral factorisation read backwards: the C of an
+// splitNoise fits |A H|^2 var(e) = sensor^2 |A|^2 + disturbance^2 |B|^2 |lags|^2 with parts that are not negative. The right-hand side is the spectral factorisation read backwards: the C of an
 // ARMAX form is the spectral factor of that sum (Åström & Wittenmark, Computer-Controlled Systems, 3rd ed., ch. 11).
 func (p *problem) splitNoise() noise {
 	h, sd := p.model.NoiseShape(), p.model.Noise.SD
@@ -41,64 +40,104 @@ func (p *problem) splitNoise() noise {
 	if h.Period != p.period {
 		p.warnings = append(p.warnings, "the noise was identified at another sample period than the loop's: its spectrum is carried over up to the lower Nyquist frequency and held from there")
 	}
-	// Columns of the fit: white sensor noise, white input disturbance, and input disturbances through a lag.
-	lags := []float64{0, 30, 10, 3, 1, 0.3, 0.1} // rate in units of 1/settling; 0: white
-	best := math.Inf(1)
-	weight := make([]float64, n) // by the width of a frequency's neighbourhood on the logarithmic scale, capped
+	// Columns of the fit, each over the shape: white sensor noise, white input disturbance, and input disturbances
+	// through lags of 1/rate. First without lags, which two numbers describe; then with all, whose mixture stands
+	// for any colour that falls with the frequency.
+	weight := make([]float64, n) // by a frequency's share of the logarithmic scale
 	for j := 1; j < n; j++ {
-		weight[j] = math.Min(0.1, (p.omega[j]-p.omega[j-1])/p.omega[j])
+		if out.shape[j] > 0 {
+			weight[j] = math.Min(0.1, (p.omega[j]-p.omega[j-1])/p.omega[j])
+		}
 	}
-	for _, lag := range lags {
-		var s11, s12, s22, r1, r2, total float64
-		x, y := make([]float64, n), make([]float64, n)
+	column := func(rate float64, sensor bool) []float64 {
+		c := make([]float64, n)
 		for j := 1; j < n; j++ {
-			q := out.shape[j]
-			if !(q > 0) {
+			if weight[j] == 0 {
 				continue
 			}
-			a, b := cmplx.Abs(p.nominal.a[j]), cmplx.Abs(p.nominal.b[j])
-			x[j], y[j] = a*a/q, b*b/q
-			if lag > 0 {
-				rho := math.Exp(-lag / p.spec.settling * p.period)
-				c := (1 - rho) / cmplx.Abs(1-complex(rho, 0)*p.z1[j])
-				y[j] *= c * c
+			v := cmplx.Abs(p.nominal.b[j])
+			if sensor {
+				v = cmplx.Abs(p.nominal.a[j])
+			} else if rate > 0 {
+				rho := math.Exp(-rate * p.period)
+				v *= math.Sqrt(1-rho*rho) / cmplx.Abs(1-complex(rho, 0)*p.z1[j])
 			}
-			s11 += weight[j] * x[j] * x[j]
-			s12 += weight[j] * x[j] * y[j]
-			s22 += weight[j] * y[j] * y[j]
-			r1 += weight[j] * x[j]
-			r2 += weight[j] * y[j]
-			total += weight[j]
+			c[j] = v * v / out.shape[j]
 		}
-		if !(total > 0 && s11 > 0 && s22 > 0) {
+		return c
+	}
+	columns := [][]float64{column(0, true), column(0, false)}
+	for range 2 {
+		x, misfit := nonNegative(columns, weight)
+		if misfit <= splitMisfit {
+			out.split, out.sensor = true, math.Sqrt(x[0])
+			for _, v := range x[1:] {
+				out.disturbance += v
+			}
+			out.disturbance = math.Sqrt(out.disturbance)
 			break
 		}
-		// Two unknowns: the interior solution, or one of the two edges.
-		type try struct{ a, b float64 }
-		tries := []try{{r1 / s11, 0}, {0, r2 / s22}}
-		if det := s11*s22 - s12*s12; det > 1e-12*s11*s22 {
-			tries = append(tries, try{(r1*s22 - r2*s12) / det, (r2*s11 - r1*s12) / det})
+		for rate := 0.05 / p.spec.settling; rate < 1/p.period; rate *= 3 {
+			columns = append(columns, column(rate, false))
 		}
-		for _, t := range tries {
-			if t.a < 0 || t.b < 0 {
-				continue
-			}
-			miss := 0.0
-			for j := 1; j < n; j++ {
-				e := 1 - t.a*x[j] - t.b*y[j]
-				miss += weight[j] * e * e
-			}
-			if miss = math.Sqrt(miss / total); miss < 0.999*best {
-				best = miss
-				out.sensor, out.disturbance = math.Sqrt(t.a), math.Sqrt(t.b)
-			}
-		}
-	}
-	out.split = best <= splitMisfit
-	if !out.split {
-		out.sensor, out.disturbance = 0, 0
 	}
 	return out
+}
+
+// nonNegative minimises the weighted sum of (1 - sum x_i columns_i)^2 over x_i >= 0 by cyclic descent, which for a
+// convex quadratic with bounds converges to the minimum (Tseng 2001, J. Optim. Theory Appl. 109, 475-494), and
+// returns the root mean square of what is left.
+func nonNegative(columns [][]float64, weight []float64) (x []float64, misfit float64) {
+	m := len(columns)
+	x = make([]float64, m)
+	dot := func(a, b []float64) float64 {
+		s := 0.0
+		for j, w := range weight {
+			s += w * a[j] * b[j]
+		}
+		return s
+	}
+	ones := make([]float64, len(weight))
+	for j := range ones {
+		ones[j] = 1
+	}
+	total := dot(ones, ones)
+	if !(total > 0) {
+		return x, math.Inf(1)
+	}
+	gram, right := make([]float64, m*m), make([]float64, m)
+	for i := range m {
+		right[i] = dot(columns[i], ones)
+		for k := range m {
+			gram[i*m+k] = dot(columns[i], columns[k])
+		}
+	}
+	for range 3000 {
+		moved := 0.0
+		for i := range m {
+			g := right[i]
+			for k := range m {
+				g -= gram[i*m+k] * x[k]
+			}
+			if gram[i*m+i] > 0 {
+				next := math.Max(0, x[i]+g/gram[i*m+i])
+				moved += math.Abs(next-x[i]) * math.Sqrt(gram[i*m+i])
+				x[i] = next
+			}
+		}
+		if moved < 1e-9*math.Sqrt(total) {
+			break
+		}
+	}
+	left := 0.0
+	for j, w := range weight {
+		e := 1.0
+		for i := range m {
+			e -= x[i] * columns[i][j]
+		}
+		left += w * e * e
+	}
+	return x, math.Sqrt(left / total)
 }
 
 // sensorPSD is the variance density of the sensor's part of v at frequency j on a plant, times |A|^2.

@@ -19,6 +19,7 @@ type testRig struct {
 	relative            float64 // standard deviation of each coefficient of the model, as a share of its scale
 	period, compute     float64
 	sensor, disturbance float64 // standard deviations
+	colour              float64 // rad/s, pole of the disturbance; 0: white
 	point               OperatingPoint
 	input               [2]float64
 	output              *[2]float64
@@ -54,7 +55,7 @@ func testRigs() []testRig {
 		},
 		{
 			name: "flow-driven", truth: fromRoots(260, []complex128{-5}, []complex128{complex(0.8, 9), complex(0.8, -9), -18}, 0), relative: 0.01,
-			period: 0.01, compute: 0.002, sensor: 0.01, disturbance: 0.05, point: OperatingPoint{1, 2},
+			period: 0.01, compute: 0.002, sensor: 0.01, disturbance: 0.05, colour: 3, point: OperatingPoint{1, 2},
 			input: [2]float64{-12, 15}, output: &[2]float64{-8, 12},
 			spec: data.Spec{Step: 1, Overshoot: 0.2, Settling: 2.5, Band: 0.02, PeakSensitivity: 2},
 		},
@@ -75,7 +76,8 @@ func (r testRig) rig() *data.Rig {
 }
 
 // factor returns the monic C and the variance with |C|^2 var = sensor^2 |A|^2 + disturbance^2 |B|^2 on the circle:
-// the noise of an ARMAX form with white sensor noise and white input disturbance.
+// the noise of an ARMAX form with white sensor noise and input disturbance (a: with the
+// disturbance's own pole).
 func factor(a, b lti.Poly, sensor, disturbance float64) (lti.Poly, float64) {
 	n := max(len(a), len(b))
 	auto := func(p lti.Poly, k int) float64 {
@@ -149,8 +151,13 @@ func (r testRig) model(t testing.TB) *ident.Model {
 	if err != nil {
 		t.Fatal(err)
 	}
-	c, variance := factor(d.Den, d.Num, r.sensor, r.disturbance)
-	m.Noise = ident.Noise{Numerator: c, Denominator: d.Den, SD: math.Sqrt(variance), SamplePeriod: r.period}
+	den, strength := d.Den, r.disturbance
+	if r.colour > 0 {
+		rho := math.Exp(-r.colour * r.period)
+		den, strength = den.Mul(lti.Poly{1, -rho}), strength*math.Sqrt(1-rho*rho)
+	}
+	c, variance := factor(den, d.Num, r.sensor, strength)
+	m.Noise = ident.Noise{Numerator: c, Denominator: den, SD: math.Sqrt(variance), SamplePeriod: r.period}
 	// Spread of the poles over draws.
 	draws := m.Draw(400, 99)
 	for i, p := range r.truth.Poles() {
