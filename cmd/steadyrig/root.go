@@ -55,6 +55,7 @@ func newRoot(a *app) *cobra.Command {
 		newFit(a),
 		newDesign(a),
 		newVerify(a),
+		newSimulate(a),
 		newDemo(a),
 	)
 	return root

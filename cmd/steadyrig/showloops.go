@@ -64,7 +64,7 @@ func showControllers(p *page, l *design.Loops, u data.Units) {
 			p.item(name, form)
 			name = ""
 		}
-		p.item(name, words.Fraction(b.Discrete, "z^-"))
+		p.item(name, words.Fraction(b.Discrete, "z"))
 	}
 	block("inner", l.InnerForm, l.Inner)
 	block("outer", l.OuterForm, l.Outer)

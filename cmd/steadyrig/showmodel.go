@@ -67,7 +67,7 @@ func showMethods(p *page, m *ident.Model) {
 	}
 	p.table(columns("method", name, "takes for granted", takes, ">rightmost pole", poles, "agrees", agrees))
 	for _, e := range m.Evidence.Methods {
-		if e.Note != "" {
+		if e.Note != "" && !e.Agrees {
 			p.item(e.Name, e.Note)
 		}
 	}

@@ -61,7 +61,6 @@ var (
 	limitLine  = stroke{rust, 1.1, []float64{8, 3, 1.5, 3}}
 	thinLine   = stroke{petrol, 0.7, nil}
 	bandColour = faint(petrol, 0x38)
-	sideColour = faint(rust, 0x30)
 )
 
 // A key says in words what a stroke in a drawing stands for.
@@ -108,7 +107,7 @@ func newPlot(x, y string) *plot.Plot {
 		a.Tick.Length = vg.Points(3)
 		a.Padding = 0
 		for _, s := range []*font.Font{&a.Label.TextStyle.Font, &a.Tick.Label.Font} {
-			s.Variant, s.Size = "Sans", vg.Points(10.5)
+			s.Variant, s.Size = "Sans", vg.Points(11.5)
 		}
 		a.Label.TextStyle.Color, a.Tick.Label.Color = ink, ink
 		a.Tick.Marker = niceTicks{}
@@ -233,6 +232,28 @@ func addBand(p *plot.Plot, x, lo, hi []float64, c color.NRGBA) {
 // addLevel draws a horizontal line from x0 to x1.
 func addLevel(p *plot.Plot, x0, x1, y float64, s stroke) {
 	addLine(p, []float64{x0, x1}, []float64{y, y}, s)
+}
+
+// A mark is a glyph of a pole or a zero, drawn with a pen that stays visible in small print.
+type mark struct{ round bool }
+
+func (m mark) DrawGlyph(c *draw.Canvas, sty draw.GlyphStyle, at vg.Point) {
+	c.SetLineStyle(draw.LineStyle{Color: sty.Color, Width: vg.Points(1.6)})
+	r := sty.Radius
+	if m.round {
+		var p vg.Path
+		p.Move(vg.Point{X: at.X + r, Y: at.Y})
+		p.Arc(at, r, 0, 2*math.Pi)
+		p.Close()
+		c.Stroke(p)
+		return
+	}
+	for _, d := range []vg.Length{-r, r} {
+		var p vg.Path
+		p.Move(vg.Point{X: at.X - r, Y: at.Y - d})
+		p.Line(vg.Point{X: at.X + r, Y: at.Y + d})
+		c.Stroke(p)
+	}
 }
 
 func finite(x float64) bool { return !math.IsNaN(x) && !math.IsInf(x, 0) }

@@ -116,16 +116,18 @@ func fitFigures(m *ident.Model, exps []*data.Experiment, u data.Units) []figure 
 	room(&near.Y)
 	rest := newPlot("time, s", axis("error", u.Output))
 	sd := m.Noise.SD
-	addBand(rest, []float64{t[0], t[len(t)-1]}, []float64{-1.96 * sd, -1.96 * sd}, []float64{1.96 * sd, 1.96 * sd}, sideColour)
 	tx, ty := thinned(t, pr.Error, stretches)
-	addLine(rest, tx, ty, thinLine)
+	addLine(rest, tx, ty, stroke{faint(petrol, 0xa0), 0.6, nil})
+	for _, level := range []float64{-1.96 * sd, 1.96 * sd} {
+		addLevel(rest, t[0], t[len(t)-1], level, limitLine)
+	}
 	room(&rest.Y)
 	return []figure{
 		{drawn(near, fmt.Sprintf("Measured output and its one-step prediction over %d rows of %s", to-from, file)), "One-step prediction, close up",
 			[]key{{Stroke: mainLine, Label: "measured"}, {Stroke: otherLine, Label: "predicted from the rows before"}},
 			fmt.Sprintf("%d rows of %s. In closed loop a long-range simulation of an unstable plant would diverge; one step is the fair test.", to-from, file)},
 		{drawn(rest, "Errors of the one-step prediction over the log"), "What the model leaves over",
-			[]key{{Stroke: thinLine, Label: "error"}, {Band: &sideColour, Label: "95 % of errors as the model has them"}},
+			[]key{{Stroke: thinLine, Label: "error"}, {Stroke: limitLine, Label: "95 % of errors stay between, as the model has them"}},
 			fmt.Sprintf("Standard deviation %s.", words.Unit(words.Number(sd), u.Output))},
 	}
 }
@@ -180,8 +182,8 @@ func poleFigure(m *ident.Model) figure {
 		sc.GlyphStyle = draw.GlyphStyle{Color: s.colour, Radius: vg.Points(4.5), Shape: shape}
 		p.Add(sc)
 	}
-	add(m.Poles, draw.CrossGlyph{}, mainLine)
-	add(m.Zeros, draw.RingGlyph{}, otherLine)
+	add(m.Poles, mark{}, mainLine)
+	add(m.Zeros, mark{round: true}, otherLine)
 	p.X.Min, p.X.Max, p.Y.Min, p.Y.Max = lo, hi, -top, top
 	shade := faint(rust, 0x18)
 	return figure{drawn(p, "Poles and zeros of the plant with their 95 % intervals; "+words.Unstable(m.Poles)), "Poles × and zeros ○ of the plant",
@@ -259,7 +261,7 @@ func responseFigures(m *ident.Model, u data.Units, seed uint64) []figure {
 	}
 }
 
-// degreeTicks sets ticks at multiples of 45 or 90 degrees.
+// degreeTicks sets ticks at multiples of 45 degrees, or parts of that where few fit.
 type degreeTicks struct{}
 
 func (degreeTicks) Ticks(lo, hi float64) []plot.Tick {
@@ -267,9 +269,12 @@ func (degreeTicks) Ticks(lo, hi float64) []plot.Tick {
 	for (hi-lo)/step > 8 {
 		step *= 2
 	}
+	for (hi-lo)/step < 3 {
+		step /= 3
+	}
 	var ticks []plot.Tick
-	for v := math.Ceil(lo/step) * step; v <= hi; v += step {
-		ticks = append(ticks, plot.Tick{Value: v, Label: fmt.Sprintf("%.0f", v)})
+	for k := math.Ceil(lo / step); k*step <= hi; k++ {
+		ticks = append(ticks, plot.Tick{Value: k * step, Label: fmt.Sprintf("%d", int(k*step))})
 	}
 	return ticks
 }

@@ -251,7 +251,7 @@ func loopsSection(in Input) (section, error) {
 	if !hasLoops(l) {
 		return s, nil
 	}
-	s.Code = l.Law
+	s.Code = strings.ReplaceAll(l.Law, "; ", "\n")
 	s.Facts = append(s.Facts, fact{"Operating point", fmt.Sprintf("u0 = %s, y0 = %s", words.Unit(words.Number(l.OperatingPoint.Input), u.Input), words.Unit(words.Number(l.OperatingPoint.Output), u.Output))})
 	if l.InputLimits != nil {
 		s.Facts = append(s.Facts, fact{"Input limits", words.Unit(words.Number(l.InputLimits[0])+" to "+words.Number(l.InputLimits[1]), u.Input)})
@@ -259,7 +259,7 @@ func loopsSection(in Input) (section, error) {
 	if l.OuterLimits != nil {
 		s.Facts = append(s.Facts, fact{"Outer limits", words.Unit(words.Number(l.OuterLimits[0])+" to "+words.Number(l.OuterLimits[1]), u.Output) + ", deviation"})
 	}
-	blocks := table{Caption: "Controllers, rounded; loops.json has all digits", Head: []string{"Block", "Form", "As designed, in s", fmt.Sprintf("As run every %s, in z", words.Seconds(l.SamplePeriod))}}
+	blocks := table{Caption: "Controllers, rounded; loops.json has all digits", Head: []string{"Block", "Form", "As designed", fmt.Sprintf("As run every %s", words.Seconds(l.SamplePeriod))}}
 	for _, b := range []struct {
 		name, form string
 		block      *design.Block
@@ -271,7 +271,7 @@ func loopsSection(in Input) (section, error) {
 		if c := b.block.Continuous; c != nil {
 			continuous = "(" + words.Polynomial(c.Numerator, "s") + ") / (" + words.Polynomial(c.Denominator, "s") + ")"
 		}
-		blocks.Rows = append(blocks.Rows, []string{b.name, b.form, continuous, words.Fraction(b.block.Discrete, "z^-")})
+		blocks.Rows = append(blocks.Rows, []string{b.name, b.form, continuous, words.Fraction(b.block.Discrete, "z")})
 	}
 	s.Tables = append(s.Tables, blocks)
 	forms := table{Caption: "What simplicity costs, on the worst of the tuning plants", Head: []string{"Loop", "Form", "Peak |S|", "Input noise, sd", ""}, Right: []bool{false, false, true, true}}

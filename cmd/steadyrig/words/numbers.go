@@ -22,11 +22,16 @@ func Number(x float64) string {
 	case x == 0:
 		return "0"
 	}
-	s := strconv.FormatFloat(x, 'g', 4, 64)
+	s := plain(strconv.FormatFloat(x, 'g', 4, 64))
 	if a := math.Abs(x); a >= 1e4 && a < 1e6 || a < 1e-4 && a >= 1e-5 {
 		s = strconv.FormatFloat(x, 'f', max(0, 3-int(math.Floor(math.Log10(a)))), 64)
 	}
 	return s
+}
+
+// plain takes sign and leading zero off an exponent: 2.6e+06 is 2.6e6.
+func plain(s string) string {
+	return strings.NewReplacer("e+0", "e", "e+", "e", "e-0", "e-").Replace(s)
 }
 
 // Brief formats a figure for a crowded table: three digits.
@@ -71,7 +76,7 @@ func together(lo, hi float64) (from, to string) {
 	big := math.Max(math.Abs(lo), math.Abs(hi))
 	if big >= 1e6 || big < 1e-4 || decimals > 8 {
 		digits := max(2, min(12, 1+int(math.Floor(math.Log10(big)))+decimals))
-		return strconv.FormatFloat(lo, 'g', digits, 64), strconv.FormatFloat(hi, 'g', digits, 64)
+		return plain(strconv.FormatFloat(lo, 'g', digits, 64)), plain(strconv.FormatFloat(hi, 'g', digits, 64))
 	}
 	f := func(x float64) string {
 		s := strconv.FormatFloat(x, 'f', max(0, decimals), 64)
@@ -130,7 +135,7 @@ func Seconds(t float64) string {
 func Polynomial(c []float64, x string) string {
 	var b strings.Builder
 	for i, v := range c {
-		power := len(c) - 1 - i
+		k := len(c) - 1 - i
 		if v == 0 && len(c) > 1 {
 			continue
 		}
@@ -142,23 +147,28 @@ func Polynomial(c []float64, x string) string {
 		case b.Len() > 0:
 			b.WriteString(" + ")
 		}
-		if a := math.Abs(v); a != 1 || power == 0 {
+		if a := math.Abs(v); a != 1 || k == 0 {
 			b.WriteString(Number(a))
-			if power > 0 {
+			if k > 0 {
 				b.WriteString(" ")
 			}
 		}
 		switch {
-		case power == 1:
+		case k == 1:
 			b.WriteString(x)
-		case power > 1:
-			fmt.Fprintf(&b, "%s^%d", x, power)
+		case k > 1:
+			b.WriteString(x + power(k))
 		}
 	}
 	return b.String()
 }
 
-// Fraction formats a ratio of polynomials in powers of z^-1.
+// power writes an exponent in raised figures.
+func power(k int) string {
+	return strings.NewReplacer("-", "⁻", "0", "⁰", "1", "¹", "2", "²", "3", "³", "4", "⁴", "5", "⁵", "6", "⁶", "7", "⁷", "8", "⁸", "9", "⁹").Replace(strconv.Itoa(k))
+}
+
+// Fraction formats a ratio of polynomials in rising powers of 1/z.
 func Fraction(r design.Rational, z string) string {
 	side := func(c []float64) string {
 		s := ""
@@ -172,7 +182,7 @@ func Fraction(r design.Rational, z string) string {
 			}
 			s += sign + Number(math.Abs(v))
 			if i > 0 {
-				s += fmt.Sprintf(" %s%d", z, i)
+				s += " " + z + power(-i)
 			}
 		}
 		return s

@@ -106,7 +106,7 @@ func Estimate(e *ident.Estimate, unit string) string {
 // Leading is the leading numerator coefficient, ratio the unit of output over input.
 func Leading(m *ident.Model, ratio string) string {
 	excess := len(m.Plant.Denominator) - len(m.Plant.Numerator)
-	return Estimate(m.Gain.HighFrequency, Unit(ratio, fmt.Sprintf("s^-%d", excess))) + fmt.Sprintf(", over s^%d at high frequency", excess)
+	return Estimate(m.Gain.HighFrequency, Unit(ratio, "s"+power(-excess))) + fmt.Sprintf(", over s%s at high frequency", power(excess))
 }
 
 // Residuals tells the tests on what a model leaves over.
@@ -129,7 +129,10 @@ func Unstableness(r ident.Root) string {
 	if r.Re95.Contains(0) {
 		return "open"
 	}
-	return YesNo(r.Unstable)
+	if r.Unstable {
+		return "YES"
+	}
+	return "no"
 }
 
 // YesNo is yes or NO.
