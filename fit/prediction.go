@@ -17,18 +17,29 @@ type Shape struct {
 	Poles  int // of the plant, 1 or more
 	Zeros  int // of the plant, fewer than Poles
 	Colour int // poles of the disturbance's own, 0 to 2
+	// Integrators is how many of the plant's poles are held at zero.
+	Integrators int
 	// FreeDelay estimates the delay too; else it stays where the start puts it.
 	FreeDelay bool
 }
 
 // Free returns the number of free parameters that structures of this shape
 // share over all records: numerator, denominator, delay, colour, noise zeros.
-func (s Shape) Free() int {
+func (s Shape) Free() int { return s.size() - s.Integrators }
+
+// size counts the fixed coefficients of integrators as well.
+func (s Shape) size() int {
 	n := s.Zeros + 1 + s.Poles + s.Colour + s.Poles + s.Colour
 	if s.FreeDelay {
 		n++
 	}
 	return n
+}
+
+// fixed reports whether parameter k is one that integrators hold at zero.
+func (s Shape) fixed(k int) bool {
+	end := s.Zeros + 1 + s.Poles
+	return k < end && k >= end-s.Integrators
 }
 
 // Prediction is a plant in continuous time with its noise shape,
@@ -99,7 +110,7 @@ const (
 )
 
 const (
-	badShape = "fit: shape needs 1 to 8 poles, fewer zeros than poles, at most 2 colour poles"
+	badShape = "fit: shape needs 1 to 8 poles, fewer zeros than poles, at most 2 colour poles, no more integrators than poles"
 	badDelay = "fit: delay lies before the output or past the lead of the predictor"
 )
 
@@ -183,7 +194,7 @@ type workspace struct {
 }
 
 func (p *Predictor) newSearch(shape Shape, w0 float64) *search {
-	if shape.Poles < 1 || shape.Poles > maxFitPoles || shape.Zeros < 0 || shape.Zeros >= shape.Poles || shape.Colour < 0 || shape.Colour > maxColour {
+	if shape.Poles < 1 || shape.Poles > maxFitPoles || shape.Zeros < 0 || shape.Zeros >= shape.Poles || shape.Colour < 0 || shape.Colour > maxColour || shape.Integrators < 0 || shape.Integrators > shape.Poles {
 		panic(badShape)
 	}
 	s := &search{Predictor: p, shape: shape, w0: w0, h: p.Period * w0}
@@ -490,7 +501,7 @@ const chunk = 1024
 // rest at the first equation. Lagged copies of one filtered signal differ from
 // that by a free response of 1/C only, which is taken off.
 func (s *search) information(x point, q shifted) (*mat.SymDense, []float64) {
-	p := s.shape.Free()
+	p := s.shape.size()
 	h := mat.NewSymDense(p, nil)
 	grad := make([]float64, p)
 	cols := s.columns(q)
@@ -736,31 +747,40 @@ func reflect(c []float64) []float64 {
 	return out
 }
 
+// hold keeps the coefficients of integrators where they are: rows and columns
+// of a unit matrix, no gradient.
+func (s *search) hold(h *mat.SymDense, g []float64) {
+	n := h.SymmetricDim()
+	for i := range n {
+		if !s.shape.fixed(i) {
+			continue
+		}
+		for j := range n {
+			h.SetSym(i, j, 0)
+		}
+		h.SetSym(i, i, 1)
+		if g != nil {
+			g[i] = 0
+		}
+	}
+}
+
 // minimise runs Levenberg's and Marquardt's method from x until the relative
 // gain of a step falls below tol, and returns the point and its sum of squares.
-// mask, where not nil, tells which parameters may move.
-func (s *search) minimise(x point, tol float64, limit int, mask []bool) (point, float64, int, bool) {
+func (s *search) minimise(x point, tol float64, limit int) (point, float64, int, bool) {
 	rss, q, ok := s.errorsAt(x)
 	if !ok {
 		return x, rss, 0, false
 	}
 	damping := 1e-3
-	p := s.shape.Free()
+	p := s.shape.size()
 	step := make([]float64, p)
 	for it := 1; it <= limit; it++ {
 		h, g := s.information(x, q)
 		if !bounded(g...) {
 			return x, rss, it, false
 		}
-		for i := range p {
-			if mask != nil && !mask[i] {
-				for j := range p {
-					h.SetSym(i, j, 0)
-				}
-				h.SetSym(i, i, 1)
-				g[i] = 0
-			}
-		}
+		s.hold(h, g)
 		better := false
 		for range 12 {
 			if !solveScaled(step, h, g, damping) {
@@ -800,7 +820,7 @@ func (s *search) minimise(x point, tol float64, limit int, mask []bool) (point, 
 func (p *Predictor) Fit(start *Prediction, tol float64, limit int) (*Prediction, error) {
 	s, x := p.begin(start)
 	defer s.done()
-	x, rss, steps, converged := s.minimise(x, tol, limit, nil)
+	x, rss, steps, converged := s.minimise(x, tol, limit)
 	if !(rss < math.Inf(1)) {
 		return nil, ErrNoFit
 	}
@@ -845,6 +865,9 @@ func (s *search) scaled(m *Prediction) point {
 	}
 	for i := range x.den {
 		x.den[i] = m.Den[i] * math.Pow(s.w0, float64(i-n))
+	}
+	for i := range s.shape.Integrators {
+		x.den[i] = 0
 	}
 	x.d, x.c = unshifted(m.D, s.shape.Colour), reflect(unshifted(m.C, n+s.shape.Colour))
 	return x
@@ -893,7 +916,7 @@ func (s *search) units() []float64 {
 	if s.shape.FreeDelay {
 		u = append(u, 1/s.w0)
 	}
-	for len(u) < s.shape.Free() {
+	for len(u) < s.shape.size() {
 		u = append(u, 1)
 	}
 	return u
@@ -911,7 +934,8 @@ func (p *Predictor) Covariance(m *Prediction) error {
 		return ErrNoFit
 	}
 	h, _ := s.information(x, q)
-	n := s.shape.Free()
+	n := s.shape.size()
+	s.hold(h, nil)
 	sd := make([]float64, n)
 	for i := range sd {
 		sd[i] = math.Sqrt(h.At(i, i))
@@ -938,7 +962,11 @@ func (p *Predictor) Covariance(m *Prediction) error {
 	m.Cov = mat.NewSymDense(n, nil)
 	for i := range n {
 		for j := i; j < n; j++ {
-			m.Cov.SetSym(i, j, inv.At(i, j)*variance*unit[i]*unit[j]/(sd[i]*sd[j]))
+			v := inv.At(i, j) * variance * unit[i] * unit[j] / (sd[i] * sd[j])
+			if s.shape.fixed(i) || s.shape.fixed(j) {
+				v = 0
+			}
+			m.Cov.SetSym(i, j, v)
 		}
 	}
 	return nil

@@ -1,8 +1,10 @@
 package fit
 
 import (
+	"cmp"
 	"math"
 	"math/cmplx"
+	"slices"
 
 	"gonum.org/v1/gonum/mat"
 
@@ -139,11 +141,17 @@ var NoiseRatios = []float64{1e-4, 1e-2, 1}
 // noise plus a white disturbance at the input whose variance is ratio times
 // as large relative to the numerators; the plant's unstable factor then
 // appears mirrored, as it must. Extra colour poles start at colour.
-// It returns nil where no finite model results.
+// The slowest poles give way to integrators. It returns nil where no finite
+// model results.
 func (p *Predictor) Start(shape Shape, seed Seed, delay, ratio float64, colour []complex128) *Prediction {
 	poles := append([]complex128(nil), seed.Poles...)
 	if len(poles) != shape.Poles || len(colour) != shape.Colour {
 		panic(badShape)
+	}
+	if shape.Integrators > 0 {
+		slices.SortStableFunc(poles, func(a, b complex128) int { return cmp.Compare(cmplx.Abs(a), cmplx.Abs(b)) })
+		clear(poles[:shape.Integrators])
+		poles = paired(poles)
 	}
 	den := lti.FromRoots(poles)
 	s := p.newSearch(shape, timeScale(den, p.Period))
@@ -172,10 +180,6 @@ func (p *Predictor) Start(shape Shape, seed Seed, delay, ratio float64, colour [
 	x := s.scaled(m)
 	for i := range x.num {
 		x.num[i] = 0
-	}
-	mask := make([]bool, shape.Free())
-	for i := range shape.Zeros + 1 {
-		mask[i] = true
 	}
 	// The errors are linear in the numerator: one undamped step is exact.
 	_, q, ok := s.errorsAt(x)

@@ -135,7 +135,7 @@ func (a *AuditReport) glance(ctx context.Context, recs []fit.Record, rig *data.R
 		a.NextStep = "log a longer run"
 		return &RefusedError{What: err.Error(), Do: a.NextStep}
 	}
-	c, _, err := newChooser(p, some, sc, runtime.GOMAXPROCS(0))
+	c, err := newChooser(p, some, sc, runtime.GOMAXPROCS(0))
 	if err != nil {
 		a.Verdict = Refused
 		a.NextStep = "log a run in which input and output move"

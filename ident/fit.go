@@ -3,7 +3,6 @@ package ident
 import (
 	"cmp"
 	"context"
-	"errors"
 	"fmt"
 	"math"
 	"math/cmplx"
@@ -64,7 +63,7 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 			return m, err
 		}
 	}
-	c, long, err := newChooser(sp, some, sc, opt.Workers)
+	c, err := newChooser(sp, some, sc, opt.Workers)
 	if err != nil {
 		return m.refuse(&RefusedError{What: "no long model could be fitted: " + err.Error(), Do: "log a run in which input and output move"})
 	}
@@ -88,8 +87,11 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 		return m.refuse(&RefusedError{What: "the log does not tell the plant's parameters apart", Do: "log a run with a stronger probe"})
 	}
 	m.describe(p, f, rig)
+	if err := m.loosen(p, f, ranked); err != nil {
+		return m, err
+	}
 	m.Evidence.Structures = structures(ranked)
-	m.Evidence.Methods = methods(some, long, f, m.Poles)
+	m.Evidence.Methods = methods(some, outsideSignals(exps, some), f, m.Poles)
 	if err := m.tests(p, recs, f); err != nil {
 		return m, err
 	}
@@ -161,6 +163,13 @@ func (s structure) String() string {
 	if s.poles == 1 {
 		words = "1 pole"
 	}
+	switch s.integrators {
+	case 0:
+	case 1:
+		words += " (1 integrator)"
+	default:
+		words += fmt.Sprintf(" (%d integrators)", s.integrators)
+	}
 	switch s.zeros {
 	case 0:
 	case 1:
@@ -214,7 +223,7 @@ func (c *chooser) pairing(ctx context.Context, recs []fit.Record, ranked []*cand
 	}
 	sc := c.scope
 	sc.freeDelay, sc.mustDelay, sc.base, sc.delay = false, false, 0, [2]float64{}
-	late, _, err := newChooser(p, moved, sc, workers)
+	late, err := newChooser(p, moved, sc, workers)
 	if err != nil {
 		return nil
 	}
@@ -264,16 +273,13 @@ func (c *chooser) answersWithinRow(recs []fit.Record, gain float64) bool {
 // lead is the leading numerator coefficient.
 func lead(f *fit.Prediction) float64 { return f.Num[len(f.Num)-1] }
 
-// describe fills in plant, poles, zeros, gains, noise and operating point.
-func (m *Model) describe(p *fit.Predictor, f *fit.Prediction, rig *data.Rig) {
-	nz, n := f.Zeros+1, f.Poles
-	m.Plant.Numerator, m.Plant.Denominator = reversed(f.Num), reversed(f.Den)
-	m.Plant.Delay = f.Delay
-	m.Plant.Parameters = m.Plant.Parameters[:0]
-	for i := range nz {
+// plant fills in the transfer function with its covariance.
+func (m *Model) plant(f *fit.Prediction) {
+	m.Plant = Plant{Numerator: reversed(f.Num), Denominator: reversed(f.Den), Delay: f.Delay}
+	for i := range f.Zeros + 1 {
 		m.Plant.Parameters = append(m.Plant.Parameters, fmt.Sprintf("b%d", i))
 	}
-	for i := 1; i <= n; i++ {
+	for i := 1; i <= f.Poles; i++ {
 		m.Plant.Parameters = append(m.Plant.Parameters, fmt.Sprintf("a%d", i))
 	}
 	if f.FreeDelay {
@@ -286,6 +292,11 @@ func (m *Model) describe(p *fit.Predictor, f *fit.Prediction, rig *data.Rig) {
 			m.Plant.Covariance[i][j] = f.Cov.At(i, j)
 		}
 	}
+}
+
+// describe fills in plant, poles, zeros, gains, noise and operating point.
+func (m *Model) describe(p *fit.Predictor, f *fit.Prediction, rig *data.Rig) {
+	m.plant(f)
 	m.derive()
 
 	h := f.H()
@@ -342,11 +353,60 @@ func estimate(v, sd float64) *Estimate {
 	return &Estimate{Value: v, SD: sd, Interval95: Interval{v - z95*sd, v + z95*sd}}
 }
 
+// loosen gives integrators the intervals of free poles. That a pole is exactly
+// zero was chosen, not measured: what the log says about it is the interval of
+// the same structure with the pole free, joined with zero, and the probability
+// that the free pole is unstable, times the weight exp(-ΔBIC/2) of that
+// structure against the chosen one (Schwarz 1978).
+func (m *Model) loosen(p *fit.Predictor, f *fit.Prediction, ranked []*candidate) error {
+	if f.Integrators == 0 {
+		return nil
+	}
+	start := copyOf(f)
+	start.Integrators = 0
+	// Off the double pole, where the roots have no slope.
+	for _, c := range ranked {
+		if c.poles == f.Poles && c.zeros == f.Zeros && c.colour == f.Shape.Colour && c.delay == f.FreeDelay && c.integrators == 0 {
+			start = c.fit
+		}
+	}
+	free, err := p.Fit(start, finalTol, finalSteps)
+	if err != nil {
+		return fmt.Errorf("fitting integrators as free poles: %w", err)
+	}
+	if err := p.Covariance(free); err != nil {
+		return nil // the chosen structure stands, its poles at zero without a width
+	}
+	var other Model
+	other.plant(free)
+	other.derive()
+	weight := 1 / (1 + math.Exp((free.BIC()-f.BIC())/2))
+	// Integrators are the slowest poles of the free structure.
+	slow := slices.Clone(other.Poles)
+	slices.SortStableFunc(slow, func(a, b Root) int { return cmp.Compare(math.Hypot(a.Re, a.Im), math.Hypot(b.Re, b.Im)) })
+	slow = slow[:f.Integrators]
+	slices.SortStableFunc(slow, func(a, b Root) int { return cmp.Or(cmp.Compare(a.Re, b.Re), cmp.Compare(a.Im, b.Im)) })
+	k := 0
+	for i := range m.Poles {
+		if m.Poles[i].Re != 0 || m.Poles[i].Im != 0 || k == len(slow) {
+			continue
+		}
+		r := slow[k]
+		k++
+		join := func(iv Interval) Interval { return Interval{math.Min(iv.Lo, 0), math.Max(iv.Hi, 0)} }
+		m.Poles[i] = Root{
+			ReSD: r.ReSD, ImSD: r.ImSD, Re95: join(r.Re95), Im95: join(r.Im95), Re95All: join(r.Re95All), Im95All: join(r.Im95All),
+			ProbabilityUnstable: r.ProbabilityUnstable * weight,
+		}
+	}
+	return nil
+}
+
 // structures lists the best candidates with why the others lost.
 func structures(ranked []*candidate) []Structure {
 	var out []Structure
 	for i, c := range ranked[:min(8, len(ranked))] {
-		s := Structure{Poles: c.poles, Zeros: c.zeros, Colour: c.colour, Delay: c.fit.Delay, BIC: c.bic - ranked[0].bic, Chosen: i == 0}
+		s := Structure{Poles: c.poles, Zeros: c.zeros, Colour: c.colour, Delay: c.fit.Delay, Integrators: c.integrators, BIC: c.bic - ranked[0].bic, Chosen: i == 0}
 		gain := float64(c.fit.Rows) * math.Log(c.fit.RSS/ranked[0].fit.RSS)
 		switch extra := c.fit.Free() - ranked[0].fit.Free(); {
 		case i == 0:
@@ -363,15 +423,46 @@ func structures(ranked []*candidate) []Structure {
 	return out
 }
 
+// outsideSignals returns the logged dither, or else the reference, of each
+// record; nil where neither is logged throughout or the records are blocks of
+// the log only.
+func outsideSignals(exps []*data.Experiment, recs []fit.Record) [][]float64 {
+	var dither, reference [][]float64
+	n := 0
+	for _, e := range exps {
+		for _, s := range e.Segments {
+			n++
+			if s.D != nil {
+				dither = append(dither, s.D)
+			}
+			if s.R != nil {
+				reference = append(reference, s.R)
+			}
+		}
+	}
+	switch len(recs) {
+	case n:
+	default:
+		return nil
+	}
+	if len(dither) == n {
+		return dither
+	}
+	if len(reference) == n {
+		return reference
+	}
+	return nil
+}
+
 // methods estimates the poles by other ways than maximum likelihood and says
 // whether they find the same unstable poles.
-func methods(recs []fit.Record, long *fit.ARX, f *fit.Prediction, poles []Root) []Method {
-	list := []Method{{Name: "prediction", Agrees: true}}
+func methods(recs []fit.Record, signals [][]float64, f *fit.Prediction, poles []Root) []Method {
+	list := []Method{{Name: "prediction", Agrees: true, Poles: [][2]float64{}}}
 	for _, r := range poles {
 		list[0].Poles = append(list[0].Poles, [2]float64{r.Re, r.Im})
 	}
-	order := f.Poles + f.Colour + int(math.Ceil(f.Delay/f.Period))
-	add := func(name string, z []complex128, err error) {
+	whole := max(0, int(math.Floor(f.Delay/f.Period+1e-9)))
+	add := func(name string, z []complex128, sd float64, err error) {
 		m := Method{Name: name, Poles: [][2]float64{}}
 		if err != nil {
 			m.Note = err.Error()
@@ -383,28 +474,70 @@ func methods(recs []fit.Record, long *fit.ARX, f *fit.Prediction, poles []Root) 
 				m.Poles = append(m.Poles, [2]float64{real(s), imag(s)})
 			}
 		}
-		m.Agrees, m.Note = agreement(m.Poles, poles)
+		m.Agrees, m.Note = agreement(m.Poles, poles, sd)
 		list = append(list, m)
 	}
+	order := f.Poles + f.Shape.Colour + whole + 1
 	if s, err := fit.Subspace(recs, fit.SubspaceOptions{Order: order}); err != nil {
-		add("state", nil, err)
+		add("state", nil, 0, err)
 	} else {
-		add("state", s.Poles, nil)
+		add("state", s.Poles, 0, nil)
 	}
-	// Null-space fitting wants a long model longer than AICc's choice.
-	n := min(2*long.Order, max(long.Order, long.Rows/(40)))
-	var ns *fit.NullSpaceResult
-	longer, err := fit.FitARX(recs, fit.ARXOptions{NA: n, NB: n, Delay: 1})
-	if longer != nil {
-		k := f.Poles + f.Colour
-		ns, err = fit.NullSpace(longer, fit.NullSpaceOptions{NA: k, NB: order + 1, NC: k})
-	}
-	if err != nil || ns == nil {
-		add("long", nil, cmp.Or(err, errors.New("no long model")))
+	longer, err := fit.LongARX(recs)
+	if longer == nil {
+		add("long", nil, 0, err)
 	} else {
-		add("long", ns.Poles(), nil)
+		k := f.Poles + f.Shape.Colour
+		// Leading coefficients of B before the delay are zero but for errors.
+		if ns, err := fit.NullSpace(longer, fit.NullSpaceOptions{NA: k, NB: k + whole + 1, NC: k}); err != nil {
+			add("long", nil, 0, err)
+		} else {
+			add("long", ns.Poles(), 0, nil)
+		}
+	}
+	if signals != nil && !f.Converged {
+		return list
+	}
+	if signals != nil {
+		iv, err := fit.Instrument(recs, signals, fit.InstrumentOptions{NA: f.Poles, NB: f.Poles + 1, Delay: 1 + whole, Filter: f.C})
+		switch {
+		case err != nil:
+			list = append(list, Method{Name: "outside", Poles: [][2]float64{}, Agrees: true, Note: "says nothing here: " + err.Error()})
+		default:
+			add("outside", iv.Poles(), unstableDeviation(iv, f.Period), nil)
+			if last := &list[len(list)-1]; !last.Agrees && iv.Share < weakInstrument {
+				last.Agrees, last.Note = true, "says little here: "+last.Note
+			}
+		}
 	}
 	return list
+}
+
+// weakInstrument is the share of a regressor that the outside signal must
+// explain for its verdict to count.
+const weakInstrument = 0.01
+
+// unstableDeviation is the deviation of the outermost real or complex pole of
+// an instrumental estimate, in rad/s.
+func unstableDeviation(iv *fit.InstrumentResult, period float64) float64 {
+	n := len(iv.A) - 1
+	den := uncertain{p: make([]float64, n+1), cov: mat.NewSymDense(n+1, nil)}
+	for i := range n + 1 {
+		den.p[i] = iv.A[n-i]
+	}
+	for i := range n {
+		for j := i; j < n; j++ {
+			den.cov.SetSym(i, j, iv.Cov.At(n-1-i, n-1-j))
+		}
+	}
+	var sd float64
+	var size float64
+	for _, z := range den.roots() {
+		if r := math.Hypot(z.Re, z.Im); r > size && z.Re > 0 {
+			size, sd = r, math.Hypot(z.ReSD, z.ImSD)/(r*period)
+		}
+	}
+	return sd
 }
 
 // inContinuousTime returns log(z)/period where a real plant can have it.
@@ -416,11 +549,12 @@ func inContinuousTime(z complex128, period float64) (complex128, bool) {
 }
 
 // agreementShare is by how much of its modulus an unstable pole of a rougher
-// method may differ, beyond four deviations of the final estimate.
+// method may differ, beyond four deviations of the two estimates; a method
+// without a deviation of its own is given twice that of the final one.
 const agreementShare = 0.1
 
 // agreement compares the unstable poles of a method with the final ones.
-func agreement(found [][2]float64, poles []Root) (bool, string) {
+func agreement(found [][2]float64, poles []Root, sd float64) (bool, string) {
 	agrees, note := true, ""
 	for _, p := range poles {
 		if p.ProbabilityUnstable < 0.5 || p.Im < 0 {
@@ -431,7 +565,12 @@ func agreement(found [][2]float64, poles []Root) (bool, string) {
 		for _, q := range found {
 			near = math.Min(near, cmplx.Abs(complex(q[0], q[1])-at))
 		}
-		allowed := agreementShare*cmplx.Abs(at) + 4*math.Hypot(p.ReSD, p.ImSD)
+		own := math.Hypot(p.ReSD, p.ImSD)
+		other := sd
+		if other == 0 {
+			other = 2 * own
+		}
+		allowed := agreementShare*cmplx.Abs(at) + 4*math.Hypot(own, other)
 		if near > allowed {
 			agrees = false
 		}
@@ -439,6 +578,9 @@ func agreement(found [][2]float64, poles []Root) (bool, string) {
 			note += ", "
 		}
 		note += fmt.Sprintf("unstable pole off by %.2g rad/s", near)
+		if sd > 0 {
+			note += fmt.Sprintf(", %.1f deviations", near/math.Hypot(own, sd))
+		}
 	}
 	return agrees, note
 }

@@ -162,13 +162,15 @@ type Evidence struct {
 
 // Structure is one candidate and how far it lost, in units of BIC.
 type Structure struct {
-	Poles   int     `json:"poles"`
-	Zeros   int     `json:"zeros"`
-	Colour  int     `json:"colour"` // poles of the disturbance's own
-	Delay   float64 `json:"delay"`  // s
-	BIC     float64 `json:"bic"`    // above the winner's
-	Chosen  bool    `json:"chosen"`
-	Verdict string  `json:"verdict"`
+	Poles  int     `json:"poles"`
+	Zeros  int     `json:"zeros"`
+	Colour int     `json:"colour"` // poles of the disturbance's own
+	Delay  float64 `json:"delay"`  // s
+	// Integrators is how many of the poles are held at zero.
+	Integrators int     `json:"integrators"`
+	BIC         float64 `json:"bic"` // above the winner's
+	Chosen      bool    `json:"chosen"`
+	Verdict     string  `json:"verdict"`
 }
 
 // Method is one way of estimating the same poles, named by what it assumes:

@@ -18,6 +18,7 @@ import (
 const (
 	MaxPoles        = 5
 	MaxColour       = 2
+	MaxIntegrators  = 2
 	maxDelaySamples = 8 // of a delay without a hint
 )
 
@@ -34,14 +35,16 @@ const (
 )
 
 // structure is a candidate: numbers of poles and zeros of the plant, poles of
-// the disturbance's own, and whether the delay is free.
+// the disturbance's own, whether the delay is free, and how many of the poles
+// are integrators.
 type structure struct {
 	poles, zeros, colour int
 	delay                bool
+	integrators          int
 }
 
 func (s structure) shape() fit.Shape {
-	return fit.Shape{Poles: s.poles, Zeros: s.zeros, Colour: s.colour, FreeDelay: s.delay}
+	return fit.Shape{Poles: s.poles, Zeros: s.zeros, Colour: s.colour, FreeDelay: s.delay, Integrators: s.integrators}
 }
 
 // scope bounds a search.
@@ -76,6 +79,7 @@ func (sc scope) allows(s structure) bool {
 	return s.poles >= sc.minPoles && s.poles <= sc.maxPoles &&
 		s.zeros >= sc.minZeros && s.zeros <= sc.maxZeros && s.zeros < s.poles &&
 		s.colour >= 0 && s.colour <= MaxColour &&
+		s.integrators >= 0 && s.integrators <= min(MaxIntegrators, s.poles) &&
 		(!s.delay || sc.freeDelay) && (s.delay || !sc.mustDelay)
 }
 
@@ -98,12 +102,12 @@ type chooser struct {
 
 // newChooser prepares the starts that do not depend on the structure: the
 // poles of long ARX models of two lengths, cut to each order.
-func newChooser(p *fit.Predictor, recs []fit.Record, sc scope, workers int) (*chooser, *fit.ARX, error) {
+func newChooser(p *fit.Predictor, recs []fit.Record, sc scope, workers int) (*chooser, error) {
 	p.DelayRange = [2]float64{math.Min(sc.base, sc.delay[0]), math.Max(sc.base, sc.delay[1])}
 	c := &chooser{p: p, scope: sc, tried: make(map[structure]*candidate), workers: workers}
 	long, err := fit.ChooseARX(recs, fit.ChooseOptions{Delay: 1, Criterion: fit.AICc})
 	if long == nil {
-		return nil, nil, err
+		return nil, err
 	}
 	su, sy := spread(recs)
 	c.seeds = append(c.seeds, long.Reduce(sc.maxPoles, su, sy, p.Period))
@@ -113,7 +117,7 @@ func newChooser(p *fit.Predictor, recs []fit.Record, sc scope, workers int) (*ch
 			c.seeds = append(c.seeds, short.Reduce(sc.maxPoles, su, sy, p.Period))
 		}
 	}
-	return c, long, nil
+	return c, nil
 }
 
 // spread returns the standard deviations of input and output about the means
@@ -199,7 +203,7 @@ func (c *chooser) ranked() []*candidate {
 		}
 	}
 	slices.SortFunc(list, func(a, b *candidate) int {
-		return cmp.Or(cmp.Compare(a.bic, b.bic), cmp.Compare(a.poles, b.poles), cmp.Compare(a.zeros, b.zeros), cmp.Compare(a.colour, b.colour))
+		return cmp.Or(cmp.Compare(a.bic, b.bic), cmp.Compare(a.poles, b.poles), cmp.Compare(a.zeros, b.zeros), cmp.Compare(a.colour, b.colour), cmp.Compare(a.integrators, b.integrators))
 	})
 	return list
 }
@@ -208,22 +212,23 @@ func (c *chooser) ranked() []*candidate {
 // for a delay or a zero.
 func (c *chooser) neighbours(s structure) []structure {
 	var out []structure
+	add := func(d structure, delay bool) {
+		n := structure{s.poles + d.poles, s.zeros + d.zeros, s.colour + d.colour, delay, min(s.integrators+d.integrators, s.poles+d.poles)}
+		if c.scope.allows(n) && n != s {
+			out = append(out, n)
+		}
+	}
 	for _, d := range []structure{
 		{poles: 1}, {poles: -1}, {zeros: 1}, {zeros: -1}, {poles: 1, zeros: 1}, {poles: -1, zeros: -1},
 		{colour: 1}, {colour: -1},
 		// A disturbance's own pole that sat in the plant, under a zero.
 		{poles: -1, zeros: -1, colour: 1}, {poles: 1, zeros: 1, colour: -1},
+		{integrators: 1}, {integrators: 2}, {integrators: -1}, {integrators: -2},
 	} {
-		n := structure{s.poles + d.poles, s.zeros + d.zeros, s.colour + d.colour, s.delay}
-		if c.scope.allows(n) {
-			out = append(out, n)
-		}
+		add(d, s.delay)
 	}
 	for _, d := range []structure{{}, {poles: -1}, {poles: 1}, {zeros: -1}, {poles: -1, zeros: -1}} {
-		n := structure{s.poles + d.poles, s.zeros + d.zeros, s.colour, !s.delay}
-		if c.scope.allows(n) {
-			out = append(out, n)
-		}
+		add(d, !s.delay)
 	}
 	return out
 }
