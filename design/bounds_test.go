@@ -30,6 +30,7 @@ func TestLeastPeakDelay(t *testing.T) {
 	for _, d := range []int{1, 3, 30} {
 		z := math.Exp(0.3 / float64(d))
 		near(t, "sampled", leastPeak(d, []complex128{complex(z, 0)}, nil), math.Exp(0.3), 1e-10)
+		near(t, "sampled, by matrices", leastPeakPick(d, []complex128{complex(z, 0)}, nil), math.Exp(0.3), 1e-10)
 	}
 }
 
@@ -44,7 +45,8 @@ func TestLeastPeakPick(t *testing.T) {
 			zeros = append(zeros, toZ(s/4)) // time scaled by 4, pole and zeros alike
 		}
 		// 1e-8: order 4 has a Gram matrix with condition 1e6.
-		near(t, "Padé zeros", leastPeak(0, []complex128{toZ(0.25)}, zeros), want, 1e-8)
+		near(t, "Padé zeros, by matrices", leastPeakPick(0, []complex128{toZ(0.25)}, zeros), want, 1e-8)
+		near(t, "Padé zeros", leastPeak(0, []complex128{toZ(0.25)}, zeros), want, 1e-12)
 	}
 }
 
@@ -69,7 +71,7 @@ func TestLeastPeakZero(t *testing.T) {
 		near(t, "formula", LeastPeakZero(2, 2*ratio), want, 1e-12)
 		// The same from the sampled bound in a Möbius map.
 		toZ := func(s float64) complex128 { return complex((1+s)/(1-s), 0) }
-		near(t, "Pick", leastPeak(0, []complex128{toZ(0.1)}, []complex128{toZ(0.1 * ratio)}), want, 1e-10)
+		near(t, "Pick", leastPeakPick(0, []complex128{toZ(0.1)}, []complex128{toZ(0.1 * ratio)}), want, 1e-10)
 	}
 }
 
@@ -93,6 +95,30 @@ func TestLeastEffort(t *testing.T) {
 	}
 	if !math.IsNaN(LeastEffort(lti.TF{Num: lti.Poly{1}, Den: lti.Poly{2, -2, 1}})) {
 		t.Error("a complex pair has no such floor here")
+	}
+}
+
+// Youla, Bongiorno & Lu (1974), Automatica 10, 159-173.
+func TestStronglyStabilisable(t *testing.T) {
+	for _, c := range []struct {
+		name         string
+		zeros, poles []complex128
+		want         bool
+	}{
+		{"1/(s-1)", nil, []complex128{1}, true},
+		{"(s-5)/((s-1)(s+10))", []complex128{5}, []complex128{1, -10}, true},
+		{"(s-1)/((s-5)(s+10))", []complex128{1}, []complex128{5, -10}, false},
+		{"(s-1)/((s-5)(s-6)(s+10))", []complex128{1}, []complex128{5, 6, -10}, true},
+	} {
+		if got := StronglyStabilisable(fromRoots(3, c.zeros, c.poles, 0)); got != c.want {
+			t.Errorf("%s: %v", c.name, got)
+		}
+	}
+	r := testRigs()[1]
+	r.truth = fromRoots(5, []complex128{1}, []complex128{3, -10}, 0)
+	r.spec.PeakSensitivity, r.spec.InputNoise = 9, 9
+	if _, err := Design(t.Context(), r.model(t), r.rig(), Options{}); err == nil || !strings.Contains(err.Error(), "parity") {
+		t.Errorf("%v", err)
 	}
 }
 

@@ -162,6 +162,12 @@ func (p *problem) firstPair(ctx context.Context, l *Loops, tuning []plant, aim t
 	if err != nil {
 		return pair{}, err
 	}
+	if chosen < 0 && !StronglyStabilisable(p.nominal.tf) {
+		return pair{}, &ident.RefusedError{
+			What: "no stable controller holds this plant: an odd number of its real unstable poles lies between two of its real right-half-plane zeros, infinity counted (parity interlacing), and an unstable controller is lost whenever the input saturates",
+			Do:   "move the sensor or the actuator, which moves the zeros",
+		}
+	}
 	if chosen < 0 {
 		return pair{}, &ident.RefusedError{
 			What: "no inner loop of the forms gain, lead, lead with roll-off holds all plants that the data allow",

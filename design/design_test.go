@@ -168,7 +168,7 @@ func TestLargestStep(t *testing.T) {
 		t.Fatal(err)
 	}
 	law := l.LTI()
-	v := &prover{p: p, law: law, grid: p.lawGrid(law)}
+	v := p.newProver(law)
 	plants := append([]lti.TF{r.truth}, r.model(t).Draw(extentPlants, stream(1, streamProof, 1))...)
 	for _, share := range []float64{0.99, 1.03} {
 		steps, offsets := true, true

@@ -30,6 +30,9 @@ const innerNoiseShare = 0.75
 // hundredth of margin is not worth an actuator that shakes.
 const noiseWeight = 0.2
 
+// leastGrip is the least steady gain from v to y that the inner loop is asked for.
+const leastGrip = 0.25
+
 // closeEnough is how much of the best form's peak |S| a simpler inner form may give away.
 const closeEnough = 0.08
 
@@ -54,6 +57,11 @@ func (p *problem) innerCost(k block, plants []plant, g *gridLoop, decay bool) (c
 	cost = peakS + noiseWeight*r
 	if r > 1 {
 		cost += 10 * (r - 1)
+	}
+	// The outer loop acts through the inner one's steady gain: next to nothing, or the wrong sign, would leave it
+	// without grip on plants that a pure damper holds.
+	if dc := innerDC(&p.nominal, k); dc < leastGrip {
+		cost += 0.5 * math.Min(1+(leastGrip-dc)/leastGrip, 20)
 	}
 	if decay {
 		g.on(p.inner, z, nil)

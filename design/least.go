@@ -3,6 +3,7 @@ package design
 import (
 	"math"
 	"math/cmplx"
+	"slices"
 
 	"gonum.org/v1/gonum/mat"
 
@@ -71,19 +72,64 @@ func Reach(p, b, lo, hi, tau float64) (from, to float64) {
 	return math.Min(-k*lo, -k*hi), math.Max(-k*lo, -k*hi)
 }
 
+// StronglyStabilisable reports whether a stable controller stabilises the plant: between every two real zeros in the
+// closed right half-plane, infinity counted for a strictly proper plant, lies an even number of real poles. The delay
+// is left out of account.
+//
+// Source: Youla, Bongiorno & Lu (1974), Automatica 10, 159-173 (parity interlacing).
+func StronglyStabilisable(g lti.TF) bool {
+	var zeros []float64
+	for _, z := range g.Zeros() {
+		if imag(z) == 0 && real(z) >= 0 {
+			zeros = append(zeros, real(z))
+		}
+	}
+	slices.Sort(zeros)
+	if g.RelDegree() > 0 {
+		zeros = append(zeros, math.Inf(1))
+	}
+	for i := 1; i < len(zeros); i++ {
+		between := 0
+		for _, p := range g.Poles() {
+			if imag(p) == 0 && real(p) > zeros[i-1] && real(p) < zeros[i] {
+				between++
+			}
+		}
+		if between%2 == 1 {
+			return false
+		}
+	}
+	return true
+}
+
 // leastPeak returns the least peak |S| over all stabilising controllers of a sampled plant with d >= 1 samples
 // from the input to its first effect, its poles and zeros outside the unit circle given in z. One real pole and no
 // zero: |z|^d exactly. For d > 1 and several poles it is less than the product of their |z|^d, which is the value
 // for d = 1 only.
+func leastPeak(d int, poles, zeros []complex128) float64 {
+	switch len(poles) {
+	case 0:
+		return 1
+	case 1:
+		// T = z^-d times the Blaschke product of the zeros times a stable factor, and T = 1 at the pole; S and T
+		// have equal least peaks.
+		z := poles[0]
+		peak := math.Pow(cmplx.Abs(z), float64(d))
+		for _, q := range zeros {
+			peak *= cmplx.Abs((1 - cmplx.Conj(q)*z) / (z - q))
+		}
+		return peak
+	}
+	return leastPeakPick(d, poles, zeros)
+}
+
+// leastPeakPick is leastPeak for any number of poles above none.
 //
 // S = B g, B the Blaschke product of the poles in w = 1/z; S = 1 to order d at w = 0 and at the zeros fixes the
 // first d Taylor coefficients of g and its values there. The least norm of such a g is that of the adjoint of
 // multiplication by g on the span of w^0 … w^(d-1) and the Szegő kernels at the zeros (Nevanlinna-Pick and
 // Carathéodory-Fejér in one: Sarason (1967), Trans. AMS 127, 179-203).
-func leastPeak(d int, poles, zeros []complex128) float64 {
-	if len(poles) == 0 {
-		return 1
-	}
+func leastPeakPick(d int, poles, zeros []complex128) float64 {
 	blaschke := func(w complex128) complex128 {
 		b := complex(1, 0)
 		for _, z := range poles {

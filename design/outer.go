@@ -25,6 +25,7 @@ type ratios struct {
 	stable                                        bool
 	overshoot, settling, peakS, noise             float64
 	input, rate, kick, trip                       float64
+	alone                                         float64 // peak |S| of the inner loop alone, against aloneShare
 	peakSAt, noiseAt, overshootAt, settlingAt, vs float64 // the figures behind, in their own units; vs: largest |v|
 }
 
@@ -32,7 +33,7 @@ func (r ratios) worst() float64 {
 	if !r.stable {
 		return math.Inf(1)
 	}
-	return max(r.overshoot, r.settling, r.peakS, r.noise, r.input, r.rate, r.kick, r.trip)
+	return max(r.overshoot, r.settling, r.peakS, r.noise, r.input, r.rate, r.kick, r.trip, r.alone)
 }
 
 // cost is what the tuner minimises: the worst ratio, with a little of the others so that it does not stand still on
@@ -63,13 +64,16 @@ func (p *problem) judge(inner, outer, pre block, plants []plant, t targets, g *g
 	// The inner loop alone must hold every plant.
 	g.on(p.z1, k1, nil)
 	for i := range plants {
-		if p.frequency(&plants[i], g).outside != 0 {
+		f := p.frequency(&plants[i], g)
+		if f.outside != 0 {
 			return ratios{}
 		}
+		r.alone = math.Max(r.alone, f.peakS/(aloneShare*p.spec.peakS))
 	}
 	g.on(p.z1, k1, &k2)
 	s := &p.spec
 	authority := math.Min(-p.input[0], p.input[1])
+	early := 0.0
 	for i := range plants {
 		pl := &plants[i]
 		fq := p.frequency(pl, g)
@@ -79,7 +83,7 @@ func (p *problem) judge(inner, outer, pre block, plants []plant, t targets, g *g
 		r.peakSAt, r.noiseAt = math.Max(r.peakSAt, fq.peakS), math.Max(r.noiseAt, fq.noise)
 		n := p.runLength(pl)
 		st := sim.step(pl, k1, k2, f, n, p.period, s.settling*t.time, s.band, false)
-		r.overshootAt = math.Max(r.overshootAt, st.peak-1)
+		r.overshootAt, early = math.Max(r.overshootAt, st.peak-1), math.Max(early, st.early)
 		r.settlingAt = math.Max(r.settlingAt, float64(st.settled)*p.period)
 		r.settling = math.Max(r.settling, settlingRatio(st.after/s.band))
 		r.input = math.Max(r.input, st.uMax*s.step/authority)
@@ -97,7 +101,12 @@ func (p *problem) judge(inner, outer, pre block, plants []plant, t targets, g *g
 			r.vs = math.Max(r.vs, kk.vMax*s.kick)
 		}
 	}
-	r.overshoot = 1 + (r.overshootAt-s.overshoot*t.time)/math.Max(s.overshoot, 0.05)
+	over := r.overshootAt - s.overshoot*t.time
+	if over <= 0 && s.overshoot < 0.01 {
+		// Next to no overshoot asked: the margin is how far below its end the output stays while it settles.
+		over = early - (1 - 0.15*s.band)
+	}
+	r.overshoot = 1 + over/math.Max(s.overshoot, 0.05)
 	r.peakS = 1 + (r.peakSAt-t.peak*(s.peakS-1)-1)/math.Max(s.peakS-1, 0.2)*0.5
 	r.noise = r.noiseAt / s.noise
 	return r
@@ -108,6 +117,10 @@ func (p *problem) judge(inner, outer, pre block, plants []plant, t targets, g *g
 func settlingRatio(after float64) float64 {
 	return 1 + 0.3*math.Log(math.Max(after, 0.05))
 }
+
+// aloneShare of the spec's peak |S| is the most that the inner loop alone may have: nobody asks for it, but it is what
+// holds the rig while the outer loop is clamped.
+const aloneShare = 1.25
 
 // meets is the tuner's aim: some margin to the spec on the tuning plants.
 const meets = 0.97
@@ -130,7 +143,7 @@ func (p *problem) outerStarts(form string, inner innerResult, t targets) []pair 
 		out = append(out, pair{form: form, x: x, sign: sign, inner: inner, outer: k, pre: f, ratios: r, cost: r.cost()})
 	}
 	for _, lag := range []float64{0.03, 0.1, 0.25} {
-		for _, ki := range []float64{0.6, 1.2, 2.5, 5, 10} {
+		for _, ki := range []float64{0.1, 0.3, 0.8, 2, 5, 12} {
 			x := []float64{math.Log(lag), 0, math.Log(ki / level)}
 			if form == formI {
 				try(x)

@@ -24,7 +24,7 @@ func TestProofAgreesWithSimulation(t *testing.T) {
 	if err != nil {
 		t.Fatal(err)
 	}
-	v := &prover{p: p, law: law, grid: p.lawGrid(law)}
+	v := p.newProver(law)
 	var settling, overshoot []float64
 	for _, g := range draws {
 		o, err := v.judge(g)
@@ -39,7 +39,7 @@ func TestProofAgreesWithSimulation(t *testing.T) {
 	if p, err = newProblem(m, r.rig()); err != nil {
 		t.Fatal(err)
 	}
-	v = &prover{p: p, law: law, grid: p.lawGrid(law)}
+	v = p.newProver(law)
 	pass := 0
 	for i, g := range draws {
 		o, err := v.judge(g)
@@ -186,5 +186,79 @@ func TestComputedStamp(t *testing.T) {
 			t.Fatal(err)
 		}
 		near(t, stamp, p.nominal.tf.Delay, want, 1e-12)
+	}
+}
+
+// Where the delay is long, stability is judged by the argument principle: the same verdicts as by eigenvalues, on
+// plants of which a loop with little margin holds some and loses others.
+func TestLongDelay(t *testing.T) {
+	r := testRigs()[2]
+	r.period, r.relative = 0.2, 0.05 // 26 samples of delay
+	m := r.model(t)
+	l := designed(t, r.name)
+	p, err := newProblem(m, r.rig())
+	if err != nil {
+		t.Fatal(err)
+	}
+	// The same continuous controllers with a little more gain than the nominal plant bears at the longer period.
+	inner, err := tustinRational(*l.Inner.Continuous, r.period)
+	if err != nil {
+		t.Fatal(err)
+	}
+	outer, err := tustinRational(*l.Outer.Continuous, r.period)
+	if err != nil {
+		t.Fatal(err)
+	}
+	up := *l.Margins.PlantInput.GainUp
+	for i := range inner.Numerator {
+		inner.Numerator[i] *= 1.1 * up
+	}
+	law := &lti.Law{Inner: (&Block{Discrete: inner}).lti(r.period)}
+	k2 := (&Block{Discrete: outer}).lti(r.period)
+	law.Outer = &k2
+	v := p.newProver(law)
+	held := 0
+	for i, g := range m.Draw(60, 5) {
+		pl, err := p.newPlant(g)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if pl.lag+len(pl.den) <= eigenStates {
+			t.Fatalf("%d samples of delay: eigenvalues decide", pl.lag)
+		}
+		both, alone, err := v.holds(g, &pl)
+		if err != nil {
+			t.Fatal(err)
+		}
+		two, err := lti.NewTwoLoops(g, p.compute, law)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if want := stable(two); both != want {
+			t.Errorf("plant %d: both loops %v, by eigenvalues %v", i, both, want)
+		}
+		two.Outer = lti.DTF{}
+		if want := stable(two); alone != want {
+			t.Errorf("plant %d: inner loop %v, by eigenvalues %v", i, alone, want)
+		}
+		if both {
+			held++
+		}
+	}
+	if held < 10 || held > 50 {
+		t.Errorf("%d of 60 held: the comparison says little", held)
+	}
+}
+
+// A spec without overshoot is met with a margin, not by chance.
+func TestNoOvershoot(t *testing.T) {
+	r := testRigs()[0]
+	r.spec.Overshoot = 0
+	l, err := Design(t.Context(), r.model(t), r.rig(), Options{Seed: 1, Plants: 1000})
+	if err != nil {
+		t.Fatal(err)
+	}
+	if l.Promise.Overshoot.Worst > 1e-3 {
+		t.Errorf("overshoot %+v", l.Promise.Overshoot)
 	}
 }

@@ -76,6 +76,7 @@ func (p *problem) outsideInner(pl *plant, g *gridLoop) int {
 type stepFigures struct {
 	peak    float64 // largest output
 	low     float64 // smallest output
+	early   float64 // largest output before the settling time
 	after   float64 // largest |1 - y| from the settling time on
 	settled int     // samples until |1 - y| stays within the band; the length of the run if never
 	uMax    float64 // largest |u|
@@ -138,6 +139,8 @@ func (s *simulator) step(pl *plant, inner, outer, pre zblock, n int, period, set
 		}
 		if k >= from {
 			f.after = math.Max(f.after, miss)
+		} else {
+			f.early = math.Max(f.early, sum)
 		}
 		if !(math.Abs(sum) < 1e6) {
 			f.after, f.uMax, f.peak = 1e6, 1e6, 1e6

@@ -151,3 +151,22 @@ func TestCurves(t *testing.T) {
 	near(t, "peak", peak, l.Margins.PlantInput.PeakSensitivity, 0.01)
 	near(t, "reference at low frequency", c.Reference[0], 1, 0.01)
 }
+
+// An unstable pole cancelled in series, 1 % off: partial fractions give the mode -0.005 e^t in the unit step response
+// of (s - 1.01)/((s - 1)(s + 1)), which reaches 1 at t = ln 200.
+func TestInexactCancellationInSeries(t *testing.T) {
+	const period = 1e-3
+	g, err := lti.ZOHTF(lti.TF{Num: lti.Poly{-1.01, 1}, Den: lti.Poly{-1, 0, 1}}, period)
+	if err != nil {
+		t.Fatal(err)
+	}
+	step := make([]float64, 10001)
+	for i := range step {
+		step[i] = 1
+	}
+	y := g.Filter(nil, step)
+	mode := func(k int) float64 { return y[k] - 1.01 + 1.005*math.Exp(-float64(k)*period) }
+	near(t, "t = 5", mode(5000), -0.742065795512883, 1e-6)
+	near(t, "t = 10", mode(10000), -110.132328974034, 1e-6)
+	near(t, "t = ln 200", mode(5298), -math.Exp(5.298-5.29831736654804), 1e-6)
+}
