@@ -20,6 +20,7 @@ const (
 	MaxColour       = 2
 	MaxIntegrators  = 2
 	maxDelaySamples = 8 // of a delay without a hint
+	firstPoles      = 4 // of the structures that the search starts from
 )
 
 // How hard a structure is fitted while it is only compared with others, and
@@ -150,11 +151,16 @@ func about(x []float64) float64 {
 // has been tried.
 func (c *chooser) choose(ctx context.Context, progress func(done, total int)) ([]*candidate, error) {
 	var first []structure
-	for n := c.scope.minPoles; n <= min(c.scope.maxPoles, max(4, c.scope.minPoles)); n++ {
-		for m := c.scope.minZeros; m <= min(n-1, c.scope.maxZeros); m++ {
-			s := structure{poles: n, zeros: m, delay: c.scope.mustDelay}
-			if c.scope.allows(s) && m <= 2 {
-				first = append(first, s)
+	for n := c.scope.minPoles; n <= min(c.scope.maxPoles, max(firstPoles, c.scope.minPoles)); n++ {
+		for m := c.scope.minZeros; m <= min(n-1, c.scope.maxZeros, max(2, c.scope.minZeros)); m++ {
+			for k := range 2 {
+				for _, delay := range []bool{false, true} {
+					s := structure{poles: n, zeros: m, colour: k, delay: delay}
+					// Zeros first without what else can explain a lag.
+					if c.scope.allows(s) && (m == c.scope.minZeros || k == 0 && delay == c.scope.mustDelay) {
+						first = append(first, s)
+					}
+				}
 			}
 		}
 	}
@@ -290,8 +296,44 @@ func (c *chooser) fit(s structure, near *fit.Prediction) *candidate {
 	}
 	if list = round(list, 1, compareStep); len(list) > 0 {
 		cand.fit, cand.bic = list[0], list[0].BIC()
+		if cancels(list[0]) {
+			cand.bic += dipolePenalty
+		}
 	}
 	return cand
+}
+
+// A plant's pole and zero within dipole of the plant's mean speed nearly
+// cancel. Such a pair is more often a disturbance's pole, or the zero on the
+// unit circle of a noise that was differenced once too often, where the
+// approximation behind BIC fails, than a plant's: it must bring dipolePenalty
+// more, odds of 150 to 1.
+const (
+	dipole        = 0.1
+	dipolePenalty = 10
+)
+
+func cancels(f *fit.Prediction) bool {
+	if f.Zeros == 0 {
+		return false
+	}
+	poles := f.Den.Roots()
+	mean, moving := 1.0, 0
+	for _, p := range poles {
+		if p != 0 {
+			mean *= cmplx.Abs(p)
+			moving++
+		}
+	}
+	mean = math.Pow(mean, 1/float64(max(1, moving)))
+	for _, z := range f.Num.Roots() {
+		for _, p := range poles {
+			if cmplx.Abs(z-p) < dipole*mean {
+				return true
+			}
+		}
+	}
+	return false
 }
 
 // colourStart is where an added colour pole starts, per sample.
