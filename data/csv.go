@@ -104,10 +104,11 @@ type faults struct {
 
 const faultsShown = 4
 
-func (f *faults) add(e *ParseError) {
+// add counts a fault; describe is called for the few that are shown.
+func (f *faults) add(describe func() *ParseError) {
 	f.count++
 	if len(f.first) < faultsShown {
-		f.first = append(f.first, e)
+		f.first = append(f.first, describe())
 	}
 }
 
@@ -369,8 +370,10 @@ func (r *reader) slow(text []byte, line int, open bool) bool {
 			r.ragged = line
 			return false
 		}
-		r.faults.add(&ParseError{File: r.file, Line: line, Err: fmt.Errorf("%s where %d belong", plural(len(cells), "cell", "cells"), len(r.part)),
-			Hint: "mend or remove these lines"})
+		r.faults.add(func() *ParseError {
+			return &ParseError{File: r.file, Line: line, Err: fmt.Errorf("%s where %d belong", plural(len(cells), "cell", "cells"), len(r.part)),
+				Hint: "mend or remove these lines"}
+		})
 		return false
 	}
 	if r.rows > 0 && r.layout.header > 0 && len(r.header) > 0 && bytes.Equal(bytes.TrimSpace(text), bytes.TrimSpace(r.header)) {
@@ -380,20 +383,25 @@ func (r *reader) slow(text []byte, line int, open bool) bool {
 	for i, f := range r.want {
 		x, ok := r.number(cells[f], f)
 		if !ok {
-			e := &ParseError{File: r.file, Line: line, Column: f + 1, Err: fmt.Errorf("%s is no number (column %s)", quote(readable(cells[f])), quote(r.names[f])),
-				Hint: "mend or remove these lines; an empty cell or NaN may stand for a missing value"}
-			if y, n := scanNumber(cells[f], r.mark); n == len(cells[f]) && math.IsInf(y, 0) {
-				e.Err = fmt.Errorf("%s is too large for a number (column %s)", quote(string(cells[f])), quote(r.names[f]))
-			}
-			if f == r.stamps {
-				e.Err = fmt.Errorf("%s is no time stamp (column %s)", quote(readable(cells[f])), quote(r.names[f]))
-				e.Hint = "write s, or ISO 8601 like 2025-12-17T20:58:11.705"
-			}
-			r.faults.add(e)
+			r.faults.add(func() *ParseError { return r.badCell(cells[f], line, f) })
 		}
 		r.values[i] = x
 	}
 	return true
+}
+
+// badCell says what is wrong with a cell of field f that holds no number.
+func (r *reader) badCell(cell []byte, line, f int) *ParseError {
+	e := &ParseError{File: r.file, Line: line, Column: f + 1, Hint: "mend or remove these lines; an empty cell or NaN may stand for a missing value"}
+	what := "is no number"
+	if f == r.stamps {
+		what = "is no time stamp"
+		e.Hint = "write s, or ISO 8601 like 2025-12-17T20:58:11.705"
+	} else if x, n := scanNumber(cell, r.mark); n == len(cell) && math.IsInf(x, 0) {
+		what = "is too large for a number"
+	}
+	e.Err = fmt.Errorf("%s %s (column %s)", quote(readable(cell)), what, quote(r.names[f]))
+	return e
 }
 
 // number reads one cell of field f.

@@ -6,30 +6,27 @@ import (
 	"unicode"
 )
 
-// nearest returns the name with the fewest edits to word, and whether it is near enough that a slip of the
-// keyboard explains the difference. Case, blanks, '_' and '-' count for little. Ties go to the first.
+// nearest returns the name that shares most with word, and whether so much that a slip of the keyboard explains the
+// difference. Case, blanks, '_' and '-' do not count. Ties go to the first.
 func nearest(word string, names []string) (name string, near bool) {
 	const longest = 64 // a longer name is no slip of the keyboard, and the cost grows with its square
 	if len(word) > longest {
 		return "", false
 	}
-	best := -1
+	want := fold(word)
+	best := 1.0 // share of the longer name that differs
 	for _, n := range names {
 		if len(n) > longest {
 			continue
 		}
-		d := 2 * distance(fold(word), fold(n))
-		if word != n {
-			d++
-		}
-		if best < 0 || d < best {
-			best, name = d, n
+		have := fold(n)
+		edits := distance(want, have)
+		if share := float64(edits) / float64(max(1, len(want), len(have))); share < best {
+			best, name = share, n
+			near = edits <= 1+min(len(want), len(have))/3
 		}
 	}
-	if best < 0 {
-		return "", false
-	}
-	return name, best/2 <= 1+min(len(word), len(name))/3
+	return name, near
 }
 
 // fold drops what people vary in names: case, blanks, '_' and '-'.

@@ -180,7 +180,8 @@ func TestReadRigNotARig(t *testing.T) {
 		{"a log", "t,u,y\n0,1,2\n", "rig.toml: line 1, column 2: expected '.' or '=', but got ',' instead; this does not look like a rig file; give the rig file first, then the logs"},
 		{"gz", "\x1f\x8b\x08\x00", "rig.toml: compressed, so no rig file; give the rig file first, then the logs"},
 		{"table as key", "log = 3\n", "rig.toml: line 1: log must be a table; write [log] on a line of its own, once, and its keys below"},
-		{"huge", strings.Repeat("#", maxRigFile+1), "rig.toml: longer than 1 MB, so no rig file; give the rig file first, then the logs"},
+		{"hostile nesting", "\na=" + strings.Repeat("{a=", 20000), "rig.toml: line 2: longer than 2048 bytes, so no rig file; give the rig file first, then the logs"},
+		{"huge", strings.Repeat("#", maxRigFile+1), "rig.toml: longer than 64 kB, so no rig file; give the rig file first, then the logs"},
 	} {
 		t.Run(c.name, func(t *testing.T) {
 			if _, err := ReadRig(strings.NewReader(c.text), "rig.toml"); message(err) != c.want {
@@ -239,7 +240,7 @@ func TestNearest(t *testing.T) {
 		near       bool
 	}{
 		{"Position", "position", true}, {"postion", "position", true}, {"curretn", "current", true},
-		{"sample_period", "Sample Period", true}, {"Y", "y", true}, {"temperature", "", false},
+		{"sample_period", "Sample Period", true}, {"Y", "y", true}, {"temperature", "", false}, {"x", "", false},
 	} {
 		got, near := nearest(c.word, names)
 		if near != c.near || near && got != c.want {

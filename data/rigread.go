@@ -16,8 +16,12 @@ import (
 	"github.com/BurntSushi/toml"
 )
 
-// maxRigFile is more than any rig file needs; a longer one is another file given by mistake, and is not read whole.
-const maxRigFile = 1 << 20
+// More than any rig file needs, in bytes; a longer one is another file given by mistake. What nests deeply enough to make
+// the TOML reader slow needs a longer line.
+const (
+	maxRigFile = 1 << 16
+	maxRigLine = 1 << 11
+)
 
 // ReadRig reads a rig file. name is the file's name, for messages and as the rig's name where none is given.
 //
@@ -29,12 +33,23 @@ func ReadRig(r io.Reader, name string) (*Rig, error) {
 		return nil, fmt.Errorf("reading %q: %w", name, err)
 	}
 	if len(text) > maxRigFile {
-		return nil, &ParseError{File: name, Err: errors.New("longer than 1 MB, so no rig file"),
+		return nil, &ParseError{File: name, Err: errors.New("longer than 64 kB, so no rig file"),
 			Hint: "give the rig file first, then the logs"}
 	}
 	if bytes.HasPrefix(text, []byte("\x1f\x8b")) {
 		return nil, &ParseError{File: name, Err: errors.New("compressed, so no rig file"),
 			Hint: "give the rig file first, then the logs"}
+	}
+	for number, rest := 1, text; len(rest) > 0; number++ {
+		i := bytes.IndexByte(rest, '\n')
+		if i < 0 {
+			i = len(rest) - 1
+		}
+		if i > maxRigLine {
+			return nil, &ParseError{File: name, Line: number, Err: fmt.Errorf("longer than %d bytes, so no rig file", maxRigLine),
+				Hint: "give the rig file first, then the logs"}
+		}
+		rest = rest[i+1:]
 	}
 	text = bytes.TrimPrefix(text, []byte("\xef\xbb\xbf"))
 
@@ -102,8 +117,12 @@ func lineOf(text string, line int) string {
 	return strings.TrimSuffix(first, "\r")
 }
 
-// oneLine puts s on one line and takes out whatever a terminal might take as a command.
+// oneLine puts s on one line of bearable length and takes out whatever a terminal might take as a command.
 func oneLine(s string) string {
+	const longest = 200
+	if runes := []rune(s); len(runes) > longest {
+		s = string(runes[:longest]) + "…"
+	}
 	return strings.Map(func(r rune) rune {
 		if !unicode.IsPrint(r) {
 			return '?'
