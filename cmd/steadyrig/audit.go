@@ -17,10 +17,11 @@ func newAudit(a *app) *cobra.Command {
 	cmd := &cobra.Command{
 		Use:   "audit RIG.toml LOG.csv...",
 		Short: "Say what is wrong with logs, and what can be learnt from them",
-		Long: `audit checks logs before a fit is believed: the sign of the plant, the operating
-point, whether input and output of a row belong together, the loop rate against
-the likely unstable pole, whether anything moves the rig from outside, and flaws
-column by column. It ends with one next step. --out writes audit.json.`,
+		Long: `audit checks logs before a fit is believed: the sign of the plant, the
+operating point, whether input and output of a row belong together, the loop
+rate against the likely unstable pole, whether anything moves the rig from
+outside, and flaws column by column. It ends with one next step. --out writes
+audit.json.`,
 		Example: "  steadyrig audit rig.toml run7.csv",
 		Args:    wants(2, -1, "a rig file and one or more logs"),
 		RunE: func(cmd *cobra.Command, args []string) error {

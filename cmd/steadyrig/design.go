@@ -21,8 +21,8 @@ func newDesign(a *app) *cobra.Command {
 		Short: "Design an inner and an outer loop, and prove them",
 		Long: `design says first what physics allows, then tunes an inner loop that stabilises
 and an outer loop that meets the spec, for the worst of plants drawn from the
-model, and counts on fresh draws how many keep the promise. It writes loops.json,
-or the file that --out names.`,
+model, and counts on fresh draws how many keep the promise. It writes
+loops.json, or the file that --out names.`,
 		Example: "  steadyrig design rig.toml model.json",
 		Args:    wants(2, 2, "a rig file and a model"),
 		RunE: func(cmd *cobra.Command, args []string) error {
@@ -47,10 +47,10 @@ func newVerify(a *app) *cobra.Command {
 	cmd := &cobra.Command{
 		Use:   "verify RIG.toml MODEL.json LOOPS.json",
 		Short: "Prove a pair of loops, the tool's or your own",
-		Long: `verify judges loops against a model: bounds, zeros that would cancel an unstable
-pole, margins, and the promise over the plants that the data allow. The loops may
-be your own, with discrete or continuous coefficients. --out writes them with
-margins and promise made anew.`,
+		Long: `verify judges loops against a model: bounds, zeros that would cancel an
+unstable pole, margins, and the promise over the plants that the data allow.
+The loops may be your own, with discrete or continuous coefficients. --out
+writes them with margins and promise made anew.`,
 		Example: "  steadyrig verify rig.toml model.json loops.json",
 		Args:    wants(3, 3, "a rig file, a model and loops"),
 		RunE: func(cmd *cobra.Command, args []string) error {

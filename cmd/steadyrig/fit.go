@@ -17,9 +17,9 @@ func newFit(a *app) *cobra.Command {
 	cmd := &cobra.Command{
 		Use:   "fit RIG.toml LOG.csv...",
 		Short: "Fit a plant with bounds to logs",
-		Long: `fit finds a continuous-time transfer function of low order in closed-loop logs, with
-its delay, 95 % intervals of its poles, zeros and gain, and the evidence for them.
-It writes model.json, or the file that --out names.`,
+		Long: `fit finds a continuous-time transfer function of low order in closed-loop logs,
+with its delay, 95 % intervals of its poles, zeros and gain, and the evidence
+for them. It writes model.json, or the file that --out names.`,
 		Example: "  steadyrig fit rig.toml run7.csv run8.csv",
 		Args:    wants(2, -1, "a rig file and one or more logs"),
 		RunE: func(cmd *cobra.Command, args []string) error {

@@ -40,7 +40,7 @@ func run(ctx context.Context, args []string, stdin io.Reader, stdout, stderr io.
 		}
 	}()
 	root := newRoot(newApp(args, stdin, stdout, stderr))
-	root.SetArgs(args)
+	root.SetArgs(append([]string{}, args...)) // nil would mean the process's own
 	root.SetIn(stdin)
 	root.SetOut(stdout)
 	root.SetErr(stderr)

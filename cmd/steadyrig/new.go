@@ -19,8 +19,9 @@ func newNew(a *app) *cobra.Command {
 	cmd := &cobra.Command{
 		Use:   "new LOG.csv",
 		Short: "Write the first draft of a rig file from a log's header",
-		Long: `new looks at the head of a log, guesses which column plays which part and prints
-a commented rig file. Each guess is marked; what only you know is left to fill in.`,
+		Long: `new looks at the head of a log, guesses which column plays which part and
+prints a commented rig file. Each guess is marked; what only you know is left
+to fill in.`,
 		Example: "  steadyrig new run7.csv --out rig.toml",
 		Args:    wants(1, 1, "one log"),
 		RunE: func(cmd *cobra.Command, args []string) error {

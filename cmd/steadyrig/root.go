@@ -7,11 +7,12 @@ import (
 	"github.com/spf13/cobra"
 )
 
-const rootLong = `steadyrig takes closed-loop logs of a rig that cannot be left open loop and gives
-a plant model with bounds, an inner loop that stabilises, an outer loop that
-meets the spec, and a proof of both in the sampled loop that will run.
+const rootLong = `steadyrig takes closed-loop logs of a rig that cannot be left open loop and
+gives a plant model with bounds, an inner loop that stabilises, an outer loop
+that meets the spec, and a proof of both in the sampled loop that will run.
 
-Start with "steadyrig demo", or with "steadyrig new LOG.csv" on a log of your own.
+Start with "steadyrig demo", or with "steadyrig new LOG.csv" on a log of your
+own.
 
 Exit status: 0 done; 1 a fault in the tool; 2 the call or an input file is
 wrong; 3 the data or the physics say no; 130 interrupted.`
@@ -34,6 +35,7 @@ func newRoot(a *app) *cobra.Command {
 		RunE: func(cmd *cobra.Command, args []string) error { return cmd.Help() },
 	}
 	root.CompletionOptions.DisableDefaultCmd = true
+	root.SuggestionsMinimumDistance = 2
 	root.SetFlagErrorFunc(func(cmd *cobra.Command, err error) error {
 		return callErrorf("%w; see %s --help", err, cmd.CommandPath())
 	})

@@ -33,8 +33,8 @@ func newRun(a *app) *cobra.Command {
 	cmd := &cobra.Command{
 		Use:   "run RIG.toml LOG.csv...",
 		Short: "Do the whole job: audit, fit, design, proof, report",
-		Long: `run audits and fits the logs, designs and proves two loops, and writes rig.toml,
-audit.json, model.json, loops.json and report.html into one folder.`,
+		Long: `run audits and fits the logs, designs and proves two loops, and writes
+rig.toml, audit.json, model.json, loops.json and report.html into one folder.`,
 		Example: "  steadyrig run rig.toml run7.csv run8.csv --dir study",
 		Args:    wants(2, -1, "a rig file and one or more logs"),
 		RunE: func(cmd *cobra.Command, args []string) error {
@@ -68,8 +68,9 @@ func newDemo(a *app) *cobra.Command {
 	cmd := &cobra.Command{
 		Use:   "demo",
 		Short: "Do the whole job on an invented rig",
-		Long: `demo writes the rig file and a simulated closed-loop log of an invented rig into a
-folder, then does all that run does. No rig here is a model of a real one.`,
+		Long: `demo writes the rig file and a simulated closed-loop log of an invented rig
+into a folder, then does all that run does. No rig here is a model of a real
+one.`,
 		Example: "  steadyrig demo\n  steadyrig demo --rig reactor --dir reactor",
 		Args:    wants(0, 0, "no arguments (name a rig with --rig)"),
 		RunE: func(cmd *cobra.Command, args []string) error {
@@ -116,7 +117,6 @@ folder, then does all that run does. No rig here is a model of a real one.`,
 func (s *settings) addFolder(cmd *cobra.Command) {
 	s.add(cmd, "the same as --dir")
 	cmd.Flags().StringVar(&s.dir, "dir", "", "folder to write (default: named by rig and time)")
-	cmd.MarkFlagsMutuallyExclusive("out", "dir")
 }
 
 func (a *app) listRigs(s *settings) error {
@@ -161,6 +161,8 @@ type job struct {
 func (j *job) chooseFolder(a *app, s *settings, more ...string) error {
 	names := append([]string{rigFile, auditFile, modelFile, loopsFile, reportFile}, more...)
 	switch {
+	case s.dir != "" && s.out != "":
+		return callErrorf("--out and --dir both name the folder: give one of them; see --help")
 	case s.dir != "":
 		j.dir = s.dir
 	case s.out != "":

@@ -67,7 +67,7 @@ func showMethods(p *page, m *ident.Model) {
 	}
 	p.table(columns("method", name, "takes for granted", takes, ">rightmost pole", poles, "agrees", agrees))
 	for _, e := range m.Evidence.Methods {
-		if e.Note != "" && !e.Agrees {
+		if e.Note != "" && (!e.Agrees || len(e.Poles) == 0) {
 			p.item(e.Name, e.Note)
 		}
 	}
@@ -94,12 +94,13 @@ func showEvidence(p *page, m *ident.Model, u data.Units) {
 		return
 	}
 	p.heading("Structures compared")
-	var poles, zeros, colour, delay, bic, word []string
+	var poles, zero, zeros, colour, delay, bic, word []string
 	for i, s := range m.Evidence.Structures {
 		if i == shownStructures {
 			break
 		}
-		poles, zeros, colour = append(poles, fmt.Sprint(s.Poles)), append(zeros, fmt.Sprint(s.Zeros)), append(colour, fmt.Sprint(s.Colour))
+		poles, zero = append(poles, fmt.Sprint(s.Poles)), append(zero, fmt.Sprint(s.Integrators))
+		zeros, colour = append(zeros, fmt.Sprint(s.Zeros)), append(colour, fmt.Sprint(s.Colour))
 		delay, bic = append(delay, words.Seconds(s.Delay)), append(bic, words.Number(s.BIC))
 		mark := ""
 		if s.Chosen {
@@ -107,7 +108,7 @@ func showEvidence(p *page, m *ident.Model, u data.Units) {
 		}
 		word = append(word, mark)
 	}
-	p.table(columns(">poles", poles, ">zeros", zeros, ">colour", colour, ">delay", delay, ">BIC above best", bic, " ", word))
+	p.table(columns(">poles", poles, ">held at 0", zero, ">zeros", zeros, ">colour", colour, ">delay", delay, ">BIC above best", bic, " ", word))
 	if n := len(m.Evidence.Structures) - shownStructures; n > 0 {
 		p.line("  and %d more in the file, with what spoke against each", n)
 	}

@@ -23,10 +23,10 @@ func newSimulate(a *app) *cobra.Command {
 	cmd := &cobra.Command{
 		Use:   "simulate RIG.toml MODEL.json LOOPS.json",
 		Short: "Print the log that the rig would write under the loops",
-		Long: `simulate runs the loops on the model's plant in the sampled and saturating loop, with
-the disturbances as identified, and prints a log with the columns that the rig
-file names. The reference steps up and down by the spec's step unless told
-otherwise. A log that ends at a trip comes with exit status 3.`,
+		Long: `simulate runs the loops on the model's plant in the sampled and saturating
+loop, with the disturbances as identified, and prints a log with the columns
+that the rig file names. The reference steps up and down by the spec's step
+unless told otherwise. A log that ends at a trip comes with exit status 3.`,
 		Example: "  steadyrig simulate rig.toml model.json loops.json --probe 0.1 --out sim.csv",
 		Args:    wants(3, 3, "a rig file, a model and loops"),
 		RunE: func(cmd *cobra.Command, args []string) error {

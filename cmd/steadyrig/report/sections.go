@@ -193,13 +193,13 @@ func plantSection(in Input) (section, error) {
 	if len(methods.Rows) > 0 {
 		s.Tables = append(s.Tables, methods)
 	}
-	structures := table{Caption: "Structures compared", Head: []string{"Poles", "Zeros", "Colour", "Delay", "BIC above best", ""}, Right: []bool{true, true, true, true, true}}
+	structures := table{Caption: "Structures compared", Head: []string{"Poles", "Held at 0", "Zeros", "Colour", "Delay", "BIC above best", ""}, Right: []bool{true, true, true, true, true, true}}
 	for _, c := range m.Evidence.Structures {
 		note := c.Verdict
 		if c.Chosen && note == "" {
 			note = "chosen"
 		}
-		structures.Rows = append(structures.Rows, []string{fmt.Sprint(c.Poles), fmt.Sprint(c.Zeros), fmt.Sprint(c.Colour), words.Seconds(c.Delay), words.Number(c.BIC), note})
+		structures.Rows = append(structures.Rows, []string{fmt.Sprint(c.Poles), fmt.Sprint(c.Integrators), fmt.Sprint(c.Zeros), fmt.Sprint(c.Colour), words.Seconds(c.Delay), words.Number(c.BIC), note})
 	}
 	if len(structures.Rows) > 0 {
 		s.Tables = append(s.Tables, structures)

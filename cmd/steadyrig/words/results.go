@@ -22,11 +22,18 @@ func Model(m *ident.Model) string {
 	return fmt.Sprintf("%s: %s; %s", m.Rig, Unstable(m.Poles), meaning)
 }
 
-// Unstable names the unstable poles, or the ones that may be.
+// Unstable names the unstable poles, those that may be, and those at zero.
 func Unstable(poles []ident.Root) string {
-	var found []string
+	var found, zero []string
 	for _, r := range poles {
-		if r.Im < 0 || !r.Unstable && !(r.ProbabilityUnstable > 0.025) {
+		if r.Im < 0 {
+			continue
+		}
+		if r.Re == 0 && r.Im == 0 {
+			zero = append(zero, Interval(r.Re95))
+			continue
+		}
+		if !r.Unstable && !(r.ProbabilityUnstable > 0.025) {
 			continue
 		}
 		what := fmt.Sprintf("at %s rad/s (95 %%: %s)", Number(r.Re), Interval(r.Re95))
@@ -36,18 +43,26 @@ func Unstable(poles []ident.Root) string {
 		case r.Re > 0 && r.Re95.Lo > 0:
 			what += ", doubling in " + Seconds(math.Ln2/r.Re)
 		}
-		if r.Re95.Lo < 0 {
+		if r.Re95.Contains(0) {
 			what += fmt.Sprintf(", unstable with probability %s", Probability(r.ProbabilityUnstable))
 		}
 		found = append(found, what)
 	}
+	var parts []string
 	switch len(found) {
 	case 0:
-		return "no unstable pole was found"
 	case 1:
-		return "unstable pole " + found[0]
+		parts = append(parts, "unstable pole "+found[0])
+	default:
+		parts = append(parts, "unstable poles "+strings.Join(found, "; "))
 	}
-	return "unstable poles " + strings.Join(found, "; ")
+	if len(zero) > 0 {
+		parts = append(parts, fmt.Sprintf("%s at zero (95 %% in rad/s: %s)", Count(len(zero), "pole"), strings.Join(zero, "; ")))
+	}
+	if len(parts) == 0 {
+		return "no unstable pole was found"
+	}
+	return strings.Join(parts, "; ")
 }
 
 // Assumes says what a method takes for granted.
@@ -61,7 +76,7 @@ var Assumes = map[string]string{
 // Rightmost formats the pole with the largest real part.
 func Rightmost(poles [][2]float64) string {
 	if len(poles) == 0 {
-		return "none"
+		return "–"
 	}
 	best := poles[0]
 	for _, q := range poles[1:] {
