@@ -4,6 +4,7 @@ import (
 	"fmt"
 	"math"
 
+	"steadyrig/fit/lti"
 	"steadyrig/ident"
 )
 
@@ -107,6 +108,10 @@ func (p *problem) conclude(l *Loops) {
 			}
 		}
 	}
+	if over, at := p.betweenSamples(l.LTI()); over > p.spec.overshoot && over > at+0.01 {
+		weak = true
+		warn("between the samples the nominal output overshoots the step by %.3g of it, at the samples by %.3g: shorten the sample period", over, at)
+	}
 	if q := l.Promise; q != nil && len(q.UnstablePoles) > 1 {
 		warn("the drawn plants differ in their number of unstable poles: each was judged with its own")
 	}
@@ -116,4 +121,28 @@ func (p *problem) conclude(l *Loops) {
 	if weak && l.Verdict == Sound {
 		l.Verdict = Weak
 	}
+}
+
+// betweenSamples returns the nominal plant's overshoot of the spec's step as a share of it, between the samples and
+// at them. Zero where the run fails: the proof has then said so.
+func (p *problem) betweenSamples(law *lti.Law) (between, at float64) {
+	const fine = 8
+	steps := min(max(int(2*p.spec.settling/p.period), 20), 4000)
+	ref := make([]float64, steps)
+	for k := range ref {
+		ref[k] = law.Y0 + p.spec.step
+	}
+	t, err := lti.Run{
+		Plant: p.model.TF(), Period: p.period, ComputeDelay: p.compute, Law: law, Steps: steps, Reference: ref, Fine: fine,
+	}.Simulate()
+	if err != nil || t.Tripped >= 0 {
+		return 0, 0
+	}
+	for i, y := range t.Fine {
+		x := (y-law.Y0)/p.spec.step - 1
+		if between = math.Max(between, x); i%fine == 0 {
+			at = math.Max(at, x)
+		}
+	}
+	return between, at
 }

@@ -262,3 +262,31 @@ func TestNoOvershoot(t *testing.T) {
 		t.Errorf("overshoot %+v", l.Promise.Overshoot)
 	}
 }
+
+// An oscillation that hides between the samples is seen: a plant with a lightly damped mode at the sampling rate
+// itself, of which the samples show next to nothing.
+func TestBetweenSamples(t *testing.T) {
+	const period = 0.1
+	w := 2 * math.Pi / period
+	// 1/(s/2 + 1) + 0.3 w^2/(s^2 + s + w^2): of the second part the samples see 0.3 (1 - cos 2 pi k) = 0.
+	slow, mode := lti.Poly{1, 0.5}, lti.Poly{w * w, 1, 1}
+	g := lti.TF{Num: mode.Add(slow.Scale(0.3 * w * w)), Den: slow.Mul(mode)}
+	rig := bareRig(period, 0, 4)
+	p, err := newProblem(bare(g, period), rig)
+	if err != nil {
+		t.Fatal(err)
+	}
+	outer := lti.Tustin(lti.TF{Num: lti.Poly{2.2}, Den: lti.Poly{0, 1}}, period)
+	law := &lti.Law{Inner: lti.Gain(0.5, period), Outer: &outer}
+	between, at := p.betweenSamples(law)
+	if !(between > at+0.01) {
+		t.Errorf("overshoot %v between the samples, %v at them", between, at)
+	}
+	r := testRigs()[0] // smooth: the two agree
+	if p, err = newProblem(r.model(t), r.rig()); err != nil {
+		t.Fatal(err)
+	}
+	if between, at = p.betweenSamples(designed(t, r.name).LTI()); math.Abs(between-at) > 1e-3 {
+		t.Errorf("levitated: overshoot %v between the samples, %v at them", between, at)
+	}
+}
