@@ -191,19 +191,19 @@ func poleFigure(m *ident.Model) figure {
 		"An interval narrower than its mark does not show; the table has the numbers."}
 }
 
-// methodFigure sets the unstable pole by each method beside the interval of the final estimate; ok is false where
-// there is no such pole or no other method.
+// methodFigure sets the rightmost pole that is or may be unstable, by each method, beside the interval of the final
+// estimate; ok is false where there is no such pole or no other method.
 func methodFigure(m *ident.Model) (f figure, ok bool) {
 	var pole *ident.Root
 	for i, r := range m.Poles {
-		if r.Im >= 0 && r.Unstable && (pole == nil || r.Re > pole.Re) {
+		if may := r.Unstable || r.Re95.Contains(0); r.Im >= 0 && may && (pole == nil || r.Re95.Hi > pole.Re95.Hi) {
 			pole = &m.Poles[i]
 		}
 	}
 	if pole == nil || len(m.Evidence.Methods) < 2 || !finite(pole.Re95.Lo) || !finite(pole.Re95.Hi) {
 		return figure{}, false
 	}
-	p := newPlot("real part of the unstable pole, rad/s", "")
+	p := newPlot("real part, rad/s", "")
 	n := len(m.Evidence.Methods)
 	var names []plot.Tick
 	addBand(p, []float64{pole.Re95.Lo, pole.Re95.Hi}, []float64{0.4, 0.4}, []float64{float64(n) + 0.6, float64(n) + 0.6}, bandColour)
@@ -232,7 +232,7 @@ func methodFigure(m *ident.Model) (f figure, ok bool) {
 	p.Y.Min, p.Y.Max = 0.4, float64(n)+0.6
 	room(&p.X)
 	band := bandColour
-	return figure{drawn(p, "The unstable pole as each method of estimation has it"), "The unstable pole by each method",
+	return figure{drawn(p, "The rightmost pole as each method of estimation has it"), "The rightmost pole by each method",
 		[]key{{Band: &band, Label: "95 % interval of the final estimate"}, {Stroke: mainLine, Label: "final estimate"}},
 		"Methods that take different things for granted should agree. Agreement clears the noise model; order, hold and pairing would bias all alike."}, true
 }

@@ -1,0 +1,83 @@
+package words
+
+import (
+	"math"
+	"testing"
+
+	"steadyrig/design"
+	"steadyrig/ident"
+)
+
+func TestNumbers(t *testing.T) {
+	inf := math.Inf(1)
+	for _, c := range []struct{ got, want string }{
+		{Number(0), "0"},
+		{Number(36.1234), "36.12"},
+		{Number(-0.00012345), "-0.0001234"},
+		{Number(2.6132e6), "2.613e6"},
+		{Number(448599.4), "448599"},
+		{Number(1.5e-9), "1.5e-9"},
+		{Number(math.NaN()), "unknown"},
+		{Number(inf), "no limit"},
+		{Brief(12.1834), "12.2"},
+		{Brief(0.56071), "0.561"},
+		{Brief(1234), "1234"},
+		{Unit("3", ""), "3"},
+		{Unit("3", "mm"), "3 mm"},
+		{Interval(ident.Interval{Lo: 35.7512, Hi: 36.4934}), "35.75 to 36.49"},
+		{Interval(ident.Interval{Lo: -0.02722, Hi: 0.8229}), "-0.03 to 0.82"},
+		{Interval(ident.Interval{Lo: -inf, Hi: 2}), "below 2"},
+		{Interval(ident.Interval{Lo: 2, Hi: inf}), "above 2"},
+		{Interval(ident.Interval{Lo: -inf, Hi: inf}), "not bounded"},
+		{Interval(ident.Interval{Lo: 3, Hi: 3}), "3 to 3"},
+		{Interval(ident.Interval{Lo: 2.586e6, Hi: 2.64e6}), "2.586e6 to 2.64e6"},
+		{Interval(ident.Interval{Lo: 1.23e-9, Hi: 1.31e-9}), "1.23e-9 to 1.31e-9"},
+		{Share(0.99850), "99.85 %"},
+		{Probability(0.99999), "> 0.999"},
+		{Probability(0.00001), "< 0.001"},
+		{Probability(0.9234), "0.923"},
+		{Seconds(0), "0 s"},
+		{Seconds(30.28e-6), "30.28 µs"},
+		{Seconds(0.0121), "12.1 ms"},
+		{Seconds(6.789), "6.789 s"},
+		{Count(1, "plant"), "1 plant"},
+		{Count(2, "plant"), "2 plants"},
+		{Polynomial([]float64{1, -288.4, 0, -1}, "s"), "s³ - 288.4 s² - 1"},
+		{Polynomial([]float64{-312.7, 2185}, "s"), "-312.7 s + 2185"},
+		{Polynomial([]float64{0.5}, "s"), "0.5"},
+		{Fraction(design.Rational{Numerator: []float64{-2.5, 1}, Denominator: []float64{1, -0.5, 0.25}}, "z"), "(-2.5 + 1 z⁻¹) / (1 - 0.5 z⁻¹ + 0.25 z⁻²)"},
+		{Ratio("mm", "A"), "mm/A"},
+		{Ratio("", "A"), "1/A"},
+		{Ratio("mm", ""), "mm"},
+		{Ratio("", ""), ""},
+	} {
+		if c.got != c.want {
+			t.Errorf("%q, want %q", c.got, c.want)
+		}
+	}
+}
+
+func TestUnstable(t *testing.T) {
+	real36 := ident.Root{Re: 36, Re95: ident.Interval{Lo: 35, Hi: 37}, Unstable: true, ProbabilityUnstable: 1}
+	up := ident.Root{Re: 1.1, Im: 10, Re95: ident.Interval{Lo: 1, Hi: 1.2}, Unstable: true, ProbabilityUnstable: 1}
+	down := up
+	down.Im = -10
+	open := ident.Root{Re: 0.3, Re95: ident.Interval{Lo: -0.2, Hi: 0.8}, Unstable: true, ProbabilityUnstable: 0.9}
+	stable := ident.Root{Re: -4, Re95: ident.Interval{Lo: -5, Hi: -3}}
+	zero := ident.Root{Re95: ident.Interval{Lo: -0.5, Hi: 0.5}}
+	for _, c := range []struct {
+		poles []ident.Root
+		want  string
+	}{
+		{[]ident.Root{stable}, "no unstable pole was found"},
+		{[]ident.Root{stable, real36}, "unstable pole at 36 rad/s (95 %: 35.0 to 37.0), doubling in 19.25 ms"},
+		{[]ident.Root{down, up}, "unstable pole pair at 1.1 ± 10i rad/s (real part 95 %: 1.00 to 1.20)"},
+		{[]ident.Root{open}, "unstable pole at 0.3 rad/s (95 %: -0.2 to 0.8), unstable with probability 0.900"},
+		{[]ident.Root{zero, zero}, "2 poles at zero (95 % in rad/s: -0.5 to 0.5; -0.5 to 0.5)"},
+		{[]ident.Root{zero, real36}, "unstable pole at 36 rad/s (95 %: 35.0 to 37.0), doubling in 19.25 ms; 1 pole at zero (95 % in rad/s: -0.5 to 0.5)"},
+	} {
+		if got := Unstable(c.poles); got != c.want {
+			t.Errorf("%q, want %q", got, c.want)
+		}
+	}
+}
