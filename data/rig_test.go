@@ -247,4 +247,10 @@ func TestNearest(t *testing.T) {
 			t.Errorf("nearest(%q) = %q, %v", c.word, got, near)
 		}
 	}
+	if name, near := nearest("rfe", []string{"ref"}); !near || name != "ref" { // two letters swapped are one slip
+		t.Errorf("nearest(rfe) = %q, %v", name, near)
+	}
+	if d := distance([]rune("curretn"), []rune("current")); d != 1 {
+		t.Errorf("distance(curretn, current) = %d, want 1", d)
+	}
 }
