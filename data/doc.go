@@ -62,12 +62,13 @@
 //	beyond limits    input past [limits] input                      row not used
 //	beyond rate      input faster than [limits] input_rate          used
 //	saturation       input flat at its limits, given or found       used
-//	trip             output beyond [limits] output                  not used until the rig evidently runs again
+//	trip             output beyond [limits] output                  only rows in which the rig evidently runs are used
 //	stuck sensor     output repeats a value far longer than usual   rows not used
 //	spike            one output far off its neighbours              row not used
 //	quantisation     values on a grid that is not fine              used
 //	drift            a mean that runs away through the log          used
 //	constant column  reference or dither that never moves           used
+//	input at rest    a whole stretch without a move of the input    not used
 //	short segment    less than MinSegment rows                      not used
 //
 // A row that is not used ends its segment; the next row starts another. Flaws that take two columns or a model to see

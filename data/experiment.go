@@ -58,6 +58,7 @@ const (
 	FlawSpike     = "spike"           // one sample of the output far off its neighbours
 	FlawQuantised = "quantisation"    // values on a grid
 	FlawDrift     = "drift"           // the mean moves through the log
+	FlawIdle      = "input at rest"   // a whole stretch between two breaks without a move of the input
 	FlawShort     = "short segment"   // too few rows between two breaks
 	FlawConstant  = "constant column" // reference or dither that never moves
 )

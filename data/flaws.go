@@ -170,13 +170,14 @@ func (l *log) findFlatTops(u []float64, name string) {
 	l.saturated(name, low, high, first, lo, hi)
 }
 
-// After a trip, rows are used again only where the rig evidently was started anew.
+// In a log with trips, a rig is taken to run where it evidently does.
 const (
-	restartRows  = 200 // rows on end within limits
-	restartMoves = 0.1 // share of these rows in which the input moves
+	runningRows  = 200 // rows on end within limits, at least
+	runningMoves = 0.1 // share of them in which the input moves, at least
 )
 
-// findTrips marks rows in which the output is beyond its limits, and those after it until the rig runs again.
+// findTrips marks rows in which the output is beyond its limits, and those between them in which the rig passes through
+// its limits or lies there with the actuator off: before the first start, after a trip, while it is picked up.
 func (l *log) findTrips() {
 	lim := l.rig.Limits.Output
 	if lim == nil {
@@ -184,53 +185,46 @@ func (l *log) findTrips() {
 	}
 	u, y := l.columns[l.u], l.columns[l.y]
 	outside := func(k int) bool { return y[k] < lim[0] || y[k] > lim[1] }
-	trips, first, rows, restarts := 0, 0, 0, 0
-	tripped := false
-	for k := 0; k < l.rows; {
-		if outside(k) {
-			if !tripped {
-				trips++
-				if trips == 1 {
-					first = l.lines.at(k)
-				}
-				tripped = true
-			}
-			l.dropped[k] |= isTripped
-			rows++
-			k++
-			continue
-		}
-		if !tripped {
-			k++
-			continue
-		}
-		to, moved := k+1, 0
-		for to < l.rows && !outside(to) {
+	first := 0
+	for first < l.rows && !outside(first) {
+		first++
+	}
+	if first == l.rows {
+		return
+	}
+	trips, restarts, rows := 0, 0, 0
+	running := false
+	for from, to := 0, 0; from < l.rows; from = to {
+		moved := 0
+		for to = from + 1; to < l.rows && outside(to) == outside(from); to++ {
 			if u[to] != u[to-1] {
 				moved++
 			}
-			to++
 		}
-		if to-k >= restartRows && float64(moved) >= restartMoves*float64(to-k) {
-			restarts++
-			tripped = false
-		} else {
-			for i := k; i < to; i++ {
-				l.dropped[i] |= isTripped
+		if outside(from) {
+			if running {
+				trips++
 			}
-			rows += to - k
+			running = false
+		} else {
+			running = to-from >= runningRows && float64(moved) >= runningMoves*float64(to-from)
+			if running && from > 0 {
+				restarts++
+			}
 		}
-		k = to
+		if !running {
+			rows += to - from
+			for k := from; k < to; k++ {
+				l.dropped[k] |= isTripped
+			}
+		}
 	}
-	if trips == 0 {
-		return
-	}
-	effect := plural(rows, "row", "rows") + " from there on not used"
+	effect := plural(rows, "row", "rows") + " not used: beyond, or the rig is not running"
 	if restarts > 0 {
-		effect += fmt.Sprintf("; used again after %s (%d rows within limits, input moving)", plural(restarts, "restart", "restarts"), restartRows)
+		effect += fmt.Sprintf("; used after %s (%d rows on end within limits, input moving)", plural(restarts, "restart", "restarts"), runningRows)
 	}
-	l.flaw(Flaw{Name: FlawTrip, Column: l.column(l.y), Count: trips, Line: first,
-		Detail: fmt.Sprintf("output left [limits] output [%s, %s]", number(lim[0]), number(lim[1])), Effect: effect})
+	l.flaw(Flaw{Name: FlawTrip, Column: l.column(l.y), Count: max(1, trips), Line: l.lines.at(first),
+		Detail: fmt.Sprintf("output beyond [limits] output [%s, %s]", number(lim[0]), number(lim[1])), Effect: effect})
 }
 
 // findStuck marks stretches in which the output repeats one value far longer than it usually does.

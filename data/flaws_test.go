@@ -221,6 +221,19 @@ func TestFlawShortSegment(t *testing.T) {
 	}
 }
 
+func TestFlawIdle(t *testing.T) {
+	p := newPlainLog(400)
+	for k := 200; k < 400; k++ {
+		p.t[k]++
+		p.u[k] = 0.5
+	}
+	exp := mustRead(t, p.csv(), plainRig())
+	want := Flaw{FlawIdle, "u", 1, 202, "200 rows in stretches in which the input never moves", "not used: the loop was not closed"}
+	if got := findFlaw(t, exp, FlawIdle); got != want || exp.Used != 200 {
+		t.Errorf("got  %+v\nwant %+v\n%d rows used", got, want, exp.Used)
+	}
+}
+
 func TestNoSegmentLeft(t *testing.T) {
 	p := newPlainLog(300)
 	lines := strings.Split(p.csv(), "\n")
@@ -360,7 +373,7 @@ func TestFlawTrip(t *testing.T) {
 	g := plainRig()
 	g.Limits.Output = &[2]float64{-2, 2}
 	exp := mustRead(t, p.csv(), g)
-	want := Flaw{FlawTrip, "y", 1, 602, "output left [limits] output [-2, 2]", "400 rows from there on not used"}
+	want := Flaw{FlawTrip, "y", 1, 602, "output beyond [limits] output [-2, 2]", "400 rows not used: beyond, or the rig is not running"}
 	if got := findFlaw(t, exp, FlawTrip); got != want || exp.Used != 600 || len(exp.Segments) != 1 {
 		t.Errorf("got  %+v\nwant %+v\n%d rows used", got, want, exp.Used)
 	}
@@ -372,7 +385,7 @@ func TestNoRestart(t *testing.T) {
 		name   string
 		from   int
 		moving bool
-	}{{"too short", 1000 - restartRows + 1, true}, {"actuator off", 700, false}} {
+	}{{"too short", 1000 - runningRows + 1, true}, {"actuator off", 700, false}} {
 		p := newPlainLog(1000)
 		for k := 600; k < 1000; k++ {
 			if !c.moving {
@@ -398,7 +411,7 @@ func TestFlawTripAndRestart(t *testing.T) {
 	g := plainRig()
 	g.Limits.Output = &[2]float64{-2, 2}
 	exp := mustRead(t, p.csv(), g)
-	want := Flaw{FlawTrip, "y", 1, 302, "output left [limits] output [-2, 2]", "100 rows from there on not used; used again after 1 restart (200 rows within limits, input moving)"}
+	want := Flaw{FlawTrip, "y", 1, 302, "output beyond [limits] output [-2, 2]", "100 rows not used: beyond, or the rig is not running; used after 1 restart (200 rows on end within limits, input moving)"}
 	if got := findFlaw(t, exp, FlawTrip); got != want || exp.Used != 900 || len(exp.Segments) != 2 {
 		t.Errorf("got  %+v\nwant %+v\n%d rows used", got, want, exp.Used)
 	}

@@ -1,6 +1,7 @@
 package data
 
 import (
+	"fmt"
 	"math"
 	"os"
 	"path/filepath"
@@ -40,6 +41,28 @@ func TestMeasuredLevitation(t *testing.T) {
 		if exp.Rows != c.rows || exp.Period != 0.01 || len(exp.Columns) != 7 {
 			t.Errorf("%s: %d rows, period %v, columns %q", c.name, exp.Rows, exp.Period, exp.Columns)
 		}
+	}
+}
+
+// The note beside the log says: uninterrupted levitation from 2.10 s to 34.86 s, 3277 samples; before that the ball lies at
+// its stop and is picked up. A step of the output is that of a 10-bit converter over 50 mm: 48.876 um.
+func TestMeasuredLevitationWithinLimits(t *testing.T) {
+	f, err := os.Open(filepath.Join(datasets, "maglev_levitador/dataset_multiescalon_20251217_210203.txt"))
+	if err != nil {
+		t.Skipf("measured log is not here: %v", err)
+	}
+	defer f.Close()
+	g := &Rig{Log: LogColumns{Time: "t", Input: "u", Output: "y", Reference: "yd"}, Limits: Limits{Output: &[2]float64{0.001, 0.010}}}
+	exp, err := ReadLog(f, "multiescalon.txt", g)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if s := exp.Segments[len(exp.Segments)-1]; len(exp.Segments) != 1 || s.Start != 2.10 || len(s.Y) != 3277 {
+		t.Errorf("%d segments, the last from %v s, %d rows", len(exp.Segments), s.Start, len(s.Y))
+	}
+	var step float64
+	if _, err := fmt.Sscanf(findFlaw(t, exp, FlawQuantised).Detail, "step %g,", &step); err != nil || math.Abs(step-0.05/1023) > 1e-8 {
+		t.Errorf("step %v, %v", step, err)
 	}
 }
 

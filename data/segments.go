@@ -10,6 +10,7 @@ import (
 func (l *log) segments() []Segment {
 	var out []Segment
 	short, shortRows, first := 0, 0, 0
+	idle, idleRows, firstIdle := 0, 0, 0
 	l.runs(func(from, to int) {
 		if l.rig.Log.InputRow == InputBefore {
 			// The input of the next row acts from this row's output sample on; the last row has no such input.
@@ -23,8 +24,21 @@ func (l *log) segments() []Segment {
 			shortRows += max(0, to-from)
 			return
 		}
-		out = append(out, l.segment(from, to))
+		s := l.segment(from, to)
+		if !moves(s.U) {
+			if idle == 0 {
+				firstIdle = s.Line
+			}
+			idle++
+			idleRows += to - from
+			return
+		}
+		out = append(out, s)
 	})
+	if idle > 0 {
+		l.flaw(Flaw{Name: FlawIdle, Column: l.column(l.u), Count: idle, Line: firstIdle, Detail: plural(idleRows, "row", "rows") + " in stretches in which the input never moves",
+			Effect: "not used: the loop was not closed"})
+	}
 	if short > 0 {
 		l.flaw(Flaw{Name: FlawShort, Count: short, Line: first, Detail: plural(shortRows, "row", "rows") + " in stretches of less than " + fmt.Sprint(MinSegment),
 			Effect: "not used"})
