@@ -29,18 +29,20 @@
 //     A cancels in K S H: nothing unstable is ever simulated open loop.
 //  3. Inner loop: gain, lead, lead with roll-off. A lattice of rates, angles and gains finds starts on the nominal
 //     plant (signs included: nothing assumes a positive gain); simplexes polish them for the least worst peak |S|
-//     over the tuning plants, with input noise, slow poles and forbidden zeros as constraints. The simplest form
-//     within 8 % of the best is taken.
+//     over the tuning plants, with input noise, slow poles, forbidden zeros and a least steady gain as constraints.
+//     The simplest form within 8 % of the best is taken.
 //  4. Outer loop: I, PI, PI with lead, each with a first-order prefilter, tuned for the worst ratio of reached to
 //     asked: overshoot, error after the settling time, peak |S|, input noise, use of the input, kick. The first form
 //     that meets all of them with a margin is taken; if none does, inner and outer loop are polished together.
 //  5. The tuning set starts with the nominal plant and a few draws and grows by the worst of a larger pool.
 //  6. Outer limits: as wide as leaves the inner loop alone able to come through any step of v between them.
-//  7. Proof on fresh draws, in the simulator of fit/lti, both directions of the step, limits acting.
+//  7. Proof on fresh draws, in the simulator of fit/lti, both directions of the step, limits acting; the nominal
+//     plant is looked at between the samples too.
 //
 // Controllers are tuned in continuous parameters and mapped by Tustin's rule; plants are sampled exactly, with
 // delays of any length. The tuner works on plain arrays (its counts of unstable poles are by the argument principle
-// on a grid); every verdict is on the eigenvalues of the realised, interconnected blocks and on simulated runs.
+// on a grid); every verdict is on the eigenvalues of the realised, interconnected blocks and on simulated runs. Only
+// where a plant has more than 24 states, delay included, does the argument principle decide in the proof as well.
 //
 // # The promise
 //
