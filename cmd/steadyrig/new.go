@@ -98,7 +98,7 @@ func draftRig(h *data.LogHeader, name string) string {
 	part := func(name, gap, meaning string, needed bool) {
 		switch c, ok := column[name]; {
 		case ok:
-			line("%s%s= %s  # guess, from %s: %s", name, gap, tomlString(c.Name), c.Why, meaning)
+			line("%s%s= %s  # guess (%s): %s", name, gap, tomlString(c.Name), c.Why, meaning)
 		case needed:
 			line("# %s%s= \"\"  # fill in: %s", name, gap, meaning)
 		default:
@@ -106,7 +106,7 @@ func draftRig(h *data.LogHeader, name string) string {
 		}
 	}
 
-	line("# Draft of a rig file, from the first %d rows of %s", h.Rows, h.File)
+	line("# Draft of a rig file, from the first %d rows of %s", h.Rows, oneLine(h.File))
 	line("# (%s).", h.Layout)
 	line("# Lines marked \"guess\" need your eye; take the mark off once you agree.")
 	line("")

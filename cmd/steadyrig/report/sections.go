@@ -34,10 +34,14 @@ func sentence(s string) string {
 	if s == "" {
 		return s
 	}
-	if s[0] >= 'a' && s[0] <= 'z' {
-		s = strings.ToUpper(s[:1]) + s[1:]
+	return strings.TrimSuffix(sentenceStart(s), ".") + "."
+}
+
+func sentenceStart(s string) string {
+	if s != "" && s[0] >= 'a' && s[0] <= 'z' {
+		return strings.ToUpper(s[:1]) + s[1:]
 	}
-	return strings.TrimSuffix(s, ".") + "."
+	return s
 }
 
 // headFacts are the figures that a reader looks for first.
@@ -67,10 +71,16 @@ func headFacts(in Input) []fact {
 			)
 		}
 	}
-	if len(f) == 0 {
-		f = append(f, fact{"Sign", in.Audit.Sign.Words}, fact{"From outside", in.Audit.Outside.Words})
-		if in.Audit.NextStep != "" {
-			f = append(f, fact{"Next step", in.Audit.NextStep})
+	if len(f) > 0 {
+		return f
+	}
+	f = []fact{{"Sign", in.Audit.Sign.Words}, {"From outside", in.Audit.Outside.Words}}
+	if in.Audit.Verdict == ident.Refused {
+		f = append(f, fact{"Next step", in.Audit.NextStep})
+	}
+	for _, b := range in.Loops.Bounds {
+		if value, _, ask := words.Bound(b); !b.OK {
+			f = append(f, fact{sentenceStart(b.Name), "asked " + ask + ", physics allows " + value})
 		}
 	}
 	return f

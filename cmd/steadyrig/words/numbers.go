@@ -163,8 +163,11 @@ func Polynomial(c []float64, x string) string {
 	return b.String()
 }
 
-// power writes an exponent in raised figures.
+// power writes an exponent in raised figures, 1 as nothing.
 func power(k int) string {
+	if k == 1 {
+		return ""
+	}
 	return strings.NewReplacer("-", "⁻", "0", "⁰", "1", "¹", "2", "²", "3", "³", "4", "⁴", "5", "⁵", "6", "⁶", "7", "⁷", "8", "⁸", "9", "⁹").Replace(strconv.Itoa(k))
 }
 

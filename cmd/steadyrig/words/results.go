@@ -24,7 +24,7 @@ func Model(m *ident.Model) string {
 
 // Unstable names the unstable poles, those that may be, and those at zero.
 func Unstable(poles []ident.Root) string {
-	var found, zero []string
+	var found, perhaps, zero []string
 	for _, r := range poles {
 		if r.Im < 0 {
 			continue
@@ -44,7 +44,8 @@ func Unstable(poles []ident.Root) string {
 			what += ", doubling in " + Seconds(math.Ln2/r.Re)
 		}
 		if r.Re95.Contains(0) {
-			what += fmt.Sprintf(", unstable with probability %s", Probability(r.ProbabilityUnstable))
+			perhaps = append(perhaps, what+", probability "+Probability(r.ProbabilityUnstable))
+			continue
 		}
 		found = append(found, what)
 	}
@@ -55,6 +56,9 @@ func Unstable(poles []ident.Root) string {
 		parts = append(parts, "unstable pole "+found[0])
 	default:
 		parts = append(parts, "unstable poles "+strings.Join(found, "; "))
+	}
+	if len(perhaps) > 0 {
+		parts = append(parts, "perhaps unstable "+strings.Join(perhaps, "; "))
 	}
 	if len(zero) > 0 {
 		parts = append(parts, fmt.Sprintf("%s at zero (95 %% in rad/s: %s)", Count(len(zero), "pole"), strings.Join(zero, "; ")))
