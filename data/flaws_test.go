@@ -403,6 +403,23 @@ func TestNoRestart(t *testing.T) {
 	}
 }
 
+// A log that starts before the rig does: lying within the limits, picked up, running.
+func TestStartUpIsNotUsed(t *testing.T) {
+	p := newPlainLog(1000)
+	for k := range 300 {
+		p.u[k] = 0
+		if k >= 200 {
+			p.y[k] = 5 + 0.01*float64(k)
+		}
+	}
+	g := plainRig()
+	g.Limits.Output = &[2]float64{-2, 2}
+	exp := mustRead(t, p.csv(), g)
+	if f := findFlaw(t, exp, FlawTrip); f.Line != 202 || len(exp.Segments) != 1 || exp.Segments[0].Line != 302 || exp.Used != 700 {
+		t.Errorf("%+v, %d segments, %d used", f, len(exp.Segments), exp.Used)
+	}
+}
+
 func TestFlawTripAndRestart(t *testing.T) {
 	p := newPlainLog(1000)
 	for k := 300; k < 400; k++ {
