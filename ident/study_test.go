@@ -130,6 +130,7 @@ type poleTally struct {
 	truth        complex128
 	in           int
 	squares, crb float64 // of the error and of the bound, summed
+	reported     float64 // variance that the fit reports, summed
 }
 
 // study fits logs of a rig, rows long, and compares with the truth.
@@ -192,6 +193,7 @@ func study(t testing.TB, r demorig.Rig, rows int, from, logs uint64) tally {
 			all = all && q.Re95All.Contains(real(p.truth)) && q.Im95All.Contains(imag(p.truth))
 			p.squares += math.Pow(q.Re-real(p.truth), 2)
 			p.crb += limit[i].ReSD * limit[i].ReSD
+			p.reported += q.ReSD * q.ReSD
 		}
 		if all {
 			c.all++
@@ -220,10 +222,10 @@ func TestStudyOfDemoRigs(t *testing.T) {
 			length = rows
 		}
 		c := study(t, r, length, 1000, uint64(logs))
-		line := fmt.Sprintf("%-8s %d rows, %d logs: poles right %d, structure right %d, all poles inside at once %d, invented %d, sound %d, weak %d, refused %d, %v a log; error over bound and coverage",
+		line := fmt.Sprintf("%-8s %d rows, %d logs: poles right %d, structure right %d, all poles inside at once %d, invented %d, sound %d, weak %d, refused %d, %v a log; error over bound, coverage (reported deviation over bound)",
 			r.Name, length, c.logs, c.right, c.exact, c.all, c.invented, c.sound, c.weak, c.refused, (c.elapsed / time.Duration(c.logs)).Round(time.Millisecond))
 		for _, p := range c.poles {
-			line += fmt.Sprintf("; %.4g: %.2f, %d", p.truth, math.Sqrt(p.squares/p.crb), p.in)
+			line += fmt.Sprintf("; %.4g: %.2f, %d (deviations %.2f)", p.truth, math.Sqrt(p.squares/p.crb), p.in, math.Sqrt(p.reported/p.crb))
 		}
 		t.Log(line)
 		for _, w := range c.notes {
