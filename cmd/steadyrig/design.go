@@ -29,7 +29,7 @@ loops.json, or the file that --out names.`,
 			if err := a.checkTarget(&s, loopsFile); err != nil {
 				return err
 			}
-			rig, model, sum, err := a.rigAndModel(args)
+			rig, model, sum, err := a.rigAndModel(args, &s)
 			if err != nil {
 				return err
 			}
@@ -57,7 +57,7 @@ writes them with margins and promise made anew.`,
 			if err := a.checkTarget(&s, ""); err != nil {
 				return err
 			}
-			rig, model, sum, err := a.rigAndModel(args)
+			rig, model, sum, err := a.rigAndModel(args, &s)
 			if err != nil {
 				return err
 			}

@@ -4,13 +4,19 @@ import (
 	"bytes"
 	"crypto/sha256"
 	"encoding/hex"
+	"fmt"
 	"io"
 	"io/fs"
+	"math"
 	"os"
 
+	"steadyrig/cmd/steadyrig/words"
 	"steadyrig/data"
 	"steadyrig/ident"
 )
+
+// samePeriod is the relative difference up to which two measured periods count as one.
+const samePeriod = 1e-3
 
 // open opens an input file; "-" is standard input.
 func (a *app) open(path string) (io.ReadCloser, string, error) {
@@ -61,19 +67,34 @@ func (a *app) logs(rig *data.Rig, paths []string) ([]*data.Experiment, error) {
 		if err != nil {
 			return nil, err
 		}
+		if first := exp; len(exps) > 0 {
+			first = exps[0]
+			if math.Abs(exp.Period-first.Period) > samePeriod*first.Period {
+				return nil, &data.ParseError{
+					File: exp.File, Err: fmt.Errorf("sampled every %s, %s every %s", words.Seconds(exp.Period), first.File, words.Seconds(first.Period)),
+					Hint: "fit logs of one period together",
+				}
+			}
+		}
 		exps = append(exps, exp)
 	}
 	return exps, nil
 }
 
 // rigAndModel reads a rig file and a model, and the model's SHA-256.
-func (a *app) rigAndModel(args []string) (*data.Rig, *ident.Model, string, error) {
+func (a *app) rigAndModel(args []string, s *settings) (*data.Rig, *ident.Model, string, error) {
 	rig, err := a.rig(args[0])
 	if err != nil {
 		return nil, nil, "", err
 	}
 	model, sum, err := load(a, args[1], ident.ReadModel)
-	return rig, model, sum, err
+	if err != nil {
+		return nil, nil, "", err
+	}
+	if model.Rig != rig.Name {
+		a.warn(s, []string{fmt.Sprintf("%s is of rig %q, %s of rig %q", args[1], model.Rig, args[0], rig.Name)})
+	}
+	return rig, model, sum, nil
 }
 
 // sha256Of is the SHA-256 of a file that is about to be written.

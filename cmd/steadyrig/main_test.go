@@ -101,15 +101,31 @@ const smallRig = `name = "small"
 time   = "t"
 input  = "u"
 output = "y"
-sample_period = 0.01
 `
 
-// smallLog is a log of n rows that move.
-func smallLog(n int) string {
+// designPart is what a rig file needs beside smallRig before loops can be designed.
+const designPart = `
+[loop]
+sample_period = 0.01
+[limits]
+input = [-5.0, 5.0]
+[spec]
+step = 0.1
+overshoot = 0.2
+settling = 1.0
+band = 0.02
+peak_sensitivity = 2.0
+`
+
+// smallLog is a log of n rows that move, one every 10 ms; slowLog has one every 20 ms.
+func smallLog(n int) string { return logEvery(n, 0.01) }
+func slowLog(n int) string  { return logEvery(n, 0.02) }
+
+func logEvery(n int, period float64) string {
 	var b strings.Builder
 	b.WriteString("t,u,y\n")
 	for k := range n {
-		fmt.Fprintf(&b, "%.2f,%.3f,%.3f\n", 0.01*float64(k), math.Sin(float64(k*k)), math.Cos(float64(k)))
+		fmt.Fprintf(&b, "%.2f,%.3f,%.3f\n", period*float64(k), math.Sin(float64(k*k)), math.Cos(float64(k)))
 	}
 	return b.String()
 }
@@ -148,7 +164,6 @@ func TestBadInputs(t *testing.T) {
 	} {
 		for _, command := range []string{"audit", "fit", "run"} {
 			t.Run(c.name+"/"+command, func(t *testing.T) {
-				files := map[string]string{}
 				inFolder(t, nil)
 				for name, content := range map[string]string{"rig.toml": c.rig, "log.csv": c.log} {
 					switch content {
@@ -158,7 +173,9 @@ func TestBadInputs(t *testing.T) {
 							t.Fatal(err)
 						}
 					default:
-						files[name] = content
+						if name == "rig.toml" && strings.Contains(content, "[log]") {
+							content += designPart
+						}
 						if err := os.WriteFile(name, []byte(content), 0o644); err != nil {
 							t.Fatal(err)
 						}
@@ -183,7 +200,7 @@ func TestBadInputs(t *testing.T) {
 
 // Wrong calls give exit status 2 and one line that says how it goes.
 func TestBadCalls(t *testing.T) {
-	inFolder(t, map[string]string{"rig.toml": smallRig, "log.csv": smallLog(80), "model.json": "{}", "text.json": "not json\n"})
+	inFolder(t, map[string]string{"rig.toml": smallRig, "whole.toml": smallRig + designPart, "log.csv": smallLog(80), "slow.csv": slowLog(80), "model.json": "{}", "text.json": "not json\n"})
 	before := listing(t)
 	for _, c := range []struct {
 		args string
@@ -205,8 +222,10 @@ func TestBadCalls(t *testing.T) {
 		{"design rig.toml absent.json --out l.json", "absent.json"},
 		{"demo --rig boat", "hover"},
 		{"demo hover", "--rig"},
-		{"run rig.toml log.csv --dir rig.toml", "a file; name a folder"},
-		{"run rig.toml log.csv --dir a --out b", "--help"},
+		{"run whole.toml log.csv --dir rig.toml", "a file; name a folder"},
+		{"run whole.toml log.csv --dir a --out b", "--help"},
+		{"fit rig.toml log.csv slow.csv --out m.json", "slow.csv: sampled every 20 ms"},
+		{"run rig.toml log.csv", "[loop]"},
 		{"new", "one log"},
 		{"new absent.csv", "not exist"},
 	} {

@@ -46,6 +46,9 @@ rig.toml, audit.json, model.json, loops.json and report.html into one folder.`,
 			if err != nil {
 				return err
 			}
+			if err := rig.NeedDesign(); err != nil {
+				return err
+			}
 			j := job{files: []file{{rigFile, text}}, rig: rig}
 			if err := j.chooseFolder(a, &s); err != nil {
 				return err

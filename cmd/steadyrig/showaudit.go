@@ -33,7 +33,9 @@ func showAudit(p *page, r *ident.AuditReport, exps []*data.Experiment, rig *data
 	if r.Law != nil {
 		p.item("stopgap law", r.Law.Words)
 	}
-	p.item("next step", r.NextStep)
+	if r.NextStep != "" {
+		p.item("next step", r.NextStep)
+	}
 
 	p.heading("Columns, rows in use")
 	p.table(describe(exps, rig))

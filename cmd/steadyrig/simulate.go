@@ -33,7 +33,7 @@ unless told otherwise. A log that ends at a trip comes with exit status 3.`,
 			if err := a.checkTarget(&s, ""); err != nil {
 				return err
 			}
-			rig, model, _, err := a.rigAndModel(args)
+			rig, model, _, err := a.rigAndModel(args, &s)
 			if err != nil {
 				return err
 			}

@@ -84,13 +84,9 @@ func Write(w io.Writer, in Input) error {
 	v.Summary = summary(in)
 	v.Facts = headFacts(in)
 	v.Cautions = cautions(in)
-	parts := []func(Input) (section, error){logSection, plantSection, boundsSection, loopsSection, marginsSection, stepsSection, closureSection, originSection}
+	parts := []func(Input) section{logSection, plantSection, boundsSection, loopsSection, marginsSection, stepsSection, closureSection, originSection}
 	for _, part := range parts {
-		s, err := part(in)
-		if err != nil {
-			return fmt.Errorf("writing the report: %w", err)
-		}
-		if s.ID != "" {
+		if s := part(in); s.ID != "" {
 			v.Sections = append(v.Sections, s)
 		}
 	}

@@ -124,7 +124,7 @@ func cautions(in Input) []string {
 	return append(c, "Local codes and the judgement of a licensed practitioner come before anything written here.")
 }
 
-func logSection(in Input) (section, error) {
+func logSection(in Input) section {
 	a, u := in.Audit, in.Rig.Units
 	s := section{ID: "log", Title: "Log", Lead: []string{fmt.Sprintf("Verdict on the log: %s.", a.Verdict)}}
 	s.Facts = []fact{
@@ -139,7 +139,9 @@ func logSection(in Input) (section, error) {
 	if a.Law != nil {
 		s.Facts = append(s.Facts, fact{"Stopgap law", a.Law.Words})
 	}
-	s.Facts = append(s.Facts, fact{"Next step", a.NextStep})
+	if a.NextStep != "" {
+		s.Facts = append(s.Facts, fact{"Next step", a.NextStep})
+	}
 	for i, e := range in.Logs {
 		if i == shownLogs {
 			s.Lead = append(s.Lead, fmt.Sprintf("%s drawn of %d.", words.Count(shownLogs, "log"), len(in.Logs)))
@@ -160,10 +162,10 @@ func logSection(in Input) (section, error) {
 	} else {
 		s.Lead = append(s.Lead, "No flaw was found in its columns.")
 	}
-	return s, nil
+	return s
 }
 
-func plantSection(in Input) (section, error) {
+func plantSection(in Input) section {
 	m, u := in.Model, in.Rig.Units
 	s := section{ID: "plant", Title: "Plant", Lead: []string{sentence("Verdict on the model: " + m.Verdict)}}
 	for _, w := range m.Warnings {
@@ -171,7 +173,7 @@ func plantSection(in Input) (section, error) {
 	}
 	if !hasPlant(m) {
 		s.Lead = append(s.Lead, "No plant can be given from this log.")
-		return s, nil
+		return s
 	}
 	ratio := words.Ratio(u.Output, u.Input)
 	s.Facts = []fact{
@@ -220,7 +222,7 @@ func plantSection(in Input) (section, error) {
 		s.Figures = append(s.Figures, f)
 	}
 	s.Figures = append(s.Figures, responseFigures(m, u, in.Seed)...)
-	return s, nil
+	return s
 }
 
 func rootTable(caption string, roots []ident.Root, right string) table {
@@ -235,9 +237,9 @@ func rootTable(caption string, roots []ident.Root, right string) table {
 	return t
 }
 
-func boundsSection(in Input) (section, error) {
+func boundsSection(in Input) section {
 	if len(in.Loops.Bounds) == 0 {
-		return section{}, nil
+		return section{}
 	}
 	s := section{ID: "bounds", Title: "What physics allows", Lead: []string{"Limits that no controller passes, on this plant with this actuator, delay and sample period."}}
 	t := table{Head: []string{"Bound", "No better than", "95 % over plants", "Asked", "In reach", "Source"}, Right: []bool{false, true, false, true}}
@@ -249,17 +251,17 @@ func boundsSection(in Input) (section, error) {
 		}
 	}
 	s.Tables = []table{t}
-	return s, nil
+	return s
 }
 
-func loopsSection(in Input) (section, error) {
+func loopsSection(in Input) section {
 	l, u := in.Loops, in.Rig.Units
 	s := section{ID: "loops", Title: "Loops", Lead: []string{sentence("Verdict on the loops: " + l.Verdict)}}
 	for _, w := range l.Warnings {
 		s.Lead = append(s.Lead, sentence(w))
 	}
 	if !hasLoops(l) {
-		return s, nil
+		return s
 	}
 	s.Code = strings.ReplaceAll(l.Law, "; ", "\n")
 	s.Facts = append(s.Facts, fact{"Operating point", fmt.Sprintf("u0 = %s, y0 = %s", words.Unit(words.Number(l.OperatingPoint.Input), u.Input), words.Unit(words.Number(l.OperatingPoint.Output), u.Output))})
@@ -295,13 +297,13 @@ func loopsSection(in Input) (section, error) {
 	if len(forms.Rows) > 0 {
 		s.Tables = append(s.Tables, forms)
 	}
-	return s, nil
+	return s
 }
 
-func marginsSection(in Input) (section, error) {
+func marginsSection(in Input) section {
 	l := in.Loops
 	if !hasLoops(l) {
-		return section{}, nil
+		return section{}
 	}
 	s := section{ID: "margins", Title: "Margins"}
 	if l.Margins != nil {
@@ -319,17 +321,18 @@ func marginsSection(in Input) (section, error) {
 		s.Tables = []table{t}
 	}
 	curves, err := l.Sensitivity(in.Model, in.Rig, drawnSpectra, in.Seed)
-	if err != nil {
-		return s, err
+	if err != nil { // the figures are missed, the rest is not lost
+		s.Lead = append(s.Lead, sentence("No curves: "+err.Error()))
+		return s
 	}
 	s.Figures = sensitivityFigures(curves, in.Rig.Spec.PeakSensitivity)
-	return s, nil
+	return s
 }
 
-func stepsSection(in Input) (section, error) {
+func stepsSection(in Input) section {
 	l, u := in.Loops, in.Rig.Units
 	if !hasLoops(l) {
-		return section{}, nil
+		return section{}
 	}
 	s := section{ID: "promise", Title: "Promise"}
 	if q := l.Promise; q != nil {
@@ -367,16 +370,17 @@ func stepsSection(in Input) (section, error) {
 	}
 	r, err := l.StepResponses(in.Model, in.Rig, drawnSteps, in.Seed)
 	if err != nil {
-		return s, err
+		s.Lead = append(s.Lead, sentence("No step responses: "+err.Error()))
+		return s
 	}
 	s.Figures = stepFigures(r, l, in.Rig.Spec, u)
-	return s, nil
+	return s
 }
 
-func closureSection(in Input) (section, error) {
+func closureSection(in Input) section {
 	c, u := in.Loops.FirstClosure, in.Rig.Units
 	if c == nil {
-		return section{}, nil
+		return section{}
 	}
 	s := section{ID: "closure", Title: "First closure", Steps: c.Order}
 	trip := func(name string, pair *[2]float64, unit string) {
@@ -391,10 +395,10 @@ func closureSection(in Input) (section, error) {
 	for _, text := range c.Cautions {
 		s.Lead = append(s.Lead, sentence(text))
 	}
-	return s, nil
+	return s
 }
 
-func originSection(in Input) (section, error) {
+func originSection(in Input) section {
 	s := section{ID: "origin", Title: "Origin", Lead: []string{"The command that made this report:"}, Code: in.Command}
 	t := table{Caption: "Logs", Head: []string{"File", "Rows used", "of", "Segments", "SHA-256"}, Right: []bool{false, true, true, true}}
 	for _, l := range in.Model.Logs {
@@ -402,5 +406,5 @@ func originSection(in Input) (section, error) {
 	}
 	s.Tables = []table{t}
 	s.Facts = []fact{{"Tool", in.Tool}, {"Seed", fmt.Sprint(in.Seed)}, {"Figures", fmt.Sprintf("%d drawn plants in step responses, %d behind sensitivity, %d behind the frequency response", drawnSteps, drawnSpectra, drawnResponse)}}
-	return s, nil
+	return s
 }
