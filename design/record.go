@@ -2,6 +2,7 @@ package design
 
 import (
 	"fmt"
+	"math"
 	"math/rand/v2"
 
 	"steadyrig/data"
@@ -42,7 +43,16 @@ func (l *Loops) Simulate(model *ident.Model, rig *data.Rig, t Test) (*Record, er
 	if err != nil {
 		return nil, err
 	}
+	if math.Abs(l.SamplePeriod-p.period) > 1e-9*p.period {
+		return nil, fmt.Errorf("the loops run at a sample period of %g s, the rig file's [loop] at %g s: make them agree", l.SamplePeriod, p.period)
+	}
 	law := l.LTI()
+	if l.pointMissing {
+		law.U0, law.Y0 = p.point.Input, p.point.Output
+	}
+	if l.InputLimits == nil {
+		law.InputLimits = *rig.Limits.Input
+	}
 	if err := law.Validate(); err != nil {
 		return nil, fmt.Errorf("the loops cannot run: %w", err)
 	}

@@ -3,12 +3,15 @@ package design
 import (
 	"context"
 	"errors"
+	"fmt"
 	"math"
 	"slices"
+	"strings"
 	"testing"
 
 	"gonum.org/v1/gonum/stat"
 
+	"steadyrig/data"
 	"steadyrig/ident"
 )
 
@@ -72,5 +75,34 @@ func TestRecordEndsAtTheTrip(t *testing.T) {
 	}
 	if y := rec.Output[last]; y > -6 && y < 6 {
 		t.Errorf("the last row reads %g, inside the limits ±6", y)
+	}
+}
+
+// Loops of the user's own may leave out what the rig file says: operating point and limits. The record is the same.
+func TestRecordTakesWhatTheRigFileSays(t *testing.T) {
+	r := testRigs()[2] // far from zero
+	model, rig := r.model(t), r.rig()
+	rig.OperatingPoint = &data.OperatingPoint{Input: r.point.Input, Output: r.point.Output}
+	text := func(more string) string {
+		return fmt.Sprintf(`{"schema": %q, "sample_period": %g, "inner": {"discrete": {"numerator": [-10], "denominator": [1]}}%s}`, LoopsSchema, r.period, more)
+	}
+	var records []*Record
+	for _, more := range []string{"", `, "operating_point": {"input": 40, "output": 80}, "input_limits": [0, 100]`} {
+		l, err := ReadLoops(strings.NewReader(text(more)), "own.json")
+		if err != nil {
+			t.Fatal(err)
+		}
+		rec, err := l.Simulate(model, rig, Test{Rows: 200, Seed: 1, Probe: 80, ProbeHold: 3})
+		if err != nil {
+			t.Fatal(err)
+		}
+		records = append(records, rec)
+	}
+	a, b := records[0], records[1]
+	if !slices.Equal(a.Input, b.Input) || !slices.Equal(a.Output, b.Output) {
+		t.Error("the record depends on whether the loops or the rig file give operating point and limits")
+	}
+	if lo, hi := slices.Min(a.Input), slices.Max(a.Input); lo != 0 || hi != 100 {
+		t.Errorf("a probe of the whole range moves the input from %g to %g, want its limits 0 and 100", lo, hi)
 	}
 }
