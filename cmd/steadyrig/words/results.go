@@ -103,6 +103,9 @@ func Loops(l *design.Loops) string {
 	case q == nil:
 		return l.Rig + ": the loops were not proven."
 	}
+	if l.Verdict == design.Refused {
+		return fmt.Sprintf("%s: of %d plants drawn from the model %d stay stable and %d keep the spec.", l.Rig, q.Plants, q.Stable, q.MeetSpec)
+	}
 	return fmt.Sprintf("%s: of the plants that the data allow, at least %s keep the spec (%g %% confidence; %d of %d drawn).",
 		l.Rig, Share(q.LowerBound), 100*q.Confidence, q.MeetSpec, q.Plants)
 }
