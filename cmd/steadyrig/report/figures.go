@@ -127,7 +127,7 @@ func fitFigures(m *ident.Model, exps []*data.Experiment, u data.Units) []figure 
 			[]key{{Stroke: mainLine, Label: "measured"}, {Stroke: otherLine, Label: "predicted from the rows before"}},
 			fmt.Sprintf("%d rows of %s. In closed loop a long-range simulation of an unstable plant would diverge; one step is the fair test.", to-from, file)},
 		{drawn(rest, "Errors of the one-step prediction over the log"), "What the model leaves over",
-			[]key{{Stroke: thinLine, Label: "error"}, {Stroke: limitLine, Label: "95 % of errors stay between, as the model has them"}},
+			[]key{{Stroke: thinLine, Label: "error"}, {Stroke: limitLine, Label: "95 % of errors should lie between"}},
 			fmt.Sprintf("Standard deviation %s.", words.Unit(words.Number(sd), u.Output))},
 	}
 }

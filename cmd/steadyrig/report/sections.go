@@ -242,7 +242,7 @@ func boundsSection(in Input) section {
 		return section{}
 	}
 	s := section{ID: "bounds", Title: "What physics allows", Lead: []string{"Limits that no controller passes, on this plant with this actuator, delay and sample period."}}
-	t := table{Head: []string{"Bound", "No better than", "95 % over plants", "Asked", "In reach", "Source"}, Right: []bool{false, true, false, true}}
+	t := table{Caption: "Bounds beside what the spec asks", Head: []string{"Bound", "No better than", "95 % over plants", "Asked", "In reach", "Source"}, Right: []bool{false, true, false, true}}
 	for _, b := range in.Loops.Bounds {
 		value, interval, ask := words.Bound(b)
 		t.Rows = append(t.Rows, []string{b.Name, value, interval, ask, words.YesNo(b.OK), b.Source})
