@@ -332,6 +332,9 @@ func verdictIn(t *testing.T, name, want string) {
 // The whole job, step by step and at once: the files of run are those of the single commands, the console fits 80
 // columns, --json prints one document and nothing else, and a file is not written over without --force.
 func TestWholeJob(t *testing.T) {
+	if testing.Short() {
+		t.Skip("a whole job takes seconds")
+	}
 	inFolder(t, demoFiles(t, "hover", 1, func(r *demorig.Rig) { r.Rows = 3000 }))
 	must := func(args ...string) (stdout, stderr string) {
 		t.Helper()
@@ -394,6 +397,9 @@ func TestWholeJob(t *testing.T) {
 
 // The same seed gives the same bytes in all files, on one core as on many.
 func TestSameSeedSameBytes(t *testing.T) {
+	if testing.Short() {
+		t.Skip("a whole job takes seconds")
+	}
 	inFolder(t, nil)
 	for _, dir := range []string{"a", "b"} {
 		if dir == "b" {
