@@ -335,7 +335,7 @@ func TestWholeJob(t *testing.T) {
 	if testing.Short() {
 		t.Skip("a whole job takes seconds")
 	}
-	inFolder(t, demoFiles(t, "hover", 1, func(r *demorig.Rig) { r.Rows = 3000 }))
+	inFolder(t, demoFiles(t, "hover", 1, func(r *demorig.Rig) { r.Rows = 4500 }))
 	must := func(args ...string) (stdout, stderr string) {
 		t.Helper()
 		status, stdout, stderr := call(t, args...)
@@ -387,7 +387,7 @@ func TestWholeJob(t *testing.T) {
 	oneErrorLine(t, stderr, "--force")
 
 	// What simulate writes, the reader reads and the fit fits.
-	must("simulate", "rig.toml", "model.json", "loops.json", "--probe", "0.1", "--rows", "3000", "--out", "sim.csv")
+	must("simulate", "rig.toml", "model.json", "loops.json", "--probe", "0.1", "--rows", "4500", "--out", "sim.csv")
 	text, _ = must("fit", "rig.toml", "sim.csv", "--out", "again.json")
 	if !strings.HasPrefix(text, "SOUND") {
 		t.Errorf("the fit of a simulated log begins with %.80q", text)
