@@ -11,6 +11,7 @@ import (
 	"math"
 	"os"
 	"path/filepath"
+	"regexp"
 	"runtime"
 	"slices"
 	"strings"
@@ -499,8 +500,16 @@ func TestPages(t *testing.T) {
 		c.show(&page{w: &b})
 		fits80(t, c.name, b.String())
 		golden(t, c.name, b.String())
+		var coloured bytes.Buffer
+		c.show(&page{w: &coloured, colour: true})
+		if bare := ansi.ReplaceAllString(coloured.String(), ""); bare != b.String() || bare == coloured.String() {
+			t.Errorf("%s: colour changes more than the colour", c.name)
+		}
 	}
 }
+
+// ansi is what sets a colour on a terminal.
+var ansi = regexp.MustCompile("\x1b\\[[0-9;]*m")
 
 func TestHelp(t *testing.T) {
 	inFolder(t, nil)

@@ -92,7 +92,7 @@ one.`,
 			if err != nil {
 				return fmt.Errorf("reading the built-in rig: %v", err)
 			}
-			j := job{rig: rig}
+			j := job{rig: rig, about: "An invented rig, no model of a real one. It is " + demo.About + "."}
 			if err := j.chooseFolder(a, &s, logFile); err != nil {
 				return err
 			}
@@ -152,6 +152,7 @@ func (a *app) text(path string) ([]byte, error) {
 type job struct {
 	rig   *data.Rig
 	exps  []*data.Experiment
+	about string // of the rig, where it is a built-in one
 	dir   string
 	files []file
 
@@ -245,7 +246,7 @@ func (a *app) whole(ctx context.Context, j *job, s *settings) error {
 	}
 	page, err := rendered(func(w io.Writer) error {
 		return report.Write(w, report.Input{
-			Rig: j.rig, Logs: j.exps, Audit: audit, Model: model, Loops: loops,
+			Rig: j.rig, About: j.about, Logs: j.exps, Audit: audit, Model: model, Loops: loops,
 			Verdict: j.verdict(), Refusal: refusal, Command: a.command(), Tool: a.tool, Made: a.now, Seed: s.seed,
 		})
 	})
@@ -289,6 +290,9 @@ func (j *job) show(p *page) {
 		meaning = j.rig.Name + ": no loops; the line at the end says why."
 	}
 	p.verdict(j.verdict(), meaning)
+	if j.about != "" {
+		wrap(p.w, "", j.about)
+	}
 	p.heading("Log: " + j.audit.Verdict)
 	p.item("sign", j.audit.Sign.Words)
 	p.item("pairing", j.audit.Pairing.Words)

@@ -16,6 +16,7 @@ import (
 // Input is what a report tells. Loops without an inner block, and a model without a plant, are told as refused.
 type Input struct {
 	Rig     *data.Rig
+	About   string // a sentence on the rig; may be empty
 	Logs    []*data.Experiment
 	Audit   *ident.AuditReport
 	Model   *ident.Model
@@ -35,13 +36,14 @@ var page = template.Must(template.New("page").Parse(pageText))
 
 // A view is what the page shows.
 type view struct {
-	Rig, Word, Class string
-	Summary          []string
-	Facts            []fact
-	Cautions         []string
-	Sections         []section
-	Command, Tool    string
-	Made, MadeRFC    string
+	Rig, About    string
+	Word, Class   string
+	Summary       []string
+	Facts         []fact
+	Cautions      []string
+	Sections      []section
+	Command, Tool string
+	Made, MadeRFC string
 }
 
 // A fact is a label with its figure.
@@ -77,7 +79,7 @@ func (t table) Column(j int) string {
 // Write writes the report.
 func Write(w io.Writer, in Input) error {
 	v := view{
-		Rig: in.Rig.Name, Word: strings.ToUpper(in.Verdict[:1]) + in.Verdict[1:], Class: in.Verdict,
+		Rig: in.Rig.Name, About: in.About, Word: strings.ToUpper(in.Verdict[:1]) + in.Verdict[1:], Class: in.Verdict,
 		Command: in.Command, Tool: in.Tool,
 		Made: in.Made.Format("2 January 2006, 15:04 MST"), MadeRFC: in.Made.Format(time.RFC3339),
 	}
