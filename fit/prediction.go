@@ -60,6 +60,7 @@ type Prediction struct {
 
 	Const    []float64 // κ of each record, output units
 	RSS      float64   // of the prediction errors, start-up errors included
+	LogDet   float64   // of the start-up errors' information, the rest of the exact likelihood
 	Rows     int       // equations used
 	Variance float64   // of e
 	// Cov is the covariance of b_0 … b_m, a_1 … a_n, the delay where it is
@@ -73,8 +74,14 @@ type Prediction struct {
 // TF returns the plant.
 func (p *Prediction) TF() lti.TF { return lti.TF{Num: p.Num, Den: p.Den, Delay: p.Delay} }
 
-// BIC is Schwarz's criterion over the rows of the fit.
-func (p *Prediction) BIC() float64 { return BIC.Value(p.RSS, p.Rows, p.Free()+len(p.Const)) }
+// BIC is Schwarz's criterion over the rows of the fit, by the exact likelihood.
+func (p *Prediction) BIC() float64 {
+	return BIC.Value(p.Objective(), p.Rows, p.Free()+len(p.Const))
+}
+
+// Objective is what a fit makes least: the sum of squares times the part of the
+// exact likelihood that start-up errors bring, in the output's units squared.
+func (p *Prediction) Objective() float64 { return p.RSS * math.Exp(p.LogDet/float64(p.Rows)) }
 
 // H returns the noise shape C/(A D), as y = G u + H e.
 func (p *Prediction) H() lti.DTF {
@@ -178,6 +185,9 @@ type search struct {
 	shape Shape
 	w0, h float64 // rad/s; scaled period
 	work  []workspace
+
+	rss, logDet float64   // parts of the objective at the last point looked at
+	probe       transient // for differences
 }
 
 // workspace holds the signals of one record; each starts with pad zeros.
@@ -187,10 +197,9 @@ type workspace struct {
 	yf, uf     []float64 // D y / C, D u / C
 	vf, ef     []float64 // (A y - B u) / C, e / C
 	dy, du, av []float64
-	step       []float64   // S: step response of 1/C
-	free       [][]float64 // G_i: free responses of 1/C
-	settled    int         // rows after which S is constant and G vanishes
-	local      []float64   // κ, ε_1 … ε_nC
+	transient
+	logDet float64   // of I + G'G
+	local  []float64 // κ, ε_1 … ε_nC
 }
 
 func (p *Predictor) newSearch(shape Shape, w0 float64) *search {
@@ -264,11 +273,15 @@ func inputPowers(dst, b0, b1 []float64) []float64 {
 
 // errorsAt fills the prediction errors of x into the workspaces, with the
 // constants and start-up errors that make their sum of squares least, and
-// returns that sum.
+// returns the objective: with N rows the sum of squares S times
+// det(I + G'G)^(1/N), N times the log of which is -2 log likelihood but for a constant.
 //
 // The first deg C errors before a record's first equation are unknowns with
 // the prior of all other errors; without them the transient of a slow noise
-// zero swamps the sum.
+// zero swamps the sum. Integrated out they leave their sum of squares in S and
+// the determinant (Box & Jenkins, Time Series Analysis, 1976, app. A7.4), which
+// holds noise zeros off the unit circle: without it a short log moves them onto
+// it and takes its own slow drift for a start-up error.
 func (s *search) errorsAt(x point) (float64, shifted, bool) {
 	q, ok := s.sampled(x)
 	if !ok {
@@ -276,7 +289,7 @@ func (s *search) errorsAt(x point) (float64, shifted, bool) {
 	}
 	ad := lti.Poly(q.a).Mul(q.d)
 	bd := lti.Poly(q.b).Mul(q.d)
-	var total float64
+	s.rss, s.logDet = 0, 0
 	for i := range s.work {
 		w := &s.work[i]
 		t0 := s.pad + s.Lead
@@ -286,14 +299,15 @@ func (s *search) errorsAt(x point) (float64, shifted, bool) {
 			w.e[k] = 0
 		}
 		divide(w.e, w.e, q.c, t0)
-		s.responses(w, q.c, t0)
+		w.run(q.c, len(w.e)-t0)
 		rss, ok := w.solveLocal(t0)
 		if !ok || !(rss < math.Inf(1)) {
 			return math.Inf(1), q, false
 		}
-		total += rss
+		s.rss += rss
+		s.logDet += w.logDet
 	}
-	return total, q, true
+	return s.rss * math.Exp(s.logDet/float64(s.rows)), q, true
 }
 
 // fir adds f Σ coef[i] x[k-i], k = from, from+1, …, to dst, or sets dst to it.
@@ -361,87 +375,109 @@ func divide(dst, src, c []float64, from int) {
 	}
 }
 
-// responses fills S and G of 1/C from row t0 on, until they have settled.
-func (s *search) responses(w *workspace, c []float64, t0 int) {
+// transient holds the responses of 1/C from a record's first equation on: S to
+// a step, and G_i to a past error of one i+1 rows before.
+type transient struct {
+	step    []float64
+	free    [][]float64
+	settled int // rows after which S is constant and G vanishes
+}
+
+// run fills the responses over rows rows.
+func (r *transient) run(c []float64, rows int) {
 	n := len(c) - 1
-	rows := len(w.e) - t0
-	sum := floats.Sum(c)
-	final := 1 / sum
-	if w.step == nil {
-		w.step = make([]float64, rows)
+	final := 1 / sum(c)
+	if cap(r.step) < rows {
+		r.step = make([]float64, rows)
 	}
-	for len(w.free) < n {
-		w.free = append(w.free, make([]float64, rows))
+	r.step = r.step[:rows]
+	for len(r.free) < n {
+		r.free = append(r.free, nil)
 	}
-	w.settled = rows
+	r.free = r.free[:n]
+	for i := range r.free {
+		if cap(r.free[i]) < rows {
+			r.free[i] = make([]float64, rows)
+		}
+		r.free[i] = r.free[i][:rows]
+	}
+	r.settled = rows
 	scale := math.Abs(final)
 	quiet := 0
 	for k := range rows {
 		v := 1.0
 		for j := 1; j <= n && j <= k; j++ {
-			v -= c[j] * w.step[k-j]
+			v -= c[j] * r.step[k-j]
 		}
-		w.step[k] = v
+		r.step[k] = v
 		big := math.Abs(v-final) > 1e-11*scale
 		for i := range n {
-			// Past error i+1 rows before t0 is one.
 			var g float64
 			for j := 1; j <= n; j++ {
 				switch {
 				case k-j >= 0:
-					g -= c[j] * w.free[i][k-j]
+					g -= c[j] * r.free[i][k-j]
 				case j-k == i+1:
 					g -= c[j]
 				}
 			}
-			w.free[i][k] = g
+			r.free[i][k] = g
 			big = big || math.Abs(g) > 1e-11
 		}
 		if big {
 			quiet = 0
 		} else if quiet++; quiet > n {
-			w.settled = k
+			r.settled = k
 			break
 		}
 	}
-	if w.settled < rows {
-		for k := w.settled; k < rows; k++ {
-			w.step[k] = final
-		}
-		for i := range n {
-			for k := w.settled; k < rows; k++ {
-				w.free[i][k] = 0
-			}
-		}
+	for k := r.settled; k < rows; k++ {
+		r.step[k] = final
 	}
-	if w.local = w.local[:0]; cap(w.local) < n+1 {
-		w.local = make([]float64, 0, n+1)
+	for i := range n {
+		clear(r.free[i][r.settled:])
 	}
-	w.local = w.local[:n+1]
 }
 
-// solveLocal finds κ and ε of a record by linear least squares, applies them
-// to its errors and returns their sum of squares, prior included.
-func (w *workspace) solveLocal(t0 int) (float64, bool) {
-	q := len(w.local)
-	e := w.e[t0:]
+// information returns the information matrix of κ and ε_1 … ε_n in units of
+// the error's variance, the prior of ε included.
+func (r *transient) information() *mat.SymDense {
+	q := len(r.free) + 1
 	h := mat.NewSymDense(q, nil)
-	g := make([]float64, q)
-	g[0] = floats.Dot(w.step, e)
-	h.SetSym(0, 0, floats.Dot(w.step, w.step))
+	h.SetSym(0, 0, floats.Dot(r.step, r.step))
 	for i := 1; i < q; i++ {
-		gi := w.free[i-1][:w.settled]
-		g[i] = -floats.Dot(gi, e[:w.settled])
-		h.SetSym(0, i, -floats.Dot(gi, w.step[:w.settled]))
+		gi := r.free[i-1][:r.settled]
+		h.SetSym(0, i, -floats.Dot(gi, r.step[:r.settled]))
 		for j := i; j < q; j++ {
-			v := floats.Dot(gi, w.free[j-1][:w.settled])
+			v := floats.Dot(gi, r.free[j-1][:r.settled])
 			if i == j {
 				v++
 			}
 			h.SetSym(i, j, v)
 		}
 	}
+	return h
+}
+
+// solveLocal finds κ and ε of a record by linear least squares, applies them
+// to its errors and returns their sum of squares, prior included.
+func (w *workspace) solveLocal(t0 int) (float64, bool) {
+	h := w.information()
+	q := h.SymmetricDim()
+	if cap(w.local) < q {
+		w.local = make([]float64, q)
+	}
+	w.local = w.local[:q]
+	e := w.e[t0:]
+	g := make([]float64, q)
+	g[0] = floats.Dot(w.step, e)
+	for i := 1; i < q; i++ {
+		g[i] = -floats.Dot(w.free[i-1][:w.settled], e[:w.settled])
+	}
 	if !solveScaled(w.local, h, g, 0) {
+		return 0, false
+	}
+	if w.logDet = logDet(h, 1); !bounded(w.logDet) {
 		return 0, false
 	}
 	floats.AddScaled(e, -w.local[0], w.step)
@@ -452,6 +488,26 @@ func (w *workspace) solveLocal(t0 int) (float64, bool) {
 		rss += w.local[i] * w.local[i]
 	}
 	return rss + floats.Dot(e, e), true
+}
+
+// logDet is the log of the determinant of h without its first skip rows and
+// columns, not finite where that is not positive definite.
+func logDet(h *mat.SymDense, skip int) float64 {
+	n := h.SymmetricDim() - skip
+	if n == 0 {
+		return 0
+	}
+	part := mat.NewSymDense(n, nil)
+	for i := range n {
+		for j := i; j < n; j++ {
+			part.SetSym(i, j, h.At(skip+i, skip+j))
+		}
+	}
+	var chol mat.Cholesky
+	if !chol.Factorize(part) {
+		return math.NaN()
+	}
+	return chol.LogDet()
 }
 
 // solveScaled solves (H + damping diag H) x = g for a symmetric positive
@@ -597,7 +653,36 @@ func (s *search) information(x point, q shifted) (*mat.SymDense, []float64) {
 			}
 		}
 	}
+	s.addDeterminant(x, q, h, grad)
 	return h, grad
+}
+
+// addDeterminant adds S/(2N) times the slope of log det(I + G'G), which
+// depends on C alone, to the gradient: the objective's own, but for its
+// positive factor. Differences over a thousandth of a deviation are good
+// enough for a term that vanishes as the log grows.
+func (s *search) addDeterminant(x point, q shifted, h *mat.SymDense, grad []float64) {
+	nc := len(q.c) - 1
+	first := len(grad) - nc
+	scale := s.rss / (2 * float64(s.rows))
+	for j := 1; j <= nc; j++ {
+		k := first + j - 1
+		step := 1e-3 * math.Sqrt(s.rss/float64(s.rows)/h.At(k, k))
+		if !(step > 0) || math.IsInf(step, 0) {
+			continue
+		}
+		c := append([]float64(nil), x.c...)
+		c[j] += step
+		z := lti.Shift(nil, c)
+		var up float64
+		for i := range s.recs {
+			s.probe.run(z, len(s.recs[i].Y)-s.Lead)
+			up += logDet(s.probe.information(), 1)
+		}
+		if d := scale * (up - s.logDet) / step; bounded(d) {
+			grad[k] += d
+		}
+	}
 }
 
 // column is one derivative of the equation error, as lags of the filtered
@@ -820,11 +905,11 @@ func (s *search) minimise(x point, tol float64, limit int) (point, float64, int,
 func (p *Predictor) Fit(start *Prediction, tol float64, limit int) (*Prediction, error) {
 	s, x := p.begin(start)
 	defer s.done()
-	x, rss, steps, converged := s.minimise(x, tol, limit)
-	if !(rss < math.Inf(1)) {
+	x, objective, steps, converged := s.minimise(x, tol, limit)
+	if !(objective < math.Inf(1)) {
 		return nil, ErrNoFit
 	}
-	return s.result(x, rss, steps, converged), nil
+	return s.result(x, steps, converged), nil
 }
 
 // begin scales a start for a search.
@@ -883,9 +968,9 @@ func unshifted(p []float64, n int) []float64 {
 }
 
 // result takes a point back to the log's units, with its covariance.
-func (s *search) result(x point, rss float64, steps int, converged bool) *Prediction {
+func (s *search) result(x point, steps int, converged bool) *Prediction {
 	n := s.shape.Poles
-	m := &Prediction{Shape: s.shape, Period: s.Period, RSS: rss * s.sy * s.sy, Rows: s.rows, Steps: steps, Converged: converged, Delay: x.tau / s.w0}
+	m := &Prediction{Shape: s.shape, Period: s.Period, RSS: s.rss * s.sy * s.sy, LogDet: s.logDet, Rows: s.rows, Steps: steps, Converged: converged, Delay: x.tau / s.w0}
 	unit := s.units()
 	m.Num, m.Den = make(lti.Poly, len(x.num)), make(lti.Poly, n+1)
 	for i := range x.num {
@@ -977,19 +1062,22 @@ var ErrSingular = errors.New("fit: information matrix is singular")
 
 // Errors returns the one-step prediction errors of m, record by record, in the
 // output's units, with the constants and start-up errors that fit best.
-func (p *Predictor) Errors(m *Prediction) ([][]float64, error) {
+// before[n][i] is the start-up error i+1 rows before the first of record n.
+func (p *Predictor) Errors(m *Prediction) (errs, before [][]float64, err error) {
 	s, x := p.begin(m)
 	defer s.done()
 	if _, _, ok := s.errorsAt(x); !ok {
-		return nil, ErrNoFit
+		return nil, nil, ErrNoFit
 	}
-	var out [][]float64
 	for i := range s.work {
 		e := append([]float64(nil), s.work[i].e[s.pad+s.Lead:]...)
 		floats.Scale(s.sy, e)
-		out = append(out, e)
+		errs = append(errs, e)
+		e = append([]float64(nil), s.work[i].local[1:]...)
+		floats.Scale(s.sy, e)
+		before = append(before, e)
 	}
-	return out, nil
+	return errs, before, nil
 }
 
 // Rest returns the input, in the log's units, at which the plant of m rests

@@ -200,11 +200,10 @@ func (p *Predictor) Start(shape Shape, seed Seed, delay, ratio float64, colour [
 	for i := range b {
 		x.num[i] = -b[i]
 	}
-	rss, _, ok := s.errorsAt(x)
-	if !ok {
+	if _, _, ok := s.errorsAt(x); !ok {
 		return nil
 	}
-	return s.result(x, rss, 0, false)
+	return s.result(x, 0, false)
 }
 
 // zPoly returns Π (1 - r z^-1), ascending in z^-1.

@@ -118,6 +118,11 @@ func Audit(ctx context.Context, exps []*data.Experiment, rig *data.Rig) (*AuditR
 	if err := a.glance(ctx, recs, rig, period); err != nil {
 		return a, err
 	}
+	if err := refuseShifted(a.Law); err != nil {
+		a.Verdict, a.Pairing = Refused, Pairing{Rows: a.Law.Rows, Words: a.Law.Words}
+		a.NextStep = err.(*RefusedError).Do
+		return a, err
+	}
 	return a, a.conclude()
 }
 

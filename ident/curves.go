@@ -61,7 +61,7 @@ func (m *Model) OneStep(s data.Segment) (*Predictions, error) {
 	// e = (A D y - B D u)/C: each term is stable though G is not.
 	fromY := lti.DTF{Num: g.Den.Mul(c.Den), Den: c.Num, Period: c.Period}
 	fromU := lti.DTF{Num: g.Num.Mul(c.Den), Den: c.Num, Period: c.Period}
-	from := len(fromY.Num) + len(fromU.Num) + int(8*memory(c.Num))
+	from := len(fromY.Num) + len(fromU.Num) + int(8*memory(zRoots(c.Num)))
 	if from >= len(s.Y)/2 {
 		return nil, fmt.Errorf("predicting: %d rows are too few for a predictor that remembers %d", len(s.Y), from)
 	}

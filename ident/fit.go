@@ -17,6 +17,7 @@ import (
 
 // Options of Fit. The zero value is ready.
 type Options struct {
+	Seed     uint64                // of the replays of a short log
 	Workers  int                   // structures fitted at once; 0: one a core
 	Progress func(done, total int) // called as structures are done; total 0: unknown
 }
@@ -26,6 +27,7 @@ const (
 	soundMemories = 20   // predictor memories below which intervals are optimistic
 	doubtful      = 1e-3 // probability below which a residual test speaks against the model
 	wide          = 0.5  // half width of the unstable pole's interval over its value
+	slowLog       = 0.3  // unstable pole times sample period from which a log is too slow
 	tie           = 2    // BIC units within which two structures are not told apart
 	chooseRows    = 50000
 	residualLags  = 25
@@ -49,6 +51,9 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 	m.Evidence.OutsideShare = out.Share
 	if out.Quiet {
 		return m.refuse(refuseQuiet(out))
+	}
+	if err := refuseShifted(checkLaw(exps, rig)); err != nil {
+		return m.refuse(err)
 	}
 
 	sc := scopeOf(rig, period)
@@ -87,6 +92,9 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 		return m.refuse(&RefusedError{What: "the log does not tell the plant's parameters apart", Do: "log a run with a stronger probe"})
 	}
 	m.describe(p, f, rig)
+	if err := m.calibrate(ctx, exps, rig, p, recs, f, opt); err != nil {
+		return m, err
+	}
 	if err := m.loosen(p, f, ranked); err != nil {
 		return m, err
 	}
@@ -230,7 +238,7 @@ func (c *chooser) pairing(ctx context.Context, recs []fit.Record, ranked []*cand
 	var list []structure
 	for n := max(2, sc.minPoles, best.poles-1); n <= best.poles; n++ {
 		for m := sc.minZeros; m <= min(n-2, best.zeros, sc.maxZeros); m++ {
-			list = append(list, structure{poles: n, zeros: m, colour: best.colour})
+			list = append(list, structure{poles: n, zeros: m, colour: best.colour, integrators: min(best.integrators, n)})
 		}
 	}
 	if err := late.try(ctx, list, nil, nil); err != nil {
@@ -379,6 +387,9 @@ func (m *Model) loosen(p *fit.Predictor, f *fit.Prediction, ranked []*candidate)
 	}
 	var other Model
 	other.plant(free)
+	if c := m.Evidence.Calibration; c != nil {
+		other.widen(c.Factor)
+	}
 	other.derive()
 	weight := 1 / (1 + math.Exp((free.BIC()-f.BIC())/2))
 	// Integrators are the slowest poles of the free structure.
@@ -407,7 +418,7 @@ func structures(ranked []*candidate) []Structure {
 	var out []Structure
 	for i, c := range ranked[:min(8, len(ranked))] {
 		s := Structure{Poles: c.poles, Zeros: c.zeros, Colour: c.colour, Delay: c.fit.Delay, Integrators: c.integrators, BIC: c.bic - ranked[0].bic, Chosen: i == 0}
-		gain := float64(c.fit.Rows) * math.Log(c.fit.RSS/ranked[0].fit.RSS)
+		gain := float64(c.fit.Rows) * math.Log(c.fit.Objective()/ranked[0].fit.Objective())
 		switch extra := c.fit.Free() - ranked[0].fit.Free(); {
 		case i == 0:
 			s.Verdict = "chosen"
@@ -588,7 +599,7 @@ func agreement(found [][2]float64, poles []Root, sd float64) (bool, string) {
 // tests looks at what the model leaves unexplained, on the rows of the fit, and
 // at how much it explains on rows kept out of one.
 func (m *Model) tests(p *fit.Predictor, recs []fit.Record, f *fit.Prediction) error {
-	e, err := p.Errors(f)
+	e, _, err := p.Errors(f)
 	if err != nil {
 		return err
 	}
@@ -608,16 +619,22 @@ func (m *Model) tests(p *fit.Predictor, recs []fit.Record, f *fit.Prediction) er
 	} else {
 		m.Evidence.Residuals.CrossInput = 1
 	}
-	m.Evidence.Memories = float64(p.Rows()) / memory(f.C)
+	m.Evidence.Memories = float64(p.Rows()) / memory(decaying(f))
 	m.Evidence.ExplainedShare = explained(p, recs, f)
 	return nil
 }
 
-// memory is the time constant of the predictor in samples, that of the slowest
-// zero of C.
-func memory(c []float64) float64 {
+// decaying lists the zeros of C, those aside that lie on the unit circle because
+// a plant pole does.
+func decaying(f *fit.Prediction) []complex128 {
+	return slices.DeleteFunc(zRoots(f.C), func(z complex128) bool { return cmplx.Abs(z) >= 1-circle && mirrors(f, z) })
+}
+
+// memory is the time constant in samples of a predictor with the given poles,
+// that of the slowest.
+func memory(zeros []complex128) float64 {
 	var slow float64
-	for _, z := range zRoots(c) {
+	for _, z := range zeros {
 		slow = math.Max(slow, cmplx.Abs(z))
 	}
 	if slow == 0 {
@@ -649,7 +666,7 @@ func explained(p *fit.Predictor, recs []fit.Record, f *fit.Prediction) float64 {
 		return 0
 	}
 	b.DelayRange = p.DelayRange
-	e, err := b.Errors(part)
+	e, _, err := b.Errors(part)
 	if err != nil {
 		return 0
 	}
@@ -705,7 +722,7 @@ func (m *Model) judge(ranked []*candidate, out Outside, f *fit.Prediction) {
 			}
 		}
 	}
-	if !unstable && slices.IndexFunc(m.Poles, func(p Root) bool { return p.ProbabilityUnstable > 0.025 }) < 0 {
+	if !unstable && f.Integrators == 0 && slices.IndexFunc(m.Poles, func(p Root) bool { return p.ProbabilityUnstable > 0.025 }) < 0 {
 		note("no unstable pole was found")
 	}
 	for _, method := range m.Evidence.Methods {
@@ -720,10 +737,7 @@ func (m *Model) judge(ranked []*candidate, out Outside, f *fit.Prediction) {
 		weak("the search for the best fit did not settle")
 	}
 	worst := slices.MaxFunc(m.Poles, func(a, b Root) int { return cmp.Compare(a.Re, b.Re) })
-	if ph := worst.Re * f.Period; ph > 0.3 {
-		note("the unstable pole moves by a factor of %.2g within a sample: the log is slow for it", math.Exp(ph))
-	}
-	if worst.Re*f.Period > math.Ln2 {
-		weak("the log is too slow for the unstable pole")
+	if ph := worst.Re * f.Period; ph > slowLog {
+		weak("the unstable pole grows by a factor of %.2g within a row: what the input does between rows counts as much as the plant; log faster", math.Exp(ph))
 	}
 }

@@ -81,7 +81,11 @@ func TestPairing(t *testing.T) {
 		if s.D != nil {
 			late.Segments[0].D = s.D[:n-1]
 		}
+		// Without the law in the rig file the plant itself has to tell.
+		law := rig.Stopgap
+		rig.Stopgap = nil
 		_, err := Fit(context.Background(), []*data.Experiment{&late}, rig, Options{})
+		rig.Stopgap = law
 		var refused *RefusedError
 		if r.Truth.Delay == 0 && (!errors.As(err, &refused) || !strings.Contains(refused.Error(), "one row off")) {
 			t.Errorf("%s: an input logged a row late gives %v", r.Name, err)
@@ -93,6 +97,9 @@ func TestPairing(t *testing.T) {
 		early.Segments = []data.Segment{{Line: 1, U: s.U[1:], Y: s.Y[:n-1], R: s.R[:n-1]}}
 		if s.D != nil {
 			early.Segments[0].D = s.D[1:]
+		}
+		if _, err := Fit(context.Background(), []*data.Experiment{&early}, rig, Options{}); !errors.As(err, &refused) || !strings.Contains(refused.Error(), "one row off") {
+			t.Errorf("%s: an input logged a row early gives %v", r.Name, err)
 		}
 		if l := checkLaw([]*data.Experiment{&early}, rig); l == nil || l.Rows != -1 {
 			t.Errorf("%s: law check of an input logged early: %+v", r.Name, l)

@@ -72,8 +72,12 @@ output = "m"
 	if p.Im != 0 || p.ProbabilityUnstable < 0.999 || p.Re < physical*2/3 || p.Re > physical*4/3 {
 		t.Errorf("unstable pole %+v, want a real one within a third of %g rad/s", p, physical)
 	}
-	if m.Gain.HighFrequency.Value >= 0 {
-		t.Error("more current must lift the ball, which lowers its distance")
+	a, err := Audit(context.Background(), []*data.Experiment{e}, rig)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if !a.Sign.Known || a.Sign.Positive {
+		t.Errorf("sign %+v: more current lifts the ball, which lowers its distance", a.Sign)
 	}
 	if m.Verdict == Sound {
 		t.Error("a nonlinear rig on a slow log must not be called sound")

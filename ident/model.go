@@ -158,6 +158,9 @@ type Evidence struct {
 	ExplainedShare float64     `json:"explained_share"` // on rows not used in the fit
 	OutsideShare   float64     `json:"outside_share"`   // of the input's variance, not explained by past outputs and inputs
 	Memories       float64     `json:"memories"`        // length of the logs in predictor memories
+	// Calibration is null where the log was too long to need it, or its law
+	// could not be found.
+	Calibration *Calibration `json:"calibration"`
 }
 
 // Structure is one candidate and how far it lost, in units of BIC.

@@ -196,3 +196,20 @@ func checkLaw(exps []*data.Experiment, rig *data.Rig) *LawCheck {
 	}
 	return &best
 }
+
+// refuseShifted refuses a log in which the law of the rig file ran, but in
+// another row; nil where it does not say so clearly.
+func refuseShifted(c *LawCheck) error {
+	if c == nil || c.Rows == 0 || c.SignWrong || c.Unexplained > clearLaw {
+		return nil
+	}
+	do := `set input_row = "before" in [log], or shift the input column`
+	if c.Rows < 0 {
+		do = `set input_row = "after" in [log], or shift the input column`
+	}
+	return &RefusedError{What: "the columns are paired one row off: " + c.Words, Do: do}
+}
+
+// clearLaw is the share of the input that a law may leave and still be the one
+// that ran.
+const clearLaw = 0.1

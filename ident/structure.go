@@ -21,6 +21,7 @@ const (
 	MaxIntegrators  = 2
 	maxDelaySamples = 8 // of a delay without a hint
 	firstPoles      = 4 // of the structures that the search starts from
+	shortRows       = 1500
 )
 
 // How hard a structure is fitted while it is only compared with others, and
@@ -286,19 +287,16 @@ func (c *chooser) fit(s structure, near *fit.Prediction) *candidate {
 				out = append(out, f)
 			}
 		}
-		slices.SortStableFunc(out, func(a, b *fit.Prediction) int { return cmp.Compare(a.RSS, b.RSS) })
+		slices.SortStableFunc(out, func(a, b *fit.Prediction) int { return cmp.Compare(a.Objective(), b.Objective()) })
 		return out[:min(keep, len(out))]
 	}
 	list := round(starts, glanceStarts, 0)
 	list = round(list, 2, glanceSteps)
-	if len(list) == 2 && list[1].RSS-list[0].RSS < sameOptimum*list[0].RSS {
+	if len(list) == 2 && list[1].Objective()-list[0].Objective() < sameOptimum*list[0].Objective() {
 		list = list[:1]
 	}
 	if list = round(list, 1, compareStep); len(list) > 0 {
-		cand.fit, cand.bic = list[0], list[0].BIC()
-		if cancels(list[0]) {
-			cand.bic += dipolePenalty
-		}
+		cand.fit, cand.bic = list[0], c.criterion(list[0])
 	}
 	return cand
 }
@@ -335,6 +333,47 @@ func cancels(f *fit.Prediction) bool {
 	}
 	return false
 }
+
+// criterion is BIC with three amendments.
+//
+// On a short log BIC drops the slow colour of a disturbance, for which the
+// plant's slow poles pay with errors beyond their intervals; the two parameters
+// of a first colour pole cost there what they cost under AIC.
+//
+// A plant's pole under a zero, and a noise zero on the unit circle
+// without a plant pole beside it that it could be the mirror of, mean that the
+// approximation behind BIC fails; they cost dipolePenalty each.
+func (c *chooser) criterion(f *fit.Prediction) float64 {
+	v := f.BIC()
+	if f.Rows < shortRows && f.Shape.Colour > 0 {
+		v -= 2 * (math.Log(float64(f.Rows)) - 2)
+	}
+	if cancels(f) {
+		v += dipolePenalty
+	}
+	if pinned(f) {
+		v += dipolePenalty
+	}
+	return v
+}
+
+// pinned reports whether C has a zero on the unit circle, as nearly as the
+// search lets it come, that no plant pole accounts for. On a short log such a
+// zero beside a colour pole takes out a line of the periodogram.
+func pinned(f *fit.Prediction) bool {
+	return slices.ContainsFunc(zRoots(f.C), func(z complex128) bool { return cmplx.Abs(z) >= 1-circle && !mirrors(f, z) })
+}
+
+// mirrors reports whether a noise zero is that of white sensor noise behind a
+// plant pole that neither grows nor decays, whose place it takes.
+func mirrors(f *fit.Prediction, z complex128) bool {
+	return slices.ContainsFunc(f.Den.Roots(), func(p complex128) bool {
+		return cmplx.Abs(cmplx.Exp(p*complex(f.Period, 0))-z) < 0.05
+	})
+}
+
+// circle is how near to the unit circle a noise zero counts as on it.
+const circle = 1e-4
 
 // colourStart is where an added colour pole starts, per sample.
 var colourStart = []complex128{0.985, 0.9}
@@ -374,7 +413,7 @@ func (c *chooser) bestDelay(s structure, sd fit.Seed, ratio float64, colour []co
 			all = append(all, m)
 		}
 	}
-	slices.SortStableFunc(all, func(a, b *fit.Prediction) int { return cmp.Compare(a.RSS, b.RSS) })
+	slices.SortStableFunc(all, func(a, b *fit.Prediction) int { return cmp.Compare(a.Objective(), b.Objective()) })
 	var best []*fit.Prediction
 	for _, m := range all {
 		if len(best) < 2 && (len(best) == 0 || math.Abs(m.Delay-best[0].Delay) > 0.75*h) {

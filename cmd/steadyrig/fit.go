@@ -46,6 +46,7 @@ for them. It writes model.json, or the file that --out names.`,
 		},
 	}
 	s.add(cmd, "write the model here instead of to model.json")
+	s.addSeed(cmd)
 	return cmd
 }
 
@@ -53,7 +54,7 @@ for them. It writes model.json, or the file that --out names.`,
 func (a *app) fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, s *settings) (*ident.Model, error) {
 	bar := a.progress("fit", s.quiet)
 	defer bar.wipe()
-	model, err := ident.Fit(ctx, exps, rig, ident.Options{Progress: bar.step})
+	model, err := ident.Fit(ctx, exps, rig, ident.Options{Seed: s.seed, Progress: bar.step})
 	var refused *ident.RefusedError
 	if err != nil && !(errors.As(err, &refused) && model != nil) {
 		return nil, err
