@@ -305,7 +305,7 @@ func (j *job) show(p *page) {
 		p.heading("Model: " + j.model.Verdict)
 		wrap(p.w, "  ", words.Unstable(j.model.Poles))
 		showPlant(p, j.model, u)
-		showRoots(p, "Poles", j.model.Poles, "unstable")
+		showPoles(p, j.model)
 		showRoots(p, "Zeros", j.model.Zeros, "right half-plane")
 		showMethods(p, j.model)
 	}

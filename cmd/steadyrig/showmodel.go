@@ -13,7 +13,7 @@ func showModel(p *page, m *ident.Model, u data.Units) {
 	p.verdict(m.Verdict, words.Model(m))
 	if len(m.Plant.Denominator) > 0 {
 		showPlant(p, m, u)
-		showRoots(p, "Poles", m.Poles, "unstable")
+		showPoles(p, m)
 		showRoots(p, "Zeros", m.Zeros, "right half-plane")
 		showMethods(p, m)
 	}
@@ -26,15 +26,18 @@ func showPlant(p *page, m *ident.Model, u data.Units) {
 	p.item("numerator", words.Polynomial(m.Plant.Numerator, "s"))
 	p.item("denominator", words.Polynomial(m.Plant.Denominator, "s"))
 	p.item("delay", words.Delay(m)+", from the logged input to the output")
-	if g := m.Gain.DC; g != nil {
-		p.item("steady gain", words.Estimate(g, ratio))
-	} else {
-		p.item("steady gain", "none: the plant integrates")
-	}
+	p.item("steady gain", words.SteadyGain(m, ratio))
 	if m.Gain.HighFrequency != nil {
 		p.item("leading gain", words.Leading(m, ratio))
 	}
 	p.item("operating point", fmt.Sprintf("input %s, output %s", words.Unit(words.Number(m.OperatingPoint.Input), u.Input), words.Unit(words.Number(m.OperatingPoint.Output), u.Output)))
+}
+
+func showPoles(p *page, m *ident.Model) {
+	showRoots(p, "Poles", m.Poles, "unstable")
+	for _, note := range words.PoleNotes(m.Poles) {
+		wrap(p.w, "  ", note)
+	}
 }
 
 // showRoots prints a table of poles or zeros, a pair on one line.
@@ -50,9 +53,10 @@ func showRoots(p *page, title string, roots []ident.Root, right string) {
 		}
 		v, b := words.Root(r)
 		value, bounds = append(value, v), append(bounds, b)
-		verdict, chance = append(verdict, words.Unstableness(r)), append(chance, words.Probability(r.ProbabilityUnstable))
+		is, probable := words.Unstableness(r)
+		verdict, chance = append(verdict, is), append(chance, probable)
 	}
-	p.table(columns(">value", value, "95 % interval", bounds, right, verdict, "probability", chance))
+	p.table(columns(">value", value, "95 % interval", bounds, right, verdict, ">probability", chance))
 }
 
 func showMethods(p *page, m *ident.Model) {

@@ -66,6 +66,7 @@ type table struct {
 	Head    []string
 	Right   []bool
 	Rows    [][]string
+	Notes   []string // below it
 }
 
 // Column tells the template how to set column j.

@@ -180,10 +180,7 @@ func plantSection(in Input) section {
 		{"Numerator", words.Polynomial(m.Plant.Numerator, "s")},
 		{"Denominator", words.Polynomial(m.Plant.Denominator, "s")},
 		{"Delay", words.Delay(m) + ", from the logged input to the output"},
-		{"Steady gain", "none: the plant integrates"},
-	}
-	if g := m.Gain.DC; g != nil {
-		s.Facts[3].Value = words.Estimate(g, ratio)
+		{"Steady gain", words.SteadyGain(m, ratio)},
 	}
 	if g := m.Gain.HighFrequency; g != nil {
 		s.Facts = append(s.Facts, fact{"Leading gain", words.Leading(m, ratio)})
@@ -194,7 +191,9 @@ func plantSection(in Input) section {
 		fact{"Residuals", words.Residuals(m)},
 		fact{"Length", words.Number(m.Evidence.Memories) + " predictor memories"},
 	)
-	s.Tables = append(s.Tables, rootTable("Poles, rad/s", m.Poles, "Unstable"))
+	poles := rootTable("Poles, rad/s", m.Poles, "Unstable")
+	poles.Notes = words.PoleNotes(m.Poles)
+	s.Tables = append(s.Tables, poles)
 	if len(m.Zeros) > 0 {
 		s.Tables = append(s.Tables, rootTable("Zeros, rad/s", m.Zeros, "Right half-plane"))
 	}
@@ -232,7 +231,8 @@ func rootTable(caption string, roots []ident.Root, right string) table {
 			continue
 		}
 		value, bounds := words.Root(r)
-		t.Rows = append(t.Rows, []string{value, bounds, words.Unstableness(r), words.Probability(r.ProbabilityUnstable)})
+		verdict, chance := words.Unstableness(r)
+		t.Rows = append(t.Rows, []string{value, bounds, verdict, chance})
 	}
 	return t
 }

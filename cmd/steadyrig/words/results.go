@@ -3,6 +3,7 @@ package words
 import (
 	"fmt"
 	"math"
+	"slices"
 	"strings"
 
 	"steadyrig/design"
@@ -24,13 +25,14 @@ func Model(m *ident.Model) string {
 
 // Unstable names the unstable poles, those that may be, and those at zero.
 func Unstable(poles []ident.Root) string {
-	var found, perhaps, zero []string
+	var found, perhaps []string
+	zero := 0
 	for _, r := range poles {
 		if r.Im < 0 {
 			continue
 		}
-		if r.Re == 0 && r.Im == 0 {
-			zero = append(zero, Interval(r.Re95))
+		if AtZero(r) {
+			zero++
 			continue
 		}
 		if !r.Unstable && !(r.ProbabilityUnstable > 0.025) {
@@ -60,10 +62,12 @@ func Unstable(poles []ident.Root) string {
 	if len(perhaps) > 0 {
 		parts = append(parts, "perhaps unstable "+strings.Join(perhaps, "; "))
 	}
-	if len(zero) > 0 {
-		parts = append(parts, fmt.Sprintf("%s at zero (95 %% in rad/s: %s)", Count(len(zero), "pole"), strings.Join(zero, "; ")))
-	}
-	if len(parts) == 0 {
+	switch {
+	case zero > 0 && len(parts) == 0:
+		return Count(zero, "pole") + " at zero: the rig drifts, it does not grow by itself"
+	case zero > 0:
+		parts = append(parts, Count(zero, "pole")+" at zero")
+	case len(parts) == 0:
 		return "no unstable pole was found"
 	}
 	return strings.Join(parts, "; ")
@@ -146,15 +150,47 @@ func Root(r ident.Root) (value, bounds string) {
 	return Number(r.Re) + " ± " + Number(r.Im) + "i", Interval(r.Re95) + "; ± " + Interval(r.Im95)
 }
 
-// Unstableness says whether a root lies in the right half-plane, "open" where its interval holds zero.
-func Unstableness(r ident.Root) string {
-	if r.Re95.Contains(0) {
-		return "open"
+// AtZero reports whether a root is an integrator: the structure holds it at zero, nothing measured it there.
+func AtZero(r ident.Root) bool { return r.Re == 0 && r.Im == 0 }
+
+// Unstableness says whether a root lies in the right half-plane, "open" where its interval holds zero, and how
+// probable that is. Of a pole held at zero there is no probability to tell.
+func Unstableness(r ident.Root) (verdict, probability string) {
+	probability = Probability(r.ProbabilityUnstable)
+	switch {
+	case AtZero(r):
+		return "at zero (integrator)", "–"
+	case r.Re95.Contains(0):
+		return "open", probability
+	case r.Unstable:
+		return "YES", probability
 	}
-	if r.Unstable {
-		return "YES"
+	return "no", probability
+}
+
+// PoleNotes tells what the table of the poles leaves unsaid.
+func PoleNotes(poles []ident.Root) []string {
+	var notes []string
+	if slices.ContainsFunc(poles, AtZero) {
+		notes = append(notes, "Poles at zero are a structure that was chosen, not measured: the interval beside one is that of a free pole in its place.")
 	}
-	return "no"
+	for _, r := range poles {
+		if r.Re95All != (ident.Interval{}) && r.Re95All != r.Re95 {
+			return append(notes, "Each interval holds for its pole alone; model.json has wider ones that hold for all at once (re_95_all, im_95_all).")
+		}
+	}
+	return notes
+}
+
+// SteadyGain is the gain at rest, ratio the unit of output over input, or why there is none.
+func SteadyGain(m *ident.Model, ratio string) string {
+	switch {
+	case m.Gain.DC != nil:
+		return Estimate(m.Gain.DC, ratio)
+	case slices.ContainsFunc(m.Poles, AtZero):
+		return "none: the plant integrates"
+	}
+	return "not determined: the interval of the slowest pole holds zero"
 }
 
 // YesNo is yes or NO.

@@ -74,11 +74,38 @@ func TestUnstable(t *testing.T) {
 		{[]ident.Root{down, up}, "unstable pole pair at 1.1 ± 10i rad/s (real part 95 %: 1.00 to 1.20)"},
 		{[]ident.Root{open}, "perhaps unstable at 0.3 rad/s (95 %: -0.2 to 0.8), probability 0.900"},
 		{[]ident.Root{open, real36}, "unstable pole at 36 rad/s (95 %: 35.0 to 37.0), doubling in 19.25 ms; perhaps unstable at 0.3 rad/s (95 %: -0.2 to 0.8), probability 0.900"},
-		{[]ident.Root{zero, zero}, "2 poles at zero (95 % in rad/s: -0.5 to 0.5; -0.5 to 0.5)"},
-		{[]ident.Root{zero, real36}, "unstable pole at 36 rad/s (95 %: 35.0 to 37.0), doubling in 19.25 ms; 1 pole at zero (95 % in rad/s: -0.5 to 0.5)"},
+		{[]ident.Root{zero, zero, stable}, "2 poles at zero: the rig drifts, it does not grow by itself"},
+		{[]ident.Root{zero, real36}, "unstable pole at 36 rad/s (95 %: 35.0 to 37.0), doubling in 19.25 ms; 1 pole at zero"},
 	} {
 		if got := Unstable(c.poles); got != c.want {
 			t.Errorf("%q, want %q", got, c.want)
+		}
+	}
+}
+
+// A pole that a structure holds at zero was not measured: no probability is told of it, and the interval is said to be
+// another pole's. Without such a pole a gain that is missing is one that the data do not give.
+func TestIntegrators(t *testing.T) {
+	zero := ident.Root{Re95: ident.Interval{Lo: -0.03, Hi: 0.82}, ProbabilityUnstable: 0.0003}
+	slow := ident.Root{Re: 0.1, Re95: ident.Interval{Lo: -0.03, Hi: 0.82}, Unstable: true, ProbabilityUnstable: 0.9}
+	for _, c := range []struct {
+		root          ident.Root
+		verdict, prob string
+		notes         int
+		gain          string
+	}{
+		{zero, "at zero (integrator)", "–", 1, "none: the plant integrates"},
+		{slow, "open", "0.900", 0, "not determined: the interval of the slowest pole holds zero"},
+	} {
+		if verdict, prob := Unstableness(c.root); verdict != c.verdict || prob != c.prob {
+			t.Errorf("%q, %q, want %q, %q", verdict, prob, c.verdict, c.prob)
+		}
+		poles := []ident.Root{c.root}
+		if notes := PoleNotes(poles); len(notes) != c.notes {
+			t.Errorf("notes %q, want %d", notes, c.notes)
+		}
+		if got := SteadyGain(&ident.Model{Poles: poles}, "mm/N"); got != c.gain {
+			t.Errorf("%q, want %q", got, c.gain)
 		}
 	}
 }
