@@ -82,7 +82,7 @@ const (
 // conclude sets verdict and warnings from margins, noise and model.
 func (p *problem) conclude(l *Loops) {
 	warn := func(format string, args ...any) { l.Warnings = append(l.Warnings, fmt.Sprintf(format, args...)) }
-	weak := false
+	weak := len(p.doubts) > 0
 	if p.model.Verdict == ident.Weak {
 		weak = true
 		warn("the model's verdict is weak, and so is what rests on it")

@@ -36,11 +36,17 @@ const (
 // partial result, its verdict "refused", together with an *ident.RefusedError that says what and what to do. Any
 // other error comes without a result: the rig file or the model cannot be worked with, or ctx ended.
 func Design(ctx context.Context, model *ident.Model, rig *data.Rig, opt Options) (*Loops, error) {
-	p, err := newProblem(model, rig)
-	if err != nil {
+	p, err := pose(model, rig)
+	if p == nil {
 		return nil, err
 	}
 	l := p.newLoops()
+	if err == nil {
+		err = p.sample()
+	}
+	if err != nil {
+		return l.passOn(err)
+	}
 	l.Bounds = p.bounds(p.drawTFs(boundDraws, streamBounds, opt.Seed))
 	if r := outOfReach(l.Bounds); r != nil {
 		return l.refuse(r)
@@ -87,9 +93,9 @@ func (p *problem) newLoops() *Loops {
 	l := &Loops{
 		Schema: LoopsSchema, Tool: p.model.Tool, Rig: p.rig.Name, Made: p.model.Made, ModelSHA256: modelSum(p.model),
 		SamplePeriod: p.period, ComputeDelay: p.rig.Loop.ComputeDelay, OperatingPoint: p.point, Law: LawText,
-		InputRate: p.rate, Verdict: Sound, Warnings: slices.Clone(p.warnings), Bounds: []Bound{},
+		InputRate: p.rate, Verdict: Sound, Warnings: append(slices.Clone(p.doubts), p.warnings...), Bounds: []Bound{},
 	}
-	lim := *p.rig.Limits.Input
+	lim := p.limits
 	l.InputLimits = &lim
 	return l
 }

@@ -18,6 +18,7 @@ type problem struct {
 	period  float64 // s
 	compute float64 // s, added to the delay of every plant
 	point   OperatingPoint
+	limits  [2]float64  // of the input, absolute
 	input   [2]float64  // limits as deviations, input[0] < 0 < input[1]
 	output  *[2]float64 // limits as deviations, nil: none
 	rate    float64     // units of input per second, 0: none
@@ -30,6 +31,7 @@ type problem struct {
 	inner []complex128 // e^{-(decay + i omega) period}: the circle on which the inner loop's decay is counted
 
 	regions  []region // where no controller zero may lie
+	doubts   []string // warnings that make the verdict weak
 	warnings []string
 }
 
@@ -45,39 +47,33 @@ const noiseShare = 1.0 / 20
 // cannot settle faster than what the inner one leaves behind.
 const decayPerSettling = 1.5
 
+// newProblem poses and samples a problem. The error is a *ident.RefusedError where physics or the model say no.
 func newProblem(model *ident.Model, rig *data.Rig) (*problem, error) {
+	p, err := pose(model, rig)
+	if err != nil {
+		return nil, err
+	}
+	return p, p.sample()
+}
+
+// pose gathers what is asked, without looking at the plant: next to no work, whatever the files say. With a
+// *ident.RefusedError it returns the problem as far as it got, for a partial result.
+func pose(model *ident.Model, rig *data.Rig) (*problem, error) {
 	if err := rig.NeedDesign(); err != nil {
 		return nil, err
 	}
-	if len(model.Plant.Denominator) == 0 {
-		return nil, &ident.RefusedError{What: "the model holds no plant: the fit was refused", Do: "take a log as the fit's refusal says, and fit again"}
-	}
-	p := &problem{model: model, rig: rig, period: rig.Loop.SamplePeriod, rate: rig.Limits.InputRate}
+	p := &problem{model: model, rig: rig, period: rig.Loop.SamplePeriod, limits: *rig.Limits.Input, rate: rig.Limits.InputRate}
 	p.point = OperatingPoint(model.OperatingPoint)
 	if o := rig.OperatingPoint; o != nil {
 		p.point = OperatingPoint(*o)
 	}
-	lim := rig.Limits.Input
-	p.input = [2]float64{lim[0] - p.point.Input, lim[1] - p.point.Input}
-	if !(p.input[0] < 0 && p.input[1] > 0) {
-		return nil, &ident.RefusedError{
-			What: fmt.Sprintf("the operating point needs an input of %.4g, the limits are [%.4g, %.4g]", p.point.Input, lim[0], lim[1]),
-			Do:   "nothing is left to stabilise with: correct [operating_point] or [limits] input",
-		}
-	}
-	if o := rig.Limits.Output; o != nil {
-		p.output = &[2]float64{o[0] - p.point.Output, o[1] - p.point.Output}
-		if !(p.output[0] < 0 && p.output[1] > 0) {
-			return nil, &ident.RefusedError{
-				What: fmt.Sprintf("the operating point has the output at %.4g, outside the trip limits [%.4g, %.4g]", p.point.Output, o[0], o[1]),
-				Do:   "correct [operating_point] or [limits] output",
-			}
-		}
+	if len(model.Plant.Denominator) == 0 {
+		return p, &ident.RefusedError{What: "the model holds no plant: the fit was refused", Do: "take a log as the fit's refusal says, and fit again"}
 	}
 	s := rig.Spec
 	p.spec = demands{s.Step, s.Overshoot, s.Settling, s.Band, s.PeakSensitivity, s.InputNoise, s.Kick, s.KickPeak}
 	if p.spec.noise == 0 {
-		p.spec.noise = noiseShare * (lim[1] - lim[0])
+		p.spec.noise = noiseShare * (p.limits[1] - p.limits[0])
 	}
 	p.compute = rig.Loop.ComputeDelay
 	if rig.Log.InputStamp == data.InputComputed {
@@ -91,14 +87,40 @@ func newProblem(model *ident.Model, rig *data.Rig) (*problem, error) {
 	if rig.Loop.Hold == data.HoldBandLimited {
 		p.warnings = append(p.warnings, "the loops were designed for an input held between samples (zero-order); a band-limited hold adds its own delay")
 	}
-	p.grid(model.TF().Delay + p.compute)
+	return p, p.about()
+}
+
+// about counts the limits from the operating point.
+func (p *problem) about() error {
+	p.input = [2]float64{p.limits[0] - p.point.Input, p.limits[1] - p.point.Input}
+	if !(p.input[0] < 0 && p.input[1] > 0) {
+		return &ident.RefusedError{
+			What: fmt.Sprintf("the operating point needs an input of %.4g, the limits are [%.4g, %.4g]", p.point.Input, p.limits[0], p.limits[1]),
+			Do:   "nothing is left to stabilise with: correct [operating_point] or [limits] input",
+		}
+	}
+	if o := p.rig.Limits.Output; o != nil {
+		p.output = &[2]float64{o[0] - p.point.Output, o[1] - p.point.Output}
+		if !(p.output[0] < 0 && p.output[1] > 0) {
+			return &ident.RefusedError{
+				What: fmt.Sprintf("the operating point has the output at %.4g, outside the trip limits [%.4g, %.4g]", p.point.Output, o[0], o[1]),
+				Do:   "correct [operating_point] or [limits] output",
+			}
+		}
+	}
+	return nil
+}
+
+// sample prepares frequencies, nominal plant, noise and forbidden regions.
+func (p *problem) sample() error {
+	p.grid(p.model.TF().Delay + p.compute)
 	var err error
-	if p.nominal, err = p.newPlant(model.TF()); err != nil {
-		return nil, err
+	if p.nominal, err = p.newPlant(p.model.TF()); err != nil {
+		return err
 	}
 	p.noise = p.splitNoise()
-	p.regions = forbidden(model, p.spec.settling)
-	return p, nil
+	p.regions = forbidden(p.model, p.spec.settling)
+	return nil
 }
 
 // grid lays out the frequencies: evenly in their logarithm, but never so far apart that the phase of the delay

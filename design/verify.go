@@ -2,6 +2,7 @@ package design
 
 import (
 	"context"
+	"errors"
 	"fmt"
 	"math"
 	"math/cmplx"
@@ -16,29 +17,26 @@ import (
 // cancel an unstable pole, margins and the promise. The result is a copy with those parts made anew. As with Design,
 // a refusal comes with the result. Errors without a result: loops that do not fit the rig file.
 func Verify(ctx context.Context, model *ident.Model, rig *data.Rig, loops *Loops, opt Options) (*Loops, error) {
-	p, err := newProblem(model, rig)
-	if err != nil {
-		return nil, err
-	}
 	if loops.Inner == nil {
 		panic(noInner)
+	}
+	p, err := pose(model, rig)
+	if p == nil {
+		return nil, err
+	}
+	if err != nil {
+		return p.newLoops().passOn(err)
 	}
 	if math.Abs(loops.SamplePeriod-p.period) > 1e-9*p.period {
 		return nil, fmt.Errorf("the loops run at a sample period of %g s, the rig file's [loop] at %g s: make them agree", loops.SamplePeriod, p.period)
 	}
+	if err := p.adopt(loops); err != nil {
+		return nil, err
+	}
 	l := p.newLoops()
-	given := *loops
-	l.Inner, l.Outer, l.Prefilter = given.Inner, given.Outer, given.Prefilter
-	l.InnerForm, l.OuterForm, l.Forms = given.InnerForm, given.OuterForm, given.Forms
-	l.OuterLimits = given.OuterLimits
-	if given.InputLimits != nil {
-		l.InputLimits = given.InputLimits
-	}
-	if !given.pointMissing {
-		l.OperatingPoint = given.OperatingPoint
-	}
-	if given.InputRate > 0 {
-		l.InputRate = given.InputRate
+	l.Inner, l.Outer, l.Prefilter, l.OuterLimits = loops.Inner, loops.Outer, loops.Prefilter, loops.OuterLimits
+	if err := p.sample(); err != nil {
+		return l.passOn(err)
 	}
 	law := l.LTI()
 	if err := law.Validate(); err != nil {
@@ -68,6 +66,56 @@ func Verify(ctx context.Context, model *ident.Model, rig *data.Rig, loops *Loops
 	}
 	return l, nil
 }
+
+// Beyond these a difference of operating points is said, and makes the verdict weak.
+const (
+	pointNoted = 0.01 // of the step, and of the input's range
+	pointWeak  = 1.0  // of the step
+)
+
+// adopt takes operating point, input limits and rate of given loops, as far as the rig has them: an actuator has the
+// rig file's limits, whatever the loops say, and trips stay where they are when the operating point moves.
+func (p *problem) adopt(l *Loops) error {
+	if lim := l.InputLimits; lim != nil {
+		own := p.limits
+		p.limits = [2]float64{math.Max(lim[0], own[0]), math.Min(lim[1], own[1])}
+		if !(p.limits[0] < p.limits[1]) {
+			return fmt.Errorf("the loops' input_limits %s and [limits] input %s of the rig file have nothing in common: correct the one that is wrong", pairText(*lim), pairText(own))
+		}
+		if lim[0] < own[0] || lim[1] > own[1] {
+			p.warnings = append(p.warnings, fmt.Sprintf("the loops' input_limits %s are wider than [limits] input %s of the rig file: judged with %s, which the controller has to know too",
+				pairText(*lim), pairText(own), pairText(p.limits)))
+		}
+	}
+	if rate := l.InputRate; rate > 0 && p.rate > 0 && rate > p.rate {
+		p.warnings = append(p.warnings, fmt.Sprintf("the loops' input_rate %.4g is above [limits] input_rate %.4g of the rig file: judged with the lower one, which the controller has to know too", rate, p.rate))
+	} else if rate > 0 {
+		p.rate = rate
+	}
+	if !l.pointMissing {
+		own := p.point
+		p.point = l.OperatingPoint
+		du, dy := math.Abs(p.point.Input-own.Input), math.Abs(p.point.Output-own.Output)
+		text := fmt.Sprintf("the loops work about input %.4g, output %.4g, the rig file and the model about %.4g, %.4g: away from its point the plant may be another",
+			p.point.Input, p.point.Output, own.Input, own.Output)
+		switch full := p.rig.Limits.Input[1] - p.rig.Limits.Input[0]; {
+		case dy > pointWeak*p.spec.step || du > noiseShare*full:
+			p.doubts = append(p.doubts, text)
+		case dy > pointNoted*p.spec.step || du > pointNoted*full:
+			p.warnings = append(p.warnings, text)
+		}
+	}
+	if err := p.about(); err != nil {
+		var r *ident.RefusedError
+		if errors.As(err, &r) {
+			return fmt.Errorf("the loops do not fit the rig file: %s: correct their operating_point or input_limits", r.What)
+		}
+		return err
+	}
+	return nil
+}
+
+func pairText(v [2]float64) string { return fmt.Sprintf("[%.4g, %.4g]", v[0], v[1]) }
 
 // cancellations returns the refusal of a law with a zero of K1 or of 1 + K2 in the region of a pole that may be
 // unstable, or a zero of K1 at the integrator of K2.

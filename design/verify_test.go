@@ -170,3 +170,51 @@ func TestInexactCancellationInSeries(t *testing.T) {
 	near(t, "t = 10", mode(10000), -110.132328974034, 1e-6)
 	near(t, "t = ln 200", mode(5298), -math.Exp(5.298-5.29831736654804), 1e-6)
 }
+
+// An actuator has the rig file's limits and the trips stay where they are, whatever a loops file says.
+func TestVerifyKeepsTheRigsLimits(t *testing.T) {
+	r := testRigs()[0]
+	own := designed(t, r.name)
+	rig := r.rig()
+	rig.Limits.InputRate = 1e5
+	verify := func(change func(*Loops)) (*Loops, error) {
+		l := *own
+		change(&l)
+		return Verify(t.Context(), r.model(t), rig, &l, Options{Seed: 1, Plants: 700})
+	}
+	// The trip at 7 leaves 0.12 above 6.88, and the step wants 0.15.
+	got, err := verify(func(l *Loops) { l.OperatingPoint.Output = 6.88 })
+	var refused *ident.RefusedError
+	if !errors.As(err, &refused) || got.Promise.Stable != 0 || got.Promise.Misses[0].What != missTrip {
+		t.Errorf("step through the trip: %v, %+v", err, got.Promise)
+	}
+	got, err = verify(func(l *Loops) { l.OperatingPoint.Output = 6.6 })
+	if err != nil || got.Verdict != Weak || len(got.Warnings) == 0 || !strings.Contains(got.Warnings[0], "work about input") {
+		t.Fatalf("moved operating point: %v, %v, %q", err, got.Verdict, got.Warnings)
+	}
+	for _, b := range got.Bounds {
+		if b.Name == BoundTrip && math.Abs(b.Value-0.4) > 1e-9 {
+			t.Errorf("room to the trip %v, want 0.4", b.Value)
+		}
+	}
+	if out := got.FirstClosure.Trip.Output; out == nil || out[0] < 3 || out[1] > 7 {
+		t.Errorf("first closure trips at %v, the rig at [3, 7]", out)
+	}
+	wide, err := verify(func(l *Loops) { l.InputLimits, l.InputRate = &[2]float64{-50, 50}, 1e9 })
+	if err != nil {
+		t.Fatal(err)
+	}
+	if *wide.InputLimits != r.input || wide.InputRate != 1e5 || len(wide.Warnings) < 2 {
+		t.Errorf("limits %v, rate %v, warnings %q", *wide.InputLimits, wide.InputRate, wide.Warnings)
+	}
+	for name, change := range map[string]func(*Loops){
+		"output outside":     func(l *Loops) { l.OperatingPoint.Output = 7.5 },
+		"input outside":      func(l *Loops) { l.OperatingPoint.Input = 3.5; l.InputLimits = &[2]float64{0, 5} },
+		"nothing in common":  func(l *Loops) { l.InputLimits = &[2]float64{4, 5} },
+		"point at the limit": func(l *Loops) { l.InputLimits = &[2]float64{1.2, 3} },
+	} {
+		if l, err := verify(change); err == nil || l != nil {
+			t.Errorf("%s: %v", name, err)
+		}
+	}
+}
