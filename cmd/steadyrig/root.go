@@ -34,6 +34,8 @@ func newRoot(a *app) *cobra.Command {
 		},
 		RunE: func(cmd *cobra.Command, args []string) error { return cmd.Help() },
 	}
+	// The template of the library lets flags run as wide as they are.
+	root.SetUsageTemplate(strings.ReplaceAll(root.UsageTemplate(), "FlagUsages |", fmt.Sprintf("FlagUsagesWrapped %d |", pageWidth)))
 	root.CompletionOptions.DisableDefaultCmd = true
 	root.SuggestionsMinimumDistance = 2
 	root.SetFlagErrorFunc(func(cmd *cobra.Command, err error) error {

@@ -48,17 +48,7 @@ func showAudit(p *page, r *ident.AuditReport, exps []*data.Experiment, rig *data
 
 	p.heading(fmt.Sprintf("Flaws: %s", map[bool]string{true: "none found", false: fmt.Sprint(len(r.Flaws))}[len(r.Flaws) == 0]))
 	for _, f := range r.Flaws {
-		where := f.Name
-		if f.Column != "" {
-			where += " in " + f.Column
-		}
-		if f.Line > 0 {
-			where += fmt.Sprintf(", first on line %d", f.Line)
-		}
-		if len(r.Logs) > 1 {
-			where += " of " + f.File
-		}
-		p.line("  %s", where)
+		p.line("  %s", words.Flaw(f, len(r.Logs) > 1))
 		wrap(p.w, "    ", strings.TrimSuffix(f.Detail, ".")+". "+f.Effect)
 	}
 }

@@ -2,6 +2,7 @@ package main
 
 import (
 	"fmt"
+	"strings"
 
 	"steadyrig/cmd/steadyrig/words"
 	"steadyrig/data"
@@ -145,7 +146,11 @@ func showPromise(p *page, l *design.Loops, u data.Units) {
 	p.item("stable", fmt.Sprintf("%d of %d", q.Stable, q.Plants))
 	p.item("meet the spec", fmt.Sprintf("%d of %d; at least %s of all, with %g %% confidence", q.MeetSpec, q.Plants, words.Share(q.LowerBound), 100*q.Confidence))
 	for _, m := range q.Misses {
-		p.item("missed", fmt.Sprintf("%s on %s: worst %s, asked %s", m.What, words.Count(m.Plants, "plant"), words.Number(m.Worst), words.Number(m.Asked)))
+		text := fmt.Sprintf("%s on %s", strings.ReplaceAll(m.What, "_", " "), words.Count(m.Plants, "plant"))
+		if worst, asked := words.Miss(m, u); worst != "" {
+			text += fmt.Sprintf(": worst %s, asked %s", worst, asked)
+		}
+		p.item("missed", text)
 	}
 	p.item("largest step", words.Unit(words.Number(q.LargestStep), u.Output))
 	p.item("comes back from", words.Unit(words.Number(q.Recoverable), u.Output)+" off the operating point")

@@ -23,8 +23,9 @@ func showModel(p *page, m *ident.Model, u data.Units) {
 func showPlant(p *page, m *ident.Model, u data.Units) {
 	p.heading("Plant  y = G(s) u, deviations from the operating point")
 	ratio := words.Ratio(u.Output, u.Input)
-	p.item("numerator", words.Polynomial(m.Plant.Numerator, "s"))
-	p.item("denominator", words.Polynomial(m.Plant.Denominator, "s"))
+	p.item("units", words.PlantUnits(u)+"; ± is half a 95 % interval")
+	p.item("numerator", words.Numerator(m))
+	p.item("denominator", words.Denominator(m))
 	p.item("delay", words.Delay(m)+", from the logged input to the output")
 	p.item("steady gain", words.SteadyGain(m, ratio))
 	if m.Gain.HighFrequency != nil {
@@ -66,7 +67,7 @@ func showMethods(p *page, m *ident.Model) {
 	p.heading("The same poles by other ways of estimating")
 	var name, takes, poles, agrees []string
 	for _, e := range m.Evidence.Methods {
-		name, takes, agrees = append(name, e.Name), append(takes, words.Assumes[e.Name]), append(agrees, words.YesNo(e.Agrees))
+		name, takes, agrees = append(name, e.Name), append(takes, words.Assumes[e.Name]), append(agrees, words.Agrees(e))
 		poles = append(poles, words.Rightmost(e.Poles))
 	}
 	p.table(columns("method", name, "takes for granted", takes, ">rightmost pole", poles, "agrees", agrees))
@@ -86,6 +87,9 @@ func showEvidence(p *page, m *ident.Model, u data.Units) {
 		p.item("explained", fmt.Sprintf("%s of the output's variance one step ahead, on rows not used in the fit", words.Share(m.Evidence.ExplainedShare)))
 		p.item("left over", fmt.Sprintf("%s standard deviation of one-step prediction errors", words.Unit(words.Number(m.Noise.SD), u.Output)))
 		p.item("residuals", words.Residuals(m))
+		if text := words.Calibration(m); text != "" {
+			p.item("short log", text)
+		}
 	}
 	p.item("from outside", fmt.Sprintf("%s of the input's variance", words.Share(m.Evidence.OutsideShare)))
 	if m.Evidence.Memories > 0 {

@@ -177,8 +177,9 @@ func plantSection(in Input) section {
 	}
 	ratio := words.Ratio(u.Output, u.Input)
 	s.Facts = []fact{
-		{"Numerator", words.Polynomial(m.Plant.Numerator, "s")},
-		{"Denominator", words.Polynomial(m.Plant.Denominator, "s")},
+		{"Transfer function", "from the input's to the output's deviation from the operating point; " + words.PlantUnits(u) + "; ± is half a 95 % interval"},
+		{"Numerator", words.Numerator(m)},
+		{"Denominator", words.Denominator(m)},
 		{"Delay", words.Delay(m) + ", from the logged input to the output"},
 		{"Steady gain", words.SteadyGain(m, ratio)},
 	}
@@ -191,6 +192,9 @@ func plantSection(in Input) section {
 		fact{"Residuals", words.Residuals(m)},
 		fact{"Length", words.Number(m.Evidence.Memories) + " predictor memories"},
 	)
+	if text := words.Calibration(m); text != "" {
+		s.Facts = append(s.Facts, fact{"Short log", text})
+	}
 	poles := rootTable("Poles, rad/s", m.Poles, "Unstable")
 	poles.Notes = words.PoleNotes(m.Poles)
 	s.Tables = append(s.Tables, poles)
@@ -199,7 +203,7 @@ func plantSection(in Input) section {
 	}
 	methods := table{Caption: "The same poles by other ways of estimating", Head: []string{"Method", "Takes for granted", "Rightmost pole, rad/s", "Agrees", "Note"}, Right: []bool{false, false, true}}
 	for _, e := range m.Evidence.Methods {
-		methods.Rows = append(methods.Rows, []string{e.Name, words.Assumes[e.Name], words.Rightmost(e.Poles), words.YesNo(e.Agrees), e.Note})
+		methods.Rows = append(methods.Rows, []string{e.Name, words.Assumes[e.Name], words.Rightmost(e.Poles), words.Agrees(e), e.Note})
 	}
 	if len(methods.Rows) > 0 {
 		s.Tables = append(s.Tables, methods)
@@ -351,14 +355,18 @@ func stepsSection(in Input) section {
 		add("overshoot", q.Overshoot, words.Share, spec.Overshoot)
 		add("settling", q.Settling, words.Seconds, spec.Settling)
 		add("peak |S| at the plant input", q.PeakS, words.Number, spec.PeakSensitivity)
-		add("input noise, standard deviation", q.InputNoise, input, spec.InputNoise)
+		add("input noise, standard deviation", q.InputNoise, input, askedNoise(in))
 		if q.KickPeak != nil {
 			add("output after the kick", *q.KickPeak, func(x float64) string { return words.Unit(words.Number(x), u.Output) }, spec.KickPeak)
 		}
 		s.Tables = append(s.Tables, t)
 		miss := table{Caption: "What was missed", Head: []string{"Figure", "Plants", "Worst", "Asked"}, Right: []bool{false, true, true, true}}
 		for _, m := range q.Misses {
-			miss.Rows = append(miss.Rows, []string{m.What, fmt.Sprint(m.Plants), words.Number(m.Worst), words.Number(m.Asked)})
+			row := []string{strings.ReplaceAll(m.What, "_", " "), fmt.Sprint(m.Plants), "–", "–"}
+			if worst, ask := words.Miss(m, u); worst != "" {
+				row[2], row[3] = worst, ask
+			}
+			miss.Rows = append(miss.Rows, row)
 		}
 		if len(miss.Rows) > 0 {
 			s.Tables = append(s.Tables, miss)
@@ -375,6 +383,25 @@ func stepsSection(in Input) section {
 	}
 	s.Figures = stepFigures(r, l, in.Rig.Spec, u)
 	return s
+}
+
+// defaultNoiseShare is the input noise that a rig file without one asks for, a share of the input's range.
+const defaultNoiseShare = 1.0 / 20
+
+// askedNoise is the largest standard deviation of the input that the spec asks for.
+func askedNoise(in Input) float64 {
+	for _, b := range in.Loops.Bounds {
+		if b.Name == design.BoundNoise && b.Asked != nil {
+			return *b.Asked
+		}
+	}
+	if ask := in.Rig.Spec.InputNoise; ask > 0 {
+		return ask
+	}
+	if lim := in.Rig.Limits.Input; lim != nil {
+		return defaultNoiseShare * (lim[1] - lim[0])
+	}
+	return 0
 }
 
 func closureSection(in Input) section {

@@ -132,12 +132,22 @@ func Seconds(t float64) string {
 }
 
 // Polynomial formats coefficients in descending powers.
-func Polynomial(c []float64, x string) string {
+func Polynomial(c []float64, x string) string { return PolynomialWithin(c, make([]float64, len(c)), x) }
+
+// PolynomialWithin formats coefficients in descending powers, each with the half width of its interval; 0: it has none.
+func PolynomialWithin(c, half []float64, x string) string {
 	var b strings.Builder
 	for i, v := range c {
 		k := len(c) - 1 - i
-		if v == 0 && len(c) > 1 {
+		if v == 0 && half[i] == 0 && len(c) > 1 {
 			continue
+		}
+		figure := Number(math.Abs(v))
+		switch {
+		case half[i] > 0:
+			figure = "(" + within(math.Abs(v), half[i]) + ")"
+		case math.Abs(v) == 1 && k > 0:
+			figure = ""
 		}
 		switch {
 		case b.Len() == 0 && v < 0:
@@ -147,20 +157,25 @@ func Polynomial(c []float64, x string) string {
 		case b.Len() > 0:
 			b.WriteString(" + ")
 		}
-		if a := math.Abs(v); a != 1 || k == 0 {
-			b.WriteString(Number(a))
-			if k > 0 {
+		b.WriteString(figure)
+		if k > 0 {
+			if figure != "" {
 				b.WriteString(" ")
 			}
-		}
-		switch {
-		case k == 1:
-			b.WriteString(x)
-		case k > 1:
 			b.WriteString(x + power(k))
 		}
 	}
 	return b.String()
+}
+
+// within formats a figure and its half width, both to the second digit of the half width.
+func within(v, half float64) string {
+	decimals := 1 - int(math.Floor(math.Log10(half)))
+	if math.Max(v, half) >= 1e6 || decimals > 8 {
+		return Number(v) + " ± " + Brief(half)
+	}
+	f := func(x float64) string { return strconv.FormatFloat(x, 'f', max(0, decimals), 64) }
+	return f(v) + " ± " + f(half)
 }
 
 // power writes an exponent in raised figures, 1 as nothing.

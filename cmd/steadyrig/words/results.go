@@ -6,6 +6,7 @@ import (
 	"slices"
 	"strings"
 
+	"steadyrig/data"
 	"steadyrig/design"
 	"steadyrig/ident"
 )
@@ -114,18 +115,120 @@ func Loops(l *design.Loops) string {
 		l.Rig, Share(q.LowerBound), 100*q.Confidence, q.MeetSpec, q.Plants)
 }
 
-// Delay is the plant's delay with the half width of its 95 % interval where it was estimated.
-func Delay(m *ident.Model) string {
-	for i, name := range m.Plant.Parameters {
-		if v := m.Plant.Covariance[i][i]; name == "delay" && v > 0 {
-			return Seconds(m.Plant.Delay) + " ± " + Seconds(1.96*math.Sqrt(v))
-		}
+// halfWidth is half the width of the 95 % interval of a parameter of the plant, 0 where it was not estimated.
+func halfWidth(m *ident.Model, parameter string) float64 {
+	i := slices.Index(m.Plant.Parameters, parameter)
+	if i < 0 || i >= len(m.Plant.Covariance) || !(m.Plant.Covariance[i][i] > 0) {
+		return 0
 	}
-	return Seconds(m.Plant.Delay)
+	return 1.96 * math.Sqrt(m.Plant.Covariance[i][i])
+}
+
+// Delay is the plant's delay with half the width of its 95 % interval where it was estimated.
+func Delay(m *ident.Model) string {
+	if half := halfWidth(m, "delay"); half > 0 {
+		return Seconds(m.Plant.Delay) + " ± " + Seconds(half)
+	}
+	return "held at " + Seconds(m.Plant.Delay)
+}
+
+// Numerator and Denominator are the plant's polynomials, each coefficient with half the width of its 95 % interval.
+func Numerator(m *ident.Model) string {
+	c := m.Plant.Numerator
+	half := make([]float64, len(c))
+	for i := range c {
+		half[i] = halfWidth(m, fmt.Sprintf("b%d", len(c)-1-i))
+	}
+	return PolynomialWithin(c, half, "s")
+}
+
+func Denominator(m *ident.Model) string {
+	c := m.Plant.Denominator
+	half := make([]float64, len(c))
+	for i := range c {
+		half[i] = halfWidth(m, fmt.Sprintf("a%d", i))
+	}
+	return PolynomialWithin(c, half, "s")
+}
+
+// PlantUnits says in what units the plant's transfer function is, those of the log where the rig file names them.
+func PlantUnits(u data.Units) string {
+	text := "s in rad/s"
+	if u.Output != "" {
+		text += ", y in " + u.Output
+	}
+	if u.Input != "" {
+		text += ", u in " + u.Input
+	}
+	return text
+}
+
+// Calibration tells how replays of a short log widened the intervals; empty: there were none.
+func Calibration(m *ident.Model) string {
+	c := m.Evidence.Calibration
+	switch {
+	case c == nil:
+		return ""
+	case c.Factor == 1:
+		return fmt.Sprintf("the intervals stand as they are, by %s", Count(c.Replays, "replay"))
+	}
+	return fmt.Sprintf("intervals widened by a factor of %s from %s", Brief(math.Sqrt(c.Factor)), Count(c.Replays, "replay"))
+}
+
+// Agrees says whether a method agrees with the model, nothing where it gives no poles.
+func Agrees(e ident.Method) string {
+	if len(e.Poles) == 0 {
+		return "–"
+	}
+	return YesNo(e.Agrees)
+}
+
+// Flaw tells a flaw of a log, how often and where first; named: with its file.
+func Flaw(f ident.Flaw, named bool) string {
+	text := f.Name
+	if f.Column != "" {
+		text += " in " + f.Column
+	}
+	if named {
+		text += " of " + f.File
+	}
+	if f.Count > 1 {
+		text += fmt.Sprintf(", %d times", f.Count)
+	}
+	switch {
+	case f.Line > 0 && f.Count > 1:
+		text += fmt.Sprintf(", first on line %d", f.Line)
+	case f.Line > 0:
+		text += fmt.Sprintf(", on line %d", f.Line)
+	}
+	return text
+}
+
+// Miss tells the worst figure of what a promise missed and what was asked, each with its unit; both empty for what is
+// kept or not, without a figure.
+func Miss(m design.MissReason, u data.Units) (worst, asked string) {
+	show := Number
+	switch m.What {
+	case "overshoot":
+		show = Share
+	case "settling":
+		show = Seconds
+	case "input_noise":
+		show = func(x float64) string { return Unit(Number(x), u.Input) }
+	case "kick_peak":
+		show = func(x float64) string { return Unit(Number(x), u.Output) }
+	case "peak_sensitivity":
+	default:
+		return "", ""
+	}
+	return show(m.Worst), show(m.Asked)
 }
 
 // Estimate is a figure with its unit and its 95 % interval.
 func Estimate(e *ident.Estimate, unit string) string {
+	if e.Interval95.Lo == e.Interval95.Hi {
+		return Unit(Number(e.Value), unit)
+	}
 	return fmt.Sprintf("%s (95 %%: %s)", Unit(Number(e.Value), unit), Interval(e.Interval95))
 }
 

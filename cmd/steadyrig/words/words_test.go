@@ -2,8 +2,10 @@ package words
 
 import (
 	"math"
+	"strings"
 	"testing"
 
+	"steadyrig/data"
 	"steadyrig/design"
 	"steadyrig/ident"
 )
@@ -107,5 +109,64 @@ func TestIntegrators(t *testing.T) {
 		if got := SteadyGain(&ident.Model{Poles: poles}, "mm/N"); got != c.gain {
 			t.Errorf("%q, want %q", got, c.gain)
 		}
+	}
+}
+
+// Coefficients come with their intervals, in the order that Plant documents for its covariance; what was not estimated
+// comes without one.
+func TestPlant(t *testing.T) {
+	m := &ident.Model{Plant: ident.Plant{
+		Numerator: []float64{-312.7, 2185}, Denominator: []float64{1, 22.15, 0, -2714}, Delay: 0.002,
+		Parameters: []string{"b0", "b1", "a1", "a2", "a3"},
+		Covariance: [][]float64{{100, 0, 0, 0, 0}, {0, 1, 0, 0, 0}, {0, 0, 0.01, 0, 0}, {0, 0, 0, 0, 0}, {0, 0, 0, 0, 25}},
+	}}
+	for _, c := range []struct{ got, want string }{
+		{Numerator(m), "-(312.7 ± 2.0) s + (2185 ± 20)"},
+		{Denominator(m), "s³ + (22.15 ± 0.20) s² - (2714.0 ± 9.8)"},
+		{Delay(m), "held at 2 ms"},
+		{PlantUnits(data.Units{Input: "A", Output: "mm"}), "s in rad/s, y in mm, u in A"},
+		{Calibration(m), ""},
+		{Estimate(&ident.Estimate{Value: 3, Interval95: ident.Interval{Lo: 3, Hi: 3}}, "mm"), "3 mm"},
+	} {
+		if c.got != c.want {
+			t.Errorf("%q, want %q", c.got, c.want)
+		}
+	}
+	m.Plant.Parameters[4], m.Plant.Covariance[4][4] = "delay", 1e-8
+	m.Evidence.Calibration = &ident.Calibration{Replays: 150, Factor: 2.25}
+	if got, want := Delay(m), "2 ms ± 196 µs"; got != want {
+		t.Errorf("%q, want %q", got, want)
+	}
+	if got, want := Calibration(m), "intervals widened by a factor of 1.5 from 150 replays"; got != want {
+		t.Errorf("%q, want %q", got, want)
+	}
+}
+
+func TestFlawsAndMisses(t *testing.T) {
+	for _, c := range []struct {
+		flaw  ident.Flaw
+		named bool
+		want  string
+	}{
+		{ident.Flaw{Name: "missing value", Column: "y", Count: 12, Line: 103}, false, "missing value in y, 12 times, first on line 103"},
+		{ident.Flaw{Name: "missing value", Column: "y", Count: 1, Line: 103, File: "b.csv"}, true, "missing value in y of b.csv, on line 103"},
+		{ident.Flaw{Name: "gap"}, false, "gap"},
+	} {
+		if got := Flaw(c.flaw, c.named); got != c.want {
+			t.Errorf("%q, want %q", got, c.want)
+		}
+	}
+	u := data.Units{Input: "A", Output: "mm"}
+	for what, want := range map[string]string{
+		"overshoot": "20 %, 10 %", "settling": "200 ms, 100 ms", "peak_sensitivity": "0.2, 0.1", "input_noise": "0.2 A, 0.1 A", "kick_peak": "0.2 mm, 0.1 mm",
+		"trip limits during the step": ", ",
+	} {
+		worst, asked := Miss(design.MissReason{What: what, Worst: 0.2, Asked: 0.1}, u)
+		if got := strings.Join([]string{worst, asked}, ", "); got != want {
+			t.Errorf("%s: %q, want %q", what, got, want)
+		}
+	}
+	if got := Agrees(ident.Method{Name: "long", Note: "it could not be computed"}); got != "–" {
+		t.Errorf("a method without poles agrees: %q", got)
 	}
 }
