@@ -2,9 +2,7 @@ package main
 
 import (
 	"context"
-	"encoding/json"
 	"errors"
-	"fmt"
 
 	"github.com/spf13/cobra"
 
@@ -36,11 +34,11 @@ audit.json.`,
 			if report == nil {
 				return refusal
 			}
-			content, err := json.MarshalIndent(report, "", "  ")
+			content, err := document("the audit", report)
 			if err != nil {
-				return fmt.Errorf("writing the audit: %w", err)
+				return err
 			}
-			if err := a.deliver(&s, "", append(content, '\n'), func(p *page) { showAudit(p, report, exps, rig) }); err != nil {
+			if err := a.deliver(&s, "", content, func(p *page) { showAudit(p, report, exps, rig) }); err != nil {
 				return err
 			}
 			return refusal

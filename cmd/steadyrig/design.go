@@ -3,7 +3,6 @@ package main
 import (
 	"context"
 	"errors"
-	"fmt"
 
 	"github.com/spf13/cobra"
 
@@ -113,9 +112,9 @@ func (a *app) deliverLoops(s *settings, usual string, loops *design.Loops, u dat
 	if loops == nil {
 		return refusal
 	}
-	content, err := rendered(loops.Write)
+	content, err := encoded("the loops", loops, loops.Write)
 	if err != nil {
-		return fmt.Errorf("writing the loops: %w", err)
+		return err
 	}
 	a.warn(s, warningsBeside(loops.Warnings, refusal))
 	if err := a.deliver(s, usual, content, func(p *page) { showLoops(p, loops, u) }); err != nil {

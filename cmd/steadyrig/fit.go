@@ -34,7 +34,7 @@ for them. It writes model.json, or the file that --out names.`,
 			if model == nil {
 				return refusal
 			}
-			content, err := rendered(model.Write)
+			content, err := encoded("the model", model, model.Write)
 			if err != nil {
 				return err
 			}

@@ -192,13 +192,3 @@ func tomlFloat(x float64) string {
 	}
 	return s
 }
-
-// printJSON prints the one document of a command under --json.
-func printJSON(w io.Writer, v any) error {
-	b, err := json.MarshalIndent(v, "", "  ")
-	if err != nil {
-		return fmt.Errorf("writing JSON: %w", err)
-	}
-	_, err = w.Write(append(b, '\n'))
-	return err
-}

@@ -3,7 +3,6 @@ package main
 import (
 	"bytes"
 	"context"
-	"encoding/json"
 	"fmt"
 	"io"
 	"os"
@@ -218,7 +217,7 @@ func (a *app) whole(ctx context.Context, j *job, s *settings) error {
 		return err
 	}
 	refuse(err)
-	modelText, err := rendered(model.Write)
+	modelText, err := encoded("the model", model, model.Write)
 	if err != nil {
 		return err
 	}
@@ -236,11 +235,11 @@ func (a *app) whole(ctx context.Context, j *job, s *settings) error {
 	}
 	j.audit, j.model, j.loops = audit, model, loops
 
-	auditText, err := json.MarshalIndent(audit, "", "  ")
+	auditText, err := document("the audit", audit)
 	if err != nil {
-		return fmt.Errorf("writing the audit: %w", err)
+		return err
 	}
-	loopsText, err := rendered(loops.Write)
+	loopsText, err := encoded("the loops", loops, loops.Write)
 	if err != nil {
 		return err
 	}
@@ -256,7 +255,7 @@ func (a *app) whole(ctx context.Context, j *job, s *settings) error {
 	if err := ctx.Err(); err != nil {
 		return err
 	}
-	j.files = append(j.files, file{auditFile, append(auditText, '\n')}, file{modelFile, modelText}, file{loopsFile, loopsText}, file{reportFile, page})
+	j.files = append(j.files, file{auditFile, auditText}, file{modelFile, modelText}, file{loopsFile, loopsText}, file{reportFile, page})
 	if err := writeFolder(j.dir, s.force, j.files); err != nil {
 		return err
 	}
@@ -308,6 +307,10 @@ func (j *job) show(p *page) {
 		showPoles(p, j.model)
 		showRoots(p, "Zeros", j.model.Zeros, "right half-plane")
 		showMethods(p, j.model)
+		if text := words.Calibration(j.model); text != "" {
+			p.line("")
+			p.item("short log", text)
+		}
 	}
 	showBoundsBriefly(p, j.loops)
 	showMargins(p, j.loops)
