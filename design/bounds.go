@@ -2,6 +2,7 @@ package design
 
 import (
 	"cmp"
+	"context"
 	"fmt"
 	"math"
 	"math/cmplx"
@@ -40,7 +41,7 @@ func Bounds(model *ident.Model, rig *data.Rig) ([]Bound, error) {
 	if err != nil {
 		return nil, err
 	}
-	return p.bounds(p.drawTFs(boundDraws, streamBounds, 0)), nil
+	return p.bounds(context.Background(), p.drawTFs(boundDraws, streamBounds, 0)), nil
 }
 
 // plantLimits are the limits of one plant, by name; a limit that does not apply is absent.
@@ -107,11 +108,14 @@ func (p *problem) limitsOf(pl *plant) plantLimits {
 	return out
 }
 
-// bounds lists the limits with intervals over the drawn plants.
-func (p *problem) bounds(draws []lti.TF) []Bound {
+// bounds lists the limits with intervals over the drawn plants, as many as ctx leaves time for.
+func (p *problem) bounds(ctx context.Context, draws []lti.TF) []Bound {
 	nominal := p.limitsOf(&p.nominal)
 	over := map[string][]float64{}
 	for _, g := range draws {
+		if ctx.Err() != nil {
+			break
+		}
 		pl, err := p.newPlant(g)
 		if err != nil {
 			continue

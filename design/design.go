@@ -47,7 +47,10 @@ func Design(ctx context.Context, model *ident.Model, rig *data.Rig, opt Options)
 	if err != nil {
 		return l.passOn(err)
 	}
-	l.Bounds = p.bounds(p.drawTFs(boundDraws, streamBounds, opt.Seed))
+	l.Bounds = p.bounds(ctx, p.drawTFs(boundDraws, streamBounds, opt.Seed))
+	if err := ctx.Err(); err != nil {
+		return nil, err
+	}
 	if r := outOfReach(l.Bounds); r != nil {
 		return l.refuse(r)
 	}
@@ -136,9 +139,12 @@ func (p *problem) tune(ctx context.Context, l *Loops, start pair, pool, tuning [
 		}
 	} else {
 		best = p.rejudge(best, tuning, aim)
-		best = p.polishBoth(best, tuning, aim, 300)
+		best = p.polishBoth(ctx, best, tuning, aim, 300)
 	}
 	for range tuningRounds {
+		if err := ctx.Err(); err != nil {
+			return best, tuning, err
+		}
 		worse := p.worstOf(best, pool, aim)
 		added := 0
 		for _, i := range worse {
@@ -156,7 +162,7 @@ func (p *problem) tune(ctx context.Context, l *Loops, start pair, pool, tuning [
 			best = again
 			break
 		}
-		best = p.polishBoth(again, tuning, aim, 350)
+		best = p.polishBoth(ctx, again, tuning, aim, 350)
 	}
 	return best, tuning, nil
 }
@@ -195,7 +201,7 @@ func (p *problem) firstPair(ctx context.Context, l *Loops, tuning []plant, aim t
 		}
 		last := tried[len(tried)-1]
 		if last.ratios.worst() > meets {
-			last = p.polishBoth(last, tuning, aim, 400)
+			last = p.polishBoth(ctx, last, tuning, aim, 400)
 		}
 		if best.form == "" || last.cost < best.cost {
 			best = last

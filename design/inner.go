@@ -7,8 +7,6 @@ import (
 	"math/cmplx"
 	"runtime"
 	"slices"
-
-	"golang.org/x/sync/errgroup"
 )
 
 // innerResult is one tuned inner controller.
@@ -138,26 +136,18 @@ func (p *problem) tuneInner(ctx context.Context, plants []plant, workers int) ([
 	var results []innerResult
 	for _, decay := range []bool{true, false} {
 		results = results[:0]
-		type job struct{ start innerResult }
-		var jobs []job
+		var jobs []innerResult
 		for _, form := range []string{formGain, formLead, formRollOff} {
-			for _, s := range p.innerStarts(form, decay) {
-				jobs = append(jobs, job{s})
+			if err := ctx.Err(); err != nil {
+				return nil, 0, err
 			}
+			jobs = append(jobs, p.innerStarts(form, decay)...)
 		}
 		done := make([]innerResult, len(jobs))
-		group, within := errgroup.WithContext(ctx)
-		group.SetLimit(limit(workers))
-		for i, j := range jobs {
-			group.Go(func() error {
-				if err := within.Err(); err != nil {
-					return err
-				}
-				done[i] = p.polishInner(j.start, plants, decay)
-				return nil
-			})
-		}
-		if err := group.Wait(); err != nil {
+		if err := each(ctx, len(jobs), workers, func(i int) error {
+			done[i] = p.polishInner(ctx, jobs[i], plants, decay)
+			return nil
+		}); err != nil {
 			return nil, 0, err
 		}
 		any := false
@@ -196,9 +186,9 @@ func (p *problem) tuneInner(ctx context.Context, plants []plant, workers int) ([
 // costs far more than the peak itself.
 func (r *innerResult) sound() bool { return r.stable && r.cost < r.peakS+2*noiseWeight }
 
-func (p *problem) polishInner(s innerResult, plants []plant, decay bool) innerResult {
+func (p *problem) polishInner(ctx context.Context, s innerResult, plants []plant, decay bool) innerResult {
 	var g gridLoop
-	x, _ := minimise(func(x []float64) float64 {
+	x, _ := minimise(ctx, func(x []float64) float64 {
 		cost, _, _, _ := p.innerCost(innerBlock(s.form, x, s.scale, p.period), plants, &g, decay)
 		return cost
 	}, s.x, 0.3, 120+80*len(s.x))

@@ -102,6 +102,10 @@ func StronglyStabilisable(g lti.TF) bool {
 	return true
 }
 
+// mostPick is the largest delay in samples for which several poles are looked at together: the work grows with its
+// cube.
+const mostPick = 60
+
 // leastPeak returns the least peak |S| over all stabilising controllers of a sampled plant with d >= 1 samples
 // from the input to its first effect, its poles and zeros outside the unit circle given in z. One real pole and no
 // zero: |z|^d exactly. For d > 1 and several poles it is less than the product of their |z|^d, which is the value
@@ -117,6 +121,14 @@ func leastPeak(d int, poles, zeros []complex128) float64 {
 		peak := math.Pow(cmplx.Abs(z), float64(d))
 		for _, q := range zeros {
 			peak *= cmplx.Abs((1 - cmplx.Conj(q)*z) / (z - q))
+		}
+		return peak
+	}
+	if d > mostPick {
+		// With one pole and the zeros left out of account the limit is lower, and holds all the same.
+		peak := 1.0
+		for _, z := range poles {
+			peak = math.Max(peak, math.Pow(cmplx.Abs(z), float64(d)))
 		}
 		return peak
 	}

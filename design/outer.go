@@ -5,8 +5,6 @@ import (
 	"context"
 	"math"
 	"slices"
-
-	"golang.org/x/sync/errgroup"
 )
 
 // pair is a tuned pair of loops.
@@ -179,18 +177,10 @@ func (p *problem) tuneOuter(ctx context.Context, inner innerResult, plants []pla
 	for _, form := range []string{formI, formPI, formPILead} {
 		starts := p.outerStarts(form, inner, t)
 		done := make([]pair, len(starts))
-		group, within := errgroup.WithContext(ctx)
-		group.SetLimit(limit(workers))
-		for i, s := range starts {
-			group.Go(func() error {
-				if err := within.Err(); err != nil {
-					return err
-				}
-				done[i] = p.polishOuter(s, plants, t)
-				return nil
-			})
-		}
-		if err := group.Wait(); err != nil {
+		if err := each(ctx, len(starts), workers, func(i int) error {
+			done[i] = p.polishOuter(ctx, starts[i], plants, t)
+			return nil
+		}); err != nil {
 			return nil, err
 		}
 		best := done[0]
@@ -221,14 +211,14 @@ func rank(a pair, all []pair) int {
 	return 1
 }
 
-func (p *problem) polishOuter(s pair, plants []plant, t targets) pair {
+func (p *problem) polishOuter(ctx context.Context, s pair, plants []plant, t targets) pair {
 	var g gridLoop
 	var sim simulator
 	eval := func(x []float64) ratios {
 		k, f := outerBlocks(s.form, x, s.sign, p.spec.settling)
 		return p.judge(s.inner.block, k, f, plants, t, &g, &sim)
 	}
-	x, _ := minimise(func(x []float64) float64 { return eval(x).cost() }, s.x, 0.3, 60*len(s.x))
+	x, _ := minimise(ctx, func(x []float64) float64 { return eval(x).cost() }, s.x, 0.3, 60*len(s.x))
 	s.x = x
 	s.outer, s.pre = outerBlocks(s.form, x, s.sign, p.spec.settling)
 	s.ratios = eval(x)
@@ -237,7 +227,7 @@ func (p *problem) polishOuter(s pair, plants []plant, t targets) pair {
 }
 
 // polishBoth tunes inner and outer controller together, from a pair that does not meet the spec.
-func (p *problem) polishBoth(s pair, plants []plant, t targets, budget int) pair {
+func (p *problem) polishBoth(ctx context.Context, s pair, plants []plant, t targets, budget int) pair {
 	var g gridLoop
 	var sim simulator
 	n := len(s.inner.x)
@@ -247,7 +237,7 @@ func (p *problem) polishBoth(s pair, plants []plant, t targets, budget int) pair
 		return k1, k2, f, p.judge(k1, k2, f, plants, t, &g, &sim)
 	}
 	x0 := append(slices.Clone(s.inner.x), s.x...)
-	x, _ := minimise(func(x []float64) float64 {
+	x, _ := minimise(ctx, func(x []float64) float64 {
 		_, _, _, r := eval(x)
 		return r.cost()
 	}, x0, 0.2, budget)

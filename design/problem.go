@@ -113,6 +113,9 @@ func (p *problem) about() error {
 
 // sample prepares frequencies, nominal plant, noise and forbidden regions.
 func (p *problem) sample() error {
+	if err := p.tooLate(); err != nil {
+		return err
+	}
 	p.grid(p.model.TF().Delay + p.compute)
 	var err error
 	if p.nominal, err = p.newPlant(p.model.TF()); err != nil {
@@ -121,6 +124,36 @@ func (p *problem) sample() error {
 	p.noise = p.splitNoise()
 	p.regions = forbidden(p.model, p.spec.settling)
 	return nil
+}
+
+// mostLag is the largest number of delay samples that is worked with: a loop with more is sampled for nothing, as the
+// delay leaves it no bandwidth to use them.
+const mostLag = 500
+
+// hopelessPeak is a peak |S| beyond which its figure says nothing: no spec asks for more.
+const hopelessPeak = 10.0
+
+// tooLate refuses a delay of too many samples before anything of that size is built.
+func (p *problem) tooLate() error {
+	g := p.model.TF()
+	tau := g.Delay + p.compute
+	if !(tau/p.period > mostLag) {
+		return nil
+	}
+	fastest := 0.0
+	for _, s := range g.Poles() {
+		fastest = math.Max(fastest, real(s))
+	}
+	if LeastPeakDelay(fastest, tau) > math.Max(hopelessPeak, p.spec.peakS) {
+		return &ident.RefusedError{
+			What: fmt.Sprintf("the spec is out of reach: no peak sensitivity below %g is in reach with an unstable pole of %.4g rad/s and a delay of %.4g s in all (e^(p tau), Astrom (2000))", hopelessPeak, fastest, tau),
+			Do:   fmt.Sprintf("shorten the delay to below %s s, or check that [loop] compute_delay and the model's delay are in seconds", roundDown(math.Log(p.spec.peakS)/fastest)),
+		}
+	}
+	return &ident.RefusedError{
+		What: fmt.Sprintf("the delay of %.4g s in all is %.4g samples of %.4g s, and at most %d are worked with", tau, tau/p.period, p.period, mostLag),
+		Do:   fmt.Sprintf("a delay that long leaves no use for samples that short: take [loop] sample_period = %s or more, or check that the delay is in seconds", roundUp(tau/mostLag)),
+	}
 }
 
 // grid lays out the frequencies: evenly in their logarithm, but never so far apart that the phase of the delay
@@ -161,6 +194,9 @@ type plant struct {
 // newPlant samples a plant behind the hold.
 func (p *problem) newPlant(g lti.TF) (plant, error) {
 	g.Delay += p.compute
+	if g.Delay > mostLag*p.period {
+		return plant{}, fmt.Errorf("a delay of %.4g s is more than %d samples", g.Delay, mostLag)
+	}
 	d, err := lti.ZOHTF(g, p.period)
 	if err != nil {
 		return plant{}, err

@@ -8,8 +8,6 @@ import (
 	"slices"
 	"sync/atomic"
 
-	"golang.org/x/sync/errgroup"
-
 	"steadyrig/fit/lti"
 )
 
@@ -174,7 +172,8 @@ func (v *prover) judge(g lti.TF) (outcome, error) {
 	var o outcome
 	pl, err := p.newPlant(g)
 	if err != nil {
-		return o, err
+		// A plant that cannot be sampled is one that nothing holds.
+		return outcome{unstable: g.UnstablePoles(0), misses: []string{missUnstable}}, nil
 	}
 	o.unstable = pl.unstable
 	miss := func(what string) { o.misses = append(o.misses, what) }
@@ -271,33 +270,27 @@ func (p *problem) prove(ctx context.Context, law *lti.Law, opt Options, attempt 
 	}
 	draws := p.model.Draw(n, stream(opt.Seed, streamProof, attempt))
 	results := make([]outcome, n)
-	group, within := errgroup.WithContext(ctx)
-	workers := limit(opt.Workers)
-	group.SetLimit(workers)
 	first := p.newProver(law)
 	const batch = 25
 	var done atomic.Int64
-	for from := 0; from < n; from += batch {
-		group.Go(func() error {
-			v := first.another()
-			to := min(from+batch, n)
-			for k := from; k < to; k++ {
-				if err := within.Err(); err != nil {
-					return err
-				}
-				o, err := v.judge(draws[k])
-				if err != nil {
-					return fmt.Errorf("plant %d of the proof: %w", k, err)
-				}
-				results[k] = o
+	if err := each(ctx, (n+batch-1)/batch, opt.Workers, func(i int) error {
+		v := first.another()
+		from, to := i*batch, min((i+1)*batch, n)
+		for k := from; k < to; k++ {
+			if err := ctx.Err(); err != nil {
+				return err
 			}
-			if opt.Progress != nil {
-				opt.Progress(int(done.Add(int64(to-from))), n)
+			o, err := v.judge(draws[k])
+			if err != nil {
+				return fmt.Errorf("plant %d of the proof: %w", k, err)
 			}
-			return nil
-		})
-	}
-	if err := group.Wait(); err != nil {
+			results[k] = o
+		}
+		if opt.Progress != nil {
+			opt.Progress(int(done.Add(int64(to-from))), n)
+		}
+		return nil
+	}); err != nil {
 		return nil, err
 	}
 	nominal, err := first.judge(p.model.TF())
@@ -309,7 +302,7 @@ func (p *problem) prove(ctx context.Context, law *lti.Law, opt Options, attempt 
 	out.LowerBound = ClopperPearsonLower(out.MeetSpec, n, out.Confidence)
 	if out.Stable > 0 && nominal.stable {
 		some := append([]lti.TF{p.model.TF()}, draws[:min(n, extentPlants)]...)
-		if out.LargestStep, out.Recoverable, err = first.extents(ctx, some, workers); err != nil {
+		if out.LargestStep, out.Recoverable, err = first.extents(ctx, some, opt.Workers); err != nil {
 			return nil, err
 		}
 	}
@@ -375,25 +368,17 @@ const extentPlants = 16
 func (v *prover) extents(ctx context.Context, plants []lti.TF, workers int) (step, offset float64, err error) {
 	p := v.p
 	steps, offsets := make([]float64, len(plants)), make([]float64, len(plants))
-	group, within := errgroup.WithContext(ctx)
-	group.SetLimit(workers)
-	for i, g := range plants {
-		group.Go(func() error {
-			if err := within.Err(); err != nil {
-				return err
-			}
-			v := v.another()
-			n := 2 * p.steps(g)
-			steps[i] = p.largest(func(a float64) bool {
-				return v.run(g, n, a, false, 0) == nil && v.calm(a)
-			})
-			offsets[i] = p.largest(func(a float64) bool {
-				return v.run(g, n, 0, false, a) == nil && v.calm(0)
-			})
-			return nil
+	if err := each(ctx, len(plants), workers, func(i int) error {
+		v, g := v.another(), plants[i]
+		n := 2 * p.steps(g)
+		steps[i] = p.largest(func(a float64) bool {
+			return v.run(g, n, a, false, 0) == nil && v.calm(a)
 		})
-	}
-	if err := group.Wait(); err != nil {
+		offsets[i] = p.largest(func(a float64) bool {
+			return v.run(g, n, 0, false, a) == nil && v.calm(0)
+		})
+		return nil
+	}); err != nil {
 		return 0, 0, err
 	}
 	return slices.Min(steps), slices.Min(offsets), nil

@@ -2,6 +2,7 @@ package design
 
 import (
 	"cmp"
+	"context"
 	"math"
 	"slices"
 )
@@ -10,13 +11,13 @@ import (
 const simplexTolerance = 1e-4
 
 // minimise runs a Nelder-Mead simplex of the given size from x0 with about budget evaluations and returns the best
-// point seen. It draws nothing and so gives the same result every time. A simplex that has shrunk is set up once
+// point seen, which is soon when ctx ends. It draws nothing and so gives the same result every time. A simplex that has shrunk is set up once
 // more about its best point, which gets it out of most false minima. Written here because gonum's optimize pulls
 // half of golang.org/x/tools into the module for the sake of its multivariate distributions.
 //
 // Source: Nelder & Mead (1965), A simplex method for function minimization, Computer J. 7, 308-313, with the
 // dimension-dependent coefficients of Gao & Han (2012), Comput. Optim. Appl. 51, 259-277.
-func minimise(f func([]float64) float64, x0 []float64, size float64, budget int) ([]float64, float64) {
+func minimise(ctx context.Context, f func([]float64) float64, x0 []float64, size float64, budget int) ([]float64, float64) {
 	n := len(x0)
 	type vertex struct {
 		x []float64
@@ -37,7 +38,7 @@ func minimise(f func([]float64) float64, x0 []float64, size float64, budget int)
 		expand, contract, shrink = 2, 0.5, 0.5
 	}
 	best := eval(slices.Clone(x0))
-	for round := 0; round < 2 && count < budget; round++ {
+	for round := 0; round < 2 && count < budget && ctx.Err() == nil; round++ {
 		s := []vertex{best}
 		for i := range n {
 			x := slices.Clone(best.x)
@@ -51,7 +52,7 @@ func minimise(f func([]float64) float64, x0 []float64, size float64, budget int)
 			}
 			return x
 		}
-		for count < budget {
+		for count < budget && ctx.Err() == nil {
 			slices.SortStableFunc(s, func(a, b vertex) int { return cmp.Compare(a.f, b.f) })
 			if s[n].f-s[0].f < simplexTolerance {
 				break

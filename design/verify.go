@@ -42,7 +42,10 @@ func Verify(ctx context.Context, model *ident.Model, rig *data.Rig, loops *Loops
 	if err := law.Validate(); err != nil {
 		return nil, fmt.Errorf("the loops cannot run: %w", err)
 	}
-	l.Bounds = p.bounds(p.drawTFs(boundDraws, streamBounds, opt.Seed))
+	l.Bounds = p.bounds(ctx, p.drawTFs(boundDraws, streamBounds, opt.Seed))
+	if err := ctx.Err(); err != nil {
+		return nil, err
+	}
 	hidden := p.cancellations(law)
 	if l.Margins, err = p.margins(law, model.TF()); err != nil {
 		return nil, err
