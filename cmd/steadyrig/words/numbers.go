@@ -145,7 +145,7 @@ func PolynomialWithin(c, half []float64, x string) string {
 		figure := Number(math.Abs(v))
 		switch {
 		case half[i] > 0:
-			figure = "(" + within(math.Abs(v), half[i]) + ")"
+			figure = within(math.Abs(v), half[i], len(c) == 1)
 		case math.Abs(v) == 1 && k > 0:
 			figure = ""
 		}
@@ -168,14 +168,23 @@ func PolynomialWithin(c, half []float64, x string) string {
 	return b.String()
 }
 
-// within formats a figure and its half width, both to the second digit of the half width.
-func within(v, half float64) string {
-	decimals := 1 - int(math.Floor(math.Log10(half)))
-	if math.Max(v, half) >= 1e6 || decimals > 8 {
-		return Number(v) + " ± " + Brief(half)
+// within formats a figure and its half width, both to the second digit of the half width; bare: it stands alone and
+// needs no brackets. Where that digit is far from the point, both share an exponent.
+func within(v, half float64, bare bool) string {
+	exponent := ""
+	if half >= 1e3 || half < 1e-4 {
+		e := math.Floor(math.Log10(math.Max(math.Abs(v), half)))
+		scale := math.Pow(10, -e)
+		v, half = v*scale, half*scale
+		exponent = fmt.Sprintf("e%g", e)
 	}
-	f := func(x float64) string { return strconv.FormatFloat(x, 'f', max(0, decimals), 64) }
-	return f(v) + " ± " + f(half)
+	decimals := max(0, min(9, 1-int(math.Floor(math.Log10(half)))))
+	f := func(x float64) string { return strconv.FormatFloat(x, 'f', decimals, 64) }
+	text := f(v) + " ± " + f(half)
+	if bare && exponent == "" {
+		return text
+	}
+	return "(" + text + ")" + exponent
 }
 
 // power writes an exponent in raised figures, 1 as nothing.
