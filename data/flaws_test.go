@@ -1,6 +1,7 @@
 package data
 
 import (
+	"errors"
 	"fmt"
 	"math"
 	"math/rand/v2"
@@ -244,6 +245,22 @@ func TestNoSegmentLeft(t *testing.T) {
 	want := `log.csv: too few rows on end: of 300 no stretch of 50 is left: missing value in column "u" (7, first on line 41); a fit needs 50 rows on end at the very least, and a few thousand to be good`
 	if got := message(err); got != want {
 		t.Errorf("got  %s\nwant %s", got, want)
+	}
+}
+
+// Limits narrower than the log are named as the cause, not the length of the log.
+func TestLimitsNarrowerThanTheLog(t *testing.T) {
+	g := plainRig()
+	g.Limits.Input = &[2]float64{0.1, 0.2}
+	_, err := ReadLog(strings.NewReader(newPlainLog(300).csv()), "log.csv", g)
+	if got := message(err); !errors.Is(err, ErrTooShort) || !strings.Contains(got, `of 300 the input (column "u") is beyond [limits] input [0.1, 0.2]; correct [limits] input (rig.toml`) {
+		t.Errorf("input: %s", got)
+	}
+	g = plainRig()
+	g.Limits.Output = &[2]float64{5, 6}
+	_, err = ReadLog(strings.NewReader(newPlainLog(300).csv()), "log.csv", g)
+	if got := message(err); !errors.Is(err, ErrTooShort) || !strings.Contains(got, `(column "y") is beyond [limits] output [5, 6]; correct [limits] output (rig.toml`) {
+		t.Errorf("output: %s", got)
 	}
 }
 

@@ -50,7 +50,7 @@ func recognise(head []byte, whole bool) (*layout, error) {
 	}
 	lines := l.headLines(head, whole)
 	if whole && len(bytes.TrimSpace(head)) == 0 {
-		return nil, &ParseError{Err: errors.New("empty")}
+		return nil, &ParseError{Err: errors.New("empty"), Hint: "give the log as the logger wrote it: a header, then one row per sample"}
 	}
 	for number, rest := 1, head; ; number++ {
 		i := bytes.IndexByte(rest, l.lineEnd)

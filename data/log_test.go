@@ -430,7 +430,7 @@ func TestReadLogRefuses(t *testing.T) {
 		many = spoil(many, line, to("0.08,oops,1,0"))
 	}
 	for _, c := range []struct{ name, text, want string }{
-		{"empty", "", "log.csv: empty"},
+		{"empty", "", "log.csv: empty; give the log as the logger wrote it: a header, then one row per sample"},
 		{"comments only", "# a\n\n# b\n", "log.csv: no row of numbers; there are only comments and blank lines"},
 		{"header only", "t,u,y,r\n", "log.csv: line 1: no row of two or more numbers below this line; a log has a header and rows of numbers, separated by commas, semicolons, tabs or blanks"},
 		{"prose", "Dear reader,\nthis is no log.\n", "log.csv: line 1: no row of two or more numbers below this line; a log has a header and rows of numbers, separated by commas, semicolons, tabs or blanks"},

@@ -123,6 +123,7 @@ func TestReadRigDefects(t *testing.T) {
 		{"text as number", `output        = "y"`, `output = 2`, `rig.toml: line 6: log.output is the number 2; write text in double quotes`},
 		{"text without quotes", `output        = "y"`, `output = y`, `rig.toml: line 6, column 10: expected value but found "y" instead; text stands in double quotes`},
 		{"decimal comma", `step              = 0.2`, `step = 0,2`, `rig.toml: line 37, column 9: expected a top-level item to end with a newline, comment, or EOF, but got ',' instead; TOML writes the decimal mark as a point`},
+		{"high order", `order    = 3`, `order = 9`, `rig.toml: line 47: model.order is 9; give a number of poles from 1 to 8: a fit takes no more`},
 		{"broken order", `order    = 3`, `order = 2.5`, `rig.toml: line 47: model.order is the number 2.5; write a whole number`},
 		{"one limit", `input      = [0.0, 4.0]`, `input = 4`, `rig.toml: line 32: limits.input is the number 4; write [lowest, highest]`},
 		{"three limits", `input      = [0.0, 4.0]`, `input = [1, 2, 3]`, `rig.toml: line 32: limits.input is a list of 3 numbers; write [lowest, highest]`},

@@ -215,13 +215,13 @@ func (g *Rig) checkSpec() error {
 	return nil
 }
 
-// maxOrder is far above what "low order" means; beyond it the file has a slip.
-const maxOrder = 20
+// maxOrder is the most poles that a fit takes.
+const maxOrder = 8
 
 func (g *Rig) checkModel() error {
 	m := &g.Model
 	if m.Order != nil && (*m.Order < 1 || *m.Order > maxOrder) {
-		return g.fault("model.order", fmt.Sprintf("give a number of poles, 1 to %d", maxOrder), "model.order is %d", *m.Order)
+		return g.fault("model.order", fmt.Sprintf("give a number of poles from 1 to %d: a fit takes no more", maxOrder), "model.order is %d", *m.Order)
 	}
 	if m.Zeros != nil && (*m.Zeros < 0 || *m.Zeros >= maxOrder) {
 		return g.fault("model.zeros", "give a number of zeros below that of poles", "model.zeros is %d", *m.Zeros)

@@ -119,6 +119,24 @@ func (l *log) tooShort() error {
 	if l.rows < MinSegment {
 		return l.fault(-1, hint, "%w: %d", ErrTooShort, l.rows)
 	}
+	beyond, tripped := 0, 0
+	for _, why := range l.dropped {
+		if why&isBeyond != 0 {
+			beyond++
+		}
+		if why&isTripped != 0 {
+			tripped++
+		}
+	}
+	const text = "%w on end: in %d of %d the %s (column %s) is beyond [limits] %s [%s, %s]"
+	if lim := l.rig.Limits.Input; 2*beyond > l.rows {
+		return l.fault(-1, fmt.Sprintf("correct [limits] input (%s), or log the input after its limits, as the actuator was told it", l.rig.where("limits.input")),
+			text, ErrTooShort, beyond, l.rows, "input", quote(l.column(l.u)), "input", number(lim[0]), number(lim[1]))
+	}
+	if lim := l.rig.Limits.Output; 2*tripped > l.rows {
+		return l.fault(-1, fmt.Sprintf("correct [limits] output (%s), or give a log of a run inside them", l.rig.where("limits.output")),
+			text, ErrTooShort, tripped, l.rows, "output", quote(l.column(l.y)), "output", number(lim[0]), number(lim[1]))
+	}
 	return l.fault(-1, hint, "%w on end: of %d no stretch of %d is left%s", ErrTooShort, l.rows, MinSegment, l.because())
 }
 
