@@ -232,8 +232,12 @@ func methodFigure(m *ident.Model) (f figure, ok bool) {
 	p.Y.Min, p.Y.Max = 0.4, float64(n)+0.6
 	room(&p.X)
 	band := bandColour
+	interval, estimate := "95 % interval of the final estimate", "final estimate"
+	if words.AtZero(*pole) {
+		interval, estimate = "95 % interval of a free pole in place of the integrator", "integrator, held at zero"
+	}
 	return figure{drawn(p, "The rightmost pole as each method of estimation has it"), "The rightmost pole by each method",
-		[]key{{Band: &band, Label: "95 % interval of the final estimate"}, {Stroke: mainLine, Label: "final estimate"}},
+		[]key{{Band: &band, Label: interval}, {Stroke: mainLine, Label: estimate}},
 		"Methods that take different things for granted should agree. Agreement clears the noise model; order, hold and pairing would bias all alike."}, true
 }
 

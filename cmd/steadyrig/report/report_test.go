@@ -154,6 +154,30 @@ func TestReportOfRefusal(t *testing.T) {
 	}
 }
 
+// A structure with integrators is told as chosen, and what was asked of the input noise is the same wherever it stands.
+func TestReportOfIntegrators(t *testing.T) {
+	in := kept(t)
+	in.Rig.Spec.InputNoise = 0 // so the default counts: a twentieth of the range, -14 to 16 deg
+	page := written(t, in)
+	if strings.Contains(page, "integrator") {
+		t.Error("a page of a rig without integrators speaks of them")
+	}
+	row := regexp.MustCompile(`input noise(, standard deviation)?</td>.*`).FindAllString(page, -1)
+	if len(row) != 2 || !strings.Contains(row[0], ">1.5 deg<") || !strings.Contains(row[1], ">1.5 deg<") {
+		t.Errorf("1.5 deg are not asked in all of %q", row)
+	}
+	for i := range in.Model.Poles {
+		in.Model.Poles[i] = ident.Root{Re95: ident.Interval{Lo: -0.03, Hi: 0.82}, ProbabilityUnstable: 0.0003}
+	}
+	in.Model.Gain.DC = nil
+	page = written(t, in)
+	for _, want := range []string{"3 poles at zero: the rig drifts", "at zero (integrator)", "chosen, not measured", "none: the plant integrates", "integrator, held at zero"} {
+		if !strings.Contains(page, want) {
+			t.Errorf("the page does not say %q", want)
+		}
+	}
+}
+
 func TestThinnedKeepsPeaks(t *testing.T) {
 	n := 100000
 	x, y := make([]float64, n), make([]float64, n)

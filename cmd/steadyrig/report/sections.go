@@ -249,6 +249,9 @@ func boundsSection(in Input) section {
 	t := table{Caption: "Bounds beside what the spec asks", Head: []string{"Bound", "No better than", "95 % over plants", "Asked", "In reach", "Source"}, Right: []bool{false, true, false, true}}
 	for _, b := range in.Loops.Bounds {
 		value, interval, ask := words.Bound(b)
+		if interval == "" {
+			interval = "–" // the same for all plants
+		}
 		t.Rows = append(t.Rows, []string{b.Name, value, interval, ask, words.YesNo(b.OK), b.Source})
 		if b.Advice != "" {
 			s.Lead = append(s.Lead, sentence(b.Name+": "+b.Advice))
