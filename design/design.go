@@ -57,6 +57,9 @@ func Design(ctx context.Context, model *ident.Model, rig *data.Rig, opt Options)
 	if model.Verdict == ident.Refused {
 		return l.refuse(&ident.RefusedError{What: "the fit refused this model, so no loops are designed on it", Do: "take a log as the fit's refusal says, and fit again"})
 	}
+	if r := contradicted(model); r != nil {
+		return l.refuse(r)
+	}
 	pool, err := p.plants(tuningPool, stream(opt.Seed, streamTuning, 0))
 	if err != nil {
 		return l.refuse(&ident.RefusedError{What: "the model allows plants that cannot be sampled: " + err.Error(), Do: "take a longer log, so that the model is surer"})

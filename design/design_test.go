@@ -307,3 +307,46 @@ func BenchmarkProof(b *testing.B) {
 		})
 	}
 }
+
+// A promise is conditional on the structure: where the model's own residual tests fail it is weak at most, and says so
+// first; where they fail beyond doubt there is none.
+func TestModelThatItsTestsReject(t *testing.T) {
+	r := testRigs()[1]
+	own := designed(t, r.name)
+	for _, c := range []struct {
+		whiteness, cross, memories float64
+		verdict, first             string
+	}{
+		{0.3, 0.4, 500, Sound, ""},
+		{1e-8, 0.4, 500, Weak, "structure that the log contradicts"},
+		{0.3, 1e-8, 500, Weak, "structure that the log contradicts"},
+		{0.3, 0.4, 12, Weak, "intervals that are optimistic"},
+		{1e-30, 0.4, 500, Refused, ""},
+		{0.3, 0, 500, Refused, ""},
+	} {
+		m := r.model(t)
+		m.Evidence.Residuals = ident.Residuals{Lags: 20, Whiteness: c.whiteness, CrossInput: c.cross}
+		m.Evidence.Memories = c.memories
+		for name, run := range map[string]func() (*Loops, error){
+			"design": func() (*Loops, error) { return Design(t.Context(), m, r.rig(), Options{Seed: 1, Plants: 700}) },
+			"verify": func() (*Loops, error) {
+				return Verify(t.Context(), m, r.rig(), own, Options{Seed: 1, Plants: 700})
+			},
+		} {
+			if name == "design" && c.verdict != Refused && c.memories != 12 {
+				continue // one design is enough
+			}
+			l, err := run()
+			if l == nil || l.Verdict != c.verdict || (err != nil) != (c.verdict == Refused) {
+				t.Errorf("%s, %+v: %v, %v", name, c, l, err)
+				continue
+			}
+			if c.first != "" && !strings.Contains(l.Warnings[0], c.first) {
+				t.Errorf("%s, %+v: first warning %q", name, c, l.Warnings)
+			}
+			if err != nil && !strings.Contains(err.Error(), "contradict it") {
+				t.Errorf("%s, %+v: %v", name, c, err)
+			}
+		}
+	}
+}

@@ -70,6 +70,9 @@ func pose(model *ident.Model, rig *data.Rig) (*problem, error) {
 	if len(model.Plant.Denominator) == 0 {
 		return p, &ident.RefusedError{What: "the model holds no plant: the fit was refused", Do: "take a log as the fit's refusal says, and fit again"}
 	}
+	if text := doubtful(model); text != "" {
+		p.doubts = append(p.doubts, text)
+	}
 	s := rig.Spec
 	p.spec = demands{s.Step, s.Overshoot, s.Settling, s.Band, s.PeakSensitivity, s.InputNoise, s.Kick, s.KickPeak}
 	if p.spec.noise == 0 {
@@ -88,6 +91,45 @@ func pose(model *ident.Model, rig *data.Rig) (*problem, error) {
 		p.warnings = append(p.warnings, "the loops were designed for an input held between samples (zero-order); a band-limited hold adds its own delay")
 	}
 	return p, p.about()
+}
+
+// What the model's own residual tests may say: below residualsFail a promise is weak, below residualsContradict there
+// is none to be had, as the draws differ in parameters only and the structure is wrong.
+const (
+	residualsFail       = 1e-6
+	residualsContradict = 1e-12
+	fewestMemories      = 20 // predictor memories in the log, below which intervals are optimistic
+)
+
+// doubtful says why a promise on the model cannot be more than weak; empty if nothing does.
+func doubtful(m *ident.Model) string {
+	e := &m.Evidence
+	if e.Residuals.Lags == 0 {
+		return "" // no tests were made
+	}
+	if q := math.Min(e.Residuals.Whiteness, e.Residuals.CrossInput); q < residualsFail {
+		return fmt.Sprintf("the promise holds only for plants of a structure that the log contradicts: the residual tests leave it a probability of %.2g", q)
+	}
+	if e.Memories < fewestMemories {
+		return fmt.Sprintf("the promise rests on intervals that are optimistic: the log is only %.0f predictor memories long, %d are the least", e.Memories, fewestMemories)
+	}
+	return ""
+}
+
+// contradicted refuses a model whose structure its log plainly contradicts.
+func contradicted(m *ident.Model) *ident.RefusedError {
+	r := &m.Evidence.Residuals
+	q, what := r.Whiteness, "its prediction errors are not white"
+	if r.CrossInput < q {
+		q, what = r.CrossInput, "past inputs explain its prediction errors"
+	}
+	if r.Lags == 0 || !(q < residualsContradict) {
+		return nil
+	}
+	return &ident.RefusedError{
+		What: fmt.Sprintf("the model's own residual tests contradict it: %s (probability %.2g), so its structure is wrong and plants drawn from it promise nothing", what, q),
+		Do:   "fit again without the hints in [model], or on a longer log",
+	}
 }
 
 // about counts the limits from the operating point.

@@ -58,6 +58,8 @@ func Verify(ctx context.Context, model *ident.Model, rig *data.Rig, loops *Loops
 	switch {
 	case model.Verdict == ident.Refused:
 		return l.refuse(&ident.RefusedError{What: "the fit refused this model, so it cannot clear any loops", Do: "take a log as the fit's refusal says, and fit again"})
+	case contradicted(model) != nil:
+		return l.refuse(contradicted(model))
 	case hidden != nil:
 		return l.refuse(hidden)
 	case !l.Promise.kept():
