@@ -29,7 +29,8 @@ type AuditReport struct {
 	Pairing        Pairing        `json:"pairing"`
 	LoopRate       LoopRate       `json:"loop_rate"`
 	Outside        Outside        `json:"outside"`
-	Law            *LawCheck      `json:"stopgap"` // null where the rig file has no law
+	Law            *LawCheck      `json:"stopgap"`  // null where the rig file has no law
+	Memories       float64        `json:"memories"` // length of the logs in memories of a glance's predictor; 0: unknown
 	Flaws          []Flaw         `json:"flaws"`
 	NextStep       string         `json:"next_step"`
 }
@@ -115,10 +116,16 @@ func Audit(ctx context.Context, exps []*data.Experiment, rig *data.Rig) (*AuditR
 		a.NextStep = err.(*RefusedError).Do
 		return a, err
 	}
+	if err := refuseDeaf(recs); err != nil {
+		a.Verdict, a.NextStep = Refused, err.(*RefusedError).Do
+		a.Sign.Words, a.Pairing.Words = "unknown: the output does not answer to the input", "unknown: the output does not answer to the input"
+		a.LoopRate.Words = fmt.Sprintf("%.4g s a row", period)
+		return a, err
+	}
 	if err := a.glance(ctx, recs, rig, period); err != nil {
 		return a, err
 	}
-	if err := refuseShifted(a.Law); err != nil {
+	if err := refuseShifted(a.Law, rig); err != nil {
 		a.Verdict, a.Pairing = Refused, Pairing{Rows: a.Law.Rows, Words: a.Law.Words}
 		a.NextStep = err.(*RefusedError).Do
 		return a, err
@@ -180,6 +187,7 @@ func (a *AuditReport) glance(ctx context.Context, recs []fit.Record, rig *data.R
 	} else {
 		a.Sign.Words = "more input pushes the output down (negative gain): the inner gain must be negative"
 	}
+	a.Memories = float64(p.Rows()) / memory(decaying(best))
 	a.Pairing.Words = "input and output of a row belong together"
 	var refused *RefusedError
 	if err := c.pairing(ctx, some, ranked, runtime.GOMAXPROCS(0)); err != nil {
@@ -199,7 +207,10 @@ func (a *AuditReport) glance(ctx context.Context, recs []fit.Record, rig *data.R
 			}
 		}
 	}
-	if u := a.LoopRate.UnstablePole; u != nil {
+	if u := a.LoopRate.UnstablePole; u != nil && u.Interval95.Lo <= 0 {
+		a.LoopRate.Words = fmt.Sprintf("%.4g s a row; a slow pole between %.3g and %.3g rad/s, which may be an integrator", period, u.Interval95.Lo, u.Interval95.Hi)
+		a.LoopRate.UnstablePole = nil
+	} else if u != nil {
 		a.LoopRate.Growth = math.Exp(u.Value * period)
 		a.LoopRate.Words = fmt.Sprintf("%.4g s a row; an unstable pole near %.3g rad/s (%.3g to %.3g) grows by %.2g %% a row",
 			period, u.Value, u.Interval95.Lo, u.Interval95.Hi, 100*(a.LoopRate.Growth-1))
@@ -222,6 +233,12 @@ func (a *AuditReport) conclude() error {
 	case a.Law != nil && a.Law.Rows != 0:
 		a.Verdict = Weak
 		a.NextStep = "find out which row the input belongs to: " + a.Law.Words
+	case a.Law != nil && a.Law.Unexplained > 0.9:
+		a.Verdict = Weak
+		a.NextStep = "correct [stopgap] in the rig file, or leave it out: " + a.Law.Words
+	case a.Memories > 0 && a.Memories < soundMemories:
+		a.Verdict = Weak
+		a.NextStep = fmt.Sprintf("log a longer run: this one holds %.0f memories of the predictor, intervals want %d", a.Memories, soundMemories)
 	case a.Outside.Share < faintShare:
 		a.Verdict = Weak
 		a.NextStep = "log a run with a stronger probe: the intervals will be wide"

@@ -30,7 +30,9 @@ const (
 	slowLog       = 0.3  // unstable pole times sample period from which a log is too slow
 	tie           = 2    // BIC units within which two structures are not told apart
 	chooseRows    = 50000
-	residualLags  = 25
+	// rowsPerParameter is what a fit has to have at the least.
+	rowsPerParameter = 10
+	residualLags     = 25
 )
 
 // Fit finds the plant in the logs of one rig: structure, parameters and their
@@ -52,7 +54,11 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 	if out.Quiet {
 		return m.refuse(refuseQuiet(out))
 	}
-	if err := refuseShifted(checkLaw(exps, rig)); err != nil {
+	if err := refuseShifted(checkLaw(exps, rig), rig); err != nil {
+		return m.refuse(err)
+	}
+
+	if err := refuseDeaf(recs); err != nil {
 		return m.refuse(err)
 	}
 
@@ -83,7 +89,16 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 		return m.refuse(err)
 	}
 
+	if ranked, err = settleIntegrators(sp, ranked); err != nil {
+		return m, err
+	}
 	best := ranked[0]
+	if need := rowsPerParameter * best.fit.Free(); p.Rows() < need {
+		return m.refuse(&RefusedError{
+			What: fmt.Sprintf("%d rows are too few for a plant of %s: %d are needed at the least", p.Rows(), best.structure, need),
+			Do:   "log a longer run",
+		})
+	}
 	f, err := p.Fit(best.fit, finalTol, finalSteps)
 	if err != nil {
 		return m, fmt.Errorf("fitting %s: %w", best.structure, err)
@@ -104,6 +119,9 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 		return m, err
 	}
 	m.judge(ranked, out, f)
+	if err := m.finite(); err != nil {
+		return newModel(exps, rig).refuse(&RefusedError{What: "the log does not determine the plant: " + err.Error(), Do: "log a longer run or a stronger probe"})
+	}
 	return m, nil
 }
 
@@ -361,6 +379,73 @@ func estimate(v, sd float64) *Estimate {
 	return &Estimate{Value: v, SD: sd, Interval95: Interval{v - z95*sd, v + z95*sd}}
 }
 
+// integratorSpan is how far a free pole may lie from zero, over its interval, in
+// units of the mean speed of the other poles, for an exact integrator to stand
+// in for it.
+const integratorSpan = 0.2
+
+// settleIntegrators moves structures with exact integrators behind the best
+// one without where the log is too poor to tell an integrator from a pole that
+// matters: loops designed for exact integrators would rest on nothing.
+func settleIntegrators(p *fit.Predictor, ranked []*candidate) ([]*candidate, error) {
+	best := ranked[0]
+	if best.integrators == 0 {
+		return ranked, nil
+	}
+	at := slices.IndexFunc(ranked, func(c *candidate) bool { return c.integrators == 0 })
+	if at < 0 {
+		return ranked, nil
+	}
+	free := ranked[at]
+	same := slices.IndexFunc(ranked, func(c *candidate) bool {
+		s := best.structure
+		s.integrators = 0
+		return c.structure == s
+	})
+	if same >= 0 {
+		free = ranked[same]
+	}
+	f, err := p.Fit(free.fit, compareTol, compareStep)
+	if err != nil {
+		return nil, fmt.Errorf("fitting %s: %w", free.structure, err)
+	}
+	if p.Covariance(f) == nil {
+		var m Model
+		m.plant(f)
+		m.derive()
+		slow := bySpeed(m.Poles)
+		mean, others := 1.0, slow[min(best.integrators, len(slow)):]
+		for _, r := range others {
+			mean *= math.Hypot(r.Re, r.Im)
+		}
+		if len(others) > 0 {
+			mean = math.Pow(mean, 1/float64(len(others)))
+		} else {
+			mean = fastest / f.Period
+		}
+		reach := 0.0
+		for _, r := range slow[:min(best.integrators, len(slow))] {
+			reach = math.Max(reach, math.Max(math.Max(-r.Re95.Lo, r.Re95.Hi), r.Im95.Hi))
+		}
+		if reach < integratorSpan*mean {
+			return ranked, nil
+		}
+	}
+	rest := slices.DeleteFunc(slices.Clone(ranked), func(c *candidate) bool { return c == free })
+	return append([]*candidate{free}, rest...), nil
+}
+
+// fastest is the speed, per sample, that poles are set against where a plant
+// has integrators only.
+const fastest = 0.2
+
+// bySpeed sorts roots by modulus.
+func bySpeed(roots []Root) []Root {
+	out := slices.Clone(roots)
+	slices.SortStableFunc(out, func(a, b Root) int { return cmp.Compare(math.Hypot(a.Re, a.Im), math.Hypot(b.Re, b.Im)) })
+	return out
+}
+
 // loosen gives integrators the intervals of free poles. That a pole is exactly
 // zero was chosen, not measured: what the log says about it is the interval of
 // the same structure with the pole free, joined with zero, and the probability
@@ -393,9 +478,7 @@ func (m *Model) loosen(p *fit.Predictor, f *fit.Prediction, ranked []*candidate)
 	other.derive()
 	weight := 1 / (1 + math.Exp((free.BIC()-f.BIC())/2))
 	// Integrators are the slowest poles of the free structure.
-	slow := slices.Clone(other.Poles)
-	slices.SortStableFunc(slow, func(a, b Root) int { return cmp.Compare(math.Hypot(a.Re, a.Im), math.Hypot(b.Re, b.Im)) })
-	slow = slow[:f.Integrators]
+	slow := bySpeed(other.Poles)[:f.Integrators]
 	slices.SortStableFunc(slow, func(a, b Root) int { return cmp.Or(cmp.Compare(a.Re, b.Re), cmp.Compare(a.Im, b.Im)) })
 	k := 0
 	for i := range m.Poles {
@@ -451,9 +534,7 @@ func outsideSignals(exps []*data.Experiment, recs []fit.Record) [][]float64 {
 			}
 		}
 	}
-	switch len(recs) {
-	case n:
-	default:
+	if len(recs) != n {
 		return nil
 	}
 	if len(dither) == n {
@@ -564,13 +645,20 @@ func inContinuousTime(z complex128, period float64) (complex128, bool) {
 // without a deviation of its own is given twice that of the final one.
 const agreementShare = 0.1
 
-// agreement compares the unstable poles of a method with the final ones.
+// agreement compares the poles of a method with the final ones that matter: the
+// unstable ones and integrators, or else the rightmost.
 func agreement(found [][2]float64, poles []Root, sd float64) (bool, string) {
-	agrees, note := true, ""
+	var matter []Root
 	for _, p := range poles {
-		if p.ProbabilityUnstable < 0.5 || p.Im < 0 {
-			continue
+		if p.Im >= 0 && (p.ProbabilityUnstable >= 0.5 || p.Re == 0) {
+			matter = append(matter, p)
 		}
+	}
+	if len(matter) == 0 {
+		matter = append(matter, slices.MaxFunc(poles, func(a, b Root) int { return cmp.Or(cmp.Compare(a.Re, b.Re), cmp.Compare(a.Im, b.Im)) }))
+	}
+	agrees, note := true, ""
+	for _, p := range matter {
 		at := complex(p.Re, p.Im)
 		near := math.Inf(1)
 		for _, q := range found {
@@ -578,17 +666,16 @@ func agreement(found [][2]float64, poles []Root, sd float64) (bool, string) {
 		}
 		own := math.Hypot(p.ReSD, p.ImSD)
 		other := sd
-		if other == 0 {
+		if !(other > 0) {
 			other = 2 * own
 		}
-		allowed := agreementShare*cmplx.Abs(at) + 4*math.Hypot(own, other)
-		if near > allowed {
+		if near > agreementShare*cmplx.Abs(at)+4*math.Hypot(own, other) {
 			agrees = false
 		}
 		if note != "" {
 			note += ", "
 		}
-		note += fmt.Sprintf("unstable pole off by %.2g rad/s", near)
+		note += fmt.Sprintf("pole at %.3g off by %.2g rad/s", real(at), near)
 		if sd > 0 {
 			note += fmt.Sprintf(", %.1f deviations", near/math.Hypot(own, sd))
 		}
@@ -609,7 +696,18 @@ func (m *Model) tests(p *fit.Predictor, recs []fit.Record, f *fit.Prediction) er
 		return nil
 	}
 	fitted := min(f.Poles+f.Colour, lags-1)
-	_, m.Evidence.Residuals.Whiteness = fit.LjungBox(e, lags, fitted)
+	// A constant taken out of a short record leaves its errors correlated:
+	// only the longer ones are tested where there are several.
+	m.Evidence.Residuals.Whiteness = 1
+	whole := e
+	if len(e) > 1 {
+		whole = slices.DeleteFunc(slices.Clone(e), func(x []float64) bool { return len(x) < 20*lags })
+	}
+	if len(whole) > 0 {
+		_, m.Evidence.Residuals.Whiteness = fit.LjungBox(whole, lags, fitted)
+	} else {
+		m.Evidence.Residuals.Lags = 0 // not tested
+	}
 	pairs := make([]fit.Record, len(e))
 	for i, u := range p.Inputs() {
 		pairs[i] = fit.Record{U: u, Y: e[i]}
@@ -643,12 +741,20 @@ func memory(zeros []complex128) float64 {
 	return math.Max(1, -1/math.Log(slow))
 }
 
-// explained refits the structure on the first two thirds of each record and
-// returns 1 - var(e)/var(y) on the rest.
+// explained refits the structure on the first two thirds of the records, or of
+// each where there are few, and returns 1 - var(e)/var(y) on the rest.
 func explained(p *fit.Predictor, recs []fit.Record, f *fit.Prediction) float64 {
 	var first, rest []fit.Record
-	for _, r := range recs {
+	for i, r := range recs {
 		cut := 2 * len(r.Y) / 3
+		if len(recs) > 5 {
+			if i < 2*len(recs)/3 {
+				first = append(first, r)
+			} else {
+				rest = append(rest, r)
+			}
+			continue
+		}
 		first = append(first, fit.Record{U: r.U[:cut], Y: r.Y[:cut]})
 		rest = append(rest, fit.Record{U: r.U[cut:], Y: r.Y[cut:]})
 	}
@@ -695,6 +801,9 @@ func (m *Model) judge(ranked []*candidate, out Outside, f *fit.Prediction) {
 	if m.Evidence.Memories < soundMemories {
 		weak("the log is only %.0f predictor memories long, intervals are optimistic below %d: log a longer run", m.Evidence.Memories, soundMemories)
 	}
+	if m.Evidence.Residuals.Lags == 0 {
+		weak("the log is in pieces too short to test what the model leaves over")
+	}
 	if p := m.Evidence.Residuals.Whiteness; p < doubtful {
 		weak("the prediction errors are not white (probability %.2g): the structure misses something", p)
 	}
@@ -726,8 +835,8 @@ func (m *Model) judge(ranked []*candidate, out Outside, f *fit.Prediction) {
 		note("no unstable pole was found")
 	}
 	for _, method := range m.Evidence.Methods {
-		if !method.Agrees {
-			weak("the method %q does not find the unstable pole where the final estimate has it: %s", method.Name, method.Note)
+		if !method.Agrees && len(method.Poles) > 0 {
+			weak("the method %q does not find the poles that matter where the final estimate has them: %s", method.Name, method.Note)
 		}
 	}
 	if f.FreeDelay && math.Abs(f.Delay/f.Period-1) < 0.1 {

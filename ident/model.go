@@ -6,7 +6,9 @@ import (
 	"fmt"
 	"io"
 	"math"
+	"math/cmplx"
 	"math/rand/v2"
+	"slices"
 
 	"gonum.org/v1/gonum/mat"
 
@@ -188,7 +190,7 @@ type Method struct {
 // Residuals are the tests on what the model leaves unexplained. The
 // probabilities are those of a statistic as large by chance.
 type Residuals struct {
-	Lags       int     `json:"lags"`
+	Lags       int     `json:"lags"` // 0: whiteness could not be tested
 	Whiteness  float64 `json:"whiteness_probability"`
 	CrossInput float64 `json:"input_probability"`
 }
@@ -358,6 +360,12 @@ func (m *Model) validate() error {
 	if m.Noise.SD < 0 {
 		return fmt.Errorf("noise sd is %v, want 0 or more", m.Noise.SD)
 	}
+	if m.Plant.Delay < 0 {
+		return fmt.Errorf("plant delay is %v s, want 0 or more", m.Plant.Delay)
+	}
+	if !slices.ContainsFunc(num, func(v float64) bool { return v != 0 }) {
+		return fmt.Errorf("plant numerator is zero")
+	}
 	if len(m.Noise.Denominator) == 0 || len(m.Noise.Numerator) == 0 || m.Noise.Denominator[0] != 1 || m.Noise.Numerator[0] != 1 {
 		return fmt.Errorf("noise shape is not monic")
 	}
@@ -368,6 +376,21 @@ func (m *Model) validate() error {
 		if len(row) != len(m.Plant.Parameters) {
 			return fmt.Errorf("covariance row %d has %d columns for %d parameters", i+1, len(row), len(m.Plant.Parameters))
 		}
+	}
+	for i, row := range m.Plant.Covariance {
+		for j, v := range row {
+			other := m.Plant.Covariance[j][i]
+			limit := math.Sqrt(math.Max(0, m.Plant.Covariance[i][i]) * math.Max(0, m.Plant.Covariance[j][j]))
+			if math.IsNaN(v) || math.IsInf(v, 0) || row[i] < 0 || math.Abs(v-other) > 1e-6*limit || math.Abs(v) > limit*(1+1e-6) {
+				return fmt.Errorf("covariance of %s and %s is %v, which no covariance can be", m.Plant.Parameters[i], m.Plant.Parameters[j], v)
+			}
+		}
+	}
+	if err := m.checkRoots("poles", m.Poles, m.Plant.Denominator); err != nil {
+		return err
+	}
+	if err := m.checkRoots("zeros", m.Zeros, num); err != nil {
+		return err
 	}
 	for _, name := range m.Plant.Parameters {
 		var index int
@@ -386,6 +409,57 @@ func (m *Model) validate() error {
 		}
 	}
 	return nil
+}
+
+// checkRoots holds listed roots against their polynomial, in descending powers.
+func (m *Model) checkRoots(name string, list []Root, p []float64) error {
+	want := reversed(p).Roots()
+	if len(list) != len(want) {
+		return fmt.Errorf("%d %s are listed, the plant has %d", len(list), name, len(want))
+	}
+	var size float64
+	for _, r := range want {
+		size = math.Max(size, cmplx.Abs(r))
+	}
+	for _, r := range list {
+		at := complex(r.Re, r.Im)
+		near := math.Inf(1)
+		for _, w := range want {
+			near = math.Min(near, cmplx.Abs(w-at))
+		}
+		// Rounding moves the roots of a double pair by its square root.
+		if !(near <= 1e-4*size) {
+			return fmt.Errorf("%s list %.6g%+.6gi rad/s, where the plant has none", name, r.Re, r.Im)
+		}
+	}
+	return nil
+}
+
+// finite reports the first number of a fitted model that is none.
+func (m *Model) finite() error {
+	check := func(what string, v ...float64) error {
+		for _, x := range v {
+			if math.IsNaN(x) || math.IsInf(x, 0) {
+				return fmt.Errorf("%s came out as %v", what, x)
+			}
+		}
+		return nil
+	}
+	for _, list := range [][]Root{m.Poles, m.Zeros} {
+		for _, r := range list {
+			if err := check("a pole or zero", r.Re, r.Im, r.ReSD, r.ImSD, r.ProbabilityUnstable); err != nil {
+				return err
+			}
+		}
+	}
+	for _, row := range m.Plant.Covariance {
+		if err := check("the covariance", row...); err != nil {
+			return err
+		}
+	}
+	e := m.Evidence
+	return check("the evidence", m.OperatingPoint.Input, m.OperatingPoint.Output, m.Noise.SD, m.Plant.Delay,
+		e.ExplainedShare, e.OutsideShare, e.Memories, e.Residuals.Whiteness, e.Residuals.CrossInput)
 }
 
 func reversed(p []float64) lti.Poly {

@@ -121,6 +121,31 @@ func refuseQuiet(o Outside) error {
 	}
 }
 
+// deafLags is how many past inputs are asked whether they move the output,
+// deaf the probability by chance above which they do not.
+const (
+	deafLags = 20
+	deaf     = 1e-3
+)
+
+// refuseDeaf refuses logs in which past inputs say nothing about the output
+// beyond what its own past does.
+func refuseDeaf(recs []fit.Record) error {
+	with, _ := fit.FitARX(recs, fit.ARXOptions{NA: deafLags, NB: deafLags, Delay: 1})
+	without, _ := fit.FitARX(recs, fit.ARXOptions{NA: deafLags, First: deafLags})
+	if with == nil || without == nil || with.Rows <= 3*deafLags {
+		return nil
+	}
+	_, p := fit.FTest(without.RSS, with.RSS, deafLags, with.Rows-2*deafLags-len(recs))
+	if !(p > deaf) {
+		return nil
+	}
+	return &RefusedError{
+		What: fmt.Sprintf("the output does not answer to the input: past inputs explain no more of it than chance (probability %.2g)", p),
+		Do:   "check that the two columns belong together, or log a run with a stronger probe",
+	}
+}
+
 // LawCheck compares the stopgap law of the rig file with the log.
 type LawCheck struct {
 	Unexplained float64 `json:"unexplained"` // share of the input's variance that the law leaves
@@ -137,40 +162,9 @@ func checkLaw(exps []*data.Experiment, rig *data.Rig) *LawCheck {
 	if law == nil {
 		return nil
 	}
+	// The dither may have been logged in the input's row or in its own.
 	score := func(shift int, sign float64) float64 {
-		var rss, all float64
-		for _, e := range exps {
-			for _, s := range e.Segments {
-				n := max(len(law.Numerator), len(law.Denominator))
-				var w, v []float64
-				for k := n + 1; k < len(s.Y)-1; k++ {
-					var left, right float64
-					for i, c := range law.Denominator {
-						u := s.U[k+shift-i]
-						if s.D != nil {
-							u -= s.D[k+shift-i]
-						}
-						left += c * u
-					}
-					for i, c := range law.Numerator {
-						y := s.Y[k-i]
-						if s.R != nil {
-							y -= s.R[k-i]
-						}
-						right += sign * c * y
-					}
-					w, v = append(w, left+right), append(v, left)
-				}
-				if len(w) > 0 {
-					rss += about(w)
-					all += about(v)
-				}
-			}
-		}
-		if all == 0 {
-			return math.Inf(1)
-		}
-		return rss / all
+		return math.Min(lawResidual(exps, law, shift, shift, sign), lawResidual(exps, law, shift, 0, sign))
 	}
 	best := LawCheck{Unexplained: math.Inf(1)}
 	for _, sign := range []float64{1, -1} {
@@ -199,13 +193,19 @@ func checkLaw(exps []*data.Experiment, rig *data.Rig) *LawCheck {
 
 // refuseShifted refuses a log in which the law of the rig file ran, but in
 // another row; nil where it does not say so clearly.
-func refuseShifted(c *LawCheck) error {
+func refuseShifted(c *LawCheck, rig *data.Rig) error {
 	if c == nil || c.Rows == 0 || c.SignWrong || c.Unexplained > clearLaw {
 		return nil
 	}
-	do := `set input_row = "before" in [log], or shift the input column`
-	if c.Rows < 0 {
-		do = `set input_row = "after" in [log], or shift the input column`
+	before := rig.Log.InputRow == data.InputBefore
+	do := "shift the input column up by a row"
+	switch {
+	case c.Rows > 0 && !before:
+		do = `set input_row = "before" in [log]`
+	case c.Rows < 0 && before:
+		do = `set input_row = "after" in [log]`
+	case c.Rows < 0:
+		do = "shift the input column down by a row"
 	}
 	return &RefusedError{What: "the columns are paired one row off: " + c.Words, Do: do}
 }
@@ -213,3 +213,41 @@ func refuseShifted(c *LawCheck) error {
 // clearLaw is the share of the input that a law may leave and still be the one
 // that ran.
 const clearLaw = 0.1
+
+// lawResidual is the share of the input's variance that the law leaves with the
+// input moved by shift rows and the dither by its own.
+func lawResidual(exps []*data.Experiment, law *data.Stopgap, shift, ditherShift int, sign float64) float64 {
+	var rss, all float64
+	for _, e := range exps {
+		for _, s := range e.Segments {
+			n := max(len(law.Numerator), len(law.Denominator))
+			var w, v []float64
+			for k := n + 1; k < len(s.Y)-1; k++ {
+				var left, right float64
+				for i, c := range law.Denominator {
+					u := s.U[k+shift-i]
+					if s.D != nil {
+						u -= s.D[k+ditherShift-i]
+					}
+					left += c * u
+				}
+				for i, c := range law.Numerator {
+					y := s.Y[k-i]
+					if s.R != nil {
+						y -= s.R[k-i]
+					}
+					right += sign * c * y
+				}
+				w, v = append(w, left+right), append(v, left)
+			}
+			if len(w) > 0 {
+				rss += about(w)
+				all += about(v)
+			}
+		}
+	}
+	if all == 0 {
+		return math.Inf(1)
+	}
+	return rss / all
+}
