@@ -1,0 +1,225 @@
+package fit
+
+import (
+	"math"
+
+	"gonum.org/v1/gonum/floats"
+	"gonum.org/v1/gonum/mat"
+
+	"steadyrig/fit/lti"
+)
+
+// chunk is how many rows of the Jacobian are held at a time.
+const chunk = 1024
+
+// information returns J'J and J'e over the shared parameters at x, whose
+// errors are in the workspaces, with each record's own unknowns eliminated.
+//
+// A column of J is the derivative of the equation error filtered by 1/C from
+// rest at the first equation. Lagged copies of one filtered signal differ from
+// that by a free response of 1/C only, which is taken off.
+func (s *search) information(x point, q shifted) (*mat.SymDense, []float64) {
+	p := s.shape.size()
+	h := mat.NewSymDense(p, nil)
+	grad := make([]float64, p)
+	cols := s.columns(q)
+	for i := range s.work {
+		w := &s.work[i]
+		t0 := s.pad + s.Lead
+		s.filtered(w, q, t0)
+		nc := len(q.c) - 1
+		all := p + nc + 1
+		jj := make([]float64, all*all)
+		je := make([]float64, all)
+		buf := make([]float64, p*chunk)
+		past := make([]float64, p*nc)
+		for k := range p {
+			for i := 1; i <= nc; i++ {
+				var v [1]float64
+				cols[k].at(v[:], w, t0-i)
+				past[k*nc+i-1] = v[0]
+			}
+		}
+		rows := len(w.e) - t0
+		for from := 0; from < rows; from += chunk {
+			m := min(chunk, rows-from)
+			moving := min(max(w.settled-from, 0), m)
+			col := func(k int) []float64 {
+				switch {
+				case k < p:
+					return buf[k*chunk : k*chunk+m]
+				case k == p:
+					return w.step[from : from+m]
+				}
+				return w.free[k-p-1][from : from+m]
+			}
+			for k := range p {
+				out := col(k)
+				cols[k].at(out, w, t0+from)
+				for i := range nc {
+					floats.AddScaled(out[:moving], -past[k*nc+i], w.free[i][from:from+moving])
+				}
+			}
+			e := w.e[t0+from : t0+from+m]
+			live := all
+			if moving == 0 {
+				live = p + 1
+			}
+			for k := range live {
+				ck := col(k)
+				je[k] += floats.Dot(ck, e)
+				for l := k; l < live; l++ {
+					jj[k*all+l] += floats.Dot(ck, col(l))
+				}
+			}
+		}
+		// Eliminate the constant and the start-up errors, whose prior counts
+		// as one more equation each. The constant's column is -S.
+		q := nc + 1
+		hl := mat.NewSymDense(q, nil)
+		cross := mat.NewDense(q, p, nil)
+		sign := func(k int) float64 {
+			if k == p {
+				return -1
+			}
+			return 1
+		}
+		for a := range q {
+			for b := a; b < q; b++ {
+				v := jj[(p+a)*all+p+b] * sign(p+a) * sign(p+b)
+				if a == b && a > 0 {
+					v++
+				}
+				hl.SetSym(a, b, v)
+			}
+			for k := range p {
+				cross.Set(a, k, jj[k*all+p+a]*sign(p+a))
+			}
+		}
+		var chol mat.Cholesky
+		var sol mat.Dense
+		ok := chol.Factorize(hl)
+		if ok {
+			ok = chol.SolveTo(&sol, cross) == nil
+		}
+		for k := range p {
+			grad[k] += je[k]
+			for l := k; l < p; l++ {
+				v := jj[k*all+l]
+				if ok {
+					for a := range q {
+						v -= cross.At(a, k) * sol.At(a, l)
+					}
+				}
+				h.SetSym(k, l, h.At(k, l)+v)
+			}
+		}
+	}
+	s.addDeterminant(x, q, h, grad)
+	return h, grad
+}
+
+// addDeterminant adds S/(2N) times the slope of log det(I + G'G), which
+// depends on C alone, to the gradient: the objective's own, but for its
+// positive factor. Differences over a thousandth of a deviation are good
+// enough for a term that vanishes as the log grows.
+func (s *search) addDeterminant(x point, q shifted, h *mat.SymDense, grad []float64) {
+	nc := len(q.c) - 1
+	first := len(grad) - nc
+	scale := s.rss / (2 * float64(s.rows))
+	for j := 1; j <= nc; j++ {
+		k := first + j - 1
+		step := 1e-3 * math.Sqrt(s.rss/float64(s.rows)/h.At(k, k))
+		if !(step > 0) || math.IsInf(step, 0) {
+			continue
+		}
+		c := append([]float64(nil), x.c...)
+		c[j] += step
+		z := lti.Shift(nil, c)
+		var up float64
+		for i := range s.recs {
+			s.probe.run(z, len(s.recs[i].Y)-s.Lead)
+			up += logDet(s.probe.information(), 1)
+		}
+		if d := scale * (up - s.logDet) / step; bounded(d) {
+			grad[k] += d
+		}
+	}
+}
+
+// column is one derivative of the equation error, as lags of the filtered
+// signals: Σ y[i] yf[k-i] + Σ u[i] uf[k-whole-i] + Σ v[i] vf[k-i] + Σ e[i] ef[k-i].
+type column struct {
+	y, u, v, e []float64
+	whole      int
+}
+
+func (c *column) at(dst []float64, w *workspace, from int) {
+	for k := range dst {
+		dst[k] = 0
+	}
+	for _, part := range []struct {
+		x, coef []float64
+		from    int
+	}{{w.yf, c.y, from}, {w.uf, c.u, from - c.whole}, {w.vf, c.v, from}, {w.ef, c.e, from}} {
+		if len(part.coef) > 0 {
+			fir(dst, part.x, part.coef, part.from, 1, true)
+		}
+	}
+}
+
+// columns lists the derivatives in the order b_0 … b_m, a_1 … a_n, delay,
+// D, C.
+func (s *search) columns(q shifted) []column {
+	var cols []column
+	params := s.shape.Zeros + 1 + s.shape.Poles
+	for k := range params + 1 {
+		if k == params && !s.shape.FreeDelay {
+			break
+		}
+		c := column{whole: q.whole, u: inputPowers(nil, q.delta.DB0[k], q.delta.DB1[k])}
+		floats.Scale(-1, c.u)
+		if k > s.shape.Zeros && k < params {
+			c.y = lti.Shift(nil, q.delta.DA[k])
+		}
+		cols = append(cols, c)
+	}
+	unit := func(n, j int, f float64) []float64 {
+		coef := make([]float64, n+1)
+		coef[j] = f
+		return lti.Shift(nil, coef)
+	}
+	nd, nc := len(q.d)-1, len(q.c)-1
+	for j := 1; j <= nd; j++ {
+		cols = append(cols, column{v: unit(nd, j, 1)})
+	}
+	for j := 1; j <= nc; j++ {
+		cols = append(cols, column{e: unit(nc, j, -1)})
+	}
+	return cols
+}
+
+// filtered fills the filtered signals of a record from its errors.
+func (s *search) filtered(w *workspace, q shifted, t0 int) {
+	if len(q.d) > 1 {
+		fir(w.dy[s.pad:], w.y, q.d, s.pad, 1, false)
+		fir(w.du[s.pad:], w.u, q.d, s.pad, 1, false)
+		// The first rows lack their past: the signals start there.
+		for k := s.pad; k < s.pad+len(q.d)-1; k++ {
+			w.dy[k], w.du[k] = 0, 0
+		}
+		first := s.pad + len(q.a) + len(q.b) + max(q.whole, 0)
+		fir(w.av[first:], w.y, q.a, first, 1, false)
+		fir(w.av[first:], w.u, q.b, first-q.whole, -1, true)
+		clear(w.vf[:first])
+		divide(w.vf, w.av, q.c, first)
+		divide(w.yf, w.dy, q.c, s.pad)
+		divide(w.uf, w.du, q.c, s.pad)
+	} else {
+		divide(w.yf, w.y, q.c, s.pad)
+		divide(w.uf, w.u, q.c, s.pad)
+	}
+	start := t0 - (len(q.c) - 1)
+	clear(w.ef[:start])
+	divide(w.ef, w.e, q.c, start)
+}

@@ -1,0 +1,321 @@
+package fit
+
+import (
+	"errors"
+	"math"
+	"sync"
+
+	"gonum.org/v1/gonum/floats"
+
+	"steadyrig/fit/lti"
+)
+
+// Predictor holds records ready for many fits of different shapes on the same
+// equations, so that their criteria compare.
+type Predictor struct {
+	Period float64 // s
+	Lead   int     // rows of each record that serve as past only
+	// DelayRange bounds a free delay, s.
+	DelayRange [2]float64
+
+	recs   []Record // means removed, scaled to unit deviation
+	padded []Record // the same behind pad zeros
+	meanU  []float64
+	meanY  []float64
+	su, sy float64
+	rows   int
+	pad    int
+	spare  sync.Pool // of []workspace, for searches to come
+}
+
+// maxFitPoles and maxColour bound the shapes that a Predictor takes.
+const (
+	maxFitPoles = 8
+	maxColour   = 2
+)
+
+const (
+	badShape = "fit: shape needs 1 to 8 poles, fewer zeros than poles, at most 2 colour poles, no more integrators than poles"
+	badDelay = "fit: delay lies before the output or past the lead of the predictor"
+)
+
+// NewPredictor prepares records sampled every period seconds for fits with
+// delays up to maxDelay seconds. Records too short to have any equation are
+// left out; an error says if none is left.
+func NewPredictor(recs []Record, period, maxDelay float64) (*Predictor, error) {
+	checkRecords(recs)
+	p := &Predictor{Period: period, DelayRange: [2]float64{-period, maxDelay}}
+	p.Lead = maxFitPoles + 2 + maxColour + int(math.Ceil(maxDelay/period))
+	p.pad = p.Lead + maxFitPoles + maxColour + 4
+	var uu, yy, n float64
+	for _, r := range recs {
+		if len(r.Y) < 2*p.Lead+8 {
+			continue
+		}
+		mu, my := floats.Sum(r.U)/float64(len(r.U)), floats.Sum(r.Y)/float64(len(r.Y))
+		c := Record{U: make([]float64, len(r.U)), Y: make([]float64, len(r.Y))}
+		for i := range r.U {
+			c.U[i], c.Y[i] = r.U[i]-mu, r.Y[i]-my
+			uu += c.U[i] * c.U[i]
+			yy += c.Y[i] * c.Y[i]
+		}
+		n += float64(len(r.U))
+		p.recs = append(p.recs, c)
+		p.meanU, p.meanY = append(p.meanU, mu), append(p.meanY, my)
+		p.rows += len(r.Y) - p.Lead
+	}
+	if len(p.recs) == 0 {
+		return nil, errors.New("fit: no record is long enough")
+	}
+	p.su, p.sy = math.Sqrt(uu/n), math.Sqrt(yy/n)
+	if p.su == 0 || p.sy == 0 {
+		return nil, errors.New("fit: input or output does not move")
+	}
+	for _, r := range p.recs {
+		floats.Scale(1/p.su, r.U)
+		floats.Scale(1/p.sy, r.Y)
+		zeros := make([]float64, p.pad)
+		p.padded = append(p.padded, Record{U: append(zeros[:p.pad:p.pad], r.U...), Y: append(zeros[:p.pad:p.pad], r.Y...)})
+	}
+	return p, nil
+}
+
+// Rows returns the number of equations of every fit.
+func (p *Predictor) Rows() int { return p.rows }
+
+// point is a model in scaled units: time in 1/w0, signals by their deviation.
+type point struct {
+	num, den lti.Poly
+	tau      float64   // scaled time
+	d, c     []float64 // powers of δ, leading 1
+}
+
+func (x point) clone() point {
+	return point{
+		num: append(lti.Poly(nil), x.num...), den: append(lti.Poly(nil), x.den...), tau: x.tau,
+		d: append([]float64(nil), x.d...), c: append([]float64(nil), x.c...),
+	}
+}
+
+// search is one fit: shape, scale of time, and workspaces.
+type search struct {
+	*Predictor
+	shape Shape
+	w0, h float64 // rad/s; scaled period
+	work  []workspace
+
+	rss, logDet float64   // parts of the objective at the last point looked at
+	probe       transient // for differences
+}
+
+// workspace holds the signals of one record; each starts with pad zeros.
+type workspace struct {
+	y, u       []float64 // padded data
+	e          []float64 // prediction errors
+	yf, uf     []float64 // D y / C, D u / C
+	vf, ef     []float64 // (A y - B u) / C, e / C
+	dy, du, av []float64
+	transient
+	logDet float64   // of I + G'G
+	local  []float64 // κ, ε_1 … ε_nC
+}
+
+func (p *Predictor) newSearch(shape Shape, w0 float64) *search {
+	if shape.Poles < 1 || shape.Poles > maxFitPoles || shape.Zeros < 0 || shape.Zeros >= shape.Poles || shape.Colour < 0 || shape.Colour > maxColour || shape.Integrators < 0 || shape.Integrators > shape.Poles {
+		panic(badShape)
+	}
+	s := &search{Predictor: p, shape: shape, w0: w0, h: p.Period * w0}
+	if w, ok := p.spare.Get().([]workspace); ok {
+		s.work = w
+		return s
+	}
+	s.work = make([]workspace, len(p.recs))
+	for i, r := range p.recs {
+		n := p.pad + len(r.Y)
+		buf := make([]float64, 8*n)
+		w := &s.work[i]
+		for _, x := range []*[]float64{&w.e, &w.yf, &w.uf, &w.vf, &w.ef, &w.dy, &w.du, &w.av} {
+			*x, buf = buf[:n:n], buf[n:]
+		}
+		w.y, w.u = p.padded[i].Y, p.padded[i].U
+	}
+	return s
+}
+
+// done hands the workspaces back.
+func (s *search) done() { s.spare.Put(s.work) }
+
+// shifted holds a model's polynomials in powers of q^-1.
+type shifted struct {
+	whole      int
+	a, b, d, c []float64
+	delta      lti.Delta
+}
+
+// sampled returns the polynomials of x, and false where they are not finite or
+// the delay is out of range.
+func (s *search) sampled(x point) (shifted, bool) {
+	delay := x.tau
+	if !bounded(x.num...) || !bounded(x.den...) || !bounded(x.c...) || !bounded(x.d...) {
+		return shifted{}, false
+	}
+	if !(delay >= s.DelayRange[0]*s.w0-1e-9*s.h && delay <= s.DelayRange[1]*s.w0+1e-9*s.h) {
+		return shifted{}, false
+	}
+	q := shifted{delta: lti.SampleDelta(x.num, x.den, delay, s.h)}
+	q.whole = q.delta.Whole
+	q.a = lti.Shift(nil, q.delta.A)
+	q.b = inputPowers(nil, q.delta.B0, q.delta.B1)
+	q.d, q.c = lti.Shift(nil, x.d), lti.Shift(nil, x.c)
+	return q, bounded(q.a...) && bounded(q.b...)
+}
+
+// inputPowers returns B in powers of q^-1; its first entry is zero.
+func inputPowers(dst, b0, b1 []float64) []float64 {
+	n := len(b0)
+	if dst == nil {
+		dst = make([]float64, n+2)
+	}
+	for i := range dst {
+		dst[i] = 0
+	}
+	var tmp [maxFitPoles]float64
+	for i, v := range lti.Shift(tmp[:n], b0) {
+		dst[i+1] += v
+	}
+	for i, v := range lti.Shift(tmp[:n], b1) {
+		dst[i+2] += v
+	}
+	return dst
+}
+
+// errorsAt fills the prediction errors of x into the workspaces, with the
+// constants and start-up errors that make their sum of squares least, and
+// returns the objective: with N rows the sum of squares S times
+// det(I + G'G)^(1/N), N times the log of which is -2 log likelihood but for a constant.
+//
+// The first deg C errors before a record's first equation are unknowns with
+// the prior of all other errors; without them the transient of a slow noise
+// zero swamps the sum. Integrated out they leave their sum of squares in S and
+// the determinant (Box & Jenkins, Time Series Analysis, 1976, app. A7.4), which
+// holds noise zeros off the unit circle: without it a short log moves them onto
+// it and takes its own slow drift for a start-up error.
+func (s *search) errorsAt(x point) (float64, shifted, bool) {
+	q, ok := s.sampled(x)
+	if !ok {
+		return math.Inf(1), q, false
+	}
+	ad := lti.Poly(q.a).Mul(q.d)
+	bd := lti.Poly(q.b).Mul(q.d)
+	s.rss, s.logDet = 0, 0
+	for i := range s.work {
+		w := &s.work[i]
+		t0 := s.pad + s.Lead
+		fir(w.e[t0:], w.y, ad, t0, 1, false)
+		fir(w.e[t0:], w.u, bd, t0-q.whole, -1, true)
+		for k := s.pad; k < t0; k++ {
+			w.e[k] = 0
+		}
+		divide(w.e, w.e, q.c, t0)
+		w.run(q.c, len(w.e)-t0)
+		rss, ok := w.solveLocal(t0)
+		if !ok || !(rss < math.Inf(1)) {
+			return math.Inf(1), q, false
+		}
+		s.rss += rss
+		s.logDet += w.logDet
+	}
+	return s.rss * math.Exp(s.logDet/float64(s.rows)), q, true
+}
+
+// fir adds f Σ coef[i] x[k-i], k = from, from+1, …, to dst, or sets dst to it.
+// Where k runs past the end of x (a negative delay) the last value stands.
+func fir(dst, x, coef []float64, from int, f float64, add bool) {
+	if !add {
+		for k := range dst {
+			dst[k] = 0
+		}
+	}
+	for i, c := range coef {
+		if c == 0 {
+			continue
+		}
+		c *= f
+		src := x[max(0, from-i):]
+		out := dst
+		if from-i < 0 {
+			out = dst[i-from:]
+		}
+		m := min(len(src), len(out))
+		floats.AddScaled(out[:m], c, src[:m])
+		for k := m; k < len(out); k++ {
+			out[k] += c * x[len(x)-1]
+		}
+	}
+}
+
+// divide writes src/C into dst from row from on, taking the rows before as
+// they stand. dst and src may be the same.
+func divide(dst, src, c []float64, from int) {
+	switch len(c) - 1 {
+	case 0:
+		copy(dst[from:], src[from:])
+	case 1:
+		c1, p1 := c[1], dst[from-1]
+		for k := from; k < len(src); k++ {
+			p1 = src[k] - c1*p1
+			dst[k] = p1
+		}
+	case 2:
+		c1, c2, p1, p2 := c[1], c[2], dst[from-1], dst[from-2]
+		for k := from; k < len(src); k++ {
+			v := (src[k] - c2*p2) - c1*p1
+			p2, p1 = p1, v
+			dst[k] = v
+		}
+	case 3:
+		c1, c2, c3, p1, p2, p3 := c[1], c[2], c[3], dst[from-1], dst[from-2], dst[from-3]
+		for k := from; k < len(src); k++ {
+			v := (src[k] - c3*p3 - c2*p2) - c1*p1
+			p3, p2, p1 = p2, p1, v
+			dst[k] = v
+		}
+	default:
+		n := len(c) - 1
+		for k := from; k < len(src); k++ {
+			v := src[k]
+			past := dst[k-n : k]
+			for i := n; i >= 1; i-- {
+				v -= c[i] * past[n-i]
+			}
+			dst[k] = v
+		}
+	}
+}
+
+// Rest returns the input, in the log's units, at which the plant of m rests
+// with the output at y, by the constant of the given record. It is not finite
+// for a plant with a zero at the origin.
+func (p *Predictor) Rest(m *Prediction, record int, y float64) float64 {
+	d := lti.SampleDelta(m.Num, m.Den, m.Delay, m.Period)
+	n := d.Poles
+	colour := sum(m.D)
+	// At rest only the last power of δ counts.
+	a, b := d.A[n], d.B0[n-1]+d.B1[n-1]
+	return p.meanU[record] + (a*(y-p.meanY[record])-m.Const[record]/colour)/b
+}
+
+// Means returns the mean output of each record.
+func (p *Predictor) Means() []float64 { return append([]float64(nil), p.meanY...) }
+
+// Inputs returns the input of each row of Errors, for tests of what is left.
+func (p *Predictor) Inputs() [][]float64 {
+	var out [][]float64
+	for i, r := range p.recs {
+		u := append([]float64(nil), r.U[p.Lead:]...)
+		floats.Scale(p.su, u)
+		floats.AddConst(p.meanU[i], u)
+		out = append(out, u)
+	}
+	return out
+}

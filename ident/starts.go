@@ -1,0 +1,284 @@
+package ident
+
+import (
+	"cmp"
+	"math"
+	"math/cmplx"
+	"slices"
+
+	"steadyrig/fit"
+	"steadyrig/fit/lti"
+)
+
+// fit finds the best fit of one structure in rounds: all starts as they are,
+// the best few after some steps, the best two to the end.
+func (c *chooser) fit(s structure, near *fit.Prediction) *candidate {
+	cand := &candidate{structure: s, bic: math.Inf(1)}
+	starts := c.starts(s)
+	if near != nil {
+		starts = append(starts, c.moved(near, s)...)
+	}
+	round := func(list []*fit.Prediction, keep, steps int) []*fit.Prediction {
+		var out []*fit.Prediction
+		for _, m := range list {
+			if m == nil {
+				continue
+			}
+			if steps > 0 && m.Converged {
+				out = append(out, m)
+			} else if f, err := c.p.Fit(m, compareTol, steps); err == nil {
+				out = append(out, f)
+			}
+		}
+		slices.SortStableFunc(out, func(a, b *fit.Prediction) int { return cmp.Compare(a.Objective(), b.Objective()) })
+		return out[:min(keep, len(out))]
+	}
+	list := round(starts, glanceStarts, 0)
+	list = round(list, 2, glanceSteps)
+	if len(list) == 2 && list[1].Objective()-list[0].Objective() < sameOptimum*list[0].Objective() {
+		list = list[:1]
+	}
+	if list = round(list, 1, compareStep); len(list) > 0 {
+		cand.fit, cand.bic = list[0], c.criterion(list[0])
+	}
+	return cand
+}
+
+// colourStart is where an added colour pole starts, per sample.
+var colourStart = []complex128{0.985, 0.9}
+
+// starts makes full models of the seeds of the structure's order.
+func (c *chooser) starts(s structure) []*fit.Prediction {
+	var out []*fit.Prediction
+	colour := colourStart[:s.colour]
+	for source, seeds := range c.seeds {
+		if s.poles > len(seeds) {
+			continue
+		}
+		seed := seeds[s.poles-1]
+		ratios := []float64{-1, fit.NoiseRatios[source%len(fit.NoiseRatios)]}
+		for _, ratio := range ratios {
+			sd := seed
+			if ratio > 0 {
+				sd.Noise = nil
+			}
+			if !s.delay {
+				out = append(out, c.p.Start(s.shape(), sd, c.scope.base, ratio, colour))
+				continue
+			}
+			out = append(out, c.bestDelay(s, sd, ratio, colour)...)
+		}
+	}
+	return out
+}
+
+// bestDelay starts at every half sample of the range and keeps the best two,
+// which are not neighbours on that grid.
+func (c *chooser) bestDelay(s structure, sd fit.Seed, ratio float64, colour []complex128) []*fit.Prediction {
+	var all []*fit.Prediction
+	h := c.p.Period
+	for d := c.scope.delay[0] + 0.25*h; d < c.scope.delay[1]; d += 0.5 * h {
+		if m := c.p.Start(s.shape(), sd, d, ratio, colour); m != nil {
+			all = append(all, m)
+		}
+	}
+	slices.SortStableFunc(all, func(a, b *fit.Prediction) int { return cmp.Compare(a.Objective(), b.Objective()) })
+	var best []*fit.Prediction
+	for _, m := range all {
+		if len(best) < 2 && (len(best) == 0 || math.Abs(m.Delay-best[0].Delay) > 0.75*h) {
+			best = append(best, m)
+		}
+	}
+	return best
+}
+
+// moved makes starts for a structure from a neighbour's fit: poles and zeros
+// are added far away or dropped from there, colour is added slow.
+func (c *chooser) moved(m *fit.Prediction, s structure) []*fit.Prediction {
+	h := c.p.Period
+	start := copyOf(m)
+	start.Shape = s.shape()
+	start.Delay = math.Min(c.scope.delay[1], math.Max(c.scope.delay[0], start.Delay))
+	if !s.delay {
+		start.Delay = c.scope.base
+	}
+	for start.Den.Degree() > s.poles {
+		dropPole(start, h)
+	}
+	for len(start.Num)-1 > s.zeros {
+		dropZero(start)
+	}
+	list := []*fit.Prediction{start}
+	for start.Den.Degree() < s.poles {
+		var grown []*fit.Prediction
+		for _, p := range []float64{-0.5 / h, -0.1 / h} {
+			for _, b := range list {
+				g := copyOf(b)
+				addPole(g, p, h)
+				grown = append(grown, g)
+			}
+		}
+		list, start = grown, grown[0]
+	}
+	for _, b := range list {
+		for len(b.Num)-1 < s.zeros {
+			// A zero too far away to matter: the numerator keeps its values
+			// at low frequency.
+			b.Num = append(b.Num, b.Num[len(b.Num)-1]*h/20)
+		}
+	}
+	for len(list[0].D)-1 < s.colour {
+		var grown []*fit.Prediction
+		for _, d := range []float64{0.995, 0.9} {
+			for _, b := range list {
+				g := copyOf(b)
+				g.D = []float64(lti.Poly(g.D).Mul(lti.Poly{1, -d}))
+				g.C = []float64(lti.Poly(g.C).Mul(lti.Poly{1, -d * 0.9}))
+				grown = append(grown, g)
+			}
+		}
+		list = grown
+	}
+	for len(list[0].D)-1 > s.colour {
+		for _, b := range list {
+			dropColour(b)
+		}
+	}
+	if s.delay && !m.FreeDelay {
+		var grown []*fit.Prediction
+		for _, d := range []float64{0.25, 0.75, 1.5} {
+			for _, b := range list {
+				g := copyOf(b)
+				g.Delay = math.Min(c.scope.delay[1], b.Delay+d*h)
+				grown = append(grown, g)
+			}
+		}
+		list = grown
+	}
+	return list
+}
+
+func copyOf(m *fit.Prediction) *fit.Prediction {
+	k := *m
+	k.Num, k.Den = append(lti.Poly(nil), m.Num...), append(lti.Poly(nil), m.Den...)
+	k.D, k.C = append([]float64(nil), m.D...), append([]float64(nil), m.C...)
+	k.Cov, k.Const = nil, nil
+	return &k
+}
+
+// addPole multiplies the plant by 1/(1 - s/p) and leaves the noise as it is.
+func addPole(m *fit.Prediction, p, h float64) {
+	m.Den = m.Den.Mul(lti.Poly{-p, 1})
+	m.Num = m.Num.Scale(-p)
+	m.C = []float64(lti.Poly(m.C).Mul(lti.Poly{1, -math.Exp(p * h)}))
+}
+
+// dropPole takes out the fastest real pole, or the fastest pair but for its
+// real part, and the noise zero next to it.
+func dropPole(m *fit.Prediction, h float64) {
+	poles := m.Den.Roots()
+	fast := slices.MaxFunc(poles, func(a, b complex128) int { return cmp.Compare(weight(a), weight(b)) })
+	var rest []complex128
+	gone := false
+	for _, p := range poles {
+		switch {
+		case !gone && p == fast:
+			gone = true
+		case imag(fast) != 0 && p == cmplx.Conj(fast):
+			rest = append(rest, complex(real(p), 0))
+		default:
+			rest = append(rest, p)
+		}
+	}
+	size := cmplx.Abs(fast)
+	if size > 0 {
+		m.Num = m.Num.Scale(1 / size)
+		if imag(fast) != 0 && real(fast) != 0 {
+			m.Num = m.Num.Scale(math.Abs(real(fast)) / size)
+		}
+	}
+	m.Den = lti.FromRoots(rest)
+	z := cmplx.Exp(fast * complex(h, 0))
+	m.C = withoutNearest(m.C, z)
+}
+
+// weight orders poles by speed, real ones before pairs of the same speed.
+func weight(p complex128) float64 {
+	if imag(p) != 0 {
+		return cmplx.Abs(p) * 0.999
+	}
+	return cmplx.Abs(p)
+}
+
+// dropZero takes out the highest power of the numerator, which keeps the values
+// at low frequency.
+func dropZero(m *fit.Prediction) {
+	m.Num = m.Num[:len(m.Num)-1]
+	if m.Num[len(m.Num)-1] == 0 {
+		m.Num[len(m.Num)-1] = 1e-9
+	}
+}
+
+func dropColour(m *fit.Prediction) {
+	roots := zRoots(m.D)
+	slices.SortFunc(roots, func(a, b complex128) int { return cmp.Compare(cmplx.Abs(a), cmplx.Abs(b)) })
+	last := roots[len(roots)-1]
+	roots = roots[:len(roots)-1]
+	if imag(last) != 0 {
+		for i := range roots {
+			roots[i] = complex(real(roots[i]), 0)
+		}
+	}
+	m.D = fromZRoots(roots)
+	m.C = withoutNearest(m.C, last)
+}
+
+// withoutNearest drops the root nearest to z, in the z-plane, of a polynomial
+// in powers of z^-1.
+func withoutNearest(p []float64, z complex128) []float64 {
+	roots := zRoots(p)
+	if len(roots) == 0 {
+		return p
+	}
+	i := slices.IndexFunc(roots, func(r complex128) bool {
+		return cmplx.Abs(r-z) == slices.MinFunc(distances(roots, z), cmp.Compare)
+	})
+	near := roots[i]
+	roots = slices.Delete(roots, i, i+1)
+	if imag(near) != 0 {
+		for j, r := range roots {
+			if r == cmplx.Conj(near) {
+				roots[j] = complex(real(r), 0)
+				break
+			}
+		}
+	}
+	return fromZRoots(roots)
+}
+
+func distances(roots []complex128, z complex128) []float64 {
+	d := make([]float64, len(roots))
+	for i, r := range roots {
+		d[i] = cmplx.Abs(r - z)
+	}
+	return d
+}
+
+// zRoots returns the roots in the z-plane of a monic polynomial in powers of
+// z^-1, from its powers of δ, where roots near one are well apart.
+func zRoots(p []float64) []complex128 {
+	c := lti.Unshift(p)
+	asc := make(lti.Poly, len(c))
+	for i, v := range c {
+		asc[len(c)-1-i] = v
+	}
+	roots := asc.Roots()
+	for i := range roots {
+		roots[i]++
+	}
+	return roots
+}
+
+func fromZRoots(roots []complex128) []float64 {
+	return reversed(lti.FromRoots(roots))
+}
