@@ -28,6 +28,8 @@ const (
 	BoundReachDown = "reach below the operating point"
 	BoundDeadTime  = "settling: dead time"
 	BoundTrip      = "step inside the trip limits"
+
+	stepMode = "mode of the step" // not listed: what a step takes of the reach
 )
 
 // boundDraws is the number of plants over which a bound's interval is taken.
@@ -103,7 +105,7 @@ func (p *problem) limitsOf(pl *plant) plantLimits {
 		lo, hi := math.Min(0, p.input[0]+taken), math.Max(0, p.input[1]-taken)
 		from, to := Reach(s, residue, lo, hi, tau)
 		out[BoundReachDown], out[BoundReachUp] = -from, to
-		out["mode of the step"] = math.Abs(residue * out[BoundStepInput] / s)
+		out[stepMode] = math.Abs(residue * out[BoundStepInput] / s)
 	}
 	return out
 }
@@ -139,7 +141,7 @@ func (p *problem) bounds(ctx context.Context, draws []lti.TF) []Bound {
 	}
 	units := p.rig.Units
 	var out []Bound
-	add := func(name, limit, unit string, asked *float64, source, advice string) {
+	add := func(name, limit, unit string, asked *float64, source, key string, nearest float64, other string) {
 		v, ok := nominal[name]
 		if !ok || math.IsNaN(v) || math.IsInf(v, 0) {
 			return
@@ -152,7 +154,7 @@ func (p *problem) bounds(ctx context.Context, draws []lti.TF) []Bound {
 				b.OK = *asked <= b.unfavourable()
 			}
 			if !b.OK {
-				b.Advice = advice
+				b.key, b.nearest, b.other = key, nearest, other
 			}
 		}
 		out = append(out, b)
@@ -165,34 +167,72 @@ func (p *problem) bounds(ctx context.Context, draws []lti.TF) []Bound {
 		}
 		return nominal[name]
 	}
-	nearest := func(key, name string, v float64) string {
-		return fmt.Sprintf("the nearest spec within reach is %s = %s", key, roundUp(v*1.02))
+	least := func(name, unit string, asked *float64, source, key, other string) {
+		add(name, "least", unit, asked, source, key, worst(name)*1.02, other)
 	}
-	add(BoundSampled, "least", "", &s.peakS, "Nevanlinna-Pick on the sampled plant with its delay; one pole: |z|^d, Astrom (2000)",
-		nearest("peak_sensitivity", BoundSampled, worst(BoundSampled))+"; or "+faster)
-	add(BoundDelay, "least", "", &s.peakS, "e^(p tau), Astrom (2000), Eur. J. Control 6",
-		nearest("peak_sensitivity", BoundDelay, worst(BoundDelay))+"; or "+faster)
-	add(BoundZero, "least", "", &s.peakS, "(z+p)/|z-p|, Freudenberg & Looze (1985), IEEE Trans. AC 30",
-		nearest("peak_sensitivity", BoundZero, worst(BoundZero))+"; or move the sensor or the actuator, which moves the zero")
-	add(BoundBandwidth, "least", "", &s.peakS, "Bode's integral up to the Nyquist frequency, Sung & Hara (1988), Stein (2003)",
-		nearest("peak_sensitivity", BoundBandwidth, worst(BoundBandwidth))+"; or shorten the sample period")
-	add(BoundNoise, "least", units.Input, &s.noise, "least H2 norm of K S, Havre & Skogestad (2003)",
-		nearest("input_noise", BoundNoise, worst(BoundNoise))+"; or a quieter sensor or a shorter delay")
-	add(BoundEffort, "least", ratioUnit(units.Input, units.Output), nil, "1/|G| at the pole, pole mirrored, Havre & Skogestad (2003)", "")
+	least(BoundSampled, "", &s.peakS, "Nevanlinna-Pick on the sampled plant with its delay; one pole: |z|^d, Astrom (2000)", keyPeakS, faster)
+	least(BoundDelay, "", &s.peakS, "e^(p tau), Astrom (2000), Eur. J. Control 6", keyPeakS, faster)
+	least(BoundZero, "", &s.peakS, "(z+p)/|z-p|, Freudenberg & Looze (1985), IEEE Trans. AC 30", keyPeakS, "move the sensor or the actuator, which moves the zero")
+	least(BoundBandwidth, "", &s.peakS, "Bode's integral up to the Nyquist frequency, Sung & Hara (1988), Stein (2003)", keyPeakS, "shorten the sample period")
+	least(BoundNoise, units.Input, &s.noise, "least H2 norm of K S, Havre & Skogestad (2003)", "input_noise", "a quieter sensor or a shorter delay")
+	least(BoundEffort, ratioUnit(units.Input, units.Output), nil, "1/|G| at the pole, pole mirrored, Havre & Skogestad (2003)", "", "")
 	p.addAuthority(&out, nominal, interval)
-	add(BoundDeadTime, "least", "s", &s.settling, "nothing moves before the delay and one sample have passed",
-		nearest("settling", BoundDeadTime, worst(BoundDeadTime))+"; or "+faster)
-	modeAsked := worst("mode of the step")
+	least(BoundDeadTime, "s", &s.settling, "nothing moves before the delay and one sample have passed", "settling", faster)
+	modeAsked := worst(stepMode)
 	for _, name := range []string{BoundReachUp, BoundReachDown} {
 		unfavourable := nominal[name]
 		if iv := interval(name); iv != nil {
 			unfavourable = iv[0]
 		}
-		advice := fmt.Sprintf("the nearest spec within reach is step = %s; or more actuator, or a shorter delay",
-			roundDown(0.9*s.step*unfavourable/math.Max(modeAsked, 1e-300)))
-		add(name, "most", units.Output, &modeAsked, "b u/p e^(-p tau) less three deviations of the input noise, Hu & Lin (2001), Stein (2003)", advice)
+		add(name, "most", units.Output, &modeAsked, "b u/p e^(-p tau) less three deviations of the input noise, Hu & Lin (2001), Stein (2003)",
+			"step", 0.9*s.step*unfavourable/math.Max(modeAsked, 1e-300), "more actuator, or a shorter delay")
 	}
+	advise(out)
 	return out
+}
+
+const keyPeakS = "peak_sensitivity"
+
+// advise writes what is within reach into the bounds that are broken: one value per key of the spec, which keeps all
+// of its bounds.
+func advise(bounds []Bound) {
+	strictest := map[string]float64{}
+	for _, b := range bounds {
+		if b.OK {
+			continue
+		}
+		v, ok := strictest[b.key]
+		if !ok || b.stricter(v) {
+			strictest[b.key] = b.nearest
+		}
+	}
+	for i := range bounds {
+		if b := &bounds[i]; !b.OK {
+			b.nearest = strictest[b.key]
+			b.Advice = b.within() + "; or " + b.other
+		}
+	}
+}
+
+// stricter reports whether the bound's nearest value asks less than v does.
+func (b *Bound) stricter(v float64) bool {
+	if b.Limit == "least" {
+		return b.nearest > v
+	}
+	return b.nearest < v
+}
+
+// within says which value of the spec's key is in reach.
+func (b *Bound) within() string {
+	switch {
+	case b.hopeless() && b.key == keyPeakS:
+		return fmt.Sprintf("no peak sensitivity below %g is in reach", hopelessPeak)
+	case b.hopeless():
+		return fmt.Sprintf("no %s is in reach", b.key)
+	case b.Limit == "least":
+		return fmt.Sprintf("the nearest spec within reach is %s = %s", b.key, roundUp(b.nearest))
+	}
+	return fmt.Sprintf("the nearest spec within reach is %s = %s", b.key, roundDown(b.nearest))
 }
 
 // addAuthority adds the bounds in units of the input: the limits leave so much on the lesser side, the step and
@@ -207,7 +247,7 @@ func (p *problem) addAuthority(out *[]Bound, nominal plantLimits, interval func(
 	b := Bound{Name: BoundStepInput, Value: side, Limit: "most", Unit: p.rig.Units.Input, Asked: &need, OK: need < side,
 		Source: "the step's share of the input's range on its lesser side, step/G(0)"}
 	if !b.OK {
-		b.Advice = fmt.Sprintf("the nearest spec within reach is step = %s; or more actuator", roundDown(0.9*s.step*side/need))
+		b.key, b.nearest, b.other = "step", 0.9*s.step*side/need, "more actuator"
 	}
 	*out = append(*out, b)
 	if s.kick > 0 {
@@ -215,7 +255,7 @@ func (p *problem) addAuthority(out *[]Bound, nominal plantLimits, interval func(
 		b := Bound{Name: BoundKickInput, Value: side, Limit: "most", Unit: p.rig.Units.Input, Asked: &kick, OK: kick < side,
 			Source: "the actuator has to cancel the kick for good"}
 		if !b.OK {
-			b.Advice = fmt.Sprintf("the nearest spec within reach is kick = %s; or more actuator", roundDown(0.9*side))
+			b.key, b.nearest, b.other = "kick", 0.9*side, "more actuator"
 		}
 		*out = append(*out, b)
 	}
@@ -225,7 +265,7 @@ func (p *problem) addAuthority(out *[]Bound, nominal plantLimits, interval func(
 		b := Bound{Name: BoundTrip, Value: room, Limit: "most", Unit: p.rig.Units.Output, Asked: &most, OK: most < room,
 			Source: "step and overshoot in both directions against [limits] output"}
 		if !b.OK {
-			b.Advice = fmt.Sprintf("the nearest spec within reach is step = %s; or wider trip limits", roundDown(0.95*room/(1+s.overshoot)))
+			b.key, b.nearest, b.other = "step", 0.95*room/(1+s.overshoot), "wider trip limits"
 		}
 		*out = append(*out, b)
 	}
@@ -242,30 +282,62 @@ func (b *Bound) unfavourable() float64 {
 	return math.Min(b.Value, b.Interval[0])
 }
 
-// outOfReach returns the refusal for bounds that the spec breaks, nil if there is none.
+// hopeless reports whether no value of the spec's key is worth naming.
+func (b *Bound) hopeless() bool {
+	return b.key == keyPeakS && b.nearest > hopelessPeak || !(b.nearest > 0) || math.IsInf(b.nearest, 0)
+}
+
+// excess is how far the spec is beyond the bound, as a factor.
+func (b *Bound) excess() float64 {
+	switch {
+	case b.hopeless():
+		return math.Inf(1)
+	case b.Limit == "least":
+		return b.unfavourable() / *b.Asked
+	}
+	return *b.Asked / b.unfavourable()
+}
+
+// outOfReach returns the refusal for bounds that the spec breaks, nil if there is none: the worst of them, and what is
+// within reach for each key of the spec.
 func outOfReach(bounds []Bound) *ident.RefusedError {
-	var what, do []string
-	for _, b := range bounds {
+	var worst *Bound
+	var do []string
+	broken := 0
+	for i := range bounds {
+		b := &bounds[i]
 		if b.OK {
 			continue
 		}
-		least := "at least"
-		if b.Limit == "most" {
-			least = "at most"
+		broken++
+		if worst == nil || b.excess() > worst.excess() {
+			worst = b
 		}
-		text := fmt.Sprintf("%s: asked %.4g, physics allows %s %.4g%s", b.Name, *b.Asked, least, b.unfavourable(), withUnit(b.Unit))
-		if b.Interval != nil {
-			text += fmt.Sprintf(" (nominal %.4g)", b.Value)
-		}
-		what = append(what, text)
-		if !slices.Contains(do, b.Advice) {
-			do = append(do, b.Advice)
+		if text := b.within(); !slices.Contains(do, text) {
+			do = append(do, text)
 		}
 	}
-	if len(what) == 0 {
+	if worst == nil {
 		return nil
 	}
-	return &ident.RefusedError{What: "the spec is out of reach: " + strings.Join(what, "; "), Do: strings.Join(do, "; ")}
+	text := "the spec is out of reach: " + worst.Name + ": "
+	if worst.hopeless() {
+		// The other keys hardly matter before this one can be kept.
+		text, do = text+worst.within(), nil
+	} else {
+		text += fmt.Sprintf("asked %.4g, physics allows at %s %.4g%s", *worst.Asked, worst.Limit, worst.unfavourable(), withUnit(worst.Unit))
+		if worst.Interval != nil {
+			text += fmt.Sprintf(" (nominal %.4g)", worst.Value)
+		}
+	}
+	if broken > 1 {
+		text += fmt.Sprintf("; %d more in the file", broken-1)
+	}
+	advice := worst.other
+	if len(do) > 0 {
+		advice = strings.Join(do, "; ") + "; or " + advice
+	}
+	return &ident.RefusedError{What: text, Do: advice}
 }
 
 func withUnit(u string) string {

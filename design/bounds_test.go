@@ -1,9 +1,9 @@
 package design
 
 import (
-	"fmt"
 	"math"
 	"math/cmplx"
+	"strconv"
 	"strings"
 	"testing"
 
@@ -280,7 +280,7 @@ func TestOutOfReach(t *testing.T) {
 		t.Fatal("accepted")
 	}
 	msg := refusal.Error()
-	for _, want := range []string{BoundSampled, BoundDelay, "asked 2.2", "nearest spec within reach is peak_sensitivity = ", "delay"} {
+	for _, want := range []string{BoundSampled, "asked 2.2", "more in the file", "nearest spec within reach is peak_sensitivity = ", "delay"} {
 		if !strings.Contains(msg, want) {
 			t.Errorf("%q lacks %q", msg, want)
 		}
@@ -293,18 +293,32 @@ func TestOutOfReach(t *testing.T) {
 			t.Errorf("sampling cannot help: %v", b.Value)
 		}
 	}
-	// The largest number named satisfies all bounds.
-	var nearest float64
-	for _, part := range strings.Split(msg, "peak_sensitivity = ")[1:] {
-		var v float64
-		if _, err := fmt.Sscan(strings.TrimRight(strings.Fields(part)[0], ";"), &v); err != nil {
-			t.Fatal(err)
+	// One number is named, the same in every bound, and it satisfies all.
+	_, after, _ := strings.Cut(msg, "peak_sensitivity = ")
+	text := strings.TrimRight(strings.Fields(after)[0], ";")
+	if n := strings.Count(msg, "peak_sensitivity = "); n != 1 {
+		t.Errorf("%d values of one key: %s", n, msg)
+	}
+	for _, b := range bounds {
+		if !b.OK && !strings.Contains(b.Advice, "peak_sensitivity = "+text+";") {
+			t.Errorf("%s: %q, want %s", b.Name, b.Advice, text)
 		}
-		nearest = math.Max(nearest, v)
+	}
+	nearest, err := strconv.ParseFloat(text, 64)
+	if err != nil {
+		t.Fatal(err)
 	}
 	rig.Spec.PeakSensitivity = nearest
 	if bounds, err = Bounds(m, rig); err != nil || outOfReach(bounds) != nil {
 		t.Errorf("the nearest spec, peak_sensitivity = %v, is not within reach: %v %v", nearest, err, outOfReach(bounds))
+	}
+	// Far beyond any spec a figure says nothing.
+	rig.Loop.ComputeDelay = 900
+	if bounds, err = Bounds(m, rig); err != nil {
+		t.Fatal(err)
+	}
+	if msg = outOfReach(bounds).Error(); !strings.Contains(msg, "no peak sensitivity below 10 is in reach") || strings.Contains(msg, "e+") {
+		t.Error(msg)
 	}
 }
 

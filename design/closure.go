@@ -32,7 +32,7 @@ func (p *problem) expectedSD(g *gridLoop) SignalPair {
 func (p *problem) firstClosure(l *Loops) {
 	law := l.LTI()
 	f := &FirstClosure{ExpectedSD: p.expectedSD(p.lawGrid(law))}
-	in := *l.InputLimits
+	in := p.inputTrip(law, f.ExpectedSD.Input)
 	f.Trip.Input = &in
 	out := [2]float64{math.Inf(-1), math.Inf(1)}
 	if p.output != nil {
@@ -64,6 +64,33 @@ func (p *problem) firstClosure(l *Loops) {
 		"The promise covers the plants that the data allow, at this operating point and sample period, and no others.",
 	}
 	l.FirstClosure = f
+}
+
+// A trip on the input: as far from the operating point as noise and half as much again as the step take it, and
+// inside the limits, as an input that is held within them never passes them.
+const (
+	tripDeviations = 6.0
+	tripStep       = 1.5
+	tripInside     = 0.02 // of the input's range
+)
+
+// inputTrip returns absolute levels of the input at which a first closure trips; sd is its expected deviation.
+func (p *problem) inputTrip(law *lti.Law, sd float64) [2]float64 {
+	v := p.newProver(law)
+	moves := 0.0
+	for _, step := range []float64{p.spec.step, -p.spec.step} {
+		if v.run(p.model.TF(), p.steps(p.model.TF()), step, false, 0) != nil {
+			continue
+		}
+		for _, u := range v.trace.U {
+			moves = math.Max(moves, math.Abs(u-law.U0))
+		}
+	}
+	half, inset := tripDeviations*sd+tripStep*moves, tripInside*(p.limits[1]-p.limits[0])
+	return [2]float64{
+		math.Max(law.U0-half, math.Min(p.limits[0]+inset, law.U0+p.input[0]/2)),
+		math.Min(law.U0+half, math.Max(p.limits[1]-inset, law.U0+p.input[1]/2)),
+	}
 }
 
 func unitOf(u string) string {
@@ -108,14 +135,18 @@ func (p *problem) conclude(l *Loops) {
 			}
 		}
 	}
-	if over, at := p.betweenSamples(l.LTI()); over > p.spec.overshoot && over > at+0.01 {
+	held := l.Margins == nil || l.Margins.PlantInput.Stable
+	if !held {
+		warn("the loops do not hold the nominal plant: it is lost from any disturbance, and margins and figures of the closed loop mean nothing")
+	}
+	if over, at := p.betweenSamples(l.LTI()); held && over > p.spec.overshoot && over > at+0.01 {
 		weak = true
 		warn("between the samples the nominal output overshoots the step by %.3g of it, at the samples by %.3g: shorten the sample period", over, at)
 	}
 	if q := l.Promise; q != nil && len(q.UnstablePoles) > 1 {
 		warn("the drawn plants differ in their number of unstable poles: each was judged with its own")
 	}
-	if m := l.Margins; m != nil && m.InnerAlone != nil && m.InnerAlone.PeakSensitivity > 3 {
+	if m := l.Margins; m != nil && m.InnerAlone != nil && m.InnerAlone.Stable && m.InnerAlone.PeakSensitivity > 3 {
 		warn("the inner loop alone has a peak sensitivity of %.3g: little is left when the outer loop is clamped or off", m.InnerAlone.PeakSensitivity)
 	}
 	if weak && l.Verdict == Sound {

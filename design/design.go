@@ -282,6 +282,18 @@ func (p *problem) assemble(l *Loops, s pair, tuning []plant) error {
 // kept reports whether the proof carries the promise.
 func (q *Promise) kept() bool { return q.LowerBound >= PromisedShare && q.Stable == q.Plants }
 
+// nominalMisses reports whether the nominal plant misses the spec.
+func (q *Promise) nominalMisses(s *demands) bool {
+	o := outcome{overshoot: q.Overshoot.Nominal, settling: q.Settling.Nominal, peakS: q.PeakS.Nominal, noise: q.InputNoise.Nominal}
+	if q.KickPeak != nil {
+		o.kickPk = q.KickPeak.Nominal
+	}
+	return slices.ContainsFunc(q.Misses, func(m MissReason) bool {
+		got, asked := o.figure(m.What, s)
+		return asked > 0 && got > asked
+	})
+}
+
 // broken returns the refusal of a promise that failed, nil if it is kept.
 func (q *Promise) broken(s *demands) *ident.RefusedError {
 	if q.kept() {
@@ -296,6 +308,9 @@ func (q *Promise) broken(s *demands) *ident.RefusedError {
 		parts = append(parts, text)
 	}
 	do := "ask for less where it misses, or take a longer log, so that fewer plants are allowed"
+	if q.nominalMisses(s) {
+		do = "ask for less where it misses, or change the loops: the nominal plant misses it too, so a longer log will not help"
+	}
 	if q.Stable < q.Plants {
 		do = "do not close these loops: take a longer log, so that fewer plants are allowed, or shorten the delay"
 	}

@@ -85,6 +85,10 @@ type Bound struct {
 	OK       bool        `json:"reachable"` // judged at the unfavourable end of the interval
 	Source   string      `json:"source"`
 	Advice   string      `json:"advice,omitempty"` // nearest spec within reach and what to change, when not reachable
+
+	key     string  // of the spec, that asks too much
+	nearest float64 // value of key at which this bound is kept; 0: none is
+	other   string  // what else helps
 }
 
 // LoopMargins are the margins of the sampled loop at three places.
@@ -134,6 +138,7 @@ type Promise struct {
 	LargestStep   float64      `json:"largest_step"`        // output units
 	Recoverable   float64      `json:"recoverable_offset"`  // output units
 	UnstablePoles []PoleCount  `json:"unstable_poles"`
+	Conditions    string       `json:"conditions"` // what the promise's runs hold and leave out, one sentence
 	Misses        []MissReason `json:"misses"`
 }
 

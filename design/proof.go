@@ -14,6 +14,10 @@ import (
 // PromisedShare is the share of the plants that the data allow which must meet the spec, by its lower bound.
 const PromisedShare = 0.995
 
+// promiseConditions says what the runs behind a promise are.
+const promiseConditions = "the spec's step in both directions (and its kick) from rest at the operating point, in the sampled loop with its delay, limits, rate and trips acting; " +
+	"sensor noise, disturbances and quantisation are not in these runs, the noise counts by its standard deviation at the input; the model's structure is taken as true"
+
 // DefaultPlants is the number of fresh plants in a proof.
 const DefaultPlants = 2000
 
@@ -298,6 +302,7 @@ func (p *problem) prove(ctx context.Context, law *lti.Law, opt Options, attempt 
 		return nil, err
 	}
 	out := p.count(nominal, results)
+	out.Conditions = promiseConditions
 	out.Attempts, out.Confidence = attempt, 1-0.05/float64(attempt)
 	out.LowerBound = ClopperPearsonLower(out.MeetSpec, n, out.Confidence)
 	if out.Stable > 0 && nominal.stable {

@@ -53,7 +53,9 @@ func Verify(ctx context.Context, model *ident.Model, rig *data.Rig, loops *Loops
 	if l.Promise, err = p.prove(ctx, law, opt, 1); err != nil {
 		return nil, err
 	}
-	p.firstClosure(l)
+	if l.Margins.PlantInput.Stable {
+		p.firstClosure(l) // loops that do not hold the plant are not to be closed at all
+	}
 	p.conclude(l)
 	switch {
 	case model.Verdict == ident.Refused:
@@ -64,12 +66,33 @@ func Verify(ctx context.Context, model *ident.Model, rig *data.Rig, loops *Loops
 		return l.refuse(hidden)
 	case !l.Promise.kept():
 		r := l.Promise.broken(&p.spec)
+		if do := p.whyLost(l); do != "" {
+			r.Do = do
+		}
 		if far := outOfReach(l.Bounds); far != nil {
 			r = &ident.RefusedError{What: r.What + "; " + far.What, Do: far.Do}
 		}
 		return l.refuse(r)
 	}
 	return l, nil
+}
+
+// whyLost says what to do about loops that do not hold the nominal plant: a longer log would not help. Empty where
+// they do.
+func (p *problem) whyLost(l *Loops) string {
+	if l.Margins.PlantInput.Stable && l.Margins.InnerAlone.Stable {
+		return ""
+	}
+	turned := *l.LTI()
+	turned.Inner.Num = turned.Inner.Num.Scale(-1)
+	both, _, err := p.newProver(&turned).holds(p.model.TF(), &p.nominal)
+	switch {
+	case err == nil && both:
+		return "do not close these loops: the inner controller has the wrong sign, as with its numerator's sign turned round the nominal plant is held; see the law in the file"
+	case l.Margins.PlantInput.Stable:
+		return "do not close these loops: the inner loop alone does not hold the nominal plant, and is all there is while the outer one is clamped or off; make the inner controller stabilise by itself"
+	}
+	return "do not close these loops: they do not hold even the nominal plant; check coefficients, powers of z^-1 and sample period against the law in the file, or let design find the loops"
 }
 
 // Beyond these a difference of operating points is said, and makes the verdict weak.

@@ -4,6 +4,7 @@ import (
 	"errors"
 	"math"
 	"math/cmplx"
+	"slices"
 	"strings"
 	"testing"
 
@@ -215,6 +216,69 @@ func TestVerifyKeepsTheRigsLimits(t *testing.T) {
 	} {
 		if l, err := verify(change); err == nil || l != nil {
 			t.Errorf("%s: %v", name, err)
+		}
+	}
+}
+
+// Loops that lose the plant are told why, not to take a longer log, and carry no figures that mean nothing.
+func TestVerifySaysWhyThePlantIsLost(t *testing.T) {
+	r := testRigs()[1]
+	own := designed(t, r.name)
+	for name, c := range map[string]struct {
+		factor float64
+		want   string
+	}{"wrong sign": {-1, "wrong sign"}, "next to no gain": {1e-3, "do not hold even the nominal plant"}} {
+		l := *own
+		inner := Block{Discrete: Rational{slices.Clone(own.Inner.Discrete.Numerator), own.Inner.Discrete.Denominator}}
+		for i := range inner.Discrete.Numerator {
+			inner.Discrete.Numerator[i] *= c.factor
+		}
+		l.Inner = &inner
+		got, err := Verify(t.Context(), r.model(t), r.rig(), &l, Options{Seed: 1, Plants: 60})
+		var refused *ident.RefusedError
+		if !errors.As(err, &refused) || !strings.Contains(refused.Do, c.want) || strings.Contains(refused.Do, "longer log") {
+			t.Errorf("%s: %v", name, err)
+		}
+		if got.FirstClosure != nil || got.Forms != nil || got.InnerForm != "" {
+			t.Errorf("%s: first closure %+v, forms %v %q", name, got.FirstClosure, got.Forms, got.InnerForm)
+		}
+		lost := false
+		for _, w := range got.Warnings {
+			lost = lost || strings.Contains(w, "it is lost")
+			if strings.Contains(w, "overshoots") {
+				t.Errorf("%s: %q", name, w)
+			}
+		}
+		if !lost {
+			t.Errorf("%s: %q", name, got.Warnings)
+		}
+	}
+	// What the nominal plant misses, a surer model misses too.
+	rig := r.rig()
+	rig.Spec.Settling /= 3
+	_, err := Verify(t.Context(), r.model(t), rig, own, Options{Seed: 1, Plants: 60})
+	if err == nil || !strings.Contains(err.Error(), "a longer log will not help") {
+		t.Errorf("%v", err)
+	}
+}
+
+// A held input never passes its limits: the first closure's trip lies inside them, clear of noise and step.
+func TestFirstClosureTrips(t *testing.T) {
+	for _, r := range testRigs() {
+		l := designed(t, r.name)
+		in, sd := *l.FirstClosure.Trip.Input, l.FirstClosure.ExpectedSD.Input
+		if !(r.input[0] < in[0] && in[1] < r.input[1]) {
+			t.Errorf("%s: trips at %v, limits %v", r.name, in, r.input)
+		}
+		moved := 0.0
+		for _, u := range r.step(t, r.truth, l.LTI(), 1).U {
+			moved = math.Max(moved, math.Abs(u-r.point.Input))
+		}
+		if need := moved + 4*sd; in[0] > r.point.Input-need || in[1] < r.point.Input+need {
+			t.Errorf("%s: trips at %v, step and noise take %v about %v", r.name, in, need, r.point.Input)
+		}
+		if !strings.Contains(l.Promise.Conditions, "noise") {
+			t.Errorf("%s: conditions %q", r.name, l.Promise.Conditions)
 		}
 	}
 }
