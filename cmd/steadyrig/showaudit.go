@@ -30,6 +30,9 @@ func showAudit(p *page, r *ident.AuditReport, exps []*data.Experiment, rig *data
 	p.item("pairing", r.Pairing.Words)
 	p.item("loop rate", r.LoopRate.Words)
 	p.item("from outside", r.Outside.Words)
+	if r.Memories > 0 {
+		p.item("length", words.Memories(r.Memories))
+	}
 	if r.Law != nil {
 		p.item("stopgap law", r.Law.Words)
 	}

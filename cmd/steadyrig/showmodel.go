@@ -93,7 +93,7 @@ func showEvidence(p *page, m *ident.Model, u data.Units) {
 	}
 	p.item("from outside", fmt.Sprintf("%s of the input's variance", words.Share(m.Evidence.OutsideShare)))
 	if m.Evidence.Memories > 0 {
-		p.item("length", fmt.Sprintf("%s predictor memories", words.Number(m.Evidence.Memories)))
+		p.item("length", words.Memories(m.Evidence.Memories))
 	}
 	for _, l := range m.Logs {
 		p.item("log", fmt.Sprintf("%s: %d of %d rows used, %s", l.File, l.Used, l.Rows, words.Count(l.Segments, "segment")))

@@ -136,6 +136,9 @@ func logSection(in Input) section {
 		{"Loop rate", a.LoopRate.Words},
 		{"From outside", a.Outside.Words},
 	}
+	if a.Memories > 0 {
+		s.Facts = append(s.Facts, fact{"Length", words.Memories(a.Memories)})
+	}
 	if a.Law != nil {
 		s.Facts = append(s.Facts, fact{"Stopgap law", a.Law.Words})
 	}
@@ -190,7 +193,7 @@ func plantSection(in Input) section {
 		fact{"Operating point", fmt.Sprintf("input %s, output %s", words.Unit(words.Number(m.OperatingPoint.Input), u.Input), words.Unit(words.Number(m.OperatingPoint.Output), u.Output))},
 		fact{"Explained", words.Share(m.Evidence.ExplainedShare) + " of the output's variance one step ahead, on rows not used in the fit"},
 		fact{"Residuals", words.Residuals(m)},
-		fact{"Length", words.Number(m.Evidence.Memories) + " predictor memories"},
+		fact{"Length", words.Memories(m.Evidence.Memories)},
 	)
 	if text := words.Calibration(m); text != "" {
 		s.Facts = append(s.Facts, fact{"Short log", text})

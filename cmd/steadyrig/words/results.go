@@ -175,6 +175,9 @@ func Calibration(m *ident.Model) string {
 	return fmt.Sprintf("intervals widened by a factor of %s from %s", Brief(math.Sqrt(c.Factor)), Count(c.Replays, "replay"))
 }
 
+// Memories tells the length of the logs in memories of the predictor, which is what intervals rest on.
+func Memories(n float64) string { return Brief(n) + " memories of the predictor" }
+
 // Agrees says whether a method agrees with the model, nothing where it gives no poles.
 func Agrees(e ident.Method) string {
 	if len(e.Poles) == 0 {
@@ -241,6 +244,9 @@ func Leading(m *ident.Model, ratio string) string {
 // Residuals tells the tests on what a model leaves over.
 func Residuals(m *ident.Model) string {
 	r := m.Evidence.Residuals
+	if r.Lags == 0 {
+		return fmt.Sprintf("white: not tested, the log is in pieces too short; free of the input: %s (probability of more by chance)", Probability(r.CrossInput))
+	}
 	return fmt.Sprintf("white: %s, free of the input: %s (probability of more by chance, %d lags)",
 		Probability(r.Whiteness), Probability(r.CrossInput), r.Lags)
 }
