@@ -361,6 +361,9 @@ func TestWholeJob(t *testing.T) {
 	}
 	text, stderr := must("verify", "rig.toml", "model.json", "loops.json")
 	fits80(t, "verify", text)
+	if strings.Contains(text, "What simplicity costs") {
+		t.Error("verify tells of forms that it did not compare")
+	}
 	if strings.Contains(stderr, "another model") {
 		t.Errorf("verify does not know its model again: %s", stderr)
 	}
