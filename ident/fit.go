@@ -21,6 +21,7 @@ type Options struct {
 
 // Thresholds of the verdict.
 const (
+	soundRows     = 30   // rows a parameter below which intervals are optimistic
 	soundMemories = 20   // predictor memories below which intervals are optimistic
 	doubtful      = 1e-3 // probability below which a residual test speaks against the model
 	wide          = 0.5  // half width of the unstable pole's interval over its value

@@ -78,9 +78,10 @@ func bySpeed(roots []Root) []Root {
 
 // loosen gives integrators the intervals of free poles. That a pole is exactly
 // zero was chosen, not measured: what the log says about it is the interval of
-// the same structure with the pole free, joined with zero, and the probability
-// that the free pole is unstable, times the weight exp(-ΔBIC/2) of that
-// structure against the chosen one (Schwarz 1978).
+// the same structure with the pole free, joined with zero, and the probability that
+// the free pole is unstable, times the weight exp(-ΔBIC/2) of that structure
+// against the chosen one (Schwarz 1978). The covariance, from which plants are
+// drawn, becomes that of the free structure, too.
 func (m *Model) loosen(p *fit.Predictor, f *fit.Prediction, ranked []*candidate) error {
 	if f.Integrators == 0 {
 		return nil
@@ -106,6 +107,8 @@ func (m *Model) loosen(p *fit.Predictor, f *fit.Prediction, ranked []*candidate)
 		other.widen(c.Factor)
 	}
 	other.derive()
+	// Plants drawn from the model move about zero as the free poles may.
+	m.Plant.Covariance = other.Plant.Covariance
 	weight := 1 / (1 + math.Exp((free.BIC()-f.BIC())/2))
 	// Integrators are the slowest poles of the free structure.
 	slow := bySpeed(other.Poles)[:f.Integrators]

@@ -6,7 +6,6 @@ import (
 	"math/rand/v2"
 	"slices"
 
-	"golang.org/x/sync/errgroup"
 	"gonum.org/v1/gonum/mat"
 	"gonum.org/v1/gonum/stat/distuv"
 
@@ -193,33 +192,26 @@ func (m *Model) calibrate(ctx context.Context, exps []*data.Experiment, rig *dat
 		return nil
 	}
 	distances := make([]float64, replays)
-	g, ctx := errgroup.WithContext(ctx)
-	g.SetLimit(max(1, opt.Workers))
-	for k := range replays {
+	err = Each(ctx, replays, opt.Workers, func(k int) error {
 		distances[k] = math.NaN()
-		g.Go(func() error {
-			if err := ctx.Err(); err != nil {
-				return err
-			}
-			rnd := rand.New(rand.NewPCG(opt.Seed, uint64(k)))
-			again, ok := replay(recs, f, law, p.Lead, before, func(n, _ int) float64 { return errs[n][rnd.IntN(len(errs[n]))] })
-			if !ok {
-				return nil
-			}
-			q, err := fit.NewPredictor(again, p.Period, p.DelayRange[1])
-			if err != nil {
-				return nil
-			}
-			q.DelayRange = p.DelayRange
-			est, err := q.Fit(f, replayTol, replayStep)
-			if err != nil || q.Covariance(est) != nil {
-				return nil
-			}
-			distances[k] = distance(est, f)
+		rnd := rand.New(rand.NewPCG(opt.Seed, uint64(k)))
+		again, ok := replay(recs, f, law, p.Lead, before, func(n, _ int) float64 { return errs[n][rnd.IntN(len(errs[n]))] })
+		if !ok {
 			return nil
-		})
-	}
-	if err := g.Wait(); err != nil {
+		}
+		q, err := fit.NewPredictor(again, p.Period, p.DelayRange[1])
+		if err != nil {
+			return nil
+		}
+		q.DelayRange = p.DelayRange
+		est, err := q.Fit(f, replayTol, replayStep)
+		if err != nil || q.Covariance(est) != nil {
+			return nil
+		}
+		distances[k] = distance(est, f)
+		return nil
+	})
+	if err != nil {
 		return err
 	}
 	distances = slices.DeleteFunc(distances, math.IsNaN)

@@ -7,8 +7,6 @@ import (
 	"math/cmplx"
 	"slices"
 
-	"golang.org/x/sync/errgroup"
-
 	"steadyrig/data"
 	"steadyrig/fit"
 )
@@ -243,18 +241,11 @@ func (c *chooser) neighbours(s structure) []structure {
 // made of a neighbour's fit.
 func (c *chooser) try(ctx context.Context, list []structure, near *fit.Prediction, progress func(done, total int)) error {
 	results := make([]*candidate, len(list))
-	g, ctx := errgroup.WithContext(ctx)
-	g.SetLimit(max(1, c.workers))
-	for i, s := range list {
-		g.Go(func() error {
-			if err := ctx.Err(); err != nil {
-				return err
-			}
-			results[i] = c.fit(s, near)
-			return nil
-		})
-	}
-	if err := g.Wait(); err != nil {
+	err := Each(ctx, len(list), c.workers, func(i int) error {
+		results[i] = c.fit(list[i], near)
+		return nil
+	})
+	if err != nil {
 		return err
 	}
 	for i, s := range list {

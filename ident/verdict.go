@@ -125,6 +125,9 @@ func (m *Model) judge(ranked []*candidate, out Outside, f *fit.Prediction) {
 	if out.Share < faintShare {
 		weak("%s: the intervals rest on little", out.Words)
 	}
+	if need := soundRows * f.Free(); f.Rows < need {
+		weak("%d rows are few for %d parameters: intervals are optimistic below %d rows", f.Rows, f.Free(), need)
+	}
 	if m.Evidence.Memories < soundMemories {
 		weak("the log is only %.0f predictor memories long, intervals are optimistic below %d: log a longer run", m.Evidence.Memories, soundMemories)
 	}
