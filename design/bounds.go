@@ -160,7 +160,10 @@ func (p *problem) bounds(ctx context.Context, draws []lti.TF) []Bound {
 		out = append(out, b)
 	}
 	s := &p.spec
-	faster := fmt.Sprintf("shorten the delay (%.4g s in all) or the sample period (%.4g s)", p.nominal.tf.Delay, p.period)
+	faster := fmt.Sprintf("shorten the sample period (%.4g s)", p.period)
+	if tau := p.nominal.tf.Delay; tau > 0 {
+		faster = fmt.Sprintf("shorten the delay (%.4g s in all) or the sample period (%.4g s)", tau, p.period)
+	}
 	worst := func(name string) float64 {
 		if iv := interval(name); iv != nil {
 			return iv[1]
@@ -373,6 +376,7 @@ const (
 	streamTuning = iota + 1
 	streamBounds
 	streamProof
+	streamNoise
 )
 
 // stream returns the seed of one stream; attempt counts the proofs.

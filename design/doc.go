@@ -51,12 +51,15 @@
 // the interconnection, or of the inner loop alone, is not inside the unit circle, or when the step reaches the trip
 // limits. A failed proof may be tried once more, with tighter targets and fresh plants; it then has half of the
 // error, 2.5 %. The promise is conditional on the model's structure and covariance. A maximum over draws is not a
-// theorem for the whole set.
+// theorem for the whole set. Where the model's residual tests fail (below 1e-6), or its log is shorter than 20 predictor
+// memories, the verdict is weak at most; below 1e-12 the structure is taken as wrong and there is no promise.
 //
 // # Zeros that are not allowed
 //
 // No zero of K1 or of 1 + K2 may lie within the 95 % region of a pole that may be unstable, widened by a quarter of
 // its size; none of K1 at the integrator of K2. Verify applies the same rule to loops of any origin.
+// Their limits and rate count as far as the rig file's allow, and the trips stay where the rig file has them when their
+// operating point is another.
 //
 // # Randomness
 //
@@ -67,5 +70,8 @@
 //
 // One input, one output. No inner controller beyond second order with one zero: plants that need more, or that no
 // stable controller stabilises, are refused with that sentence. The noise acts in the figures for input_noise and
-// expected_sd and in simulations by the caller; the promise's steps are free of noise.
+// expected_sd and in simulations by the caller. Overshoot and settling in the promise are those of runs without noise;
+// one more run per plant has sensor noise and disturbance, where the model's noise could be split into them, and a
+// plant that trips in it misses the spec. promise.conditions in loops.json says which it was. Delays of more than 500
+// samples are refused: e^(p tau) says no for an unstable plant, and a stable one gains nothing from samples that short.
 package design

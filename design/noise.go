@@ -3,6 +3,7 @@ package design
 import (
 	"math"
 	"math/cmplx"
+	"math/rand/v2"
 )
 
 // noise is what moves the output beside the input, as the fit saw it: v = H e in y = G u + v. For an unstable plant
@@ -17,7 +18,11 @@ type noise struct {
 	// sample); else split is false and the whole of v counts as sensor noise.
 	split               bool
 	sensor, disturbance float64
+	parts               []inputPart // of the disturbance
 }
+
+// An inputPart is white noise at the plant input through a lag of 1/rate; rate 0: white. sd is what comes out.
+type inputPart struct{ rate, sd float64 }
 
 // splitMisfit is the largest relative misfit, root mean square over the frequencies, at which a split into sensor
 // noise and input disturbance is believed.
@@ -66,19 +71,21 @@ func (p *problem) splitNoise() noise {
 		}
 		return c
 	}
-	columns := [][]float64{column(0, true), column(0, false)}
+	columns, rates := [][]float64{column(0, true), column(0, false)}, []float64{0}
 	for range 2 {
 		x, misfit := nonNegative(columns, weight)
 		if misfit <= splitMisfit {
 			out.split, out.sensor = true, math.Sqrt(x[0])
-			for _, v := range x[1:] {
-				out.disturbance += v
+			for i, v := range x[1:] {
+				if out.disturbance += v; v > 0 {
+					out.parts = append(out.parts, inputPart{rates[i], math.Sqrt(v)})
+				}
 			}
 			out.disturbance = math.Sqrt(out.disturbance)
 			break
 		}
 		for rate := 0.05 / p.spec.settling; rate < 1/p.period; rate *= 3 {
-			columns = append(columns, column(rate, false))
+			columns, rates = append(columns, column(rate, false)), append(rates, rate)
 		}
 	}
 	return out
@@ -138,6 +145,24 @@ func nonNegative(columns [][]float64, weight []float64) (x []float64, misfit flo
 		left += w * e * e
 	}
 	return x, math.Sqrt(left / total)
+}
+
+// draw fills sensor noise and input disturbance at a sample period; only where the noise is split.
+func (q *noise) draw(rnd *rand.Rand, period float64, sensor, input []float64) {
+	for k := range sensor {
+		sensor[k], input[k] = q.sensor*rnd.NormFloat64(), 0
+	}
+	for _, part := range q.parts {
+		rho := 0.0
+		if part.rate > 0 {
+			rho = math.Exp(-part.rate * period)
+		}
+		w, fresh := part.sd*rnd.NormFloat64(), part.sd*math.Sqrt(1-rho*rho)
+		for k := range input {
+			input[k] += w
+			w = rho*w + fresh*rnd.NormFloat64()
+		}
+	}
 }
 
 // sensorPSD is the variance density of the sensor's part of v at frequency j on a plant, times |A|^2.

@@ -2,6 +2,7 @@ package design
 
 import (
 	"math"
+	"math/rand/v2"
 	"slices"
 	"testing"
 
@@ -253,7 +254,6 @@ func TestLongDelay(t *testing.T) {
 // A spec without overshoot is met with a margin, not by chance.
 func TestNoOvershoot(t *testing.T) {
 	r := testRigs()[0]
-	r.spec.Overshoot = 0
 	l, err := Design(t.Context(), r.model(t), r.rig(), Options{Seed: 1, Plants: 1000})
 	if err != nil {
 		t.Fatal(err)
@@ -288,5 +288,58 @@ func TestBetweenSamples(t *testing.T) {
 	}
 	if between, at = p.betweenSamples(designed(t, r.name).LTI()); math.Abs(between-at) > 1e-3 {
 		t.Errorf("levitated: overshoot %v between the samples, %v at them", between, at)
+	}
+}
+
+// Sensor noise and disturbance as drawn for the proof shake the loops as much as the spectrum of the model's noise says,
+// for white and for coloured disturbances.
+func TestDrawnNoiseHasTheModelsSpectrum(t *testing.T) {
+	for _, i := range []int{1, 3} {
+		r := testRigs()[i]
+		l := designed(t, r.name)
+		p, err := newProblem(r.model(t), r.rig())
+		if err != nil {
+			t.Fatal(err)
+		}
+		const n = 60000
+		sensor, input := make([]float64, n), make([]float64, n)
+		p.noise.draw(rand.New(rand.NewPCG(1, 1)), r.period, sensor, input)
+		tr, err := lti.Run{Plant: r.truth, Period: r.period, ComputeDelay: r.compute, Law: l.LTI(), Steps: n, Noise: sensor, InputDisturbance: input}.Simulate()
+		if err != nil {
+			t.Fatal(err)
+		}
+		sum := SignalPair{}
+		for k := range n {
+			sum.Input += (tr.U[k] - r.point.Input) * (tr.U[k] - r.point.Input) / n
+			sum.Output += (tr.Y[k] - r.point.Output) * (tr.Y[k] - r.point.Output) / n
+		}
+		near(t, r.name+" input", math.Sqrt(sum.Input), l.FirstClosure.ExpectedSD.Input, 0.1)
+		near(t, r.name+" output", math.Sqrt(sum.Output), l.FirstClosure.ExpectedSD.Output, 0.1)
+	}
+}
+
+// Trips that the step alone keeps clear of, and noise does not, cost plants their place in the promise.
+func TestPromiseUnderNoise(t *testing.T) {
+	r := testRigs()[1]
+	own := designed(t, r.name)
+	room := r.spec.Step*(1+own.Promise.Overshoot.Worst) + own.FirstClosure.ExpectedSD.Output
+	r.output = &[2]float64{-room, room}
+	g := r.rig()
+	g.Spec.Overshoot = 0.9 * own.Promise.Overshoot.Worst // the bound on the step has to leave room
+	got, err := Verify(t.Context(), r.model(t), g, own, Options{Seed: 1, Plants: 100})
+	if err == nil || got.Promise.Stable != 100 {
+		t.Fatalf("%v, %+v", err, got.Promise)
+	}
+	tripped := 0
+	for _, m := range got.Promise.Misses {
+		switch m.What {
+		case missNoisy:
+			tripped = m.Plants
+		case missTrip:
+			t.Errorf("%d plants trip without noise", m.Plants)
+		}
+	}
+	if tripped < 10 {
+		t.Errorf("%d of 100 trip at one deviation beyond the step: %+v", tripped, got.Promise.Misses)
 	}
 }

@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"math"
 	"math/cmplx"
+	"math/rand/v2"
 	"slices"
 	"sync/atomic"
 
@@ -14,9 +15,15 @@ import (
 // PromisedShare is the share of the plants that the data allow which must meet the spec, by its lower bound.
 const PromisedShare = 0.995
 
-// promiseConditions says what the runs behind a promise are.
-const promiseConditions = "the spec's step in both directions (and its kick) from rest at the operating point, in the sampled loop with its delay, limits, rate and trips acting; " +
-	"sensor noise, disturbances and quantisation are not in these runs, the noise counts by its standard deviation at the input; the model's structure is taken as true"
+// conditions says what the runs behind a promise are.
+func (p *problem) conditions() string {
+	noise := "sensor noise and disturbances are not in these runs, as they could not be told apart"
+	if p.noise.split {
+		noise = "overshoot and settling are those of runs without noise, and in one more run per plant sensor noise and disturbance act, as split from the model's, and no trip may"
+	}
+	return "the spec's step in both directions, and its kick, from rest at the operating point, in the sampled loop with its delay, limits, rate and trips acting; " +
+		noise + "; quantisation is left out, and the model's structure is taken as true"
+}
 
 // DefaultPlants is the number of fresh plants in a proof.
 const DefaultPlants = 2000
@@ -34,9 +41,10 @@ const (
 	missPeakS     = "peak_sensitivity"
 	missNoise     = "input_noise"
 	missKick      = "kick_peak"
+	missNoisy     = "trip limits during the step, with noise"
 )
 
-var missOrder = []string{missUnstable, missInner, missTrip, missOvershoot, missSettling, missPeakS, missNoise, missKick}
+var missOrder = []string{missUnstable, missInner, missTrip, missOvershoot, missSettling, missPeakS, missNoise, missKick, missNoisy}
 
 // outcome is what one plant does in the loops.
 type outcome struct {
@@ -102,7 +110,8 @@ type prover struct {
 	sim   lti.Simulator
 	trace lti.Trace
 	ref   []float64
-	kick  []float64
+
+	sensor, disturbance []float64
 }
 
 func (p *problem) newProver(law *lti.Law) *prover {
@@ -133,6 +142,29 @@ func (v *prover) run(g lti.TF, steps int, amount float64, kick bool, offset floa
 		r.Reference = v.ref
 	}
 	return v.sim.Simulate(&v.trace, r)
+}
+
+// lostSteps is how far, in steps of the spec, an output without trip limits may go before its plant is lost.
+const lostSteps = 1000
+
+// survives reports whether a plant comes through a reference step under sensor noise and disturbance without a trip.
+func (v *prover) survives(g lti.TF, step float64, rnd *rand.Rand) (bool, error) {
+	p, n := v.p, v.p.steps(g)
+	v.sensor, v.disturbance = slices.Grow(v.sensor[:0], n)[:n], slices.Grow(v.disturbance[:0], n)[:n]
+	p.noise.draw(rnd, p.period, v.sensor, v.disturbance)
+	v.ref = slices.Grow(v.ref[:0], n)[:n]
+	for k := range v.ref {
+		v.ref[k] = v.law.Y0 + step
+	}
+	trip := [2]float64{-lostSteps * p.spec.step, lostSteps * p.spec.step}
+	if p.output != nil {
+		trip = *p.output
+	}
+	err := v.sim.Simulate(&v.trace, lti.Run{
+		Plant: g, Period: p.period, ComputeDelay: p.compute, Law: v.law, Steps: n, Reference: v.ref,
+		Noise: v.sensor, InputDisturbance: v.disturbance, Trip: [2]float64{v.law.Y0 + trip[0], v.law.Y0 + trip[1]},
+	})
+	return err == nil && v.trace.Tripped < 0, err
 }
 
 // steps is the length of the runs about a plant.
@@ -273,6 +305,7 @@ func (p *problem) prove(ctx context.Context, law *lti.Law, opt Options, attempt 
 		n = DefaultPlants
 	}
 	draws := p.model.Draw(n, stream(opt.Seed, streamProof, attempt))
+	noiseSeed := stream(opt.Seed, streamNoise, attempt)
 	results := make([]outcome, n)
 	first := p.newProver(law)
 	const batch = 25
@@ -288,6 +321,19 @@ func (p *problem) prove(ctx context.Context, law *lti.Law, opt Options, attempt 
 			if err != nil {
 				return fmt.Errorf("plant %d of the proof: %w", k, err)
 			}
+			if o.stable && p.noise.split {
+				step := p.spec.step
+				if k%2 == 1 {
+					step = -step
+				}
+				ok, err := v.survives(draws[k], step, rand.New(rand.NewPCG(noiseSeed, uint64(k))))
+				if err != nil {
+					return fmt.Errorf("plant %d of the proof: %w", k, err)
+				}
+				if !ok {
+					o.misses = append(o.misses, missNoisy)
+				}
+			}
 			results[k] = o
 		}
 		if opt.Progress != nil {
@@ -302,7 +348,7 @@ func (p *problem) prove(ctx context.Context, law *lti.Law, opt Options, attempt 
 		return nil, err
 	}
 	out := p.count(nominal, results)
-	out.Conditions = promiseConditions
+	out.Conditions = p.conditions()
 	out.Attempts, out.Confidence = attempt, 1-0.05/float64(attempt)
 	out.LowerBound = ClopperPearsonLower(out.MeetSpec, n, out.Confidence)
 	if out.Stable > 0 && nominal.stable {
@@ -406,7 +452,7 @@ func (v *prover) calm(target float64) bool {
 
 // largest bisects for the largest amount that works in both directions, up to the trip limits or a thousand steps.
 func (p *problem) largest(works func(float64) bool) float64 {
-	most := 1000 * p.spec.step
+	most := lostSteps * p.spec.step
 	if p.output != nil {
 		most = math.Min(-p.output[0], p.output[1])
 	}

@@ -89,10 +89,35 @@ func (p *problem) whyLost(l *Loops) string {
 	switch {
 	case err == nil && both:
 		return "do not close these loops: the inner controller has the wrong sign, as with its numerator's sign turned round the nominal plant is held; see the law in the file"
+	case hiddenPole(l) != "":
+		return "do not close these loops: " + hiddenPole(l)
 	case l.Margins.PlantInput.Stable:
 		return "do not close these loops: the inner loop alone does not hold the nominal plant, and is all there is while the outer one is clamped or off; make the inner controller stabilise by itself"
 	}
 	return "do not close these loops: they do not hold even the nominal plant; check coefficients, powers of z^-1 and sample period against the law in the file, or let design find the loops"
+}
+
+// hiddenPole names a pole of a controller outside the unit circle with a zero upon it: what it does never shows in the
+// loop, and grows. Empty if there is none.
+func hiddenPole(l *Loops) string {
+	law := l.LTI()
+	for i, g := range []*lti.DTF{&law.Inner, law.Outer} {
+		if g == nil {
+			continue
+		}
+		name := []string{"inner", "outer"}[i]
+		for _, pole := range g.Poles() {
+			if cmplx.Abs(pole) <= 1+onCircle {
+				continue
+			}
+			for _, zero := range g.Zeros() {
+				if cmplx.Abs(zero-pole) < 0.01*(cmplx.Abs(pole)-1) {
+					return fmt.Sprintf("the %s controller has an unstable pole of its own at z = %s, with a zero upon it that hides it: take both out", name, rateText(pole))
+				}
+			}
+		}
+	}
+	return ""
 }
 
 // Beyond these a difference of operating points is said, and makes the verdict weak.
