@@ -118,6 +118,8 @@ func (m *Model) Responses(n int, seed uint64) *Responses {
 			ph := cmplx.Phase(h) * 180 / math.Pi
 			if k > 0 {
 				turn += 360 * math.Round((last-ph-turn)/360)
+			} else if i == 0 && ph > 90 {
+				turn = -360 // a phase that lags: two integrators start at -180, not at 180
 			} else if i > 0 {
 				turn = 360 * math.Round((out.Phase[0]-ph)/360)
 			}
