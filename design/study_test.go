@@ -1,14 +1,12 @@
 package design_test
 
 import (
-	"bytes"
 	"context"
 	"errors"
 	"fmt"
 	"math"
 	"os"
 	"strconv"
-	"strings"
 	"testing"
 
 	"steadyrig/data"
@@ -30,15 +28,7 @@ type outcome struct {
 // lti alone and not by the code that made the promise.
 func wholeJob(t testing.TB, r demorig.Rig, seed uint64) outcome {
 	t.Helper()
-	rig, err := data.ReadRig(strings.NewReader(r.File()), r.Name+".toml")
-	if err != nil {
-		t.Fatal(err)
-	}
-	var log bytes.Buffer
-	if err := r.WriteCSV(&log, seed); err != nil {
-		t.Fatal(err)
-	}
-	e, err := data.ReadLog(&log, r.Name+".csv", rig)
+	e, rig, err := r.Experiment(seed)
 	if err != nil {
 		t.Fatal(err)
 	}

@@ -1,7 +1,6 @@
 package ident
 
 import (
-	"bytes"
 	"cmp"
 	"context"
 	"errors"
@@ -11,7 +10,6 @@ import (
 	"os"
 	"slices"
 	"strconv"
-	"strings"
 	"testing"
 	"time"
 
@@ -24,15 +22,7 @@ import (
 // experiment reads the log of a demo rig as a user would.
 func experiment(t testing.TB, r demorig.Rig, seed uint64) (*data.Experiment, *data.Rig) {
 	t.Helper()
-	rig, err := data.ReadRig(strings.NewReader(r.File()), r.Name+".toml")
-	if err != nil {
-		t.Fatal(err)
-	}
-	var log bytes.Buffer
-	if err := r.WriteCSV(&log, seed); err != nil {
-		t.Fatal(err)
-	}
-	e, err := data.ReadLog(&log, r.Name+".csv", rig)
+	e, rig, err := r.Experiment(seed)
 	if err != nil {
 		t.Fatal(err)
 	}

@@ -9,6 +9,7 @@ package demorig
 
 import (
 	"bufio"
+	"bytes"
 	"fmt"
 	"io"
 	"math"
@@ -16,6 +17,7 @@ import (
 	"strconv"
 	"strings"
 
+	"steadyrig/data"
 	"steadyrig/fit/lti"
 )
 
@@ -243,6 +245,20 @@ func (r Rig) WriteCSV(w io.Writer, seed uint64) error {
 		b.Write(append(line, '\n'))
 	}
 	return b.Flush()
+}
+
+// Experiment writes rig file and log and reads them as a user would.
+func (r Rig) Experiment(seed uint64) (*data.Experiment, *data.Rig, error) {
+	rig, err := data.ReadRig(strings.NewReader(r.File()), r.Name+".toml")
+	if err != nil {
+		return nil, nil, err
+	}
+	var log bytes.Buffer
+	if err := r.WriteCSV(&log, seed); err != nil {
+		return nil, nil, err
+	}
+	e, err := data.ReadLog(&log, r.Name+".csv", rig)
+	return e, rig, err
 }
 
 // File returns the rig file.
