@@ -5,8 +5,9 @@ import (
 	"context"
 	"math"
 	"math/cmplx"
-	"runtime"
 	"slices"
+
+	"steadyrig/ident"
 )
 
 // innerResult is one tuned inner controller.
@@ -144,7 +145,7 @@ func (p *problem) tuneInner(ctx context.Context, plants []plant, workers int) ([
 			jobs = append(jobs, p.innerStarts(form, decay)...)
 		}
 		done := make([]innerResult, len(jobs))
-		if err := each(ctx, len(jobs), workers, func(i int) error {
+		if err := ident.Each(ctx, len(jobs), workers, func(i int) error {
 			done[i] = p.polishInner(ctx, jobs[i], plants, decay)
 			return nil
 		}); err != nil {
@@ -195,11 +196,4 @@ func (p *problem) polishInner(ctx context.Context, s innerResult, plants []plant
 	s.x, s.block = x, innerBlock(s.form, x, s.scale, p.period)
 	s.cost, s.peakS, s.noise, s.stable = p.innerCost(s.block, plants, &g, decay)
 	return s
-}
-
-func limit(workers int) int {
-	if workers > 0 {
-		return workers
-	}
-	return runtime.GOMAXPROCS(0)
 }

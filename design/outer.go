@@ -5,6 +5,8 @@ import (
 	"context"
 	"math"
 	"slices"
+
+	"steadyrig/ident"
 )
 
 // pair is a tuned pair of loops.
@@ -177,7 +179,7 @@ func (p *problem) tuneOuter(ctx context.Context, inner innerResult, plants []pla
 	for _, form := range []string{formI, formPI, formPILead} {
 		starts := p.outerStarts(form, inner, t)
 		done := make([]pair, len(starts))
-		if err := each(ctx, len(starts), workers, func(i int) error {
+		if err := ident.Each(ctx, len(starts), workers, func(i int) error {
 			done[i] = p.polishOuter(ctx, starts[i], plants, t)
 			return nil
 		}); err != nil {

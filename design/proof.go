@@ -10,6 +10,7 @@ import (
 	"sync/atomic"
 
 	"steadyrig/fit/lti"
+	"steadyrig/ident"
 )
 
 // PromisedShare is the share of the plants that the data allow which must meet the spec, by its lower bound.
@@ -310,7 +311,7 @@ func (p *problem) prove(ctx context.Context, law *lti.Law, opt Options, attempt 
 	first := p.newProver(law)
 	const batch = 25
 	var done atomic.Int64
-	if err := each(ctx, (n+batch-1)/batch, opt.Workers, func(i int) error {
+	if err := ident.Each(ctx, (n+batch-1)/batch, opt.Workers, func(i int) error {
 		v := first.another()
 		from, to := i*batch, min((i+1)*batch, n)
 		for k := from; k < to; k++ {
@@ -419,7 +420,7 @@ const extentPlants = 16
 func (v *prover) extents(ctx context.Context, plants []lti.TF, workers int) (step, offset float64, err error) {
 	p := v.p
 	steps, offsets := make([]float64, len(plants)), make([]float64, len(plants))
-	if err := each(ctx, len(plants), workers, func(i int) error {
+	if err := ident.Each(ctx, len(plants), workers, func(i int) error {
 		v, g := v.another(), plants[i]
 		n := 2 * p.steps(g)
 		steps[i] = p.largest(func(a float64) bool {

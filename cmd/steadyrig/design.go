@@ -125,8 +125,15 @@ func (a *app) deliverLoops(s *settings, usual string, loops *design.Loops, u dat
 
 // refusedLoops is what loops.json holds where no design was tried.
 func refusedLoops(rig *data.Rig, why string) *design.Loops {
-	return &design.Loops{
+	l := &design.Loops{
 		Schema: design.LoopsSchema, Rig: rig.Name, Law: design.LawText, Bounds: []design.Bound{},
 		Verdict: design.Refused, Warnings: []string{why},
 	}
+	if rig.Loop != nil {
+		l.SamplePeriod, l.ComputeDelay = rig.Loop.SamplePeriod, rig.Loop.ComputeDelay
+	}
+	if o := rig.OperatingPoint; o != nil {
+		l.OperatingPoint = design.OperatingPoint(*o)
+	}
+	return l
 }
