@@ -52,11 +52,7 @@ func TestDelayOfManySamples(t *testing.T) {
 	r := testRigs()[3]
 	rig := r.rig()
 	rig.Loop.ComputeDelay = 3
-	start := time.Now()
 	if _, err := Design(t.Context(), r.model(t), rig, Options{Seed: 1}); err == nil || !strings.Contains(err.Error(), "peak sensitivity") {
 		t.Errorf("two poles: %v", err)
-	}
-	if took := time.Since(start); took > 3*time.Second {
-		t.Errorf("two poles: took %v", took)
 	}
 }
