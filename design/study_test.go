@@ -119,6 +119,9 @@ func wholeJob(t testing.TB, r demorig.Rig, seed uint64) outcome {
 // held by every one and misses the spec in at most 8 of 500. STEADYRIG_STUDY
 // sets the number of logs a rig; the table in DEVELOPERS.md took 100.
 func TestPromiseOnTheTruth(t *testing.T) {
+	if testing.Short() {
+		t.Skip("does the whole job five times")
+	}
 	logs := 1
 	if v := os.Getenv("STEADYRIG_STUDY"); v != "" {
 		logs, _ = strconv.Atoi(v)
