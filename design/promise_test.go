@@ -254,6 +254,7 @@ func TestLongDelay(t *testing.T) {
 // A spec without overshoot is met with a margin, not by chance.
 func TestNoOvershoot(t *testing.T) {
 	r := testRigs()[0]
+	r.spec.Overshoot = 0
 	l, err := Design(t.Context(), r.model(t), r.rig(), Options{Seed: 1, Plants: 1000})
 	if err != nil {
 		t.Fatal(err)
