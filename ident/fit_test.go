@@ -5,6 +5,7 @@ import (
 	"context"
 	"errors"
 	"math"
+	"slices"
 	"strings"
 	"testing"
 
@@ -21,30 +22,69 @@ func rigNamed(t testing.TB, name string) demorig.Rig {
 	return r
 }
 
+// rounded returns x on a grid of a ten-thousandth of its range.
+func rounded(x []float64) []float64 {
+	lo, hi := slices.Min(x), slices.Max(x)
+	step := (hi - lo) / 1e4
+	out := make([]float64, len(x))
+	for k, v := range x {
+		out[k] = math.Round(v/step) * step
+	}
+	return out
+}
+
 // A log of a fixed linear law without power from outside determines the law
-// only (Söderström & Stoica 1989, ch. 10; check values C05, C08).
+// only (Söderström & Stoica 1989, ch. 10; check values C05, C08), also where its
+// columns are rounded.
 func TestQuietLogIsRefused(t *testing.T) {
 	for _, r := range demorig.All() {
 		r.Dither, r.Step = 0, 0
 		e, rig := experiment(t, r, 1)
-		m, err := Fit(context.Background(), []*data.Experiment{e}, rig, Options{})
-		var refused *RefusedError
-		if !errors.As(err, &refused) {
-			t.Fatalf("%s: error %v, want a refusal", r.Name, err)
+		s := e.Segments[0]
+		coarse := *e
+		coarse.Segments = []data.Segment{{Line: s.Line, U: rounded(s.U), Y: rounded(s.Y), R: s.R}}
+		for _, e := range []*data.Experiment{e, &coarse} {
+			m, err := Fit(context.Background(), []*data.Experiment{e}, rig, Options{})
+			var refused *RefusedError
+			if !errors.As(err, &refused) {
+				t.Fatalf("%s: error %v, want a refusal", r.Name, err)
+			}
+			if m.Verdict != Refused || !strings.Contains(refused.What, "nothing from outside") || !strings.Contains(refused.Do, "probe") {
+				t.Errorf("%s: verdict %q: %v", r.Name, m.Verdict, refused)
+			}
+			if a, err := Audit(context.Background(), []*data.Experiment{e}, rig); !errors.As(err, &refused) || a.Verdict != Refused || !a.Outside.Quiet {
+				t.Errorf("%s: audit says %v", r.Name, err)
+			}
+			var b bytes.Buffer
+			if err := m.Write(&b); err != nil {
+				t.Fatal(err)
+			}
+			if _, err := ReadModel(&b, "model.json"); err != nil {
+				t.Errorf("%s: the refused model does not read back: %v", r.Name, err)
+			}
 		}
-		if m.Verdict != Refused || !strings.Contains(refused.Do, "probe") {
-			t.Errorf("%s: verdict %q, advice %q", r.Name, m.Verdict, refused.Do)
-		}
-		if a, err := Audit(context.Background(), []*data.Experiment{e}, rig); !errors.As(err, &refused) || a.Verdict != Refused {
-			t.Errorf("%s: audit says %v", r.Name, err)
-		}
-		var b bytes.Buffer
-		if err := m.Write(&b); err != nil {
-			t.Fatal(err)
-		}
-		if _, err := ReadModel(&b, "model.json"); err != nil {
-			t.Errorf("%s: the refused model does not read back: %v", r.Name, err)
-		}
+	}
+}
+
+// Without an operating point in the rig file it is found with the plant: where
+// the output was on the mean, and the input that holds it there.
+func TestOperatingPointIsFound(t *testing.T) {
+	r := rigNamed(t, "hover")
+	e, rig := experiment(t, r, 6)
+	rig.OperatingPoint = nil
+	m, err := Fit(context.Background(), []*data.Experiment{e}, rig, Options{})
+	if err != nil {
+		t.Fatal(err)
+	}
+	// 5.2 mm at 1.42 A, and -5.8 mm/A from there on.
+	want := r.U0 + (m.OperatingPoint.Output-r.Y0)/r.Truth.DC()
+	if math.Abs(m.OperatingPoint.Output-r.Y0) > 0.05 {
+		t.Errorf("output rests at %g, want about %g", m.OperatingPoint.Output, r.Y0)
+	}
+	// The disturbance's mean over 8000 rows has a deviation of 1e-4 A, the
+	// stiffest part of the error is that of the gain.
+	if math.Abs(m.OperatingPoint.Input-want) > 2e-3 {
+		t.Errorf("input rests at %g, want %g for an output of %g", m.OperatingPoint.Input, want, m.OperatingPoint.Output)
 	}
 }
 

@@ -60,22 +60,30 @@ func TestReplayWithItsOwnErrors(t *testing.T) {
 	}
 }
 
-// On a log of 600 rows the replays widen the covariance, on a long one there
-// is nothing to widen and the log is not replayed.
+// On logs of 600 rows the replays widen the covariance by a little on the
+// average, on a long one there is nothing to widen and the log is not replayed.
 func TestShortLogIsCalibrated(t *testing.T) {
 	r := rigNamed(t, "hover")
 	long, rig := experiment(t, r, 12)
 	r.Rows = 600
-	short, _ := experiment(t, r, 12)
-	m, err := Fit(context.Background(), []*data.Experiment{short}, rig, Options{})
-	if err != nil {
-		t.Fatal(err)
+	var mean float64
+	const logs = 4
+	for seed := range uint64(logs) {
+		short, _ := experiment(t, r, 12+seed)
+		m, err := Fit(context.Background(), []*data.Experiment{short}, rig, Options{})
+		if err != nil {
+			t.Fatal(err)
+		}
+		c := m.Evidence.Calibration
+		if c == nil || c.Replays < 90 {
+			t.Fatalf("calibration of a short log: %+v, want most replays fitted", c)
+		}
+		mean += c.Factor / logs
 	}
-	c := m.Evidence.Calibration
-	if c == nil || c.Replays < 90 || c.Factor < 1 || c.Factor > 2 {
-		t.Errorf("calibration of a short log: %+v, want most replays fitted and a factor a little over 1", c)
+	if mean < 1.1 || mean > 2 {
+		t.Errorf("covariance widened by %.2f on the average", mean)
 	}
-	m, err = Fit(context.Background(), []*data.Experiment{long}, rig, Options{})
+	m, err := Fit(context.Background(), []*data.Experiment{long}, rig, Options{})
 	if err != nil {
 		t.Fatal(err)
 	}
