@@ -130,3 +130,31 @@ func TestPredictionFindsPendulum(t *testing.T) {
 		}
 	}
 }
+
+// Where the output rests a unit higher, the input that holds it differs by the
+// inverse of the steady gain.
+func TestRest(t *testing.T) {
+	rec, g := pendulum(5, 1500)
+	for k := range rec.Y {
+		rec.Y[k] += 40
+		rec.U[k] += 7
+	}
+	p, err := NewPredictor([]Record{rec}, 0.05, 0.2)
+	if err != nil {
+		t.Fatal(err)
+	}
+	z := math.Exp(-0.15)
+	f, err := p.Fit(&Prediction{Shape: Shape{Poles: 2}, Num: g.Num, Den: g.Den, D: []float64{1}, C: zPoly([]complex128{complex(z, 0), complex(z, 0)})}, 1e-10, 50)
+	if err != nil {
+		t.Fatal(err)
+	}
+	dc := f.TF().DC()
+	if got := p.Rest(f, 0, 42) - p.Rest(f, 0, 41); math.Abs(got*dc-1) > 1e-9 {
+		t.Errorf("a unit of output takes %g of input, want %g", got, 1/dc)
+	}
+	// The simulation's own operating point, moved with the columns: deviations
+	// of the input's mean and of the gain stay far below this.
+	if got := p.Rest(f, 0, 40); math.Abs(got-7) > 0.05 {
+		t.Errorf("an output of 40 rests at an input of %g, want 7", got)
+	}
+}

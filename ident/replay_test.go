@@ -67,6 +67,7 @@ func TestShortLogIsCalibrated(t *testing.T) {
 	long, rig := experiment(t, r, 12)
 	r.Rows = 600
 	var mean float64
+	compared := 0
 	const logs = 4
 	for seed := range uint64(logs) {
 		short, _ := experiment(t, r, 12+seed)
@@ -79,6 +80,30 @@ func TestShortLogIsCalibrated(t *testing.T) {
 			t.Fatalf("calibration of a short log: %+v, want most replays fitted", c)
 		}
 		mean += c.Factor / logs
+		if len(m.Zeros) > 0 || len(m.Noise.Numerator) != len(m.Plant.Denominator) || len(m.Plant.Parameters) != 4 {
+			continue // another structure than the plain one below
+		}
+		// The covariance in the model is that of the information times the factor.
+		recs, period, err := records([]*data.Experiment{short})
+		if err != nil {
+			t.Fatal(err)
+		}
+		p, err := fit.NewPredictor(recs, period, maxDelaySamples*period)
+		if err != nil {
+			t.Fatal(err)
+		}
+		g := m.TF()
+		f := &fit.Prediction{Shape: fit.Shape{Poles: 3}, Num: g.Num, Den: g.Den, D: []float64{1}, C: m.Noise.Numerator, Variance: m.Noise.SD * m.Noise.SD, Period: period}
+		if err := p.Covariance(f); err != nil {
+			t.Fatal(err)
+		}
+		if got := m.Plant.Covariance[0][0] / f.Cov.At(0, 0); math.Abs(got-c.Factor) > 1e-3*c.Factor {
+			t.Errorf("covariance is %.4g times that of the information, the factor is %.4g", got, c.Factor)
+		}
+		compared++
+	}
+	if compared == 0 {
+		t.Error("no log had the plain structure: nothing was compared")
 	}
 	if mean < 1.1 || mean > 2 {
 		t.Errorf("covariance widened by %.2f on the average", mean)
