@@ -33,6 +33,9 @@ func shared(t *testing.T, name string) []byte {
 // for it (e^{ph} = 1.55), so the check is that the pole is unstable beyond
 // doubt, within a third of that, and that the fit does not call itself sound.
 func TestMeasuredLevitation(t *testing.T) {
+	if testing.Short() {
+		t.Skip("searches up to five poles")
+	}
 	raw := shared(t, "maglev_levitador/dataset_multiescalon_20251217_210203.txt")
 	var kept bytes.Buffer
 	kept.WriteString("t\ty\ty_obs\tdy_obs\ti\tu\tyd\n")

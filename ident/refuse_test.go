@@ -51,6 +51,9 @@ func TestTinyLogIsRefused(t *testing.T) {
 // integrators would rest on a choice, not on the log. The body of hover has
 // none, which 100 rows of its log do not show to BIC; the slider has two.
 func TestIntegratorsNeedEvidence(t *testing.T) {
+	if testing.Short() {
+		t.Skip("fits nine logs")
+	}
 	held := func(r demorig.Rig, seed uint64) (n int, verdict string) {
 		e, rig := experiment(t, r, seed)
 		m, err := Fit(context.Background(), []*data.Experiment{e}, rig, Options{})

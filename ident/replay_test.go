@@ -63,6 +63,9 @@ func TestReplayWithItsOwnErrors(t *testing.T) {
 // On logs of 600 rows the replays widen the covariance by a little on the
 // average, on a long one there is nothing to widen and the log is not replayed.
 func TestShortLogIsCalibrated(t *testing.T) {
+	if testing.Short() {
+		t.Skip("replays four logs")
+	}
 	r := rigNamed(t, "hover")
 	long, rig := experiment(t, r, 12)
 	r.Rows = 600
