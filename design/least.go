@@ -293,7 +293,7 @@ func leastNoise(num, den lti.Poly, poles []complex128) float64 {
 		}
 	}
 	x := append([]complex128(nil), c...)
-	if !solve(m, x) {
+	if !lti.SolveComplex(m, x) {
 		return math.NaN()
 	}
 	sum := 0.0
@@ -318,38 +318,4 @@ func divide(p, by lti.Poly) lti.Poly {
 		}
 	}
 	return r[:n]
-}
-
-// solve solves m x = b in place by Gaussian elimination with partial pivoting; m is row-major.
-func solve(m, b []complex128) bool {
-	n := len(b)
-	for k := range n {
-		p := k
-		for i := k + 1; i < n; i++ {
-			if cmplx.Abs(m[i*n+k]) > cmplx.Abs(m[p*n+k]) {
-				p = i
-			}
-		}
-		if cmplx.Abs(m[p*n+k]) < 1e-14 {
-			return false
-		}
-		for j := range n {
-			m[k*n+j], m[p*n+j] = m[p*n+j], m[k*n+j]
-		}
-		b[k], b[p] = b[p], b[k]
-		for i := k + 1; i < n; i++ {
-			f := m[i*n+k] / m[k*n+k]
-			for j := k; j < n; j++ {
-				m[i*n+j] -= f * m[k*n+j]
-			}
-			b[i] -= f * b[k]
-		}
-	}
-	for k := n - 1; k >= 0; k-- {
-		for j := k + 1; j < n; j++ {
-			b[k] -= m[k*n+j] * b[j]
-		}
-		b[k] /= m[k*n+k]
-	}
-	return true
 }

@@ -141,7 +141,7 @@ func (s *search) addDeterminant(x point, q shifted, h *mat.SymDense, grad []floa
 			s.probe.run(z, len(s.recs[i].Y)-s.Lead)
 			up += logDet(s.probe.information(), 1)
 		}
-		if d := scale * (up - s.logDet) / step; bounded(d) {
+		if d := scale * (up - s.logDet) / step; !holdsNonFinite([]float64{d}) {
 			grad[k] += d
 		}
 	}
@@ -177,7 +177,7 @@ func (s *search) columns(q shifted) []column {
 		if k == params && !s.shape.FreeDelay {
 			break
 		}
-		c := column{whole: q.whole, u: inputPowers(nil, q.delta.DB0[k], q.delta.DB1[k])}
+		c := column{whole: q.whole, u: lti.ShiftInput(q.delta.DB0[k], q.delta.DB1[k])}
 		floats.Scale(-1, c.u)
 		if k > s.shape.Zeros && k < params {
 			c.y = lti.Shift(nil, q.delta.DA[k])

@@ -44,7 +44,7 @@ const closest = 1e-6
 // its roots z = 1 + δ that lie outside the unit circle.
 func reflect(c []float64) []float64 {
 	n := len(c) - 1
-	if n == 0 || !bounded(c...) {
+	if n == 0 || holdsNonFinite(c) {
 		return c
 	}
 	asc := make(lti.Poly, n+1)
@@ -110,7 +110,7 @@ func (s *search) minimise(x point, tol float64, limit int) (point, float64, int,
 	step := make([]float64, p)
 	for it := 1; it <= limit; it++ {
 		h, g := s.information(x, q)
-		if !bounded(g...) {
+		if holdsNonFinite(g) {
 			return x, rss, it, false
 		}
 		s.hold(h, g)
@@ -239,14 +239,4 @@ func (s *search) units() []float64 {
 		u = append(u, 1)
 	}
 	return u
-}
-
-// bounded reports whether all of x are finite numbers.
-func bounded(x ...float64) bool {
-	for _, v := range x {
-		if math.IsNaN(v) || math.IsInf(v, 0) {
-			return false
-		}
-	}
-	return true
 }

@@ -51,9 +51,9 @@ func pendulum(seed uint64, n int) (Record, lti.TF) {
 	g := lti.TF{Num: lti.Poly{9}, Den: lti.Poly{-9, 0, 1}}
 	d := lti.SampleDelta(g.Num, g.Den, 0, 0.05)
 	a := lti.Shift(nil, d.A)
-	b := inputPowers(nil, d.B0, d.B1)
+	b := lti.ShiftInput(d.B0, d.B1)
 	z := math.Exp(-0.15)
-	return loopData(seed, n, a, b, []float64{1}, zPoly([]complex128{complex(z, 0), complex(z, 0)}), 0, []float64{22, -18}, 0.02), g
+	return loopData(seed, n, a, b, []float64{1}, delayPoly([]complex128{complex(z, 0), complex(z, 0)}), 0, []float64{22, -18}, 0.02), g
 }
 
 func TestPredictionGradient(t *testing.T) {
@@ -68,7 +68,7 @@ func TestPredictionGradient(t *testing.T) {
 	start := &Prediction{
 		Shape: Shape{Poles: 3, Zeros: 1, Colour: 1, FreeDelay: true},
 		Num:   lti.Poly{9, 0.3}, Den: lti.Poly{-100, -9, 11, 1}, Delay: 0.07,
-		D: []float64{1, -0.9}, C: zPoly([]complex128{0.8, 0.7 + 0.1i, 0.7 - 0.1i, 0.2}),
+		D: []float64{1, -0.9}, C: delayPoly([]complex128{0.8, 0.7 + 0.1i, 0.7 - 0.1i, 0.2}),
 	}
 	s, x := p.begin(start)
 	_, q, ok := s.errorsAt(x)
@@ -144,7 +144,7 @@ func TestRest(t *testing.T) {
 		t.Fatal(err)
 	}
 	z := math.Exp(-0.15)
-	f, err := p.Fit(&Prediction{Shape: Shape{Poles: 2}, Num: g.Num, Den: g.Den, D: []float64{1}, C: zPoly([]complex128{complex(z, 0), complex(z, 0)})}, 1e-10, 50)
+	f, err := p.Fit(&Prediction{Shape: Shape{Poles: 2}, Num: g.Num, Den: g.Den, D: []float64{1}, C: delayPoly([]complex128{complex(z, 0), complex(z, 0)})}, 1e-10, 50)
 	if err != nil {
 		t.Fatal(err)
 	}

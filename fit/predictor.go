@@ -156,7 +156,7 @@ type shifted struct {
 // the delay is out of range.
 func (s *search) sampled(x point) (shifted, bool) {
 	delay := x.tau
-	if !bounded(x.num...) || !bounded(x.den...) || !bounded(x.c...) || !bounded(x.d...) {
+	if holdsNonFinite(x.num) || holdsNonFinite(x.den) || holdsNonFinite(x.c) || holdsNonFinite(x.d) {
 		return shifted{}, false
 	}
 	if !(delay >= s.DelayRange[0]*s.w0-1e-9*s.h && delay <= s.DelayRange[1]*s.w0+1e-9*s.h) {
@@ -165,28 +165,9 @@ func (s *search) sampled(x point) (shifted, bool) {
 	q := shifted{delta: lti.SampleDelta(x.num, x.den, delay, s.h)}
 	q.whole = q.delta.Whole
 	q.a = lti.Shift(nil, q.delta.A)
-	q.b = inputPowers(nil, q.delta.B0, q.delta.B1)
+	q.b = lti.ShiftInput(q.delta.B0, q.delta.B1)
 	q.d, q.c = lti.Shift(nil, x.d), lti.Shift(nil, x.c)
-	return q, bounded(q.a...) && bounded(q.b...)
-}
-
-// inputPowers returns B in powers of q^-1; its first entry is zero.
-func inputPowers(dst, b0, b1 []float64) []float64 {
-	n := len(b0)
-	if dst == nil {
-		dst = make([]float64, n+2)
-	}
-	for i := range dst {
-		dst[i] = 0
-	}
-	var tmp [maxFitPoles]float64
-	for i, v := range lti.Shift(tmp[:n], b0) {
-		dst[i+1] += v
-	}
-	for i, v := range lti.Shift(tmp[:n], b1) {
-		dst[i+2] += v
-	}
-	return dst
+	return q, !holdsNonFinite(q.a) && !holdsNonFinite(q.b)
 }
 
 // errorsAt fills the prediction errors of x into the workspaces, with the

@@ -158,7 +158,7 @@ func (p *Predictor) Start(shape Shape, seed Seed, delay, ratio float64, colour [
 	defer s.done()
 	m := &Prediction{Shape: shape, Num: make(lti.Poly, shape.Zeros+1), Den: den, Delay: delay, Period: p.Period}
 	m.Num[0] = 1
-	m.D = zPoly(colour)
+	m.D = delayPoly(colour)
 	var noise []complex128
 	switch {
 	case ratio > 0 || seed.Noise == nil:
@@ -176,7 +176,7 @@ func (p *Predictor) Start(shape Shape, seed Seed, delay, ratio float64, colour [
 	if len(noise) > shape.Poles+shape.Colour {
 		noise = noise[:shape.Poles+shape.Colour]
 	}
-	m.C = zPoly(noise)
+	m.C = delayPoly(noise)
 	x := s.scaled(m)
 	for i := range x.num {
 		x.num[i] = 0
@@ -206,16 +206,6 @@ func (p *Predictor) Start(shape Shape, seed Seed, delay, ratio float64, colour [
 	return s.result(x, 0, false)
 }
 
-// zPoly returns Π (1 - r z^-1), ascending in z^-1.
-func zPoly(roots []complex128) []float64 {
-	p := lti.FromRoots(roots)
-	out := make([]float64, len(p))
-	for i := range p {
-		out[len(p)-1-i] = p[i]
-	}
-	return out
-}
-
 // whiteNoiseZeros returns the zeros inside the unit circle of the spectral
 // factor of A A* + ratio B B*, B the numerator of 1/den with unit sum of
 // squares like A's.
@@ -228,7 +218,7 @@ func (p *Predictor) whiteNoiseZeros(den lti.Poly, delay, ratio float64) []comple
 	}
 	d := lti.SampleDelta(lti.Poly{1}, scaled, math.Max(0, delay)*w0, p.Period*w0)
 	a := lti.Shift(nil, d.A)
-	b := inputPowers(nil, d.B0, d.B1)[1:]
+	b := lti.ShiftInput(d.B0, d.B1)[1:]
 	norm := func(x []float64) float64 {
 		var s float64
 		for _, v := range x {

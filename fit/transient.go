@@ -90,7 +90,7 @@ func (w *workspace) solveLocal(t0 int) (float64, bool) {
 	if !solveScaled(w.local, h, g, 0) {
 		return 0, false
 	}
-	if w.logDet = logDet(h, 1); !bounded(w.logDet) {
+	if w.logDet = logDet(h, 1); holdsNonFinite([]float64{w.logDet}) {
 		return 0, false
 	}
 	floats.AddScaled(e, -w.local[0], w.step)
@@ -157,7 +157,7 @@ func solveScaled(x []float64, h *mat.SymDense, g []float64, damping float64) boo
 	for i := range x {
 		x[i] = y.AtVec(i) / sd[i]
 	}
-	return bounded(x...)
+	return !holdsNonFinite(x)
 }
 
 // information returns the information matrix of κ and ε_1 … ε_n in units of

@@ -46,7 +46,6 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 		return m, err
 	}
 	m.Noise.SamplePeriod = period
-	m.Evidence.OutsideShare = 0
 	out := outside(exps)
 	m.Evidence.OutsideShare = out.Share
 	if out.Quiet {
@@ -183,35 +182,28 @@ func spreadOver(recs []fit.Record, rows int) []fit.Record {
 }
 
 func (s structure) String() string {
-	words := fmt.Sprintf("%d poles", s.poles)
-	if s.poles == 1 {
-		words = "1 pole"
+	words := counted(s.poles, "pole")
+	if s.integrators > 0 {
+		words += " (" + counted(s.integrators, "integrator") + ")"
 	}
-	switch s.integrators {
-	case 0:
-	case 1:
-		words += " (1 integrator)"
-	default:
-		words += fmt.Sprintf(" (%d integrators)", s.integrators)
-	}
-	switch s.zeros {
-	case 0:
-	case 1:
-		words += ", 1 zero"
-	default:
-		words += fmt.Sprintf(", %d zeros", s.zeros)
+	if s.zeros > 0 {
+		words += ", " + counted(s.zeros, "zero")
 	}
 	if s.delay {
 		words += ", a delay"
 	}
-	switch s.colour {
-	case 0:
-	case 1:
-		words += ", 1 disturbance pole"
-	default:
-		words += fmt.Sprintf(", %d disturbance poles", s.colour)
+	if s.colour > 0 {
+		words += ", " + counted(s.colour, "disturbance pole")
 	}
 	return words
+}
+
+// counted says how many of a thing there are.
+func counted(n int, thing string) string {
+	if n == 1 {
+		return "1 " + thing
+	}
+	return fmt.Sprintf("%d %ss", n, thing)
 }
 
 // lead is the leading numerator coefficient.

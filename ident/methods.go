@@ -83,10 +83,7 @@ func methods(recs []fit.Record, signals [][]float64, f *fit.Prediction, poles []
 			add("long", ns.Poles(), 0, nil)
 		}
 	}
-	if signals != nil && !f.Converged {
-		return list
-	}
-	if signals != nil {
+	if signals != nil && f.Converged {
 		iv, err := fit.Instrument(recs, signals, fit.InstrumentOptions{NA: f.Poles, NB: f.Poles + 1, Delay: 1 + whole, Filter: f.C})
 		switch {
 		case err != nil:

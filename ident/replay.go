@@ -112,14 +112,7 @@ func (f feedback) answer(u, y []float64, k int) float64 {
 func replay(recs []fit.Record, f *fit.Prediction, law feedback, lead int, before [][]float64, draw func(n, k int) float64) ([]fit.Record, bool) {
 	g := lti.SampleDelta(f.Num, f.Den, f.Delay, f.Period)
 	a := []float64(lti.Poly(lti.Shift(nil, g.A)).Mul(f.D))
-	b := make([]float64, g.Poles+2)
-	for i, v := range lti.Shift(nil, g.B0) {
-		b[i+1] += v
-	}
-	for i, v := range lti.Shift(nil, g.B1) {
-		b[i+2] += v
-	}
-	b = []float64(lti.Poly(b).Mul(f.D))
+	b := []float64(lti.Poly(lti.ShiftInput(g.B0, g.B1)).Mul(f.D))
 	out := make([]fit.Record, len(recs))
 	for n, r := range recs {
 		my, mu := mean(r.Y), mean(r.U)

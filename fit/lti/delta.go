@@ -162,6 +162,19 @@ func Shift(dst, coef []float64) []float64 {
 	return dst
 }
 
+// ShiftInput returns the coefficients in powers of q^-1 of the numerator that
+// b0 and b1 make as Delta's B0 and B1 do; the first, of q^0, is zero.
+func ShiftInput(b0, b1 []float64) []float64 {
+	b := make([]float64, len(b0)+2)
+	for i, v := range Shift(nil, b0) {
+		b[i+1] += v
+	}
+	for i, v := range Shift(nil, b1) {
+		b[i+2] += v
+	}
+	return b
+}
+
 // Unshift is the inverse of Shift: from powers of q^-1 to the coefficients of
 // (1-q^-1)^(n-j) q^-j.
 func Unshift(p []float64) []float64 {

@@ -9,15 +9,7 @@ import (
 // zPowers returns the sampled polynomials in powers of q^-1, whole delay left
 // out.
 func zPowers(d Delta) (a, b []float64) {
-	a = Shift(nil, d.A)
-	b = make([]float64, d.Poles+2)
-	for i, v := range Shift(nil, d.B0) {
-		b[i+1] += v
-	}
-	for i, v := range Shift(nil, d.B1) {
-		b[i+2] += v
-	}
-	return a, b
+	return Shift(nil, d.A), ShiftInput(d.B0, d.B1)
 }
 
 // The closed forms are in Åström & Wittenmark, Computer-Controlled Systems,

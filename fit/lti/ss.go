@@ -179,7 +179,7 @@ func (g SS) at(x complex128, shift float64) complex128 {
 		m[i*n+i] = x + complex(shift-raw.Data[i*raw.Stride+i], 0)
 		b[i] = complex(g.B.At(i, 0), 0)
 	}
-	if !solveComplex(m, b) {
+	if !SolveComplex(m, b) {
 		return cmplx.Inf()
 	}
 	for i := range n {
@@ -188,9 +188,9 @@ func (g SS) at(x complex128, shift float64) complex128 {
 	return d
 }
 
-// solveComplex solves m x = b in place (row-major, Gaussian elimination with partial pivoting); gonum has no complex
+// SolveComplex solves m x = b in place (row-major, Gaussian elimination with partial pivoting); gonum has no complex
 // solver. False for an exactly singular matrix.
-func solveComplex(m, b []complex128) bool {
+func SolveComplex(m, b []complex128) bool {
 	n := len(b)
 	for k := range n {
 		p, best := k, 0.0
