@@ -301,7 +301,7 @@ func structures(ranked []*candidate) []Structure {
 		case s.BIC < tie:
 			s.Verdict = "tie: the log does not tell it from the winner"
 		case extra > 0:
-			s.Verdict = fmt.Sprintf("%d more parameters bring a likelihood ratio of only %.1f", extra, -gain)
+			s.Verdict = fmt.Sprintf("%s brought a likelihood ratio of only %.1f", counted(extra, "more parameter"), -gain)
 		default:
 			s.Verdict = fmt.Sprintf("misses a likelihood ratio of %.1f", gain)
 		}
