@@ -10,8 +10,8 @@ import (
 	"os"
 	"slices"
 	"strconv"
+	"strings"
 	"testing"
-	"time"
 
 	"steadyrig/data"
 	"steadyrig/fit"
@@ -84,112 +84,227 @@ func truth(t testing.TB, r demorig.Rig) *fit.Prediction {
 	return m
 }
 
-// bound returns the Cramér-Rao bound of the poles on the log of e, from the
-// information at the truth.
-func bound(t testing.TB, e *data.Experiment, m *fit.Prediction) []Root {
+// bound returns the Cramér-Rao bound on the log of e, with every parameter that
+// the fit m left free: a model of the poles and gains that the truth has and of
+// the deviations that an efficient estimate has.
+func bound(t testing.TB, e *data.Experiment, truth *fit.Prediction, m *Model) *Model {
 	t.Helper()
 	recs, period, err := records([]*data.Experiment{e})
 	if err != nil {
 		t.Fatal(err)
 	}
-	p, err := fit.NewPredictor(recs, period, math.Max(maxDelaySamples*period, m.Delay))
+	p, err := fit.NewPredictor(recs, period, math.Max(maxDelaySamples*period, truth.Delay))
 	if err != nil {
 		t.Fatal(err)
 	}
-	if err := p.Covariance(m); err != nil {
+	at := *truth
+	at.FreeDelay = at.FreeDelay || slices.Contains(m.Plant.Parameters, "delay")
+	at.Integrators = integrators(m)
+	at.Zeros = max(at.Zeros, len(m.Zeros))
+	at.Num = make(lti.Poly, at.Zeros+1) // zeros too many lie at infinity
+	copy(at.Num, truth.Num)
+	if err := p.Covariance(&at); err != nil {
 		t.Fatal(err)
 	}
-	model := &Model{}
-	model.describe(p, m, &data.Rig{})
-	return model.Poles
+	limit := &Model{}
+	limit.describe(p, &at, &data.Rig{})
+	return limit
 }
 
-// tally counts how a rig's fits came out.
-type tally struct {
-	logs, refused, sound, weak int
-	right, exact               int // number of poles; and zeros and delay as well
-	poles                      []poleTally
-	all                        int // logs with every pole inside its interval that holds for all
-	invented                   int // logs with a pole that is called unstable and is not
-	elapsed                    time.Duration
-	notes                      []string
-}
-
-// poleTally is about one true pole, over the logs with the right number.
-type poleTally struct {
-	truth        complex128
-	in           int
-	squares, crb float64 // of the error and of the bound, summed
-	reported     float64 // variance that the fit reports, summed
-}
-
-// study fits logs of a rig, rows long, and compares with the truth.
-func study(t testing.TB, r demorig.Rig, rows int, from, logs uint64) tally {
-	r.Rows = rows
-	true1 := truth(t, r)
-	c := tally{}
-	for _, p := range r.Truth.Den.Roots() {
-		c.poles = append(c.poles, poleTally{truth: p})
+// integrators counts the poles of m that are held at zero.
+func integrators(m *Model) (n int) {
+	for _, p := range m.Poles {
+		if p.Re == 0 && p.Im == 0 {
+			n++
+		}
 	}
-	for seed := from; seed < from+logs; seed++ {
-		e, rig := experiment(t, r, seed)
-		start := time.Now()
-		m, err := Fit(context.Background(), []*data.Experiment{e}, rig, Options{})
-		c.elapsed += time.Since(start)
-		c.logs++
-		note := func(format string, args ...any) {
-			c.notes = append(c.notes, fmt.Sprintf("seed %d: ", seed)+fmt.Sprintf(format, args...))
+	return n
+}
+
+// outcome is what one log says about one true number.
+type outcome struct {
+	in, matched  bool
+	squares, crb float64 // of the error and of the bound
+	reported     float64 // variance that the fit reports
+}
+
+// trial is the fit of one log beside the truth.
+type trial struct {
+	refused, sound, right, exact, all, invented, memories bool
+	numbers                                               []outcome // each pole; gain; delay where there is one
+	tells                                                 bool      // every bound is under a third of its pole's modulus
+	note                                                  string
+}
+
+// one fits one log.
+func one(t testing.TB, r demorig.Rig, truth *fit.Prediction, seed uint64) (c trial) {
+	e, rig := experiment(t, r, seed)
+	m, err := Fit(context.Background(), []*data.Experiment{e}, rig, Options{Seed: seed, Workers: 1})
+	note := func(format string, args ...any) { c.note += fmt.Sprintf("; "+format, args...) }
+	poles := sorted(r.Truth.Den.Roots())
+	c.numbers = make([]outcome, len(poles)+1)
+	if truth.FreeDelay {
+		c.numbers = append(c.numbers, outcome{})
+	}
+	var refused *RefusedError
+	if errors.As(err, &refused) {
+		c.refused = true
+		note("refused: %v", err)
+		if len(m.Poles) == 0 {
+			return c
 		}
-		var refused *RefusedError
-		if errors.As(err, &refused) {
-			c.refused++
-			note("refused: %v", err)
-			continue
-		} else if err != nil {
-			t.Fatal(err)
+	} else if err != nil {
+		t.Fatal(err)
+	}
+	c.sound = m.Verdict == Sound
+	c.memories = m.Evidence.Memories >= soundMemories
+	if !c.sound {
+		note("weak: %q", m.Warnings)
+	}
+	for _, p := range m.Poles {
+		if p.ProbabilityUnstable > 0.975 && !slices.ContainsFunc(poles, func(q complex128) bool {
+			return real(q) > 0 && cmplx.Abs(q-complex(p.Re, p.Im)) < 0.5*cmplx.Abs(q)
+		}) {
+			c.invented = true
+			note("unstable pole at %.3g%+.3gi", p.Re, p.Im)
 		}
-		if m.Verdict == Sound {
-			c.sound++
-		} else {
-			c.weak++
-			note("weak: %q", m.Warnings)
+	}
+	c.right = len(m.Poles) == len(poles)
+	delay := slices.Index(m.Plant.Parameters, "delay")
+	c.exact = c.right && len(m.Zeros) == r.Truth.Num.Degree() && (delay >= 0) == truth.FreeDelay
+	if !c.exact {
+		note("%d poles, %d zeros, delay %.3g", len(m.Poles), len(m.Zeros), m.Plant.Delay)
+	}
+	c.all = c.right
+	c.tells = true
+	like := m
+	if !c.right {
+		like = &Model{}
+	}
+	limit := bound(t, e, truth, like)
+	for i, p := range poles {
+		o := &c.numbers[i]
+		l := limit.Poles[i]
+		c.tells = c.tells && 3*math.Hypot(l.ReSD, l.ImSD) < cmplx.Abs(p)+1e-300 || p == 0
+		q := Root{Re95: Interval{1, 0}, Re95All: Interval{1, 0}}
+		if c.right {
+			q = m.Poles[i]
+			o.matched, o.squares, o.crb, o.reported = true, math.Pow(q.Re-real(p), 2), l.ReSD*l.ReSD, q.ReSD*q.ReSD
+		} else if len(m.Poles) > 0 { // the nearest
+			q = slices.MinFunc(m.Poles, func(a, b Root) int {
+				return cmp.Compare(cmplx.Abs(complex(a.Re, a.Im)-p), cmplx.Abs(complex(b.Re, b.Im)-p))
+			})
 		}
-		for _, p := range m.Poles {
-			if p.ProbabilityUnstable > 0.975 && !slices.ContainsFunc(c.poles, func(q poleTally) bool {
-				return real(q.truth) > 0 && cmplx.Abs(q.truth-complex(p.Re, p.Im)) < 0.5*cmplx.Abs(q.truth)
-			}) {
-				c.invented++
-				note("unstable pole at %.3g%+.3gi", p.Re, p.Im)
-			}
+		o.in = q.Re95.Contains(real(p)) && (imag(p) == 0 || q.Im95.Contains(imag(p)))
+		c.all = c.all && q.Re95All.Contains(real(p)) && q.Im95All.Contains(imag(p))
+	}
+	o := &c.numbers[len(poles)]
+	est, crb, true1 := m.Gain.DC, limit.Gain.DC, 0.0
+	if r.Truth.Den[0] != 0 {
+		true1 = r.Truth.Num[0] / r.Truth.Den[0]
+	} else {
+		est, crb, true1 = m.Gain.HighFrequency, limit.Gain.HighFrequency, r.Truth.Num[len(r.Truth.Num)-1]
+		if !c.right || len(m.Zeros) != r.Truth.Num.Degree() {
+			est = nil
 		}
-		if len(m.Poles) != len(c.poles) {
-			note("%d poles, %d zeros, delay %.3g", len(m.Poles), len(m.Zeros), m.Plant.Delay)
-			continue
+	}
+	if est != nil {
+		o.in = est.Interval95.Contains(true1)
+		if crb != nil && c.right {
+			o.matched, o.squares, o.crb, o.reported = true, math.Pow(est.Value-true1, 2), crb.SD*crb.SD, est.SD*est.SD
 		}
-		c.right++
-		hasDelay := len(m.Plant.Parameters) == len(m.Plant.Numerator)+len(m.Plant.Denominator)
-		if len(m.Zeros) == r.Truth.Num.Degree() && hasDelay == (r.Truth.Delay > 0) {
-			c.exact++
-		} else {
-			note("%d zeros, delay %.3g", len(m.Zeros), m.Plant.Delay)
-		}
-		limit := bound(t, e, true1)
-		all := true
-		for i := range c.poles {
-			p, q := &c.poles[i], m.Poles[i]
-			if q.Re95.Contains(real(p.truth)) && (imag(p.truth) == 0 || q.Im95.Contains(imag(p.truth))) {
-				p.in++
-			}
-			all = all && q.Re95All.Contains(real(p.truth)) && q.Im95All.Contains(imag(p.truth))
-			p.squares += math.Pow(q.Re-real(p.truth), 2)
-			p.crb += limit[i].ReSD * limit[i].ReSD
-			p.reported += q.ReSD * q.ReSD
-		}
-		if all {
-			c.all++
+	}
+	if truth.FreeDelay && delay >= 0 {
+		o := &c.numbers[len(poles)+1]
+		v, d := m.Plant.Covariance[delay][delay], m.Plant.Delay-truth.Delay
+		o.in = math.Abs(d) <= z95*math.Sqrt(v)
+		if c.right {
+			o.matched, o.squares, o.reported = true, d*d, v
+			o.crb = limit.Plant.Covariance[len(limit.Plant.Covariance)-1][len(limit.Plant.Covariance)-1]
 		}
 	}
 	return c
+}
+
+// sorted orders roots as a model lists them.
+func sorted(r []complex128) []complex128 {
+	slices.SortFunc(r, func(a, b complex128) int { return cmp.Or(cmp.Compare(real(a), real(b)), cmp.Compare(imag(a), imag(b))) })
+	return r
+}
+
+// tally sums the trials of one rig.
+type tally struct {
+	rig                                                           demorig.Rig
+	logs, refused, sound, soundShort, right, exact, all, invented int
+	tells, rightTold                                              int
+	names                                                         []string
+	matched, in                                                   []int
+	squares, crb, reported                                        []float64
+}
+
+// study fits logs of a rig, two at a time, and compares with the truth.
+func study(t testing.TB, r demorig.Rig, from uint64, logs int) (*tally, []trial) {
+	truth := truth(t, r)
+	trials := make([]trial, logs)
+	if err := Each(context.Background(), logs, 0, func(i int) error {
+		trials[i] = one(t, r, truth, from+uint64(i))
+		return nil
+	}); err != nil {
+		t.Fatal(err)
+	}
+	c := &tally{rig: r, logs: logs}
+	for _, p := range sorted(r.Truth.Den.Roots()) {
+		c.names = append(c.names, fmt.Sprintf("%.3g", p))
+		if imag(p) == 0 {
+			c.names[len(c.names)-1] = fmt.Sprintf("%.3g", real(p))
+		}
+	}
+	c.names = append(c.names, "gain")
+	if truth.FreeDelay {
+		c.names = append(c.names, "delay")
+	}
+	n := len(c.names)
+	c.matched, c.in = make([]int, n), make([]int, n)
+	c.squares, c.crb, c.reported = make([]float64, n), make([]float64, n), make([]float64, n)
+	count := func(n *int, yes bool) {
+		if yes {
+			*n++
+		}
+	}
+	for _, k := range trials {
+		count(&c.refused, k.refused)
+		count(&c.sound, k.sound)
+		count(&c.soundShort, k.sound && !k.memories)
+		count(&c.right, k.right)
+		count(&c.exact, k.exact)
+		count(&c.all, k.all)
+		count(&c.invented, k.invented)
+		count(&c.tells, k.tells)
+		count(&c.rightTold, k.tells && k.right)
+		for i, o := range k.numbers {
+			count(&c.in[i], o.in)
+			count(&c.matched[i], o.matched)
+			c.squares[i] += o.squares
+			c.crb[i] += o.crb
+			c.reported[i] += o.reported
+		}
+	}
+	return c, trials
+}
+
+// row is the tally's line of the table.
+func (c *tally) row() string {
+	var ratio, in []string
+	for i, name := range c.names {
+		v := "-"
+		if c.crb[i] > 0 {
+			v = fmt.Sprintf("%.2f", math.Sqrt(c.squares[i]/c.crb[i]))
+		}
+		ratio = append(ratio, name+": "+v)
+		in = append(in, fmt.Sprintf("%s: %d", name, c.in[i]))
+	}
+	return fmt.Sprintf("| %s | %d | %d | %d (%d of %d) | %d | %s | %s | %d | %d | %d | %d | %d |",
+		c.rig.Name, c.rig.Rows, c.logs, c.right, c.rightTold, c.tells, c.exact, strings.Join(ratio, ", "), strings.Join(in, ", "), c.all, c.sound, c.soundShort, c.refused, c.invented)
 }
 
 // TestStudyOfDemoRigs counts how often structure and intervals are right.
@@ -206,41 +321,44 @@ func TestStudyOfDemoRigs(t *testing.T) {
 	if v := os.Getenv("STEADYRIG_ROWS"); v != "" {
 		rows, _ = strconv.Atoi(v)
 	}
-	var total tally
+	var all, right, whole, invented, inside, intervals int
+	t.Log("| rig | rows | logs | poles right (where the log can tell) | structure right | error over bound | inside their 95 % intervals | all poles at once | sound | sound though short | refused | unstable pole invented |")
 	for _, r := range demorig.All() {
 		if name := os.Getenv("STEADYRIG_RIG"); name != "" && name != r.Name {
 			continue
 		}
-		length := r.Rows
 		if rows > 0 {
-			length = rows
+			r.Rows = rows
 		}
-		c := study(t, r, length, 1000, uint64(logs))
-		line := fmt.Sprintf("%-8s %d rows, %d logs: poles right %d, structure right %d, all poles inside at once %d, invented %d, sound %d, weak %d, refused %d, %v a log; error over bound, coverage (reported deviation over bound)",
-			r.Name, length, c.logs, c.right, c.exact, c.all, c.invented, c.sound, c.weak, c.refused, (c.elapsed / time.Duration(c.logs)).Round(time.Millisecond))
-		for _, p := range c.poles {
-			line += fmt.Sprintf("; %.4g: %.2f, %d (deviations %.2f)", p.truth, math.Sqrt(p.squares/p.crb), p.in, math.Sqrt(p.reported/p.crb))
+		c, trials := study(t, r, 1000, logs)
+		t.Log(c.row())
+		for i, k := range trials {
+			if k.note != "" {
+				t.Logf("    seed %d%s", 1000+i, k.note)
+			}
 		}
-		t.Log(line)
-		for _, w := range c.notes {
-			t.Log("   ", w)
+		all += c.logs
+		right += c.right
+		whole += c.all
+		invented += c.invented
+		for i, n := range c.in {
+			if c.crb[i] > 0 {
+				inside, intervals = inside+n, intervals+c.logs
+			}
 		}
-		total.logs += c.logs
-		total.right += c.right
-		total.all += c.all
-		total.invented += c.invented
 	}
+	t.Logf("pooled: %d of %d intervals hold the truth, %.1f %%", inside, intervals, 100*float64(inside)/float64(intervals))
 	// At most one log in 25 may have the wrong number of poles. Intervals that
 	// hold all poles at once in 95 of 100 logs hold them in fewer than this, 3.3
 	// deviations below, once in two thousand studies.
-	n := float64(total.logs)
-	if least := total.logs - max(1, total.logs/25); total.right < least {
-		t.Errorf("number of poles right in %d of %d logs, want %d", total.right, total.logs, least)
+	n := float64(all)
+	if least := all - max(1, all/25); right < least {
+		t.Errorf("number of poles right in %d of %d logs, want %d", right, all, least)
 	}
-	if least := int(0.95*n - 3.3*math.Sqrt(0.95*0.05*n)); total.all < least {
-		t.Errorf("all poles inside their intervals in %d of %d logs, want %d", total.all, total.logs, least)
+	if least := int(0.95*n - 3.3*math.Sqrt(0.95*0.05*n)); whole < least {
+		t.Errorf("all poles inside their intervals in %d of %d logs, want %d", whole, all, least)
 	}
-	if total.invented > total.logs/100 {
-		t.Errorf("%d unstable poles invented in %d logs", total.invented, total.logs)
+	if invented > all/100 {
+		t.Errorf("%d unstable poles invented in %d logs", invented, all)
 	}
 }
