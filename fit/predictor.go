@@ -104,8 +104,7 @@ type search struct {
 	w0, h float64 // rad/s; scaled period
 	work  []workspace
 
-	rss, logDet float64   // parts of the objective at the last point looked at
-	probe       transient // for differences
+	rss, logDet float64 // parts of the objective at the last point looked at
 }
 
 // workspace holds the signals of one record; each starts with pad zeros.
@@ -199,7 +198,7 @@ func (s *search) errorsAt(x point) (float64, shifted, bool) {
 		}
 		divide(w.e, w.e, q.c, t0)
 		w.run(q.c, len(w.e)-t0)
-		rss, ok := w.solveLocal(t0)
+		rss, ok := w.solveLocal(x.c, t0)
 		if !ok || !(rss < math.Inf(1)) {
 			return math.Inf(1), q, false
 		}
@@ -213,9 +212,7 @@ func (s *search) errorsAt(x point) (float64, shifted, bool) {
 // Where k runs past the end of x (a negative delay) the last value stands.
 func fir(dst, x, coef []float64, from int, f float64, add bool) {
 	if !add {
-		for k := range dst {
-			dst[k] = 0
-		}
+		clear(dst)
 	}
 	for i, c := range coef {
 		if c == 0 {
@@ -263,14 +260,41 @@ func divide(dst, src, c []float64, from int) {
 		}
 	default:
 		n := len(c) - 1
+		if n > divideTaps {
+			divideLong(dst, src, c, from)
+			return
+		}
+		// What is known earliest comes first: a row then waits for the last
+		// product alone.
+		var t [divideTaps + 1]float64
+		copy(t[:], c)
+		c1, c2, c3, c4, c5, c6 := t[1], t[2], t[3], t[4], t[5], t[6]
+		var q [divideTaps]float64
+		for i := range n {
+			q[i] = dst[from-1-i]
+		}
+		p1, p2, p3, p4, p5, p6 := q[0], q[1], q[2], q[3], q[4], q[5]
 		for k := from; k < len(src); k++ {
-			v := src[k]
-			past := dst[k-n : k]
-			for i := n; i >= 1; i-- {
-				v -= c[i] * past[n-i]
-			}
+			v := (((src[k] - c6*p6) - (c5*p5 + c4*p4)) - (c3*p3 + c2*p2)) - c1*p1
+			p6, p5, p4, p3, p2, p1 = p5, p4, p3, p2, p1, v
 			dst[k] = v
 		}
+	}
+}
+
+// divideTaps is the degree up to which divide keeps its past in registers.
+const divideTaps = 6
+
+// divideLong is divide for any degree.
+func divideLong(dst, src, c []float64, from int) {
+	n := len(c) - 1
+	for k := from; k < len(src); k++ {
+		v := src[k]
+		past := dst[k-n : k]
+		for i := n; i >= 1; i-- {
+			v -= c[i] * past[n-i]
+		}
+		dst[k] = v
 	}
 }
 

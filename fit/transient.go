@@ -3,6 +3,7 @@ package fit
 import (
 	"errors"
 	"math"
+	"math/bits"
 
 	"gonum.org/v1/gonum/floats"
 	"gonum.org/v1/gonum/mat"
@@ -14,68 +15,173 @@ type transient struct {
 	step    []float64
 	free    [][]float64
 	settled int // rows after which S is constant and G vanishes
+	pulse   []float64
 }
 
-// run fills the responses over rows rows.
+// settleBlock is after how many rows each it is asked whether responses have
+// settled.
+const settleBlock = 128
+
+// run fills the responses over rows rows: from the response g to a pulse S is
+// its sum and G_i, of i = n-1 … 0, is -c_{i+1} g plus G_{i+1} a row later.
 func (r *transient) run(c []float64, rows int) {
 	n := len(c) - 1
+	const past = maxNoise // rows before the pulse
 	final := 1 / sum(c)
-	if cap(r.step) < rows {
-		r.step = make([]float64, rows)
+	grow := func(x []float64, n int) []float64 {
+		if cap(x) < n {
+			return make([]float64, n)
+		}
+		return x[:n]
 	}
-	r.step = r.step[:rows]
+	r.step = grow(r.step, rows)
+	r.pulse = grow(r.pulse, past+rows)
 	for len(r.free) < n {
 		r.free = append(r.free, nil)
 	}
 	r.free = r.free[:n]
-	for i := range r.free {
-		if cap(r.free[i]) < rows {
-			r.free[i] = make([]float64, rows)
+	clear(r.pulse[:past])
+	g := r.pulse[past:]
+	last := 0.0 // of S
+	r.settled = 0
+	for settled := false; r.settled < rows && !settled; {
+		from, to := r.settled, min(rows, r.settled+settleBlock)
+		clear(g[from:to])
+		if from == 0 {
+			g[0] = 1
 		}
-		r.free[i] = r.free[i][:rows]
-	}
-	r.settled = rows
-	scale := math.Abs(final)
-	quiet := 0
-	for k := range rows {
-		v := 1.0
-		for j := 1; j <= n && j <= k; j++ {
-			v -= c[j] * r.step[k-j]
+		divide(r.pulse[:past+to], r.pulse[:past+to], c, past+from)
+		for k := from; k < to; k++ {
+			last += g[k]
+			r.step[k] = last
 		}
-		r.step[k] = v
-		big := math.Abs(v-final) > 1e-11*scale
-		for i := range n {
-			var g float64
-			for j := 1; j <= n; j++ {
-				switch {
-				case k-j >= 0:
-					g -= c[j] * r.free[i][k-j]
-				case j-k == i+1:
-					g -= c[j]
-				}
-			}
-			r.free[i][k] = g
-			big = big || math.Abs(g) > 1e-11
-		}
-		if big {
-			quiet = 0
-		} else if quiet++; quiet > n {
-			r.settled = k
-			break
+		r.settled, settled = to, true
+		for k := max(0, to-n-1); k < to; k++ {
+			settled = settled && math.Abs(r.step[k]-final) <= 1e-11*math.Abs(final) && math.Abs(g[k]) <= 1e-11
 		}
 	}
 	for k := r.settled; k < rows; k++ {
 		r.step[k] = final
 	}
-	for i := range n {
-		clear(r.free[i][r.settled:])
+	for i := n - 1; i >= 0; i-- {
+		r.free[i] = grow(r.free[i], rows)
+		out := r.free[i]
+		floats.ScaleTo(out[:r.settled], -c[i+1], g[:r.settled])
+		if i < n-1 && r.settled > 0 {
+			floats.Add(out[1:r.settled], r.free[i+1][:r.settled-1])
+		}
+		clear(out[r.settled:])
 	}
+}
+
+// maxNoise is the largest degree of C.
+const maxNoise = maxFitPoles + maxColour
+
+// square is a matrix of side 1 + deg C at most, row by row.
+type square [(maxNoise + 1) * (maxNoise + 1)]float64
+
+// gram returns the information matrix of κ and ε_1 … ε_n over rows rows, in
+// units of the error's variance, the prior of ε included: the sum over rows of
+// the squares of (-S, G) plus one for each ε. c is in powers of δ.
+//
+// The state of 1/C, s_j = (1-q^-1)^(n-j) e_{k-j}, moves by
+// s_1' = s_1 - Σ c_j s_j + κ and s_j' = s_j + s_{j-1}, and its last entry is
+// e_{k-n}, so that the sum of that over n more rows holds the ε themselves. The
+// sum over 2k rows is that over k plus as much again seen through F^k: as many
+// steps as the number of rows has digits. F^k - 1 is what is carried, since
+// slow zeros leave little else than 1 in F.
+func gram(c []float64, rows int) *mat.SymDense {
+	n := len(c) - 1
+	m := n + 1
+	var f, p, w square // F - 1, F^k - 1, the sum; state -κ, s_1 … s_n
+	if n > 0 {
+		f[m] = -1
+		for j := 1; j <= n; j++ {
+			f[m+j] = -c[j]
+		}
+	}
+	for i := 2; i < m; i++ {
+		f[i*m+i-1] = 1
+	}
+	after := func(a, b *square) (out square) { // (1 + a)(1 + b) - 1
+		for i := range m * m {
+			out[i] = a[i] + b[i]
+		}
+		for i := range m {
+			for k := range m {
+				if v := a[i*m+k]; v != 0 {
+					for j := range m {
+						out[i*m+j] += v * b[k*m+j]
+					}
+				}
+			}
+		}
+		return out
+	}
+	for bit := bits.Len(uint(rows+n)) - 1; bit >= 0; bit-- {
+		// w += (1 + p)' w (1 + p)
+		var wp square
+		for i := range m {
+			for k := range m {
+				wp[i*m+k] += w[i*m+k]
+				for j := range m {
+					wp[i*m+j] += w[i*m+k] * p[k*m+j]
+				}
+			}
+		}
+		for i := range m * m {
+			w[i] += wp[i]
+		}
+		for k := range m {
+			for i := range m {
+				for j := range m {
+					w[i*m+j] += p[k*m+i] * wp[k*m+j]
+				}
+			}
+		}
+		p = after(&p, &p)
+		if (rows+n)>>bit&1 == 0 {
+			continue
+		}
+		var row [maxNoise + 1]float64 // of F^k, that of the last entry
+		copy(row[:m], p[(m-1)*m:m*m])
+		row[m-1]++
+		for i := range m {
+			for j := range m {
+				w[i*m+j] += row[i] * row[j]
+			}
+		}
+		p = after(&p, &f)
+	}
+	// From s to ε: s_j = Σ_i (-1)^i (n-j over i) ε_{j+i}.
+	var t square
+	t[0] = 1
+	for j := 1; j <= n; j++ {
+		v := 1.0
+		for i := 0; j+i <= n; i++ {
+			t[j*m+j+i] = v
+			v *= -float64(n-j-i) / float64(i+1)
+		}
+	}
+	out := mat.NewSymDense(m, nil)
+	for a := range m {
+		for b := a; b < m; b++ {
+			var v float64
+			for i := range m {
+				for j := range m {
+					v += t[i*m+a] * w[i*m+j] * t[j*m+b]
+				}
+			}
+			out.SetSym(a, b, v)
+		}
+	}
+	return out
 }
 
 // solveLocal finds κ and ε of a record by linear least squares, applies them
 // to its errors and returns their sum of squares, prior included.
-func (w *workspace) solveLocal(t0 int) (float64, bool) {
-	h := w.information()
+func (w *workspace) solveLocal(c []float64, t0 int) (float64, bool) {
+	h := gram(c, len(w.e)-t0)
 	q := h.SymmetricDim()
 	if cap(w.local) < q {
 		w.local = make([]float64, q)
@@ -158,24 +264,4 @@ func solveScaled(x []float64, h *mat.SymDense, g []float64, damping float64) boo
 		x[i] = y.AtVec(i) / sd[i]
 	}
 	return !holdsNonFinite(x)
-}
-
-// information returns the information matrix of κ and ε_1 … ε_n in units of
-// the error's variance, the prior of ε included.
-func (r *transient) information() *mat.SymDense {
-	q := len(r.free) + 1
-	h := mat.NewSymDense(q, nil)
-	h.SetSym(0, 0, floats.Dot(r.step, r.step))
-	for i := 1; i < q; i++ {
-		gi := r.free[i-1][:r.settled]
-		h.SetSym(0, i, -floats.Dot(gi, r.step[:r.settled]))
-		for j := i; j < q; j++ {
-			v := floats.Dot(gi, r.free[j-1][:r.settled])
-			if i == j {
-				v++
-			}
-			h.SetSym(i, j, v)
-		}
-	}
-	return h
 }
