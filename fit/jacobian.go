@@ -14,25 +14,35 @@ const chunk = 1024
 
 // information returns J'J and J'e over the shared parameters at x, whose
 // errors are in the workspaces, with each record's own unknowns eliminated.
+func (s *search) information(x point, q shifted) (*mat.SymDense, []float64) {
+	q.delta = lti.SampleDelta(x.num, x.den, x.tau, s.h)
+	h, grad := s.normal(q, s.shape.size())
+	s.addDeterminant(x, h, grad)
+	return h, grad
+}
+
+// normal returns J'J and J'e over the first p shared parameters by the sum of
+// squares alone.
 //
 // A column of J is the derivative of the equation error filtered by 1/C from
 // rest at the first equation. Lagged copies of one filtered signal differ from
 // that by a free response of 1/C only, which is taken off.
-func (s *search) information(x point, q shifted) (*mat.SymDense, []float64) {
-	p := s.shape.size()
+func (s *search) normal(q shifted, p int) (*mat.SymDense, []float64) {
 	h := mat.NewSymDense(p, nil)
 	grad := make([]float64, p)
-	cols := s.columns(q)
+	cols := s.columns(q)[:p]
+	nc := len(q.c) - 1
+	all := p + nc + 1
+	if len(s.buf) < p*chunk {
+		s.buf = make([]float64, p*chunk)
+	}
+	jj, je, past := make([]float64, all*all), make([]float64, all), make([]float64, p*nc)
 	for i := range s.work {
 		w := &s.work[i]
 		t0 := s.pad + s.Lead
 		s.filtered(w, q, t0)
-		nc := len(q.c) - 1
-		all := p + nc + 1
-		jj := make([]float64, all*all)
-		je := make([]float64, all)
-		buf := make([]float64, p*chunk)
-		past := make([]float64, p*nc)
+		clear(jj)
+		clear(je)
 		for k := range p {
 			for i := 1; i <= nc; i++ {
 				var v [1]float64
@@ -43,26 +53,21 @@ func (s *search) information(x point, q shifted) (*mat.SymDense, []float64) {
 		rows := len(w.e) - t0
 		for from := 0; from < rows; from += chunk {
 			m := min(chunk, rows-from)
-			moving := min(max(w.settled-from, 0), m)
 			col := func(k int) []float64 {
 				switch {
 				case k < p:
-					return buf[k*chunk : k*chunk+m]
+					return s.buf[k*chunk : k*chunk+m]
 				case k == p:
 					return w.step[from : from+m]
 				}
 				return w.free[k-p-1][from : from+m]
 			}
 			for k := range p {
-				out := col(k)
-				cols[k].at(out, w, t0+from)
-				for i := range nc {
-					floats.AddScaled(out[:moving], -past[k*nc+i], w.free[i][from:from+moving])
-				}
+				cols[k].at(col(k), w, t0+from)
 			}
 			e := w.e[t0+from : t0+from+m]
 			live := all
-			if moving == 0 {
+			if from >= w.settled {
 				live = p + 1
 			}
 			for k := range live {
@@ -70,6 +75,26 @@ func (s *search) information(x point, q shifted) (*mat.SymDense, []float64) {
 				je[k] += floats.Dot(ck, e)
 				for l := k; l < live; l++ {
 					jj[k*all+l] += floats.Dot(ck, col(l))
+				}
+			}
+		}
+		// Take off the free responses.
+		for k := range all {
+			for l := range k {
+				jj[k*all+l] = jj[l*all+k]
+			}
+		}
+		for k := range p {
+			for i := range nc {
+				f := past[k*nc+i]
+				floats.AddScaled(jj[k*all:(k+1)*all], -f, jj[(p+1+i)*all:(p+2+i)*all])
+				je[k] -= f * je[p+1+i]
+			}
+		}
+		for l := range p {
+			for i := range nc {
+				for k := range p {
+					jj[k*all+l] -= past[l*nc+i] * jj[k*all+p+1+i]
 				}
 			}
 		}
@@ -115,7 +140,6 @@ func (s *search) information(x point, q shifted) (*mat.SymDense, []float64) {
 			}
 		}
 	}
-	s.addDeterminant(x, q, h, grad)
 	return h, grad
 }
 
@@ -123,8 +147,8 @@ func (s *search) information(x point, q shifted) (*mat.SymDense, []float64) {
 // depends on C alone, to the gradient: the objective's own, but for its
 // positive factor. Differences over a thousandth of a deviation are good
 // enough for a term that vanishes as the log grows.
-func (s *search) addDeterminant(x point, q shifted, h *mat.SymDense, grad []float64) {
-	nc := len(q.c) - 1
+func (s *search) addDeterminant(x point, h *mat.SymDense, grad []float64) {
+	nc := len(x.c) - 1
 	first := len(grad) - nc
 	scale := s.rss / (2 * float64(s.rows))
 	for j := 1; j <= nc; j++ {
@@ -135,9 +159,12 @@ func (s *search) addDeterminant(x point, q shifted, h *mat.SymDense, grad []floa
 		}
 		c := append([]float64(nil), x.c...)
 		c[j] += step
-		var up float64
-		for i := range s.recs {
-			up += logDet(gram(c, len(s.recs[i].Y)-s.Lead), 1)
+		var up, last float64
+		for i, r := range s.recs {
+			if i == 0 || len(r.Y) != len(s.recs[i-1].Y) {
+				last = logDet(gram(c, len(r.Y)-s.Lead), 1)
+			}
+			up += last
 		}
 		if d := scale * (up - s.logDet) / step; !holdsNonFinite([]float64{d}) {
 			grad[k] += d
@@ -167,11 +194,11 @@ func (c *column) at(dst []float64, w *workspace, from int) {
 }
 
 // columns lists the derivatives in the order b_0 … b_m, a_1 … a_n, delay,
-// D, C.
+// D, C; without the slopes of q the first of them only are right.
 func (s *search) columns(q shifted) []column {
 	var cols []column
 	params := s.shape.Zeros + 1 + s.shape.Poles
-	for k := range params + 1 {
+	for k := range q.delta.DB0 {
 		if k == params && !s.shape.FreeDelay {
 			break
 		}

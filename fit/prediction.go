@@ -83,7 +83,7 @@ func (p *Prediction) Objective() float64 { return p.RSS * math.Exp(p.LogDet/floa
 
 // H returns the noise shape C/(A D), as y = G u + H e.
 func (p *Prediction) H() lti.DTF {
-	d := lti.SampleDelta(p.Num, p.Den, p.Delay, p.Period)
+	d := lti.SampleDeltaValues(p.Num, p.Den, p.Delay, p.Period)
 	return lti.DTF{Num: append(lti.Poly(nil), p.C...), Den: lti.Poly(lti.Shift(nil, d.A)).Mul(p.D), Period: p.Period}
 }
 

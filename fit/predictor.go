@@ -6,6 +6,7 @@ import (
 	"sync"
 
 	"gonum.org/v1/gonum/floats"
+	"gonum.org/v1/gonum/mat"
 
 	"steadyrig/fit/lti"
 )
@@ -103,6 +104,7 @@ type search struct {
 	shape Shape
 	w0, h float64 // rad/s; scaled period
 	work  []workspace
+	buf   []float64 // a chunk of the Jacobian
 
 	rss, logDet float64 // parts of the objective at the last point looked at
 }
@@ -115,8 +117,7 @@ type workspace struct {
 	vf, ef     []float64 // (A y - B u) / C, e / C
 	dy, du, av []float64
 	transient
-	logDet float64   // of I + G'G
-	local  []float64 // κ, ε_1 … ε_nC
+	local []float64 // κ, ε_1 … ε_nC
 }
 
 func (p *Predictor) newSearch(shape Shape, w0 float64) *search {
@@ -161,7 +162,7 @@ func (s *search) sampled(x point) (shifted, bool) {
 	if !(delay >= s.DelayRange[0]*s.w0-1e-9*s.h && delay <= s.DelayRange[1]*s.w0+1e-9*s.h) {
 		return shifted{}, false
 	}
-	q := shifted{delta: lti.SampleDelta(x.num, x.den, delay, s.h)}
+	q := shifted{delta: lti.SampleDeltaValues(x.num, x.den, delay, s.h)}
 	q.whole = q.delta.Whole
 	q.a = lti.Shift(nil, q.delta.A)
 	q.b = lti.ShiftInput(q.delta.B0, q.delta.B1)
@@ -188,8 +189,16 @@ func (s *search) errorsAt(x point) (float64, shifted, bool) {
 	ad := lti.Poly(q.a).Mul(q.d)
 	bd := lti.Poly(q.b).Mul(q.d)
 	s.rss, s.logDet = 0, 0
+	var h *mat.SymDense // of the start, the same for records of a length
+	var det float64
 	for i := range s.work {
 		w := &s.work[i]
+		if i == 0 || len(w.e) != len(s.work[i-1].e) {
+			h = gram(x.c, len(w.e)-s.pad-s.Lead)
+			if det = logDet(h, 1); holdsNonFinite([]float64{det}) {
+				return math.Inf(1), q, false
+			}
+		}
 		t0 := s.pad + s.Lead
 		fir(w.e[t0:], w.y, ad, t0, 1, false)
 		fir(w.e[t0:], w.u, bd, t0-q.whole, -1, true)
@@ -198,12 +207,12 @@ func (s *search) errorsAt(x point) (float64, shifted, bool) {
 		}
 		divide(w.e, w.e, q.c, t0)
 		w.run(q.c, len(w.e)-t0)
-		rss, ok := w.solveLocal(x.c, t0)
+		rss, ok := w.solveLocal(h, t0)
 		if !ok || !(rss < math.Inf(1)) {
 			return math.Inf(1), q, false
 		}
 		s.rss += rss
-		s.logDet += w.logDet
+		s.logDet += det
 	}
 	return s.rss * math.Exp(s.logDet/float64(s.rows)), q, true
 }
@@ -302,7 +311,7 @@ func divideLong(dst, src, c []float64, from int) {
 // with the output at y, by the constant of the given record. It is not finite
 // for a plant with a zero at the origin.
 func (p *Predictor) Rest(m *Prediction, record int, y float64) float64 {
-	d := lti.SampleDelta(m.Num, m.Den, m.Delay, m.Period)
+	d := lti.SampleDeltaValues(m.Num, m.Den, m.Delay, m.Period)
 	n := d.Poles
 	colour := sum(m.D)
 	// At rest only the last power of δ counts.

@@ -186,15 +186,9 @@ func (p *Predictor) Start(shape Shape, seed Seed, delay, ratio float64, colour [
 	if !ok {
 		return nil
 	}
-	h, g := s.information(x, q)
-	hb := mat.NewSymDense(shape.Zeros+1, nil)
-	for i := range shape.Zeros + 1 {
-		for j := i; j <= shape.Zeros; j++ {
-			hb.SetSym(i, j, h.At(i, j))
-		}
-	}
+	h, g := s.normal(q, shape.Zeros+1)
 	b := make([]float64, shape.Zeros+1)
-	if !solveScaled(b, hb, g[:shape.Zeros+1], 1e-12) {
+	if !solveScaled(b, h, g, 1e-12) {
 		return nil
 	}
 	for i := range b {
@@ -216,7 +210,7 @@ func (p *Predictor) whiteNoiseZeros(den lti.Poly, delay, ratio float64) []comple
 	for i := range scaled {
 		scaled[i] = den[i] * math.Pow(w0, float64(i-n))
 	}
-	d := lti.SampleDelta(lti.Poly{1}, scaled, math.Max(0, delay)*w0, p.Period*w0)
+	d := lti.SampleDeltaValues(lti.Poly{1}, scaled, math.Max(0, delay)*w0, p.Period*w0)
 	a := lti.Shift(nil, d.A)
 	b := lti.ShiftInput(d.B0, d.B1)[1:]
 	norm := func(x []float64) float64 {

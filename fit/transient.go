@@ -179,9 +179,8 @@ func gram(c []float64, rows int) *mat.SymDense {
 }
 
 // solveLocal finds κ and ε of a record by linear least squares, applies them
-// to its errors and returns their sum of squares, prior included.
-func (w *workspace) solveLocal(c []float64, t0 int) (float64, bool) {
-	h := gram(c, len(w.e)-t0)
+// to its errors and returns their sum of squares, prior included. h is gram's.
+func (w *workspace) solveLocal(h *mat.SymDense, t0 int) (float64, bool) {
 	q := h.SymmetricDim()
 	if cap(w.local) < q {
 		w.local = make([]float64, q)
@@ -194,9 +193,6 @@ func (w *workspace) solveLocal(c []float64, t0 int) (float64, bool) {
 		g[i] = -floats.Dot(w.free[i-1][:w.settled], e[:w.settled])
 	}
 	if !solveScaled(w.local, h, g, 0) {
-		return 0, false
-	}
-	if w.logDet = logDet(h, 1); holdsNonFinite([]float64{w.logDet}) {
 		return 0, false
 	}
 	floats.AddScaled(e, -w.local[0], w.step)

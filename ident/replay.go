@@ -110,7 +110,7 @@ func (f feedback) answer(u, y []float64, k int) float64 {
 // in row k of record n, from row lead on, and the errors before; false where the replayed loop leaves
 // the log's range, so that the law or the plant cannot be right.
 func replay(recs []fit.Record, f *fit.Prediction, law feedback, lead int, before [][]float64, draw func(n, k int) float64) ([]fit.Record, bool) {
-	g := lti.SampleDelta(f.Num, f.Den, f.Delay, f.Period)
+	g := lti.SampleDeltaValues(f.Num, f.Den, f.Delay, f.Period)
 	a := []float64(lti.Poly(lti.Shift(nil, g.A)).Mul(f.D))
 	b := []float64(lti.Poly(lti.ShiftInput(g.B0, g.B1)).Mul(f.D))
 	out := make([]fit.Record, len(recs))

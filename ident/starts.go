@@ -18,27 +18,25 @@ func (c *chooser) fit(s structure, near *fit.Prediction) *candidate {
 	if near != nil {
 		starts = append(starts, c.moved(near, s)...)
 	}
-	round := func(list []*fit.Prediction, keep, steps int) []*fit.Prediction {
+	round := func(p *fit.Predictor, list []*fit.Prediction, keep, steps int) []*fit.Prediction {
 		var out []*fit.Prediction
 		for _, m := range list {
 			if m == nil {
 				continue
 			}
-			if steps > 0 && m.Converged {
-				out = append(out, m)
-			} else if f, err := c.p.Fit(m, compareTol, steps); err == nil {
+			if f, err := p.Fit(m, compareTol, steps); err == nil {
 				out = append(out, f)
 			}
 		}
 		slices.SortStableFunc(out, func(a, b *fit.Prediction) int { return cmp.Compare(a.Objective(), b.Objective()) })
 		return out[:min(keep, len(out))]
 	}
-	list := round(starts, glanceStarts, 0)
-	list = round(list, 2, glanceSteps)
+	list := round(c.glance, starts, glanceStarts, 0)
+	list = round(c.glance, list, 2, glanceSteps)
 	if len(list) == 2 && list[1].Objective()-list[0].Objective() < sameOptimum*list[0].Objective() {
 		list = list[:1]
 	}
-	if list = round(list, 1, compareStep); len(list) > 0 {
+	if list = round(c.p, list, 1, compareStep); len(list) > 0 {
 		cand.fit, cand.bic = list[0], c.criterion(list[0])
 	}
 	return cand
@@ -63,7 +61,7 @@ func (c *chooser) starts(s structure) []*fit.Prediction {
 				sd.Noise = nil
 			}
 			if !s.delay {
-				out = append(out, c.p.Start(s.shape(), sd, c.scope.base, ratio, colour))
+				out = append(out, c.glance.Start(s.shape(), sd, c.scope.base, ratio, colour))
 				continue
 			}
 			out = append(out, c.bestDelay(s, sd, ratio, colour)...)
@@ -78,7 +76,7 @@ func (c *chooser) bestDelay(s structure, sd fit.Seed, ratio float64, colour []co
 	var all []*fit.Prediction
 	h := c.p.Period
 	for d := c.scope.delay[0] + 0.25*h; d < c.scope.delay[1]; d += 0.5 * h {
-		if m := c.p.Start(s.shape(), sd, d, ratio, colour); m != nil {
+		if m := c.glance.Start(s.shape(), sd, d, ratio, colour); m != nil {
 			all = append(all, m)
 		}
 	}

@@ -26,6 +26,7 @@ const (
 const (
 	glanceStarts = 4
 	glanceSteps  = 4
+	startRows   = 2000
 	sameOptimum  = 1e-7 // relative difference of two sums of squares
 	compareTol   = 1e-5
 	compareStep  = 25
@@ -92,7 +93,9 @@ type candidate struct {
 
 // chooser searches structures on one set of records.
 type chooser struct {
-	p       *fit.Predictor
+	p *fit.Predictor
+	// glance is p on fewer rows, where starts are compared.
+	glance  *fit.Predictor
 	scope   scope
 	seeds   [][]fit.Seed // by source, then by order - 1
 	tried   map[structure]*candidate
@@ -103,7 +106,15 @@ type chooser struct {
 // poles of long ARX models of two lengths, cut to each order.
 func newChooser(p *fit.Predictor, recs []fit.Record, sc scope, workers int) (*chooser, error) {
 	p.DelayRange = [2]float64{math.Min(sc.base, sc.delay[0]), math.Max(sc.base, sc.delay[1])}
-	c := &chooser{p: p, scope: sc, tried: make(map[structure]*candidate), workers: workers}
+	c := &chooser{p: p, glance: p, scope: sc, tried: make(map[structure]*candidate), workers: workers}
+	if p.Rows() > 2*startRows {
+		g, err := fit.NewPredictor(spreadOver(recs, startRows), p.Period, p.DelayRange[1])
+		if err != nil {
+			return nil, err
+		}
+		g.DelayRange = p.DelayRange
+		c.glance = g
+	}
 	long, err := fit.ChooseARX(recs, fit.ChooseOptions{Delay: 1, Criterion: fit.AICc})
 	if long == nil {
 		return nil, err

@@ -17,12 +17,13 @@ import "math"
 //
 // DA[k], DB0[k], DB1[k] are the derivatives for parameter k in the order
 // b_0 … b_m (coefficients of s^0 … s^m), a_1 … a_n (of s^(n-1) … s^0), and at
-// last the delay.
+// last the delay. Those for b_0 … b_m alone are there without Slopes.
 type Delta struct {
 	Whole         int
 	A, B0, B1     []float64
 	DA, DB0, DB1  [][]float64
 	Poles, Inputs int // n, and the number m+1 of numerator coefficients
+	Slopes        bool
 }
 
 // maxDeltaPoles bounds the order that Delta samples; low-order models are its
@@ -45,6 +46,16 @@ const (
 // Taylor series and doublings, and through the recursion of Leverrier and
 // Faddeev for the adjoint of qI - Φ.
 func SampleDelta(num, den Poly, delay, period float64) Delta {
+	return sampleDelta(num, den, delay, period, true)
+}
+
+// SampleDeltaValues is SampleDelta without the derivatives for denominator and
+// delay, which are most of its work.
+func SampleDeltaValues(num, den Poly, delay, period float64) Delta {
+	return sampleDelta(num, den, delay, period, false)
+}
+
+func sampleDelta(num, den Poly, delay, period float64, slopes bool) Delta {
 	n, m := len(den)-1, len(num)-1
 	if n < 1 || n > maxDeltaPoles || m < 0 || m >= n {
 		panic(badDeltaOrder)
@@ -69,28 +80,34 @@ func SampleDelta(num, den Poly, delay, period float64) Delta {
 	}
 	gen[(n-1)*size+n] = 1
 
-	late := newDual(gen, n, period-tau) // exp(gen (h - τ)) - I
-	early := newDual(gen, n, tau)
-	whole1 := product(late, early) // exp(gen h) - I
+	nd := 0 // derivatives along a_1 … a_n that are carried
+	params := m + 1
+	if slopes {
+		nd, params = n, m+1+n+1
+	}
+	late := newDual(gen, n, nd, period-tau) // exp(gen (h - τ)) - I
+	whole1 := late                          // exp(gen h) - I
+	if tau > 0 {
+		whole1 = product(late, newDual(gen, n, nd, tau))
+	}
 
-	d := Delta{Whole: int(whole), Poles: n, Inputs: m + 1}
-	params := m + 1 + n + 1
+	d := Delta{Whole: int(whole), Poles: n, Inputs: m + 1, Slopes: slopes}
 	d.A = make([]float64, n+1)
 	d.B0, d.B1 = make([]float64, n), make([]float64, n)
 	d.DA, d.DB0, d.DB1 = grid(params, n+1), grid(params, n), grid(params, n)
 
 	// Φ - I and the two input columns, each with n derivatives along a_1 … a_n.
 	phi := block(whole1.v, n)
-	dphi := make([]square, n)
+	dphi := make([]square, nd)
 	gamma0, gamma1 := make([]float64, n), make([]float64, n)
 	dgamma0, dgamma1 := grid(n+1, n), grid(n+1, n)
-	for k := range n {
+	for k := range nd {
 		dphi[k] = block(whole1.d[k], n)
 	}
 	for i := range n {
 		gamma0[i] = late.v[i*size+n]
 		gamma1[i] = whole1.v[i*size+n] - gamma0[i]
-		for k := range n {
+		for k := range nd {
 			dgamma0[k][i] = late.d[k][i*size+n]
 			dgamma1[k][i] = whole1.d[k][i*size+n] - dgamma0[k][i]
 		}
@@ -104,7 +121,7 @@ func SampleDelta(num, den Poly, delay, period float64) Delta {
 
 	// Leverrier-Faddeev: adj(δI - Φ) = Σ N_j δ^(n-1-j).
 	adj := identity(n)
-	dadj := make([]square, n)
+	dadj := make([]square, nd)
 	for k := range dadj {
 		dadj[k] = make(square, n*n)
 	}
@@ -115,16 +132,18 @@ func SampleDelta(num, den Poly, delay, period float64) Delta {
 			d.B1[j] += num[i] * rowDot(adj, i, gamma1)
 			d.DB0[i][j] = rowDot(adj, i, gamma0)
 			d.DB1[i][j] = rowDot(adj, i, gamma1)
-			for k := range n {
+			for k := range nd {
 				d.DB0[m+1+k][j] += num[i] * (rowDot(dadj[k], i, gamma0) + rowDot(adj, i, dgamma0[k]))
 				d.DB1[m+1+k][j] += num[i] * (rowDot(dadj[k], i, gamma1) + rowDot(adj, i, dgamma1[k]))
 			}
-			d.DB0[params-1][j] += num[i] * rowDot(adj, i, dgamma0[n])
-			d.DB1[params-1][j] += num[i] * rowDot(adj, i, dgamma1[n])
+			if slopes {
+				d.DB0[params-1][j] += num[i] * rowDot(adj, i, dgamma0[n])
+				d.DB1[params-1][j] += num[i] * rowDot(adj, i, dgamma1[n])
+			}
 		}
 		next := mul(phi, adj, n)
 		d.A[j+1] = -trace(next, n) / float64(j+1)
-		for k := range n {
+		for k := range nd {
 			dnext := mul(dphi[k], adj, n)
 			addMul(dnext, phi, dadj[k], n)
 			d.DA[m+1+k][j+1] = -trace(dnext, n) / float64(j+1)
@@ -198,9 +217,10 @@ type dual struct {
 	d []square
 }
 
-// newDual returns exp(gen t) - I and its derivatives along the n companion
-// entries a_1 … a_n, which sit at row n-1, columns n-1 … 0, with opposite sign.
-func newDual(gen square, n int, t float64) dual {
+// newDual returns exp(gen t) - I and its derivatives along the first nd of the n
+// companion entries a_1 … a_n, which sit at row n-1, columns n-1 … 0, with
+// opposite sign.
+func newDual(gen square, n, nd int, t float64) dual {
 	size := n + 1
 	var norm float64
 	for i := range size {
@@ -220,16 +240,21 @@ func newDual(gen square, n int, t float64) dual {
 	for i, v := range gen {
 		x[i] = v * step
 	}
-	e := dual{v: make(square, size*size), d: make([]square, n)}
-	term := dual{v: identity(size), d: make([]square, n)}
-	for k := range n {
+	e := dual{v: make(square, size*size), d: make([]square, nd)}
+	term := dual{v: identity(size), d: make([]square, nd)}
+	for k := range nd {
 		e.d[k] = make(square, size*size)
 		term.d[k] = make(square, size*size)
 	}
-	// Taylor series; the terms shrink at least like 2^-i / i!.
-	for i := 1; i <= 16; i++ {
+	// Taylor series; the terms shrink at least like norm^i / i!, their
+	// derivatives like norm^(i-1) / (i-1)!.
+	left := 1.0
+	for i := 1; i <= 17 && left > 1e-18; i++ {
 		f := 1 / float64(i)
-		for k := range n {
+		if i > 1 {
+			left *= norm / float64(i-1)
+		}
+		for k := range nd {
 			next := mul(term.d[k], x, size)
 			// term · dx, dx has the single entry (n-1, n-1-k) = -step.
 			col := n - 1 - k
