@@ -14,18 +14,26 @@ import (
 // reflected into the unit circle, where the likelihood is the same.
 func (s *search) moved(x point, step []float64) point {
 	y := x.clone()
+	add(&y, step, s.shape)
+	lo, hi := s.DelayRange[0]*s.w0, s.DelayRange[1]*s.w0
+	y.tau = math.Min(hi, math.Max(lo, y.tau))
+	y.c, y.d = reflect(y.c), reflect(y.d)
+	return y
+}
+
+// add moves y by a step in its parameters.
+func add(y *point, step []float64, shape Shape) {
 	k := 0
 	next := func() float64 { k++; return step[k-1] }
 	for i := range y.num {
 		y.num[i] += next()
 	}
-	n := s.shape.Poles
+	n := shape.Poles
 	for i := 1; i <= n; i++ {
 		y.den[n-i] += next()
 	}
-	if s.shape.FreeDelay {
-		lo, hi := s.DelayRange[0]*s.w0, s.DelayRange[1]*s.w0
-		y.tau = math.Min(hi, math.Max(lo, y.tau+next()))
+	if shape.FreeDelay {
+		y.tau += next()
 	}
 	for i := 1; i < len(y.d); i++ {
 		y.d[i] += next()
@@ -33,8 +41,6 @@ func (s *search) moved(x point, step []float64) point {
 	for i := 1; i < len(y.c); i++ {
 		y.c[i] += next()
 	}
-	y.c, y.d = reflect(y.c), reflect(y.d)
-	return y
 }
 
 // closest is how near to the unit circle a noise zero may come.

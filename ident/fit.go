@@ -14,7 +14,7 @@ import (
 
 // Options of Fit. The zero value is ready.
 type Options struct {
-	Seed     uint64                // of the replays of a short log
+	Seed     uint64                // of the draws of a short log
 	Workers  int                   // structures fitted at once; 0: one a core
 	Progress func(done, total int) // called as structures are done; total 0: unknown
 }
@@ -104,10 +104,10 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 		return m.refuse(&RefusedError{What: "the log does not tell the plant's parameters apart", Do: "log a run with a stronger probe"})
 	}
 	m.describe(p, f, rig)
-	if err := m.calibrate(ctx, exps, rig, p, recs, f, opt); err != nil {
+	if err := m.loosen(p, f, ranked); err != nil {
 		return m, err
 	}
-	if err := m.loosen(p, f, ranked); err != nil {
+	if err := m.sample(ctx, p, f, ranked, opt); err != nil {
 		return m, err
 	}
 	m.Evidence.Structures = structures(ranked)
@@ -212,14 +212,11 @@ func lead(f *fit.Prediction) float64 { return f.Num[len(f.Num)-1] }
 // plant fills in the transfer function with its covariance.
 func (m *Model) plant(f *fit.Prediction) {
 	m.Plant = Plant{Numerator: reversed(f.Num), Denominator: reversed(f.Den), Delay: f.Delay}
-	for i := range f.Zeros + 1 {
-		m.Plant.Parameters = append(m.Plant.Parameters, fmt.Sprintf("b%d", i))
-	}
-	for i := 1; i <= f.Poles; i++ {
-		m.Plant.Parameters = append(m.Plant.Parameters, fmt.Sprintf("a%d", i))
-	}
+	m.Plant.Parameters = parameterNames(f.Zeros, f.Poles)
 	if f.FreeDelay {
 		m.Plant.Parameters = append(m.Plant.Parameters, "delay")
+		sd := math.Sqrt(f.Cov.At(f.Zeros+1+f.Poles, f.Zeros+1+f.Poles))
+		m.Plant.Delay95 = &Interval{f.Delay - z95*sd, f.Delay + z95*sd}
 	}
 	m.Plant.Covariance = make([][]float64, len(m.Plant.Parameters))
 	for i := range m.Plant.Covariance {

@@ -103,9 +103,6 @@ func (m *Model) loosen(p *fit.Predictor, f *fit.Prediction, ranked []*candidate)
 	}
 	var other Model
 	other.plant(free)
-	if c := m.Evidence.Calibration; c != nil {
-		other.widen(c.Factor)
-	}
 	other.derive()
 	// Plants drawn from the model move about zero as the free poles may.
 	m.Plant.Covariance = other.Plant.Covariance

@@ -9,6 +9,7 @@ import (
 	"math/cmplx"
 	"math/rand/v2"
 	"slices"
+	"strconv"
 
 	"gonum.org/v1/gonum/mat"
 
@@ -68,12 +69,56 @@ type Plant struct {
 	Numerator   []float64 `json:"numerator"`   // descending powers of s
 	Denominator []float64 `json:"denominator"` // descending powers of s, leading 1
 	Delay       float64   `json:"delay"`       // s, from the logged input to the output
+	Delay95     *Interval `json:"delay_95"`    // null where the delay is held
 	// Parameters names the rows of Covariance: "b0", "b1", … multiply s^0,
 	// s^1, … in the numerator, "a1" … "an" multiply s^(n-1) … s^0 in the
 	// denominator, "delay" is in s.
 	Parameters []string    `json:"parameters"`
 	Covariance [][]float64 `json:"covariance"`
+	// Draws are plants drawn from the likelihood of a log too short for a
+	// normal distribution to describe what it allows; else empty.
+	Draws []DrawnPlant `json:"draws,omitempty"`
 }
+
+// DrawnPlant is a plant that the log allows, in the form of Plant.
+type DrawnPlant struct {
+	Numerator   []float64 `json:"numerator"`
+	Denominator []float64 `json:"denominator"`
+	Delay       float64   `json:"delay"`
+}
+
+func (d DrawnPlant) tf() lti.TF {
+	return lti.TF{Num: reversed(d.Numerator), Den: reversed(d.Denominator), Delay: d.Delay}
+}
+
+// parameterNames lists the names of b_0 … b_m, a_1 … a_n.
+func parameterNames(zeros, poles int) []string {
+	var names []string
+	for i := range zeros + 1 {
+		names = append(names, fmt.Sprintf("b%d", i))
+	}
+	for i := 1; i <= poles; i++ {
+		names = append(names, fmt.Sprintf("a%d", i))
+	}
+	return names
+}
+
+// parameter points at the named parameter of a plant.
+func parameter(g *lti.TF, name string) *float64 {
+	if name == "delay" {
+		return &g.Delay
+	}
+	index, err := strconv.Atoi(name[1:])
+	if err != nil {
+		panic(badParameter + name)
+	}
+	if name[0] == 'b' {
+		return &g.Num[index]
+	}
+	return &g.Den[len(g.Den)-1-index]
+}
+
+const badParameter = "ident: no such parameter: "
 
 // Root is a pole or a zero in rad/s with its bounds. A complex pair is two
 // Roots. For a zero Unstable means that it lies in the right half-plane.
@@ -160,9 +205,6 @@ type Evidence struct {
 	ExplainedShare float64     `json:"explained_share"` // on rows not used in the fit
 	OutsideShare   float64     `json:"outside_share"`   // of the input's variance, not explained by past outputs and inputs
 	Memories       float64     `json:"memories"`        // length of the logs in predictor memories
-	// Calibration is null where the log was too long to need it, or its law
-	// could not be found.
-	Calibration *Calibration `json:"calibration"`
 }
 
 // Structure is one candidate and how far it lost, in units of BIC.
@@ -220,51 +262,39 @@ func (m *Model) NoiseShape() lti.DTF {
 	}
 }
 
-// Draw returns n plants from the joint normal distribution of the estimate.
-// Draw k depends on seed and k only. A drawn delay below zero is taken as
-// zero, since no plant answers before its input.
+// Draw returns n plants from the joint distribution of the estimate: the normal
+// one of its covariance, or that of the stored draws of a short log. Draw k
+// depends on seed and k only. A drawn delay below zero is taken as zero, since
+// no plant answers before its input.
 func (m *Model) Draw(n int, seed uint64) []lti.TF {
-	root := m.spread()
+	clouds := m.clouds()
+	normal := &cloud{names: m.Plant.Parameters, root: rootOf(m.Plant.Covariance)}
 	plants := make([]lti.TF, n)
-	p := len(m.Plant.Parameters)
-	z := make([]float64, p)
 	for k := range plants {
 		rnd := rand.New(rand.NewPCG(seed, uint64(k)))
-		for i := range z {
-			z[i] = rnd.NormFloat64()
-		}
 		g := m.TF()
-		order := len(g.Den) - 1
-		for i, name := range m.Plant.Parameters {
-			var d float64
-			for j := 0; j <= i; j++ {
-				d += root.At(i, j) * z[j]
-			}
-			var index int
-			switch {
-			case name == "delay":
-				g.Delay = math.Max(0, g.Delay+d)
-			case name[0] == 'b':
-				fmt.Sscanf(name, "b%d", &index)
-				g.Num[index] += d
-			default:
-				fmt.Sscanf(name, "a%d", &index)
-				g.Den[order-index] += d
+		if len(clouds) > 0 {
+			d := m.Plant.Draws[rnd.IntN(len(m.Plant.Draws))].tf()
+			g = clouds[len(d.Num)-1].near(d, rnd)
+		} else {
+			for i, d := range normal.spread(rnd) {
+				*parameter(&g, normal.names[i]) += d
 			}
 		}
+		g.Delay = math.Max(0, g.Delay)
 		plants[k] = g
 	}
 	return plants
 }
 
-// spread returns a lower triangular root of the covariance. The covariance is
-// equilibrated first because its parameters differ by many orders of
-// magnitude; directions that carry no variance get none.
-func (m *Model) spread() *mat.Dense {
-	p := len(m.Plant.Parameters)
+// rootOf returns a lower triangular root of a covariance, which is equilibrated
+// first because its parameters differ by many orders of magnitude; directions
+// that carry no variance get none.
+func rootOf(cov [][]float64) *mat.Dense {
+	p := len(cov)
 	sd := make([]float64, p)
 	for i := range sd {
-		sd[i] = math.Sqrt(math.Max(0, m.Plant.Covariance[i][i]))
+		sd[i] = math.Sqrt(math.Max(0, cov[i][i]))
 	}
 	root := mat.NewDense(max(p, 1), max(p, 1), nil)
 	for i := range p {
@@ -272,7 +302,7 @@ func (m *Model) spread() *mat.Dense {
 			if sd[i] == 0 || sd[j] == 0 {
 				continue
 			}
-			s := m.Plant.Covariance[i][j] / (sd[i] * sd[j])
+			s := cov[i][j] / (sd[i] * sd[j])
 			for k := range j {
 				s -= root.At(i, k) * root.At(j, k)
 			}
@@ -384,6 +414,11 @@ func (m *Model) validate() error {
 			if math.IsNaN(v) || math.IsInf(v, 0) || row[i] < 0 || math.Abs(v-other) > 1e-6*limit || math.Abs(v) > limit*(1+1e-6) {
 				return fmt.Errorf("covariance of %s and %s is %v, which no covariance can be", m.Plant.Parameters[i], m.Plant.Parameters[j], v)
 			}
+		}
+	}
+	for i, d := range m.Plant.Draws {
+		if len(d.Denominator) != len(den) || len(d.Numerator) == 0 || len(d.Numerator) >= len(den) || d.Denominator[0] != 1 || !(d.Delay >= 0) {
+			return fmt.Errorf("draw %d of the plant is no plant of %d poles", i+1, len(den)-1)
 		}
 	}
 	if err := m.checkRoots("poles", m.Poles, m.Plant.Denominator); err != nil {

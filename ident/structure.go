@@ -26,7 +26,7 @@ const (
 const (
 	glanceStarts = 4
 	glanceSteps  = 4
-	startRows   = 2000
+	startRows    = 2000
 	sameOptimum  = 1e-7 // relative difference of two sums of squares
 	compareTol   = 1e-5
 	compareStep  = 25

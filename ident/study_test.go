@@ -217,7 +217,7 @@ func one(t testing.TB, r demorig.Rig, truth *fit.Prediction, seed uint64) (c tri
 	if truth.FreeDelay && delay >= 0 {
 		o := &c.numbers[len(poles)+1]
 		v, d := m.Plant.Covariance[delay][delay], m.Plant.Delay-truth.Delay
-		o.in = math.Abs(d) <= z95*math.Sqrt(v)
+		o.in = m.Plant.Delay95.Contains(truth.Delay)
 		if c.right {
 			o.matched, o.squares, o.reported = true, d*d, v
 			o.crb = limit.Plant.Covariance[len(limit.Plant.Covariance)-1][len(limit.Plant.Covariance)-1]

@@ -307,7 +307,7 @@ func (j *job) show(p *page) {
 		showPoles(p, j.model)
 		showRoots(p, "Zeros", j.model.Zeros, "right half-plane")
 		showMethods(p, j.model)
-		if text := words.Calibration(j.model); text != "" {
+		if text := words.Drawn(j.model); text != "" {
 			p.line("")
 			p.item("short log", text)
 		}

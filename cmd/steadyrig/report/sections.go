@@ -195,7 +195,7 @@ func plantSection(in Input) section {
 		fact{"Residuals", words.Residuals(m)},
 		fact{"Length", words.Memories(m.Evidence.Memories)},
 	)
-	if text := words.Calibration(m); text != "" {
+	if text := words.Drawn(m); text != "" {
 		s.Facts = append(s.Facts, fact{"Short log", text})
 	}
 	poles := rootTable("Poles, rad/s", m.Poles, "Unstable")

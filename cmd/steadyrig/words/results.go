@@ -163,16 +163,13 @@ func PlantUnits(u data.Units) string {
 	return text
 }
 
-// Calibration tells how replays of a short log widened the intervals; empty: there were none.
-func Calibration(m *ident.Model) string {
-	c := m.Evidence.Calibration
-	switch {
-	case c == nil:
+// Drawn tells that the intervals are those of drawn plants, as on a short log; empty: they are not.
+func Drawn(m *ident.Model) string {
+	if len(m.Plant.Draws) == 0 {
 		return ""
-	case c.Factor == 1:
-		return fmt.Sprintf("the intervals stand as they are, by %s", Count(c.Replays, "replay"))
 	}
-	return fmt.Sprintf("intervals widened by a factor of %s from %s", Brief(math.Sqrt(c.Factor)), Count(c.Replays, "replay"))
+	return fmt.Sprintf("the intervals are those of %s drawn from the likelihood, over all structures of %s that the log leaves open",
+		Count(len(m.Plant.Draws), "plant"), Count(len(m.Poles), "pole"))
 }
 
 // Memories tells the length of the logs in memories of the predictor, which is what intervals rest on.
