@@ -80,7 +80,7 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 		return m, err
 	}
 	if len(ranked) == 0 {
-		return m.refuse(&RefusedError{What: "no plant of 1 to 5 poles could be fitted to the log", Do: "look at the log with audit"})
+		return m.refuse(&RefusedError{What: fmt.Sprintf("no plant of 1 to %d poles could be fitted to the log", MaxPoles), Do: "look at the log with audit"})
 	}
 	if err := c.pairing(ctx, some, ranked, opt.Workers); err != nil {
 		return m.refuse(err)

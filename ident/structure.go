@@ -13,7 +13,7 @@ import (
 
 // Limits of the search for a structure, where the rig file gives no hint.
 const (
-	MaxPoles        = 5
+	MaxPoles        = 6
 	MaxColour       = 2
 	MaxIntegrators  = 2
 	maxDelaySamples = 8 // of a delay without a hint
