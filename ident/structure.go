@@ -301,7 +301,12 @@ func cancels(f *fit.Prediction) bool {
 	return false
 }
 
-// criterion is BIC with three amendments.
+// delayPenalty is what a free delay costs beyond its parameter, odds of seven
+// to one: every actuator and sensor lags, and on a short log a lag faster than
+// the probe looks like a delay.
+const delayPenalty = 4
+
+// criterion is BIC with four amendments.
 //
 // On a short log BIC drops the slow colour of a disturbance, for which the
 // plant's slow poles pay with errors beyond their intervals; the two parameters
@@ -309,7 +314,8 @@ func cancels(f *fit.Prediction) bool {
 //
 // A plant's pole under a zero, and a noise zero on the unit circle
 // without a plant pole beside it that it could be the mirror of, mean that the
-// approximation behind BIC fails; they cost dipolePenalty each.
+// approximation behind BIC fails; they cost dipolePenalty each. A free delay
+// costs delayPenalty.
 func (c *chooser) criterion(f *fit.Prediction) float64 {
 	v := f.BIC()
 	if f.Rows < shortRows && f.Shape.Colour > 0 {
@@ -320,6 +326,9 @@ func (c *chooser) criterion(f *fit.Prediction) float64 {
 	}
 	if pinned(f) {
 		v += dipolePenalty
+	}
+	if f.FreeDelay {
+		v += delayPenalty
 	}
 	return v
 }
