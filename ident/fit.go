@@ -167,7 +167,7 @@ func spreadOver(recs []fit.Record, rows int) []fit.Record {
 	var out []fit.Record
 	for _, r := range recs {
 		share := rows * len(r.Y) / total
-		k := max(1, min(blocks, share/500))
+		k := max(1, min(blocks, share/2000))
 		size := share / k
 		for b := range k {
 			from := 0

@@ -26,7 +26,7 @@ const (
 const (
 	glanceStarts = 4
 	glanceSteps  = 4
-	startRows    = 2000
+	startRows    = 3000
 	sameOptimum  = 1e-7 // relative difference of two sums of squares
 	compareTol   = 1e-5
 	compareStep  = 25
@@ -108,12 +108,14 @@ func newChooser(p *fit.Predictor, recs []fit.Record, sc scope, workers int) (*ch
 	p.DelayRange = [2]float64{math.Min(sc.base, sc.delay[0]), math.Max(sc.base, sc.delay[1])}
 	c := &chooser{p: p, glance: p, scope: sc, tried: make(map[structure]*candidate), workers: workers}
 	if p.Rows() > 2*startRows {
-		g, err := fit.NewPredictor(spreadOver(recs, startRows), p.Period, p.DelayRange[1])
-		if err != nil {
-			return nil, err
+		if r := busiest(recs, startRows); len(r.Y) == startRows {
+			g, err := fit.NewPredictor([]fit.Record{r}, p.Period, p.DelayRange[1])
+			if err != nil {
+				return nil, err
+			}
+			g.DelayRange = p.DelayRange
+			c.glance = g
 		}
-		g.DelayRange = p.DelayRange
-		c.glance = g
 	}
 	long, err := fit.ChooseARX(recs, fit.ChooseOptions{Delay: 1, Criterion: fit.AICc})
 	if long == nil {
@@ -128,6 +130,25 @@ func newChooser(p *fit.Predictor, recs []fit.Record, sc scope, workers int) (*ch
 		}
 	}
 	return c, nil
+}
+
+// busiest returns the unbroken stretch of at most rows rows, of five spread over
+// each record, in which the input moves most. In several pieces a constant of
+// its own for each would hide a slow disturbance.
+func busiest(recs []fit.Record, rows int) fit.Record {
+	const places = 5
+	var best fit.Record
+	most := -1.0
+	for _, r := range recs {
+		n := min(rows, len(r.Y))
+		for i := range places {
+			from := i * (len(r.Y) - n) / (places - 1)
+			if v := about(r.U[from : from+n]); v > most {
+				best, most = fit.Record{U: r.U[from : from+n], Y: r.Y[from : from+n]}, v
+			}
+		}
+	}
+	return best
 }
 
 // spread returns the standard deviations of input and output about the means
