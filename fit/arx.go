@@ -36,7 +36,7 @@ type ARXOptions struct {
 	NA, NB int
 	// Delay is the index of the first coefficient of B: 1 for a plant sampled through a hold. 0 adds the direct term. In
 	// closed loop under a law that answers to the output of the same sample it is not zero, for u_k then holds e_k:
-	// whether the columns are paired rightly is for Instrument to tell, whose direct term is zero if they are.
+	// whether the columns are paired rightly is for Refined to tell, whose delay is not negative if they are.
 	Delay int
 	// First is the first row of each record; 0 (default), or anything too small, is the least possible, the order. A
 	// common First makes models of different orders comparable.

@@ -22,7 +22,8 @@
 //     parametrisation.
 //  3. Subspace: a state-space model by another road, whose singular values show the order.
 //  4. Predictor: prediction-error estimates of a continuous-time numerator, denominator and delay.
-//  5. Instrument: A and B through the outside signal alone, whatever the noise.
+//  5. Predictor.Refined: the same numerator, denominator and delay through signals from outside alone, whatever the
+//     noise. Predictor.Compare tests whether the two differ by more than chance.
 //
 // LjungBox, PastInputs, CrossCorrelation and FTest judge residuals; Welch estimates spectra. The quotient of the spectra
 // of y and u is not the plant in closed loop.
@@ -36,6 +37,7 @@
 // # What is not promised
 //
 // The covariances hold for the structure that was fitted: a plant of another order, a nonlinear one or wrongly paired
-// columns bias the estimate without widening them. That of NullSpace is that of long records: below some twenty memories
+// columns bias the estimate without widening them. Influence gives the spread about the best model of that structure, and no
+// more. That of NullSpace is that of long records: below some twenty memories
 // of the predictor it is too small.
 package fit

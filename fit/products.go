@@ -10,11 +10,10 @@ import (
 // lag names one regressor: a signal by steps samples ago.
 type lag struct{ signal, steps int }
 
-// Signals of a regression. The outside signal is there only where it serves as instrument.
+// Signals of a regression; further inputs follow.
 const (
 	output = iota
 	input
-	outside
 )
 
 // regression is the problem of explaining y_k by lags of signals, on rows [first, len) of each record, a constant for
@@ -113,11 +112,11 @@ func (g *regression) products() *mat.SymDense {
 				x[s] = lessMean(x[s])
 			}
 		}
-		var pair [outside + 1][outside + 1][][]float64
+		pair := map[[2]int][][]float64{}
 		for a, la := range longest {
 			for b, lb := range longest {
 				if a <= b {
-					pair[a][b] = laggedProducts(x[a], x[b], g.first, la, lb)
+					pair[[2]int{a, b}] = laggedProducts(x[a], x[b], g.first, la, lb)
 				}
 			}
 		}
@@ -129,7 +128,7 @@ func (g *regression) products() *mat.SymDense {
 				if p1.signal > p2.signal {
 					p1, p2 = p2, p1
 				}
-				s := pair[p1.signal][p2.signal][p1.steps][p2.steps]
+				s := pair[[2]int{p1.signal, p2.signal}][p1.steps][p2.steps]
 				if !g.without {
 					s -= sums[a] * sums[a+b] / rows
 				}

@@ -64,9 +64,9 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 	if err != nil {
 		return m.refuse(&RefusedError{What: err.Error(), Do: "log a longer run"})
 	}
-	some, sp := recs, p
+	some, sp, signals := recs, p, outsideSignals(exps)
 	if p.Rows() > chooseRows {
-		some = spreadOver(recs, chooseRows)
+		some, signals = spreadOver(recs, chooseRows), spreadSignals(signals, chooseRows)
 		if sp, err = fit.NewPredictor(some, period, math.Max(sc.delay[1], sc.base)); err != nil {
 			return m, err
 		}
@@ -111,7 +111,7 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 		return m, err
 	}
 	m.Evidence.Structures = structures(ranked)
-	m.Evidence.Methods = methods(some, outsideSignals(exps, some), f, m.Poles)
+	m.Evidence.Methods = methods(sp, some, signals, f, m.Poles)
 	if err := m.tests(p, recs, f); err != nil {
 		return m, err
 	}

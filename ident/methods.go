@@ -2,6 +2,7 @@ package ident
 
 import (
 	"cmp"
+	"errors"
 	"fmt"
 	"math"
 	"math/cmplx"
@@ -13,38 +14,57 @@ import (
 	"steadyrig/fit"
 )
 
-// outsideSignals returns the logged dither, or else the reference, of each
-// record; nil where neither is logged throughout or the records are blocks of
-// the log only.
-func outsideSignals(exps []*data.Experiment, recs []fit.Record) [][]float64 {
-	var dither, reference [][]float64
-	n := 0
+// outsideSignals returns the reference and the dither of each record, as many of
+// them as are logged throughout; nil where there are none.
+func outsideSignals(exps []*data.Experiment) [][][]float64 {
+	var out [][][]float64
+	reference, dither := true, true
 	for _, e := range exps {
 		for _, s := range e.Segments {
-			n++
-			if s.D != nil {
-				dither = append(dither, s.D)
-			}
-			if s.R != nil {
-				reference = append(reference, s.R)
-			}
+			reference, dither = reference && s.R != nil, dither && s.D != nil
 		}
 	}
-	if len(recs) != n {
+	if !reference && !dither {
 		return nil
 	}
-	if len(dither) == n {
-		return dither
+	for _, e := range exps {
+		for _, s := range e.Segments {
+			var signals [][]float64
+			if reference {
+				signals = append(signals, s.R)
+			}
+			if dither {
+				signals = append(signals, s.D)
+			}
+			out = append(out, signals)
+		}
 	}
-	if len(reference) == n {
-		return reference
+	return out
+}
+
+// spreadSignals takes the same rows of the signals of all records as spreadOver
+// takes of the records.
+func spreadSignals(signals [][][]float64, rows int) [][][]float64 {
+	var out [][][]float64
+	for j := 0; signals != nil && j < len(signals[0]); j++ {
+		var recs []fit.Record
+		for _, s := range signals {
+			recs = append(recs, fit.Record{U: s[j], Y: s[j]})
+		}
+		for b, part := range spreadOver(recs, rows) {
+			if j == 0 {
+				out = append(out, nil)
+			}
+			out[b] = append(out[b], part.U)
+		}
 	}
-	return nil
+	return out
 }
 
 // methods estimates the poles by other ways than maximum likelihood and says
-// whether they find the same unstable poles.
-func methods(recs []fit.Record, signals [][]float64, f *fit.Prediction, poles []Root) []Method {
+// whether they find the same unstable poles. p holds recs, f is the estimate
+// from them or from more of the same log.
+func methods(p *fit.Predictor, recs []fit.Record, signals [][][]float64, f *fit.Prediction, poles []Root) []Method {
 	list := []Method{{Name: "prediction", Agrees: true, Poles: [][2]float64{}}}
 	for _, r := range poles {
 		list[0].Poles = append(list[0].Poles, [2]float64{r.Re, r.Im})
@@ -84,42 +104,61 @@ func methods(recs []fit.Record, signals [][]float64, f *fit.Prediction, poles []
 		}
 	}
 	if signals != nil && f.Converged {
-		iv, err := fit.Instrument(recs, signals, fit.InstrumentOptions{NA: f.Poles, NB: f.Poles + 1, Delay: 1 + whole, Filter: f.C})
-		switch {
-		case err != nil:
-			list = append(list, Method{Name: "outside", Poles: [][2]float64{}, Agrees: true, Note: "says nothing here: " + err.Error()})
-		default:
-			add("outside", iv.Poles(), unstableDeviation(iv, f.Period), nil)
-			if last := &list[len(list)-1]; !last.Agrees && iv.Share < weakInstrument {
-				last.Agrees, last.Note = true, "says little here: "+last.Note
-			}
-		}
+		list = append(list, byOutside(p, signals, f, poles))
 	}
 	return list
 }
 
-// weakInstrument is the share of a regressor that the outside signal must
-// explain for its verdict to count.
-const weakInstrument = 0.01
-
-// unstableDeviation is the deviation of the outermost real or complex pole of
-// an instrumental estimate, in rad/s.
-func unstableDeviation(iv *fit.InstrumentResult, period float64) float64 {
-	n := len(iv.A) - 1
-	den := uncertain{p: make([]float64, n+1), cov: mat.NewSymDense(n+1, nil)}
-	for i := range n + 1 {
-		den.p[i] = iv.A[n-i]
-	}
-	for i := range n {
-		for j := i; j < n; j++ {
-			den.cov.SetSym(i, j, iv.Cov.At(n-1-i, n-1-j))
+// byOutside estimates the plant through the signals from outside alone and tests
+// whether it differs from the final one by more than chance.
+func byOutside(p *fit.Predictor, signals [][][]float64, f *fit.Prediction, poles []Root) Method {
+	m := Method{Name: "outside", Poles: [][2]float64{}, Agrees: true}
+	if p.Rows() != f.Rows {
+		var err error
+		if f, err = p.Fit(f, finalTol, finalSteps); err != nil {
+			m.Note = "says nothing here: " + err.Error()
+			return m
 		}
 	}
-	var sd float64
-	var size float64
+	r, err := p.Refined(f, signals)
+	switch {
+	case errors.As(err, new(fit.WeakInstrument)):
+		m.Note = "says little here: " + err.Error()
+		return m
+	case err != nil:
+		m.Note = "says nothing here: " + err.Error()
+		return m
+	}
+	for _, z := range r.Den.Roots() {
+		m.Poles = append(m.Poles, [2]float64{real(z), imag(z)})
+	}
+	d, err := p.Compare(f, r)
+	if err != nil {
+		m.Note = "could not be compared: " + err.Error()
+		return m
+	}
+	_, apart := agreement(m.Poles, poles, unstableDeviation(r))
+	m.Probability, m.Note = &d.Probability, apart
+	if m.Agrees = d.Probability >= doubtful; !m.Agrees {
+		m.Note = fmt.Sprintf("the plant differs by more than chance (probability %.2g): the noise shape is wrong, or what is logged from outside answers to the output; %s", d.Probability, apart)
+	}
+	return m
+}
+
+// unstableDeviation is the deviation of the outermost pole in the right half
+// plane, in rad/s; 0 where there is none.
+func unstableDeviation(r *fit.Refined) float64 {
+	n, nz := r.Poles, len(r.Num)
+	den := uncertain{p: r.Den, cov: mat.NewSymDense(n+1, nil)}
+	for i := range n {
+		for j := i; j < n; j++ {
+			den.cov.SetSym(i, j, r.Cov.At(nz+n-1-i, nz+n-1-j))
+		}
+	}
+	var sd, size float64
 	for _, z := range den.roots() {
-		if r := math.Hypot(z.Re, z.Im); r > size && z.Re > 0 {
-			size, sd = r, math.Hypot(z.ReSD, z.ImSD)/(r*period)
+		if a := math.Hypot(z.Re, z.Im); a > size && z.Re > 0 {
+			size, sd = a, math.Hypot(z.ReSD, z.ImSD)
 		}
 	}
 	return sd

@@ -226,7 +226,10 @@ type Method struct {
 	Name   string       `json:"name"`
 	Poles  [][2]float64 `json:"poles"` // re, im in rad/s
 	Agrees bool         `json:"agrees"`
-	Note   string       `json:"note,omitempty"`
+	// Probability is that of so large a difference from the final plant by
+	// chance; nil where it was not tested.
+	Probability *float64 `json:"probability_by_chance,omitempty"`
+	Note        string   `json:"note,omitempty"`
 }
 
 // Residuals are the tests on what the model leaves unexplained. The

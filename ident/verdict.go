@@ -165,7 +165,11 @@ func (m *Model) judge(ranked []*candidate, out Outside, f *fit.Prediction) {
 		note("no unstable pole was found")
 	}
 	for _, method := range m.Evidence.Methods {
-		if !method.Agrees && len(method.Poles) > 0 {
+		switch {
+		case method.Agrees || len(method.Poles) == 0:
+		case method.Probability != nil:
+			weak("by the method %q %s", method.Name, method.Note)
+		default:
 			weak("the method %q does not find the poles that matter where the final estimate has them: %s", method.Name, method.Note)
 		}
 	}

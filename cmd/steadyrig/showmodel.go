@@ -65,12 +65,12 @@ func showMethods(p *page, m *ident.Model) {
 		return
 	}
 	p.heading("The same poles by other ways of estimating")
-	var name, takes, poles, agrees []string
+	var name, takes, poles, agrees, chance []string
 	for _, e := range m.Evidence.Methods {
 		name, takes, agrees = append(name, e.Name), append(takes, words.Assumes[e.Name]), append(agrees, words.Agrees(e))
-		poles = append(poles, words.Rightmost(e.Poles))
+		poles, chance = append(poles, words.Rightmost(e.Poles)), append(chance, words.ByChance(e))
 	}
-	p.table(columns("method", name, "takes for granted", takes, ">rightmost pole", poles, "agrees", agrees))
+	p.table(columns("method", name, "takes for granted", takes, ">rightmost pole", poles, "agrees", agrees, ">by chance", chance))
 	for _, e := range m.Evidence.Methods {
 		if e.Note != "" && (!e.Agrees || len(e.Poles) == 0) {
 			p.item(e.Name, e.Note)

@@ -183,6 +183,14 @@ func Agrees(e ident.Method) string {
 	return YesNo(e.Agrees)
 }
 
+// ByChance tells how probable so large a difference from the model is by chance, nothing where it was not tested.
+func ByChance(e ident.Method) string {
+	if e.Probability == nil {
+		return "–"
+	}
+	return Probability(*e.Probability)
+}
+
 // Flaw tells a flaw of a log, how often and where first; named: with its file.
 func Flaw(f ident.Flaw, named bool) string {
 	text := f.Name

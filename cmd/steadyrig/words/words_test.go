@@ -175,4 +175,8 @@ func TestFlawsAndMisses(t *testing.T) {
 	if got := Agrees(ident.Method{Name: "long", Note: "it could not be computed"}); got != "–" {
 		t.Errorf("a method without poles agrees: %q", got)
 	}
+	p := 0.00002
+	if got := ByChance(ident.Method{Probability: &p}) + ", " + ByChance(ident.Method{}); got != "< 0.001, –" {
+		t.Errorf("probabilities by chance: %q", got)
+	}
 }
