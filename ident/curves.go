@@ -6,6 +6,8 @@ import (
 	"math/cmplx"
 	"slices"
 
+	"gonum.org/v1/gonum/floats"
+
 	"steadyrig/data"
 	"steadyrig/fit/lti"
 )
@@ -83,69 +85,145 @@ func (m *Model) OneStep(s data.Segment) (*Predictions, error) {
 	return p, nil
 }
 
-// Responses are frequency responses of the plant in the units of the log: that
-// of the estimate, and for each frequency the range that holds the middle 95 %
-// of plants drawn from the estimate. Phases in degrees, unwrapped from the
-// lowest frequency.
+// Responses are the plant's frequency response from the logged input to the
+// output, with a joint band: the level is that at which the true response lies
+// inside at every frequency, in gain and in phase, at once. A band that holds
+// at each frequency by itself holds at all of them far less often.
 type Responses struct {
-	Omega                   []float64 // rad/s
-	Gain, GainLo, GainHi    []float64
-	Phase, PhaseLo, PhaseHi []float64
-	Drawn                   int
+	Omega []float64 `json:"omega"` // rad/s
+	Gain  Band      `json:"gain"`  // units of the output over those of the input
+	Phase Band      `json:"phase"` // degrees, unwrapped
+	Level float64   `json:"level"`
+	Drawn int       `json:"drawn"` // plants that the band rests on
 }
 
-// responsePoints is the number of frequencies in Responses.
-const responsePoints = 160
+// Band is a curve with its band, at the frequencies of Responses.
+type Band struct {
+	Lo    []float64 `json:"lo"`
+	Value []float64 `json:"value"`
+	Hi    []float64 `json:"hi"`
+}
 
-// Responses computes the plant's frequency response and its band from n drawn
-// plants, from below its slowest pole to the Nyquist frequency of the log.
+// responsePoints is the number of frequencies in Responses, bandDraws that of
+// plants drawn for the band of a fitted model.
+const (
+	responsePoints = 100
+	bandDraws      = 2000
+)
+
+// Responses computes the plant's frequency response and its joint band from n
+// drawn plants, from below its slowest pole to the Nyquist frequency of the log.
+//
+// The band is that of quantiles at each frequency, all of the same tail, which
+// is chosen so that the share Confidence of the draws lies inside everywhere
+// (Montiel Olea & Plagborg-Møller, Simultaneous confidence bands: theory,
+// implementation, and an application to SVARs, J. Applied Econometrics 34
+// (2019) 1-17, the quantile-based band). It asks for no shape of the distribution, and
+// comes out the same in gain or its logarithm.
 func (m *Model) Responses(n int, seed uint64) *Responses {
-	top := math.Pi / m.Noise.SamplePeriod
-	low := top / 100
-	for _, r := range append(slices.Clone(m.Poles), m.Zeros...) {
-		if size := math.Hypot(r.Re, r.Im); size > 1e-3*top/100 {
-			low = math.Min(low, size/10)
+	g := m.TF()
+	out := &Responses{Omega: lti.Grid(m.lowest(), math.Pi/m.Noise.SamplePeriod, responsePoints), Level: Confidence, Drawn: n}
+	turn := 0.0
+	at := make([]complex128, responsePoints)
+	for k, w := range out.Omega {
+		at[k] = g.At(complex(0, w))
+		ph := cmplx.Phase(at[k]) * 180 / math.Pi
+		if k > 0 {
+			turn = 360 * math.Round((out.Phase.Value[k-1]-ph)/360)
+		} else if ph > 90 {
+			turn = -360 // a phase that lags: two integrators start at -180, not at 180
 		}
+		out.Gain.Value = append(out.Gain.Value, cmplx.Abs(at[k]))
+		out.Phase.Value = append(out.Phase.Value, ph+turn)
 	}
-	out := &Responses{Omega: lti.Grid(low, top, responsePoints), Drawn: n}
-	gains, phases := make([][]float64, responsePoints), make([][]float64, responsePoints)
-	draws := m.Draw(n, seed)
-	for i, g := range append([]lti.TF{m.TF()}, draws...) {
-		turn := 0.0
-		last := 0.0
+	// Row k holds what the draws have beyond the estimate: log gain, and
+	// behind those of all frequencies the phase in rad.
+	beyond := make([][]float64, 2*responsePoints)
+	for k := range beyond {
+		beyond[k] = make([]float64, n)
+	}
+	var apart [responsePoints]float64
+	for i, drawn := range m.Draw(n, seed) {
 		for k, w := range out.Omega {
-			h := g.At(complex(0, w))
-			ph := cmplx.Phase(h) * 180 / math.Pi
-			if k > 0 {
-				turn += 360 * math.Round((last-ph-turn)/360)
-			} else if i == 0 && ph > 90 {
-				turn = -360 // a phase that lags: two integrators start at -180, not at 180
-			} else if i > 0 {
-				turn = 360 * math.Round((out.Phase[0]-ph)/360)
-			}
-			last = ph + turn
-			if i == 0 {
-				out.Gain, out.Phase = append(out.Gain, cmplx.Abs(h)), append(out.Phase, last)
-				continue
-			}
-			gains[k], phases[k] = append(gains[k], cmplx.Abs(h)), append(phases[k], last)
+			d := cmplx.Log(drawn.At(complex(0, w)) / at[k])
+			beyond[k][i], beyond[responsePoints+k][i] = real(d), imag(d)
+			apart[k] += cmplx.Abs(d)
 		}
 	}
+	// Phases are unwrapped from where the draws differ least.
+	from := 0
+	for k := range apart {
+		if apart[k] < apart[from] {
+			from = k
+		}
+	}
+	phase := beyond[responsePoints:]
+	follow := func(k, last int) {
+		for i := range phase[k] {
+			phase[k][i] += 2 * math.Pi * math.Round((phase[last][i]-phase[k][i])/(2*math.Pi))
+		}
+	}
+	for k := from - 1; k >= 0; k-- {
+		follow(k, k+1)
+	}
+	for k := from + 1; k < responsePoints; k++ {
+		follow(k, k-1)
+	}
+	lo, hi := jointBand(beyond)
 	for k := range out.Omega {
-		lo, hi := middle(gains[k], out.Gain[k])
-		out.GainLo, out.GainHi = append(out.GainLo, lo), append(out.GainHi, hi)
-		lo, hi = middle(phases[k], out.Phase[k])
-		out.PhaseLo, out.PhaseHi = append(out.PhaseLo, lo), append(out.PhaseHi, hi)
+		out.Gain.Lo = append(out.Gain.Lo, out.Gain.Value[k]*math.Exp(lo[k]))
+		out.Gain.Hi = append(out.Gain.Hi, out.Gain.Value[k]*math.Exp(hi[k]))
+		out.Phase.Lo = append(out.Phase.Lo, out.Phase.Value[k]+lo[responsePoints+k]*180/math.Pi)
+		out.Phase.Hi = append(out.Phase.Hi, out.Phase.Value[k]+hi[responsePoints+k]*180/math.Pi)
 	}
 	return out
 }
 
-// middle returns the ends of the middle 95 % of x, or twice at where x is empty.
-func middle(x []float64, at float64) (lo, hi float64) {
-	if len(x) == 0 {
-		return at, at
+// lowest is where Responses begins, rad/s: a hundredth of the Nyquist
+// frequency, or a decade below the slowest pole or zero. One that may be zero
+// counts by its reach, below which the log tells nothing.
+func (m *Model) lowest() float64 {
+	start := math.Pi / m.Noise.SamplePeriod / 100
+	low := start
+	for _, r := range append(slices.Clone(m.Poles), m.Zeros...) {
+		slow := math.Hypot(r.Re, r.Im) / 10
+		if r.Re95.Contains(0) && r.Im95.Contains(0) {
+			slow = math.Hypot(math.Max(-r.Re95.Lo, r.Re95.Hi), r.Im95.Hi)
+		}
+		if slow > 1e-4*start {
+			low = math.Min(low, slow)
+		}
 	}
-	s := slices.Sorted(slices.Values(x))
-	tail := (1 - Confidence) / 2 * float64(len(s)-1)
-	return s[int(tail)], s[len(s)-1-int(tail)]
+	return low
+}
+
+// jointBand returns for each row of x, which holds one number a draw, the ends
+// of a band in which the share Confidence of the draws lies in all rows at
+// once; zeros where there are no draws.
+func jointBand(x [][]float64) (lo, hi []float64) {
+	lo, hi = make([]float64, len(x)), make([]float64, len(x))
+	n := len(x[0])
+	if n == 0 {
+		return lo, hi
+	}
+	// How near to an end of its row each draw ever comes.
+	nearest := make([]int, n)
+	for i := range nearest {
+		nearest[i] = n
+	}
+	order := make([]int, n)
+	sorted := make([][]float64, len(x))
+	for k, row := range x {
+		sorted[k] = slices.Clone(row)
+		floats.Argsort(sorted[k], order)
+		for rank, i := range order {
+			nearest[i] = min(nearest[i], rank, n-1-rank)
+		}
+	}
+	slices.Sort(nearest)
+	tail := nearest[int((1-Confidence)*float64(n))]
+	for k, row := range sorted {
+		lo[k], hi[k] = row[tail], row[n-1-tail]
+	}
+	return lo, hi
 }

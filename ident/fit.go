@@ -110,6 +110,7 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 	if err := m.sample(ctx, p, f, ranked, opt); err != nil {
 		return m, err
 	}
+	m.FrequencyResponse = m.Responses(bandDraws, opt.Seed)
 	m.Evidence.Structures = structures(ranked)
 	m.Evidence.Methods = methods(sp, some, signals, f, m.Poles)
 	if err := m.tests(p, recs, f); err != nil {

@@ -46,7 +46,10 @@ type Model struct {
 	Zeros          []Root         `json:"zeros"`
 	Gain           Gain           `json:"gain"`
 	Noise          Noise          `json:"noise"`
-	Evidence       Evidence       `json:"evidence"`
+	// FrequencyResponse is that of Plant with its joint band, null where there
+	// is no plant.
+	FrequencyResponse *Responses `json:"frequency_response"`
+	Evidence          Evidence   `json:"evidence"`
 }
 
 // LogUse says which rows of which log a model rests on.
@@ -238,6 +241,7 @@ type Residuals struct {
 	Lags       int     `json:"lags"` // 0: whiteness could not be tested
 	Whiteness  float64 `json:"whiteness_probability"`
 	CrossInput float64 `json:"input_probability"`
+	Linearity  float64 `json:"linearity_probability"` // 1 also where the log is too short to tell
 }
 
 // RefusedError says that the data cannot carry what was asked. What says what
@@ -430,6 +434,13 @@ func (m *Model) validate() error {
 	if err := m.checkRoots("zeros", m.Zeros, num); err != nil {
 		return err
 	}
+	if r := m.FrequencyResponse; r != nil {
+		for _, x := range [][]float64{r.Gain.Lo, r.Gain.Value, r.Gain.Hi, r.Phase.Lo, r.Phase.Value, r.Phase.Hi} {
+			if len(x) != len(r.Omega) {
+				return fmt.Errorf("frequency_response has %d values for %d frequencies", len(x), len(r.Omega))
+			}
+		}
+	}
 	for _, name := range m.Plant.Parameters {
 		var index int
 		switch {
@@ -497,7 +508,7 @@ func (m *Model) finite() error {
 	}
 	e := m.Evidence
 	return check("the evidence", m.OperatingPoint.Input, m.OperatingPoint.Output, m.Noise.SD, m.Plant.Delay,
-		e.ExplainedShare, e.OutsideShare, e.Memories, e.Residuals.Whiteness, e.Residuals.CrossInput)
+		e.ExplainedShare, e.OutsideShare, e.Memories, e.Residuals.Whiteness, e.Residuals.CrossInput, e.Residuals.Linearity)
 }
 
 func reversed(p []float64) lti.Poly {

@@ -129,6 +129,7 @@ func TestReadModelRefuses(t *testing.T) {
 		{"other poles", "where the plant has none", func(m *Model) { m.Poles[0].Re = -7 }},
 		{"missing pole", "are listed", func(m *Model) { m.Poles = m.Poles[1:] }},
 		{"unknown parameter", "none of", func(m *Model) { m.Plant.Parameters[0] = "c0" }},
+		{"short response", "values for", func(m *Model) { m.FrequencyResponse.Phase.Hi = m.FrequencyResponse.Phase.Hi[1:] }},
 		{"noise", "monic", func(m *Model) { m.Noise.Numerator[0] = 2 }},
 	} {
 		spoilt := new(Model)

@@ -19,6 +19,7 @@ func (m *Model) tests(p *fit.Predictor, recs []fit.Record, f *fit.Prediction) er
 	}
 	lags := min(residualLags, p.Rows()/20)
 	m.Evidence.Residuals.Lags = lags
+	m.Evidence.Residuals.Linearity = linearity(p, recs, f)
 	if lags < 2 {
 		return nil
 	}
@@ -139,6 +140,9 @@ func (m *Model) judge(ranked []*candidate, out Outside, f *fit.Prediction) {
 	}
 	if p := m.Evidence.Residuals.CrossInput; p < doubtful {
 		weak("past inputs still explain part of the prediction errors (probability %.2g): the plant misses something", p)
+	}
+	if p := m.Evidence.Residuals.Linearity; p < doubtful {
+		weak("the rig answers nonlinearly: squares of past inputs and outputs explain part of the prediction errors (probability %.2g); the intervals are about the best linear fit to motion of this size: log a run with less motion", p)
 	}
 	for _, c := range ranked[1:] {
 		if c.bic-ranked[0].bic < tie {

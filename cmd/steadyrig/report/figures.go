@@ -18,12 +18,11 @@ import (
 
 // How much is drawn.
 const (
-	stretches     = 420 // of a curve, each drawn by its lowest and highest point
-	closeUpRows   = 150 // of the one-step prediction
-	drawnSteps    = 24  // plants in step responses
-	drawnSpectra  = 200 // plants behind the bands of sensitivity
-	drawnResponse = 400 // plants behind the band of the frequency response
-	shownLogs     = 3
+	stretches    = 420 // of a curve, each drawn by its lowest and highest point
+	closeUpRows  = 150 // of the one-step prediction
+	drawnSteps   = 24  // plants in step responses
+	drawnSpectra = 200 // plants behind the bands of sensitivity
+	shownLogs    = 3
 )
 
 // axis names an axis with its unit.
@@ -242,26 +241,30 @@ func methodFigure(m *ident.Model) (f figure, ok bool) {
 }
 
 // responseFigures draws gain and phase of the plant with their bands.
-func responseFigures(m *ident.Model, u data.Units, seed uint64) []figure {
-	r := m.Responses(drawnResponse, seed)
+func responseFigures(m *ident.Model, u data.Units) []figure {
+	r := m.FrequencyResponse
+	if r == nil {
+		return nil
+	}
 	g := newPlot("frequency, rad/s", axis("gain", words.Ratio(u.Output, u.Input)))
 	logAxis(&g.X)
 	logAxis(&g.Y)
 	ph := newPlot("frequency, rad/s", "phase, degrees")
 	logAxis(&ph.X)
-	addBand(g, r.Omega, r.GainLo, r.GainHi, bandColour)
-	addLine(g, r.Omega, r.Gain, mainLine)
-	addBand(ph, r.Omega, r.PhaseLo, r.PhaseHi, bandColour)
-	addLine(ph, r.Omega, r.Phase, mainLine)
+	addBand(g, r.Omega, r.Gain.Lo, r.Gain.Hi, bandColour)
+	addLine(g, r.Omega, r.Gain.Value, mainLine)
+	addBand(ph, r.Omega, r.Phase.Lo, r.Phase.Hi, bandColour)
+	addLine(ph, r.Omega, r.Phase.Value, mainLine)
 	if span := ph.Y.Max - ph.Y.Min; span > 20 && span < 1000 {
 		ph.Y.Tick.Marker = degreeTicks{}
 	}
 	room(&ph.Y)
 	band := bandColour
-	keys := []key{{Stroke: mainLine, Label: "estimate"}, {Band: &band, Label: fmt.Sprintf("middle 95 %% of %d drawn plants", r.Drawn)}}
+	keys := []key{{Stroke: mainLine, Label: "estimate"}, {Band: &band, Label: fmt.Sprintf("%.0f %% joint band, from %d drawn plants", 100*r.Level, r.Drawn)}}
+	note := fmt.Sprintf("From the logged input to the output, up to the Nyquist frequency of the log. With %.0f %% confidence the whole true response lies inside, gain and phase, at all frequencies at once, if the structure is right.", 100*r.Level)
 	return []figure{
-		{drawn(g, "Gain of the plant over frequency, with its band"), "Frequency response: gain", keys, "From the logged input to the output, up to the Nyquist frequency of the log."},
-		{drawn(ph, "Phase of the plant over frequency, with its band"), "Frequency response: phase", keys, ""},
+		{drawn(g, "Gain of the plant over frequency, with its band"), "Frequency response: gain", keys, note},
+		{drawn(ph, "Phase of the plant over frequency, with its band"), "Frequency response: phase", keys, "The same band as that of the gain."},
 	}
 }
 

@@ -227,7 +227,7 @@ func plantSection(in Input) section {
 	if f, ok := methodFigure(m); ok {
 		s.Figures = append(s.Figures, f)
 	}
-	s.Figures = append(s.Figures, responseFigures(m, u, in.Seed)...)
+	s.Figures = append(s.Figures, responseFigures(m, u)...)
 	return s
 }
 
@@ -438,6 +438,6 @@ func originSection(in Input) section {
 		t.Rows = append(t.Rows, []string{l.File, fmt.Sprint(l.Used), fmt.Sprint(l.Rows), fmt.Sprint(l.Segments), l.SHA256})
 	}
 	s.Tables = []table{t}
-	s.Facts = []fact{{"Tool", in.Tool}, {"Seed", fmt.Sprint(in.Seed)}, {"Figures", fmt.Sprintf("%d drawn plants in step responses, %d behind sensitivity, %d behind the frequency response", drawnSteps, drawnSpectra, drawnResponse)}}
+	s.Facts = []fact{{"Tool", in.Tool}, {"Seed", fmt.Sprint(in.Seed)}, {"Figures", fmt.Sprintf("%d drawn plants in step responses, %d behind sensitivity", drawnSteps, drawnSpectra)}}
 	return s
 }

@@ -250,10 +250,10 @@ func Leading(m *ident.Model, ratio string) string {
 func Residuals(m *ident.Model) string {
 	r := m.Evidence.Residuals
 	if r.Lags == 0 {
-		return fmt.Sprintf("white: not tested, the log is in pieces too short; free of the input: %s (probability of more by chance)", Probability(r.CrossInput))
+		return fmt.Sprintf("white: not tested, the log is in pieces too short; free of the input: %s, linear: %s (probability of more by chance)", Probability(r.CrossInput), Probability(r.Linearity))
 	}
-	return fmt.Sprintf("white: %s, free of the input: %s (probability of more by chance, %d lags)",
-		Probability(r.Whiteness), Probability(r.CrossInput), r.Lags)
+	return fmt.Sprintf("white: %s, free of the input: %s, linear: %s (probability of more by chance, %d lags)",
+		Probability(r.Whiteness), Probability(r.CrossInput), Probability(r.Linearity), r.Lags)
 }
 
 // Root is a pole or a zero, a pair as one, and its 95 % intervals.

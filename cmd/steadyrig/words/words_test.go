@@ -115,7 +115,7 @@ func TestIntegrators(t *testing.T) {
 // Coefficients come with their intervals, in the order that Plant documents for its covariance; what was not estimated
 // comes without one.
 func TestPlant(t *testing.T) {
-	m := &ident.Model{Evidence: ident.Evidence{Residuals: ident.Residuals{Whiteness: 1, CrossInput: 0.5}}, Plant: ident.Plant{
+	m := &ident.Model{Evidence: ident.Evidence{Residuals: ident.Residuals{Whiteness: 1, CrossInput: 0.5, Linearity: 0.25}}, Plant: ident.Plant{
 		Numerator: []float64{-312.7, 2185}, Denominator: []float64{1, 22.15, 0, -2714}, Delay: 0.002,
 		Parameters: []string{"b0", "b1", "a1", "a2", "a3"},
 		Covariance: [][]float64{{100, 0, 0, 0, 0}, {0, 1, 0, 0, 0}, {0, 0, 0.01, 0, 0}, {0, 0, 0, 0, 0}, {0, 0, 0, 0, 25}},
@@ -124,7 +124,7 @@ func TestPlant(t *testing.T) {
 		{Numerator(m), "-(312.7 ± 2.0) s + (2185 ± 20)"},
 		{Denominator(m), "s³ + (22.15 ± 0.20) s² - (2714.0 ± 9.8)"},
 		{Delay(m), "held at 2 ms"},
-		{Residuals(m), "white: not tested, the log is in pieces too short; free of the input: 0.500 (probability of more by chance)"},
+		{Residuals(m), "white: not tested, the log is in pieces too short; free of the input: 0.500, linear: 0.250 (probability of more by chance)"},
 		{Memories(46.34), "46.3 memories of the predictor"},
 		{PolynomialWithin([]float64{-448613, 2.2e-3}, []float64{7940, 6.7e-6}, "s"), "-(4.486 ± 0.079)e5 s + (2.2000 ± 0.0067)e-3"},
 		{PolynomialWithin([]float64{0.5}, []float64{3000}, "s"), "(0.0 ± 3.0)e3"},
