@@ -30,6 +30,8 @@ type Outside struct {
 	Logged *float64 `json:"logged"`
 	Quiet  bool     `json:"quiet"` // nothing acted from outside
 	Words  string   `json:"words"`
+
+	law *fit.ARX // from the output to the input, as the log shows it; nil where it shows none
 }
 
 // outside measures outside power. Under a fixed linear law without it the
@@ -37,7 +39,7 @@ type Outside struct {
 // law, not the plant (Söderström & Stoica, System Identification, Prentice Hall
 // 1989, sec. 10; Gustavsson, Ljung & Söderström, Automatica 13 (1977) 59-75).
 func outside(exps []*data.Experiment) Outside {
-	unexplained := func(less func(s data.Segment, y, u []float64)) float64 {
+	unexplained := func(less func(s data.Segment, y, u []float64)) (float64, *fit.ARX) {
 		var recs []fit.Record
 		for _, e := range exps {
 			for _, s := range e.Segments {
@@ -50,9 +52,9 @@ func outside(exps []*data.Experiment) Outside {
 		}
 		m, _ := fit.FitARX(recs, fit.ARXOptions{NA: lawOrder, NB: lawOrder + 1, Delay: 0})
 		if m == nil {
-			return 0
+			return 0, nil
 		}
-		return m.RSS
+		return m.RSS, m
 	}
 	var total float64
 	var reference, dither bool
@@ -66,9 +68,10 @@ func outside(exps []*data.Experiment) Outside {
 	if total == 0 {
 		return Outside{Quiet: true, Words: "the input does not move"}
 	}
-	o := Outside{Share: unexplained(nil) / total}
+	rss, law := unexplained(nil)
+	o := Outside{Share: rss / total, law: law}
 	if (reference || dither) && o.Share > 1e-12 {
-		rest := unexplained(func(s data.Segment, y, u []float64) {
+		rest, law := unexplained(func(s data.Segment, y, u []float64) {
 			for k := range y {
 				if s.R != nil {
 					y[k] -= s.R[k]
@@ -77,9 +80,12 @@ func outside(exps []*data.Experiment) Outside {
 					u[k] -= s.D[k]
 				}
 			}
-		}) / total
-		logged := math.Max(0, 1-rest/o.Share)
+		})
+		logged := math.Max(0, 1-rest/rss)
 		o.Logged = &logged
+		if law != nil && logged >= 0.5 {
+			o.law = law
+		}
 	}
 	switch {
 	case o.Share < quietShare && (o.Logged == nil || *o.Logged < 0.5):
