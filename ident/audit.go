@@ -29,8 +29,9 @@ type AuditReport struct {
 	Pairing        Pairing        `json:"pairing"`
 	LoopRate       LoopRate       `json:"loop_rate"`
 	Outside        Outside        `json:"outside"`
-	Law            *LawCheck      `json:"stopgap"`  // null where the rig file has no law
-	Memories       float64        `json:"memories"` // length of the logs in memories of a glance's predictor; 0: unknown
+	Law            *LawCheck      `json:"stopgap"`     // null where the rig file has no law
+	Memories       float64        `json:"memories"`    // length of the logs in memories of a glance's predictor; 0: unknown
+	Informative    *Informative   `json:"informative"` // null where a glance finds no plant
 	Flaws          []Flaw         `json:"flaws"`
 	NextStep       string         `json:"next_step"`
 }
@@ -188,6 +189,11 @@ func (a *AuditReport) glance(ctx context.Context, recs []fit.Record, rig *data.R
 		a.Sign.Words = "more input pushes the output down (negative gain): the inner gain must be negative"
 	}
 	a.Memories = float64(p.Rows()) / memory(decaying(best))
+	for _, cand := range ranked {
+		if a.Informative == nil && a.Outside.law != nil {
+			a.Informative = informative(recs, cand.fit, a.Outside.law)
+		}
+	}
 	a.Pairing.Words = "input and output of a row belong together"
 	var refused *RefusedError
 	if err := c.pairing(ctx, some, ranked, runtime.GOMAXPROCS(0)); err != nil {
@@ -241,12 +247,21 @@ func (a *AuditReport) conclude() error {
 		a.NextStep = fmt.Sprintf("log a longer run: this one holds %.0f memories of the predictor, intervals want %d", a.Memories, soundMemories)
 	case a.Outside.Share < faintShare:
 		a.Verdict = Weak
-		a.NextStep = "log a run with a stronger probe: the intervals will be wide"
+		a.NextStep = "log a run with a stronger probe" + a.Informative.where() + ": the intervals rest on little"
+	case a.Informative.isWide():
+		a.Verdict = Weak
+		a.NextStep = fmt.Sprintf("log a run with a stronger probe%s, or one %s times as long: the interval of the rightmost pole will be wide",
+			a.Informative.where(), three(a.Informative.enough()))
+	case a.Informative.onShape():
+		a.Verdict = Weak
+		a.NextStep = "log a run with a stronger probe" + a.Informative.where() + ": this one tells the rightmost pole by the shape assumed for the disturbance"
 	case a.LoopRate.Growth > 2:
 		a.Verdict = Weak
 		a.NextStep = "log faster: the unstable pole more than doubles the output within a row"
 	case a.LoopRate.Growth > 1.35:
 		a.NextStep = "fit the log; a faster log would tell the fast poles better"
+	case a.Informative != nil && a.Informative.Lacking:
+		a.NextStep = "fit the log; in the next one put more of the probe" + a.Informative.where()
 	default:
 		a.NextStep = "fit the log"
 	}

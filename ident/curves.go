@@ -91,14 +91,14 @@ func (m *Model) OneStep(s data.Segment) (*Predictions, error) {
 // at each frequency by itself holds at all of them far less often.
 type Responses struct {
 	Omega []float64 `json:"omega"` // rad/s
-	Gain  Band      `json:"gain"`  // units of the output over those of the input
-	Phase Band      `json:"phase"` // degrees, unwrapped
+	Gain  Curve     `json:"gain"`  // units of the output over those of the input
+	Phase Curve     `json:"phase"` // degrees, unwrapped
 	Level float64   `json:"level"`
 	Drawn int       `json:"drawn"` // plants that the band rests on
 }
 
-// Band is a curve with its band, at the frequencies of Responses.
-type Band struct {
+// Curve is a curve with its band, at the frequencies of Responses.
+type Curve struct {
 	Lo    []float64 `json:"lo"`
 	Value []float64 `json:"value"`
 	Hi    []float64 `json:"hi"`

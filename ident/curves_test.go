@@ -92,7 +92,7 @@ func TestResponsesOfKnownPlant(t *testing.T) {
 		if d := math.Remainder(r.Phase.Value[k]-phase, 360); math.Abs(d) > 1e-6 {
 			t.Fatalf("phase at %g rad/s is %g, want %g", w, r.Phase.Value[k], phase)
 		}
-		for _, b := range []Band{r.Gain, r.Phase} {
+		for _, b := range []Curve{r.Gain, r.Phase} {
 			if !(b.Lo[k] < b.Value[k] && b.Value[k] < b.Hi[k]) {
 				t.Fatalf("band [%g, %g] at %g rad/s does not hold the estimate %g", b.Lo[k], b.Hi[k], w, b.Value[k])
 			}

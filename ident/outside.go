@@ -46,6 +46,8 @@ type Outside struct {
 	Rounding float64 `json:"rounding"`
 	Quiet    bool    `json:"quiet"` // nothing acted from outside
 	Words    string  `json:"words"`
+
+	law *fit.ARX // from the output to the input, as the log shows it; nil where it shows none
 }
 
 // outside measures outside power. Under a fixed linear law without it the
@@ -66,7 +68,7 @@ func outside(exps []*data.Experiment) Outside {
 		}
 		m, _ := fit.FitARX(recs, fit.ARXOptions{NA: lawOrder, NB: lawOrder + 1, Delay: 0})
 		if m == nil {
-			m = new(fit.ARX)
+			return nil
 		}
 		return m
 	}
@@ -83,7 +85,10 @@ func outside(exps []*data.Experiment) Outside {
 		return Outside{Quiet: true, Words: "the input does not move"}
 	}
 	law := unexplained(nil)
-	o := Outside{Share: law.RSS / total}
+	var o Outside
+	if law != nil {
+		o.Share, o.law = law.RSS/total, law
+	}
 	if o.Share > 1e-12 {
 		// With errors of variance v in its columns the law leaves
 		// v_u Σ a² + v_y Σ b² of itself.
@@ -91,7 +96,7 @@ func outside(exps []*data.Experiment) Outside {
 		o.Rounding = (vu*floats.Dot(law.A, law.A) + vy*floats.Dot(law.B, law.B)) * float64(law.Rows) / law.RSS
 	}
 	if (reference || dither) && o.Share > 1e-12 {
-		rest := unexplained(func(s data.Segment, y, u []float64) {
+		less := unexplained(func(s data.Segment, y, u []float64) {
 			for k := range y {
 				if s.R != nil {
 					y[k] -= s.R[k]
@@ -100,9 +105,15 @@ func outside(exps []*data.Experiment) Outside {
 					u[k] -= s.D[k]
 				}
 			}
-		}).RSS / total
-		logged := math.Max(0, 1-rest/o.Share)
+		})
+		logged := 1.0
+		if less != nil {
+			logged = math.Max(0, 1-less.RSS/law.RSS)
+		}
 		o.Logged = &logged
+		if less != nil && logged >= 0.5 {
+			o.law = less
+		}
 	}
 	switch {
 	case o.Share < quietShare && (o.Logged == nil || *o.Logged < 0.5):

@@ -36,8 +36,18 @@ func showAudit(p *page, r *ident.AuditReport, exps []*data.Experiment, rig *data
 	if r.Law != nil {
 		p.item("stopgap law", r.Law.Words)
 	}
+	if i := r.Informative; i != nil {
+		p.item("to expect", i.Words)
+		p.item("probe power", i.Advice)
+	}
 	if r.NextStep != "" {
 		p.item("next step", r.NextStep)
+	}
+
+	if i := r.Informative; i != nil {
+		p.heading("Where what the log tells of the rightmost pole comes from")
+		p.table(dataframe.LoadRecords(append([][]string{bandHead}, words.Bands(i)...), dataframe.DetectTypes(false), dataframe.DefaultType(series.String)))
+		wrap(p.w, "  ", words.BandNote(i))
 	}
 
 	p.heading("Columns, rows in use")
@@ -55,6 +65,9 @@ func showAudit(p *page, r *ident.AuditReport, exps []*data.Experiment, rig *data
 		wrap(p.w, "    ", strings.TrimSuffix(f.Detail, ".")+". "+f.Effect)
 	}
 }
+
+// bandHead names the columns of words.Bands.
+var bandHead = []string{">rad/s", ">Hz", ">power", ">tells", ">could add", ">worth"}
 
 // describe tabulates the columns in use over all logs.
 func describe(exps []*data.Experiment, rig *data.Rig) dataframe.DataFrame {

@@ -89,6 +89,31 @@ func logFigures(e *data.Experiment, rig *data.Rig) []figure {
 	}
 }
 
+// bandFigure draws how the probe's power and what the log tells of the rightmost pole lie over the bands.
+func bandFigure(i *ident.Informative) figure {
+	p := newPlot("frequency, rad/s", "share, %")
+	logAxis(&p.X)
+	var x, power, tells []float64
+	for k, b := range i.Bands {
+		from := b.From
+		if k == 0 {
+			from = b.To / 2 // a log axis has no zero
+		}
+		x = append(x, from, b.To)
+		power, tells = append(power, 100*b.Power, 100*b.Power), append(tells, 100*b.Information, 100*b.Information)
+	}
+	best := i.Bands[i.Best]
+	shade := faint(rust, 0x18)
+	top := 1.1 * math.Max(slices.Max(power), slices.Max(tells))
+	addBand(p, []float64{math.Max(best.From, x[0]), best.To}, []float64{0, 0}, []float64{top, top}, shade)
+	addLine(p, x, power, mainLine)
+	addLine(p, x, tells, otherLine)
+	p.X.Min, p.X.Max, p.Y.Min, p.Y.Max = x[0], x[len(x)-1], 0, top
+	return figure{drawn(p, "Shares of the probe's power and of what the log tells of the rightmost pole, by band of frequencies"), "Where the rightmost pole is told from",
+		[]key{{Stroke: mainLine, Label: "power from outside at the input"}, {Stroke: otherLine, Label: "what the log tells of the pole"}, {Band: &shade, Label: "where more power would help most"}},
+		""}
+}
+
 // fitFigures draws the one-step prediction of the longest segment, close up, and its errors over all of it.
 func fitFigures(m *ident.Model, exps []*data.Experiment, u data.Units) []figure {
 	var s data.Segment

@@ -88,7 +88,7 @@ func TestReport(t *testing.T) {
 		t.Error("a figure comes before the verdict")
 	}
 	for _, title := range []string{
-		"Output of log.csv", "Input of log.csv", "One-step prediction", "What the model leaves over", "Poles × and zeros ○", "The rightmost pole by each method",
+		"Output of log.csv", "Input of log.csv", "Where the rightmost pole is told from", "One-step prediction", "What the model leaves over", "Poles × and zeros ○", "The rightmost pole by each method",
 		"Frequency response: gain", "Frequency response: phase", "Sensitivity at the plant input, both loops", "Sensitivity of the inner loop alone",
 		"Step of the reference", "What the step takes of the actuator",
 	} {

@@ -142,6 +142,9 @@ func logSection(in Input) section {
 	if a.Law != nil {
 		s.Facts = append(s.Facts, fact{"Stopgap law", a.Law.Words})
 	}
+	if i := a.Informative; i != nil {
+		s.Facts = append(s.Facts, fact{"To expect", i.Words}, fact{"Probe power", i.Advice})
+	}
 	if a.NextStep != "" {
 		s.Facts = append(s.Facts, fact{"Next step", a.NextStep})
 	}
@@ -151,6 +154,13 @@ func logSection(in Input) section {
 			break
 		}
 		s.Figures = append(s.Figures, logFigures(e, in.Rig)...)
+	}
+	if i := a.Informative; i != nil {
+		s.Figures = append(s.Figures, bandFigure(i))
+		s.Tables = append(s.Tables, table{
+			Caption: "Where what the log tells of the rightmost pole comes from", Head: []string{"rad/s", "Hz", "Power", "Tells", "Could add", "Worth"},
+			Right: []bool{true, true, true, true, true, true}, Rows: words.Bands(i), Notes: []string{words.BandNote(i)},
+		})
 	}
 	flaws := table{Caption: "Flaws found in the log", Head: []string{"Flaw", "Column", "Count", "First line", "What", "Effect"}, Right: []bool{false, false, true, true, false, false}}
 	for _, f := range a.Flaws {

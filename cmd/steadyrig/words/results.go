@@ -331,3 +331,31 @@ func Bound(b design.Bound) (value, interval, asked string) {
 	}
 	return value, interval, asked
 }
+
+// Bands tells of each band its frequencies in rad/s and Hz, its share of the probe's power and of what the log tells,
+// how much more power it could get and what that would be worth.
+func Bands(i *ident.Informative) [][]string {
+	var rows [][]string
+	for _, b := range i.Bands {
+		rows = append(rows, []string{
+			Brief(b.From) + " to " + Brief(b.To), Brief(b.From/(2*math.Pi)) + " to " + Brief(b.To/(2*math.Pi)),
+			part(b.Power), part(b.Information), Brief(100*b.Added) + " %", Brief(b.Worth),
+		})
+	}
+	return rows
+}
+
+// BandNote says what the figures of Bands are.
+func BandNote(i *ident.Informative) string {
+	return "Power: of what moves the input from outside the loop. Tells: of what the log tells of the pole; the rest, " + part(i.Noise) +
+		", rests on the shape assumed for the disturbance. Could add: so much of today's power more, by an even dither in the band, would move the output no more than it moves now. " +
+		"Worth: as a log so many times as long."
+}
+
+// part formats a share among others.
+func part(x float64) string {
+	if x < 5e-4 {
+		return "< 0.1 %"
+	}
+	return fmt.Sprintf("%.1f %%", 100*x)
+}
