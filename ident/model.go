@@ -50,6 +50,7 @@ type Model struct {
 	// is no plant.
 	FrequencyResponse *Responses `json:"frequency_response"`
 	Evidence          Evidence   `json:"evidence"`
+	Exact             *Exact     `json:"exact,omitempty"` // null where not asked for
 }
 
 // LogUse says which rows of which log a model rests on.
