@@ -19,7 +19,11 @@ func newFit(a *app) *cobra.Command {
 		Short: "Fit a plant with bounds to logs",
 		Long: `fit finds a continuous-time transfer function of low order in closed-loop logs,
 with its delay, 95 % intervals of its poles, zeros and gain, and the evidence
-for them. It writes model.json, or the file that --out names.`,
+for them. It writes model.json, or the file that --out names.
+
+With --exact it adds 95 % intervals of the poles that matter which rest on no
+long log and, where the probe was drawn at random, on nothing about the noise.
+They need the probe or the reference in the log.`,
 		Example: "  steadyrig fit rig.toml run7.csv run8.csv",
 		Args:    wants(2, -1, "a rig file and one or more logs"),
 		RunE: func(cmd *cobra.Command, args []string) error {
@@ -47,11 +51,17 @@ for them. It writes model.json, or the file that --out names.`,
 	}
 	s.add(cmd, "write the model here instead of to model.json")
 	s.addSeed(cmd)
+	s.addExact(cmd)
 	return cmd
 }
 
 // fit fits a model. A refusal comes with the model; any other error without one.
 func (a *app) fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, s *settings) (*ident.Model, error) {
+	if s.exact {
+		if err := ident.CheckExact(exps, rig); err != nil {
+			return nil, inputError(err)
+		}
+	}
 	bar := a.progress("fit", s.quiet)
 	defer bar.wipe()
 	model, err := ident.Fit(ctx, exps, rig, ident.Options{Seed: s.seed, Progress: bar.step})
@@ -60,6 +70,13 @@ func (a *app) fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, s
 		return nil, err
 	}
 	model.Tool, model.Made = a.tool, a.made()
+	if s.exact {
+		bar := a.progress("exact", s.quiet)
+		defer bar.wipe()
+		if err := model.AddExact(ctx, exps, rig, ident.Options{Seed: s.seed, Progress: bar.step}); err != nil {
+			return nil, err
+		}
+	}
 	return model, err
 }
 

@@ -81,6 +81,7 @@ type settings struct {
 	quiet bool
 	force bool
 	seed  uint64
+	exact bool
 }
 
 // defaultSeed serves where --seed is not given, so that a call without it can be repeated, too.
@@ -99,6 +100,11 @@ func (s *settings) add(cmd *cobra.Command, out string) {
 // addSeed adds --seed to a command that draws random numbers.
 func (s *settings) addSeed(cmd *cobra.Command) {
 	cmd.Flags().Uint64Var(&s.seed, "seed", defaultSeed, "seed of all random draws")
+}
+
+// addExact adds --exact to a command that fits.
+func (s *settings) addExact(cmd *cobra.Command) {
+	cmd.Flags().BoolVar(&s.exact, "exact", false, "add intervals of the poles that matter that hold for logs of any length")
 }
 
 // wants returns a check of the number of arguments; what names them in words. most < 0: no upper limit.

@@ -60,6 +60,7 @@ rig.toml, audit.json, model.json, loops.json and report.html into one folder.`,
 	}
 	s.addFolder(cmd)
 	s.addSeed(cmd)
+	s.addExact(cmd)
 	return cmd
 }
 
@@ -305,6 +306,7 @@ func (j *job) show(p *page) {
 		wrap(p.w, "  ", words.Unstable(j.model.Poles))
 		showPlant(p, j.model, u)
 		showPoles(p, j.model)
+		showExact(p, j.model)
 		showRoots(p, "Zeros", j.model.Zeros, "right half-plane")
 		showMethods(p, j.model)
 		if text := words.Drawn(j.model); text != "" {

@@ -14,6 +14,7 @@ func showModel(p *page, m *ident.Model, u data.Units) {
 	if len(m.Plant.Denominator) > 0 {
 		showPlant(p, m, u)
 		showPoles(p, m)
+		showExact(p, m)
 		showRoots(p, "Zeros", m.Zeros, "right half-plane")
 		showMethods(p, m)
 	}
@@ -37,6 +38,20 @@ func showPlant(p *page, m *ident.Model, u data.Units) {
 func showPoles(p *page, m *ident.Model) {
 	showRoots(p, "Poles", m.Poles, "unstable")
 	for _, note := range words.PoleNotes(m.Poles) {
+		wrap(p.w, "  ", note)
+	}
+}
+
+// showExact prints the intervals that rest on no long log, where they were asked for.
+func showExact(p *page, m *ident.Model) {
+	if m.Exact == nil {
+		return
+	}
+	p.heading(words.ExactTitle(m.Exact))
+	if pole, part, bounds := words.ExactIntervals(m.Exact); len(pole) > 0 {
+		p.table(columns(">pole", pole, "part", part, "95 % interval", bounds))
+	}
+	for _, note := range words.ExactNotes(m.Exact) {
 		wrap(p.w, "  ", note)
 	}
 }

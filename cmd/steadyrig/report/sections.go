@@ -211,6 +211,14 @@ func plantSection(in Input) section {
 	poles := rootTable("Poles, rad/s", m.Poles, "Unstable")
 	poles.Notes = words.PoleNotes(m.Poles)
 	s.Tables = append(s.Tables, poles)
+	if e := m.Exact; e != nil {
+		exact := table{Caption: words.ExactTitle(e), Head: []string{"Pole", "Part", "95 % interval"}, Right: []bool{true}, Notes: words.ExactNotes(e)}
+		pole, part, bounds := words.ExactIntervals(e)
+		for i := range pole {
+			exact.Rows = append(exact.Rows, []string{pole[i], part[i], bounds[i]})
+		}
+		s.Tables = append(s.Tables, exact)
+	}
 	if len(m.Zeros) > 0 {
 		s.Tables = append(s.Tables, rootTable("Zeros, rad/s", m.Zeros, "Right half-plane"))
 	}

@@ -296,6 +296,46 @@ func PoleNotes(poles []ident.Root) []string {
 	return notes
 }
 
+// ExactTitle heads the intervals that rest on no long log.
+func ExactTitle(e *ident.Exact) string { return "Finite-sample intervals of poles, rad/s: " + e.Claim }
+
+// ExactIntervals lists the intervals that rest on no long log: which pole, which part of it, from where to where.
+func ExactIntervals(e *ident.Exact) (pole, part, bounds []string) {
+	for _, q := range e.Poles {
+		at, of := Number(q.Re), "real pole"
+		switch {
+		case q.Im95 != nil:
+			at, of = Number(q.Re)+" ± "+Number(q.Im)+"i", "real part"
+		case q.OfTwo:
+			of = "larger of two"
+		}
+		pole, part, bounds = append(pole, at), append(part, of), append(bounds, Interval(q.Re95))
+		if q.Im95 != nil {
+			pole, part, bounds = append(pole, ""), append(part, "imaginary part"), append(bounds, "± "+Interval(*q.Im95))
+		}
+	}
+	return pole, part, bounds
+}
+
+// ExactNotes tells what those intervals rest on, and why no more is claimed.
+func ExactNotes(e *ident.Exact) []string {
+	if e.Claim == ident.ClaimNone {
+		return []string{sentence("none can be given: " + e.Note)}
+	}
+	notes := []string{
+		sentence("assumed: " + e.Assumption),
+		fmt.Sprintf("If so, each holds the truth in at least %s of logs of any length; at least, since the region that it is a projection of is one for the whole plant. %s, %d sums, seed %d.",
+			Share(e.Level), Count(e.Rows, "row"), e.Draws, e.Seed),
+	}
+	if e.Claim == ident.ClaimApproximate {
+		notes = append(notes, "Approximate, since the noise shape comes from the same log; not exact, since "+e.Note+".")
+	}
+	return notes
+}
+
+// sentence gives a text a capital and a full stop.
+func sentence(s string) string { return strings.ToUpper(s[:1]) + s[1:] + "." }
+
 // SteadyGain is the gain at rest, ratio the unit of output over input, or why there is none.
 func SteadyGain(m *ident.Model, ratio string) string {
 	switch {
