@@ -178,23 +178,65 @@ func gram(c []float64, rows int) *mat.SymDense {
 	return out
 }
 
-// solveLocal finds κ and ε of a record by linear least squares, applies them
-// to its errors and returns their sum of squares, prior included. h is gram's.
-func (w *workspace) solveLocal(h *mat.SymDense, t0 int) (float64, bool) {
-	q := h.SymmetricDim()
+// gather sets up the linear least squares of a record's κ and ε.
+func (w *workspace) gather(t0 int) {
+	q := w.h.SymmetricDim()
 	if cap(w.local) < q {
-		w.local = make([]float64, q)
+		w.local, w.g = make([]float64, q), make([]float64, q)
 	}
-	w.local = w.local[:q]
+	w.local, w.g = w.local[:q], w.g[:q]
 	e := w.e[t0:]
-	g := make([]float64, q)
-	g[0] = floats.Dot(w.step, e)
+	w.g[0] = floats.Dot(w.step, e)
 	for i := 1; i < q; i++ {
-		g[i] = -floats.Dot(w.free[i-1][:w.settled], e[:w.settled])
+		w.g[i] = -floats.Dot(w.free[i-1][:w.settled], e[:w.settled])
 	}
-	if !solveScaled(w.local, h, g, 0) {
-		return 0, false
+}
+
+// solveShare solves for the κ that records share and for the ε of each. Of
+// several records each first gives its own ε up, and what is left is one
+// equation for κ.
+func (s *search) solveShare(share []int) bool {
+	if len(share) == 1 {
+		w := &s.work[share[0]]
+		return solveScaled(w.local, w.h, w.g, 0)
 	}
+	var info, slope float64
+	for _, i := range share {
+		w := &s.work[i]
+		cross := make([]float64, len(w.g)-1)
+		for k := range cross {
+			cross[k] = w.h.At(0, k+1)
+		}
+		x := w.local[1:]
+		if !solveScaled(x, w.ownErrors(), cross, 0) {
+			return false
+		}
+		info += w.h.At(0, 0) - floats.Dot(cross, x)
+		slope += w.g[0] - floats.Dot(w.g[1:], x)
+	}
+	for _, i := range share {
+		w := &s.work[i]
+		w.local[0] = slope / info
+		rest := make([]float64, len(w.g)-1)
+		for k := range rest {
+			rest[k] = w.g[k+1] - w.local[0]*w.h.At(0, k+1)
+		}
+		if !solveScaled(w.local[1:], w.ownErrors(), rest, 0) {
+			return false
+		}
+	}
+	return info > 0
+}
+
+// ownErrors is the information about ε alone.
+func (w *workspace) ownErrors() *mat.SymDense {
+	return w.h.SliceSym(1, w.h.SymmetricDim()).(*mat.SymDense)
+}
+
+// apply takes κ and ε out of a record's errors and returns their sum of
+// squares, prior included.
+func (w *workspace) apply(t0 int) float64 {
+	e, q := w.e[t0:], len(w.local)
 	floats.AddScaled(e, -w.local[0], w.step)
 	var rss float64
 	for i := 1; i < q; i++ {
@@ -202,7 +244,7 @@ func (w *workspace) solveLocal(h *mat.SymDense, t0 int) (float64, bool) {
 		w.e[t0-i] = w.local[i]
 		rss += w.local[i] * w.local[i]
 	}
-	return rss + floats.Dot(e, e), true
+	return rss + floats.Dot(e, e)
 }
 
 // logDet is the log of the determinant of h without its first skip rows and

@@ -240,7 +240,7 @@ func (m *Model) describe(p *fit.Predictor, f *fit.Prediction, rig *data.Rig) {
 		m.OperatingPoint = OperatingPoint{Input: o.Input, Output: o.Output}
 	default:
 		var u, y float64
-		means := p.Means()
+		_, means := p.Means()
 		for i, mean := range means {
 			y += mean / float64(len(means))
 			u += p.Rest(f, i, mean) / float64(len(means))
