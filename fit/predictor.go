@@ -80,11 +80,11 @@ func NewPredictor(recs []Record, period, maxDelay float64) (*Predictor, error) {
 		mu, my = mu/rows, my/rows
 		for _, i := range share {
 			r := p.recs[i]
-			c := Record{U: make([]float64, len(r.U)), Y: make([]float64, len(r.Y)), Log: r.Log}
-			for i := range r.U {
-				c.U[i], c.Y[i] = r.U[i]-mu, r.Y[i]-my
-				uu += c.U[i] * c.U[i]
-				yy += c.Y[i] * c.Y[i]
+			c := Record{U: make([]float64, len(r.U)), Y: make([]float64, len(r.Y)), Log: r.Log, Resumes: i != share[0]}
+			for k := range r.U {
+				c.U[k], c.Y[k] = r.U[k]-mu, r.Y[k]-my
+				uu += c.U[k] * c.U[k]
+				yy += c.Y[k] * c.Y[k]
 			}
 			p.recs[i] = c
 			p.meanU, p.meanY = append(p.meanU, mu), append(p.meanY, my)
@@ -393,23 +393,18 @@ func (p *Predictor) Rest(m *Prediction, record int, y float64) float64 {
 // the means over the records that share its constant, which holds about them.
 func (p *Predictor) Means() (u, y []float64) { return slices.Clone(p.meanU), slices.Clone(p.meanY) }
 
-// Logs returns the log of each record of Errors.
-func (p *Predictor) Logs() []int {
-	var out []int
-	for _, r := range p.recs {
-		out = append(out, r.Log)
-	}
-	return out
-}
+// Logs returns the number of equations of each log.
+func (p *Predictor) Logs() []int { return slices.Clone(p.logs) }
 
-// Inputs returns the input of each row of Errors, for tests of what is left.
-func (p *Predictor) Inputs() [][]float64 {
-	var out [][]float64
+// Inputs returns records of the input in each row of Errors, without output,
+// for tests of what is left.
+func (p *Predictor) Inputs() []Record {
+	var out []Record
 	for i, r := range p.recs {
 		u := append([]float64(nil), r.U[p.Lead:]...)
 		floats.Scale(p.su, u)
 		floats.AddConst(p.meanU[i], u)
-		out = append(out, u)
+		out = append(out, Record{U: u, Log: r.Log, Resumes: r.Resumes})
 	}
 	return out
 }

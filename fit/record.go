@@ -17,7 +17,7 @@ type Record struct {
 	// Log is the log that the record is of, counted from 0. Errors of one log have one variance.
 	Log int
 	// Resumes tells that the record goes on where the one before left off, after a gap: both rest at the same point and
-	// share a constant.
+	// share a constant. A first record resumes nothing.
 	Resumes bool
 }
 
@@ -32,7 +32,7 @@ func checkRecords(recs []Record) {
 // checkLogs panics where records of one constant are of different logs.
 func checkLogs(recs []Record) {
 	for i, r := range recs {
-		if r.Log < 0 || r.Resumes && (i == 0 || recs[i-1].Log != r.Log) {
+		if r.Log < 0 || r.Resumes && i > 0 && recs[i-1].Log != r.Log {
 			panic(badLogs)
 		}
 	}

@@ -116,6 +116,9 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 	if err := m.tests(p, recs, f); err != nil {
 		return m, err
 	}
+	if err := m.compare(ctx, exps, rig, p, f, opt); err != nil {
+		return m, err
+	}
 	m.judge(ranked, out, f)
 	if err := m.finite(); err != nil {
 		return newModel(exps, rig).refuse(&RefusedError{What: "the log does not determine the plant: " + err.Error(), Do: "log a longer run or a stronger probe"})
@@ -147,12 +150,12 @@ func (m *Model) refuse(err error) (*Model, error) {
 func records(exps []*data.Experiment) ([]fit.Record, float64, error) {
 	var recs []fit.Record
 	period := exps[0].Period
-	for _, e := range exps {
+	for i, e := range exps {
 		if math.Abs(e.Period-period) > 1e-3*period {
 			return nil, 0, fmt.Errorf("%s is sampled every %.6g s, %s every %.6g s: fit logs of one period together", exps[0].File, period, e.File, e.Period)
 		}
-		for _, s := range e.Segments {
-			recs = append(recs, fit.Record{U: s.U, Y: s.Y})
+		for k, s := range e.Segments {
+			recs = append(recs, fit.Record{U: s.U, Y: s.Y, Log: i, Resumes: k > 0 && resumes(e, k)})
 		}
 	}
 	return recs, period, nil
@@ -176,7 +179,7 @@ func spreadOver(recs []fit.Record, rows int) []fit.Record {
 				from = b * (len(r.Y) - size) / (k - 1)
 			}
 			to := min(from+size, len(r.Y))
-			out = append(out, fit.Record{U: r.U[from:to], Y: r.Y[from:to]})
+			out = append(out, fit.Record{U: r.U[from:to], Y: r.Y[from:to], Log: r.Log, Resumes: r.Resumes && k == 1})
 		}
 	}
 	return out
@@ -234,7 +237,7 @@ func (m *Model) describe(p *fit.Predictor, f *fit.Prediction, rig *data.Rig) {
 	m.derive()
 
 	h := f.H()
-	m.Noise = Noise{Numerator: h.Num, Denominator: h.Den, SD: math.Sqrt(f.Variance), SamplePeriod: f.Period}
+	m.Noise = Noise{Numerator: h.Num, Denominator: h.Den, SD: noiseSD(p, f), SamplePeriod: f.Period}
 	switch o := rig.OperatingPoint; {
 	case o != nil:
 		m.OperatingPoint = OperatingPoint{Input: o.Input, Output: o.Output}
