@@ -42,10 +42,10 @@ func (s *search) normal(q shifted, p int) (*mat.SymDense, []float64) {
 	// What is left of a shared constant once its records gave up their own
 	// unknowns: products with the shared parameters, then with itself.
 	shared := make([]float64, p+1)
-	for i := range s.work {
-		w := &s.work[i]
-		t0 := s.pad + s.Lead
-		s.filtered(w, q, t0)
+	t0 := s.pad + s.Lead
+	// add adds the first rows of a record, as its errors stand. The first kept
+	// parameters are not eliminated.
+	add := func(w *workspace, rows, kept int, weight float64) {
 		clear(jj)
 		clear(je)
 		for k := range p {
@@ -55,7 +55,6 @@ func (s *search) normal(q shifted, p int) (*mat.SymDense, []float64) {
 				past[k*nc+i-1] = v[0]
 			}
 		}
-		rows := len(w.e) - t0
 		for from := 0; from < rows; from += chunk {
 			m := min(chunk, rows-from)
 			col := func(k int) []float64 {
@@ -106,11 +105,6 @@ func (s *search) normal(q shifted, p int) (*mat.SymDense, []float64) {
 		// Eliminate the constant and the start-up errors, whose prior counts
 		// as one more equation each. The constant's column is -S. One that
 		// other records share is kept until the last of them.
-		share := s.shareOf(i)
-		kept := p
-		if len(share) > 1 {
-			kept++
-		}
 		q := all - kept
 		hl := mat.NewSymDense(q, nil)
 		cross := mat.NewDense(q, kept, nil)
@@ -138,7 +132,6 @@ func (s *search) normal(q shifted, p int) (*mat.SymDense, []float64) {
 		if ok {
 			ok = chol.SolveTo(&sol, cross) == nil
 		}
-		weight := s.weight(s.recs[i].Log)
 		for k := range p {
 			grad[k] += weight * je[k]
 		}
@@ -156,6 +149,23 @@ func (s *search) normal(q shifted, p int) (*mat.SymDense, []float64) {
 					h.SetSym(k, l, h.At(k, l)+weight*v)
 				}
 			}
+		}
+	}
+	for i := range s.work {
+		w := &s.work[i]
+		s.filtered(w, q, t0)
+		share, kept := s.shareOf(i), p
+		if len(share) > 1 {
+			kept++
+		}
+		weight := s.weight(s.recs[i].Log)
+		add(w, len(w.e)-t0, kept, weight)
+		if warm := s.warm[i]; warm > 0 {
+			e := slices.Clone(w.e)
+			w.restart(t0, warm)
+			w.errorsFiltered(q, t0)
+			add(w, warm, kept, -weight)
+			copy(w.e, e)
 		}
 		if kept > p && i == share[len(share)-1] {
 			for k := range p {
@@ -193,8 +203,8 @@ func (s *search) addDeterminant(x point, h *mat.SymDense, grad []float64) {
 		c[j] += step
 		var up, last float64
 		for i, r := range s.recs {
-			if i == 0 || len(r.Y) != len(s.recs[i-1].Y) {
-				last = logDet(gram(c, len(r.Y)-s.Lead), 1)
+			if i == 0 || len(r.Y) != len(s.recs[i-1].Y) || s.warm[i] != s.warm[i-1] {
+				last = startUp(c, len(r.Y)-s.Lead) - startUp(c, s.warm[i])
 			}
 			up += last
 		}
@@ -276,6 +286,10 @@ func (s *search) filtered(w *workspace, q shifted, t0 int) {
 		divide(w.yf, w.y, q.c, s.pad)
 		divide(w.uf, w.u, q.c, s.pad)
 	}
+	w.errorsFiltered(q, t0)
+}
+
+func (w *workspace) errorsFiltered(q shifted, t0 int) {
 	start := t0 - (len(q.c) - 1)
 	clear(w.ef[:start])
 	divide(w.ef, w.e, q.c, start)

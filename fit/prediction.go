@@ -171,10 +171,10 @@ func (p *Predictor) Errors(m *Prediction) (errs, before [][]float64, err error) 
 		return nil, nil, ErrNoFit
 	}
 	for i := range s.work {
-		e := append([]float64(nil), s.work[i].e[s.pad+s.Lead:]...)
+		e := append([]float64(nil), s.work[i].e[s.pad+s.Lead+s.warm[i]:]...)
 		floats.Scale(s.sy, e)
 		errs = append(errs, e)
-		e = append([]float64(nil), s.work[i].local[1:]...)
+		e = append([]float64(nil), s.work[i].all.x[1:]...)
 		floats.Scale(s.sy, e)
 		before = append(before, e)
 	}

@@ -28,6 +28,7 @@ type Predictor struct {
 	su, sy float64
 	rows   int
 	logs   []int // equations of each log
+	warm   []int // rows of each record that warm up
 	pad    int
 	spare  sync.Pool // of []workspace, for searches to come
 }
@@ -37,6 +38,13 @@ const (
 	maxFitPoles = 8
 	maxColour   = 2
 )
+
+// warmUp is how many rows of a record that resumes are given to its start. Their
+// likelihood is taken out again: what is left is that of the other rows given
+// them. With start-up errors that could be anything, as after the rows of Lead
+// alone, each record pays for not knowing its start, 24 units of -2 log likelihood
+// on a slow disturbance; twenty paid for a disturbance without memory.
+const warmUp = 30
 
 const (
 	badShape = "fit: shape needs 1 to 8 poles, fewer zeros than poles, at most 2 colour poles, no more integrators than poles"
@@ -64,12 +72,16 @@ func NewPredictor(recs []Record, period, maxDelay float64) (*Predictor, error) {
 		fresh = false
 		last := len(p.shares) - 1
 		p.shares[last] = append(p.shares[last], len(p.recs))
-		p.recs = append(p.recs, r)
-		p.rows += len(r.Y) - p.Lead
+		rows, warm := len(r.Y)-p.Lead, 0
+		if len(p.shares[last]) > 1 {
+			warm = min(warmUp, rows/3)
+		}
+		p.recs, p.warm = append(p.recs, r), append(p.warm, warm)
+		p.rows += rows - warm
 		for len(p.logs) <= r.Log {
 			p.logs = append(p.logs, 0)
 		}
-		p.logs[r.Log] += len(r.Y) - p.Lead
+		p.logs[r.Log] += rows - warm
 	}
 	var uu, yy, n float64
 	for _, share := range p.shares {
@@ -134,6 +146,7 @@ type search struct {
 
 	rss, logDet float64   // parts of the objective at the last point looked at
 	sums        []float64 // of squares in each log
+	shared      float64   // log det of the information about constants that records share
 }
 
 // workspace holds the signals of one record; each starts with pad zeros.
@@ -144,11 +157,15 @@ type workspace struct {
 	vf, ef     []float64 // (A y - B u) / C, e / C
 	dy, du, av []float64
 	transient
-	local []float64 // κ, ε_1 … ε_nC
-	// Normal equations h local = g of this record alone, and log det of h without κ.
-	h      *mat.SymDense
-	g      []float64
-	logDet float64
+	all, first local   // over all rows, and over those that warm up
+	logDet     float64 // of I + G'G
+}
+
+// local holds the normal equations h x = g of κ and ε_1 … ε_nC of a record over
+// some of its rows, and their solution.
+type local struct {
+	h    *mat.SymDense
+	g, x []float64
 }
 
 func (p *Predictor) newSearch(shape Shape, w0 float64) *search {
@@ -224,15 +241,15 @@ func (s *search) errorsAt(x point) (float64, shifted, bool) {
 	}
 	ad := lti.Poly(q.a).Mul(q.d)
 	bd := lti.Poly(q.b).Mul(q.d)
-	s.logDet = 0
+	s.logDet, s.shared = 0, 0
 	t0 := s.pad + s.Lead
 	for i := range s.work {
 		w := &s.work[i]
-		if i > 0 && len(w.e) == len(s.work[i-1].e) {
-			w.h, w.logDet = s.work[i-1].h, s.work[i-1].logDet
+		if i > 0 && len(w.e) == len(s.work[i-1].e) && s.warm[i] == s.warm[i-1] {
+			w.all.h, w.first.h, w.logDet = s.work[i-1].all.h, s.work[i-1].first.h, s.work[i-1].logDet
 		} else {
-			w.h = gram(x.c, len(w.e)-t0)
-			w.logDet = logDet(w.h, 1)
+			w.all.h, w.first.h = gram(x.c, len(w.e)-t0), gram(x.c, s.warm[i])
+			w.logDet = startUp(x.c, len(w.e)-t0) - startUp(x.c, s.warm[i])
 		}
 		if s.logDet += w.logDet; holdsNonFinite([]float64{w.logDet}) {
 			return math.Inf(1), q, false
@@ -244,7 +261,8 @@ func (s *search) errorsAt(x point) (float64, shifted, bool) {
 		}
 		divide(w.e, w.e, q.c, t0)
 		w.run(q.c, len(w.e)-t0)
-		w.gather(t0)
+		w.gather(&w.all, w.e[t0:])
+		w.gather(&w.first, w.e[t0:t0+s.warm[i]])
 	}
 	s.sums = make([]float64, len(s.logs))
 	for _, share := range s.shares {
@@ -253,7 +271,8 @@ func (s *search) errorsAt(x point) (float64, shifted, bool) {
 		}
 		for _, i := range share {
 			w := &s.work[i]
-			rss := w.apply(t0)
+			rss := -w.first.squares(w.e[t0 : t0+s.warm[i]])
+			rss += w.apply(t0)
 			if !(rss < math.Inf(1)) {
 				return math.Inf(1), q, false
 			}
@@ -401,7 +420,7 @@ func (p *Predictor) Logs() []int { return slices.Clone(p.logs) }
 func (p *Predictor) Inputs() []Record {
 	var out []Record
 	for i, r := range p.recs {
-		u := append([]float64(nil), r.U[p.Lead:]...)
+		u := append([]float64(nil), r.U[p.Lead+p.warm[i]:]...)
 		floats.Scale(p.su, u)
 		floats.AddConst(p.meanU[i], u)
 		out = append(out, Record{U: u, Log: r.Log, Resumes: r.Resumes})

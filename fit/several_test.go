@@ -26,7 +26,8 @@ func pieces() []Record {
 // The sums of squares, gradient and information of records in two logs against
 // plain arithmetic: errors by the recursion C e = A D y - B D u - κ from
 // start-up errors on, all unknowns of the records as columns of one dense
-// Jacobian by differences, each row weighted by its log's deviation.
+// Jacobian by differences, each row weighted by its log's deviation, with a minus
+// where it is taken out.
 func TestLogsAndSharedConstants(t *testing.T) {
 	p, err := NewPredictor(pieces(), 0.05, 0.2)
 	if err != nil {
@@ -44,23 +45,38 @@ func TestLogsAndSharedConstants(t *testing.T) {
 	h, g := s.information(x, q)
 	params, nc := s.shape.size(), len(x.c)-1
 	constant := []int{0, 1, 1, 2} // of each record
-	locals := 3 + nc*len(p.recs)
+	// The rows that a resumed record warms up in are taken out again, with
+	// start-up errors of their own.
+	type run struct {
+		record, rows int
+		sign         float64
+	}
+	var runs []run
+	var rows [2]float64
+	for i, r := range p.recs {
+		runs = append(runs, run{i, len(r.Y), 1})
+		rows[r.Log] += float64(len(r.Y) - p.Lead)
+	}
+	runs = append(runs, run{2, p.Lead + warmUp, -1})
+	rows[1] -= warmUp
+	locals := 3 + nc*len(runs)
 
-	// residuals returns errors and start-up errors of all records, with the
-	// log of each.
-	residuals := func(step, local []float64) (r []float64, logs []int) {
+	// residuals returns errors and start-up errors of all runs, with the log and
+	// the sign of each.
+	residuals := func(step, local []float64) (r []float64, logs []int, signs []float64) {
 		q, ok := s.sampled(s.moved(x, step))
 		if !ok {
 			t.Fatal("no polynomials")
 		}
 		ad, bd := lti.Poly(q.a).Mul(q.d), lti.Poly(q.b).Mul(q.d)
-		for i, rec := range p.recs {
-			e := make([]float64, len(rec.Y))
+		for i, run := range runs {
+			rec := p.recs[run.record]
+			e := make([]float64, run.rows)
 			for j := range nc {
 				e[p.Lead-1-j] = local[3+nc*i+j]
 			}
 			for k := p.Lead; k < len(e); k++ {
-				e[k] = -local[constant[i]]
+				e[k] = -local[constant[run.record]]
 				for j, v := range ad {
 					e[k] += v * rec.Y[k-j]
 				}
@@ -72,32 +88,37 @@ func TestLogsAndSharedConstants(t *testing.T) {
 				}
 			}
 			for _, v := range e[p.Lead-nc:] {
-				r, logs = append(r, v), append(logs, rec.Log)
+				r, logs, signs = append(r, v), append(logs, rec.Log), append(signs, run.sign)
 			}
 		}
-		return r, logs
+		return r, logs, signs
 	}
 	zero, none := make([]float64, params), make([]float64, locals)
-	r0, logs := residuals(zero, none)
+	r0, logs, signs := residuals(zero, none)
 	// Errors are linear in the records' unknowns.
 	columns := mat.NewDense(len(r0), locals, nil)
 	for j := range locals {
 		unit := make([]float64, locals)
 		unit[j] = 1
-		r, _ := residuals(zero, unit)
+		r, _, _ := residuals(zero, unit)
 		for k := range r {
 			columns.Set(k, j, r[k]-r0[k])
 		}
 	}
-	var local mat.VecDense
-	if err := local.SolveVec(columns, mat.NewVecDense(len(r0), r0)); err != nil {
+	sign := mat.NewDiagDense(len(signs), signs)
+	var signed, normal mat.Dense
+	var right, local mat.VecDense
+	signed.Mul(sign, columns)
+	normal.Mul(columns.T(), &signed)
+	right.MulVec(signed.T(), mat.NewVecDense(len(r0), r0))
+	if err := local.SolveVec(&normal, &right); err != nil {
 		t.Fatal(err)
 	}
 	local.ScaleVec(-1, &local)
-	r, _ := residuals(zero, local.RawVector().Data)
-	sums, rows := make([]float64, 2), []float64{float64(300 - p.Lead), float64(150 + 150 + 200 - 3*p.Lead)}
+	r, _, _ := residuals(zero, local.RawVector().Data)
+	sums := make([]float64, 2)
 	for k, v := range r {
-		sums[logs[k]] += v * v
+		sums[logs[k]] += signs[k] * v * v
 	}
 	n := rows[0] + rows[1]
 	mean := math.Exp((rows[0]*math.Log(sums[0]/rows[0]) + rows[1]*math.Log(sums[1]/rows[1])) / n)
@@ -119,9 +140,9 @@ func TestLogsAndSharedConstants(t *testing.T) {
 	for j := range params {
 		step := make([]float64, params)
 		step[j] = eps
-		up, _ := residuals(step, local.RawVector().Data)
+		up, _, _ := residuals(step, local.RawVector().Data)
 		step[j] = -eps
-		down, _ := residuals(step, local.RawVector().Data)
+		down, _, _ := residuals(step, local.RawVector().Data)
 		for k := range up {
 			jacobian.Set(k, j, (up[k]-down[k])/(2*eps))
 		}
@@ -136,7 +157,9 @@ func TestLogsAndSharedConstants(t *testing.T) {
 		}
 	}
 	var all mat.Dense
-	all.Mul(jacobian.T(), jacobian)
+	signed.Reset()
+	signed.Mul(sign, jacobian)
+	all.Mul(jacobian.T(), &signed)
 	cross, own := all.Slice(params, params+locals, 0, params), all.Slice(params, params+locals, params, params+locals)
 	var gone, taken mat.Dense
 	if err := gone.Solve(own, cross); err != nil {

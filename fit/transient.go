@@ -178,17 +178,26 @@ func gram(c []float64, rows int) *mat.SymDense {
 	return out
 }
 
-// gather sets up the linear least squares of a record's κ and ε.
-func (w *workspace) gather(t0 int) {
-	q := w.h.SymmetricDim()
-	if cap(w.local) < q {
-		w.local, w.g = make([]float64, q), make([]float64, q)
+// startUp is log det(I + G'G) over so many rows, not finite where G is not.
+func startUp(c []float64, rows int) float64 {
+	if rows == 0 {
+		return 0
 	}
-	w.local, w.g = w.local[:q], w.g[:q]
-	e := w.e[t0:]
-	w.g[0] = floats.Dot(w.step, e)
+	return logDet(gram(c, rows), 1)
+}
+
+// gather sets up the linear least squares of κ and ε over the first rows, whose
+// errors without either are e.
+func (w *workspace) gather(l *local, e []float64) {
+	q := l.h.SymmetricDim()
+	if cap(l.x) < q {
+		l.x, l.g = make([]float64, q), make([]float64, q)
+	}
+	l.x, l.g = l.x[:q], l.g[:q]
+	l.g[0] = floats.Dot(w.step[:len(e)], e)
+	m := min(w.settled, len(e))
 	for i := 1; i < q; i++ {
-		w.g[i] = -floats.Dot(w.free[i-1][:w.settled], e[:w.settled])
+		l.g[i] = -floats.Dot(w.free[i-1][:m], e[:m])
 	}
 }
 
@@ -197,54 +206,89 @@ func (w *workspace) gather(t0 int) {
 // equation for κ.
 func (s *search) solveShare(share []int) bool {
 	if len(share) == 1 {
-		w := &s.work[share[0]]
-		return solveScaled(w.local, w.h, w.g, 0)
+		l := &s.work[share[0]].all
+		return solveScaled(l.x, l.h, l.g, 0)
 	}
 	var info, slope float64
 	for _, i := range share {
 		w := &s.work[i]
-		cross := make([]float64, len(w.g)-1)
-		for k := range cross {
-			cross[k] = w.h.At(0, k+1)
-		}
-		x := w.local[1:]
-		if !solveScaled(x, w.ownErrors(), cross, 0) {
+		a, b, ok := w.all.constant()
+		c, d, okFirst := w.first.constant()
+		if !ok || !okFirst {
 			return false
 		}
-		info += w.h.At(0, 0) - floats.Dot(cross, x)
-		slope += w.g[0] - floats.Dot(w.g[1:], x)
+		info, slope = info+a-c, slope+b-d
 	}
+	if !(info > 0) {
+		return false
+	}
+	s.shared += math.Log(info)
 	for _, i := range share {
 		w := &s.work[i]
-		w.local[0] = slope / info
-		rest := make([]float64, len(w.g)-1)
-		for k := range rest {
-			rest[k] = w.g[k+1] - w.local[0]*w.h.At(0, k+1)
-		}
-		if !solveScaled(w.local[1:], w.ownErrors(), rest, 0) {
+		if !w.all.given(slope/info) || !w.first.given(slope/info) {
 			return false
 		}
 	}
-	return info > 0
+	return true
+}
+
+// constant returns what is left of the equation info κ = slope without ε.
+func (l *local) constant() (info, slope float64, ok bool) {
+	cross := make([]float64, len(l.g)-1)
+	for k := range cross {
+		cross[k] = l.h.At(0, k+1)
+	}
+	x := l.x[1:]
+	ok = solveScaled(x, l.ownErrors(), cross, 0)
+	return l.h.At(0, 0) - floats.Dot(cross, x), l.g[0] - floats.Dot(l.g[1:], x), ok
+}
+
+// given solves for ε with κ known.
+func (l *local) given(kappa float64) bool {
+	l.x[0] = kappa
+	rest := make([]float64, len(l.g)-1)
+	for k := range rest {
+		rest[k] = l.g[k+1] - kappa*l.h.At(0, k+1)
+	}
+	return solveScaled(l.x[1:], l.ownErrors(), rest, 0)
 }
 
 // ownErrors is the information about ε alone.
-func (w *workspace) ownErrors() *mat.SymDense {
-	return w.h.SliceSym(1, w.h.SymmetricDim()).(*mat.SymDense)
+func (l *local) ownErrors() *mat.SymDense {
+	return l.h.SliceSym(1, l.h.SymmetricDim()).(*mat.SymDense)
+}
+
+// squares is what κ and ε leave of the squares of e, prior included.
+func (l *local) squares(e []float64) float64 {
+	if len(e) == 0 {
+		return 0
+	}
+	x := mat.NewVecDense(len(l.x), l.x)
+	return floats.Dot(e, e) - 2*floats.Dot(l.g, l.x) + mat.Inner(x, l.h, x)
 }
 
 // apply takes κ and ε out of a record's errors and returns their sum of
 // squares, prior included.
 func (w *workspace) apply(t0 int) float64 {
-	e, q := w.e[t0:], len(w.local)
-	floats.AddScaled(e, -w.local[0], w.step)
+	e, x := w.e[t0:], w.all.x
+	floats.AddScaled(e, -x[0], w.step)
 	var rss float64
-	for i := 1; i < q; i++ {
-		floats.AddScaled(e[:w.settled], w.local[i], w.free[i-1][:w.settled])
-		w.e[t0-i] = w.local[i]
-		rss += w.local[i] * w.local[i]
+	for i := 1; i < len(x); i++ {
+		floats.AddScaled(e[:w.settled], x[i], w.free[i-1][:w.settled])
+		w.e[t0-i] = x[i]
+		rss += x[i] * x[i]
 	}
 	return rss + floats.Dot(e, e)
+}
+
+// restart gives the first rows of a record the start-up errors that suit them
+// alone.
+func (w *workspace) restart(t0, rows int) {
+	m := min(w.settled, rows)
+	for i, g := range w.free {
+		floats.AddScaled(w.e[t0:t0+m], w.first.x[i+1]-w.all.x[i+1], g[:m])
+		w.e[t0-1-i] = w.first.x[i+1]
+	}
 }
 
 // logDet is the log of the determinant of h without its first skip rows and

@@ -161,17 +161,26 @@ func records(exps []*data.Experiment) ([]fit.Record, float64, error) {
 	return recs, period, nil
 }
 
-// spreadOver takes at most rows rows in blocks spread evenly over the records.
+// spreadOver takes about so many rows in blocks spread evenly over the records;
+// of short records some are taken whole, others not at all.
 func spreadOver(recs []fit.Record, rows int) []fit.Record {
-	const blocks = 5
+	const blocks, block = 5, 2000
 	var total int
 	for _, r := range recs {
 		total += len(r.Y)
 	}
 	var out []fit.Record
+	due := 0.0       // rows not yet taken of those passed
+	resumed := false // the constant of the record before is among those taken
 	for _, r := range recs {
-		share := rows * len(r.Y) / total
-		k := max(1, min(blocks, share/2000))
+		resumed = resumed && r.Resumes
+		due += float64(rows) * float64(len(r.Y)) / float64(total)
+		if due < float64(min(block, len(r.Y))) && len(recs) > 1 {
+			continue
+		}
+		share := min(int(due), len(r.Y))
+		due = 0
+		k := max(1, min(blocks, share/block))
 		size := share / k
 		for b := range k {
 			from := 0
@@ -179,8 +188,9 @@ func spreadOver(recs []fit.Record, rows int) []fit.Record {
 				from = b * (len(r.Y) - size) / (k - 1)
 			}
 			to := min(from+size, len(r.Y))
-			out = append(out, fit.Record{U: r.U[from:to], Y: r.Y[from:to], Log: r.Log, Resumes: r.Resumes && k == 1})
+			out = append(out, fit.Record{U: r.U[from:to], Y: r.Y[from:to], Log: r.Log, Resumes: resumed && k == 1})
 		}
+		resumed = true
 	}
 	return out
 }

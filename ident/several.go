@@ -195,7 +195,10 @@ func (a *Agreement) against() string {
 	if a == nil || a.Agree {
 		return ""
 	}
-	by := fmt.Sprintf("(probability %.2g)", a.Probability)
+	by := "(probability below 1e-6)"
+	if a.Probability >= 1e-6 {
+		by = fmt.Sprintf("(probability %.2g)", a.Probability)
+	}
 	if len(a.Changes) == 0 {
 		return "the logs do not show one plant " + by + ", and none of them stands out: fit each by itself"
 	}
