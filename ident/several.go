@@ -203,17 +203,17 @@ func (a *Agreement) against() string {
 		return "the logs do not show one plant " + by + ", and none of them stands out: fit each by itself"
 	}
 	tested := slices.DeleteFunc(slices.Clone(a.Logs), func(l LogFit) bool { return l.Probability == nil })
-	here, others := a.Odd, "the others"
+	here, others, do := a.Odd, "the others", a.Odd
 	text := fmt.Sprintf("%s shows another plant than the other logs %s", here, by)
 	if a.Odd == "" {
-		here, others = tested[1].File, tested[0].File
+		here, others, do = tested[1].File, tested[0].File, "each"
 		text = fmt.Sprintf("%s and %s do not show one plant %s", others, here, by)
 	}
 	c := a.Changes[0]
 	tell := func(e Estimate) string {
 		return fmt.Sprintf("%.4g %s (%.4g to %.4g)", e.Value, c.Unit, e.Interval95.Lo, e.Interval95.Hi)
 	}
-	return fmt.Sprintf("%s: the %s is %s in %s, %s in %s; fit %s by itself", text, c.Name, tell(c.Here), here, tell(c.Others), others, here)
+	return fmt.Sprintf("%s: the %s is %s in %s, %s in %s; fit %s by itself", text, c.Name, tell(c.Here), here, tell(c.Others), others, do)
 }
 
 // fitAlone fits the structure of f to one log; nil where the log does not

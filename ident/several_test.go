@@ -1,6 +1,7 @@
 package ident
 
 import (
+	"cmp"
 	"context"
 	"math"
 	"os"
@@ -76,15 +77,18 @@ func studied(trials int) int {
 	return trials
 }
 
-// studiedRigs are all rigs under STEADYRIG_STUDY, with logs of STEADYRIG_ROWS;
-// otherwise hover, with logs just too long to be drawn from.
+// studiedRigs are all rigs, or STEADYRIG_RIG, under STEADYRIG_STUDY, with logs of
+// STEADYRIG_ROWS; otherwise hover, with logs just too long to be drawn from.
 func studiedRigs(t testing.TB) []demorig.Rig {
 	if os.Getenv("STEADYRIG_STUDY") != "" {
 		rigs := demorig.All()
-		if rows, err := strconv.Atoi(os.Getenv("STEADYRIG_ROWS")); err == nil {
-			for i := range rigs {
-				rigs[i].Rows = rows
-			}
+		rows, _ := strconv.Atoi(os.Getenv("STEADYRIG_ROWS"))
+		for i := range rigs {
+			rigs[i].Rows = cmp.Or(rows, rigs[i].Rows)
+		}
+		if name := os.Getenv("STEADYRIG_RIG"); name != "" {
+			rigs = []demorig.Rig{rigNamed(t, name)}
+			rigs[0].Rows = cmp.Or(rows, rigs[0].Rows)
 		}
 		return rigs
 	}

@@ -202,12 +202,15 @@ func Agreement(m *ident.Model) []string {
 		text += "; the odd one out is " + a.Odd
 	}
 	list := []string{text}
-	for _, c := range a.Changes[:min(shownChanges, len(a.Changes))] {
+	for i, c := range a.Changes {
+		if i == shownChanges || i > 0 && c.Probability > 0.05 {
+			break
+		}
 		here, others := a.Odd, "the others"
 		if here == "" {
 			here, others = "the second", "the first"
 		}
-		list = append(list, fmt.Sprintf("%s %s in %s, %s in %s (probability %s)", c.Name, Estimate(&c.Here, c.Unit), here, Estimate(&c.Others, c.Unit), others, Probability(c.Probability)))
+		list = append(list, fmt.Sprintf("%s: %s in %s, %s in %s (probability %s)", c.Name, Estimate(&c.Here, c.Unit), here, Estimate(&c.Others, c.Unit), others, Probability(c.Probability)))
 	}
 	return list
 }
