@@ -283,16 +283,6 @@ func freeParameters(f *fit.Prediction) (values []float64, at []int) {
 	return values, at
 }
 
-// inverse of a covariance or of an information matrix, nil where it has none.
-func inverse(s *mat.SymDense) *mat.SymDense {
-	var chol mat.Cholesky
-	inv := new(mat.SymDense)
-	if !chol.Factorize(s) || chol.InverseTo(inv) != nil {
-		return nil
-	}
-	return inv
-}
-
 // pooled is the mean of all logs but one, weighted by their information; nil
 // where none is left.
 func pooled(logs []*alone, without int) *alone {
