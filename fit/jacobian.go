@@ -2,6 +2,7 @@ package fit
 
 import (
 	"math"
+	"slices"
 
 	"gonum.org/v1/gonum/floats"
 	"gonum.org/v1/gonum/mat"
@@ -13,7 +14,8 @@ import (
 const chunk = 1024
 
 // information returns J'J and J'e over the shared parameters at x, whose
-// errors are in the workspaces, with each record's own unknowns eliminated.
+// errors are in the workspaces, with each record's own unknowns and shared
+// constants eliminated, rows weighted by their log.
 func (s *search) information(x point, q shifted) (*mat.SymDense, []float64) {
 	q.delta = lti.SampleDelta(x.num, x.den, x.tau, s.h)
 	h, grad := s.normal(q, s.shape.size())
@@ -37,10 +39,13 @@ func (s *search) normal(q shifted, p int) (*mat.SymDense, []float64) {
 		s.buf = make([]float64, p*chunk)
 	}
 	jj, je, past := make([]float64, all*all), make([]float64, all), make([]float64, p*nc)
-	for i := range s.work {
-		w := &s.work[i]
-		t0 := s.pad + s.Lead
-		s.filtered(w, q, t0)
+	// What is left of a shared constant once its records gave up their own
+	// unknowns: products with the shared parameters, then with itself.
+	shared := make([]float64, p+1)
+	t0 := s.pad + s.Lead
+	// add adds the first rows of a record, as its errors stand. The first kept
+	// parameters are not eliminated.
+	add := func(w *workspace, rows, kept int, weight float64) {
 		clear(jj)
 		clear(je)
 		for k := range p {
@@ -50,7 +55,6 @@ func (s *search) normal(q shifted, p int) (*mat.SymDense, []float64) {
 				past[k*nc+i-1] = v[0]
 			}
 		}
-		rows := len(w.e) - t0
 		for from := 0; from < rows; from += chunk {
 			m := min(chunk, rows-from)
 			col := func(k int) []float64 {
@@ -99,10 +103,11 @@ func (s *search) normal(q shifted, p int) (*mat.SymDense, []float64) {
 			}
 		}
 		// Eliminate the constant and the start-up errors, whose prior counts
-		// as one more equation each. The constant's column is -S.
-		q := nc + 1
+		// as one more equation each. The constant's column is -S. One that
+		// other records share is kept until the last of them.
+		q := all - kept
 		hl := mat.NewSymDense(q, nil)
-		cross := mat.NewDense(q, p, nil)
+		cross := mat.NewDense(q, kept, nil)
 		sign := func(k int) float64 {
 			if k == p {
 				return -1
@@ -111,14 +116,14 @@ func (s *search) normal(q shifted, p int) (*mat.SymDense, []float64) {
 		}
 		for a := range q {
 			for b := a; b < q; b++ {
-				v := jj[(p+a)*all+p+b] * sign(p+a) * sign(p+b)
-				if a == b && a > 0 {
+				v := jj[(kept+a)*all+kept+b] * sign(kept+a) * sign(kept+b)
+				if a == b && kept+a > p {
 					v++
 				}
 				hl.SetSym(a, b, v)
 			}
-			for k := range p {
-				cross.Set(a, k, jj[k*all+p+a]*sign(p+a))
+			for k := range kept {
+				cross.Set(a, k, jj[k*all+kept+a]*sign(kept+a)*sign(k))
 			}
 		}
 		var chol mat.Cholesky
@@ -128,19 +133,56 @@ func (s *search) normal(q shifted, p int) (*mat.SymDense, []float64) {
 			ok = chol.SolveTo(&sol, cross) == nil
 		}
 		for k := range p {
-			grad[k] += je[k]
-			for l := k; l < p; l++ {
-				v := jj[k*all+l]
+			grad[k] += weight * je[k]
+		}
+		for k := range kept {
+			for l := k; l < kept; l++ {
+				v := jj[k*all+l] * sign(k) * sign(l)
 				if ok {
 					for a := range q {
 						v -= cross.At(a, k) * sol.At(a, l)
 					}
 				}
-				h.SetSym(k, l, h.At(k, l)+v)
+				if l == p {
+					shared[k] += weight * v
+				} else {
+					h.SetSym(k, l, h.At(k, l)+weight*v)
+				}
 			}
 		}
 	}
+	for i := range s.work {
+		w := &s.work[i]
+		s.filtered(w, q, t0)
+		share, kept := s.shareOf(i), p
+		if len(share) > 1 {
+			kept++
+		}
+		weight := s.weight(s.recs[i].Log)
+		add(w, len(w.e)-t0, kept, weight)
+		if warm := s.warm[i]; warm > 0 {
+			e := slices.Clone(w.e)
+			w.restart(t0, warm)
+			w.errorsFiltered(q, t0)
+			add(w, warm, kept, -weight)
+			copy(w.e, e)
+		}
+		if kept > p && i == share[len(share)-1] {
+			for k := range p {
+				for l := k; l < p; l++ {
+					h.SetSym(k, l, h.At(k, l)-shared[k]*shared[l]/shared[p])
+				}
+			}
+			clear(shared)
+		}
+	}
 	return h, grad
+}
+
+// shareOf lists the records that share a record's constant.
+func (s *search) shareOf(record int) []int {
+	i := slices.IndexFunc(s.shares, func(share []int) bool { return share[len(share)-1] >= record })
+	return s.shares[i]
 }
 
 // addDeterminant adds S/(2N) times the slope of log det(I + G'G), which
@@ -161,8 +203,8 @@ func (s *search) addDeterminant(x point, h *mat.SymDense, grad []float64) {
 		c[j] += step
 		var up, last float64
 		for i, r := range s.recs {
-			if i == 0 || len(r.Y) != len(s.recs[i-1].Y) {
-				last = logDet(gram(c, len(r.Y)-s.Lead), 1)
+			if i == 0 || len(r.Y) != len(s.recs[i-1].Y) || s.warm[i] != s.warm[i-1] {
+				last = startUp(c, len(r.Y)-s.Lead) - startUp(c, s.warm[i])
 			}
 			up += last
 		}
@@ -244,6 +286,10 @@ func (s *search) filtered(w *workspace, q shifted, t0 int) {
 		divide(w.yf, w.y, q.c, s.pad)
 		divide(w.uf, w.u, q.c, s.pad)
 	}
+	w.errorsFiltered(q, t0)
+}
+
+func (w *workspace) errorsFiltered(q shifted, t0 int) {
 	start := t0 - (len(q.c) - 1)
 	clear(w.ef[:start])
 	divide(w.ef, w.e, q.c, start)

@@ -222,10 +222,40 @@ func (s *search) result(x point, steps int, converged bool) *Prediction {
 	}
 	m.D, m.C = lti.Shift(nil, x.d), lti.Shift(nil, x.c)
 	for i := range s.work {
-		m.Const = append(m.Const, s.work[i].local[0]*s.sy)
+		m.Const = append(m.Const, s.work[i].all.x[0]*s.sy)
 	}
-	m.Variance = m.RSS / float64(max(1, s.rows-s.shape.Free()-len(s.work)))
+	m.Constants = len(s.shares)
+	m.Levels, m.Variance = s.levels(m)
 	return m
+}
+
+// constants counts the constants of each log.
+func (p *Predictor) constants() []int {
+	n := make([]int, len(p.logs))
+	for _, share := range p.shares {
+		n[p.recs[share[0]].Log]++
+	}
+	return n
+}
+
+// levels returns the variance of e of each log, parameters and constants
+// accounted for, and their geometric mean by rows.
+func (s *search) levels(m *Prediction) (levels []float64, mean float64) {
+	constants := s.constants()
+	if len(s.logs) == 1 {
+		v := m.RSS / float64(max(1, s.rows-s.shape.Free()-constants[0]))
+		return []float64{v}, v
+	}
+	levels = make([]float64, len(s.logs))
+	for i, n := range s.logs {
+		if n == 0 {
+			continue
+		}
+		part := float64(n) / float64(s.rows)
+		levels[i] = s.sums[i] * s.sy * s.sy / math.Max(1, float64(n-constants[i])-part*float64(s.shape.Free()))
+		mean += part * math.Log(levels[i])
+	}
+	return levels, math.Exp(mean)
 }
 
 // units returns what one scaled unit of each shared parameter is.

@@ -45,7 +45,8 @@ func (s Shape) fixed(k int) bool {
 //	A(q) D(q) y = B(q) D(q) u + κ + C(q) e,
 //
 // A and B the zero-order-hold samples of Num/Den e^(-Delay s), κ a constant
-// for each record. Plant and noise share A, so that the predictor is stable
+// for each record or for several that resume one another, e of one variance in
+// each log. Plant and noise share A, so that the predictor is stable
 // for an unstable plant as soon as C is (Forssell & Ljung, Identification of
 // unstable systems using output error and Box-Jenkins model structures, IEEE
 // Trans. Automatic Control 45 (2000) 137-141).
@@ -56,11 +57,13 @@ type Prediction struct {
 	D, C     []float64 // powers of z^-1, monic
 	Period   float64   // s
 
-	Const    []float64 // κ of each record, output units
-	RSS      float64   // of the prediction errors, start-up errors included
-	LogDet   float64   // of the start-up errors' information, the rest of the exact likelihood
-	Rows     int       // equations used
-	Variance float64   // of e
+	Const     []float64 // κ of each record, output units
+	Constants int       // how many of them are estimated: records may share one
+	RSS       float64   // of the prediction errors, start-up errors included; of N rows of variance Variance where logs differ
+	LogDet    float64   // of the start-up errors' information, the rest of the exact likelihood
+	Rows      int       // equations used
+	Variance  float64   // of e; of several logs the geometric mean by rows, to which Cov refers
+	Levels    []float64 // variance of e in each log; 0 for a log without equations
 	// Cov is the covariance of b_0 … b_m, a_1 … a_n, the delay where it is
 	// free, and then the coefficients of D and C in powers of δ = q - 1.
 	Cov       *mat.SymDense
@@ -74,11 +77,12 @@ func (p *Prediction) TF() lti.TF { return lti.TF{Num: p.Num, Den: p.Den, Delay: 
 
 // BIC is Schwarz's criterion over the rows of the fit, by the exact likelihood.
 func (p *Prediction) BIC() float64 {
-	return BIC.Value(p.Objective(), p.Rows, p.Free()+len(p.Const))
+	return BIC.Value(p.Objective(), p.Rows, p.Free()+p.Constants)
 }
 
 // Objective is what a fit makes least: the sum of squares times the part of the
-// exact likelihood that start-up errors bring, in the output's units squared.
+// exact likelihood that start-up errors bring, in the output's units squared. The
+// sum of squares of logs that differ in variance is that of their geometric mean.
 func (p *Prediction) Objective() float64 { return p.RSS * math.Exp(p.LogDet/float64(p.Rows)) }
 
 // H returns the noise shape C/(A D), as y = G u + H e.
@@ -167,10 +171,10 @@ func (p *Predictor) Errors(m *Prediction) (errs, before [][]float64, err error) 
 		return nil, nil, ErrNoFit
 	}
 	for i := range s.work {
-		e := append([]float64(nil), s.work[i].e[s.pad+s.Lead:]...)
+		e := append([]float64(nil), s.work[i].e[s.pad+s.Lead+s.warm[i]:]...)
 		floats.Scale(s.sy, e)
 		errs = append(errs, e)
-		e = append([]float64(nil), s.work[i].local[1:]...)
+		e = append([]float64(nil), s.work[i].all.x[1:]...)
 		floats.Scale(s.sy, e)
 		before = append(before, e)
 	}

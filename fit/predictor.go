@@ -3,6 +3,7 @@ package fit
 import (
 	"errors"
 	"math"
+	"slices"
 	"sync"
 
 	"gonum.org/v1/gonum/floats"
@@ -19,12 +20,15 @@ type Predictor struct {
 	// DelayRange bounds a free delay, s.
 	DelayRange [2]float64
 
-	recs   []Record // means removed, scaled to unit deviation
-	padded []Record // the same behind pad zeros
-	meanU  []float64
+	recs   []Record  // means removed, scaled to unit deviation
+	padded []Record  // the same behind pad zeros
+	meanU  []float64 // by record: of all that share its constant
 	meanY  []float64
+	shares [][]int // the records of each constant
 	su, sy float64
 	rows   int
+	logs   []int // equations of each log
+	warm   []int // rows of each record that warm up
 	pad    int
 	spare  sync.Pool // of []workspace, for searches to come
 }
@@ -34,6 +38,13 @@ const (
 	maxFitPoles = 8
 	maxColour   = 2
 )
+
+// warmUp is how many rows of a record that resumes are given to its start. Their
+// likelihood is taken out again: what is left is that of the other rows given
+// them. With start-up errors that could be anything, as after the rows of Lead
+// alone, each record pays for not knowing its start, 24 units of -2 log likelihood
+// on a slow disturbance; twenty paid for a disturbance without memory.
+const warmUp = 30
 
 const (
 	badShape = "fit: shape needs 1 to 8 poles, fewer zeros than poles, at most 2 colour poles, no more integrators than poles"
@@ -45,25 +56,52 @@ const (
 // left out; an error says if none is left.
 func NewPredictor(recs []Record, period, maxDelay float64) (*Predictor, error) {
 	checkRecords(recs)
+	checkLogs(recs)
 	p := &Predictor{Period: period, DelayRange: [2]float64{-period, maxDelay}}
 	p.Lead = maxFitPoles + 2 + maxColour + int(math.Ceil(maxDelay/period))
 	p.pad = p.Lead + maxFitPoles + maxColour + 4
-	var uu, yy, n float64
+	fresh := true // the next record to be kept has a constant of its own
 	for _, r := range recs {
+		fresh = fresh || !r.Resumes
 		if len(r.Y) < 2*p.Lead+8 {
 			continue
 		}
-		mu, my := floats.Sum(r.U)/float64(len(r.U)), floats.Sum(r.Y)/float64(len(r.Y))
-		c := Record{U: make([]float64, len(r.U)), Y: make([]float64, len(r.Y))}
-		for i := range r.U {
-			c.U[i], c.Y[i] = r.U[i]-mu, r.Y[i]-my
-			uu += c.U[i] * c.U[i]
-			yy += c.Y[i] * c.Y[i]
+		if fresh {
+			p.shares = append(p.shares, nil)
 		}
-		n += float64(len(r.U))
-		p.recs = append(p.recs, c)
-		p.meanU, p.meanY = append(p.meanU, mu), append(p.meanY, my)
-		p.rows += len(r.Y) - p.Lead
+		fresh = false
+		last := len(p.shares) - 1
+		p.shares[last] = append(p.shares[last], len(p.recs))
+		rows, warm := len(r.Y)-p.Lead, 0
+		if len(p.shares[last]) > 1 {
+			warm = min(warmUp, rows/3)
+		}
+		p.recs, p.warm = append(p.recs, r), append(p.warm, warm)
+		p.rows += rows - warm
+		for len(p.logs) <= r.Log {
+			p.logs = append(p.logs, 0)
+		}
+		p.logs[r.Log] += rows - warm
+	}
+	var uu, yy, n float64
+	for _, share := range p.shares {
+		var mu, my, rows float64
+		for _, i := range share {
+			mu, my, rows = mu+floats.Sum(p.recs[i].U), my+floats.Sum(p.recs[i].Y), rows+float64(len(p.recs[i].U))
+		}
+		mu, my = mu/rows, my/rows
+		for _, i := range share {
+			r := p.recs[i]
+			c := Record{U: make([]float64, len(r.U)), Y: make([]float64, len(r.Y)), Log: r.Log, Resumes: i != share[0]}
+			for k := range r.U {
+				c.U[k], c.Y[k] = r.U[k]-mu, r.Y[k]-my
+				uu += c.U[k] * c.U[k]
+				yy += c.Y[k] * c.Y[k]
+			}
+			p.recs[i] = c
+			p.meanU, p.meanY = append(p.meanU, mu), append(p.meanY, my)
+		}
+		n += rows
 	}
 	if len(p.recs) == 0 {
 		return nil, errors.New("fit: no record is long enough")
@@ -106,7 +144,9 @@ type search struct {
 	work  []workspace
 	buf   []float64 // a chunk of the Jacobian
 
-	rss, logDet float64 // parts of the objective at the last point looked at
+	rss, logDet float64   // parts of the objective at the last point looked at
+	sums        []float64 // of squares in each log
+	shared      float64   // log det of the information about constants that records share
 }
 
 // workspace holds the signals of one record; each starts with pad zeros.
@@ -117,7 +157,15 @@ type workspace struct {
 	vf, ef     []float64 // (A y - B u) / C, e / C
 	dy, du, av []float64
 	transient
-	local []float64 // κ, ε_1 … ε_nC
+	all, first local   // over all rows, and over those that warm up
+	logDet     float64 // of I + G'G
+}
+
+// local holds the normal equations h x = g of κ and ε_1 … ε_nC of a record over
+// some of its rows, and their solution.
+type local struct {
+	h    *mat.SymDense
+	g, x []float64
 }
 
 func (p *Predictor) newSearch(shape Shape, w0 float64) *search {
@@ -181,6 +229,11 @@ func (s *search) sampled(x point) (shifted, bool) {
 // the determinant (Box & Jenkins, Time Series Analysis, 1976, app. A7.4), which
 // holds noise zeros off the unit circle: without it a short log moves them onto
 // it and takes its own slow drift for a start-up error.
+//
+// Where logs have errors of their own variance S_i/N_i each, N log S is the sum
+// of N_i log(S_i/N_i), but for a constant: the likelihood with each variance at
+// its best (Aitkin, Modelling variance heterogeneity in normal regression, Appl.
+// Statist. 36 (1987) 332-339).
 func (s *search) errorsAt(x point) (float64, shifted, bool) {
 	q, ok := s.sampled(x)
 	if !ok {
@@ -188,18 +241,19 @@ func (s *search) errorsAt(x point) (float64, shifted, bool) {
 	}
 	ad := lti.Poly(q.a).Mul(q.d)
 	bd := lti.Poly(q.b).Mul(q.d)
-	s.rss, s.logDet = 0, 0
-	var h *mat.SymDense // of the start, the same for records of a length
-	var det float64
+	s.logDet, s.shared = 0, 0
+	t0 := s.pad + s.Lead
 	for i := range s.work {
 		w := &s.work[i]
-		if i == 0 || len(w.e) != len(s.work[i-1].e) {
-			h = gram(x.c, len(w.e)-s.pad-s.Lead)
-			if det = logDet(h, 1); holdsNonFinite([]float64{det}) {
-				return math.Inf(1), q, false
-			}
+		if i > 0 && len(w.e) == len(s.work[i-1].e) && s.warm[i] == s.warm[i-1] {
+			w.all.h, w.first.h, w.logDet = s.work[i-1].all.h, s.work[i-1].first.h, s.work[i-1].logDet
+		} else {
+			w.all.h, w.first.h = gram(x.c, len(w.e)-t0), gram(x.c, s.warm[i])
+			w.logDet = startUp(x.c, len(w.e)-t0) - startUp(x.c, s.warm[i])
 		}
-		t0 := s.pad + s.Lead
+		if s.logDet += w.logDet; holdsNonFinite([]float64{w.logDet}) {
+			return math.Inf(1), q, false
+		}
 		fir(w.e[t0:], w.y, ad, t0, 1, false)
 		fir(w.e[t0:], w.u, bd, t0-q.whole, -1, true)
 		for k := s.pad; k < t0; k++ {
@@ -207,14 +261,49 @@ func (s *search) errorsAt(x point) (float64, shifted, bool) {
 		}
 		divide(w.e, w.e, q.c, t0)
 		w.run(q.c, len(w.e)-t0)
-		rss, ok := w.solveLocal(h, t0)
-		if !ok || !(rss < math.Inf(1)) {
+		w.gather(&w.all, w.e[t0:])
+		w.gather(&w.first, w.e[t0:t0+s.warm[i]])
+	}
+	s.sums = make([]float64, len(s.logs))
+	for _, share := range s.shares {
+		if !s.solveShare(share) {
 			return math.Inf(1), q, false
 		}
-		s.rss += rss
-		s.logDet += det
+		for _, i := range share {
+			w := &s.work[i]
+			rss := -w.first.squares(w.e[t0 : t0+s.warm[i]])
+			rss += w.apply(t0)
+			if !(rss < math.Inf(1)) {
+				return math.Inf(1), q, false
+			}
+			s.sums[s.recs[i].Log] += rss
+		}
 	}
+	s.rss = s.pooled()
 	return s.rss * math.Exp(s.logDet/float64(s.rows)), q, true
+}
+
+// pooled returns the sum of squares, or with several logs that of as many rows
+// whose variance is the geometric mean of the logs', by rows.
+func (s *search) pooled() float64 {
+	if len(s.logs) == 1 {
+		return s.sums[0]
+	}
+	var mean float64
+	for i, n := range s.logs {
+		if n > 0 {
+			mean += float64(n) * math.Log(s.sums[i]/float64(n))
+		}
+	}
+	return float64(s.rows) * math.Exp(mean/float64(s.rows))
+}
+
+// weight is what a row of a log counts beside one of mean variance.
+func (s *search) weight(log int) float64 {
+	if len(s.logs) == 1 {
+		return 1
+	}
+	return s.rss / float64(s.rows) * float64(s.logs[log]) / s.sums[log]
 }
 
 // fir adds f Σ coef[i] x[k-i], k = from, from+1, …, to dst, or sets dst to it.
@@ -319,17 +408,22 @@ func (p *Predictor) Rest(m *Prediction, record int, y float64) float64 {
 	return p.meanU[record] + (a*(y-p.meanY[record])-m.Const[record]/colour)/b
 }
 
-// Means returns the mean output of each record.
-func (p *Predictor) Means() []float64 { return append([]float64(nil), p.meanY...) }
+// Means returns what was taken out of the input and the output of each record:
+// the means over the records that share its constant, which holds about them.
+func (p *Predictor) Means() (u, y []float64) { return slices.Clone(p.meanU), slices.Clone(p.meanY) }
 
-// Inputs returns the input of each row of Errors, for tests of what is left.
-func (p *Predictor) Inputs() [][]float64 {
-	var out [][]float64
+// Logs returns the number of equations of each log.
+func (p *Predictor) Logs() []int { return slices.Clone(p.logs) }
+
+// Inputs returns records of the input in each row of Errors, without output,
+// for tests of what is left.
+func (p *Predictor) Inputs() []Record {
+	var out []Record
 	for i, r := range p.recs {
-		u := append([]float64(nil), r.U[p.Lead:]...)
+		u := append([]float64(nil), r.U[p.Lead+p.warm[i]:]...)
 		floats.Scale(p.su, u)
 		floats.AddConst(p.meanU[i], u)
-		out = append(out, u)
+		out = append(out, Record{U: u, Log: r.Log, Resumes: r.Resumes})
 	}
 	return out
 }

@@ -12,7 +12,7 @@ import (
 func rough(seed uint64, lengths ...int) (recs []Record) {
 	rnd := rand.New(rand.NewPCG(seed, 0))
 	for i, n := range lengths {
-		r := Record{make([]float64, n), make([]float64, n)}
+		r := Record{U: make([]float64, n), Y: make([]float64, n)}
 		u, y := 0.0, 0.0
 		for k := range n {
 			y = 0.9*y + 0.1*u + 0.01*rnd.NormFloat64()
@@ -115,7 +115,7 @@ func TestARXAgainstTallQR(t *testing.T) {
 func TestARXFallsBackToRows(t *testing.T) {
 	rnd := rand.New(rand.NewPCG(7, 0))
 	n := 2000
-	r := Record{make([]float64, n), make([]float64, n)}
+	r := Record{U: make([]float64, n), Y: make([]float64, n)}
 	u := 0.0
 	for k := 2; k < n; k++ {
 		u = 0.999*u + rnd.NormFloat64()

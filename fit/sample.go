@@ -213,14 +213,24 @@ func (w *walk) density(x point) (float64, bool) {
 	if _, _, ok := s.errorsAt(x); !ok {
 		return 0, false
 	}
-	var det, last float64
-	for i := range s.work {
-		if i == 0 || len(s.work[i].e) != len(s.work[i-1].e) {
-			last = logDet(gram(x.c, len(s.work[i].e)-s.pad-s.Lead), 0)
+	// The information about constants and start-up errors: of records that share
+	// a constant that of their start-up errors, and what is left for the constant.
+	det := s.shared
+	for _, share := range s.shares {
+		for _, i := range share {
+			if w := &s.work[i]; len(share) > 1 {
+				det += w.logDet
+			} else {
+				det += logDet(w.all.h, 0)
+			}
 		}
-		det += last
 	}
-	v := -float64(s.rows-len(s.work))/2*math.Log(s.rss) - det/2
+	v := -det / 2
+	for i, constants := range s.constants() {
+		if n := s.logs[i]; n > 0 {
+			v -= float64(n-constants) / 2 * math.Log(s.sums[i])
+		}
+	}
 	return v, !math.IsNaN(v)
 }
 

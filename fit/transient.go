@@ -178,31 +178,117 @@ func gram(c []float64, rows int) *mat.SymDense {
 	return out
 }
 
-// solveLocal finds κ and ε of a record by linear least squares, applies them
-// to its errors and returns their sum of squares, prior included. h is gram's.
-func (w *workspace) solveLocal(h *mat.SymDense, t0 int) (float64, bool) {
-	q := h.SymmetricDim()
-	if cap(w.local) < q {
-		w.local = make([]float64, q)
+// startUp is log det(I + G'G) over so many rows, not finite where G is not.
+func startUp(c []float64, rows int) float64 {
+	if rows == 0 {
+		return 0
 	}
-	w.local = w.local[:q]
-	e := w.e[t0:]
-	g := make([]float64, q)
-	g[0] = floats.Dot(w.step, e)
+	return logDet(gram(c, rows), 1)
+}
+
+// gather sets up the linear least squares of κ and ε over the first rows, whose
+// errors without either are e.
+func (w *workspace) gather(l *local, e []float64) {
+	q := l.h.SymmetricDim()
+	if cap(l.x) < q {
+		l.x, l.g = make([]float64, q), make([]float64, q)
+	}
+	l.x, l.g = l.x[:q], l.g[:q]
+	l.g[0] = floats.Dot(w.step[:len(e)], e)
+	m := min(w.settled, len(e))
 	for i := 1; i < q; i++ {
-		g[i] = -floats.Dot(w.free[i-1][:w.settled], e[:w.settled])
+		l.g[i] = -floats.Dot(w.free[i-1][:m], e[:m])
 	}
-	if !solveScaled(w.local, h, g, 0) {
-		return 0, false
+}
+
+// solveShare solves for the κ that records share and for the ε of each. Of
+// several records each first gives its own ε up, and what is left is one
+// equation for κ.
+func (s *search) solveShare(share []int) bool {
+	if len(share) == 1 {
+		l := &s.work[share[0]].all
+		return solveScaled(l.x, l.h, l.g, 0)
 	}
-	floats.AddScaled(e, -w.local[0], w.step)
+	var info, slope float64
+	for _, i := range share {
+		w := &s.work[i]
+		a, b, ok := w.all.constant()
+		c, d, okFirst := w.first.constant()
+		if !ok || !okFirst {
+			return false
+		}
+		info, slope = info+a-c, slope+b-d
+	}
+	if !(info > 0) {
+		return false
+	}
+	s.shared += math.Log(info)
+	for _, i := range share {
+		w := &s.work[i]
+		if !w.all.given(slope/info) || !w.first.given(slope/info) {
+			return false
+		}
+	}
+	return true
+}
+
+// constant returns what is left of the equation info κ = slope without ε.
+func (l *local) constant() (info, slope float64, ok bool) {
+	cross := make([]float64, len(l.g)-1)
+	for k := range cross {
+		cross[k] = l.h.At(0, k+1)
+	}
+	x := l.x[1:]
+	ok = solveScaled(x, l.ownErrors(), cross, 0)
+	return l.h.At(0, 0) - floats.Dot(cross, x), l.g[0] - floats.Dot(l.g[1:], x), ok
+}
+
+// given solves for ε with κ known.
+func (l *local) given(kappa float64) bool {
+	l.x[0] = kappa
+	rest := make([]float64, len(l.g)-1)
+	for k := range rest {
+		rest[k] = l.g[k+1] - kappa*l.h.At(0, k+1)
+	}
+	return solveScaled(l.x[1:], l.ownErrors(), rest, 0)
+}
+
+// ownErrors is the information about ε alone.
+func (l *local) ownErrors() *mat.SymDense {
+	return l.h.SliceSym(1, l.h.SymmetricDim()).(*mat.SymDense)
+}
+
+// squares is what κ and ε leave of the squares of e, prior included.
+func (l *local) squares(e []float64) float64 {
+	if len(e) == 0 {
+		return 0
+	}
+	x := mat.NewVecDense(len(l.x), l.x)
+	return floats.Dot(e, e) - 2*floats.Dot(l.g, l.x) + mat.Inner(x, l.h, x)
+}
+
+// apply takes κ and ε out of a record's errors and returns their sum of
+// squares, prior included.
+func (w *workspace) apply(t0 int) float64 {
+	e, x := w.e[t0:], w.all.x
+	floats.AddScaled(e, -x[0], w.step)
 	var rss float64
-	for i := 1; i < q; i++ {
-		floats.AddScaled(e[:w.settled], w.local[i], w.free[i-1][:w.settled])
-		w.e[t0-i] = w.local[i]
-		rss += w.local[i] * w.local[i]
+	for i := 1; i < len(x); i++ {
+		floats.AddScaled(e[:w.settled], x[i], w.free[i-1][:w.settled])
+		w.e[t0-i] = x[i]
+		rss += x[i] * x[i]
 	}
-	return rss + floats.Dot(e, e), true
+	return rss + floats.Dot(e, e)
+}
+
+// restart gives the first rows of a record the start-up errors that suit them
+// alone.
+func (w *workspace) restart(t0, rows int) {
+	m := min(w.settled, rows)
+	for i, g := range w.free {
+		floats.AddScaled(w.e[t0:t0+m], w.first.x[i+1]-w.all.x[i+1], g[:m])
+		w.e[t0-1-i] = w.first.x[i+1]
+	}
 }
 
 // logDet is the log of the determinant of h without its first skip rows and

@@ -116,6 +116,9 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 	if err := m.tests(p, recs, f); err != nil {
 		return m, err
 	}
+	if err := m.compare(ctx, exps, rig, p, f, opt); err != nil {
+		return m, err
+	}
 	m.judge(ranked, out, f)
 	if err := m.finite(); err != nil {
 		return newModel(exps, rig).refuse(&RefusedError{What: "the log does not determine the plant: " + err.Error(), Do: "log a longer run or a stronger probe"})
@@ -147,28 +150,37 @@ func (m *Model) refuse(err error) (*Model, error) {
 func records(exps []*data.Experiment) ([]fit.Record, float64, error) {
 	var recs []fit.Record
 	period := exps[0].Period
-	for _, e := range exps {
+	for i, e := range exps {
 		if math.Abs(e.Period-period) > 1e-3*period {
 			return nil, 0, fmt.Errorf("%s is sampled every %.6g s, %s every %.6g s: fit logs of one period together", exps[0].File, period, e.File, e.Period)
 		}
-		for _, s := range e.Segments {
-			recs = append(recs, fit.Record{U: s.U, Y: s.Y})
+		for k, s := range e.Segments {
+			recs = append(recs, fit.Record{U: s.U, Y: s.Y, Log: i, Resumes: k > 0 && resumes(e, k)})
 		}
 	}
 	return recs, period, nil
 }
 
-// spreadOver takes at most rows rows in blocks spread evenly over the records.
+// spreadOver takes about so many rows in blocks spread evenly over the records;
+// of short records some are taken whole, others not at all.
 func spreadOver(recs []fit.Record, rows int) []fit.Record {
-	const blocks = 5
+	const blocks, block = 5, 2000
 	var total int
 	for _, r := range recs {
 		total += len(r.Y)
 	}
 	var out []fit.Record
+	due := 0.0       // rows not yet taken of those passed
+	resumed := false // the constant of the record before is among those taken
 	for _, r := range recs {
-		share := rows * len(r.Y) / total
-		k := max(1, min(blocks, share/2000))
+		resumed = resumed && r.Resumes
+		due += float64(rows) * float64(len(r.Y)) / float64(total)
+		if due < float64(min(block, len(r.Y))) && len(recs) > 1 {
+			continue
+		}
+		share := min(int(due), len(r.Y))
+		due = 0
+		k := max(1, min(blocks, share/block))
 		size := share / k
 		for b := range k {
 			from := 0
@@ -176,8 +188,9 @@ func spreadOver(recs []fit.Record, rows int) []fit.Record {
 				from = b * (len(r.Y) - size) / (k - 1)
 			}
 			to := min(from+size, len(r.Y))
-			out = append(out, fit.Record{U: r.U[from:to], Y: r.Y[from:to]})
+			out = append(out, fit.Record{U: r.U[from:to], Y: r.Y[from:to], Log: r.Log, Resumes: resumed && k == 1})
 		}
+		resumed = true
 	}
 	return out
 }
@@ -234,13 +247,13 @@ func (m *Model) describe(p *fit.Predictor, f *fit.Prediction, rig *data.Rig) {
 	m.derive()
 
 	h := f.H()
-	m.Noise = Noise{Numerator: h.Num, Denominator: h.Den, SD: math.Sqrt(f.Variance), SamplePeriod: f.Period}
+	m.Noise = Noise{Numerator: h.Num, Denominator: h.Den, SD: noiseSD(p, f), SamplePeriod: f.Period}
 	switch o := rig.OperatingPoint; {
 	case o != nil:
 		m.OperatingPoint = OperatingPoint{Input: o.Input, Output: o.Output}
 	default:
 		var u, y float64
-		means := p.Means()
+		_, means := p.Means()
 		for i, mean := range means {
 			y += mean / float64(len(means))
 			u += p.Rest(f, i, mean) / float64(len(means))

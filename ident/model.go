@@ -209,6 +209,8 @@ type Evidence struct {
 	ExplainedShare float64     `json:"explained_share"` // on rows not used in the fit
 	OutsideShare   float64     `json:"outside_share"`   // of the input's variance, not explained by past outputs and inputs
 	Memories       float64     `json:"memories"`        // length of the logs in predictor memories
+	// Agreement is left out for a single log.
+	Agreement *Agreement `json:"agreement,omitempty"`
 }
 
 // Structure is one candidate and how far it lost, in units of BIC.

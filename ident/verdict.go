@@ -24,21 +24,30 @@ func (m *Model) tests(p *fit.Predictor, recs []fit.Record, f *fit.Prediction) er
 		return nil
 	}
 	fitted := min(f.Poles+f.Colour, lags-1)
-	// A constant taken out of a short record leaves its errors correlated:
-	// only the longer ones are tested where there are several.
+	pairs := p.Inputs()
+	for i := range pairs {
+		pairs[i].Y = e[i]
+	}
+	level(pairs, f)
+	// White errors stay white where the rows of a gap are left out. A constant
+	// taken out of a few rows leaves them correlated: only longer stretches are
+	// tested where there are several.
 	m.Evidence.Residuals.Whiteness = 1
-	whole := e
-	if len(e) > 1 {
-		whole = slices.DeleteFunc(slices.Clone(e), func(x []float64) bool { return len(x) < 20*lags })
+	var whole [][]float64
+	for _, r := range pairs {
+		if n := len(whole) - 1; r.Resumes {
+			whole[n] = append(whole[n], r.Y...)
+		} else {
+			whole = append(whole, slices.Clone(r.Y))
+		}
+	}
+	if len(whole) > 1 {
+		whole = slices.DeleteFunc(whole, func(x []float64) bool { return len(x) < 20*lags })
 	}
 	if len(whole) > 0 {
 		_, m.Evidence.Residuals.Whiteness = fit.LjungBox(whole, lags, fitted)
 	} else {
 		m.Evidence.Residuals.Lags = 0 // not tested
-	}
-	pairs := make([]fit.Record, len(e))
-	for i, u := range p.Inputs() {
-		pairs[i] = fit.Record{U: u, Y: e[i]}
 	}
 	if _, prob, err := fit.PastInputs(pairs, lags); err == nil {
 		m.Evidence.Residuals.CrossInput = prob
@@ -83,8 +92,8 @@ func explained(p *fit.Predictor, recs []fit.Record, f *fit.Prediction) float64 {
 			}
 			continue
 		}
-		first = append(first, fit.Record{U: r.U[:cut], Y: r.Y[:cut]})
-		rest = append(rest, fit.Record{U: r.U[cut:], Y: r.Y[cut:]})
+		first = append(first, fit.Record{U: r.U[:cut], Y: r.Y[:cut], Log: r.Log, Resumes: r.Resumes})
+		rest = append(rest, fit.Record{U: r.U[cut:], Y: r.Y[cut:], Log: r.Log, Resumes: r.Resumes})
 	}
 	a, err := fit.NewPredictor(first, p.Period, p.DelayRange[1])
 	if err != nil {
@@ -134,6 +143,9 @@ func (m *Model) judge(ranked []*candidate, out Outside, f *fit.Prediction) {
 	}
 	if m.Evidence.Residuals.Lags == 0 {
 		weak("the log is in pieces too short to test what the model leaves over")
+	}
+	if text := m.Evidence.Agreement.against(); text != "" {
+		weak("%s", text)
 	}
 	if p := m.Evidence.Residuals.Whiteness; p < doubtful {
 		weak("the prediction errors are not white (probability %.2g): the structure misses something", p)

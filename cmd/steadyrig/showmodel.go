@@ -110,8 +110,15 @@ func showEvidence(p *page, m *ident.Model, u data.Units) {
 	if m.Evidence.Memories > 0 {
 		p.item("length", words.Memories(m.Evidence.Memories))
 	}
-	for _, l := range m.Logs {
-		p.item("log", fmt.Sprintf("%s: %d of %d rows used, %s", l.File, l.Used, l.Rows, words.Count(l.Segments, "segment")))
+	for i := range m.Logs {
+		p.item("log", words.LogUsed(m, i, u.Output))
+	}
+	for i, text := range words.Agreement(m) {
+		label := "one plant in all"
+		if i > 0 {
+			label = "differs"
+		}
+		p.item(label, text)
 	}
 	if len(m.Evidence.Structures) == 0 {
 		return

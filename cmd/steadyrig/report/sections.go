@@ -208,6 +208,12 @@ func plantSection(in Input) section {
 	if text := words.Drawn(m); text != "" {
 		s.Facts = append(s.Facts, fact{"Short log", text})
 	}
+	if agreement := words.Agreement(m); agreement != nil {
+		s.Facts = append(s.Facts, fact{"One plant in all logs", strings.Join(agreement, "; ")})
+		for i := range m.Logs {
+			s.Facts = append(s.Facts, fact{"Log", words.LogUsed(m, i, u.Output)})
+		}
+	}
 	poles := rootTable("Poles, rad/s", m.Poles, "Unstable")
 	poles.Notes = words.PoleNotes(m.Poles)
 	s.Tables = append(s.Tables, poles)

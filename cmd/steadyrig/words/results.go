@@ -175,6 +175,49 @@ func Drawn(m *ident.Model) string {
 // Memories tells the length of the logs in memories of the predictor, which is what intervals rest on.
 func Memories(n float64) string { return Brief(n) + " memories of the predictor" }
 
+// LogUsed tells what a log gave to the fit, and of several how noisy it is and how well it goes with the others; unit is
+// the output's.
+func LogUsed(m *ident.Model, i int, unit string) string {
+	l := m.Logs[i]
+	text := fmt.Sprintf("%s: %d of %d rows used, %s", l.File, l.Used, l.Rows, Count(l.Segments, "segment"))
+	if a := m.Evidence.Agreement; a != nil && i < len(a.Logs) {
+		text += ", prediction errors of " + Unit(Number(a.Logs[i].NoiseSD), unit)
+		if p := a.Logs[i].Probability; p != nil {
+			text += ", one plant with the others: probability " + Probability(*p)
+		} else {
+			text += ", not compared: alone it does not determine the plant"
+		}
+	}
+	return text
+}
+
+// Agreement says whether several logs show one plant, and what differs most clearly; empty for a single log.
+func Agreement(m *ident.Model) []string {
+	a := m.Evidence.Agreement
+	if a == nil {
+		return nil
+	}
+	text := fmt.Sprintf("%s (probability of more difference by chance: %s)", YesNo(a.Agree), Probability(a.Probability))
+	if a.Odd != "" {
+		text += "; the odd one out is " + a.Odd
+	}
+	list := []string{text}
+	for i, c := range a.Changes {
+		if i == shownChanges || i > 0 && c.Probability > 0.05 {
+			break
+		}
+		here, others := a.Odd, "the others"
+		if here == "" {
+			here, others = "the second", "the first"
+		}
+		list = append(list, fmt.Sprintf("%s: %s in %s, %s in %s (probability %s)", c.Name, Estimate(&c.Here, c.Unit), here, Estimate(&c.Others, c.Unit), others, Probability(c.Probability)))
+	}
+	return list
+}
+
+// shownChanges is the number of differences between logs that are told; the file has them all.
+const shownChanges = 3
+
 // Agrees says whether a method agrees with the model, nothing where it gives no poles.
 func Agrees(e ident.Method) string {
 	if len(e.Poles) == 0 {
