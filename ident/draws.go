@@ -29,9 +29,10 @@ const (
 )
 
 // sample draws plants for a short log and takes the intervals from them. A log
-// whose likelihood gives none keeps its normal intervals.
+// whose likelihood gives none, or one that cannot be right, keeps its normal
+// intervals.
 func (m *Model) sample(ctx context.Context, p *fit.Predictor, f *fit.Prediction, ranked []*candidate, opt Options) error {
-	if p.Rows() > drawRows {
+	if p.Rows() > drawRows || m.Evidence.IntervalsBy == BySandwich {
 		return nil
 	}
 	type source struct {
@@ -92,6 +93,7 @@ func (m *Model) sample(ctx context.Context, p *fit.Predictor, f *fit.Prediction,
 	for i, g := range plants {
 		m.Plant.Draws[i] = DrawnPlant{reversed(g.Num), reversed(g.Den), g.Delay}
 	}
+	m.Evidence.IntervalsBy = ByDraws
 	m.takeIntervals(plants)
 	return nil
 }

@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"math"
 	"runtime"
+	"slices"
 
 	"gonum.org/v1/gonum/mat"
 
@@ -31,6 +32,8 @@ const (
 	// rowsPerParameter is what a fit has to have at the least.
 	rowsPerParameter = 10
 	residualLags     = 25
+	triedStructures  = 3     // before a log is said to tell no parameters apart
+	sandwichRows     = 50000 // up to which the covariance is made right for a structure that misses something
 )
 
 // Fit finds the plant in the logs of one rig: structure, parameters and their
@@ -96,12 +99,15 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 			Do:   "log a longer run",
 		})
 	}
-	f, err := p.Fit(best.fit, finalTol, finalSteps)
+	f, ranked, err := finish(p, ranked)
 	if err != nil {
-		return m, fmt.Errorf("fitting %s: %w", best.structure, err)
+		return m.refuse(err)
 	}
-	if err := p.Covariance(f); err != nil {
-		return m.refuse(&RefusedError{What: "the log does not tell the plant's parameters apart", Do: "log a run with a stronger probe"})
+	if err := m.tests(p, recs, f); err != nil {
+		return m, err
+	}
+	if err := m.covariance(p, f); err != nil {
+		return m, err
 	}
 	m.describe(p, f, rig)
 	if err := m.loosen(p, f, ranked); err != nil {
@@ -113,9 +119,6 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 	m.FrequencyResponse = m.Responses(bandDraws, opt.Seed)
 	m.Evidence.Structures = structures(ranked)
 	m.Evidence.Methods = methods(sp, some, signals, f, m.Poles)
-	if err := m.tests(p, recs, f); err != nil {
-		return m, err
-	}
 	if err := m.compare(ctx, exps, rig, p, f, opt); err != nil {
 		return m, err
 	}
@@ -124,6 +127,22 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 		return newModel(exps, rig).refuse(&RefusedError{What: "the log does not determine the plant: " + err.Error(), Do: "log a longer run or a stronger probe"})
 	}
 	return m, nil
+}
+
+// finish fits the best structure whose parameters the log tells apart to the
+// end, and puts it first.
+func finish(p *fit.Predictor, ranked []*candidate) (*fit.Prediction, []*candidate, error) {
+	for i, c := range ranked[:min(triedStructures, len(ranked))] {
+		f, err := p.Fit(c.fit, finalTol, finalSteps)
+		if err == nil {
+			err = p.Covariance(f)
+		}
+		if err == nil {
+			rest := slices.Delete(slices.Clone(ranked), i, i+1)
+			return f, append([]*candidate{c}, rest...), nil
+		}
+	}
+	return nil, nil, &RefusedError{What: "the log does not tell the plant's parameters apart", Do: "log a run with a stronger probe"}
 }
 
 func newModel(exps []*data.Experiment, rig *data.Rig) *Model {

@@ -98,7 +98,7 @@ func (m *Model) loosen(p *fit.Predictor, f *fit.Prediction, ranked []*candidate)
 	if err != nil {
 		return fmt.Errorf("fitting integrators as free poles: %w", err)
 	}
-	if err := p.Covariance(free); err != nil {
+	if err := m.covariance(p, free); err != nil {
 		return nil // the chosen structure stands, its poles at zero without a width
 	}
 	var other Model

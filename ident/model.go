@@ -209,6 +209,7 @@ type Evidence struct {
 	ExplainedShare float64     `json:"explained_share"` // on rows not used in the fit
 	OutsideShare   float64     `json:"outside_share"`   // of the input's variance, not explained by past outputs and inputs
 	Memories       float64     `json:"memories"`        // length of the logs in predictor memories
+	IntervalsBy    string      `json:"intervals_by"`    // curvature, draws or sandwich
 	// Agreement is left out for a single log.
 	Agreement *Agreement `json:"agreement,omitempty"`
 }

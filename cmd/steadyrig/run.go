@@ -309,9 +309,9 @@ func (j *job) show(p *page) {
 		showExact(p, j.model)
 		showRoots(p, "Zeros", j.model.Zeros, "right half-plane")
 		showMethods(p, j.model)
-		if text := words.Drawn(j.model); text != "" {
+		if text := words.Basis(j.model); text != "" {
 			p.line("")
-			p.item("short log", text)
+			p.item("intervals", text)
 		}
 	}
 	showBoundsBriefly(p, j.loops)

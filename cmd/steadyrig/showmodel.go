@@ -102,8 +102,8 @@ func showEvidence(p *page, m *ident.Model, u data.Units) {
 		p.item("explained", fmt.Sprintf("%s of the output's variance one step ahead, on rows not used in the fit", words.Share(m.Evidence.ExplainedShare)))
 		p.item("left over", fmt.Sprintf("%s standard deviation of one-step prediction errors", words.Unit(words.Number(m.Noise.SD), u.Output)))
 		p.item("residuals", words.Residuals(m))
-		if text := words.Drawn(m); text != "" {
-			p.item("short log", text)
+		if text := words.Basis(m); text != "" {
+			p.item("intervals", text)
 		}
 	}
 	p.item("from outside", fmt.Sprintf("%s of the input's variance", words.Share(m.Evidence.OutsideShare)))

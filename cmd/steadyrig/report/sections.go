@@ -205,8 +205,8 @@ func plantSection(in Input) section {
 		fact{"Residuals", words.Residuals(m)},
 		fact{"Length", words.Memories(m.Evidence.Memories)},
 	)
-	if text := words.Drawn(m); text != "" {
-		s.Facts = append(s.Facts, fact{"Short log", text})
+	if text := words.Basis(m); text != "" {
+		s.Facts = append(s.Facts, fact{"Intervals", text})
 	}
 	if agreement := words.Agreement(m); agreement != nil {
 		s.Facts = append(s.Facts, fact{"One plant in all logs", strings.Join(agreement, "; ")})

@@ -163,13 +163,16 @@ func PlantUnits(u data.Units) string {
 	return text
 }
 
-// Drawn tells that the intervals are those of drawn plants, as on a short log; empty: they are not.
-func Drawn(m *ident.Model) string {
-	if len(m.Plant.Draws) == 0 {
-		return ""
+// Basis tells what the intervals rest on where it is not the curvature of the likelihood at its peak; else empty.
+func Basis(m *ident.Model) string {
+	switch m.Evidence.IntervalsBy {
+	case ident.ByDraws:
+		return fmt.Sprintf("those of %s drawn from the likelihood of a short log, over all structures of %s that it leaves open",
+			Count(len(m.Plant.Draws), "plant"), Count(len(m.Poles), "pole"))
+	case ident.BySandwich:
+		return "by the sandwich form, about the best plant of this structure and not about the true one"
 	}
-	return fmt.Sprintf("the intervals are those of %s drawn from the likelihood, over all structures of %s that the log leaves open",
-		Count(len(m.Plant.Draws), "plant"), Count(len(m.Poles), "pole"))
+	return ""
 }
 
 // Memories tells the length of the logs in memories of the predictor, which is what intervals rest on.

@@ -130,7 +130,7 @@ func TestPlant(t *testing.T) {
 		{PolynomialWithin([]float64{0.5}, []float64{3000}, "s"), "(0.0 ± 3.0)e3"},
 		{PolynomialWithin([]float64{-31997}, []float64{115}, "s"), "-31997 ± 115"},
 		{PlantUnits(data.Units{Input: "A", Output: "mm"}), "s in rad/s, y in mm, u in A"},
-		{Drawn(m), ""},
+		{Basis(m), ""},
 		{Estimate(&ident.Estimate{Value: 3, Interval95: ident.Interval{Lo: 3, Hi: 3}}, "mm"), "3 mm"},
 	} {
 		if c.got != c.want {
@@ -139,11 +139,11 @@ func TestPlant(t *testing.T) {
 	}
 	m.Plant.Parameters[4], m.Plant.Covariance[4][4] = "delay", 1e-8
 	m.Plant.Draws = make([]ident.DrawnPlant, 1000)
-	m.Poles = make([]ident.Root, 3)
+	m.Poles, m.Evidence.IntervalsBy = make([]ident.Root, 3), ident.ByDraws
 	if got, want := Delay(m), "2 ms ± 196 µs"; got != want {
 		t.Errorf("%q, want %q", got, want)
 	}
-	if got, want := Drawn(m), "the intervals are those of 1000 plants drawn from the likelihood, over all structures of 3 poles that the log leaves open"; got != want {
+	if got, want := Basis(m), "those of 1000 plants drawn from the likelihood of a short log, over all structures of 3 poles that it leaves open"; got != want {
 		t.Errorf("%q, want %q", got, want)
 	}
 }
