@@ -5,40 +5,55 @@ import (
 	"math"
 	"math/cmplx"
 	"math/rand/v2"
+	"os"
+	"strconv"
 	"testing"
 
 	"steadyrig/fit"
 	"steadyrig/fit/fittest"
+	"steadyrig/fit/fittest/conform"
 )
 
-func nullSpacePoles(u, y []float64, n int) ([]complex128, error) {
-	m, err := fit.LongARX([]fit.Record{{U: u, Y: y}})
-	if err != nil {
-		return nil, err
-	}
-	r, err := fit.NullSpace(m, fit.NullSpaceOptions{NA: n, NB: n, NC: n})
-	if err != nil {
-		return nil, err
-	}
-	return r.Poles(), nil
+// claims are what each method reaches on the rigs of fittest, from 2 000 rows on, structure known; the numbers behind them
+// are measured by
+//
+//	STEADYRIG_STUDY=100 go test ./fit -run TestConformance -v -timeout 1h
+//
+// Prediction is maximum likelihood and reaches the bound, outside comes close to it where the signal from outside drives the
+// loop, long is efficient among free sampled coefficients (Galrinho, Rojas & Hjalmarsson 2019), state is consistent and not
+// efficient.
+var claims = []conform.Claim{
+	{Method: "prediction", Error: 1.1, Structured: true, Cover: 0.95},
+	{Method: "long", Error: 1.15, Cover: 0.95},
+	{Method: "long", Rig: "two unstable poles", Error: 1.7, Cover: 0.85,
+		Why: "at 2 000 rows the fast pole, free, is known to half of itself"},
+	{Method: "long", Rig: "coloured disturbance", Error: 3, Cover: 0.9,
+		Why: "at 2 000 rows the colour's pole may meet the plant's"},
+	{Method: "state", Error: 1.2, Cover: 0.95},
+	{Method: "state", Rig: "three poles, one unstable", Error: 1.8, Cover: 0.9,
+		Why: "at 2 000 rows the state of the fast pole hardly stands out of the noise"},
+	{Method: "state", Rig: "two unstable poles", Error: 10, Cover: 0,
+		Why: "the state of the fast pole is below the noise: that pole is not found, the unstable ones err by two or three deviations"},
+	{Method: "state", Rig: "delay of 1.4 samples", Error: 1.7, Cover: 0.9,
+		Why: "at 2 000 rows the state of the part of a sample is below the noise"},
+	{Method: "state", Rig: "coloured disturbance", Error: 3, Cover: 0.88,
+		Why: "at 2 000 rows the colour's pole may meet the plant's"},
+	{Method: "outside", Error: 1.15, Structured: true, Cover: 0.95},
+	{Method: "outside", Rig: "two unstable poles", Error: 1.2, Structured: true, Cover: 0,
+		Why: "at 2 000 rows the outside signal is too weak an instrument, which the method says instead of an estimate"},
 }
 
-func subspacePoles(u, y []float64, n int) ([]complex128, error) {
-	s, err := fit.Subspace([]fit.Record{{U: u, Y: y}}, fit.SubspaceOptions{Order: n})
-	if err != nil {
-		return nil, err
+// Every method on every kind of rig. STEADYRIG_STUDY sets the records a rig of 2 000 rows, half as many have 8 000; every
+// test run has a short form.
+func TestConformance(t *testing.T) {
+	c := conform.Suite{Rows: 2000, Short: 5, Long: 3, Seed: 100}
+	if v := os.Getenv("STEADYRIG_STUDY"); v != "" {
+		c.Short, _ = strconv.Atoi(v)
+		c.Long = (c.Short + 1) / 2
+	} else if testing.Short() {
+		t.Skip("fits some 400 models")
 	}
-	return s.Poles, nil
-}
-
-// Null-space fitting is asymptotically efficient (Galrinho, Rojas & Hjalmarsson 2019): the limit is what a perfect
-// estimator exceeds five times in 10 000 for each pole, 1.36 with 40 trials, and a little for the rows being finite. The
-// subspace method is consistent but not efficient on every rig.
-func TestPoles(t *testing.T) {
-	c := fittest.Conformance{Rows: 2000, Trials: 40, Seed: 1, Limit: 1.4}
-	t.Run("null-space fitting", func(t *testing.T) { c.Check(t, nullSpacePoles) })
-	c.Trials, c.Limit = 20, 2
-	t.Run("subspace", func(t *testing.T) { c.Check(t, subspacePoles) })
+	c.Check(t, fit.Estimators(), claims)
 }
 
 // The number of singular values above the noise is the order of the state.
@@ -155,26 +170,19 @@ func TestQuotientLimitInClosedLoop(t *testing.T) {
 	}
 }
 
-func BenchmarkSubspace(b *testing.B) {
-	u, y := fittest.Rigs()[1].Record(10000, 1, 1)
-	recs := []fit.Record{{U: u, Y: y}}
-	for b.Loop() {
-		if _, err := fit.Subspace(recs, fit.SubspaceOptions{}); err != nil {
-			b.Fatal(err)
-		}
-	}
-}
-
-func BenchmarkNullSpace(b *testing.B) {
-	u, y := fittest.Rigs()[1].Record(10000, 1, 1)
-	recs := []fit.Record{{U: u, Y: y}}
-	for b.Loop() {
-		m, err := fit.LongARX(recs)
-		if err != nil {
-			b.Fatal(err)
-		}
-		if _, err := fit.NullSpace(m, fit.NullSpaceOptions{NA: 2, NB: 2, NC: 2}); err != nil {
-			b.Fatal(err)
-		}
+// BenchmarkMethod is each method on one record of 10 000 rows, the structure known.
+func BenchmarkMethod(b *testing.B) {
+	const rows = 10000
+	rig := fittest.Rigs()[1]
+	u, y, dither := rig.RecordWithDither(rows, 1, 1)
+	for _, m := range fit.Estimators() {
+		b.Run(m.Name(), func(b *testing.B) {
+			for b.Loop() {
+				if _, err := m.Estimate([]fit.Record{{U: u, Y: y}}, [][][]float64{{dither}}, conform.Found(rig)); err != nil {
+					b.Fatal(err)
+				}
+			}
+			b.ReportMetric(rows*float64(b.N)/b.Elapsed().Seconds(), "rows/s")
+		})
 	}
 }

@@ -20,10 +20,15 @@
 //  2. NullSpace: low-order A, B, C from the long model; asymptotically efficient in that form, with covariance and a test
 //     of the orders. The cost does not depend on the rows. Discrepancy makes the same yardstick available for any other
 //     parametrisation.
-//  3. Subspace: a state-space model by another road, whose singular values show the order.
+//  3. Subspace: a state-space model by another road, whose singular values show the order, with the covariance of its
+//     characteristic polynomial.
 //  4. Predictor: prediction-error estimates of a continuous-time numerator, denominator and delay.
 //  5. Predictor.Refined: the same numerator, denominator and delay through signals from outside alone, whatever the
 //     noise. Predictor.Compare tests whether the two differ by more than chance.
+//
+// Estimators holds the four of these that find a plant's poles behind one interface: a denominator in powers of z - 1 with its
+// covariance (PoleEstimate), so that they can be compared with one another where poles meet, too. Package conform runs
+// all of them on rigs of every kind.
 //
 // LjungBox, PastInputs, CrossCorrelation and FTest judge residuals; Welch estimates spectra. The quotient of the spectra
 // of y and u is not the plant in closed loop.

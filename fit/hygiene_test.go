@@ -4,11 +4,15 @@ import (
 	"errors"
 	"math"
 	"math/rand/v2"
+	"slices"
 	"strings"
 	"testing"
 
+	"gonum.org/v1/gonum/mat"
+
 	"steadyrig/fit"
 	"steadyrig/fit/fittest"
+	"steadyrig/fit/fittest/conform"
 )
 
 // What a bad log may hold comes back as one line, not as a panic or a model.
@@ -54,23 +58,20 @@ func TestBadRecords(t *testing.T) {
 
 // The same records give the same bits, and are left as they were.
 func TestRepeatable(t *testing.T) {
-	u, y := fittest.Rigs()[2].Record(3000, 3, 3)
+	rig := fittest.Rigs()[2]
+	u, y, dither := rig.RecordWithDither(3000, 3, 3)
 	u0, y0 := append([]float64(nil), u...), append([]float64(nil), y...)
-	run := func() []complex128 {
-		s, err := fit.Subspace([]fit.Record{{U: u, Y: y}}, fit.SubspaceOptions{})
+	run := func(m fit.Estimator) *fit.PoleEstimate {
+		e, err := m.Estimate([]fit.Record{{U: u, Y: y}}, [][][]float64{{dither}}, conform.Found(rig))
 		if err != nil {
 			t.Fatal(err)
 		}
-		p, err := nullSpacePoles(u, y, 2)
-		if err != nil {
-			t.Fatal(err)
-		}
-		return append(p, s.Poles...)
+		return e
 	}
-	a, b := run(), run()
-	for i := range a {
-		if a[i] != b[i] {
-			t.Errorf("pole %d: %v, then %v", i, a[i], b[i])
+	for _, m := range fit.Estimators() {
+		a, b := run(m), run(m)
+		if !slices.Equal(a.Den, b.Den) || !mat.Equal(a.Cov, b.Cov) {
+			t.Errorf("%s: %v, then %v", m.Name(), a, b)
 		}
 	}
 	for i := range u {
@@ -82,23 +83,29 @@ func TestRepeatable(t *testing.T) {
 
 // Units do not matter: input in other units by 1e6, output by 1e-6, both far from zero.
 func TestUnitsDoNotMatter(t *testing.T) {
-	u, y := fittest.Rigs()[1].Record(3000, 3, 4)
+	rig := fittest.Rigs()[1]
+	u, y, dither := rig.RecordWithDither(3000, 3, 4)
 	u2, y2 := make([]float64, len(u)), make([]float64, len(y))
 	for i := range u {
 		u2[i], y2[i] = 1e6*u[i]+3e8, 1e-6*y[i]-5e-3
 	}
-	for name, estimate := range map[string]fittest.PoleEstimator{"subspace": subspacePoles, "null-space fitting": nullSpacePoles} {
-		a, err := estimate(u, y, 2)
+	scaled := conform.Found(rig)
+	scaled.Num = scaled.Num.Scale(1e-12)
+	for _, m := range fit.Estimators() {
+		a, err := m.Estimate([]fit.Record{{U: u, Y: y}}, [][][]float64{{dither}}, conform.Found(rig))
 		if err != nil {
 			t.Fatal(err)
 		}
-		b, err := estimate(u2, y2, 2)
+		b, err := m.Estimate([]fit.Record{{U: u2, Y: y2}}, [][][]float64{{dither}}, scaled)
 		if err != nil {
 			t.Fatal(err)
 		}
-		for i, d := range fittest.Distances(a, b) {
-			if !(d < 1e-5) { // a hundredth of the deviation of a pole here
-				t.Errorf("%s: pole %v moved by %g", name, a[i], d)
+		for i := range len(a.Den) - 1 {
+			if sd := math.Sqrt(a.Cov.At(i, i)); !(math.Abs(a.Den[i]-b.Den[i]) < 0.01*sd) {
+				t.Errorf("%s: coefficient %d moved from %g to %g, its deviation is %g", m.Name(), i, a.Den[i], b.Den[i], sd)
+			}
+			if v, w := a.Cov.At(i, i), b.Cov.At(i, i); !(math.Abs(v-w) < 1e-3*v) {
+				t.Errorf("%s: variance %d moved from %g to %g", m.Name(), i, v, w)
 			}
 		}
 	}

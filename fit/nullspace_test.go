@@ -7,6 +7,7 @@ import (
 
 	"steadyrig/fit"
 	"steadyrig/fit/fittest"
+	"steadyrig/fit/fittest/conform"
 )
 
 // D5, an unstable ARMAX plant in closed loop. The prediction-error estimate and its standard errors are those of an
@@ -214,23 +215,19 @@ func TestSeveralRecords(t *testing.T) {
 		}
 		recs = append(recs, fit.Record{U: u, Y: y})
 	}
-	s, err := fit.Subspace(recs, fit.SubspaceOptions{})
-	if err != nil {
-		t.Fatal(err)
-	}
-	m, err := fit.LongARX(recs)
-	if err != nil {
-		t.Fatal(err)
-	}
-	r, err := fit.NullSpace(m, fit.NullSpaceOptions{NA: 2, NB: 2, NC: 2})
-	if err != nil {
-		t.Fatal(err)
-	}
-	one := rig.PoleBounds(recs[0].U, recs[0].Y) // offsets of record 0 are zero
-	for name, poles := range map[string][]complex128{"subspace": s.Poles, "null-space fitting": r.Poles()} {
-		for j, d := range fittest.Distances(rig.Poles(), poles) {
-			if bound := one[j] / math.Sqrt(8); !(d < 4*bound) {
-				t.Errorf("%s: pole %.4g missed by %.2g, bound %.2g", name, rig.Poles()[j], d, bound)
+	one := conform.Bound(rig, recs[0].U, recs[0].Y, true) // offsets of record 0 are zero
+	for _, m := range []fit.Estimator{fit.StateMethod{}, fit.LongMethod{}} {
+		e, err := m.Estimate(recs, nil, conform.Found(rig))
+		if err != nil {
+			t.Fatal(err)
+		}
+		for _, f := range rig.Factors() {
+			q, _, ok := e.Factor(f)
+			_, bound, _ := one.Factor(f)
+			for i := range len(f) - 1 {
+				if sd := math.Sqrt(bound.At(i, i) / 8); !ok || !(math.Abs(q[i]-f[i]) < 4*sd) {
+					t.Errorf("%s: factor %v came out as %v, bound of coefficient %d %.2g", m.Name(), f, q, i, sd)
+				}
 			}
 		}
 	}

@@ -6,6 +6,8 @@ import (
 	"math"
 
 	"gonum.org/v1/gonum/mat"
+
+	"steadyrig/fit/lti"
 )
 
 // SubspaceOptions of Subspace.
@@ -33,9 +35,13 @@ type StateResult struct {
 	Singular []float64
 	Noise    float64
 	Poles    []complex128 // eigenvalues of A, in the z-plane
-	Past     int
-	Future   int
-	Rows     int
+	// Den is their polynomial in powers of δ = z - 1, Den[i] multiplying δ^i and Den[n] = 1, and Cov the n by n covariance
+	// of its lower coefficients.
+	Den    lti.Poly
+	Cov    *mat.SymDense
+	Past   int
+	Future int
+	Rows   int
 }
 
 // ErrNoState says that nothing of the future is predictable.
@@ -50,7 +56,7 @@ var ErrNoState = errors.New("subspace: past inputs and outputs predict nothing: 
 // Consistency analysis of some closed-loop subspace identification methods, Automatica 41 (2005) 377-391.
 //
 // The data enter through the triangular factor of one long regression only; the cost does not grow with the rows but for
-// its products. No covariance is given.
+// its products. The covariance is that of the long ARX, carried through the realisation by its derivative.
 func Subspace(recs []Record, opt SubspaceOptions) (*StateResult, error) {
 	checkRecords(recs)
 	if opt.Past < 0 || opt.Future < 0 || opt.Order < 0 {
@@ -180,7 +186,120 @@ func Subspace(recs []Record, opt SubspaceOptions) (*StateResult, error) {
 	if res.Poles == nil {
 		return nil, errors.New("subspace: eigenvalues did not converge")
 	}
+
+	var perPast, perState mat.Dense // what the regressions make of the columns of the past
+	if err := perPast.Solve(known, z); err != nil && !nearlySingular(err) {
+		return nil, fmt.Errorf("subspace: state equation: %w", err)
+	}
+	if err := perState.Solve(&x, z); err != nil && !nearlySingular(err) {
+		return nil, fmt.Errorf("subspace: output equation: %w", err)
+	}
+	m := realisation{right: &right, values: svd.Values(nil), scale: math.Sqrt(float64(g.rows)), tr: &tr, c: &c, at: res.A.T(),
+		perPast: perPast.Slice(0, n, 0, 2*past), perState: &perState}
+	m.long.Mul(h.T(), &right)
+	m.known.Product(z.T(), &predicted, &right)
+	den, slope := m.slope()
+	res.Den = den
+	slope.Mul(slope, arx.inv)
+	res.Cov = mat.NewSymDense(n, nil)
+	res.Cov.SymOuterK(sigma*sigma, slope)
 	return res, nil
+}
+
+// realisation is how the state matrix comes about from the coefficients of the long ARX, theta. The state is the past times
+// tr, which is h(theta)' times the first n right singular vectors, each times scale over its singular value. A' is C tr_1', tr_1' being the
+// first row of tr, of the output that the next past has more, and what regression on the state makes of the older past in
+// the places that it has moved to.
+type realisation struct {
+	right             *mat.Dense // singular vectors, future by future
+	values            []float64  // singular values
+	scale             float64    // of the state, root of the rows
+	long, known       mat.Dense  // h' times right; the products of the past times right, both 2 past by future
+	tr, c             *mat.Dense // 2 past by n, n by 1
+	at                mat.Matrix // A', n by n
+	perPast, perState mat.Matrix // n by 2 past
+}
+
+// slope returns the characteristic polynomial of A in powers of δ and its derivative for each coefficient of the long
+// ARX, n by 2 past. It is exact to first order in the errors of the long ARX where that has a state of order n: there the
+// regressions leave nothing over, so that the products of the data need no derivative, and the estimate is asymptotically
+// a function of the coefficients of the long model alone (Chiuso 2007). The singular vectors move by the perturbation of
+// eigenvectors of h P h', P the products of the past (Stewart & Sun, Matrix Perturbation Theory, 1990, section V.2):
+// by little, unless a state hardly stands out of the noise.
+func (m *realisation) slope() (den lti.Poly, slope *mat.Dense) {
+	columns, n := m.tr.Dims()
+	future, _ := m.right.Dims()
+	den, adj := characteristic(m.at)
+	slope = mat.NewDense(n, columns, nil)
+	first := m.tr.Slice(0, 1, 0, n)
+	var shifted mat.Dense // A' less C tr_1'
+	shifted.Mul(m.c, first)
+	shifted.Sub(m.at, &shifted)
+	turned := mat.NewDense(columns, future, nil) // derivative of h' times right
+	moved := mat.NewDense(columns, n, nil)
+	states, rest := turned.Slice(0, columns, 0, n), turned.Slice(0, columns, n, future)
+	var mix, other, swing, dtr, da, part, dc mat.Dense
+	for i := range columns {
+		turned.Zero()
+		for j := 0; j < future && i-2*j >= 0; j++ {
+			turned.SetRow(i-2*j, m.right.RawRowView(j))
+		}
+		dtr.CloneFrom(states)
+		if n < future {
+			mix.Mul(rest.T(), m.known.Slice(0, columns, 0, n))
+			other.Mul(m.known.Slice(0, columns, n, future).T(), states)
+			mix.Add(&mix, &other)
+			mix.Apply(func(k, j int, v float64) float64 {
+				return v / (m.values[j] - m.values[n+k]) / (m.values[j] + m.values[n+k])
+			}, &mix)
+			swing.Mul(m.long.Slice(0, columns, n, future), &mix)
+			dtr.Add(&dtr, &swing)
+		}
+		dtr.Apply(func(_, j int, v float64) float64 { return v / m.values[j] * m.scale }, &dtr)
+		moved.Slice(0, columns-2, 0, n).(*mat.Dense).Copy(dtr.Slice(2, columns, 0, n))
+		part.Mul(m.perState, &dtr)
+		dc.Mul(&part, m.c)
+		for j := range n {
+			dc.Set(j, 0, m.perState.At(j, i)-dc.At(j, 0))
+		}
+		da.Mul(&dc, first)
+		part.Mul(m.c, dtr.Slice(0, 1, 0, n))
+		da.Add(&da, &part)
+		part.Mul(m.perPast, moved)
+		da.Add(&da, &part)
+		part.Mul(m.perPast, &dtr)
+		part.Mul(&part, &shifted)
+		da.Sub(&da, &part)
+		for j, a := range adj {
+			part.Mul(a, &da)
+			slope.Set(j, i, -mat.Trace(&part))
+		}
+	}
+	return den, slope
+}
+
+// characteristic returns det(δI - (a-I)) in powers of δ and the matrices N_i of the adjoint, the sum of N_i δ^i, by
+// Leverrier and Faddeev's recursion (Gantmacher, The Theory of Matrices 1, 1959, chapter IV section 5): a change da of a
+// moves coefficient i by -tr(N_i da).
+func characteristic(a mat.Matrix) (den lti.Poly, adj []*mat.Dense) {
+	n, _ := a.Dims()
+	den, adj = make(lti.Poly, n+1), make([]*mat.Dense, n)
+	den[n] = 1
+	var less mat.Dense
+	less.CloneFrom(a)
+	for i := range n {
+		less.Set(i, i, less.At(i, i)-1)
+	}
+	next := mat.NewDense(n, n, nil)
+	for i := n - 1; i >= 0; i-- {
+		for k := range n {
+			next.Set(k, k, next.At(k, k)+den[i+1])
+		}
+		adj[i] = mat.DenseCopyOf(next)
+		next.Mul(&less, adj[i])
+		den[i] = -mat.Trace(next) / float64(n-i)
+	}
+	return den, adj
 }
 
 func copyColumn(dst *mat.Dense, j int, v mat.Vector) {

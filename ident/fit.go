@@ -118,7 +118,7 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 	}
 	m.FrequencyResponse = m.Responses(bandDraws, opt.Seed)
 	m.Evidence.Structures = structures(ranked)
-	m.Evidence.Methods = methods(sp, some, signals, f, m.Poles)
+	m.Evidence.Methods = methods(sp, some, signals, f, m)
 	if err := m.compare(ctx, exps, rig, p, f, opt); err != nil {
 		return m, err
 	}

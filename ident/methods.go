@@ -9,9 +9,11 @@ import (
 	"slices"
 
 	"gonum.org/v1/gonum/mat"
+	"gonum.org/v1/gonum/stat/distuv"
 
 	"steadyrig/data"
 	"steadyrig/fit"
+	"steadyrig/fit/lti"
 )
 
 // outsideSignals returns the reference and the dither of each record, as many of
@@ -62,56 +64,41 @@ func spreadSignals(signals [][][]float64, rows int) [][][]float64 {
 }
 
 // methods estimates the poles by other ways than maximum likelihood and says
-// whether they find the same unstable poles. p holds recs, f is the estimate
-// from them or from more of the same log.
-func methods(p *fit.Predictor, recs []fit.Record, signals [][][]float64, f *fit.Prediction, poles []Root) []Method {
-	list := []Method{{Name: "prediction", Agrees: true, Poles: [][2]float64{}}}
-	for _, r := range poles {
-		list[0].Poles = append(list[0].Poles, [2]float64{r.Re, r.Im})
+// whether they find the poles that matter where the model has them. p holds
+// recs, f is the estimate from them or from more of the same log.
+func methods(p *fit.Predictor, recs []fit.Record, signals [][][]float64, f *fit.Prediction, m *Model) []Method {
+	own := Method{Name: "prediction", Agrees: true, Poles: [][2]float64{}, SD: []float64{}}
+	for _, r := range m.Poles {
+		own.Poles = append(own.Poles, [2]float64{r.Re, r.Im})
+		own.SD = append(own.SD, math.Hypot(r.ReSD, r.ImSD))
 	}
-	whole := max(0, int(math.Floor(f.Delay/f.Period+1e-9)))
-	add := func(name string, z []complex128, sd float64, err error) {
-		m := Method{Name: name, Poles: [][2]float64{}}
-		if err != nil {
-			m.Note = err.Error()
-			list = append(list, m)
-			return
-		}
-		for _, v := range z {
-			if s, ok := inContinuousTime(v, f.Period); ok {
-				m.Poles = append(m.Poles, [2]float64{real(s), imag(s)})
+	list := []Method{own}
+	matter := m.matter(f.Period)
+	for _, e := range fit.Estimators()[1:] { // the first has decided
+		if _, joint := e.(fit.OutsideMethod); joint {
+			if signals != nil && f.Converged {
+				list = append(list, byOutside(p, signals, f, m))
 			}
+			continue
 		}
-		m.Agrees, m.Note = agreement(m.Poles, poles, sd)
-		list = append(list, m)
-	}
-	order := f.Poles + f.Shape.Colour + whole + 1
-	if s, err := fit.Subspace(recs, fit.SubspaceOptions{Order: order}); err != nil {
-		add("state", nil, 0, err)
-	} else {
-		add("state", s.Poles, 0, nil)
-	}
-	longer, err := fit.LongARX(recs)
-	if longer == nil {
-		add("long", nil, 0, err)
-	} else {
-		k := f.Poles + f.Shape.Colour
-		// Leading coefficients of B before the delay are zero but for errors.
-		if ns, err := fit.NullSpace(longer, fit.NullSpaceOptions{NA: k, NB: k + whole + 1, NC: k}); err != nil {
-			add("long", nil, 0, err)
+		method := Method{Name: e.Name(), Poles: [][2]float64{}}
+		found, err := e.Estimate(recs, signals, f)
+		if err != nil {
+			method.Note = "says nothing here: " + err.Error()
 		} else {
-			add("long", ns.Poles(), 0, nil)
+			method.Poles, method.SD = inContinuousTime(found)
+			v := found.Disagreement(matter.factor, matter.cov)
+			method.Agrees = !(v > matter.limit())
+			method.Note = fmt.Sprintf("%s, %.1f joint deviations in %s", matter.apart(method.Poles), math.Sqrt(v), counted(len(matter.factor)-1, "number"))
 		}
-	}
-	if signals != nil && f.Converged {
-		list = append(list, byOutside(p, signals, f, poles))
+		list = append(list, method)
 	}
 	return list
 }
 
 // byOutside estimates the plant through the signals from outside alone and tests
 // whether it differs from the final one by more than chance.
-func byOutside(p *fit.Predictor, signals [][][]float64, f *fit.Prediction, poles []Root) Method {
+func byOutside(p *fit.Predictor, signals [][][]float64, f *fit.Prediction, model *Model) Method {
 	m := Method{Name: "outside", Poles: [][2]float64{}, Agrees: true}
 	if p.Rows() != f.Rows {
 		var err error
@@ -129,15 +116,13 @@ func byOutside(p *fit.Predictor, signals [][][]float64, f *fit.Prediction, poles
 		m.Note = "says nothing here: " + err.Error()
 		return m
 	}
-	for _, z := range r.Den.Roots() {
-		m.Poles = append(m.Poles, [2]float64{real(z), imag(z)})
-	}
+	m.Poles, m.SD = inContinuousTime(r.Denominator(f.Period))
 	d, err := p.Compare(f, r)
 	if err != nil {
 		m.Note = "could not be compared: " + err.Error()
 		return m
 	}
-	_, apart := agreement(m.Poles, poles, unstableDeviation(r))
+	apart := model.matter(f.Period).apart(m.Poles)
 	m.Probability, m.Note = &d.Probability, apart
 	if m.Agrees = d.Probability >= doubtful; !m.Agrees {
 		m.Note = fmt.Sprintf("the plant differs by more than chance (probability %.2g): the noise shape is wrong, or what is logged from outside answers to the output; %s", d.Probability, apart)
@@ -145,72 +130,105 @@ func byOutside(p *fit.Predictor, signals [][][]float64, f *fit.Prediction, poles
 	return m
 }
 
-// unstableDeviation is the deviation of the outermost pole in the right half
-// plane, in rad/s; 0 where there is none.
-func unstableDeviation(r *fit.Refined) float64 {
-	n, nz := r.Poles, len(r.Num)
-	den := uncertain{p: r.Den, cov: mat.NewSymDense(n+1, nil)}
+// inContinuousTime returns the poles log(1+δ)/period that a real plant can have,
+// with the deviation of each.
+func inContinuousTime(e *fit.PoleEstimate) (poles [][2]float64, sd []float64) {
+	n := len(e.Den) - 1
+	den := uncertain{p: e.Den, cov: mat.NewSymDense(n+1, nil)}
 	for i := range n {
 		for j := i; j < n; j++ {
-			den.cov.SetSym(i, j, r.Cov.At(nz+n-1-i, nz+n-1-j))
+			den.cov.SetSym(i, j, e.Cov.At(i, j))
 		}
 	}
-	var sd, size float64
-	for _, z := range den.roots() {
-		if a := math.Hypot(z.Re, z.Im); a > size && z.Re > 0 {
-			size, sd = a, math.Hypot(z.ReSD, z.ImSD)
+	poles, sd = [][2]float64{}, []float64{}
+	for _, r := range den.roots() {
+		z := complex(1+r.Re, r.Im)
+		if cmplx.Abs(z) < 1e-6 || r.Im == 0 && real(z) < 0 {
+			continue
+		}
+		// log(1+δ) without loss for slow poles: |1+δ|² - 1 = 2 Re δ + |δ|².
+		re := math.Log1p(2*r.Re+r.Re*r.Re+r.Im*r.Im) / 2
+		poles = append(poles, [2]float64{re / e.Period, math.Atan2(r.Im, 1+r.Re) / e.Period})
+		sd = append(sd, math.Hypot(r.ReSD, r.ImSD)/(cmplx.Abs(z)*e.Period))
+	}
+	for _, v := range sd {
+		if math.IsNaN(v) || math.IsInf(v, 0) {
+			return poles, nil
 		}
 	}
-	return sd
+	return poles, sd
 }
 
-// inContinuousTime returns log(z)/period where a real plant can have it.
-func inContinuousTime(z complex128, period float64) (complex128, bool) {
-	if cmplx.Abs(z) < 1e-6 || imag(z) == 0 && real(z) < 0 {
-		return 0, false
-	}
-	return cmplx.Log(z) / complex(period, 0), true
+// matter is the poles on which methods have to agree: the unstable ones and
+// integrators, or else the rightmost.
+type matter struct {
+	poles []complex128 // rad/s
+	// They are a factor of the sampled denominator, in powers of δ.
+	factor lti.Poly
+	cov    *mat.SymDense // of its coefficients but the highest
 }
 
-// agreementShare is by how much of its modulus an unstable pole of a rougher
-// method may differ, beyond four deviations of the two estimates; a method
-// without a deviation of its own is given twice that of the final one.
-const agreementShare = 0.1
-
-// agreement compares the poles of a method with the final ones that matter: the
-// unstable ones and integrators, or else the rightmost.
-func agreement(found [][2]float64, poles []Root, sd float64) (bool, string) {
-	var matter []Root
-	for _, p := range poles {
-		if p.Im >= 0 && (p.ProbabilityUnstable >= 0.5 || p.Re == 0) {
-			matter = append(matter, p)
+func (m *Model) matter(period float64) matter {
+	var list []complex128
+	for _, p := range m.Poles {
+		if p.ProbabilityUnstable >= 0.5 || p.Re == 0 {
+			list = append(list, complex(p.Re, p.Im))
 		}
 	}
-	if len(matter) == 0 {
-		matter = append(matter, slices.MaxFunc(poles, func(a, b Root) int { return cmp.Or(cmp.Compare(a.Re, b.Re), cmp.Compare(a.Im, b.Im)) }))
+	if len(list) == 0 {
+		right := slices.MaxFunc(m.Poles, func(a, b Root) int { return cmp.Or(cmp.Compare(a.Re, b.Re), cmp.Compare(a.Im, b.Im)) })
+		list = append(list, complex(right.Re, right.Im))
+		if right.Im != 0 {
+			list = append(list, complex(right.Re, -right.Im))
+		}
 	}
-	agrees, note := true, ""
-	for _, p := range matter {
-		at := complex(p.Re, p.Im)
+	deltas := make([]complex128, len(list))
+	for i, s := range list {
+		h := s * complex(period/2, 0)
+		deltas[i] = 2 * cmplx.Exp(h) * cmplx.Sinh(h) // exp(s period) - 1
+	}
+	nz, n := len(m.Plant.Numerator), len(m.Plant.Denominator)-1
+	a := mat.NewSymDense(n, nil)
+	for i := range n {
+		for j := i; j < n; j++ {
+			a.SetSym(i, j, m.Plant.Covariance[nz+i][nz+j])
+		}
+	}
+	q := lti.FromRoots(deltas)
+	factor, cov, ok := fit.Sampled(reversed(m.Plant.Denominator), a, period).Factor(q)
+	if !ok { // they have met others
+		factor, cov = q, mat.NewSymDense(len(list), nil)
+	}
+	return matter{poles: list, factor: factor, cov: cov}
+}
+
+// apartMethods is the number of joint standard deviations beyond which a method
+// contradicts the model; for more numbers than one it is the ellipsoid of the
+// same probability, 6e-5. A right model is compared twice; what a
+// method's own deviation leaves out, its bias on a log of finite length, needs
+// the room beyond the usual two.
+const apartMethods = 4
+
+// limit is what Disagreement may come to.
+func (m matter) limit() float64 {
+	return distuv.ChiSquared{K: float64(len(m.factor) - 1)}.Quantile(1 - 2*distuv.UnitNormal.CDF(-apartMethods))
+}
+
+// apart tells how far from each pole that matters the nearest of a method's is.
+func (m matter) apart(found [][2]float64) string {
+	note := ""
+	for i, p := range m.poles {
+		if imag(p) < 0 || i > 0 && p == m.poles[i-1] {
+			continue
+		}
 		near := math.Inf(1)
 		for _, q := range found {
-			near = math.Min(near, cmplx.Abs(complex(q[0], q[1])-at))
-		}
-		own := math.Hypot(p.ReSD, p.ImSD)
-		other := sd
-		if !(other > 0) {
-			other = 2 * own
-		}
-		if near > agreementShare*cmplx.Abs(at)+4*math.Hypot(own, other) {
-			agrees = false
+			near = math.Min(near, cmplx.Abs(complex(q[0], q[1])-p))
 		}
 		if note != "" {
 			note += ", "
 		}
-		note += fmt.Sprintf("pole at %.3g off by %.2g rad/s", real(at), near)
-		if sd > 0 {
-			note += fmt.Sprintf(", %.1f deviations", near/math.Hypot(own, sd))
-		}
+		note += fmt.Sprintf("pole at %.3g off by %.2g rad/s", real(p), near)
 	}
-	return agrees, note
+	return note
 }

@@ -36,7 +36,7 @@ func outsideOn(t *testing.T, r demorig.Rig, seed uint64, start *fit.Prediction) 
 	}
 	m := &Model{}
 	m.describe(p, f, &data.Rig{})
-	return byOutside(p, outsideSignals(exps), f, m.Poles)
+	return byOutside(p, outsideSignals(exps), f, m)
 }
 
 // Right models are called wrong in no more logs than the threshold of one in a

@@ -232,6 +232,7 @@ type Structure struct {
 type Method struct {
 	Name   string       `json:"name"`
 	Poles  [][2]float64 `json:"poles"` // re, im in rad/s
+	SD     []float64    `json:"sd"`    // of each pole by the method's own account, rad/s; null: it gives none
 	Agrees bool         `json:"agrees"`
 	// Probability is that of so large a difference from the final plant by
 	// chance; nil where it was not tested.

@@ -125,7 +125,8 @@ func (u uncertain) factor(r1, r2 complex128) (a, b float64, cov [2][2]float64) {
 	q := lti.Poly{b, a, 1}
 	// p = q w; a change dp is (da s + db) w + q dw, so modulo q
 	// dp = (da s + db)(w1 s + w0), a linear equation for da and db.
-	w := remainder(quotient(u.p, q), q)
+	quotient, _ := u.p.Div(q)
+	_, w := quotient.Div(q)
 	w0, w1 := w[0], w[1]
 	// s: da (w0 - a w1) + db w1;  1: -da b w1 + db w0.
 	m11, m12, m21, m22 := w0-a*w1, w1, -b*w1, w0
@@ -135,7 +136,7 @@ func (u uncertain) factor(r1, r2 complex128) (a, b float64, cov [2][2]float64) {
 	for i := range n {
 		mono := make(lti.Poly, i+1)
 		mono[i] = 1
-		d := remainder(mono, q)
+		_, d := mono.Div(q)
 		ga[i] = (m22*d[1] - m12*d[0]) / det
 		gb[i] = (m11*d[0] - m21*d[1]) / det
 	}
@@ -150,31 +151,6 @@ func (u uncertain) factor(r1, r2 complex128) (a, b float64, cov [2][2]float64) {
 	}
 	cov = [2][2]float64{{cross(ga, ga), cross(ga, gb)}, {cross(ga, gb), cross(gb, gb)}}
 	return a, b, cov
-}
-
-// remainder of p modulo the monic quadratic q, two coefficients, ascending.
-func remainder(p, q lti.Poly) [2]float64 {
-	r := append(lti.Poly(nil), p...)
-	for len(r) < 2 {
-		r = append(r, 0)
-	}
-	for k := len(r) - 1; k >= 2; k-- {
-		r[k-1] -= r[k] * q[1]
-		r[k-2] -= r[k] * q[0]
-	}
-	return [2]float64{r[0], r[1]}
-}
-
-// quotient of p by the monic quadratic q.
-func quotient(p, q lti.Poly) lti.Poly {
-	r := append(lti.Poly(nil), p...)
-	w := make(lti.Poly, max(1, len(p)-2))
-	for k := len(r) - 1; k >= 2; k-- {
-		w[k-2] = r[k]
-		r[k-1] -= r[k] * q[1]
-		r[k-2] -= r[k] * q[0]
-	}
-	return w
 }
 
 // meeting is how many standard deviations the discriminant a²/4 - b of two

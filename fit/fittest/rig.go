@@ -6,30 +6,31 @@ import (
 	"math/rand/v2"
 	"slices"
 
-	"gonum.org/v1/gonum/mat"
-
 	"steadyrig/fit/lti"
 )
 
-// Rig is a plant of known truth in closed loop, with an outside signal added to the input, white noise held at the
-// input and white noise on the sensor: all are invented.
+// Rig is a plant of known truth in closed loop, with an outside signal added to the input, noise held at the input and
+// white noise on the sensor: all are invented.
 type Rig struct {
 	Name        string
-	Plant       lti.TF // no delay
+	Plant       lti.TF
 	Period      float64
 	Law         lti.Law
 	Dither      float64 // amplitude of the random binary signal added to the input
 	Hold        int     // samples for which each of its values stays
 	InputNoise  float64 // standard deviations
 	SensorNoise float64
+	Colour      float64 // rad/s, the input noise is white noise through one pole at -Colour; 0: white
 }
 
-// Rigs returns rigs whose plants have one or two unstable poles, an integrator, or none, over time scales from
-// milliseconds to seconds.
+// lead is gain (s + zero)/(s + pole), sampled.
+func lead(gain, zero, pole, period float64) lti.DTF {
+	return lti.Tustin(lti.TF{Num: lti.Poly{gain * zero, gain}, Den: lti.Poly{pole, 1}}, period)
+}
+
+// Rigs returns rigs whose plants have an unstable pole or pair, an integrator, or none, over time scales from
+// milliseconds to seconds; their poles are simple, their noise is white, there is no delay.
 func Rigs() []Rig {
-	lead := func(gain, zero, pole, period float64) lti.DTF {
-		return lti.Tustin(lti.TF{Num: lti.Poly{gain * zero, gain}, Den: lti.Poly{pole, 1}}, period)
-	}
 	return []Rig{
 		{Name: "unstable lag", Plant: lti.TF{Num: lti.Poly{3}, Den: lti.Poly{-2, 1}}, Period: 0.05,
 			Law: lti.Law{Inner: lti.Gain(2, 0.05)}, Dither: 1, Hold: 2, InputNoise: 0.3, SensorNoise: 0.05},
@@ -47,6 +48,25 @@ func Rigs() []Rig {
 	}
 }
 
+// Kinds returns Rigs and those of every other kind of plant that is promised: two unstable poles, two integrators, a zero in
+// the right half-plane, delays of whole samples and of part of one, a disturbance of its own colour.
+func Kinds() []Rig {
+	return append(Rigs(),
+		Rig{Name: "two unstable poles", Plant: lti.TF{Num: lti.Poly{160}, Den: lti.FromRoots([]complex128{1, 2.5, -40})}, Period: 0.02,
+			Law: lti.Law{Inner: lead(190, 1, 80, 0.02), U0: 1}, Dither: 1, Hold: 3, InputNoise: 0.1, SensorNoise: 0.02},
+		Rig{Name: "two integrators", Plant: lti.TF{Num: lti.Poly{30}, Den: lti.Poly{0, 0, 1}}, Period: 0.03,
+			Law: lti.Law{Inner: lead(2, 1.2, 20, 0.03), Y0: -2}, Dither: 1, Hold: 4, InputNoise: 0.3, SensorNoise: 0.05},
+		Rig{Name: "right-half-plane zero", Plant: lti.TF{Num: lti.Poly{-60, 5}, Den: lti.FromRoots([]complex128{1, -4})}, Period: 0.05,
+			Law: lti.Law{Inner: lti.Gain(-0.25, 0.05), U0: 2}, Dither: 1, Hold: 3, InputNoise: 0.3, SensorNoise: 0.1},
+		Rig{Name: "delay of three samples", Plant: lti.TF{Num: lti.Poly{3}, Den: lti.Poly{-1.5, 1}, Delay: 0.15}, Period: 0.05,
+			Law: lti.Law{Inner: lti.Gain(1, 0.05), Y0: 7}, Dither: 1, Hold: 3, InputNoise: 0.3, SensorNoise: 0.05},
+		Rig{Name: "delay of 1.4 samples", Plant: lti.TF{Num: lti.Poly{12}, Den: lti.FromRoots([]complex128{2, -5}), Delay: 0.056}, Period: 0.04,
+			Law: lti.Law{Inner: lead(16, 4, 40, 0.04)}, Dither: 1, Hold: 3, InputNoise: 0.3, SensorNoise: 0.03},
+		Rig{Name: "coloured disturbance", Plant: lti.TF{Num: lti.Poly{12}, Den: lti.FromRoots([]complex128{2, -5})}, Period: 0.04,
+			Law: lti.Law{Inner: lead(16, 4, 40, 0.04), U0: 3}, Dither: 1, Hold: 3, InputNoise: 0.5, SensorNoise: 0.02, Colour: 0.8},
+	)
+}
+
 // Record simulates n samples of trial k: U[k] acts from Y[k] on. The same seed and trial give the same record.
 func (r Rig) Record(n int, seed, trial uint64) (u, y []float64) {
 	u, y, _ = r.RecordWithDither(n, seed, trial)
@@ -58,13 +78,19 @@ func (r Rig) RecordWithDither(n int, seed, trial uint64) (u, y, dither []float64
 	rnd := rand.New(rand.NewPCG(seed, trial))
 	dither = make([]float64, n)
 	input, sensor := make([]float64, n), make([]float64, n)
-	level := 0.0
+	level, keep := 0.0, 0.0
+	if r.Colour > 0 {
+		keep = math.Exp(-r.Colour * r.Period)
+	}
 	for k := range n {
 		if k%r.Hold == 0 {
 			level = r.Dither * float64(2*rnd.IntN(2)-1)
 		}
 		dither[k] = level
-		input[k] = r.InputNoise * rnd.NormFloat64()
+		input[k] = math.Sqrt(1-keep*keep) * r.InputNoise * rnd.NormFloat64()
+		if k > 0 {
+			input[k] += keep * input[k-1]
+		}
 		sensor[k] = r.SensorNoise * rnd.NormFloat64()
 	}
 	law := r.Law
@@ -76,30 +102,41 @@ func (r Rig) RecordWithDither(n int, seed, trial uint64) (u, y, dither []float64
 	return t.U, t.Y, dither
 }
 
-// Truth is the sampled rig as A y = B u + C e in powers of z^-1, deviations from the operating point.
+// Truth is the sampled rig as A D y = B D u + C e in powers of z^-1, deviations from the operating point. D is 1 unless the
+// disturbance has a colour. B has as many coefficients as A, and one more for each sample of delay, counted up.
 type Truth struct {
-	A, B, C  []float64
-	Variance float64 // of e
+	A, B, C, D []float64
+	Variance   float64 // of e
 }
 
-// Truth returns the innovations form: with input noise w and sensor noise v, A y = B u + B w + A v, and C e has the
+// Truth returns the innovations form: with input noise w/D and sensor noise v, A D y = B D u + B w + A D v, and C e has the
 // spectrum of the last two terms, the zeros of C inside the unit circle.
 func (r Rig) Truth() Truth {
-	g, err := lti.ZOHTF(r.Plant, r.Period)
-	if err != nil {
-		panic(err)
-	}
 	n := len(r.Plant.Den) - 1
-	t := Truth{A: pad(g.Den, n), B: pad(g.Num, n)}
-	t.C, t.Variance = spectralFactor(n, [][]float64{scaled(t.B, r.InputNoise), scaled(t.A, r.SensorNoise)})
+	s := r.Sampled()
+	t := Truth{A: lti.Shift(nil, s.A), D: []float64{1}}
+	b := lti.ShiftInput(s.B0, s.B1)
+	t.B = append(make([]float64, s.Whole), b[:n+1]...)
+	if r.late() > s.Whole {
+		t.B = append(t.B, b[n+1])
+	}
+	w := r.InputNoise
+	if r.Colour > 0 {
+		keep := math.Exp(-r.Colour * r.Period)
+		t.D, w = append(t.D, -keep), w*math.Sqrt(1-keep*keep)
+	}
+	ad := lti.Poly(t.A).Mul(t.D)
+	t.C, t.Variance = spectralFactor(len(ad)-1, [][]float64{scaled(b, w), scaled(ad, r.SensorNoise)})
 	return t
 }
 
-func pad(p []float64, n int) []float64 {
-	out := make([]float64, n+1)
-	copy(out, p)
-	return out
+// Sampled is the plant with its derivatives.
+func (r Rig) Sampled() lti.Delta {
+	return lti.SampleDelta(r.Plant.Num, r.Plant.Den, r.Plant.Delay, r.Period)
 }
+
+// late is the delay in samples, counted up.
+func (r Rig) late() int { return int(math.Ceil(r.Plant.Delay/r.Period - 1e-9)) }
 
 func scaled(p []float64, k float64) []float64 {
 	out := make([]float64, len(p))
@@ -154,79 +191,23 @@ func (r Rig) Poles() []complex128 {
 	return p
 }
 
-// PoleBounds returns for each of Poles the Cramér-Rao bound of its estimate from this record, the root of the mean
-// square of its distance from the truth, when A, the n coefficients of B with at least one sample of delay, C and a
-// constant are unknown: the information matrix is that of the prediction errors' gradient at the truth (Ljung, System
-// Identification, 2nd ed. 1999, section 9.4).
-func (r Rig) PoleBounds(u, y []float64) []float64 {
-	t := r.Truth()
-	n := len(t.A) - 1
-	rows := len(y)
-	du, dy := make([]float64, rows), make([]float64, rows)
-	for k := range rows {
-		du[k], dy[k] = (u[k] - r.Law.U0), (y[k] - r.Law.Y0)
-	}
-	uc, yc := divide(du, t.C), divide(dy, t.C)
-	e := make([]float64, rows)
-	for k := range e {
-		for i := 0; i <= n && i <= k; i++ {
-			e[k] += t.A[i]*yc[k-i] - t.B[i]*uc[k-i]
+// Factors returns the factors of the sampled plant's denominator by which an estimate is graded, in powers of δ = z - 1: one
+// for each real pole, and one of degree two for each complex pair and each two equal poles, whose sum and product are
+// regular where the poles themselves are not.
+func (r Rig) Factors() []lti.Poly {
+	var out []lti.Poly
+	poles := r.Plant.Poles()
+	for i := 0; i < len(poles); i++ {
+		pair := []complex128{poles[i]}
+		if i+1 < len(poles) && (imag(poles[i]) != 0 || poles[i] == poles[i+1]) {
+			i++
+			pair = append(pair, poles[i])
 		}
-	}
-	ec := divide(e, t.C)
-	grad := mat.NewDense(rows-n, 3*n+1, nil)
-	for k := n; k < rows; k++ {
-		row := grad.RawRowView(k - n)
-		for i := 1; i <= n; i++ {
-			row[i-1], row[n+i-1], row[2*n+i-1] = yc[k-i], uc[k-i], ec[k-i]
+		for j, s := range pair {
+			h := s * complex(r.Period, 0)
+			pair[j] = cmplx.Exp(h/2) * (cmplx.Exp(h/2) - cmplx.Exp(-h/2))
 		}
-		row[3*n] = 1
-	}
-	var qr mat.QR
-	qr.Factorize(grad)
-	var rr, inv mat.Dense
-	qr.RTo(&rr)
-	if err := inv.Inverse(rr.Slice(0, 3*n+1, 0, 3*n+1)); err != nil {
-		if _, ok := err.(mat.Condition); !ok {
-			panic(err)
-		}
-	}
-	poles := r.Poles()
-	bounds := make([]float64, len(poles))
-	for j, z := range poles {
-		// dz/da_i = -z^(n-i) / prod (z - other poles).
-		d := complex(-1, 0)
-		for k, other := range poles {
-			if k != j {
-				d /= z - other
-			}
-		}
-		g := make([]complex128, n)
-		for i := n - 1; i >= 0; i-- {
-			g[i] = d
-			d *= z
-		}
-		sum := 0.0
-		for c := range 3*n + 1 {
-			var v complex128
-			for i := range n {
-				v += g[i] * complex(inv.At(i, c), 0)
-			}
-			sum += real(v)*real(v) + imag(v)*imag(v)
-		}
-		bounds[j] = math.Sqrt(t.Variance * sum)
-	}
-	return bounds
-}
-
-// divide filters x by 1/c from rest.
-func divide(x, c []float64) []float64 {
-	out := make([]float64, len(x))
-	for k, v := range x {
-		for i := 1; i < len(c) && i <= k; i++ {
-			v -= c[i] * out[k-i]
-		}
-		out[k] = v
+		out = append(out, lti.FromRoots(pair))
 	}
 	return out
 }

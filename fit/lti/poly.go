@@ -13,6 +13,7 @@ import (
 const (
 	badRoots  = "lti: complex roots not in conjugate pairs"
 	badPoly   = "lti: zero or empty polynomial"
+	badMonic  = "lti: divisor is not monic"
 	badDelay  = "lti: transfer function has a delay"
 	improper  = "lti: improper transfer function"
 	badPeriod = "lti: period not positive"
@@ -88,6 +89,25 @@ func (p Poly) Scale(k float64) Poly {
 		r[i] = k * a
 	}
 	return r
+}
+
+// Div divides p by q, whose highest coefficient is 1, by synthetic division: p = quo q + rem, rem having as many
+// coefficients as q has roots.
+func (p Poly) Div(q Poly) (quo, rem Poly) {
+	k := len(q) - 1
+	if k < 0 || q[k] != 1 {
+		panic(badMonic)
+	}
+	r := append(make(Poly, 0, max(len(p), k)), p...)
+	for len(r) < k {
+		r = append(r, 0)
+	}
+	for i := len(r) - 1; i >= k; i-- {
+		for j, v := range q[:k] {
+			r[i-k+j] -= r[i] * v
+		}
+	}
+	return r[k:], r[:k:k]
 }
 
 // Deriv returns the derivative of p.

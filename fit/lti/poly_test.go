@@ -113,3 +113,18 @@ func TestPade(t *testing.T) {
 		}
 	}
 }
+
+// Division undone by multiplication, a dividend of lower degree included; integers, so exactly.
+func TestDiv(t *testing.T) {
+	for _, c := range []struct{ quo, q, rem Poly }{
+		{Poly{2, -1, 3}, Poly{4, 0, 1}, Poly{5, -6}},
+		{Poly{7}, Poly{-3, 1}, Poly{2}},
+		{nil, Poly{1, 2, 3, 1}, Poly{4, 5, 6}},
+		{Poly{1, 1}, Poly{1}, nil},
+	} {
+		quo, rem := c.quo.Mul(c.q).Add(c.rem).Div(c.q)
+		if !slices.Equal(quo.Trim(), c.quo.Trim()) || len(rem) != len(c.q)-1 || !slices.Equal(rem, c.rem) {
+			t.Errorf("by %v: quotient %v, remainder %v; want %v, %v", c.q, quo, rem, c.quo, c.rem)
+		}
+	}
+}
