@@ -249,7 +249,7 @@ func (s *search) errorsAt(x point) (float64, shifted, bool) {
 			w.all.h, w.first.h, w.logDet = s.work[i-1].all.h, s.work[i-1].first.h, s.work[i-1].logDet
 		} else {
 			w.all.h, w.first.h = gram(x.c, len(w.e)-t0), gram(x.c, s.warm[i])
-			w.logDet = startUp(x.c, len(w.e)-t0) - startUp(x.c, s.warm[i])
+			w.logDet = logDet(w.all.h, 1) - logDet(w.first.h, 1)
 		}
 		if s.logDet += w.logDet; holdsNonFinite([]float64{w.logDet}) {
 			return math.Inf(1), q, false

@@ -93,6 +93,9 @@ type square [(maxNoise + 1) * (maxNoise + 1)]float64
 func gram(c []float64, rows int) *mat.SymDense {
 	n := len(c) - 1
 	m := n + 1
+	if rows == 0 {
+		return priorOnly(m)
+	}
 	var f, p, w square // F - 1, F^k - 1, the sum; state -κ, s_1 … s_n
 	if n > 0 {
 		f[m] = -1
@@ -176,6 +179,15 @@ func gram(c []float64, rows int) *mat.SymDense {
 		}
 	}
 	return out
+}
+
+// priorOnly is gram's matrix over no rows.
+func priorOnly(m int) *mat.SymDense {
+	h := mat.NewSymDense(m, nil)
+	for i := 1; i < m; i++ {
+		h.SetSym(i, i, 1)
+	}
+	return h
 }
 
 // startUp is log det(I + G'G) over so many rows, not finite where G is not.
