@@ -33,6 +33,7 @@ const (
 	rowsPerParameter = 10
 	residualLags     = 25
 	triedStructures  = 3     // before a log is said to tell no parameters apart
+	farBehind        = 4     // in BIC, from where no structure stands in for the best
 	sandwichRows     = 50000 // up to which the covariance is made right for a structure that misses something
 )
 
@@ -133,6 +134,9 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 // end, and puts it first.
 func finish(p *fit.Predictor, ranked []*candidate) (*fit.Prediction, []*candidate, error) {
 	for i, c := range ranked[:min(triedStructures, len(ranked))] {
+		if c.bic > ranked[0].bic+farBehind {
+			break
+		}
 		f, err := p.Fit(c.fit, finalTol, finalSteps)
 		if err == nil {
 			err = p.Covariance(f)

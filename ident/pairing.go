@@ -52,7 +52,7 @@ func (c *chooser) pairing(ctx context.Context, recs []fit.Record, ranked []*cand
 			list = append(list, structure{poles: n, zeros: m, colour: best.colour, integrators: min(best.integrators, n)})
 		}
 	}
-	if err := late.try(ctx, list, nil, nil); err != nil {
+	if err := late.try(ctx, list, nil); err != nil {
 		return err
 	}
 	for _, cand := range late.ranked() {

@@ -10,13 +10,26 @@ import (
 	"steadyrig/fit/lti"
 )
 
-// fit finds the best fit of one structure in rounds: all starts as they are,
-// the best few after some steps, the best two to the end.
+// fit finds the best fit of one structure from its own starts and from what can
+// be made of its neighbours' fits; one that was tried before, from what can be
+// made of near, where that promises more than was found.
 func (c *chooser) fit(s structure, near *fit.Prediction) *candidate {
-	cand := &candidate{structure: s, bic: math.Inf(1)}
+	if before := c.tried[s]; before != nil {
+		return c.fitFrom(s, c.moved(near, s), before)
+	}
 	starts := c.starts(s)
-	if near != nil {
+	for _, near := range c.nearby(s) {
 		starts = append(starts, c.moved(near, s)...)
+	}
+	return c.fitFrom(s, starts, nil)
+}
+
+// fitFrom goes in rounds: all starts as they are, the best few after some
+// steps, the best two to the end.
+func (c *chooser) fitFrom(s structure, starts []*fit.Prediction, before *candidate) *candidate {
+	cand := &candidate{structure: s, bic: math.Inf(1)}
+	if before != nil {
+		cand = before
 	}
 	round := func(p *fit.Predictor, list []*fit.Prediction, keep, steps int) []*fit.Prediction {
 		var out []*fit.Prediction
@@ -36,8 +49,16 @@ func (c *chooser) fit(s structure, near *fit.Prediction) *candidate {
 	if len(list) == 2 && list[1].Objective()-list[0].Objective() < sameOptimum*list[0].Objective() {
 		list = list[:1]
 	}
+	if before != nil && before.fit != nil && len(list) > 0 {
+		known := round(c.glance, []*fit.Prediction{before.fit}, 1, glanceSteps)
+		if len(known) > 0 && !(list[0].Objective() < known[0].Objective()*(1-sameOptimum)) {
+			return before
+		}
+	}
 	if list = round(c.p, list, 1, compareStep); len(list) > 0 {
-		cand.fit, cand.bic = list[0], c.criterion(list[0])
+		if v := c.criterion(list[0]); v < cand.bic {
+			cand = &candidate{structure: s, fit: list[0], bic: v}
+		}
 	}
 	return cand
 }
@@ -100,6 +121,10 @@ func (c *chooser) moved(m *fit.Prediction, s structure) []*fit.Prediction {
 	if !s.delay {
 		start.Delay = c.scope.base
 	}
+	var handed []*fit.Prediction
+	if s.poles == len(m.Den)-2 && s.zeros == len(m.Num)-2 && s.colour == len(m.D) {
+		handed = handedOver(start, h)
+	}
 	for start.Den.Degree() > s.poles {
 		dropPole(start, h)
 	}
@@ -109,7 +134,7 @@ func (c *chooser) moved(m *fit.Prediction, s structure) []*fit.Prediction {
 	list := []*fit.Prediction{start}
 	for start.Den.Degree() < s.poles {
 		var grown []*fit.Prediction
-		for _, p := range []float64{-0.5 / h, -0.1 / h} {
+		for _, p := range []float64{-0.5 / h, -0.1 / h, -0.02 / h} {
 			for _, b := range list {
 				g := copyOf(b)
 				addPole(g, p, h)
@@ -127,7 +152,7 @@ func (c *chooser) moved(m *fit.Prediction, s structure) []*fit.Prediction {
 	}
 	for len(list[0].D)-1 < s.colour {
 		var grown []*fit.Prediction
-		for _, d := range []float64{0.995, 0.9} {
+		for _, d := range []float64{0.995, 0.9, 0.3, -0.3} {
 			for _, b := range list {
 				g := copyOf(b)
 				g.D = []float64(lti.Poly(g.D).Mul(lti.Poly{1, -d}))
@@ -152,6 +177,33 @@ func (c *chooser) moved(m *fit.Prediction, s structure) []*fit.Prediction {
 			}
 		}
 		list = grown
+	}
+	return append(list, handed...)
+}
+
+// handedOver makes a disturbance's pole of each stable real pole of the plant,
+// whose nearest zero goes with it.
+func handedOver(m *fit.Prediction, h float64) []*fit.Prediction {
+	var list []*fit.Prediction
+	poles, zeros := m.Den.Roots(), m.Num.Roots()
+	for i, p := range poles {
+		if imag(p) != 0 || real(p) >= 0 {
+			continue
+		}
+		at, near := -1, math.Inf(1)
+		for j, z := range zeros {
+			if d := cmplx.Abs(z - p); imag(z) == 0 && d < near {
+				at, near = j, d
+			}
+		}
+		if at < 0 {
+			continue
+		}
+		g := copyOf(m)
+		g.Den = lti.FromRoots(slices.Delete(slices.Clone(poles), i, i+1))
+		g.Num = lti.FromRoots(slices.Delete(slices.Clone(zeros), at, at+1)).Scale(m.Num[len(m.Num)-1])
+		g.D = []float64(lti.Poly(g.D).Mul(lti.Poly{1, -math.Exp(real(p) * h)}))
+		list = append(list, g)
 	}
 	return list
 }

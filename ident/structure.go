@@ -194,8 +194,18 @@ func (c *chooser) choose(ctx context.Context, progress func(done, total int)) ([
 			}
 		}
 	}
-	if err := c.try(ctx, first, nil, progress); err != nil {
-		return nil, err
+	// From plain to rich, so that each can start from what its plainer
+	// neighbours found.
+	slices.SortStableFunc(first, func(a, b structure) int { return cmp.Compare(a.size(), b.size()) })
+	for len(first) > 0 {
+		n := slices.IndexFunc(first, func(s structure) bool { return s.size() > first[0].size() })
+		if n < 0 {
+			n = len(first)
+		}
+		if err := c.try(ctx, first[:n], progress); err != nil {
+			return nil, err
+		}
+		first = first[n:]
 	}
 	expanded := make(map[structure]bool)
 	for range 24 {
@@ -216,13 +226,7 @@ func (c *chooser) choose(ctx context.Context, progress func(done, total int)) ([
 		}
 		for _, cand := range around {
 			expanded[cand.structure] = true
-			var next []structure
-			for _, s := range c.neighbours(cand.structure) {
-				if _, done := c.tried[s]; !done {
-					next = append(next, s)
-				}
-			}
-			if err := c.try(ctx, next, cand.fit, progress); err != nil {
+			if err := c.tryFrom(ctx, c.neighbours(cand.structure), cand.fit, progress); err != nil {
 				return nil, err
 			}
 		}
@@ -238,10 +242,14 @@ func (c *chooser) ranked() []*candidate {
 			list = append(list, cand)
 		}
 	}
+	sortCandidates(list)
+	return list
+}
+
+func sortCandidates(list []*candidate) {
 	slices.SortFunc(list, func(a, b *candidate) int {
 		return cmp.Or(cmp.Compare(a.bic, b.bic), cmp.Compare(a.poles, b.poles), cmp.Compare(a.zeros, b.zeros), cmp.Compare(a.colour, b.colour), cmp.Compare(a.integrators, b.integrators))
 	})
-	return list
 }
 
 // neighbours are the structures one step away, and those that trade a pole
@@ -269,9 +277,55 @@ func (c *chooser) neighbours(s structure) []structure {
 	return out
 }
 
+// size counts what a structure has.
+func (s structure) size() int {
+	n := s.poles + s.zeros + s.colour + s.integrators
+	if s.delay {
+		n++
+	}
+	return n
+}
+
+// nearby returns the best fits of tried structures at most nearSteps away.
+func (c *chooser) nearby(s structure) []*fit.Prediction {
+	var list []*candidate
+	for _, k := range c.tried {
+		if k.fit != nil && s.distance(k.structure) <= nearSteps {
+			list = append(list, k)
+		}
+	}
+	sortCandidates(list)
+	var out []*fit.Prediction
+	for _, k := range list[:min(nearFits, len(list))] {
+		out = append(out, k.fit)
+	}
+	return out
+}
+
+// Starts from other structures: how many, and how far those may be.
+const (
+	nearFits  = 2
+	nearSteps = 2
+)
+
+// distance is by how many poles, zeros, colour poles and delays two structures
+// differ.
+func (s structure) distance(o structure) int {
+	d := max(s.poles-o.poles, o.poles-s.poles) + max(s.zeros-o.zeros, o.zeros-s.zeros) + max(s.colour-o.colour, o.colour-s.colour)
+	if s.delay != o.delay {
+		d++
+	}
+	return d
+}
+
 // try fits structures at once, each from its own starts and from what can be
-// made of a neighbour's fit.
-func (c *chooser) try(ctx context.Context, list []structure, near *fit.Prediction, progress func(done, total int)) error {
+// made of its neighbours' fits.
+func (c *chooser) try(ctx context.Context, list []structure, progress func(done, total int)) error {
+	return c.tryFrom(ctx, list, nil, progress)
+}
+
+// tryFrom is try, where those tried before are looked at again from near.
+func (c *chooser) tryFrom(ctx context.Context, list []structure, near *fit.Prediction, progress func(done, total int)) error {
 	results := make([]*candidate, len(list))
 	err := Each(ctx, len(list), c.workers, func(i int) error {
 		results[i] = c.fit(list[i], near)
@@ -322,12 +376,22 @@ func cancels(f *fit.Prediction) bool {
 	return false
 }
 
+// vanishes reports whether a plant pole decays within a row, so that all that
+// is left of it is a noise zero more.
+func vanishes(f *fit.Prediction) bool {
+	return slices.ContainsFunc(f.Den.Roots(), func(p complex128) bool { return real(p)*f.Period < -withinRow })
+}
+
+// withinRow is how far a pole decays within a row, as a logarithm, beyond which
+// the log does not show it.
+const withinRow = 4
+
 // delayPenalty is what a free delay costs beyond its parameter, odds of seven
 // to one: every actuator and sensor lags, and on a short log a lag faster than
 // the probe looks like a delay.
 const delayPenalty = 4
 
-// criterion is BIC with four amendments.
+// criterion is BIC with some amendments.
 //
 // On a short log BIC drops the slow colour of a disturbance, for which the
 // plant's slow poles pay with errors beyond their intervals; the two parameters
@@ -335,8 +399,8 @@ const delayPenalty = 4
 //
 // A plant's pole under a zero, and a noise zero on the unit circle
 // without a plant pole beside it that it could be the mirror of, mean that the
-// approximation behind BIC fails; they cost dipolePenalty each. A free delay
-// costs delayPenalty.
+// approximation behind BIC fails; they cost dipolePenalty each, and so
+// does a plant pole that decays within a row. A free delay costs delayPenalty.
 func (c *chooser) criterion(f *fit.Prediction) float64 {
 	v := f.BIC()
 	if f.Rows < shortRows && f.Shape.Colour > 0 {
@@ -350,6 +414,9 @@ func (c *chooser) criterion(f *fit.Prediction) float64 {
 	}
 	if f.FreeDelay {
 		v += delayPenalty
+	}
+	if vanishes(f) {
+		v += dipolePenalty
 	}
 	return v
 }

@@ -24,3 +24,29 @@ func TestSlowDisturbanceOfALongLog(t *testing.T) {
 		}
 	}
 }
+
+// Seeds on which the search once stayed where it started: 618 rows whose long
+// models give no usable poles of the right order, found from plainer
+// structures; and a disturbance's pole that sat in the plant under a zero.
+func TestSearchLeavesLocalOptima(t *testing.T) {
+	if testing.Short() {
+		t.Skip("fits four logs")
+	}
+	for _, c := range []struct {
+		rig         string
+		rows        int
+		seed        uint64
+		poles, zero int
+	}{{"mast", 618, 1005, 3, 0}, {"mast", 618, 1049, 3, 0}, {"mast", 618, 1057, 3, 0}, {"flap", 6000, 1004, 3, 1}} {
+		r := rigNamed(t, c.rig)
+		r.Rows = c.rows
+		e, rig := experiment(t, r, c.seed)
+		m, err := Fit(context.Background(), []*data.Experiment{e}, rig, Options{})
+		if err != nil {
+			t.Fatal(err)
+		}
+		if len(m.Poles) != c.poles || len(m.Zeros) != c.zero {
+			t.Errorf("%s, seed %d: %d poles, %d zeros, want %d, %d", c.rig, c.seed, len(m.Poles), len(m.Zeros), c.poles, c.zero)
+		}
+	}
+}
