@@ -24,8 +24,10 @@ type Influence struct {
 // delay where it is free, D and C: -H^-1 ψ_k e_k, ψ the derivatives of the
 // prediction errors less what constant and start-up errors take of them, H the
 // second derivatives of half the objective. m is an estimate from these
-// records: away from the optimum the rows say nothing.
+// records: away from the optimum the rows say nothing. It panics where outputs
+// are missing; Restored fills them.
 func (p *Predictor) Influence(m *Prediction) (*Influence, error) {
+	p.checkWhole()
 	s, x := p.begin(m)
 	defer s.done()
 	h, err := s.curvature(x)
