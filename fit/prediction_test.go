@@ -66,7 +66,7 @@ func TestPredictionGradient(t *testing.T) {
 		testGradient(t, []Record{rec}, gradTol)
 	}
 	several := pieces()
-	several[0].Missing, several[2].Missing, several[3].Missing = []int{25, 100, 101}, []int{3, 90}, []int{150}
+	several[0].Missing, several[2].Missing, several[3].Missing = []int{25, 100, 101}, []int{3, 30, 31, 90}, []int{150}
 	testGradient(t, several, gradTol)
 }
 
