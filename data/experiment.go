@@ -5,7 +5,7 @@ type Experiment struct {
 	File   string
 	SHA256 string // of the file's bytes as given (compressed, if it came so), in hex
 	Rows   int    // rows of numbers in the file
-	Used   int    // rows in Segments
+	Used   int    // rows in Segments, less those whose output is wrong
 
 	// Period is the time between rows in s: the median step of the stamps, or [log] sample_period where there
 	// are no stamps.
@@ -26,6 +26,12 @@ type Segment struct {
 	U, Y []float64
 	// R is the reference in the rows of Y; D is the dither in the rows of U, shifted with it. nil when not logged.
 	R, D []float64
+	// Wrong lists the rows, in ascending order, whose output is no measurement (a spike, a few rows stuck) though
+	// the rest of the row is good: Y holds it as logged, and a law that ran has answered to it.
+	Wrong []int
+
+	lines lineMap // of the log, for LineAt
+	row   int     // of the log, the first here
 }
 
 // A Flaw is something in a log that a fit should not take silently.
@@ -50,7 +56,7 @@ const (
 	FlawHeader    = "repeated header" // the header again among the rows
 	FlawCut       = "cut last line"   // the file ends within a row
 	FlawMissing   = "missing value"   // an empty cell, NaN, infinity
-	FlawBeyond    = "beyond limits"   // input past [limits] input: logged before its limits
+	FlawBeyond    = "beyond limits"   // input past [limits] input: logged before its limits; clipped to them
 	FlawRate      = "beyond rate"     // input moves faster than [limits] input_rate
 	FlawSaturated = "saturation"      // input flat at a limit
 	FlawTrip      = "trip"            // output left [limits] output

@@ -55,7 +55,7 @@ func (l *log) findMissing() {
 // limitSlack is how near to a limit, as a fraction of the range, the input counts as flat at it.
 const limitSlack = 1e-3
 
-// findLimits looks for an input flat at its limits, beyond them, or faster than its rate.
+// findLimits looks for an input flat at its limits, beyond them, or faster than its rate, and clips it to its limits.
 func (l *log) findLimits() {
 	u := l.columns[l.u]
 	name := l.column(l.u)
@@ -72,7 +72,7 @@ func (l *log) findLimits() {
 				}
 				beyond++
 				far = max(far, x-lim[1], lim[0]-x)
-				l.dropped[k] |= isBeyond
+				u[k] = min(max(x, lim[0]), lim[1])
 				continue
 			case x >= lim[1]-slack:
 				high++
@@ -85,10 +85,12 @@ func (l *log) findLimits() {
 				first = l.lines.at(k)
 			}
 		}
+		// To leave out such rows would bias a fit: in closed loop they are those of the largest disturbances.
+		l.clipped = beyond
 		if beyond > 0 {
 			l.flaw(Flaw{Name: FlawBeyond, Column: name, Count: beyond, Line: beyondFirst,
 				Detail: fmt.Sprintf("up to %s past [limits] input [%s, %s]: logged before its limits, or the limits are wrong", number(far), number(lim[0]), number(lim[1])),
-				Effect: "these rows are not used: the actuator was told something else; log the input after its limits"})
+				Effect: "clipped to the limits, past which the actuator was not told to go; log the input after its limits"})
 		}
 		l.saturated(name, low, high, first, lim[0], lim[1])
 	} else {
@@ -227,7 +229,8 @@ func (l *log) findTrips() {
 		Detail: fmt.Sprintf("output beyond [limits] output [%s, %s]", number(lim[0]), number(lim[1])), Effect: effect})
 }
 
-// findStuck marks stretches in which the output repeats one value far longer than it usually does.
+// findStuck marks stretches in which the output repeats one value far longer than it usually does. A segment ends before
+// a long one, of MinSegment rows or more.
 //
 // Were the output to repeat itself from row to row with probability q, independently, a stretch of n rows would have
 // probability q^n; q is taken from the share of stretches longer than one row, which a few long ones cannot raise. The
@@ -266,8 +269,12 @@ func (l *log) findStuck() {
 		if to-from > most {
 			most, value = to-from, y[from]
 		}
+		why := isStuck
+		if to-from < MinSegment {
+			why = isWrong
+		}
 		for k := from; k < to; k++ {
-			l.dropped[k] |= isStuck
+			l.dropped[k] |= why
 		}
 	})
 	if count > 0 {
@@ -345,11 +352,11 @@ func (l *log) findSpikes() {
 		return
 	}
 	for _, k := range rows {
-		l.dropped[k] |= isSpike
+		l.dropped[k] |= isWrong
 	}
 	l.flaw(Flaw{Name: FlawSpike, Column: l.column(l.y), Count: len(rows), Line: l.lines.at(rows[0]),
 		Detail: fmt.Sprintf("single samples more than %d robust standard deviations off their neighbours, the first %s", far, number(y[rows[0]])),
-		Effect: "not used: a segment ends before each and starts after it"})
+		Effect: "the output of these rows is not used"})
 }
 
 // levels returns the different numbers among some thousand of x, sorted.

@@ -358,8 +358,9 @@ func TestFlawBeyondLimits(t *testing.T) {
 	g.Limits.Input = &[2]float64{-4, 4}
 	exp := mustRead(t, p.csv(), g)
 	want := Flaw{FlawBeyond, "u", 2, 302, "up to 3 past [limits] input [-4, 4]: logged before its limits, or the limits are wrong",
-		"these rows are not used: the actuator was told something else; log the input after its limits"}
-	if got := findFlaw(t, exp, FlawBeyond); got != want || exp.Used != 998 || len(exp.Segments) != 3 {
+		"clipped to the limits, past which the actuator was not told to go; log the input after its limits"}
+	s := exp.Segments[0]
+	if got := findFlaw(t, exp, FlawBeyond); got != want || exp.Used != 1000 || len(exp.Segments) != 1 || s.U[300] != 4 || s.U[700] != -4 || !slices.Equal(s.U[301:700], p.u[301:700]) {
 		t.Errorf("got  %+v\nwant %+v\n%d rows used", got, want, exp.Used)
 	}
 }
@@ -458,8 +459,17 @@ func TestFlawStuckSensor(t *testing.T) {
 	}
 	exp := mustRead(t, p.csv(), plainRig())
 	f := findFlaw(t, exp, FlawStuck)
-	if f.Column != "y" || f.Count != 1 || f.Line != 501 || f.Effect != "61 rows not used" || exp.Used != 1939 || len(exp.Flaws) != 1 {
+	if f.Column != "y" || f.Count != 1 || f.Line != 501 || f.Effect != "61 rows not used" || exp.Used != 1939 || len(exp.Flaws) != 1 || len(exp.Segments) != 2 {
 		t.Errorf("%+v; %d rows used, flaws %q", f, exp.Used, flawNames(exp))
+	}
+	// A short stretch ends no segment.
+	p = newPlainLog(2000)
+	for k := 500; k < 530; k++ {
+		p.y[k] = p.y[499]
+	}
+	exp = mustRead(t, p.csv(), plainRig())
+	if w := exp.Segments[0].Wrong; len(exp.Segments) != 1 || exp.Used != 1969 || len(w) != 31 || w[0] != 499 || w[30] != 529 {
+		t.Errorf("a short stretch: %d segments, %d rows used, wrong %v", len(exp.Segments), exp.Used, w)
 	}
 }
 
@@ -487,9 +497,16 @@ func TestFlawSpike(t *testing.T) {
 	p.y[1200] = -9
 	exp := mustRead(t, p.csv(), plainRig())
 	want := Flaw{FlawSpike, "y", 2, 702, "single samples more than 15 robust standard deviations off their neighbours, the first 9",
-		"not used: a segment ends before each and starts after it"}
-	if got := findFlaw(t, exp, FlawSpike); got != want || exp.Used != 1998 || len(exp.Segments) != 3 || len(exp.Flaws) != 1 {
+		"the output of these rows is not used"}
+	if got := findFlaw(t, exp, FlawSpike); got != want || exp.Used != 1998 || len(exp.Segments) != 1 || len(exp.Flaws) != 1 {
 		t.Errorf("got  %+v\nwant %+v\n%d rows used, flaws %q", got, want, exp.Used, flawNames(exp))
+	}
+	s := exp.Segments[0]
+	if !slices.Equal(s.Wrong, []int{700, 1200}) || s.Y[700] != 9 || s.LineAt(1200) != 1202 {
+		t.Errorf("wrong rows %v, the first %g, the last on line %d", s.Wrong, s.Y[700], s.LineAt(1200))
+	}
+	if pieces := exp.Pieces(); len(pieces) != 3 || pieces[1].Line != 703 || len(pieces[1].Y) != 499 || pieces[2].Start != p.t[1201] || len(pieces[2].R) != 799 {
+		t.Errorf("pieces %+v", pieces)
 	}
 }
 

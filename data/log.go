@@ -77,6 +77,7 @@ type log struct {
 	fields           []int // of the columns read
 	time, u, y, r, d int   // index into columns, or -1
 	dropped          []uint8
+	clipped          int // rows of the input beyond its limits
 	period           float64
 	flaws            []Flaw
 }
@@ -87,8 +88,7 @@ const (
 	isMissingRow
 	isTripped
 	isStuck
-	isSpike
-	isBeyond
+	isWrong  // the output only, in a row or a few: the segment goes on
 	isUnused = ^startsSegment
 )
 
@@ -165,10 +165,13 @@ func (l *log) experiment() (*Experiment, error) {
 		return nil, err
 	}
 	l.findFlaws()
+	if 2*l.clipped > l.rows {
+		return nil, l.mostlyBeyond()
+	}
 	exp.Period = l.period
 	exp.Segments = l.segments()
 	for _, s := range exp.Segments {
-		exp.Used += len(s.Y)
+		exp.Used += len(s.Y) - len(s.Wrong)
 	}
 	exp.Flaws = l.flaws
 	if len(exp.Segments) == 0 {

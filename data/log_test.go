@@ -71,7 +71,7 @@ func checkExperiment(t *testing.T, exp *Experiment) {
 	t.Helper()
 	used := 0
 	for i, s := range exp.Segments {
-		used += len(s.Y)
+		used += len(s.Y) - len(s.Wrong)
 		if len(s.Y) < MinSegment || len(s.U) != len(s.Y) || s.R != nil && len(s.R) != len(s.Y) || s.D != nil && len(s.D) != len(s.Y) {
 			t.Errorf("segment %d: %d outputs, %d inputs, %d references, %d dithers", i, len(s.Y), len(s.U), len(s.R), len(s.D))
 		}

@@ -11,20 +11,20 @@ func (l *log) segments() []Segment {
 	var out []Segment
 	short, shortRows, first := 0, 0, 0
 	idle, idleRows, firstIdle := 0, 0, 0
-	l.runs(func(from, to int) {
+	l.cut(isUnused&^isWrong, func(from, to int) {
 		if l.rig.Log.InputRow == InputBefore {
 			// The input of the next row acts from this row's output sample on; the last row has no such input.
 			to--
 		}
-		if to-from < MinSegment {
+		s := l.segment(from, max(from, to))
+		if len(s.Y)-len(s.Wrong) < MinSegment {
 			if short == 0 {
 				first = l.lines.at(from)
 			}
 			short++
-			shortRows += max(0, to-from)
+			shortRows += len(s.Y)
 			return
 		}
-		s := l.segment(from, to)
 		if !moves(s.U) {
 			if idle == 0 {
 				firstIdle = s.Line
@@ -47,14 +47,17 @@ func (l *log) segments() []Segment {
 }
 
 // runs calls f with [from, to) of each stretch of rows to be used, one period apart.
-func (l *log) runs(f func(from, to int)) {
+func (l *log) runs(f func(from, to int)) { l.cut(isUnused, f) }
+
+// cut calls f with [from, to) of each stretch of rows one period apart that no reason among why speaks against.
+func (l *log) cut(why uint8, f func(from, to int)) {
 	from := -1
 	for i, d := range l.dropped {
-		if from >= 0 && d != 0 {
+		if from >= 0 && d&(why|startsSegment) != 0 {
 			f(from, i)
 			from = -1
 		}
-		if from < 0 && d&isUnused == 0 {
+		if from < 0 && d&why == 0 {
 			from = i
 		}
 	}
@@ -69,7 +72,12 @@ func (l *log) segment(from, to int) Segment {
 		shift = 1
 	}
 	s := Segment{Line: l.lines.at(from), Start: float64(from) * l.period,
-		U: l.columns[l.u][from+shift : to+shift : to+shift], Y: l.columns[l.y][from:to:to]}
+		U: l.columns[l.u][from+shift : to+shift : to+shift], Y: l.columns[l.y][from:to:to], lines: l.lines, row: from}
+	for k := from; k < to; k++ {
+		if l.dropped[k]&isWrong != 0 {
+			s.Wrong = append(s.Wrong, k-from)
+		}
+	}
 	if l.time >= 0 {
 		s.Start = l.columns[l.time][from]
 	}
@@ -119,25 +127,62 @@ func (l *log) tooShort() error {
 	if l.rows < MinSegment {
 		return l.fault(-1, hint, "%w: %d", ErrTooShort, l.rows)
 	}
-	beyond, tripped := 0, 0
+	tripped := 0
 	for _, why := range l.dropped {
-		if why&isBeyond != 0 {
-			beyond++
-		}
 		if why&isTripped != 0 {
 			tripped++
 		}
 	}
-	const text = "%w on end: in %d of %d the %s (column %s) is beyond [limits] %s [%s, %s]"
-	if lim := l.rig.Limits.Input; 2*beyond > l.rows {
-		return l.fault(-1, fmt.Sprintf("correct [limits] input (%s), or log the input after its limits, as the actuator was told it", l.rig.where("limits.input")),
-			text, ErrTooShort, beyond, l.rows, "input", quote(l.column(l.u)), "input", number(lim[0]), number(lim[1]))
-	}
 	if lim := l.rig.Limits.Output; 2*tripped > l.rows {
 		return l.fault(-1, fmt.Sprintf("correct [limits] output (%s), or give a log of a run inside them", l.rig.where("limits.output")),
-			text, ErrTooShort, tripped, l.rows, "output", quote(l.column(l.y)), "output", number(lim[0]), number(lim[1]))
+			beyondText, ErrTooShort, tripped, l.rows, "output", quote(l.column(l.y)), "output", number(lim[0]), number(lim[1]))
 	}
 	return l.fault(-1, hint, "%w on end: of %d no stretch of %d is left%s", ErrTooShort, l.rows, MinSegment, l.because())
+}
+
+const beyondText = "%w on end: in %d of %d the %s (column %s) is beyond [limits] %s [%s, %s]"
+
+// mostlyBeyond refuses a log whose input is past its limits in most rows: then the limits are wrong, or nothing is
+// left of what the actuator was told.
+func (l *log) mostlyBeyond() error {
+	lim := l.rig.Limits.Input
+	return l.fault(-1, fmt.Sprintf("correct [limits] input (%s), or log the input after its limits, as the actuator was told it", l.rig.where("limits.input")),
+		beyondText, ErrTooShort, l.clipped, l.rows, "input", quote(l.column(l.u)), "input", number(lim[0]), number(lim[1]))
+}
+
+// LineAt returns the line in the file of row k of the segment.
+func (s Segment) LineAt(k int) int {
+	if len(s.lines.row) == 0 {
+		return s.Line + k
+	}
+	return s.lines.at(s.row + k)
+}
+
+// Pieces returns the segments cut at the rows whose output is wrong, however short the pieces.
+func (e *Experiment) Pieces() []Segment {
+	var out []Segment
+	for _, s := range e.Segments {
+		from := 0
+		for _, k := range append(s.Wrong[:len(s.Wrong):len(s.Wrong)], len(s.Y)) {
+			if k > from {
+				out = append(out, s.rows(from, k, e.Period))
+			}
+			from = k + 1
+		}
+	}
+	return out
+}
+
+// rows returns rows [from, to) of a segment, none of them wrong.
+func (s Segment) rows(from, to int, period float64) Segment {
+	p := Segment{Line: s.LineAt(from), Start: s.Start + float64(from)*period, U: s.U[from:to], Y: s.Y[from:to], lines: s.lines, row: s.row + from}
+	if s.R != nil {
+		p.R = s.R[from:to]
+	}
+	if s.D != nil {
+		p.D = s.D[from:to]
+	}
+	return p
 }
 
 // because lists the flaws that cost rows.

@@ -12,6 +12,7 @@
 //
 // A Record is a stretch without a gap; U[k] acts from Y[k] on, so that b_1 is the first coefficient of B that is not zero.
 // Records are fitted together, each with its own constant, and nothing is carried over between them.
+// Outputs that a record lists as missing are unknowns of the likelihood; Predictor.Outliers tells which ought to be.
 //
 // # From records to a plant
 //

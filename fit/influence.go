@@ -24,7 +24,8 @@ type Influence struct {
 // delay where it is free, D and C: -H^-1 ψ_k e_k, ψ the derivatives of the
 // prediction errors less what constant and start-up errors take of them, H the
 // second derivatives of half the objective. m is an estimate from these
-// records: away from the optimum the rows say nothing.
+// records: away from the optimum the rows say nothing. Around missing outputs the
+// errors are what these leave of them.
 func (p *Predictor) Influence(m *Prediction) (*Influence, error) {
 	s, x := p.begin(m)
 	defer s.done()
@@ -47,7 +48,7 @@ func (p *Predictor) Influence(m *Prediction) (*Influence, error) {
 	unit := s.units()
 	for i := range s.work {
 		w := &s.work[i]
-		s.filtered(w, q, s.pad+s.Lead)
+		s.filtered(w, q, s.start(i))
 		f.rows = append(f.rows, influences(&inv, s.derivatives(w, w, x.c, cols, free), s.rowErrors(w), free, unit))
 	}
 	return f, nil
@@ -69,7 +70,7 @@ func (s Shape) free() []int {
 }
 
 // rowErrors are a record's prediction errors from its first equation on.
-func (s *search) rowErrors(w *workspace) []float64 { return w.e[s.pad+s.Lead:] }
+func (s *search) rowErrors(w *workspace) []float64 { return w.e[len(w.e)-len(w.step):] }
 
 // influences returns -inv d_k e_k for each row k, at the places of the free ones
 // of as many parameters as there are units.
@@ -127,7 +128,7 @@ func (s *search) curvature(x point) (*mat.Dense, error) {
 // signals in from under the transients of w, less what the record's constant
 // and start-up errors take of them. c is C in powers of δ.
 func (s *search) derivatives(w, from *workspace, c []float64, cols []column, which []int) [][]float64 {
-	t0 := s.pad + s.Lead
+	t0 := len(w.e) - len(w.step)
 	h := gram(c, len(w.e)-t0)
 	local := make([]float64, h.SymmetricDim())
 	g := make([]float64, len(local))

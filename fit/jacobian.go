@@ -19,12 +19,13 @@ const chunk = 1024
 func (s *search) information(x point, q shifted) (*mat.SymDense, []float64) {
 	q.delta = lti.SampleDelta(x.num, x.den, x.tau, s.h)
 	h, grad := s.normal(q, s.shape.size())
-	s.addDeterminant(x, h, grad)
+	s.addDeterminant(x, q, h, grad)
 	return h, grad
 }
 
 // normal returns J'J and J'e over the first p shared parameters by the sum of
-// squares alone.
+// squares alone. Missing outputs are eliminated first: the errors are orthogonal to
+// their echoes, the columns are made so by what these take of their products.
 //
 // A column of J is the derivative of the equation error filtered by 1/C from
 // rest at the first equation. Lagged copies of one filtered signal differ from
@@ -42,12 +43,15 @@ func (s *search) normal(q shifted, p int) (*mat.SymDense, []float64) {
 	// What is left of a shared constant once its records gave up their own
 	// unknowns: products with the shared parameters, then with itself.
 	shared := make([]float64, p+1)
-	t0 := s.pad + s.Lead
 	// add adds the first rows of a record, as its errors stand. The first kept
 	// parameters are not eliminated.
-	add := func(w *workspace, rows, kept int, weight float64) {
+	add := func(w *workspace, t0, rows, kept int, weight float64) {
 		clear(jj)
 		clear(je)
+		var heard *mat.Dense
+		if len(w.missing) > 0 && rows == len(w.e)-t0 {
+			heard = mat.NewDense(len(w.missing), all, nil)
+		}
 		for k := range p {
 			for i := 1; i <= nc; i++ {
 				var v [1]float64
@@ -80,6 +84,14 @@ func (s *search) normal(q shifted, p int) (*mat.SymDense, []float64) {
 				for l := k; l < live; l++ {
 					jj[k*all+l] += floats.Dot(ck, col(l))
 				}
+				if heard != nil {
+					w.along(heard, k, ck, from)
+				}
+			}
+		}
+		if heard != nil {
+			if taken, ok := w.taken(heard, heard); ok {
+				floats.Sub(jj, taken.RawMatrix().Data)
 			}
 		}
 		// Take off the free responses.
@@ -152,19 +164,19 @@ func (s *search) normal(q shifted, p int) (*mat.SymDense, []float64) {
 		}
 	}
 	for i := range s.work {
-		w := &s.work[i]
+		w, t0 := &s.work[i], s.start(i)
 		s.filtered(w, q, t0)
 		share, kept := s.shareOf(i), p
 		if len(share) > 1 {
 			kept++
 		}
 		weight := s.weight(s.recs[i].Log)
-		add(w, len(w.e)-t0, kept, weight)
+		add(w, t0, len(w.e)-t0, kept, weight)
 		if warm := s.warm[i]; warm > 0 {
 			e := slices.Clone(w.e)
 			w.restart(t0, warm)
 			w.errorsFiltered(q, t0)
-			add(w, warm, kept, -weight)
+			add(w, t0, warm, kept, -weight)
 			copy(w.e, e)
 		}
 		if kept > p && i == share[len(share)-1] {
@@ -186,25 +198,38 @@ func (s *search) shareOf(record int) []int {
 }
 
 // addDeterminant adds S/(2N) times the slope of log det(I + G'G), which
-// depends on C alone, to the gradient: the objective's own, but for its
-// positive factor. Differences over a thousandth of a deviation are good
+// depends on C alone, or with missing outputs on A and D as well, to the
+// gradient: the objective's own, but for its positive factor. Differences over a thousandth of a deviation are good
 // enough for a term that vanishes as the log grows.
-func (s *search) addDeterminant(x point, h *mat.SymDense, grad []float64) {
-	nc := len(x.c) - 1
-	first := len(grad) - nc
+func (s *search) addDeterminant(x point, q shifted, h *mat.SymDense, grad []float64) {
+	first := len(grad) - (len(x.c) - 1)
+	if s.anyMissing() {
+		first = s.shape.Zeros + 1
+	}
 	scale := s.rss / (2 * float64(s.rows))
-	for j := 1; j <= nc; j++ {
-		k := first + j - 1
+	for k := first; k < len(grad); k++ {
+		if s.shape.fixed(k) {
+			continue
+		}
 		step := 1e-3 * math.Sqrt(s.rss/float64(s.rows)/h.At(k, k))
 		if !(step > 0) || math.IsInf(step, 0) {
 			continue
 		}
-		c := append([]float64(nil), x.c...)
-		c[j] += step
+		a, d, c := s.raised(x, q, k, step)
+		var ad, cz []float64
+		if s.anyMissing() {
+			ad, cz = lti.Poly(lti.Shift(nil, a)).Mul(lti.Shift(nil, d)), lti.Shift(nil, c)
+		}
 		var up, last float64
 		for i, r := range s.recs {
-			if i == 0 || len(r.Y) != len(s.recs[i-1].Y) || s.warm[i] != s.warm[i-1] {
-				last = startUp(c, len(r.Y)-s.Lead) - startUp(c, s.warm[i])
+			rows := len(r.Y) - s.first[i]
+			switch {
+			case len(r.Missing) > 0:
+				s.probe.run(cz, rows)
+				s.probeGaps.missing = s.work[i].missing
+				last = s.probeGaps.determinant(gram(c, rows), &s.probe, ad, cz) - startUp(c, s.warm[i])
+			case !s.alike(i):
+				last = startUp(c, rows) - startUp(c, s.warm[i])
 			}
 			up += last
 		}
@@ -212,6 +237,27 @@ func (s *search) addDeterminant(x point, h *mat.SymDense, grad []float64) {
 			grad[k] += d
 		}
 	}
+}
+
+// raised returns A, D and C, powers of δ, with shared parameter k raised by step.
+func (s *search) raised(x point, q shifted, k int, step float64) (a, d, c []float64) {
+	a, d, c = q.delta.A, x.d, x.c
+	switch fromEnd := s.shape.size() - k; {
+	case fromEnd < len(c):
+		c = slices.Clone(c)
+		c[len(c)-fromEnd] += step
+	case fromEnd < len(c)+len(d)-1:
+		d = slices.Clone(d)
+		d[len(d)+len(c)-1-fromEnd] += step
+	case k <= s.shape.Zeros+s.shape.Poles:
+		a = slices.Clone(a)
+		floats.AddScaled(a, step, q.delta.DA[k])
+	}
+	return a, d, c
+}
+
+func (p *Predictor) anyMissing() bool {
+	return slices.ContainsFunc(p.recs, func(r Record) bool { return len(r.Missing) > 0 })
 }
 
 // column is one derivative of the equation error, as lags of the filtered

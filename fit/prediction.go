@@ -60,8 +60,8 @@ type Prediction struct {
 	Const     []float64 // κ of each record, output units
 	Constants int       // how many of them are estimated: records may share one
 	RSS       float64   // of the prediction errors, start-up errors included; of N rows of variance Variance where logs differ
-	LogDet    float64   // of the start-up errors' information, the rest of the exact likelihood
-	Rows      int       // equations used
+	LogDet    float64   // of the information of start-up errors and missing outputs, the rest of the exact likelihood
+	Rows      int       // equations used, less the missing outputs
 	Variance  float64   // of e; of several logs the geometric mean by rows, to which Cov refers
 	Levels    []float64 // variance of e in each log; 0 for a log without equations
 	// Cov is the covariance of b_0 … b_m, a_1 … a_n, the delay where it is
@@ -171,7 +171,7 @@ func (p *Predictor) Errors(m *Prediction) (errs, before [][]float64, err error) 
 		return nil, nil, ErrNoFit
 	}
 	for i := range s.work {
-		e := append([]float64(nil), s.work[i].e[s.pad+s.Lead+s.warm[i]:]...)
+		e := append([]float64(nil), s.work[i].e[s.start(i)+s.warm[i]:]...)
 		floats.Scale(s.sy, e)
 		errs = append(errs, e)
 		e = append([]float64(nil), s.work[i].all.x[1:]...)

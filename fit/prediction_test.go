@@ -60,8 +60,18 @@ func TestPredictionGradient(t *testing.T) {
 	// The determinant's slope is itself a difference, good to about 1e-3 of a
 	// term that is a percent of C's gradient on this record.
 	const gradTol = 2e-5
-	rec, _ := pendulum(1, 600)
-	p, err := NewPredictor([]Record{rec}, 0.05, 0.2)
+	for _, missing := range [][]int{nil, {40, 41, 45, 200, 300, 301, 302, 303, 304, 305, 306, 599}} {
+		rec, _ := pendulum(1, 600)
+		rec.Missing = missing
+		testGradient(t, []Record{rec}, gradTol)
+	}
+	several := pieces()
+	several[0].Missing, several[2].Missing, several[3].Missing = []int{25, 100, 101}, []int{3, 30, 31, 90}, []int{150}
+	testGradient(t, several, gradTol)
+}
+
+func testGradient(t *testing.T, recs []Record, gradTol float64) {
+	p, err := NewPredictor(recs, 0.05, 0.2)
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -87,7 +97,7 @@ func TestPredictionGradient(t *testing.T) {
 		down, _, _ := s.errorsAt(s.moved(x, step))
 		want := (up - down) / (2 * eps) / 2 / scale
 		if !(math.Abs(g[k]-want) <= gradTol*(math.Abs(want)+math.Abs(g[k]))+1e-7) {
-			t.Errorf("parameter %d: gradient %.10g, differences give %.10g", k, g[k], want)
+			t.Errorf("%d records, parameter %d: gradient %.10g, differences give %.10g", len(recs), k, g[k], want)
 		}
 	}
 }

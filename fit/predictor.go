@@ -16,11 +16,13 @@ import (
 // equations, so that their criteria compare.
 type Predictor struct {
 	Period float64 // s
-	Lead   int     // rows of each record that serve as past only
+	Lead   int     // rows of each record that serve as past only, or more where an output of them is missing
 	// DelayRange bounds a free delay, s.
 	DelayRange [2]float64
 
-	recs   []Record  // means removed, scaled to unit deviation
+	given  []Record  // all of them, missing outputs filled
+	of     []int     // which of given a record of the fit is
+	recs   []Record  // means removed, scaled to unit deviation, missing outputs filled
 	padded []Record  // the same behind pad zeros
 	meanU  []float64 // by record: of all that share its constant
 	meanY  []float64
@@ -28,6 +30,7 @@ type Predictor struct {
 	su, sy float64
 	rows   int
 	logs   []int // equations of each log
+	first  []int // of each record, the row of its first equation
 	warm   []int // rows of each record that warm up
 	pad    int
 	spare  sync.Pool // of []workspace, for searches to come
@@ -61,9 +64,20 @@ func NewPredictor(recs []Record, period, maxDelay float64) (*Predictor, error) {
 	p.Lead = maxFitPoles + 2 + maxColour + int(math.Ceil(maxDelay/period))
 	p.pad = p.Lead + maxFitPoles + maxColour + 4
 	fresh := true // the next record to be kept has a constant of its own
-	for _, r := range recs {
+	for i, r := range recs {
 		fresh = fresh || !r.Resumes
-		if len(r.Y) < 2*p.Lead+8 {
+		p.given = append(p.given, r.Filled())
+		first := r.firstEquation(p.Lead, 0)
+		if !fresh {
+			first = r.firstEquation(p.Lead, warmUp) // its start is known by rows without gaps
+		}
+		missing := 0 // outputs that equations ask for
+		for _, k := range r.Missing {
+			if k >= first {
+				missing++
+			}
+		}
+		if len(r.Y)-first-missing < p.Lead+8 {
 			continue
 		}
 		if fresh {
@@ -72,16 +86,19 @@ func NewPredictor(recs []Record, period, maxDelay float64) (*Predictor, error) {
 		fresh = false
 		last := len(p.shares) - 1
 		p.shares[last] = append(p.shares[last], len(p.recs))
-		rows, warm := len(r.Y)-p.Lead, 0
+		rows, warm := len(r.Y)-first, 0
 		if len(p.shares[last]) > 1 {
 			warm = min(warmUp, rows/3)
 		}
-		p.recs, p.warm = append(p.recs, r), append(p.warm, warm)
-		p.rows += rows - warm
+		left := r.Missing[len(r.Missing)-missing:]
+		r = p.given[i]
+		r.Missing = left
+		p.recs, p.of, p.first, p.warm = append(p.recs, r), append(p.of, i), append(p.first, first), append(p.warm, warm)
+		p.rows += rows - warm - missing
 		for len(p.logs) <= r.Log {
 			p.logs = append(p.logs, 0)
 		}
-		p.logs[r.Log] += rows - warm
+		p.logs[r.Log] += rows - warm - missing
 	}
 	var uu, yy, n float64
 	for _, share := range p.shares {
@@ -92,7 +109,7 @@ func NewPredictor(recs []Record, period, maxDelay float64) (*Predictor, error) {
 		mu, my = mu/rows, my/rows
 		for _, i := range share {
 			r := p.recs[i]
-			c := Record{U: make([]float64, len(r.U)), Y: make([]float64, len(r.Y)), Log: r.Log, Resumes: i != share[0]}
+			c := Record{U: make([]float64, len(r.U)), Y: make([]float64, len(r.Y)), Missing: r.Missing, Log: r.Log, Resumes: i != share[0]}
 			for k := range r.U {
 				c.U[k], c.Y[k] = r.U[k]-mu, r.Y[k]-my
 				uu += c.U[k] * c.U[k]
@@ -119,7 +136,7 @@ func NewPredictor(recs []Record, period, maxDelay float64) (*Predictor, error) {
 	return p, nil
 }
 
-// Rows returns the number of equations of every fit.
+// Rows returns the number of equations of every fit, less one for each missing output.
 func (p *Predictor) Rows() int { return p.rows }
 
 // point is a model in scaled units: time in 1/w0, signals by their deviation.
@@ -147,18 +164,22 @@ type search struct {
 	rss, logDet float64   // parts of the objective at the last point looked at
 	sums        []float64 // of squares in each log
 	shared      float64   // log det of the information about constants that records share
+
+	probe     transient // for differences of the determinant
+	probeGaps gaps
 }
 
 // workspace holds the signals of one record; each starts with pad zeros.
 type workspace struct {
-	y, u       []float64 // padded data
+	y, u       []float64 // padded data, with the estimates of missing outputs at the last point looked at
 	e          []float64 // prediction errors
 	yf, uf     []float64 // D y / C, D u / C
 	vf, ef     []float64 // (A y - B u) / C, e / C
 	dy, du, av []float64
 	transient
+	gaps
 	all, first local   // over all rows, and over those that warm up
-	logDet     float64 // of I + G'G
+	logDet     float64 // of I + G'G, or of the information of ε and the missing outputs
 }
 
 // local holds the normal equations h x = g of κ and ε_1 … ε_nC of a record over
@@ -186,6 +207,12 @@ func (p *Predictor) newSearch(shape Shape, w0 float64) *search {
 			*x, buf = buf[:n:n], buf[n:]
 		}
 		w.y, w.u = p.padded[i].Y, p.padded[i].U
+		if len(r.Missing) > 0 {
+			w.y = append([]float64(nil), w.y...)
+			for _, k := range r.Missing {
+				w.missing = append(w.missing, k-p.first[i])
+			}
+		}
 	}
 	return s
 }
@@ -234,6 +261,13 @@ func (s *search) sampled(x point) (shifted, bool) {
 // of N_i log(S_i/N_i), but for a constant: the likelihood with each variance at
 // its best (Aitkin, Modelling variance heterogeneity in normal regression, Appl.
 // Statist. 36 (1987) 332-339).
+//
+// A missing output is integrated out, too: what stands in its place is off by
+// an unknown that enters the errors as a pulse through A D/C, and N counts the
+// outputs that are known (Sargan & Drettakis, Missing data in an autoregressive
+// model, Int. Economic Review 15 (1974) 39-58; Ljung, G. M., A note on the
+// estimation of missing values in time series, Commun. Statist. Simul. Comput.
+// 18 (1989) 459-465).
 func (s *search) errorsAt(x point) (float64, shifted, bool) {
 	q, ok := s.sampled(x)
 	if !ok {
@@ -242,26 +276,33 @@ func (s *search) errorsAt(x point) (float64, shifted, bool) {
 	ad := lti.Poly(q.a).Mul(q.d)
 	bd := lti.Poly(q.b).Mul(q.d)
 	s.logDet, s.shared = 0, 0
-	t0 := s.pad + s.Lead
 	for i := range s.work {
-		w := &s.work[i]
-		if i > 0 && len(w.e) == len(s.work[i-1].e) && s.warm[i] == s.warm[i-1] {
+		w, t0 := &s.work[i], s.start(i)
+		if s.alike(i) {
 			w.all.h, w.first.h, w.logDet = s.work[i-1].all.h, s.work[i-1].first.h, s.work[i-1].logDet
 		} else {
 			w.all.h, w.first.h = gram(x.c, len(w.e)-t0), gram(x.c, s.warm[i])
 			w.logDet = logDet(w.all.h, 1) - logDet(w.first.h, 1)
 		}
-		if s.logDet += w.logDet; holdsNonFinite([]float64{w.logDet}) {
-			return math.Inf(1), q, false
-		}
-		fir(w.e[t0:], w.y, ad, t0, 1, false)
+		y := s.padded[i].Y
+		fir(w.e[t0:], y, ad, t0, 1, false)
 		fir(w.e[t0:], w.u, bd, t0-q.whole, -1, true)
 		for k := s.pad; k < t0; k++ {
 			w.e[k] = 0
 		}
 		divide(w.e, w.e, q.c, t0)
 		w.run(q.c, len(w.e)-t0)
+		if len(w.missing) > 0 {
+			w.logDet = w.determinant(w.all.h, &w.transient, ad, q.c) - startUp(x.c, s.warm[i])
+			w.all.h = w.left
+		}
+		if s.logDet += w.logDet; holdsNonFinite([]float64{w.logDet}) {
+			return math.Inf(1), q, false
+		}
 		w.gather(&w.all, w.e[t0:])
+		if len(w.missing) > 0 && !w.hear(w.e[t0:], w.all.g) {
+			return math.Inf(1), q, false
+		}
 		w.gather(&w.first, w.e[t0:t0+s.warm[i]])
 	}
 	s.sums = make([]float64, len(s.logs))
@@ -270,17 +311,32 @@ func (s *search) errorsAt(x point) (float64, shifted, bool) {
 			return math.Inf(1), q, false
 		}
 		for _, i := range share {
-			w := &s.work[i]
+			w, t0 := &s.work[i], s.start(i)
 			rss := -w.first.squares(w.e[t0 : t0+s.warm[i]])
+			if len(w.missing) > 0 && !w.fill(w.e[t0:], w.all.x) {
+				return math.Inf(1), q, false
+			}
 			rss += w.apply(t0)
 			if !(rss < math.Inf(1)) {
 				return math.Inf(1), q, false
+			}
+			for j, k := range w.missing {
+				w.y[t0+k] = s.padded[i].Y[t0+k] - w.off[j]
 			}
 			s.sums[s.recs[i].Log] += rss
 		}
 	}
 	s.rss = s.pooled()
 	return s.rss * math.Exp(s.logDet/float64(s.rows)), q, true
+}
+
+// start is where record i's errors start in its workspace.
+func (s *search) start(i int) int { return s.pad + s.first[i] }
+
+// alike reports whether record i, and the one before, have the same information
+// of κ and ε.
+func (s *search) alike(i int) bool {
+	return i > 0 && len(s.recs[i].Y)-s.first[i] == len(s.recs[i-1].Y)-s.first[i-1] && s.warm[i] == s.warm[i-1] && len(s.recs[i-1].Missing) == 0
 }
 
 // pooled returns the sum of squares, or with several logs that of as many rows
@@ -408,6 +464,35 @@ func (p *Predictor) Rest(m *Prediction, record int, y float64) float64 {
 	return p.meanU[record] + (a*(y-p.meanY[record])-m.Const[record]/colour)/b
 }
 
+// Restored returns the records given with the outputs that m gives their
+// missing samples most probably; those that no equation asks for stay on
+// straight lines.
+func (p *Predictor) Restored(m *Prediction) ([]Record, error) {
+	s, x := p.begin(m)
+	defer s.done()
+	if _, _, ok := s.errorsAt(x); !ok {
+		return nil, ErrNoFit
+	}
+	out := append([]Record(nil), p.given...)
+	for i, r := range p.recs {
+		if len(r.Missing) == 0 {
+			continue
+		}
+		y := append([]float64(nil), out[p.of[i]].Y...)
+		for _, k := range r.Missing {
+			y[k] = p.meanY[i] + p.sy*s.work[i].y[s.pad+k]
+		}
+		out[p.of[i]].Y = y
+	}
+	return out, nil
+}
+
+func (p *Predictor) checkWhole() {
+	if p.anyMissing() {
+		panic(notWhole)
+	}
+}
+
 // Means returns what was taken out of the input and the output of each record:
 // the means over the records that share its constant, which holds about them.
 func (p *Predictor) Means() (u, y []float64) { return slices.Clone(p.meanU), slices.Clone(p.meanY) }
@@ -420,7 +505,7 @@ func (p *Predictor) Logs() []int { return slices.Clone(p.logs) }
 func (p *Predictor) Inputs() []Record {
 	var out []Record
 	for i, r := range p.recs {
-		u := append([]float64(nil), r.U[p.Lead+p.warm[i]:]...)
+		u := append([]float64(nil), r.U[p.first[i]+p.warm[i]:]...)
 		floats.Scale(p.su, u)
 		floats.AddConst(p.meanU[i], u)
 		out = append(out, Record{U: u, Log: r.Log, Resumes: r.Resumes})

@@ -42,7 +42,7 @@ func newRegression(data [][][]float64, lags []lag, first int, without bool) *reg
 func signals(recs []Record) [][][]float64 {
 	out := make([][][]float64, len(recs))
 	for i, r := range recs {
-		out[i] = [][]float64{output: r.Y, input: r.U}
+		out[i] = [][]float64{output: r.Filled().Y, input: r.U}
 	}
 	return out
 }

@@ -246,7 +246,8 @@ const drivenOrder = 40
 // and output are regressed on their own past and the outside signals, and the
 // models run on the outside signals without an error.
 func (p *Predictor) driven(outside [][][]float64) (*Predictor, int, error) {
-	d := &Predictor{Period: p.Period, Lead: p.Lead, DelayRange: p.DelayRange, pad: p.pad, recs: p.recs}
+	p.checkWhole()
+	d := &Predictor{Period: p.Period, Lead: p.Lead, DelayRange: p.DelayRange, pad: p.pad, recs: p.recs, first: p.first}
 	var kept [][][]float64
 	for _, signals := range outside {
 		if len(signals) == 0 {

@@ -92,9 +92,9 @@ func Audit(ctx context.Context, exps []*data.Experiment, rig *data.Rig) (*AuditR
 	su, sy := spread(recs)
 	a.Spread = OperatingPoint{su, sy}
 	for _, r := range recs {
-		for k := range r.Y {
+		for k, y := range r.Filled().Y {
 			a.OperatingPoint.Input += r.U[k]
-			a.OperatingPoint.Output += r.Y[k]
+			a.OperatingPoint.Output += y
 		}
 	}
 	var rows float64
@@ -191,7 +191,7 @@ func (a *AuditReport) glance(ctx context.Context, recs []fit.Record, rig *data.R
 	a.Memories = float64(p.Rows()) / memory(decaying(best))
 	for _, cand := range ranked {
 		if a.Informative == nil && a.Outside.law != nil {
-			a.Informative = informative(recs, cand.fit, a.Outside.law)
+			a.Informative = informative(a.Outside.pieces, cand.fit, a.Outside.law)
 		}
 	}
 	a.Pairing.Words = "input and output of a row belong together"

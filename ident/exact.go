@@ -70,6 +70,7 @@ const (
 // CheckExact says whether logs can have exact intervals: they need a signal from outside, logged, that moves, and the law
 // that ran.
 func CheckExact(exps []*data.Experiment, rig *data.Rig) error {
+	exps = cutAtWrong(exps)
 	signals, dither := movingSignals(exps)
 	if signals == nil {
 		return errors.New("exact intervals need the probe or the reference in the log, moving; name its column in [log] as dither or reference, or leave out --exact")
@@ -112,7 +113,7 @@ func (m *Model) AddExact(ctx context.Context, exps []*data.Experiment, rig *data
 	if err := CheckExact(exps, rig); err != nil {
 		return err
 	}
-	_, exps = firstRows(exps, exactRows)
+	_, exps = firstRows(cutAtWrong(exps), exactRows)
 	recs, _, err := records(exps)
 	if err != nil {
 		return err

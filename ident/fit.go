@@ -2,6 +2,7 @@ package ident
 
 import (
 	"context"
+	"errors"
 	"fmt"
 	"math"
 	"runtime"
@@ -64,29 +65,20 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 	}
 
 	sc := scopeOf(rig, period)
-	p, err := fit.NewPredictor(recs, period, math.Max(sc.delay[1], sc.base))
-	if err != nil {
-		return m.refuse(&RefusedError{What: err.Error(), Do: "log a longer run"})
-	}
-	some, sp, signals := recs, p, outsideSignals(exps)
-	if p.Rows() > chooseRows {
-		some, signals = spreadOver(recs, chooseRows), spreadSignals(signals, chooseRows)
-		if sp, err = fit.NewPredictor(some, period, math.Max(sc.delay[1], sc.base)); err != nil {
-			return m, err
-		}
-	}
-	c, err := newChooser(sp, some, sc, opt.Workers)
-	if err != nil {
-		return m.refuse(&RefusedError{What: "no long model could be fitted: " + err.Error(), Do: "log a run in which input and output move"})
-	}
-	ranked, err := c.choose(ctx, opt.Progress)
-	if err != nil {
+	s, err := search(ctx, recs, period, sc, opt)
+	var refused *RefusedError
+	if errors.As(err, &refused) {
+		return m.refuse(err)
+	} else if err != nil {
 		return m, err
 	}
+	recs, some, p, sp, ranked := s.recs, s.some, s.p, s.sp, s.ranked
+	m.Evidence.LeftOut = leftOut(exps, s.wrong)
+	exps = marked(exps, recs)
 	if len(ranked) == 0 {
 		return m.refuse(&RefusedError{What: fmt.Sprintf("no plant of 1 to %d poles could be fitted to the log", MaxPoles), Do: "look at the log with audit"})
 	}
-	if err := c.pairing(ctx, some, ranked, opt.Workers); err != nil {
+	if err := s.chooser.pairing(ctx, some, ranked, opt.Workers); err != nil {
 		return m.refuse(err)
 	}
 
@@ -119,7 +111,15 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 	}
 	m.FrequencyResponse = m.Responses(bandDraws, opt.Seed)
 	m.Evidence.Structures = structures(ranked)
-	m.Evidence.Methods = methods(sp, some, signals, f, m)
+	whole, filled, err := s.restored(f)
+	if err != nil {
+		return m, err
+	}
+	signals := outsideSignals(exps)
+	if p != sp {
+		signals = spreadSignals(signals, chooseRows)
+	}
+	m.Evidence.Methods = methods(whole, filled, signals, f, m)
 	if err := m.compare(ctx, exps, rig, p, f, opt); err != nil {
 		return m, err
 	}
@@ -154,8 +154,9 @@ func newModel(exps []*data.Experiment, rig *data.Rig) *Model {
 		Schema: Schema, Rig: rig.Name, Verdict: Refused, Warnings: []string{}, Poles: []Root{}, Zeros: []Root{},
 		Plant:    Plant{Numerator: []float64{}, Denominator: []float64{}, Parameters: []string{}, Covariance: [][]float64{}},
 		Noise:    Noise{Numerator: []float64{}, Denominator: []float64{}},
-		Evidence: Evidence{Structures: []Structure{}, Methods: []Method{}},
+		Evidence: Evidence{Structures: []Structure{}, Methods: []Method{}, LeftOut: []LeftOut{}},
 	}
+	m.clipped(exps)
 	for _, e := range exps {
 		m.Logs = append(m.Logs, LogUse{File: e.File, SHA256: e.SHA256, Rows: e.Rows, Used: e.Used, Segments: len(e.Segments)})
 	}
@@ -178,7 +179,7 @@ func records(exps []*data.Experiment) ([]fit.Record, float64, error) {
 			return nil, 0, fmt.Errorf("%s is sampled every %.6g s, %s every %.6g s: fit logs of one period together", exps[0].File, period, e.File, e.Period)
 		}
 		for k, s := range e.Segments {
-			recs = append(recs, fit.Record{U: s.U, Y: s.Y, Log: i, Resumes: k > 0 && resumes(e, k)})
+			recs = append(recs, fit.Record{U: s.U, Y: s.Y, Missing: s.Wrong, Log: i, Resumes: k > 0 && resumes(e, k)})
 		}
 	}
 	return recs, period, nil
@@ -211,7 +212,9 @@ func spreadOver(recs []fit.Record, rows int) []fit.Record {
 				from = b * (len(r.Y) - size) / (k - 1)
 			}
 			to := min(from+size, len(r.Y))
-			out = append(out, fit.Record{U: r.U[from:to], Y: r.Y[from:to], Log: r.Log, Resumes: resumed && k == 1})
+			cut := r.Rows(from, to)
+			cut.Resumes = resumed && k == 1
+			out = append(out, cut)
 		}
 		resumed = true
 	}

@@ -212,6 +212,8 @@ type Evidence struct {
 	IntervalsBy    string      `json:"intervals_by"`    // curvature, draws or sandwich
 	// Agreement is left out for a single log.
 	Agreement *Agreement `json:"agreement,omitempty"`
+	// LeftOut counts outputs that were taken for unknown because they are wrong.
+	LeftOut []LeftOut `json:"left_out"`
 }
 
 // Structure is one candidate and how far it lost, in units of BIC.

@@ -47,7 +47,8 @@ type Outside struct {
 	Quiet    bool    `json:"quiet"` // nothing acted from outside
 	Words    string  `json:"words"`
 
-	law *fit.ARX // from the output to the input, as the log shows it; nil where it shows none
+	law    *fit.ARX     // from the output to the input, as the log shows it; nil where it shows none
+	pieces []fit.Record // that law is from, cut at wrong outputs
 }
 
 // outside measures outside power. Under a fixed linear law without it the
@@ -58,7 +59,7 @@ func outside(exps []*data.Experiment) Outside {
 	unexplained := func(less func(s data.Segment, y, u []float64)) *fit.ARX {
 		var recs []fit.Record
 		for _, e := range exps {
-			for _, s := range e.Segments {
+			for _, s := range e.Pieces() {
 				y, u := append([]float64(nil), s.Y...), append([]float64(nil), s.U...)
 				if less != nil {
 					less(s, y, u)
@@ -75,7 +76,7 @@ func outside(exps []*data.Experiment) Outside {
 	var total float64
 	var reference, dither bool
 	for _, e := range exps {
-		for _, s := range e.Segments {
+		for _, s := range e.Pieces() {
 			total += about(s.U)
 			reference = reference || s.R != nil
 			dither = dither || s.D != nil
@@ -86,6 +87,11 @@ func outside(exps []*data.Experiment) Outside {
 	}
 	law := unexplained(nil)
 	var o Outside
+	for _, e := range exps {
+		for _, s := range e.Pieces() {
+			o.pieces = append(o.pieces, fit.Record{U: s.U, Y: s.Y})
+		}
+	}
 	if law != nil {
 		o.Share, o.law = law.RSS/total, law
 	}
@@ -152,7 +158,7 @@ func rounding(exps []*data.Experiment, column func(data.Segment) []float64) floa
 	const fewest = 8
 	var all []float64
 	for _, e := range exps {
-		for _, s := range e.Segments {
+		for _, s := range e.Pieces() {
 			all = append(all, column(s)...)
 		}
 	}
@@ -299,7 +305,7 @@ const clearLaw = 0.1
 func lawResidual(exps []*data.Experiment, law *data.Stopgap, shift, ditherShift int, sign float64) float64 {
 	var rss, all float64
 	for _, e := range exps {
-		for _, s := range e.Segments {
+		for _, s := range e.Pieces() {
 			n := max(len(law.Numerator), len(law.Denominator))
 			var w, v []float64
 			for k := n + 1; k < len(s.Y)-1; k++ {

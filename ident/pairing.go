@@ -34,7 +34,8 @@ func (c *chooser) pairing(ctx context.Context, recs []fit.Record, ranked []*cand
 	moved := make([]fit.Record, len(recs))
 	for i, r := range recs {
 		n := len(r.Y)
-		moved[i] = fit.Record{U: r.U[1:], Y: r.Y[:n-1], Log: r.Log, Resumes: r.Resumes}
+		moved[i] = r.Rows(0, n-1)
+		moved[i].U = r.U[1:]
 	}
 	p, err := fit.NewPredictor(moved, c.p.Period, c.scope.delay[1])
 	if err != nil {

@@ -144,10 +144,11 @@ func busiest(recs []fit.Record, rows int) fit.Record {
 		for i := range places {
 			from := i * (len(r.Y) - n) / (places - 1)
 			if v := about(r.U[from : from+n]); v > most {
-				best, most = fit.Record{U: r.U[from : from+n], Y: r.Y[from : from+n]}, v
+				best, most = r.Rows(from, from+n), v
 			}
 		}
 	}
+	best.Log, best.Resumes = 0, false
 	return best
 }
 
@@ -157,7 +158,7 @@ func spread(recs []fit.Record) (su, sy float64) {
 	var n float64
 	for _, r := range recs {
 		su += about(r.U)
-		sy += about(r.Y)
+		sy += about(r.Filled().Y)
 		n += float64(len(r.U))
 	}
 	return math.Sqrt(su / n), math.Sqrt(sy / n)

@@ -19,7 +19,11 @@ func (m *Model) tests(p *fit.Predictor, recs []fit.Record, f *fit.Prediction) er
 	}
 	lags := min(residualLags, p.Rows()/20)
 	m.Evidence.Residuals.Lags = lags
-	m.Evidence.Residuals.Linearity = linearity(p, recs, f)
+	filled, err := p.Restored(f)
+	if err != nil {
+		return err
+	}
+	m.Evidence.Residuals.Linearity = linearity(p, filled, f)
 	if lags < 2 {
 		return nil
 	}
@@ -92,8 +96,8 @@ func explained(p *fit.Predictor, recs []fit.Record, f *fit.Prediction) float64 {
 			}
 			continue
 		}
-		first = append(first, fit.Record{U: r.U[:cut], Y: r.Y[:cut], Log: r.Log, Resumes: r.Resumes})
-		rest = append(rest, fit.Record{U: r.U[cut:], Y: r.Y[cut:], Log: r.Log, Resumes: r.Resumes})
+		first = append(first, r.Rows(0, cut))
+		rest = append(rest, r.Rows(cut, len(r.Y)))
 	}
 	a, err := fit.NewPredictor(first, p.Period, p.DelayRange[1])
 	if err != nil {
@@ -118,7 +122,7 @@ func explained(p *fit.Predictor, recs []fit.Record, f *fit.Prediction) float64 {
 		for _, v := range x {
 			ee += v * v
 		}
-		y := rest[min(i, len(rest)-1)].Y
+		y := rest[min(i, len(rest)-1)].Filled().Y
 		yy += about(y) * float64(len(x)) / float64(len(y))
 	}
 	return 1 - ee/yy
@@ -137,6 +141,13 @@ func (m *Model) judge(ranked []*candidate, out Outside, f *fit.Prediction) {
 	}
 	if need := soundRows * f.Free(); f.Rows < need {
 		weak("%d rows are few for %d parameters: intervals are optimistic below %d rows", f.Rows, f.Free(), need)
+	}
+	var left int
+	for _, l := range m.Evidence.LeftOut {
+		left += l.Rows
+	}
+	if share := float64(left) / float64(left+f.Rows); share > wrongShare {
+		weak("%.2g %% of the outputs are wrong and were left out: mend the sensor or its wiring", 100*share)
 	}
 	if m.Evidence.Memories < soundMemories {
 		weak("the log is only %.0f predictor memories long, intervals are optimistic below %d: log a longer run", m.Evidence.Memories, soundMemories)

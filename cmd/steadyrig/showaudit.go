@@ -85,7 +85,7 @@ func describe(exps []*data.Experiment, rig *data.Rig) dataframe.DataFrame {
 	for _, q := range parts {
 		var x []float64
 		for _, e := range exps {
-			for _, s := range e.Segments {
+			for _, s := range e.Pieces() {
 				x = append(x, q.of(s)...)
 			}
 		}

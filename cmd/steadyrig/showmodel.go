@@ -106,6 +106,9 @@ func showEvidence(p *page, m *ident.Model, u data.Units) {
 			p.item("intervals", text)
 		}
 	}
+	for _, text := range words.LeftOut(m) {
+		p.item("left out", text)
+	}
 	p.item("from outside", fmt.Sprintf("%s of the input's variance", words.Share(m.Evidence.OutsideShare)))
 	if m.Evidence.Memories > 0 {
 		p.item("length", words.Memories(m.Evidence.Memories))

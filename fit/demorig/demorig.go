@@ -226,6 +226,12 @@ func (r Rig) WriteCSV(w io.Writer, seed uint64) error {
 	if err != nil {
 		return fmt.Errorf("simulating %s: %w", r.Name, err)
 	}
+	return r.WriteTrace(w, s, trace, seed)
+}
+
+// WriteTrace writes the log of a run of the rig under s, which was drawn from
+// seed.
+func (r Rig) WriteTrace(w io.Writer, s Signals, trace lti.Trace, seed uint64) error {
 	b := bufio.NewWriter(w)
 	fmt.Fprintf(b, "# simulated log of the invented rig %s, seed %d\n", r.Name, seed)
 	b.WriteString("t,u,y,r")
@@ -249,12 +255,22 @@ func (r Rig) WriteCSV(w io.Writer, seed uint64) error {
 
 // Experiment writes rig file and log and reads them as a user would.
 func (r Rig) Experiment(seed uint64) (*data.Experiment, *data.Rig, error) {
+	s := r.Signals(r.Rows, seed)
+	trace, err := r.Simulate(s)
+	if err != nil {
+		return nil, nil, fmt.Errorf("simulating %s: %w", r.Name, err)
+	}
+	return r.Read(s, trace, seed)
+}
+
+// Read is Experiment for a run of the rig under s, which was drawn from seed.
+func (r Rig) Read(s Signals, trace lti.Trace, seed uint64) (*data.Experiment, *data.Rig, error) {
 	rig, err := data.ReadRig(strings.NewReader(r.File()), r.Name+".toml")
 	if err != nil {
 		return nil, nil, err
 	}
 	var log bytes.Buffer
-	if err := r.WriteCSV(&log, seed); err != nil {
+	if err := r.WriteTrace(&log, s, trace, seed); err != nil {
 		return nil, nil, err
 	}
 	e, err := data.ReadLog(&log, r.Name+".csv", rig)

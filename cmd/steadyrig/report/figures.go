@@ -48,7 +48,7 @@ func logFigures(e *data.Experiment, rig *data.Rig) []figure {
 	start := e.Segments[0].Start
 	y, in := newPlot("time, s", axis("output", u.Output)), newPlot("time, s", axis("input", u.Input))
 	var yKeys, inKeys []key
-	for i, s := range e.Segments {
+	for i, s := range e.Pieces() {
 		t := timeOf(s, e.Period)
 		for k := range t {
 			t[k] -= start
@@ -120,7 +120,7 @@ func fitFigures(m *ident.Model, exps []*data.Experiment, u data.Units) []figure 
 	var period float64
 	var file string
 	for _, e := range exps {
-		for _, q := range e.Segments {
+		for _, q := range e.Pieces() {
 			if len(q.Y) > len(s.Y) {
 				s, period, file = q, e.Period, e.File
 			}

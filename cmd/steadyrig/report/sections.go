@@ -214,6 +214,9 @@ func plantSection(in Input) section {
 			s.Facts = append(s.Facts, fact{"Log", words.LogUsed(m, i, u.Output)})
 		}
 	}
+	for _, text := range words.LeftOut(m) {
+		s.Facts = append(s.Facts, fact{"Left out", text})
+	}
 	poles := rootTable("Poles, rad/s", m.Poles, "Unstable")
 	poles.Notes = words.PoleNotes(m.Poles)
 	s.Tables = append(s.Tables, poles)

@@ -175,6 +175,15 @@ func Basis(m *ident.Model) string {
 	return ""
 }
 
+// LeftOut tells which outputs were left out because they are wrong, a line for each log and reason.
+func LeftOut(m *ident.Model) []string {
+	var lines []string
+	for _, l := range m.Evidence.LeftOut {
+		lines = append(lines, fmt.Sprintf("%s of %s, the first on line %d at %s s (%s)", Count(l.Rows, "output"), l.File, l.Line, Number(l.Time), l.Why))
+	}
+	return lines
+}
+
 // Memories tells the length of the logs in memories of the predictor, which is what intervals rest on.
 func Memories(n float64) string { return Brief(n) + " memories of the predictor" }
 
