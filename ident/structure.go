@@ -266,6 +266,8 @@ func (c *chooser) neighbours(s structure) []structure {
 	for _, d := range []structure{
 		{poles: 1}, {poles: -1}, {zeros: 1}, {zeros: -1}, {poles: 1, zeros: 1}, {poles: -1, zeros: -1},
 		{colour: 1}, {colour: -1},
+		// A light mode: a pair of poles between pairs of zeros.
+		{poles: 2}, {poles: 2, zeros: 2}, {poles: -2, zeros: -2},
 		// A disturbance's own pole that sat in the plant, under a zero.
 		{poles: -1, zeros: -1, colour: 1}, {poles: 1, zeros: 1, colour: -1},
 		{integrators: 1}, {integrators: 2}, {integrators: -1}, {integrators: -2},
