@@ -335,6 +335,8 @@ func structures(ranked []*candidate) []Structure {
 		switch extra := c.fit.Free() - ranked[0].fit.Free(); {
 		case i == 0:
 			s.Verdict = "chosen"
+		case s.BIC < 0:
+			s.Verdict = "set aside: the log does not tell its parameters apart"
 		case s.BIC < tie:
 			s.Verdict = "tie: the log does not tell it from the winner"
 		case extra > 0:

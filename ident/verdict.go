@@ -168,7 +168,7 @@ func (m *Model) judge(ranked []*candidate, out Outside, f *fit.Prediction) {
 		weak("the rig answers nonlinearly: squares of past inputs and outputs explain part of the prediction errors (probability %.2g); the intervals are about the best linear fit to motion of this size: log a run with less motion", p)
 	}
 	for _, c := range ranked[1:] {
-		if c.bic-ranked[0].bic < tie {
+		if d := c.bic - ranked[0].bic; d >= 0 && d < tie {
 			note("tie of structures: %s is hardly worse than the chosen %s", c.structure, ranked[0].structure)
 		}
 	}
