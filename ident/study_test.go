@@ -123,9 +123,8 @@ func integrators(m *Model) (n int) {
 
 // outcome is what one log says about one true number.
 type outcome struct {
-	in, matched  bool
-	squares, crb float64 // of the error and of the bound
-	reported     float64 // variance that the fit reports
+	in           bool
+	squares, crb float64 // of the error and of the bound, 0 without one
 }
 
 // trial is the fit of one log beside the truth.
@@ -189,7 +188,7 @@ func one(t testing.TB, r demorig.Rig, truth *fit.Prediction, seed uint64) (c tri
 		q := Root{Re95: Interval{1, 0}, Re95All: Interval{1, 0}}
 		if c.right {
 			q = m.Poles[i]
-			o.matched, o.squares, o.crb, o.reported = true, math.Pow(q.Re-real(p), 2), l.ReSD*l.ReSD, q.ReSD*q.ReSD
+			o.squares, o.crb = math.Pow(q.Re-real(p), 2), l.ReSD*l.ReSD
 		} else if len(m.Poles) > 0 { // the nearest
 			q = slices.MinFunc(m.Poles, func(a, b Root) int {
 				return cmp.Compare(cmplx.Abs(complex(a.Re, a.Im)-p), cmplx.Abs(complex(b.Re, b.Im)-p))
@@ -211,15 +210,15 @@ func one(t testing.TB, r demorig.Rig, truth *fit.Prediction, seed uint64) (c tri
 	if est != nil {
 		o.in = est.Interval95.Contains(true1)
 		if crb != nil && c.right {
-			o.matched, o.squares, o.crb, o.reported = true, math.Pow(est.Value-true1, 2), crb.SD*crb.SD, est.SD*est.SD
+			o.squares, o.crb = math.Pow(est.Value-true1, 2), crb.SD*crb.SD
 		}
 	}
 	if truth.FreeDelay && delay >= 0 {
 		o := &c.numbers[len(poles)+1]
-		v, d := m.Plant.Covariance[delay][delay], m.Plant.Delay-truth.Delay
+		d := m.Plant.Delay - truth.Delay
 		o.in = m.Plant.Delay95.Contains(truth.Delay)
 		if c.right {
-			o.matched, o.squares, o.reported = true, d*d, v
+			o.squares = d * d
 			o.crb = limit.Plant.Covariance[len(limit.Plant.Covariance)-1][len(limit.Plant.Covariance)-1]
 		}
 	}
@@ -238,8 +237,8 @@ type tally struct {
 	logs, refused, sound, soundShort, right, exact, all, invented int
 	tells, rightTold                                              int
 	names                                                         []string
-	matched, in                                                   []int
-	squares, crb, reported                                        []float64
+	bounded, in                                                   []int     // logs with a bound; with the truth in the interval
+	squares                                                       []float64 // of error over bound, summed
 }
 
 // study fits logs of a rig, two at a time, and compares with the truth.
@@ -264,8 +263,8 @@ func study(t testing.TB, r demorig.Rig, from uint64, logs int) (*tally, []trial)
 		c.names = append(c.names, "delay")
 	}
 	n := len(c.names)
-	c.matched, c.in = make([]int, n), make([]int, n)
-	c.squares, c.crb, c.reported = make([]float64, n), make([]float64, n), make([]float64, n)
+	c.bounded, c.in = make([]int, n), make([]int, n)
+	c.squares = make([]float64, n)
 	count := func(n *int, yes bool) {
 		if yes {
 			*n++
@@ -283,10 +282,10 @@ func study(t testing.TB, r demorig.Rig, from uint64, logs int) (*tally, []trial)
 		count(&c.rightTold, k.tells && k.right)
 		for i, o := range k.numbers {
 			count(&c.in[i], o.in)
-			count(&c.matched[i], o.matched)
-			c.squares[i] += o.squares
-			c.crb[i] += o.crb
-			c.reported[i] += o.reported
+			if o.crb > 0 {
+				c.bounded[i]++
+				c.squares[i] += o.squares / o.crb
+			}
 		}
 	}
 	return c, trials
@@ -297,8 +296,8 @@ func (c *tally) row() string {
 	var ratio, in []string
 	for i, name := range c.names {
 		v := "-"
-		if c.crb[i] > 0 {
-			v = fmt.Sprintf("%.2f", math.Sqrt(c.squares[i]/c.crb[i]))
+		if c.bounded[i] > 0 {
+			v = fmt.Sprintf("%.2f", math.Sqrt(c.squares[i]/float64(c.bounded[i])))
 		}
 		ratio = append(ratio, name+": "+v)
 		in = append(in, fmt.Sprintf("%s: %d", name, c.in[i]))
@@ -352,7 +351,7 @@ func studyLength(t *testing.T, rows, logs int) {
 		all, tells, right, whole = all+c.logs, tells+c.tells, right+c.rightTold, whole+c.all
 		invented, soundShort = invented+c.invented, soundShort+c.soundShort
 		for i, n := range c.in {
-			if c.crb[i] > 0 {
+			if c.bounded[i] > 0 {
 				inside, intervals = inside+n, intervals+c.logs
 			}
 		}
