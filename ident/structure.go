@@ -18,7 +18,7 @@ const (
 	MaxIntegrators  = 2
 	maxDelaySamples = 8 // of a delay without a hint
 	firstPoles      = 4 // of the structures that the search starts from
-	shortRows       = 1500
+	shortRows       = 4000
 )
 
 // How hard a structure is fitted while it is only compared with others, and
