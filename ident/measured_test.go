@@ -118,6 +118,11 @@ output = [0.001, 0.010]
 		}
 		var others []string
 		for _, method := range m.Evidence.Methods[1:] {
+			if len(method.Poles) == 0 {
+				t.Logf("%s: %s %s", c.name, method.Name, method.Note)
+				others = append(others, "–")
+				continue
+			}
 			right := slices.MaxFunc(method.Poles, func(a, b [2]float64) int { return cmp.Compare(a[0], b[0]) })
 			others = append(others, fmt.Sprintf("%.1f", right[0]))
 		}
