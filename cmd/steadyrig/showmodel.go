@@ -79,13 +79,13 @@ func showMethods(p *page, m *ident.Model) {
 	if len(m.Evidence.Methods) == 0 {
 		return
 	}
-	p.heading("The same poles by other ways of estimating")
-	var name, takes, poles, agrees, chance []string
+	p.heading("The same poles by other ways of estimating, rad/s")
+	var name, takes, poles, within, agrees, chance []string
 	for _, e := range m.Evidence.Methods {
 		name, takes, agrees = append(name, e.Name), append(takes, words.Assumes[e.Name]), append(agrees, words.Agrees(e))
-		poles, chance = append(poles, words.Rightmost(e.Poles)), append(chance, words.ByChance(e))
+		poles, within, chance = append(poles, words.Rightmost(e.Poles)), append(within, words.Within(e)), append(chance, words.ByChance(e))
 	}
-	p.table(columns("method", name, "takes for granted", takes, ">rightmost pole", poles, "agrees", agrees, ">by chance", chance))
+	p.table(columns("method", name, "takes for granted", takes, ">rightmost pole", poles, ">95 %", within, "agrees", agrees, ">by chance", chance))
 	for _, e := range m.Evidence.Methods {
 		if e.Note != "" && (!e.Agrees || len(e.Poles) == 0) {
 			p.item(e.Name, e.Note)

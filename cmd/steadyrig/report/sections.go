@@ -231,9 +231,9 @@ func plantSection(in Input) section {
 	if len(m.Zeros) > 0 {
 		s.Tables = append(s.Tables, rootTable("Zeros, rad/s", m.Zeros, "Right half-plane"))
 	}
-	methods := table{Caption: "The same poles by other ways of estimating", Head: []string{"Method", "Takes for granted", "Rightmost pole, rad/s", "Agrees", "By chance", "Note"}, Right: []bool{false, false, true, false, true}}
+	methods := table{Caption: "The same poles by other ways of estimating", Head: []string{"Method", "Takes for granted", "Rightmost pole, rad/s", "95 %", "Agrees", "By chance", "Note"}, Right: []bool{false, false, true, true, false, true}}
 	for _, e := range m.Evidence.Methods {
-		methods.Rows = append(methods.Rows, []string{e.Name, words.Assumes[e.Name], words.Rightmost(e.Poles), words.Agrees(e), words.ByChance(e), e.Note})
+		methods.Rows = append(methods.Rows, []string{e.Name, words.Assumes[e.Name], words.Rightmost(e.Poles), words.Within(e), words.Agrees(e), words.ByChance(e), e.Note})
 	}
 	if len(methods.Rows) > 0 {
 		s.Tables = append(s.Tables, methods)

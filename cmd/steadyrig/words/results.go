@@ -87,17 +87,33 @@ func Rightmost(poles [][2]float64) string {
 	if len(poles) == 0 {
 		return "–"
 	}
-	best := poles[0]
-	for _, q := range poles[1:] {
-		if q[0] > best[0] {
-			best = q
-		}
-	}
+	best := poles[rightmost(poles)]
 	if best[1] != 0 {
 		return Number(best[0]) + " ± " + Number(math.Abs(best[1])) + "i"
 	}
 	return Number(best[0])
 }
+
+func rightmost(poles [][2]float64) int {
+	best := 0
+	for i, q := range poles {
+		if q[0] > poles[best][0] {
+			best = i
+		}
+	}
+	return best
+}
+
+// Within is half the 95 % interval of a method's rightmost pole by its own account, rad/s; a dash where it gives none.
+func Within(e ident.Method) string {
+	if len(e.Poles) == 0 || len(e.SD) != len(e.Poles) {
+		return "–"
+	}
+	return "± " + Brief(normal95*e.SD[rightmost(e.Poles)])
+}
+
+// normal95 is the two-sided 95 % quantile of the normal distribution.
+const normal95 = 1.959963984540054
 
 // Loops says in a sentence what a design comes to.
 func Loops(l *design.Loops) string {

@@ -180,3 +180,21 @@ func TestFlawsAndMisses(t *testing.T) {
 		t.Errorf("probabilities by chance: %q", got)
 	}
 }
+
+// Of a method the interval is that of the pole that is shown, and a dash where
+// it brings no deviation.
+func TestWithin(t *testing.T) {
+	for _, c := range []struct {
+		method ident.Method
+		want   string
+	}{
+		{ident.Method{Poles: [][2]float64{{-44, 0}, {36, 0}}, SD: []float64{9, 1}}, "± 1.96"},
+		{ident.Method{Poles: [][2]float64{{36, 0}, {-44, 0}}, SD: []float64{1, 9}}, "± 1.96"},
+		{ident.Method{Poles: [][2]float64{{36, 0}}}, "–"},
+		{ident.Method{}, "–"},
+	} {
+		if got := Within(c.method); got != c.want {
+			t.Errorf("%+v: %q, want %q", c.method, got, c.want)
+		}
+	}
+}
