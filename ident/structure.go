@@ -249,7 +249,7 @@ func (c *chooser) ranked() []*candidate {
 
 func sortCandidates(list []*candidate) {
 	slices.SortFunc(list, func(a, b *candidate) int {
-		return cmp.Or(cmp.Compare(a.bic, b.bic), cmp.Compare(a.poles, b.poles), cmp.Compare(a.zeros, b.zeros), cmp.Compare(a.colour, b.colour), cmp.Compare(a.integrators, b.integrators))
+		return cmp.Or(cmp.Compare(a.bic, b.bic), cmp.Compare(a.poles, b.poles), cmp.Compare(a.zeros, b.zeros), cmp.Compare(a.colour, b.colour), cmp.Compare(a.integrators, b.integrators), cmp.Compare(a.size(), b.size()))
 	})
 }
 
