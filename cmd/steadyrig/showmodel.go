@@ -85,7 +85,7 @@ func showMethods(p *page, m *ident.Model) {
 		name, takes, agrees = append(name, e.Name), append(takes, words.Assumes[e.Name]), append(agrees, words.Agrees(e))
 		poles, within, chance = append(poles, words.Rightmost(e.Poles)), append(within, words.Within(e)), append(chance, words.ByChance(e))
 	}
-	p.table(columns("method", name, "takes for granted", takes, ">rightmost pole", poles, ">95 %", within, "agrees", agrees, ">by chance", chance))
+	p.table(columns("method", name, "takes for granted", takes, ">rightmost pole", poles, ">95 %", within, "agrees", agrees, ">chance", chance))
 	for _, e := range m.Evidence.Methods {
 		if e.Note != "" && (!e.Agrees || len(e.Poles) == 0) {
 			p.item(e.Name, e.Note)
