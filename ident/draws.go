@@ -119,7 +119,7 @@ func (m *Model) takeIntervals(plants []lti.TF) {
 	takeRoots(m.Zeros, same, func(g lti.TF) []complex128 { return g.Num.Roots() })
 	m.Gain.HighFrequency.take(same, func(g lti.TF) float64 { return g.Num[len(g.Num)-1] })
 	if delay {
-		d := Estimate{Value: m.Plant.Delay}
+		d := Estimate{Value: m.Plant.Delay, Interval95: *m.Plant.Delay95}
 		d.take(same, func(g lti.TF) float64 { return g.Delay })
 		m.Plant.Delay95 = &d.Interval95
 	}
@@ -133,7 +133,7 @@ func (e *Estimate) take(plants []lti.TF, of func(lti.TF) float64) {
 		x[i] = of(g)
 	}
 	slices.Sort(x)
-	e.SD, e.Interval95 = halfWidth(x), central(x, Confidence, e.Value)
+	e.SD, e.Interval95 = halfWidth(x), central(x, Confidence, e.Interval95)
 }
 
 // takeRoots sets the bounds of listed roots by those of drawn plants.
@@ -150,9 +150,13 @@ func takeRoots(list []Root, plants []lti.TF, of func(lti.TF) []complex128) {
 		slices.Sort(re[i])
 		slices.Sort(im[i])
 		r.ReSD, r.ImSD = halfWidth(re[i]), halfWidth(im[i])
-		r.Re95, r.Im95 = central(re[i], Confidence, r.Re), central(im[i], Confidence, r.Im)
-		r.Re95All, r.Im95All = central(re[i], all, r.Re), central(im[i], all, r.Im)
-		if r.Re == 0 && r.Im == 0 {
+		normal, held := *r, r.Re == 0 && r.Im == 0
+		if held { // what an integrator has is the ellipse of the free pair
+			normal = Root{}
+		}
+		r.Re95, r.Im95 = central(re[i], Confidence, normal.Re95), central(im[i], Confidence, normal.Im95)
+		r.Re95All, r.Im95All = central(re[i], all, normal.Re95All), central(im[i], all, normal.Im95All)
+		if held {
 			continue // an integrator's probability weighs its structure, too
 		}
 		below, _ := slices.BinarySearch(re[i], 0)
@@ -179,10 +183,16 @@ func alike(r []complex128, list []Root) []complex128 {
 	return out
 }
 
-// central is the middle share of sorted numbers, widened to hold the estimate.
-func central(x []float64, share, estimate float64) Interval {
+// central is the middle share of sorted numbers, widened to hold the normal
+// interval where that has two ends: each of the two alone is too narrow on some
+// logs whose disturbance seems weaker than it is.
+func central(x []float64, share float64, normal Interval) Interval {
 	tail := (1 - share) / 2
-	return Interval{math.Min(quantile(x, tail), estimate), math.Max(quantile(x, 1-tail), estimate)}
+	lo, hi := quantile(x, tail), quantile(x, 1-tail)
+	if math.IsInf(normal.Lo, 0) || math.IsInf(normal.Hi, 0) {
+		return Interval{lo, hi}
+	}
+	return Interval{math.Min(lo, normal.Lo), math.Max(hi, normal.Hi)}
 }
 
 // halfWidth is half of the middle two thirds of sorted numbers: the deviation

@@ -93,7 +93,8 @@ func TestDrawsOfAShortLog(t *testing.T) {
 	slices.Sort(x)
 	p := m.Poles[len(m.Poles)-1]
 	width := p.Re95.Hi - p.Re95.Lo
-	if lo, hi := quantile(x, 0.025), quantile(x, 0.975); math.Abs(lo-p.Re95.Lo) > 0.1*width || math.Abs(hi-p.Re95.Hi) > 0.1*width {
+	// The normal interval may have widened the model's, here by a sixth at one end.
+	if lo, hi := quantile(x, 0.025), quantile(x, 0.975); lo < p.Re95.Lo-0.1*width || hi > p.Re95.Hi+0.1*width || hi-lo < 0.7*width {
 		t.Errorf("plants drawn again have the unstable pole in %.4g to %.4g, the model says %.4g to %.4g", lo, hi, p.Re95.Lo, p.Re95.Hi)
 	}
 	// Twice, and with other numbers of workers, the same bits.
@@ -128,5 +129,48 @@ func TestNearKeepsMeanAndCovariance(t *testing.T) {
 	}
 	if got.cov[1][2] > -1.5*got.cov[1][1] {
 		t.Errorf("covariance of a1 and a2 %.3g, want -2 times the variance %.3g", got.cov[1][2], got.cov[1][1])
+	}
+}
+
+// The interval of a short log holds that of its draws and the normal one, and
+// leaves a normal one without ends alone.
+func TestIntervalsOfDrawsHoldTheNormalOne(t *testing.T) {
+	x := make([]float64, 1001) // 0 to 1: the middle 0.9 is 0.05 to 0.95
+	for i := range x {
+		x[i] = float64(i) / 1000
+	}
+	for _, c := range []struct{ normal, want Interval }{
+		{Interval{0.2, 0.8}, Interval{0.05, 0.95}},
+		{Interval{0.2, 2}, Interval{0.05, 2}},
+		{Interval{-1, 0.3}, Interval{-1, 0.95}},
+		{Interval{math.Inf(-1), 2}, Interval{0.05, 0.95}},
+	} {
+		got := central(x, 0.9, c.normal)
+		if math.Abs(got.Lo-c.want.Lo) > 1e-12 || math.Abs(got.Hi-c.want.Hi) > 1e-12 {
+			t.Errorf("normal %v: %v, want %v", c.normal, got, c.want)
+		}
+	}
+}
+
+// A continuous disturbance with a real pole, sampled, keeps its sign from row to
+// row. On these logs of 2 000 rows a colour pole on the negative axis had the
+// better likelihood, with intervals of the gain that missed.
+func TestDisturbancesDoNotAlternate(t *testing.T) {
+	if testing.Short() {
+		t.Skip("fits three logs")
+	}
+	r := rigNamed(t, "mast")
+	r.Rows = 2000
+	for _, seed := range []uint64{1039, 1068, 1071} {
+		e, rig := experiment(t, r, seed)
+		m, err := Fit(context.Background(), []*data.Experiment{e}, rig, Options{Seed: seed})
+		if err != nil {
+			t.Fatal(err)
+		}
+		for _, z := range zRoots(m.Noise.Denominator) {
+			if imag(z) == 0 && real(z) < 0 {
+				t.Errorf("seed %d: the noise has a pole at z = %.3f", seed, real(z))
+			}
+		}
 	}
 }
