@@ -163,7 +163,7 @@ func (a *AuditReport) glance(ctx context.Context, recs []fit.Record, rig *data.R
 	if len(list) == 0 {
 		list = append(list, structure{poles: sc.minPoles, zeros: min(sc.minZeros, sc.minPoles-1), delay: sc.mustDelay})
 	}
-	if err := c.try(ctx, list, nil); err != nil {
+	if err := c.try(ctx, list, nil, nil); err != nil {
 		return err
 	}
 	ranked := c.ranked()

@@ -119,10 +119,10 @@ func (m *Model) AddExact(ctx context.Context, exps []*data.Experiment, rig *data
 		return err
 	}
 	e := &Exact{Level: 1 - float64(exactLargest)/exactDraws, Draws: exactDraws, Largest: exactLargest, Seed: opt.Seed, Poles: []ExactPole{}}
-	sums, tuned, err := e.byLevels(exps, rig, recs, m, opt)
+	sums, tuned, err := e.byLevels(ctx, exps, rig, recs, m, opt)
 	if err != nil {
 		e.Note = err.Error()
-		if sums, tuned, err = e.bySigns(exps, rig, recs, m, opt); err != nil {
+		if sums, tuned, err = e.bySigns(ctx, exps, rig, recs, m, opt); err != nil {
 			m.Exact = e
 			e.Claim, e.Assumption, e.Note = ClaimNone, "", e.Note+"; by the signs of the residuals: "+err.Error()
 			return nil
@@ -213,7 +213,7 @@ func (m *Model) asked() []question {
 
 // tune fits a plant of the model's structure, integrators free, to records: as if nothing else were known of it, the
 // disturbance's colour chosen anew, or from the start that is given.
-func (m *Model) tune(recs []fit.Record, start *fit.Prediction, rig *data.Rig, opt Options) (*fit.Prediction, error) {
+func (m *Model) tune(ctx context.Context, recs []fit.Record, start *fit.Prediction, rig *data.Rig, opt Options) (*fit.Prediction, error) {
 	period := m.Noise.SamplePeriod
 	sc := scopeOf(rig, period)
 	p, err := fit.NewPredictor(recs, period, math.Max(sc.delay[1], sc.base))
@@ -227,16 +227,19 @@ func (m *Model) tune(recs []fit.Record, start *fit.Prediction, rig *data.Rig, op
 	if start != nil {
 		return p.Fit(start, compareTol, finalSteps)
 	}
-	best := &candidate{bic: math.Inf(1)}
+	var list []structure
 	shape := m.start().Shape
 	for colour := range MaxColour + 1 {
-		if next := c.fit(structure{poles: shape.Poles, zeros: shape.Zeros, colour: colour, delay: shape.FreeDelay}, nil); next.bic < best.bic {
-			best = next
-		}
+		list = append(list, structure{poles: shape.Poles, zeros: shape.Zeros, colour: colour, delay: shape.FreeDelay})
 	}
-	if best.fit == nil {
+	if err := c.try(ctx, list, nil, nil); err != nil {
+		return nil, err
+	}
+	ranked := c.ranked()
+	if len(ranked) == 0 {
 		return nil, fit.ErrNoFit
 	}
+	best := ranked[0]
 	return p.Fit(best.fit, compareTol, finalSteps)
 }
 
@@ -264,7 +267,7 @@ func (m *Model) start() *fit.Prediction {
 
 // signSums prepares the sums. Noise shape and instruments come from all rows, or from the first ones where they may not
 // depend on the levels that are tested.
-func (m *Model) signSums(assume fit.Assumption, exps []*data.Experiment, rig *data.Rig, recs []fit.Record, opt Options) (*fit.SignSums, *fit.Prediction, error) {
+func (m *Model) signSums(ctx context.Context, assume fit.Assumption, exps []*data.Experiment, rig *data.Rig, recs []fit.Record, opt Options) (*fit.SignSums, *fit.Prediction, error) {
 	var from []int
 	signals, dither := movingSignals(exps)
 	first, start := recs, m.start()
@@ -273,7 +276,7 @@ func (m *Model) signSums(assume fit.Assumption, exps []*data.Experiment, rig *da
 		from, exps = firstRows(exps, int(tuneShare*float64(rowsOf(recs))))
 		first, _, _ = records(exps)
 	}
-	tuned, err := m.tune(first, start, rig, opt)
+	tuned, err := m.tune(ctx, first, start, rig, opt)
 	if err != nil {
 		return nil, nil, err
 	}
@@ -389,12 +392,12 @@ func firstRows(exps []*data.Experiment, rows int) (kept []int, out []*data.Exper
 
 // byLevels prepares sums with levels of the outside signal drawn anew, which hold whatever the noise. The error says why
 // the levels are no draws, or that the first rows are too few to tune on.
-func (e *Exact) byLevels(exps []*data.Experiment, rig *data.Rig, recs []fit.Record, m *Model, opt Options) (*fit.SignSums, *fit.Prediction, error) {
+func (e *Exact) byLevels(ctx context.Context, exps []*data.Experiment, rig *data.Rig, recs []fit.Record, m *Model, opt Options) (*fit.SignSums, *fit.Prediction, error) {
 	signals, _ := movingSignals(exps)
 	if err := checkLevels(signals, opt.Seed); err != nil {
 		return nil, nil, err
 	}
-	sums, tuned, err := m.signSums(fit.RandomLevels, exps, rig, recs, opt)
+	sums, tuned, err := m.signSums(ctx, fit.RandomLevels, exps, rig, recs, opt)
 	if err != nil {
 		return nil, nil, fmt.Errorf("the first fifth of the rows does not do to prepare a test of the rest: %w", err)
 	}
@@ -439,7 +442,7 @@ func checkLevels(signals [][]float64, seed uint64) error {
 
 // bySigns prepares sums with signs of residuals drawn anew. The noise shape is that of the same rows, so no more than an
 // approximation is claimed.
-func (e *Exact) bySigns(exps []*data.Experiment, rig *data.Rig, recs []fit.Record, m *Model, opt Options) (*fit.SignSums, *fit.Prediction, error) {
+func (e *Exact) bySigns(ctx context.Context, exps []*data.Experiment, rig *data.Rig, recs []fit.Record, m *Model, opt Options) (*fit.SignSums, *fit.Prediction, error) {
 	e.Claim, e.Assumption = ClaimApproximate, signsAssumed
-	return m.signSums(fit.SymmetricResiduals, exps, rig, recs, opt)
+	return m.signSums(ctx, fit.SymmetricResiduals, exps, rig, recs, opt)
 }

@@ -47,13 +47,14 @@ func (c *chooser) pairing(ctx context.Context, recs []fit.Record, ranked []*cand
 	if err != nil {
 		return nil
 	}
+	late.reach = math.Inf(1) // the best here may be one that does not count
 	var list []structure
 	for n := max(2, sc.minPoles, best.poles-1); n <= best.poles; n++ {
 		for m := sc.minZeros; m <= min(n-2, best.zeros, sc.maxZeros); m++ {
 			list = append(list, structure{poles: n, zeros: m, colour: best.colour, integrators: min(best.integrators, n)})
 		}
 	}
-	if err := late.try(ctx, list, nil); err != nil {
+	if err := late.try(ctx, list, nil, nil); err != nil {
 		return err
 	}
 	for _, cand := range late.ranked() {

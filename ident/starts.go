@@ -10,55 +10,90 @@ import (
 	"steadyrig/fit/lti"
 )
 
-// fit finds the best fit of one structure from its own starts and from what can
-// be made of its neighbours' fits; one that was tried before, from what can be
-// made of near, where that promises more than was found.
-func (c *chooser) fit(s structure, near *fit.Prediction) *candidate {
-	if before := c.tried[s]; before != nil {
-		return c.fitFrom(s, c.moved(near, s), before)
+// look finds the best start of one structure on the glance's rows, from its own
+// starts and from what can be made of its neighbours' fits; of one that was tried
+// before from what can be made of near, and nil where that promises no more than
+// was found.
+func (c *chooser) look(s structure, near *fit.Prediction) *fit.Prediction {
+	before := c.tried[s]
+	var starts []*fit.Prediction
+	if before != nil {
+		starts = c.moved(near, s)
+	} else {
+		starts = c.starts(s)
+		for _, near := range c.nearby(s) {
+			starts = append(starts, c.moved(near, s)...)
+		}
 	}
-	starts := c.starts(s)
-	for _, near := range c.nearby(s) {
-		starts = append(starts, c.moved(near, s)...)
+	list := refined(c.glance, starts, glanceStarts, 0)
+	list = refined(c.glance, list, 2, glanceSteps)
+	if len(list) == 2 && list[1].Objective()-list[0].Objective() > sameOptimum*list[0].Objective() {
+		list = refined(c.glance, list, 1, 2*glanceSteps)
 	}
-	return c.fitFrom(s, starts, nil)
+	if len(list) == 0 {
+		return nil
+	}
+	found := list[0]
+	if before != nil && before.fit != nil {
+		known := refined(c.glance, []*fit.Prediction{before.fit}, 1, glanceSteps)
+		if len(known) > 0 && found.Objective() >= known[0].Objective()*(1-worthALook/float64(c.glance.Rows())) {
+			return nil
+		}
+	}
+	if c.outOfReach(found) && c.criterion(found) < c.best+hopeless*c.reach { // or so it seems
+		if list = refined(c.glance, list[:1], 1, compareStep); len(list) > 0 {
+			found = list[0]
+		}
+	}
+	return found
 }
 
-// fitFrom goes in rounds: all starts as they are, the best few after some
-// steps, the best two to the end.
-func (c *chooser) fitFrom(s structure, starts []*fit.Prediction, before *candidate) *candidate {
-	cand := &candidate{structure: s, bic: math.Inf(1)}
-	if before != nil {
-		cand = before
+// refined takes starts so many steps further on p's rows and returns those that
+// then are best.
+func refined(p *fit.Predictor, starts []*fit.Prediction, keep, steps int) []*fit.Prediction {
+	var out []*fit.Prediction
+	for _, m := range starts {
+		if m == nil {
+			continue
+		}
+		if f, err := p.Fit(m, compareTol, steps); err == nil {
+			out = append(out, f)
+		}
 	}
-	round := func(p *fit.Predictor, list []*fit.Prediction, keep, steps int) []*fit.Prediction {
-		var out []*fit.Prediction
-		for _, m := range list {
-			if m == nil {
-				continue
+	rank := func(f *fit.Prediction) int {
+		if alternates(f) {
+			return 1
+		}
+		return 0
+	}
+	slices.SortStableFunc(out, func(a, b *fit.Prediction) int {
+		return cmp.Or(cmp.Compare(rank(a), rank(b)), cmp.Compare(a.Objective(), b.Objective()))
+	})
+	return out[:min(keep, len(out))]
+}
+
+// outOfReach reports whether a start on the glance's rows is so far behind the
+// best there that no fit on all rows can make up for it.
+func (c *chooser) outOfReach(f *fit.Prediction) bool { return c.criterion(f) > c.best+c.reach }
+
+// settle fits a start on all rows, where that can matter. What was found before
+// stands where it is better.
+func (c *chooser) settle(s structure, start *fit.Prediction) *candidate {
+	cand := c.tried[s]
+	if cand == nil {
+		cand = &candidate{structure: s, bic: math.Inf(1)}
+	}
+	switch {
+	case start == nil:
+	case !c.outOfReach(start):
+		if list := refined(c.p, []*fit.Prediction{start}, 1, compareStep); len(list) > 0 {
+			if v := c.criterion(list[0]); cand.passing || v < cand.bic {
+				cand = &candidate{structure: s, fit: list[0], bic: v}
 			}
-			if f, err := p.Fit(m, compareTol, steps); err == nil {
-				out = append(out, f)
-			}
 		}
-		slices.SortStableFunc(out, func(a, b *fit.Prediction) int { return cmp.Compare(a.Objective(), b.Objective()) })
-		return out[:min(keep, len(out))]
-	}
-	list := round(c.glance, starts, glanceStarts, 0)
-	list = round(c.glance, list, 2, glanceSteps)
-	if len(list) == 2 && list[1].Objective()-list[0].Objective() < sameOptimum*list[0].Objective() {
-		list = list[:1]
-	}
-	if before != nil && before.fit != nil && len(list) > 0 {
-		known := round(c.glance, []*fit.Prediction{before.fit}, 1, glanceSteps)
-		if len(known) > 0 && !(list[0].Objective() < known[0].Objective()*(1-sameOptimum)) {
-			return before
-		}
-	}
-	if list = round(c.p, list, 1, compareStep); len(list) > 0 {
-		if v := c.criterion(list[0]); v < cand.bic {
-			cand = &candidate{structure: s, fit: list[0], bic: v}
-		}
+	case cand.fit == nil || cand.passing:
+		// Worth no more than being a start for others.
+		cand = &candidate{structure: s, fit: start, bic: c.criterion(start) * float64(c.p.Rows()) / float64(c.glance.Rows()), passing: true}
 	}
 	return cand
 }
@@ -91,17 +126,32 @@ func (c *chooser) starts(s structure) []*fit.Prediction {
 	return out
 }
 
-// bestDelay starts at every half sample of the range and keeps the best two,
-// which are not neighbours on that grid.
+// bestDelay starts at a quarter of every sample of the range, and half a sample
+// to either side of the best, and keeps the best two, which are not neighbours.
 func (c *chooser) bestDelay(s structure, sd fit.Seed, ratio float64, colour []complex128) []*fit.Prediction {
 	var all []*fit.Prediction
 	h := c.p.Period
-	for d := c.scope.delay[0] + 0.25*h; d < c.scope.delay[1]; d += 0.5 * h {
+	try := func(d float64) {
+		if d < c.scope.delay[0] || d >= c.scope.delay[1] {
+			return
+		}
 		if m := c.glance.Start(s.shape(), sd, d, ratio, colour); m != nil {
 			all = append(all, m)
 		}
 	}
-	slices.SortStableFunc(all, func(a, b *fit.Prediction) int { return cmp.Compare(a.Objective(), b.Objective()) })
+	rank := func() {
+		slices.SortStableFunc(all, func(a, b *fit.Prediction) int { return cmp.Compare(a.Objective(), b.Objective()) })
+	}
+	for d := c.scope.delay[0] + 0.25*h; d < c.scope.delay[1]; d += h {
+		try(d)
+	}
+	rank()
+	if len(all) > 0 {
+		d := all[0].Delay
+		try(d - 0.5*h)
+		try(d + 0.5*h)
+		rank()
+	}
 	var best []*fit.Prediction
 	for _, m := range all {
 		if len(best) < 2 && (len(best) == 0 || math.Abs(m.Delay-best[0].Delay) > 0.75*h) {
@@ -152,7 +202,7 @@ func (c *chooser) moved(m *fit.Prediction, s structure) []*fit.Prediction {
 	}
 	for len(list[0].D)-1 < s.colour {
 		var grown []*fit.Prediction
-		for _, d := range []float64{0.995, 0.9, 0.3, -0.3} {
+		for _, d := range []float64{0.995, 0.9, 0.3} {
 			for _, b := range list {
 				g := copyOf(b)
 				g.D = []float64(lti.Poly(g.D).Mul(lti.Poly{1, -d}))

@@ -27,7 +27,10 @@ const (
 	glanceStarts = 4
 	glanceSteps  = 4
 	startRows    = 3000
+	hopeless     = 10   // reaches behind, from where no step more is spent
+	glanceReach  = 60   // in BIC on the glance's rows: odds of exp(30)
 	sameOptimum  = 1e-7 // relative difference of two sums of squares
+	worthALook   = 0.5  // least gain in -2 log likelihood for which a structure is fitted again
 	compareTol   = 1e-5
 	compareStep  = 25
 	finalTol     = 1e-11
@@ -84,11 +87,12 @@ func (sc scope) allows(s structure) bool {
 }
 
 // candidate is a structure with its best fit so far; fit is nil where none was
-// found.
+// found. passing: it was seen on the glance's rows only and set aside there.
 type candidate struct {
 	structure
-	fit *fit.Prediction
-	bic float64
+	fit     *fit.Prediction
+	bic     float64
+	passing bool
 }
 
 // chooser searches structures on one set of records.
@@ -96,6 +100,8 @@ type chooser struct {
 	p *fit.Predictor
 	// glance is p on fewer rows, where starts are compared.
 	glance  *fit.Predictor
+	best    float64 // least criterion on the glance's rows
+	reach   float64 // beyond it, where a structure is set aside
 	scope   scope
 	seeds   [][]fit.Seed // by source, then by order - 1
 	tried   map[structure]*candidate
@@ -106,8 +112,8 @@ type chooser struct {
 // poles of long ARX models of two lengths, cut to each order.
 func newChooser(p *fit.Predictor, recs []fit.Record, sc scope, workers int) (*chooser, error) {
 	p.DelayRange = [2]float64{math.Min(sc.base, sc.delay[0]), math.Max(sc.base, sc.delay[1])}
-	c := &chooser{p: p, glance: p, scope: sc, tried: make(map[structure]*candidate), workers: workers}
-	if p.Rows() > 2*startRows {
+	c := &chooser{p: p, glance: p, best: math.Inf(1), reach: glanceReach, scope: sc, tried: make(map[structure]*candidate), workers: workers}
+	if p.Rows() > startRows+startRows/3 {
 		if r := busiest(recs, startRows); len(r.Y) == startRows {
 			g, err := fit.NewPredictor([]fit.Record{r}, p.Period, p.DelayRange[1])
 			if err != nil {
@@ -203,7 +209,7 @@ func (c *chooser) choose(ctx context.Context, progress func(done, total int)) ([
 		if n < 0 {
 			n = len(first)
 		}
-		if err := c.try(ctx, first[:n], progress); err != nil {
+		if err := c.try(ctx, first[:n], nil, progress); err != nil {
 			return nil, err
 		}
 		first = first[n:]
@@ -225,11 +231,18 @@ func (c *chooser) choose(ctx context.Context, progress func(done, total int)) ([
 		if expanded[ranked[0].structure] {
 			return ranked, nil
 		}
+		var list []structure
+		var near []*fit.Prediction
 		for _, cand := range around {
 			expanded[cand.structure] = true
-			if err := c.tryFrom(ctx, c.neighbours(cand.structure), cand.fit, progress); err != nil {
-				return nil, err
+			for _, s := range c.neighbours(cand.structure) {
+				if !slices.Contains(list, s) {
+					list, near = append(list, s), append(near, cand.fit)
+				}
 			}
+		}
+		if err := c.try(ctx, list, near, progress); err != nil {
+			return nil, err
 		}
 	}
 	return c.ranked(), nil
@@ -239,7 +252,7 @@ func (c *chooser) choose(ctx context.Context, progress func(done, total int)) ([
 func (c *chooser) ranked() []*candidate {
 	var list []*candidate
 	for _, cand := range c.tried {
-		if cand.fit != nil {
+		if cand.fit != nil && !cand.passing {
 			list = append(list, cand)
 		}
 	}
@@ -322,19 +335,37 @@ func (s structure) distance(o structure) int {
 }
 
 // try fits structures at once, each from its own starts and from what can be
-// made of its neighbours' fits.
-func (c *chooser) try(ctx context.Context, list []structure, progress func(done, total int)) error {
-	return c.tryFrom(ctx, list, nil, progress)
-}
-
-// tryFrom is try, where those tried before are looked at again from near.
-func (c *chooser) tryFrom(ctx context.Context, list []structure, near *fit.Prediction, progress func(done, total int)) error {
-	results := make([]*candidate, len(list))
-	err := Each(ctx, len(list), c.workers, func(i int) error {
-		results[i] = c.fit(list[i], near)
+// made of its neighbours' fits; those tried before are looked at again from the
+// fit that near has for them.
+func (c *chooser) try(ctx context.Context, list []structure, near []*fit.Prediction, progress func(done, total int)) error {
+	// Those that take longest go first, so that no worker is left with one.
+	order := make([]int, len(list))
+	for i := range order {
+		order[i] = i
+	}
+	slices.SortStableFunc(order, func(a, b int) int { return cmp.Compare(list[b].size(), list[a].size()) })
+	starts, results := make([]*fit.Prediction, len(list)), make([]*candidate, len(list))
+	if err := Each(ctx, len(list), c.workers, func(i int) error {
+		i = order[i]
+		if near == nil {
+			starts[i] = c.look(list[i], nil)
+		} else {
+			starts[i] = c.look(list[i], near[i])
+		}
 		return nil
-	})
-	if err != nil {
+	}); err != nil {
+		return err
+	}
+	for _, f := range starts {
+		if f != nil {
+			c.best = math.Min(c.best, c.criterion(f))
+		}
+	}
+	if err := Each(ctx, len(list), c.workers, func(i int) error {
+		i = order[i]
+		results[i] = c.settle(list[i], starts[i])
+		return nil
+	}); err != nil {
 		return err
 	}
 	for i, s := range list {
@@ -418,10 +449,16 @@ func (c *chooser) criterion(f *fit.Prediction) float64 {
 	if f.FreeDelay {
 		v += delayPenalty
 	}
-	if vanishes(f) {
+	if vanishes(f) || alternates(f) {
 		v += dipolePenalty
 	}
 	return v
+}
+
+// alternates reports whether a colour pole turns the sign from row to row, which
+// no sampled disturbance of a continuous process does by a real pole of its own.
+func alternates(f *fit.Prediction) bool {
+	return slices.ContainsFunc(zRoots(f.D), func(z complex128) bool { return imag(z) == 0 && real(z) < 0 })
 }
 
 // pinned reports whether C has a zero on the unit circle, as nearly as the

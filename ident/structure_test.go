@@ -2,9 +2,12 @@ package ident
 
 import (
 	"context"
+	"math"
 	"testing"
 
 	"steadyrig/data"
+	"steadyrig/fit"
+	"steadyrig/fit/demorig"
 )
 
 // Starts are compared on part of a long log: in one piece, or the constants of
@@ -47,6 +50,46 @@ func TestSearchLeavesLocalOptima(t *testing.T) {
 		}
 		if len(m.Poles) != c.poles || len(m.Zeros) != c.zero {
 			t.Errorf("%s, seed %d: %d poles, %d zeros, want %d, %d", c.rig, c.seed, len(m.Poles), len(m.Zeros), c.poles, c.zero)
+		}
+	}
+}
+
+// What is set aside on the glance's rows must be nothing that would have won: the
+// search that sets nothing aside is the oracle.
+func TestNothingOutOfReachWouldWin(t *testing.T) {
+	if testing.Short() {
+		t.Skip("searches twice on logs of five rigs")
+	}
+	for _, r := range demorig.All() {
+		r.Rows = 4500
+		e, rig := experiment(t, r, 77)
+		recs, period, err := records([]*data.Experiment{e})
+		if err != nil {
+			t.Fatal(err)
+		}
+		best := func(reach float64) (*candidate, int) {
+			p, err := fit.NewPredictor(recs, period, maxDelaySamples*period)
+			if err != nil {
+				t.Fatal(err)
+			}
+			c, err := newChooser(p, recs, scopeOf(rig, period), 0)
+			if err != nil {
+				t.Fatal(err)
+			}
+			c.reach = reach
+			ranked, err := c.choose(context.Background(), nil)
+			if err != nil {
+				t.Fatal(err)
+			}
+			return ranked[0], len(ranked)
+		}
+		got, few := best(glanceReach)
+		want, all := best(math.Inf(1))
+		if got.structure != want.structure || math.Abs(got.bic-want.bic) > 0.5 {
+			t.Errorf("%s: %v at %.2f, want %v at %.2f", r.Name, got.structure, got.bic, want.structure, want.bic)
+		}
+		if few >= all {
+			t.Errorf("%s: none of %d structures was set aside", r.Name, all)
 		}
 	}
 }
