@@ -109,7 +109,6 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 	if err := m.sample(ctx, p, f, ranked, opt); err != nil {
 		return m, err
 	}
-	m.FrequencyResponse = m.Responses(bandDraws, opt.Seed)
 	m.Evidence.Structures = structures(ranked)
 	whole, filled, err := s.restored(f)
 	if err != nil {
@@ -119,7 +118,16 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 	if p != sp {
 		signals = spreadSignals(signals, chooseRows)
 	}
-	m.Evidence.Methods = methods(whole, filled, signals, f, m)
+	if err := Each(ctx, 2, opt.Workers, func(i int) (err error) {
+		if i == 0 {
+			m.FrequencyResponse = m.Responses(bandDraws, opt.Seed)
+			return nil
+		}
+		m.Evidence.Methods, err = methods(ctx, whole, filled, signals, f, m, opt.Workers)
+		return err
+	}); err != nil {
+		return m, err
+	}
 	if err := m.compare(ctx, exps, rig, p, f, opt); err != nil {
 		return m, err
 	}

@@ -2,6 +2,7 @@ package ident
 
 import (
 	"cmp"
+	"context"
 	"errors"
 	"fmt"
 	"math"
@@ -66,20 +67,22 @@ func spreadSignals(signals [][][]float64, rows int) [][][]float64 {
 // methods estimates the poles by other ways than maximum likelihood and says
 // whether they find the poles that matter where the model has them. p holds
 // recs, f is the estimate from them or from more of the same log.
-func methods(p *fit.Predictor, recs []fit.Record, signals [][][]float64, f *fit.Prediction, m *Model) []Method {
+func methods(ctx context.Context, p *fit.Predictor, recs []fit.Record, signals [][][]float64, f *fit.Prediction, m *Model, workers int) ([]Method, error) {
 	own := Method{Name: "prediction", Agrees: true, Poles: [][2]float64{}, SD: []float64{}}
 	for _, r := range m.Poles {
 		own.Poles = append(own.Poles, [2]float64{r.Re, r.Im})
 		own.SD = append(own.SD, math.Hypot(r.ReSD, r.ImSD))
 	}
-	list := []Method{own}
 	matter := m.matter(f.Period)
-	for _, e := range fit.Estimators()[1:] { // the first has decided
+	others := fit.Estimators()[1:] // the first has decided
+	list := make([]Method, len(others))
+	err := Each(ctx, len(others), workers, func(i int) error {
+		e := others[i]
 		if _, joint := e.(fit.OutsideMethod); joint {
 			if signals != nil && f.Converged {
-				list = append(list, byOutside(p, signals, f, m))
+				list[i] = byOutside(p, signals, f, m)
 			}
-			continue
+			return nil
 		}
 		method := Method{Name: e.Name(), Poles: [][2]float64{}}
 		found, err := e.Estimate(recs, signals, f)
@@ -91,9 +94,11 @@ func methods(p *fit.Predictor, recs []fit.Record, signals [][][]float64, f *fit.
 			method.Agrees = !(v > matter.limit())
 			method.Note = fmt.Sprintf("%s, %.1f joint deviations in %s", matter.apart(method.Poles), math.Sqrt(v), counted(len(matter.factor)-1, "number"))
 		}
-		list = append(list, method)
-	}
-	return list
+		list[i] = method
+		return nil
+	})
+	list = slices.DeleteFunc(list, func(m Method) bool { return m.Name == "" })
+	return append([]Method{own}, list...), err
 }
 
 // byOutside estimates the plant through the signals from outside alone and tests
