@@ -167,6 +167,15 @@ func (s *LawState) Reset() {
 	s.last, s.v, s.yRead = s.law.U0, 0, s.law.Y0
 }
 
+// read returns the output as the sensor gives it.
+func (s *LawState) read(y float64) float64 {
+	if q := s.law.OutputStep; q > 0 {
+		y = math.Round(y/q) * q
+	}
+	s.yRead = y
+	return y
+}
+
 // Step takes the reference and the output as measured, both absolute, and returns the input to send.
 func (s *LawState) Step(r, y float64) float64 { return s.StepProbe(r, y, 0) }
 
@@ -174,11 +183,7 @@ func (s *LawState) Step(r, y float64) float64 { return s.StepProbe(r, y, 0) }
 // inner recursion is the input that acted less the dither.
 func (s *LawState) StepProbe(r, y, dither float64) float64 {
 	l := &s.law
-	if l.OutputStep > 0 {
-		y = math.Round(y/l.OutputStep) * l.OutputStep
-	}
-	s.yRead = y
-	dy := y - l.Y0
+	dy := s.read(y) - l.Y0
 	f := s.prefilter.next(r - l.Y0)
 	s.prefilter.hold(f)
 	v := f
@@ -211,6 +216,30 @@ func (s *LawState) StepProbe(r, y, dither float64) float64 {
 		s.inner.hold(sent - dither - l.U0)
 	}
 	return sent
+}
+
+// Follow takes one sample in which another law sent u, and keeps the memory ready to take over without a bump. The
+// inner controller is held to have put out what was sent, by the same rule that keeps it from winding up. v moves by
+// the given share of the way to what a steady inner controller needs to send u at y, (y - Y0) + (u - U0)/Inner(1), and
+// the outer controller is held to have put it out: a share of 1/n averages over n samples. Without an outer loop v is
+// the reference's, and cannot follow.
+func (s *LawState) Follow(r, y, u, share float64) {
+	l := &s.law
+	dy := s.read(y) - l.Y0
+	f := s.prefilter.next(r - l.Y0)
+	s.prefilter.hold(f)
+	if l.Outer == nil {
+		s.v = held(f, s.outLo, s.outHi)
+	} else {
+		if k := l.Inner.DC(); k != 0 {
+			s.v = held(s.v+share*(dy+(u-l.U0)/k-s.v), s.outLo, s.outHi)
+		}
+		s.outer.next(f - dy)
+		s.outer.hold(s.v)
+	}
+	s.inner.next(s.v - dy)
+	s.inner.hold(u - l.U0)
+	s.last = u
 }
 
 // held returns x within [lo, hi]; NaN passes.

@@ -2,6 +2,7 @@ package lti
 
 import (
 	"math"
+	"math/rand/v2"
 	"testing"
 )
 
@@ -118,6 +119,100 @@ func TestLawValidate(t *testing.T) {
 		breakIt(l)
 		if l.Validate() == nil {
 			t.Errorf("%s: no error", name)
+		}
+	}
+}
+
+// A PI controller held at a limit stands where back-calculation with a tracking time of one period would: u = Kp e + I,
+// I' = Ki e + (usat - u)/Tt has I -> usat - Kp e + Tt Ki e (Astrom & Hagglund, PID Controllers, 1995, sec. 3.5; Fertik & Ross
+// 1967). Kp 2, Ki 4, Tt = h = 0.5, e = 1, usat = 1: I = 1, so an error of -0.25 is answered by u = 1 - 2/4 at once.
+func TestHeldOutputsAreBackCalculation(t *testing.T) {
+	const kp, ki, h = 2, 4, 0.5
+	law := Law{Inner: DTF{Num: Poly{kp, ki*h - kp}, Den: Poly{1, -1}, Period: h}, InputLimits: [2]float64{-1, 1}}
+	s := law.Start()
+	for range 20 {
+		if u := s.Step(1, 0); u != 1 {
+			t.Fatalf("u = %g, want it at its limit", u)
+		}
+	}
+	if u := s.Step(-0.25, 0); u != 0.5 {
+		t.Errorf("u = %g, want 0.5", u)
+	}
+}
+
+// The error of rounding to steps of q is uniform over a step: mean 0, variance q^2/12, and not correlated with the signal
+// where that is Gaussian with a deviation of q or more (Widrow 1961, Trans. AIEE 79, 555-568; Widrow & Kollar, Quantization
+// Noise, 2008: what is missing is of the order of exp(-2 pi^2) of it). Limits: five deviations of the averages of 200 000
+// values: of e, q/sqrt(12 n); of e^2, q^2/sqrt(180 n); of e x, q sd/sqrt(12 n).
+func TestRoundingIsNoiseOfATwelfth(t *testing.T) {
+	const q, sd, n = 0.25, 0.3, 200000
+	for _, c := range []struct {
+		name string
+		law  Law
+		err  func(s *LawState, x float64) float64
+	}{
+		{"input", Law{Inner: Gain(1, 1), InputStep: q}, func(s *LawState, x float64) float64 { return s.Step(x, 0) - x }},
+		{"output", Law{Inner: Gain(1, 1), OutputStep: q}, func(s *LawState, x float64) float64 { s.Step(0, x); return s.Read() - x }},
+	} {
+		s, rnd := c.law.Start(), rand.New(rand.NewPCG(1, 1))
+		var mean, square, cross float64
+		for range n {
+			x := sd * rnd.NormFloat64()
+			e := c.err(s, x)
+			mean, square, cross = mean+e/n, square+e*e/n, cross+e*x/n
+		}
+		if root := math.Sqrt(n); math.Abs(mean) > 5*q/math.Sqrt(12)/root || math.Abs(square-q*q/12) > 5*q*q/math.Sqrt(180)/root ||
+			math.Abs(cross) > 5*q*sd/math.Sqrt(12)/root {
+			t.Errorf("%s: mean %g, variance %g of %g, cross %g", c.name, mean, square, q*q/12, cross)
+		}
+	}
+}
+
+// A sine whose rate is far beyond the limit R comes out as a triangle of the same period T, which climbs for half of it:
+// R T/2 from bottom to top (the fully activated rate limiter), and from rest the bottom is at 0. To within two steps R h.
+func TestRateLimitMakesTriangles(t *testing.T) {
+	const h, rate, period = 0.001, 3, 0.4
+	law := Law{Inner: Gain(1, h), InputRate: rate}
+	s := law.Start()
+	top, before := 0.0, 0.0
+	for k := range 4000 {
+		u := s.Step(100*math.Sin(2*math.Pi*float64(k)*h/period), 0)
+		if k > 0 && math.Abs(u-before) > rate*h*(1+1e-9) {
+			t.Fatalf("step %d moves by %g, allowed %g", k, u-before, rate*h)
+		}
+		if before = u; k > 2000 {
+			top = math.Max(top, u)
+		}
+	}
+	if want := rate * period / 2; math.Abs(top-want) > 2*rate*h {
+		t.Errorf("height %g, want %g", top, want)
+	}
+}
+
+// A law that has followed another at rest, with the output where the reference wants it, goes on with the same input, to
+// rounding: nothing moves. One that starts at its own rest jumps by what the other one had been sending.
+func TestFollowAtRest(t *testing.T) {
+	const h = 0.1
+	pi := DTF{Num: Poly{0.4, -0.35}, Den: Poly{1, -1}, Period: h}
+	pre := DTF{Num: Poly{0.2}, Den: Poly{1, -0.8}, Period: h}
+	for name, inner := range map[string]DTF{
+		"gain": Gain(3, h), "lead": {Num: Poly{5, -4}, Den: Poly{1, -0.3}, Period: h},
+		"roll-off": {Num: Poly{1, 0.2, -0.8}, Den: Poly{1, -0.9, 0.2}, Period: h}, // with a zero at z = -1
+		"late":     {Num: Poly{0, 1}, Den: Poly{1, -0.5}, Period: h},
+	} {
+		law := Law{Inner: inner, Outer: &pi, Prefilter: &pre, U0: 2, Y0: 7, InputLimits: [2]float64{0, 4}}
+		s := law.Start()
+		const u, y = 2.6, 7.1
+		for range 400 {
+			s.Follow(y, y, u, 0.1)
+		}
+		for k := range 3 {
+			if got := s.Step(y, y); !near(got, u, 1e-9) {
+				t.Errorf("%s, sample %d after the hand-over: %.12g, want %g", name, k, got, u)
+			}
+		}
+		if got := law.Start().Step(y, y); math.Abs(got-u) < 0.1 {
+			t.Errorf("%s: %g from rest, so following says nothing", name, got)
 		}
 	}
 }

@@ -30,6 +30,11 @@ type Run struct {
 	OutputOffset float64
 	Trip         [2]float64 // absolute limits of the measured output, both zero: none
 	Fine         int        // > 1: Trace.Fine holds the output at this many instants a period
+	// Before, if not nil, acts in the first HandOver steps while Law follows it (LawState.Follow, with FollowShare). In
+	// step HandOver the last input is sent once more; from the next one on Law runs alone.
+	Before      *Law
+	HandOver    int
+	FollowShare float64
 }
 
 // Trace is what a run did. All slices have one entry a step; after a trip they end with the step that tripped.
@@ -60,7 +65,7 @@ type Simulator struct {
 	compute float64
 	fine    int
 	p       *sampled
-	fineRow []float64 // fine × (n + 2): the output at a sub-instant from x, w[k-delay], w[k-delay-1]
+	fineRow []float64 // (fine - 1) × (n + 2): the output at a sub-instant from x, w[k-delay], w[k-delay-1]
 	x, next []float64
 	mode    []float64 // unstable mode of unit output, nil until asked for
 	inj     *injection
@@ -70,6 +75,7 @@ type Simulator struct {
 	w       []float64 // past plant inputs, newest first
 	law     Law
 	state   *LawState
+	before  *LawState // of Run.Before
 }
 
 func (s *Simulator) prepare(r *Run) error {
@@ -137,6 +143,16 @@ func (s *Simulator) prepare(r *Run) error {
 		s.state = r.Law.Start()
 	}
 	s.state.Reset()
+	s.before = nil
+	if r.Before != nil {
+		if err := r.Before.Validate(); err != nil {
+			return fmt.Errorf("simulating a loop: the law before: %w", err)
+		}
+		if r.Before.Inner.Period != r.Period || r.HandOver < 1 || r.Dither != nil {
+			return fmt.Errorf("simulating a loop: a hand-over needs a law before of the same period, a step to run it, and no dither")
+		}
+		s.before = r.Before.Start()
+	}
 	clear(s.w)
 	return s.start(r)
 }
@@ -197,10 +213,10 @@ func (s *Simulator) prepareFine() {
 		return
 	}
 	p, n := s.p, s.p.n()
-	s.fineRow = make([]float64, s.fine*(n+2))
-	for j := range s.fine {
+	s.fineRow = make([]float64, (s.fine-1)*(n+2))
+	for j := range s.fine - 1 {
 		row := s.fineRow[j*(n+2) : (j+1)*(n+2)]
-		t := float64(j) / float64(s.fine) * p.period
+		t := float64(j+1) / float64(s.fine) * p.period
 		// From k Period to frac the plant still sees w[k-delay-1], then w[k-delay].
 		before := math.Min(t, p.frac)
 		after := t - before
@@ -261,7 +277,17 @@ func (s *Simulator) Simulate(dst *Trace, r Run) error {
 		if r.Dither != nil {
 			dither = r.Dither[k]
 		}
-		u := s.state.StepProbe(ref, measured, dither)
+		u := 0.0
+		switch {
+		case s.before == nil || k > r.HandOver:
+			u = s.state.StepProbe(ref, measured, dither)
+		case k < r.HandOver:
+			u = s.before.Step(ref, measured)
+			s.state.Follow(ref, measured, u, r.FollowShare)
+		default:
+			u = dst.U[k-1]
+			s.state.Follow(ref, measured, u, r.FollowShare)
+		}
 		dst.U[k], dst.Y[k], dst.YTrue[k], dst.R[k], dst.V[k] = u, s.state.yRead, y, ref, s.state.v
 		w := u - r.Law.U0
 		if r.InputDisturbance != nil {
@@ -269,9 +295,11 @@ func (s *Simulator) Simulate(dst *Trace, r Run) error {
 		}
 		s.push(w)
 		if s.fine > 1 {
-			s.sub(dst.Fine[k*s.fine:(k+1)*s.fine], base)
+			fine := dst.Fine[k*s.fine : (k+1)*s.fine]
+			fine[0] = y
+			s.sub(fine[1:], base)
 		}
-		if trips && !(measured >= r.Trip[0] && measured <= r.Trip[1]) || math.IsNaN(measured) || math.IsInf(measured, 0) {
+		if trips && !(measured >= r.Trip[0] && measured <= r.Trip[1]) || !(math.Abs(measured) <= math.MaxFloat64) {
 			dst.Tripped = k
 			n = k + 1
 			break
@@ -321,16 +349,16 @@ func (s *Simulator) advance() {
 	p := s.p
 	n := len(s.x)
 	w0, w1 := s.w[p.delay], s.w[p.delay+1]
-	x := s.x[:n]
-	for i := range n {
-		v := p.g0[i]*w0 + p.g1[i]*w1
-		row := p.phi[i*n : i*n+n]
-		for j := range x {
-			v += row[j] * x[j]
+	x, next, phi, g0, g1 := s.x[:n], s.next[:n], p.phi, p.g0[:n], p.g1[:n]
+	for i := range next {
+		v := g0[i]*w0 + g1[i]*w1
+		row := phi[i*n:][:n]
+		for j, a := range row {
+			v += a * x[j]
 		}
-		s.next[i] = v
+		next[i] = v
 	}
-	s.x, s.next = s.next, s.x
+	s.x, s.next = next, x
 }
 
 // disturb adds what the innovation e of this sample does to the state at the next one.
@@ -352,15 +380,17 @@ func (s *Simulator) disturb(e float64) {
 	}
 }
 
-// sub writes the output at the sub-instants of the present period.
+// sub writes the output at the sub-instants after the sample of the present period.
 func (s *Simulator) sub(dst []float64, base float64) {
-	n := len(s.x)
+	x := s.x
+	n := len(x)
 	w0, w1 := s.w[s.p.delay], s.w[s.p.delay+1]
+	rows := s.fineRow
 	for j := range dst {
-		row := s.fineRow[j*(n+2) : (j+1)*(n+2)]
+		row := rows[j*(n+2) : (j+1)*(n+2)]
 		y := row[n]*w0 + row[n+1]*w1
-		for i, x := range s.x {
-			y += row[i] * x
+		for i, v := range row[:n] {
+			y += v * x[i]
 		}
 		dst[j] = base + y
 	}

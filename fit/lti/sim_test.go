@@ -294,3 +294,47 @@ func BenchmarkSimulator(b *testing.B) {
 	}
 	b.ReportMetric(float64(b.N)*float64(r.Steps)/b.Elapsed().Seconds()/1e6, "Msteps/s")
 }
+
+// A hand-over in a run: the law before acts alone until then, as if there were no other; the sample of the hand-over
+// sends its last input once more; and the law that followed takes over. The same by the two laws stepped by hand.
+func TestHandOver(t *testing.T) {
+	r := everything(4)
+	r.Dither, r.OutputOffset = nil, 0
+	before := &Law{Inner: Tustin(TF{Num: Poly{14, 4}, Den: Poly{1, 0.03}}, r.Period), U0: 1.5, Y0: 5, InputLimits: [2]float64{-3, 8}}
+	alone := r
+	alone.Law = before
+	want, err := alone.Simulate()
+	if err != nil {
+		t.Fatal(err)
+	}
+	r.Before, r.HandOver, r.FollowShare = before, 150, 0.05
+	got, err := r.Simulate()
+	if err != nil {
+		t.Fatal(err)
+	}
+	if !slices.Equal(got.U[:150], want.U[:150]) || got.U[150] != got.U[149] || got.U[151] == want.U[151] {
+		t.Errorf("about the hand-over: %v, the law before alone %v", got.U[148:152], want.U[148:152])
+	}
+	one, other := r.Law.Start(), before.Start()
+	for k := range r.Steps {
+		y := got.YTrue[k] + r.Noise[k]
+		u := 0.0
+		switch {
+		case k < 150:
+			u = other.Step(r.Reference[k], y)
+			one.Follow(r.Reference[k], y, u, 0.05)
+		case k == 150:
+			u = got.U[149]
+			one.Follow(r.Reference[k], y, u, 0.05)
+		default:
+			u = one.Step(r.Reference[k], y)
+		}
+		if u != got.U[k] {
+			t.Fatalf("sample %d: %g, by hand %g", k, got.U[k], u)
+		}
+	}
+	r.HandOver = 0
+	if _, err := r.Simulate(); err == nil {
+		t.Error("a law before that never acts: no error")
+	}
+}
