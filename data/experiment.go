@@ -14,6 +14,9 @@ type Experiment struct {
 	Flaws    []Flaw   // in the order of the file's reading: time base, then column by column
 	Columns  []string // names as in the header, or c1, c2, …
 	Layout   string   // how the log is written, in words
+
+	// Steps of the grid on which all values of the input and of the output lie; 0: on none, or on one too fine to tell.
+	InputStep, OutputStep float64
 }
 
 // A Segment is a stretch of a log without a gap: rows Period apart, all numbers finite.

@@ -535,6 +535,10 @@ func TestFlawQuantised(t *testing.T) {
 	if f.Column != "y" || !strings.HasPrefix(f.Detail, "step 0.0488") || !strings.HasPrefix(f.Effect, "used; it adds noise of standard deviation 0.0140") {
 		t.Errorf("%+v", f)
 	}
+	// The input of that log lies on no grid.
+	if math.Abs(exp.OutputStep-0.0488) > 1e-4 || exp.InputStep != 0 {
+		t.Errorf("steps of output %v and input %v, want 0.0488 and none", exp.OutputStep, exp.InputStep)
+	}
 }
 
 func TestFlawDrift(t *testing.T) {

@@ -164,6 +164,7 @@ func (l *log) experiment() (*Experiment, error) {
 	if err := l.timeBase(); err != nil {
 		return nil, err
 	}
+	exp.InputStep, exp.OutputStep = grid(l.levels(l.columns[l.u])), grid(l.levels(l.columns[l.y]))
 	l.findFlaws()
 	if 2*l.clipped > l.rows {
 		return nil, l.mostlyBeyond()

@@ -77,6 +77,10 @@ type Limits struct {
 	Input     *[2]float64 `toml:"input"`      // [lo, hi]; nil: not given
 	InputRate float64     `toml:"input_rate"` // units of input per s; 0: none
 	Output    *[2]float64 `toml:"output"`     // [lo, hi], beyond it the rig trips; nil: none
+	// Steps in which the converters send the input and read the output, units of each. 0: too fine to matter; nil: not
+	// given, so what the log's columns show.
+	InputResolution  *float64 `toml:"input_resolution"`
+	OutputResolution *float64 `toml:"output_resolution"`
 }
 
 // Spec is what the loop has to do.

@@ -81,6 +81,24 @@ func TestReadRig(t *testing.T) {
 	}
 }
 
+// Resolutions may be left out, zero, or positive.
+func TestReadResolutions(t *testing.T) {
+	if g, err := ReadRig(strings.NewReader(hoverPuck), "puck.toml"); err != nil || g.Limits.InputResolution != nil || g.Limits.OutputResolution != nil {
+		t.Errorf("left out: %v, %+v", err, g)
+	}
+	g, err := ReadRig(strings.NewReader(change(t, "input_rate = 800.0", "input_resolution = 0\noutput_resolution = 0.002")), "puck.toml")
+	if err != nil || *g.Limits.InputResolution != 0 || *g.Limits.OutputResolution != 0.002 {
+		t.Errorf("given: %v, %+v", err, g)
+	}
+	for _, text := range []string{"input_resolution = -0.1", "output_resolution = inf", "output_resolution = nan"} {
+		_, err := ReadRig(strings.NewReader(change(t, "input_rate = 800.0", text)), "puck.toml")
+		key, _, _ := strings.Cut(text, " =")
+		if err == nil || !strings.Contains(err.Error(), "limits."+key) || !strings.Contains(err.Error(), "give the converter's step") {
+			t.Errorf("%s: %v", text, err)
+		}
+	}
+}
+
 func TestReadRigDefaults(t *testing.T) {
 	const text = "\xef\xbb\xbf[log]\r\ninput = 'u'\r\noutput = 'y'\r\nsample_period = 1\r\n[loop]\r\nsample_period = 2\r\n"
 	g, err := ReadRig(strings.NewReader(text), "rigs/reactor.toml")

@@ -105,6 +105,14 @@ func (g *Rig) checkLimits() error {
 	if err := g.pair("limits.output", g.Limits.Output); err != nil {
 		return err
 	}
+	for _, c := range []struct {
+		key  string
+		step *float64
+	}{{"limits.input_resolution", g.Limits.InputResolution}, {"limits.output_resolution", g.Limits.OutputResolution}} {
+		if c.step != nil && (!(*c.step >= 0) || math.IsInf(*c.step, 0)) {
+			return g.fault(c.key, "give the converter's step, or 0 where it is too fine to matter", "%s is %s", c.key, number(*c.step))
+		}
+	}
 	return g.optional("limits.input_rate", g.Limits.InputRate)
 }
 

@@ -53,6 +53,10 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 	m.Noise.SamplePeriod = period
 	out := outside(exps)
 	m.Evidence.OutsideShare = out.Share
+	for _, e := range exps {
+		q := &m.Evidence.Resolution
+		q.Input, q.Output = math.Max(q.Input, e.InputStep), math.Max(q.Output, e.OutputStep)
+	}
 	if out.Quiet {
 		return m.refuse(refuseQuiet(out))
 	}

@@ -178,6 +178,10 @@ func TestFitIsDeterministic(t *testing.T) {
 		if back.Plant.Delay != m.Plant.Delay || back.Poles[0] != m.Poles[0] {
 			t.Error("the model does not survive its file")
 		}
+		// The rig's sensor has steps of 0.005 mm, its input none.
+		if q := back.Evidence.Resolution; math.Abs(q.Output-0.005) > 1e-6 || q.Input != 0 {
+			t.Errorf("resolution %+v", q)
+		}
 	}
 }
 

@@ -212,6 +212,9 @@ type Evidence struct {
 	IntervalsBy    string      `json:"intervals_by"`    // curvature, draws or sandwich
 	// Agreement is left out for a single log.
 	Agreement *Agreement `json:"agreement,omitempty"`
+	// Resolution is the step of the grid on which the values of the input and of the output lie in the logs, the coarsest
+	// of several; 0: none was found.
+	Resolution OperatingPoint `json:"resolution"`
 	// LeftOut counts outputs that were taken for unknown because they are wrong.
 	LeftOut []LeftOut `json:"left_out"`
 }
@@ -407,6 +410,9 @@ func (m *Model) validate() error {
 	if m.Plant.Delay < 0 {
 		return fmt.Errorf("plant delay is %v s, want 0 or more", m.Plant.Delay)
 	}
+	if q := m.Evidence.Resolution; q.Input < 0 || q.Output < 0 {
+		return fmt.Errorf("resolution of input and output is %v and %v, want 0 or more", q.Input, q.Output)
+	}
 	if !slices.ContainsFunc(num, func(v float64) bool { return v != 0 }) {
 		return fmt.Errorf("plant numerator is zero")
 	}
@@ -515,7 +521,8 @@ func (m *Model) finite() error {
 	}
 	e := m.Evidence
 	return check("the evidence", m.OperatingPoint.Input, m.OperatingPoint.Output, m.Noise.SD, m.Plant.Delay,
-		e.ExplainedShare, e.OutsideShare, e.Memories, e.Residuals.Whiteness, e.Residuals.CrossInput, e.Residuals.Linearity)
+		e.ExplainedShare, e.OutsideShare, e.Memories, e.Residuals.Whiteness, e.Residuals.CrossInput, e.Residuals.Linearity,
+		e.Resolution.Input, e.Resolution.Output)
 }
 
 func reversed(p []float64) lti.Poly {

@@ -130,6 +130,7 @@ func TestReadModelRefuses(t *testing.T) {
 		{"missing pole", "are listed", func(m *Model) { m.Poles = m.Poles[1:] }},
 		{"unknown parameter", "none of", func(m *Model) { m.Plant.Parameters[0] = "c0" }},
 		{"short response", "values for", func(m *Model) { m.FrequencyResponse.Phase.Hi = m.FrequencyResponse.Phase.Hi[1:] }},
+		{"resolution", "resolution of input and output", func(m *Model) { m.Evidence.Resolution.Output = -1 }},
 		{"noise", "monic", func(m *Model) { m.Noise.Numerator[0] = 2 }},
 	} {
 		spoilt := new(Model)
