@@ -3,17 +3,18 @@ package design
 import (
 	"fmt"
 	"math"
+	"strings"
 
 	"steadyrig/fit/lti"
 	"steadyrig/ident"
 )
 
-// expectedSD returns the standard deviations of input and measured output in closed loop under all that the fit saw
-// beside the input, at the nominal model.
-func (p *problem) expectedSD(g *gridLoop) SignalPair {
+// expectedSD returns the standard deviations of input and measured output in closed loop about a plant under all that the
+// fit saw beside the input.
+func (p *problem) expectedSD(pl *plant, g *gridLoop) SignalPair {
 	var u, y, uLast, yLast float64
 	for j := range g.d {
-		c := g.d[j]*p.nominal.a[j] + g.k[j]*p.nominal.b[j]
+		c := g.d[j]*pl.a[j] + g.k[j]*pl.b[j]
 		c2 := real(c)*real(c) + imag(c)*imag(c)
 		k, d := g.k[j], g.d[j]
 		uv := (real(k)*real(k) + imag(k)*imag(k)) * p.noise.shape[j] / c2
@@ -29,9 +30,9 @@ func (p *problem) expectedSD(g *gridLoop) SignalPair {
 }
 
 // firstClosure says how to close the loops for the first time.
-func (p *problem) firstClosure(l *Loops) {
+func (p *problem) firstClosure(l *Loops, seed uint64) {
 	law := l.LTI()
-	f := &FirstClosure{ExpectedSD: p.expectedSD(p.lawGrid(law))}
+	f := &FirstClosure{ExpectedSD: p.expectedSD(&p.nominal, p.lawGrid(law))}
 	in := p.inputTrip(law, f.ExpectedSD.Input)
 	f.Trip.Input = &in
 	out := [2]float64{math.Inf(-1), math.Inf(1)}
@@ -47,11 +48,24 @@ func (p *problem) firstClosure(l *Loops) {
 	if !math.IsInf(out[0], 0) && !math.IsInf(out[1], 0) {
 		f.Trip.Output = &out
 	}
+	recoverable := 0.0
+	if l.Promise != nil {
+		recoverable = l.Promise.Recoverable
+	}
+	f.Stop = p.stopLevels(law, f.ExpectedSD, recoverable)
+	f.HandOver = p.tryHandOver(law, stream(seed, streamNoise, 0))
+	f.Faults = p.faults(law, f, stream(seed, streamNoise, 0))
 	ui, yo := unitOf(p.rig.Units.Input), unitOf(p.rig.Units.Output)
+	handOver := "Hand over to the inner loop alone: v = 0, outer loop off, the inner controller's past filled with what was sent."
+	if h := f.HandOver; h != nil {
+		handOver = "Hand over to the inner loop alone, outer loop off, v held where the rule leaves it. " + h.Rule +
+			fmt.Sprintf(" Simulated under noise, both loops closed at once: in the settling time before it the input moves by up to %.3g%s and the output by up to %.3g%s, in the one after it by %.3g and %.3g, later by %.3g and %.3g.",
+				h.Before.Input, ui, h.Before.Output, yo, h.After.Input, h.After.Output, h.Noise.Input, h.Noise.Output)
+	}
 	f.Order = []string{
 		"Check sign, columns and limits with the actuator off: move the output by hand and watch the input that would be sent.",
 		fmt.Sprintf("Set the trips (first_closure.trip), one person at the stop; bring the rig to its operating point, input %.4g%s, output %.4g%s, under the stopgap law.", law.U0, ui, law.Y0, yo),
-		"Hand over to the inner loop alone: v = 0, outer loop off, the inner controller's past filled with what was sent.",
+		handOver,
 		fmt.Sprintf("Watch for a hundred settling times. With both loops the standard deviation will be near %.3g%s at the input and %.3g%s at the output; with the inner one alone the output also wanders slowly.",
 			f.ExpectedSD.Input, ui, f.ExpectedSD.Output, yo),
 		"Close the outer loop with its limits at a tenth of outer_limits, then widen them to the full ones.",
@@ -59,9 +73,14 @@ func (p *problem) firstClosure(l *Loops) {
 	}
 	f.Cautions = []string{
 		"Somebody could be hurt: guards on, nobody within reach, a person at the stop, local codes and licensed practice first.",
-		"A wrong sign shows at once: the input runs to a limit while the output leaves in one direction. Hit the stop, do not wait for it to turn.",
 		"Twice the expected deviation, or a tone that grows, means that the rig is not the plant of the model: stop and recheck.",
 		"The promise covers the plants that the data allow, at this operating point and sample period, and no others.",
+	}
+	for _, x := range f.Faults {
+		f.Cautions = append(f.Cautions, x.words(ui, yo, f))
+	}
+	if f.Stop.Note != "" {
+		f.Cautions = append(f.Cautions, strings.TrimSpace(f.Stop.Note))
 	}
 	l.FirstClosure = f
 }
@@ -79,7 +98,7 @@ func (p *problem) inputTrip(law *lti.Law, sd float64) [2]float64 {
 	v := p.newProver(law)
 	moves := 0.0
 	for _, step := range []float64{p.spec.step, -p.spec.step} {
-		if v.run(p.model.TF(), p.steps(p.model.TF()), step, false, 0) != nil {
+		if _, err := v.run(p.model.TF(), p.steps(p.model.TF()), step, false, 0); err != nil {
 			continue
 		}
 		for _, u := range v.trace.U {
@@ -104,6 +123,7 @@ func unitOf(u string) string {
 const (
 	slowestSampling  = 0.25 // unstable pole times sample period
 	fewestDeviations = 3.0  // deviations of the input inside its limits
+	betweenNoted     = 0.01 // of the step, by which the output goes further between the samples than at them
 )
 
 // conclude sets verdict and warnings from margins, noise and model.
@@ -126,7 +146,7 @@ func (p *problem) conclude(l *Loops) {
 		side := math.Min(-p.input[0], p.input[1])
 		if sd := f.ExpectedSD.Input; fewestDeviations*sd > side {
 			weak = true
-			warn("noise and disturbance move the input by %.3g (standard deviation), a third or more of what its limits leave on the lesser side (%.3g): it will saturate, and the promise, which is for noise-free steps, does not cover that", sd, side)
+			warn("noise and disturbance move the input by %.3g (standard deviation), a third or more of what its limits leave on the lesser side (%.3g): it will saturate; the promise counts the plants that trip by that, but its overshoot and settling are those without noise", sd, side)
 		}
 		if p.output != nil {
 			room := math.Min(-p.output[0], p.output[1])
@@ -139,9 +159,8 @@ func (p *problem) conclude(l *Loops) {
 	if !held {
 		warn("the loops do not hold the nominal plant: it is lost from any disturbance, and margins and figures of the closed loop mean nothing")
 	}
-	if over, at := p.betweenSamples(l.LTI()); held && over > p.spec.overshoot && over > at+0.01 {
-		weak = true
-		warn("between the samples the nominal output overshoots the step by %.3g of it, at the samples by %.3g: shorten the sample period", over, at)
+	if q := l.Promise; held && q != nil && q.Overshoot.Worst > q.atSamples.Worst+betweenNoted {
+		warn("between the samples the worst plant overshoots the step by %.3g of it, at the samples by %.3g: they do not show all that the output does", q.Overshoot.Worst, q.atSamples.Worst)
 	}
 	if q := l.Promise; q != nil && len(q.UnstablePoles) > 1 {
 		warn("the drawn plants differ in their number of unstable poles: each was judged with its own")
@@ -152,28 +171,4 @@ func (p *problem) conclude(l *Loops) {
 	if weak && l.Verdict == Sound {
 		l.Verdict = Weak
 	}
-}
-
-// betweenSamples returns the nominal plant's overshoot of the spec's step as a share of it, between the samples and
-// at them. Zero where the run fails: the proof has then said so.
-func (p *problem) betweenSamples(law *lti.Law) (between, at float64) {
-	const fine = 8
-	steps := min(max(int(2*p.spec.settling/p.period), 20), 4000)
-	ref := make([]float64, steps)
-	for k := range ref {
-		ref[k] = law.Y0 + p.spec.step
-	}
-	t, err := lti.Run{
-		Plant: p.model.TF(), Period: p.period, ComputeDelay: p.compute, Law: law, Steps: steps, Reference: ref, Fine: fine,
-	}.Simulate()
-	if err != nil || t.Tripped >= 0 {
-		return 0, 0
-	}
-	for i, y := range t.Fine {
-		x := (y-law.Y0)/p.spec.step - 1
-		if between = math.Max(between, x); i%fine == 0 {
-			at = math.Max(at, x)
-		}
-	}
-	return between, at
 }

@@ -86,7 +86,7 @@ func Design(ctx context.Context, model *ident.Model, rig *data.Rig, opt Options)
 	if l.Margins, err = p.margins(l.LTI(), model.TF()); err != nil {
 		return nil, err
 	}
-	p.firstClosure(l)
+	p.firstClosure(l, opt.Seed)
 	p.conclude(l)
 	if r := l.Promise.broken(&p.spec); r != nil {
 		return l.refuse(r)

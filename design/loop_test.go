@@ -202,7 +202,7 @@ func TestNoiseInTheLoop(t *testing.T) {
 		if tr, err = run.Simulate(); err != nil {
 			t.Fatal(err)
 		}
-		want := p.expectedSD(g)
+		want := p.expectedSD(&p.nominal, g)
 		near(t, r.name+": expected input", want.Input, sd(tr.U), 0.04)
 		near(t, r.name+": expected output", want.Output, sd(tr.Y), 0.04)
 	}

@@ -140,6 +140,10 @@ type Promise struct {
 	UnstablePoles []PoleCount  `json:"unstable_poles"`
 	Conditions    string       `json:"conditions"` // what the promise's runs hold and leave out, one sentence
 	Misses        []MissReason `json:"misses"`
+	Resolution    SignalPair   `json:"resolution"` // steps in which the runs round input and output; 0: not at all
+	LongRuns      int          `json:"long_runs"`  // plants that ran on under noise
+
+	atSamples Spread // the overshoot that the samples alone show
 }
 
 // Spread is a figure at the nominal model and at the worst of the drawn plants that stay stable.
@@ -167,7 +171,40 @@ type FirstClosure struct {
 	Order      []string   `json:"order"`
 	ExpectedSD SignalPair `json:"expected_sd"`
 	Trip       TripLevels `json:"trip"`
+	Stop       StopLevels `json:"stop"`
+	HandOver   *HandOver  `json:"hand_over"` // nil: no stopgap law that could be run
+	Faults     []Fault    `json:"faults"`
 	Cautions   []string   `json:"cautions"`
+}
+
+// StopLevels are absolute levels that correct running at rest reaches in an hour with a probability of 1e-4 at most;
+// nil where there is none of use, and Note says why.
+type StopLevels struct {
+	Input  *[2]float64 `json:"input"`
+	Output *[2]float64 `json:"output"`
+	Note   string      `json:"note,omitempty"`
+}
+
+// HandOver is how the loops take over from the stopgap law, and how far input and measured output then move from the
+// operating point: the mean over runs of the largest move within a settling time, the last one of the stopgap law, the
+// one after the hand-over, and one long after.
+type HandOver struct {
+	Rule   string     `json:"rule"`
+	Before SignalPair `json:"before"`
+	After  SignalPair `json:"after"`
+	Noise  SignalPair `json:"noise_alone"`
+}
+
+// Fault is what a fault in a first closure looks like, computed at the nominal plant: where it grows, the time in which
+// that goes by e and the median times from rest to the stop and trip levels (nil: not reached); where the loops stay
+// stable, how many times the expected deviations input and output show.
+type Fault struct {
+	What   string      `json:"what"`
+	Stable bool        `json:"stable"`
+	Growth *float64    `json:"growth_time"` // s
+	ToStop *float64    `json:"to_stop"`     // s
+	ToTrip *float64    `json:"to_trip"`     // s
+	Moves  *SignalPair `json:"moves"`
 }
 
 // SignalPair is one figure for the input and one for the output.

@@ -4,6 +4,8 @@ import (
 	"math"
 	"math/cmplx"
 	"math/rand/v2"
+
+	"gonum.org/v1/gonum/dsp/fourier"
 )
 
 // noise is what moves the output beside the input, as the fit saw it: v = H e in y = G u + v. For an unstable plant
@@ -19,6 +21,7 @@ type noise struct {
 	split               bool
 	sensor, disturbance float64
 	parts               []inputPart // of the disturbance
+	drawn               float64     // the sensor's deviation without the rounding that a run adds by itself
 }
 
 // An inputPart is white noise at the plant input through a lag of 1/rate; rate 0: white. sd is what comes out.
@@ -150,7 +153,7 @@ func nonNegative(columns [][]float64, weight []float64) (x []float64, misfit flo
 // draw fills sensor noise and input disturbance at a sample period; only where the noise is split.
 func (q *noise) draw(rnd *rand.Rand, period float64, sensor, input []float64) {
 	for k := range sensor {
-		sensor[k], input[k] = q.sensor*rnd.NormFloat64(), 0
+		sensor[k], input[k] = q.drawn*rnd.NormFloat64(), 0
 	}
 	for _, part := range q.parts {
 		rho := 0.0
@@ -163,6 +166,47 @@ func (q *noise) draw(rnd *rand.Rand, period float64, sensor, input []float64) {
 			w = rho*w + fresh*rnd.NormFloat64()
 		}
 	}
+}
+
+// addRounding adds to the identified noise what the steps of input and output bring. Rounding to steps of q acts as
+// white noise of variance q^2/12 where the signal moves by more than a step (Widrow 1961, Trans. AIEE 79, 555-568; the
+// long runs of the proof see where it does not). What the log's own steps brought is in the identified noise already;
+// runs, which round by themselves, draw without it.
+func (p *problem) addRounding() {
+	q := &p.noise
+	logged := math.Min(p.model.Evidence.Resolution.Output, p.rounds.Output)
+	fresh := (p.rounds.Output*p.rounds.Output - logged*logged) / 12
+	q.drawn = math.Sqrt(math.Max(0, q.sensor*q.sensor-logged*logged/12))
+	q.sensor = math.Sqrt(q.sensor*q.sensor + fresh)
+	for j := range q.shape {
+		a, b := cmplx.Abs(p.nominal.a[j]), cmplx.Abs(p.nominal.b[j])
+		q.shape[j] += a*a*fresh + b*b*p.rounds.Input*p.rounds.Input/12
+	}
+}
+
+// whole fills dst with w of A y = B u + w: Gaussian noise of density shape, all that the fit saw beside the input,
+// made of sines of random amplitude at the frequencies of a Fourier transform of at least so many samples.
+func (p *problem) whole(dst []float64, rnd *rand.Rand) {
+	n := 2
+	for n < len(dst) {
+		n *= 2
+	}
+	half := make([]complex128, n/2+1)
+	j := 1
+	for i := range half {
+		w := 2 * math.Pi * float64(i) / (float64(n) * p.period)
+		for j < len(p.omega)-1 && p.omega[j] < w {
+			j++
+		}
+		at := math.Min(1, (w-p.omega[j-1])/(p.omega[j]-p.omega[j-1]))
+		density := p.noise.shape[j-1] + at*(p.noise.shape[j]-p.noise.shape[j-1])
+		c := complex(rnd.NormFloat64(), rnd.NormFloat64()) * complex(math.Sqrt(density/float64(2*n)), 0)
+		if i == 0 || i == n/2 {
+			c = complex(real(c)*math.Sqrt2, 0)
+		}
+		half[i] = c
+	}
+	copy(dst, fourier.NewFFT(n).Sequence(nil, half))
 }
 
 // sensorPSD is the variance density of the sensor's part of v at frequency j on a plant, times |A|^2.

@@ -22,6 +22,7 @@ type problem struct {
 	input   [2]float64  // limits as deviations, input[0] < 0 < input[1]
 	output  *[2]float64 // limits as deviations, nil: none
 	rate    float64     // units of input per second, 0: none
+	rounds  SignalPair  // steps in which input and output are sent and read, 0: none known
 	spec    demands
 	noise   noise
 	nominal plant
@@ -72,6 +73,13 @@ func pose(model *ident.Model, rig *data.Rig) (*problem, error) {
 	}
 	if text := doubtful(model); text != "" {
 		p.doubts = append(p.doubts, text)
+	}
+	p.rounds = SignalPair(model.Evidence.Resolution)
+	if q := rig.Limits.InputResolution; q != nil {
+		p.rounds.Input = *q
+	}
+	if q := rig.Limits.OutputResolution; q != nil {
+		p.rounds.Output = *q
 	}
 	s := rig.Spec
 	p.spec = demands{s.Step, s.Overshoot, s.Settling, s.Band, s.PeakSensitivity, s.InputNoise, s.Kick, s.KickPeak}
@@ -164,6 +172,7 @@ func (p *problem) sample() error {
 		return err
 	}
 	p.noise = p.splitNoise()
+	p.addRounding()
 	p.regions = forbidden(p.model, p.spec.settling)
 	return nil
 }

@@ -118,12 +118,12 @@ func TestKick(t *testing.T) {
 		for k := range dist {
 			dist[k] = r.spec.Kick
 		}
-		tr, err := lti.Run{Plant: r.truth, Period: r.period, ComputeDelay: r.compute, Law: law, Steps: n, InputDisturbance: dist}.Simulate()
+		tr, err := lti.Run{Plant: r.truth, Period: r.period, ComputeDelay: r.compute, Law: law, Steps: n, InputDisturbance: dist, Fine: 2}.Simulate()
 		if err != nil {
 			t.Fatal(err)
 		}
 		peak := 0.0
-		for _, y := range tr.YTrue {
+		for _, y := range tr.Fine {
 			peak = math.Max(peak, math.Abs(y-law.Y0))
 		}
 		if end := math.Abs(tr.YTrue[n-1] - law.Y0); end > 0.1*peak {
@@ -279,16 +279,28 @@ func TestBetweenSamples(t *testing.T) {
 	}
 	outer := lti.Tustin(lti.TF{Num: lti.Poly{2.2}, Den: lti.Poly{0, 1}}, period)
 	law := &lti.Law{Inner: lti.Gain(0.5, period), Outer: &outer}
-	between, at := p.betweenSamples(law)
-	if !(between > at+0.01) {
-		t.Errorf("overshoot %v between the samples, %v at them", between, at)
+	o, err := p.newProver(law).judge(g)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if !(o.overshoot > o.atSamples+0.01) || !o.stable {
+		t.Errorf("stable %v, overshoot %v between the samples, %v at them", o.stable, o.overshoot, o.atSamples)
+	}
+	// The samples alone keep to a spec, and to trips, that the output between them breaks.
+	p.spec.overshoot = (o.overshoot + o.atSamples) / 2
+	if o, err = p.newProver(law).judge(g); err != nil || !slices.Contains(o.misses, missOvershoot) {
+		t.Errorf("spec between the two: %v, misses %v", err, o.misses)
+	}
+	p.output = &[2]float64{-10, 1 + p.spec.overshoot}
+	if o, err = p.newProver(law).judge(g); err != nil || !slices.Equal(o.misses, []string{missTrip}) {
+		t.Errorf("trip between the two: %v, misses %v", err, o.misses)
 	}
 	r := testRigs()[0] // smooth: the two agree
 	if p, err = newProblem(r.model(t), r.rig()); err != nil {
 		t.Fatal(err)
 	}
-	if between, at = p.betweenSamples(designed(t, r.name).LTI()); math.Abs(between-at) > 1e-3 {
-		t.Errorf("levitated: overshoot %v between the samples, %v at them", between, at)
+	if o, err = p.newProver(designed(t, r.name).LTI()).judge(r.truth); err != nil || math.Abs(o.overshoot-o.atSamples) > 1e-3 {
+		t.Errorf("levitated: %v, overshoot %v between the samples, %v at them", err, o.overshoot, o.atSamples)
 	}
 }
 

@@ -16,21 +16,39 @@ import (
 // PromisedShare is the share of the plants that the data allow which must meet the spec, by its lower bound.
 const PromisedShare = 0.995
 
-// conditions says what the runs behind a promise are.
-func (p *problem) conditions() string {
-	noise := "sensor noise and disturbances are not in these runs, as they could not be told apart"
-	if p.noise.split {
-		noise = "overshoot and settling are those of runs without noise, and in one more run per plant sensor noise and disturbance act, as split from the model's, and no trip may"
+// conditions says what the runs behind a promise are; long is on how many plants they go on.
+func (p *problem) conditions(long int) string {
+	text := "the spec's step"
+	if p.spec.kick > 0 {
+		text += " and kick"
 	}
-	return "the spec's step in both directions, and its kick, from rest at the operating point, in the sampled loop with its delay, limits, rate and trips acting; " +
-		noise + "; quantisation is left out, and the model's structure is taken as true"
+	text += " in both directions from rest at the operating point, without noise, in the sampled loop with its delay, limits, rate and trips acting; the output is looked at between the samples too; "
+	step := func(q float64) string {
+		if q > 0 {
+			return fmt.Sprintf("rounded to %.3g", q)
+		}
+		return "not rounded, as no step is known"
+	}
+	text += fmt.Sprintf("input %s, output %s; ", step(p.rounds.Input), step(p.rounds.Output))
+	text += "the trips also count in a step more per plant"
+	text += fmt.Sprintf(" and, on %d plants, in %.4g s at rest", long, float64(p.longSteps())*p.period)
+	if _, why := p.stopgap(); why == "" {
+		text += " after a hand-over from the stopgap law"
+	}
+	if p.noise.split {
+		text += ", in which sensor noise and disturbance act, as split from the model's"
+	} else {
+		text += ", in which the whole prediction error acts, as it could not be split into sensor noise and disturbance"
+	}
+	return text + "; the model's structure is taken as true"
 }
 
 // DefaultPlants is the number of fresh plants in a proof.
 const DefaultPlants = 2000
 
-// proofSettlings is the length of a proof's runs in settling times; hidden modes are also caught by eigenvalues.
-const proofSettlings = 6
+// proofSettlings is the length of a proof's runs in settling times; hidden modes are caught by eigenvalues, and seen in
+// the long runs.
+const proofSettlings = 4
 
 // Reasons for which a plant misses the spec.
 const (
@@ -43,9 +61,10 @@ const (
 	missNoise     = "input_noise"
 	missKick      = "kick_peak"
 	missNoisy     = "trip limits during the step, with noise"
+	missLong      = "a long run under noise"
 )
 
-var missOrder = []string{missUnstable, missInner, missTrip, missOvershoot, missSettling, missPeakS, missNoise, missKick, missNoisy}
+var missOrder = []string{missUnstable, missInner, missTrip, missOvershoot, missSettling, missPeakS, missNoise, missKick, missNoisy, missLong}
 
 // outcome is what one plant does in the loops.
 type outcome struct {
@@ -53,6 +72,7 @@ type outcome struct {
 	stable                                    bool
 	misses                                    []string
 	overshoot, settling, peakS, noise, kickPk float64
+	atSamples                                 float64 // the overshoot that the samples alone show
 }
 
 // lawGrid is a law at the frequencies of a problem.
@@ -105,31 +125,79 @@ func (p *problem) refinePeakS(pl *plant, law *lti.Law, g *gridLoop) float64 {
 // prover keeps what one worker reuses between plants.
 type prover struct {
 	p     *problem
-	law   *lti.Law
+	law   *lti.Law  // with the steps of input and output
 	grid  *gridLoop // both loops
 	alone *gridLoop // the inner loop alone
 	sim   lti.Simulator
 	trace lti.Trace
 	ref   []float64
+	pl    plant // that judged last
+
+	about lti.TF // the plant that was run last, and the instants per period at which its output is looked at
+	fine  int
 
 	sensor, disturbance []float64
 }
 
 func (p *problem) newProver(law *lti.Law) *prover {
-	inner := *law
+	inner, acting := *law, *law
 	inner.Outer, inner.Prefilter = nil, nil
-	return &prover{p: p, law: law, grid: p.lawGrid(law), alone: p.lawGrid(&inner)}
+	acting.InputStep, acting.OutputStep = p.rounds.Input, p.rounds.Output
+	return &prover{p: p, law: &acting, grid: p.lawGrid(law), alone: p.lawGrid(&inner)}
 }
 
 // another returns a prover for another worker.
 func (v *prover) another() *prover { return &prover{p: v.p, law: v.law, grid: v.grid, alone: v.alone} }
 
-// run simulates the saturating loop; amount is a reference step, or with kick a step at the plant input.
-func (v *prover) run(g lti.TF, steps int, amount float64, kick bool, offset float64) error {
-	r := lti.Run{Plant: g, Period: v.p.period, ComputeDelay: v.p.compute, Law: v.law, Steps: steps, OutputOffset: offset}
-	if o := v.p.output; o != nil {
-		r.Trip = [2]float64{v.law.Y0 + o[0], v.law.Y0 + o[1]}
+// Instants per period at which the output is looked at: at least fewestInstants, and instantsPerTurn per turn of the
+// plant's fastest mode, between which a sine hides less than 2 % of its height, 1 - cos(pi/16). Slower motion hides
+// less: between instants h apart no more than h^2/8 of its second derivative.
+const (
+	fewestInstants  = 2
+	instantsPerTurn = 16
+	mostInstants    = 64
+)
+
+// instants is how many times per period the output of a plant is looked at.
+func (p *problem) instants(g lti.TF) int {
+	turn := 0.0
+	for _, s := range g.Poles() {
+		turn = math.Max(turn, cmplx.Abs(s))
 	}
+	n := math.Ceil(instantsPerTurn * turn * p.period / (2 * math.Pi))
+	return int(math.Min(math.Max(n, fewestInstants), mostInstants))
+}
+
+// trip returns the absolute levels at which a run ends: those of the rig, or where it has none those at which a plant
+// counts as lost.
+func (v *prover) trip() [2]float64 {
+	o := [2]float64{-lostSteps * v.p.spec.step, lostSteps * v.p.spec.step}
+	if v.p.output != nil {
+		o = *v.p.output
+	}
+	return [2]float64{v.law.Y0 + o[0], v.law.Y0 + o[1]}
+}
+
+// simulate runs the loop about a plant, and reports whether the output stayed inside the trips, between the samples too.
+func (v *prover) simulate(r lti.Run) (inside bool, err error) {
+	if v.fine == 0 || !v.about.Equal(r.Plant) {
+		v.about, v.fine = r.Plant, v.p.instants(r.Plant)
+	}
+	r.Period, r.ComputeDelay, r.Law, r.Fine, r.Trip = v.p.period, v.p.compute, v.law, v.fine, v.trip()
+	if err := v.sim.Simulate(&v.trace, r); err != nil || v.trace.Tripped >= 0 {
+		return false, err
+	}
+	for _, y := range v.trace.Fine {
+		if !(y >= r.Trip[0] && y <= r.Trip[1]) {
+			return false, nil
+		}
+	}
+	return true, nil
+}
+
+// run simulates the saturating loop without noise; amount is a reference step, or with kick a step at the plant input.
+func (v *prover) run(g lti.TF, steps int, amount float64, kick bool, offset float64) (inside bool, err error) {
+	r := lti.Run{Plant: g, Steps: steps, OutputOffset: offset}
 	v.ref = slices.Grow(v.ref[:0], steps)[:steps]
 	for k := range v.ref {
 		v.ref[k] = amount
@@ -142,30 +210,70 @@ func (v *prover) run(g lti.TF, steps int, amount float64, kick bool, offset floa
 	} else {
 		r.Reference = v.ref
 	}
-	return v.sim.Simulate(&v.trace, r)
+	return v.simulate(r)
 }
 
 // lostSteps is how far, in steps of the spec, an output without trip limits may go before its plant is lost.
 const lostSteps = 1000
 
-// survives reports whether a plant comes through a reference step under sensor noise and disturbance without a trip.
-func (v *prover) survives(g lti.TF, step float64, rnd *rand.Rand) (bool, error) {
-	p, n := v.p, v.p.steps(g)
-	v.sensor, v.disturbance = slices.Grow(v.sensor[:0], n)[:n], slices.Grow(v.disturbance[:0], n)[:n]
-	p.noise.draw(rnd, p.period, v.sensor, v.disturbance)
-	v.ref = slices.Grow(v.ref[:0], n)[:n]
+// shake simulates the loop at a constant reference, step away from the operating point, under the identified noise.
+// What handOver adds to the run is the hand-over from another law.
+func (v *prover) shake(g lti.TF, steps int, step float64, rnd *rand.Rand, handOver lti.Run) (inside bool, err error) {
+	p, r := v.p, handOver
+	r.Plant, r.Steps = g, steps
+	v.sensor = slices.Grow(v.sensor[:0], steps)[:steps]
+	if p.noise.split {
+		v.disturbance = slices.Grow(v.disturbance[:0], steps)[:steps]
+		p.noise.draw(rnd, p.period, v.sensor, v.disturbance)
+		r.Noise, r.InputDisturbance = v.sensor, v.disturbance
+	} else {
+		p.whole(v.sensor, rnd)
+		r.Innovations = v.sensor
+	}
+	v.ref = slices.Grow(v.ref[:0], steps)[:steps]
 	for k := range v.ref {
 		v.ref[k] = v.law.Y0 + step
 	}
-	trip := [2]float64{-lostSteps * p.spec.step, lostSteps * p.spec.step}
-	if p.output != nil {
-		trip = *p.output
+	r.Reference = v.ref
+	return v.simulate(r)
+}
+
+// Of the plants one in longEvery runs under noise for longSettlings settling times, and its output may deviate by no more
+// than longExcess times what the linear loop says: a hidden mode that grows, and a limit cycle that rounding keeps
+// alive, take more.
+const (
+	longEvery     = 50
+	longSettlings = 100
+	longExcess    = 1.5
+	longMost      = 50000 // steps
+)
+
+func (p *problem) longSteps() int {
+	return int(math.Min(math.Max(longSettlings*p.spec.settling/p.period, 1000), longMost))
+}
+
+// endures reports whether the plant judged last comes through a long run under noise: handed over from the stopgap law
+// where that is known and holds the plant, else from rest.
+func (v *prover) endures(g lti.TF, rnd *rand.Rand) (bool, error) {
+	p := v.p
+	from, steps := p.handOverSteps(), p.longSteps()
+	handOver := lti.Run{}
+	if before, why := p.stopgap(); why == "" {
+		handOver = p.handOver(before)
 	}
-	err := v.sim.Simulate(&v.trace, lti.Run{
-		Plant: g, Period: p.period, ComputeDelay: p.compute, Law: v.law, Steps: n, Reference: v.ref,
-		Noise: v.sensor, InputDisturbance: v.disturbance, Trip: [2]float64{v.law.Y0 + trip[0], v.law.Y0 + trip[1]},
-	})
-	return err == nil && v.trace.Tripped < 0, err
+	inside, err := v.shake(g, from+steps, 0, rnd, handOver)
+	if t := v.trace.Tripped; err == nil && !inside && handOver.Before != nil && t >= 0 && t < from {
+		inside, err = v.shake(g, from+steps, 0, rnd, lti.Run{})
+	}
+	if err != nil || !inside {
+		return false, err
+	}
+	sum := 0.0
+	after := v.trace.Y[2*from:]
+	for _, y := range after {
+		sum += (y - v.law.Y0) * (y - v.law.Y0)
+	}
+	return math.Sqrt(sum/float64(len(after))) <= longExcess*p.expectedSD(&v.pl, v.grid).Output, nil
 }
 
 // steps is the length of the runs about a plant.
@@ -207,14 +315,15 @@ func (v *prover) holds(g lti.TF, pl *plant) (both, alone bool, err error) {
 func (v *prover) judge(g lti.TF) (outcome, error) {
 	p, s := v.p, &v.p.spec
 	var o outcome
-	pl, err := p.newPlant(g)
-	if err != nil {
+	var err error
+	if v.pl, err = p.newPlant(g); err != nil {
 		// A plant that cannot be sampled is one that nothing holds.
 		return outcome{unstable: g.UnstablePoles(0), misses: []string{missUnstable}}, nil
 	}
+	pl := &v.pl
 	o.unstable = pl.unstable
 	miss := func(what string) { o.misses = append(o.misses, what) }
-	both, alone, err := v.holds(g, &pl)
+	both, alone, err := v.holds(g, pl)
 	if err != nil {
 		return o, err
 	}
@@ -227,35 +336,44 @@ func (v *prover) judge(g lti.TF) (outcome, error) {
 	if o.stable = both && alone; !o.stable {
 		return o, nil
 	}
-	o.peakS = p.refinePeakS(&pl, v.law, v.grid)
-	o.noise = p.frequency(&pl, v.grid).noise
+	o.peakS = p.refinePeakS(pl, v.law, v.grid)
+	o.noise = p.frequency(pl, v.grid).noise
 	n := p.steps(g)
 	for _, sign := range []float64{1, -1} {
-		if err := v.run(g, n, sign*s.step, false, 0); err != nil {
+		inside, err := v.run(g, n, sign*s.step, false, 0)
+		if err != nil {
 			return o, err
 		}
-		if v.trace.Tripped >= 0 {
+		if !inside {
 			miss(missTrip)
 			o.stable = false
 			return o, nil
 		}
-		last := -1
-		for k, y := range v.trace.YTrue {
-			x := sign * (y - v.law.Y0) / s.step
-			o.overshoot = math.Max(o.overshoot, x-1)
-			if !(math.Abs(x-1) <= s.band) {
-				last = k
+		last, per := -1, sign/s.step
+		for i, y := range v.trace.Fine {
+			e := per*(y-v.law.Y0) - 1
+			if e > o.overshoot {
+				o.overshoot = e
+			}
+			if !(e <= s.band && e >= -s.band) {
+				last = i
 			}
 		}
-		o.settling = math.Max(o.settling, float64(last+1)*p.period)
+		for _, y := range v.trace.YTrue {
+			if e := per*(y-v.law.Y0) - 1; e > o.atSamples {
+				o.atSamples = e
+			}
+		}
+		o.settling = math.Max(o.settling, float64(last+1)*p.period/float64(v.fine))
 		if s.kick > 0 {
-			if err := v.run(g, n, sign*s.kick, true, 0); err != nil {
+			inside, err := v.run(g, n, sign*s.kick, true, 0)
+			if err != nil {
 				return o, err
 			}
-			for _, y := range v.trace.YTrue {
+			for _, y := range v.trace.Fine {
 				o.kickPk = math.Max(o.kickPk, math.Abs(y-v.law.Y0))
 			}
-			if v.trace.Tripped >= 0 {
+			if !inside {
 				miss(missTrip)
 				o.stable = false
 				return o, nil
@@ -322,17 +440,23 @@ func (p *problem) prove(ctx context.Context, law *lti.Law, opt Options, attempt 
 			if err != nil {
 				return fmt.Errorf("plant %d of the proof: %w", k, err)
 			}
-			if o.stable && p.noise.split {
+			if o.stable {
 				step := p.spec.step
 				if k%2 == 1 {
 					step = -step
 				}
-				ok, err := v.survives(draws[k], step, rand.New(rand.NewPCG(noiseSeed, uint64(k))))
+				rnd := rand.New(rand.NewPCG(noiseSeed, uint64(k)))
+				inside, err := v.shake(draws[k], p.steps(draws[k]), step, rnd, lti.Run{})
+				if err == nil && !inside {
+					o.misses = append(o.misses, missNoisy)
+				}
+				if err == nil && k%longEvery == 0 {
+					if inside, err = v.endures(draws[k], rnd); err == nil && !inside {
+						o.misses = append(o.misses, missLong)
+					}
+				}
 				if err != nil {
 					return fmt.Errorf("plant %d of the proof: %w", k, err)
-				}
-				if !ok {
-					o.misses = append(o.misses, missNoisy)
 				}
 			}
 			results[k] = o
@@ -349,7 +473,8 @@ func (p *problem) prove(ctx context.Context, law *lti.Law, opt Options, attempt 
 		return nil, err
 	}
 	out := p.count(nominal, results)
-	out.Conditions = p.conditions()
+	out.LongRuns, out.Resolution = (n+longEvery-1)/longEvery, p.rounds
+	out.Conditions = p.conditions(out.LongRuns)
 	out.Attempts, out.Confidence = attempt, 1-0.05/float64(attempt)
 	out.LowerBound = ClopperPearsonLower(out.MeetSpec, n, out.Confidence)
 	if out.Stable > 0 && nominal.stable {
@@ -373,6 +498,7 @@ func (p *problem) count(nominal outcome, results []outcome) *Promise {
 		}
 	}
 	spread(&out.Overshoot, func(o *outcome) float64 { return o.overshoot })
+	spread(&out.atSamples, func(o *outcome) float64 { return o.atSamples })
 	spread(&out.Settling, func(o *outcome) float64 { return o.settling })
 	spread(&out.PeakS, func(o *outcome) float64 { return o.peakS })
 	spread(&out.InputNoise, func(o *outcome) float64 { return o.noise })
@@ -416,32 +542,40 @@ func (p *problem) count(nominal outcome, results []outcome) *Promise {
 const extentPlants = 16
 
 // extents finds the largest reference step and the largest offset along the least stable mode, in either direction,
-// from which the loop settles again, on the worst of the plants.
+// from which the loop settles again, on the worst of the plants. Plants that come back from what the worst so far bears
+// are not looked at closer.
 func (v *prover) extents(ctx context.Context, plants []lti.TF, workers int) (step, offset float64, err error) {
-	p := v.p
-	steps, offsets := make([]float64, len(plants)), make([]float64, len(plants))
-	if err := ident.Each(ctx, len(plants), workers, func(i int) error {
-		v, g := v.another(), plants[i]
-		n := 2 * p.steps(g)
-		steps[i] = p.largest(func(a float64) bool {
-			return v.run(g, n, a, false, 0) == nil && v.calm(a)
-		})
-		offsets[i] = p.largest(func(a float64) bool {
-			return v.run(g, n, 0, false, a) == nil && v.calm(0)
-		})
+	var out [2]float64
+	if err := ident.Each(ctx, 2, workers, func(i int) error {
+		v, worst := v.another(), math.Inf(1)
+		for _, g := range plants {
+			n := 2 * v.p.steps(g)
+			comesBack := func(a float64) bool {
+				target, off := a, 0.0
+				if i == 1 {
+					target, off = 0, a
+				}
+				inside, err := v.run(g, n, target, false, off)
+				return err == nil && inside && v.calm(target)
+			}
+			if err := ctx.Err(); err != nil {
+				return err
+			}
+			if math.IsInf(worst, 1) || !comesBack(worst) || !comesBack(-worst) {
+				worst = math.Min(worst, v.p.largest(comesBack))
+			}
+		}
+		out[i] = worst
 		return nil
 	}); err != nil {
 		return 0, 0, err
 	}
-	return slices.Min(steps), slices.Min(offsets), nil
+	return out[0], out[1], nil
 }
 
-// calm reports whether the last run stayed inside the trips and has come to rest at its target.
+// calm reports whether the last run has come to rest at its target.
 func (v *prover) calm(target float64) bool {
 	t := &v.trace
-	if t.Tripped >= 0 {
-		return false
-	}
 	tol := 0.1*math.Abs(target) + 0.05*v.p.spec.step
 	for _, y := range t.YTrue[len(t.YTrue)*3/4:] {
 		if !(math.Abs(y-v.law.Y0-target) <= tol) {

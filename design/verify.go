@@ -54,7 +54,7 @@ func Verify(ctx context.Context, model *ident.Model, rig *data.Rig, loops *Loops
 		return nil, err
 	}
 	if l.Margins.PlantInput.Stable {
-		p.firstClosure(l) // loops that do not hold the plant are not to be closed at all
+		p.firstClosure(l, opt.Seed) // loops that do not hold the plant are not to be closed at all
 	}
 	p.conclude(l)
 	switch {
