@@ -163,6 +163,8 @@ func draftRig(h *data.LogHeader, name string) string {
 	line("# input      = [0.0, 1.0]  # fill in: what the actuator can do")
 	line("# input_rate = 100.0       # units of input per second; leave out if it does not matter")
 	line("# output     = [0.0, 1.0]  # fill in: beyond this the rig trips")
+	line("# input_resolution  = 0.001  # converter's step; 0: fine, left out: as logged")
+	line("# output_resolution = 0.001  # likewise")
 	line("")
 	line("# [spec]  # fill in: what the loop has to do")
 	line("# step             = 0.1   # size of the reference step, units of output")

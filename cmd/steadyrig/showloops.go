@@ -154,6 +154,9 @@ func showPromise(p *page, l *design.Loops, u data.Units) {
 	}
 	p.item("largest step", words.Unit(words.Number(q.LargestStep), u.Output))
 	p.item("comes back from", words.Unit(words.Number(q.Recoverable), u.Output)+" off the operating point")
+	if q.Conditions != "" {
+		p.item("the runs", q.Conditions)
+	}
 	if q.Attempts > 1 {
 		p.item("attempts", fmt.Sprintf("%d, so the confidence is shared between them", q.Attempts))
 	}
@@ -170,11 +173,13 @@ func showClosure(p *page, l *design.Loops, u data.Units) {
 	}
 	trip := func(name string, pair *[2]float64, unit string) {
 		if pair != nil {
-			p.item("trip on "+name, "outside "+words.Unit(words.Number(pair[0])+" to "+words.Number(pair[1]), unit))
+			p.item(name, "outside "+words.Unit(words.Number(pair[0])+" to "+words.Number(pair[1]), unit))
 		}
 	}
-	trip("input", c.Trip.Input, u.Input)
-	trip("output", c.Trip.Output, u.Output)
+	trip("trip on input", c.Trip.Input, u.Input)
+	trip("trip on output", c.Trip.Output, u.Output)
+	trip("at rest stop at u", c.Stop.Input, u.Input)
+	trip("at rest stop at y", c.Stop.Output, u.Output)
 	for _, text := range c.Cautions {
 		wrap(p.w, "  ! ", text)
 	}

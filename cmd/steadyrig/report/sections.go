@@ -407,6 +407,7 @@ func stepsSection(in Input) section {
 		s.Facts = []fact{
 			{"Largest step", words.Unit(words.Number(q.LargestStep), u.Output)},
 			{"Comes back from", words.Unit(words.Number(q.Recoverable), u.Output) + " off the operating point"},
+			{"The runs", q.Conditions},
 		}
 	}
 	r, err := l.StepResponses(in.Model, in.Rig, drawnSteps, in.Seed)
@@ -445,11 +446,13 @@ func closureSection(in Input) section {
 	s := section{ID: "closure", Title: "First closure", Steps: c.Order}
 	trip := func(name string, pair *[2]float64, unit string) {
 		if pair != nil {
-			s.Facts = append(s.Facts, fact{"Trip on the " + name, "outside " + words.Unit(words.Number(pair[0])+" to "+words.Number(pair[1]), unit)})
+			s.Facts = append(s.Facts, fact{name, "outside " + words.Unit(words.Number(pair[0])+" to "+words.Number(pair[1]), unit)})
 		}
 	}
-	trip("output", c.Trip.Output, u.Output)
-	trip("input", c.Trip.Input, u.Input)
+	trip("Trip on the output", c.Trip.Output, u.Output)
+	trip("Trip on the input", c.Trip.Input, u.Input)
+	trip("At rest, stop at an output", c.Stop.Output, u.Output)
+	trip("At rest, stop at an input", c.Stop.Input, u.Input)
 	s.Facts = append(s.Facts, fact{"Expect on the traces", fmt.Sprintf("standard deviations near %s at the input and %s at the output",
 		words.Unit(words.Brief(c.ExpectedSD.Input), u.Input), words.Unit(words.Brief(c.ExpectedSD.Output), u.Output))})
 	for _, text := range c.Cautions {
