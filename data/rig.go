@@ -12,6 +12,7 @@ type Rig struct {
 	Limits         Limits          `toml:"limits"`
 	Spec           *Spec           `toml:"spec"` // nil: not given
 	Model          Known           `toml:"model"`
+	Loops          *Controllers    `toml:"loops"` // nil: not given
 
 	file  string         // for messages
 	lines map[string]int // line of each key, "log.input" -> 5; and of each table, "log" -> 3
@@ -100,6 +101,15 @@ type Known struct {
 	Order *int        `toml:"order"` // poles; nil: from the data
 	Zeros *int        `toml:"zeros"` // nil: from the data
 	Delay *[2]float64 `toml:"delay"` // [lo, hi] to search, s; nil: from -1 sample to a few samples
+}
+
+// Controllers are the owner's own two loops for verify, as rational expressions in s or z or as lists of coefficients.
+// What they mean is for the reader of such expressions.
+type Controllers struct {
+	Inner       string      `toml:"inner"`
+	Outer       string      `toml:"outer"`        // empty: no outer loop
+	Prefilter   string      `toml:"prefilter"`    // empty: none
+	OuterLimits *[2]float64 `toml:"outer_limits"` // [lo, hi] of the outer loop's output, deviation; nil: none
 }
 
 // File returns the name of the file that the rig was read from; empty for a rig made by a program.

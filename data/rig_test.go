@@ -133,7 +133,7 @@ func TestReadRigDefects(t *testing.T) {
 		{"key in the wrong table", "band              = 0.02\n", "band = 0.02\nhold = \"zero-order\"\n", `rig.toml: line 41: unknown key "hold" in [spec]; "hold" belongs in [loop]`},
 		{"unknown table", `[limits]`, `[limit]`, `rig.toml: line 31: unknown key "limit"; did you mean [limits]?`},
 		{"key like none", `name = "hover puck"`, `colour = "red"`,
-			`rig.toml: line 1: unknown key "colour"; the top of a rig file knows name, log, units, operating_point, stopgap, loop, limits, spec, model`},
+			`rig.toml: line 1: unknown key "colour"; the top of a rig file knows name, log, units, operating_point, stopgap, loop, limits, spec, model, loops`},
 		{"key below a key", "order    = 3", "order.max = 3", `rig.toml: line 47: unknown key "order.max" in [model]; no key of a rig file lies that deep`},
 		{"outer output", `dither        = "d"`, `outer_output = "x"`,
 			`rig.toml: line 8: outer_output (a second sensor for the outer loop) is not supported: one input and one output are; take it out, and check that nothing else is left uncontrolled`},
@@ -271,5 +271,30 @@ func TestNearest(t *testing.T) {
 	}
 	if d := distance([]rune("curretn"), []rune("current")); d != 1 {
 		t.Errorf("distance(curretn, current) = %d, want 1", d)
+	}
+}
+
+// The owner's own loops are kept as written; limits must be on both sides of zero, and keys are known.
+func TestReadRigLoops(t *testing.T) {
+	own := hoverPuck + "\n[loops]\ninner = \"2.4*(s+30)/(0.002*s+1)\"\nouter = \"0.5 + 2/s\"\nprefilter = \"1\"\nouter_limits = [-1.5, 2]\n"
+	g, err := ReadRig(strings.NewReader(own), "puck.toml")
+	if err != nil {
+		t.Fatal(err)
+	}
+	if l := g.Loops; l == nil || l.Inner != "2.4*(s+30)/(0.002*s+1)" || l.Outer != "0.5 + 2/s" || l.Prefilter != "1" || *l.OuterLimits != [2]float64{-1.5, 2} {
+		t.Errorf("read %+v", g.Loops)
+	}
+	for _, c := range []struct{ old, new, want string }{
+		{"outer =", "outre =", `unknown key "outre" in [loops]; did you mean "outer"?`},
+		{"[-1.5, 2]", "[0.5, 2]", "deviations on both sides of 0"},
+		{"[-1.5, 2]", "1.5", "write [lowest, highest]"},
+		{`"1"`, "1", "loops.prefilter is the number 1; write text in double quotes"},
+		{"prefilter =", "sample_period =", `"sample_period" belongs in [loop]`},
+		{"[loops]", "[loopss]", `did you mean [loops]?`},
+	} {
+		_, err := ReadRig(strings.NewReader(strings.Replace(own, c.old, c.new, 1)), "puck.toml")
+		if err == nil || !strings.Contains(err.Error(), c.want) {
+			t.Errorf("%s: %v, want %q", c.new, err, c.want)
+		}
 	}
 }

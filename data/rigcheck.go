@@ -8,7 +8,7 @@ import (
 // Validate reports the first value that is not finite, out of its range, or at odds with another one, as a
 // *ParseError. It does not ask for what a command needs: see NeedLog and NeedDesign.
 func (g *Rig) Validate() error {
-	for _, check := range []func() error{g.checkLog, g.checkLimits, g.checkOperatingPoint, g.checkStopgap, g.checkLoop, g.checkSpec, g.checkModel} {
+	for _, check := range []func() error{g.checkLog, g.checkLimits, g.checkOperatingPoint, g.checkStopgap, g.checkLoop, g.checkSpec, g.checkModel, g.checkLoops} {
 		if err := check(); err != nil {
 			return err
 		}
@@ -242,6 +242,17 @@ func (g *Rig) checkModel() error {
 		return nil // a delay that is known exactly
 	}
 	return g.pair("model.delay", m.Delay)
+}
+
+func (g *Rig) checkLoops() error {
+	l := g.Loops
+	if l == nil || l.OuterLimits == nil {
+		return nil
+	}
+	if o := l.OuterLimits; o[0] >= 0 || o[1] <= 0 {
+		return g.fault("loops.outer_limits", "give [lowest, highest], deviations on both sides of 0", "loops.outer_limits is [%s, %s]", number(o[0]), number(o[1]))
+	}
+	return g.pair("loops.outer_limits", l.OuterLimits)
 }
 
 // NeedLog reports what `fit` and `audit` need and the rig file lacks: the columns of input and output, and stamps

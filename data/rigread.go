@@ -238,7 +238,11 @@ func (g *Rig) suggest(table, word string) string {
 		}
 		return "did you mean " + quote(name) + "?"
 	}
-	for _, t := range append([]string{""}, tableNames()...) {
+	elsewhere := append([]string{""}, tableNames()...)
+	if like, _ := nearest(table, slices.DeleteFunc(slices.Clone(tableNames()), func(t string) bool { return t == table })); like != "" {
+		elsewhere = slices.Insert(elsewhere, 1, like) // [loops] for [loop]
+	}
+	for _, t := range elsewhere {
 		if t == table || !slices.Contains(known[t], word) {
 			continue
 		}
