@@ -64,8 +64,11 @@ type OperatingPoint struct {
 // Block is one controller block. Continuous is what it was designed as (nil where only coefficients were given),
 // Discrete what runs.
 type Block struct {
+	Given      string    `json:"given,omitempty"`      // as its author wrote it, see ParseController
 	Continuous *Rational `json:"continuous,omitempty"` // descending powers of s
 	Discrete   Rational  `json:"discrete"`             // powers of z^-1, Denominator[0] == 1
+
+	mapped bool // Discrete was made from Continuous here
 }
 
 // Rational is a ratio of polynomials; the order of its powers is said where it is used.
@@ -287,6 +290,43 @@ func ReadLoops(r io.Reader, name string) (*Loops, error) {
 	return l, nil
 }
 
+// NewLoops returns loops without controllers, one step every period seconds, about the operating point and within the
+// limits that model and rig file have.
+func NewLoops(period float64) *Loops {
+	return &Loops{Schema: LoopsSchema, SamplePeriod: period, Law: LawText, pointMissing: true}
+}
+
+// Set makes b the block "inner", "outer" or "prefilter"; nil takes outer loop or prefilter away. A block with its
+// continuous form alone is mapped as ReadLoops does. It panics on other names. The error says what of the block cannot
+// run.
+func (l *Loops) Set(name string, b *Block) error {
+	if b != nil {
+		c := *b
+		if b = &c; b.IsOne() && name == "prefilter" {
+			b = nil
+		} else if err := b.complete(l.SamplePeriod); err != nil {
+			return err
+		}
+	}
+	*l.block(name) = b
+	return nil
+}
+
+// block is where the loops hold the block of a name.
+func (l *Loops) block(name string) **Block {
+	switch name {
+	case "inner":
+		return &l.Inner
+	case "outer":
+		return &l.Outer
+	case "prefilter":
+		return &l.Prefilter
+	}
+	panic(noBlock)
+}
+
+const noBlock = "design: blocks are inner, outer and prefilter"
+
 // jsonFault turns the decoder's errors into one line with a place.
 func jsonFault(text []byte, err error) error {
 	var syntax *json.SyntaxError
@@ -335,11 +375,10 @@ func (l *Loops) complete(file string) error {
 		if b.block == nil {
 			continue
 		}
-		mapped, err := b.block.complete(l.SamplePeriod)
-		if err != nil {
+		if err := b.block.complete(l.SamplePeriod); err != nil {
 			return fail(b.name, "%w", err)
 		}
-		if mapped {
+		if b.block.mapped {
 			l.Warnings = append(l.Warnings, b.name+" was given as a continuous controller: it was mapped by Tustin's rule at the sample period")
 		}
 	}
@@ -360,25 +399,25 @@ func (l *Loops) complete(file string) error {
 	return nil
 }
 
-// complete validates one block and reports whether its discrete form was made from the continuous one.
-func (b *Block) complete(period float64) (mapped bool, err error) {
+// complete validates one block and makes its discrete form where it has the continuous one alone.
+func (b *Block) complete(period float64) (err error) {
 	if len(b.Discrete.Numerator) == 0 && len(b.Discrete.Denominator) == 0 && b.Continuous != nil {
 		if b.Discrete, err = tustinRational(*b.Continuous, period); err != nil {
-			return false, err
+			return err
 		}
-		mapped = true
+		b.mapped = true
 	}
 	d := b.Discrete
 	if len(d.Numerator) == 0 || len(d.Denominator) == 0 {
-		return false, errors.New("want discrete numerator and denominator in powers of z^-1, one of them is empty")
+		return errors.New("want discrete numerator and denominator in powers of z^-1, one of them is empty")
 	}
 	for _, v := range append(append([]float64(nil), d.Numerator...), d.Denominator...) {
 		if math.IsNaN(v) || math.IsInf(v, 0) {
-			return false, fmt.Errorf("coefficient %v is not a finite number", v)
+			return fmt.Errorf("coefficient %v is not a finite number", v)
 		}
 	}
 	if lead := d.Denominator[0]; lead == 0 {
-		return false, errors.New("the first coefficient of the discrete denominator is zero; it multiplies the present output and must not be")
+		return errors.New("the first coefficient of the discrete denominator is zero; it multiplies the present output and must not be")
 	} else if lead != 1 {
 		num, den := make([]float64, len(d.Numerator)), make([]float64, len(d.Denominator))
 		for i, v := range d.Numerator {
@@ -389,7 +428,7 @@ func (b *Block) complete(period float64) (mapped bool, err error) {
 		}
 		b.Discrete = Rational{num, den}
 	}
-	return mapped, nil
+	return nil
 }
 
 // tustinRational maps a continuous controller (descending powers of s) by s = (2/T)(1 - z^-1)/(1 + z^-1).
