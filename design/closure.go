@@ -121,7 +121,6 @@ func unitOf(u string) string {
 
 // Limits behind the warnings of conclude.
 const (
-	slowestSampling  = 0.25 // unstable pole times sample period
 	fewestDeviations = 3.0  // deviations of the input inside its limits
 	betweenNoted     = 0.01 // of the step, by which the output goes further between the samples than at them
 )
@@ -137,10 +136,8 @@ func (p *problem) conclude(l *Loops) {
 	if !p.noise.split {
 		warn("the noise could not be split into sensor noise and input disturbance: the whole prediction error counts as sensor noise in input_noise")
 	}
-	for _, s := range p.nominal.tf.Poles() {
-		if x := real(s) * p.period; x > slowestSampling {
-			warn("the sample period is long for the unstable pole: pole times period is %.2g, common practice asks for less than %.2g", x, slowestSampling)
-		}
+	for _, text := range p.samplingCosts(l) {
+		warn("%s", text)
 	}
 	if f := l.FirstClosure; f != nil {
 		side := math.Min(-p.input[0], p.input[1])

@@ -47,6 +47,7 @@ type Loops struct {
 	Bounds         []Bound        `json:"bounds"`
 	Margins        *LoopMargins   `json:"margins"`
 	Forms          []FormResult   `json:"forms,omitempty"` // what each step of simplicity costs
+	Sampling       *Sampling      `json:"sampling,omitempty"`
 	Promise        *Promise       `json:"promise"`
 	FirstClosure   *FirstClosure  `json:"first_closure"`
 	Verdict        string         `json:"verdict"`
@@ -263,7 +264,7 @@ func (e *LoopsError) Error() string {
 func (e *LoopsError) Unwrap() error { return e.Err }
 
 // ReadLoops reads loops.json, the tool's or the user's own. A block may be given by its continuous form alone: it
-// is then mapped by Tustin's rule and a warning in the result says so. The file's name serves the messages.
+// is then mapped by Tustin's rule and a warning in the result says so; Verify chooses a mapping by checking. The file's name serves the messages.
 func ReadLoops(r io.Reader, name string) (*Loops, error) {
 	text, err := io.ReadAll(r)
 	if err != nil {

@@ -14,7 +14,7 @@ import (
 )
 
 // Verify judges given loops, the tool's own or the user's, against a model and a rig file: bounds, zeros that would
-// cancel an unstable pole, margins and the promise. The result is a copy with those parts made anew. As with Design,
+// cancel an unstable pole, margins and the promise. Controllers in s are brought to the sample period first, by the best mapping. The result is a copy with those parts made anew. As with Design,
 // a refusal comes with the result. Errors without a result: loops that do not fit the rig file.
 func Verify(ctx context.Context, model *ident.Model, rig *data.Rig, loops *Loops, opt Options) (*Loops, error) {
 	if loops.Inner == nil {
@@ -37,6 +37,9 @@ func Verify(ctx context.Context, model *ident.Model, rig *data.Rig, loops *Loops
 	l.Inner, l.Outer, l.Prefilter, l.OuterLimits = loops.Inner, loops.Outer, loops.Prefilter, loops.OuterLimits
 	if err := p.sample(); err != nil {
 		return l.passOn(err)
+	}
+	if l.Sampling, err = p.mapControllers(l); err != nil {
+		return nil, err
 	}
 	law := l.LTI()
 	if err := law.Validate(); err != nil {

@@ -115,7 +115,7 @@ func TestVerifyUsersLoops(t *testing.T) {
 	if !errors.As(err, &refused) || !strings.Contains(refused.What, "settling") {
 		t.Fatalf("%v", err)
 	}
-	if got.Promise.Stable != 100 || got.InputLimits == nil || *got.InputLimits != r.input || got.Inner.Discrete.Numerator[0] != l.Inner.Discrete.Numerator[0] {
+	if got.Promise.Stable != 100 || got.InputLimits == nil || *got.InputLimits != r.input || got.Inner.Continuous != l.Inner.Continuous || got.Sampling.Mapping == "" {
 		t.Errorf("%+v", got.Promise)
 	}
 }
