@@ -115,7 +115,7 @@ func TestDesignAndPromise(t *testing.T) {
 			if err != nil {
 				t.Fatal(err)
 			}
-			if c := p.cancellations(law); c != nil {
+			if _, c := p.hidden(law); c != nil {
 				t.Error(c)
 			}
 			// The report's peak |S| and the proof's are computed on different ways.

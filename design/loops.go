@@ -48,6 +48,7 @@ type Loops struct {
 	Margins        *LoopMargins   `json:"margins"`
 	Forms          []FormResult   `json:"forms,omitempty"` // what each step of simplicity costs
 	Sampling       *Sampling      `json:"sampling,omitempty"`
+	Hidden         *HiddenMode    `json:"hidden_mode,omitempty"` // nil: none was found
 	Promise        *Promise       `json:"promise"`
 	FirstClosure   *FirstClosure  `json:"first_closure"`
 	Verdict        string         `json:"verdict"`

@@ -305,21 +305,26 @@ func forbidden(model *ident.Model, settling float64) []region {
 		if r.Im < 0 || !r.Unstable && r.ProbabilityUnstable < 0.025 {
 			continue
 		}
-		half := math.Max(2*r.ReSD, 2*r.ImSD)
-		if r.Im == 0 && !math.IsInf(r.Re95.Lo, 0) && !math.IsInf(r.Re95.Hi, 0) {
-			half = math.Max(r.Re95.Hi-r.Re, r.Re-r.Re95.Lo)
-		}
-		size := math.Hypot(r.Re, r.Im)
-		if math.IsNaN(half) || math.IsInf(half, 0) {
-			half = size
-		}
-		reg := region{complex(r.Re, r.Im), half + cancelMargin*size, fmt.Sprintf("%.4g rad/s", r.Re)}
-		if r.Im != 0 {
-			reg.pole = fmt.Sprintf("%.4g ± %.4gi rad/s", r.Re, r.Im)
-		}
-		out = append(out, reg)
+		out = append(out, regionOf(r))
 	}
 	return append(out, region{0, 0.02 / settling, "s = 0, the integrator"})
+}
+
+// regionOf returns the 95 % region of a pole or zero, widened.
+func regionOf(r ident.Root) region {
+	half := math.Max(2*r.ReSD, 2*r.ImSD)
+	if r.Im == 0 && !math.IsInf(r.Re95.Lo, 0) && !math.IsInf(r.Re95.Hi, 0) {
+		half = math.Max(r.Re95.Hi-r.Re, r.Re-r.Re95.Lo)
+	}
+	size := math.Hypot(r.Re, r.Im)
+	if math.IsNaN(half) || math.IsInf(half, 0) {
+		half = size
+	}
+	reg := region{complex(r.Re, r.Im), half + cancelMargin*size, fmt.Sprintf("%.4g rad/s", r.Re)}
+	if r.Im != 0 {
+		reg.pole = fmt.Sprintf("%.4g ± %.4gi rad/s", r.Re, r.Im)
+	}
+	return reg
 }
 
 // cancelled returns the region in which a zero lies, or nil.

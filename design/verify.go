@@ -6,16 +6,15 @@ import (
 	"fmt"
 	"math"
 	"math/cmplx"
-	"slices"
 
 	"steadyrig/data"
-	"steadyrig/fit/lti"
 	"steadyrig/ident"
 )
 
-// Verify judges given loops, the tool's own or the user's, against a model and a rig file: bounds, zeros that would
-// cancel an unstable pole, margins and the promise. Controllers in s are brought to the sample period first, by the best mapping. The result is a copy with those parts made anew. As with Design,
-// a refusal comes with the result. Errors without a result: loops that do not fit the rig file.
+// Verify judges given loops, the tool's own or the user's, against a model and a rig file: bounds, hidden modes,
+// margins and the promise. Controllers in s are brought to the sample period first, by the best mapping. The result is a
+// copy with those parts made anew. As with Design, a refusal comes with the result. Errors without a result: loops that
+// do not fit the rig file.
 func Verify(ctx context.Context, model *ident.Model, rig *data.Rig, loops *Loops, opt Options) (*Loops, error) {
 	if loops.Inner == nil {
 		panic(noInner)
@@ -49,7 +48,8 @@ func Verify(ctx context.Context, model *ident.Model, rig *data.Rig, loops *Loops
 	if err := ctx.Err(); err != nil {
 		return nil, err
 	}
-	hidden := p.cancellations(law)
+	var hidden *ident.RefusedError
+	l.Hidden, hidden = p.hidden(law)
 	if l.Margins, err = p.margins(law, model.TF()); err != nil {
 		return nil, err
 	}
@@ -86,41 +86,23 @@ func (p *problem) whyLost(l *Loops) string {
 	if l.Margins.PlantInput.Stable && l.Margins.InnerAlone.Stable {
 		return ""
 	}
+	if f := l.LTI().Prefilter; f != nil {
+		for _, z := range f.Poles() {
+			if !(cmplx.Abs(z) < 1-stableWithin) {
+				return fmt.Sprintf("do not close these loops: the prefilter has a pole at z = %s, and stands in no loop that could hold it", rateText(z))
+			}
+		}
+	}
 	turned := *l.LTI()
 	turned.Inner.Num = turned.Inner.Num.Scale(-1)
 	both, _, err := p.newProver(&turned).holds(p.model.TF(), &p.nominal)
 	switch {
 	case err == nil && both:
 		return "do not close these loops: the inner controller has the wrong sign, as with its numerator's sign turned round the nominal plant is held; see the law in the file"
-	case hiddenPole(l) != "":
-		return "do not close these loops: " + hiddenPole(l)
 	case l.Margins.PlantInput.Stable:
 		return "do not close these loops: the inner loop alone does not hold the nominal plant, and is all there is while the outer one is clamped or off; make the inner controller stabilise by itself"
 	}
 	return "do not close these loops: they do not hold even the nominal plant; check coefficients, powers of z^-1 and sample period against the law in the file, or let design find the loops"
-}
-
-// hiddenPole names a pole of a controller outside the unit circle with a zero upon it: what it does never shows in the
-// loop, and grows. Empty if there is none.
-func hiddenPole(l *Loops) string {
-	law := l.LTI()
-	for i, g := range []*lti.DTF{&law.Inner, law.Outer} {
-		if g == nil {
-			continue
-		}
-		name := []string{"inner", "outer"}[i]
-		for _, pole := range g.Poles() {
-			if cmplx.Abs(pole) <= 1+onCircle {
-				continue
-			}
-			for _, zero := range g.Zeros() {
-				if cmplx.Abs(zero-pole) < 0.01*(cmplx.Abs(pole)-1) {
-					return fmt.Sprintf("the %s controller has an unstable pole of its own at z = %s, with a zero upon it that hides it: take both out", name, rateText(pole))
-				}
-			}
-		}
-	}
-	return ""
 }
 
 // Beyond these a difference of operating points is said, and makes the verdict weak.
@@ -172,49 +154,6 @@ func (p *problem) adopt(l *Loops) error {
 }
 
 func pairText(v [2]float64) string { return fmt.Sprintf("[%.4g, %.4g]", v[0], v[1]) }
-
-// cancellations returns the refusal of a law with a zero of K1 or of 1 + K2 in the region of a pole that may be
-// unstable, or a zero of K1 at the integrator of K2.
-func (p *problem) cancellations(law *lti.Law) *ident.RefusedError {
-	check := func(name string, roots []complex128, regions []region) *ident.RefusedError {
-		for _, z := range roots {
-			if cmplx.Abs(z) < 1e-6 {
-				continue // a zero at z = 0 is a sample of delay taken back, far from any pole
-			}
-			s := cmplx.Log(z) / complex(p.period, 0)
-			r := cancelled(regions, s)
-			if r == nil {
-				continue
-			}
-			text := fmt.Sprintf("a zero of %s at %s (z = %s) lies in the region of the plant's pole at %s", name, rateText(s), rateText(z), r.pole)
-			if r.center == 0 {
-				return &ident.RefusedError{What: fmt.Sprintf("a zero of %s at %s (z = %s) cancels the integrator of the outer loop: a steady error remains", name, rateText(s), rateText(z)),
-					Do: "move the zero away from z = 1"}
-			}
-			if pole := real(r.center); pole > 0 {
-				text += fmt.Sprintf(": a cancelled unstable mode does not show in the step response and grows by e every %.3g s, tenfold every %.3g s", 1/pole, math.Ln10/pole)
-			}
-			return &ident.RefusedError{What: text, Do: "move the zero well away; an unstable pole has to be moved by feedback, never cancelled"}
-		}
-		return nil
-	}
-	poles := p.regions[:len(p.regions)-1]
-	if r := check("the inner controller", law.Inner.Zeros(), poles); r != nil {
-		return r
-	}
-	if law.Outer == nil {
-		return nil
-	}
-	plus := lti.DTF{Num: law.Outer.Num.Add(law.Outer.Den), Den: law.Outer.Den, Period: law.Outer.Period}
-	if r := check("1 + K2, K2 the outer controller,", plus.Zeros(), poles); r != nil {
-		return r
-	}
-	integrates := slices.ContainsFunc(law.Outer.Poles(), func(z complex128) bool { return cmplx.Abs(z-1) < onCircle })
-	if integrates {
-		return check("the inner controller", law.Inner.Zeros(), p.regions[len(p.regions)-1:])
-	}
-	return nil
-}
 
 func rateText(z complex128) string {
 	if imag(z) == 0 {

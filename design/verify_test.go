@@ -1,6 +1,7 @@
 package design
 
 import (
+	"cmp"
 	"errors"
 	"math"
 	"math/cmplx"
@@ -43,7 +44,8 @@ func TestVerifyRefusesCancellation(t *testing.T) {
 	m := r.model(t)
 	for _, zero := range []float64{1.01, 1, 0.99} {
 		inner := lti.Tustin(lti.TF{Num: lti.Poly{-zero, 1}, Den: lti.Poly{1, 1}}, period)
-		outer := lti.Tustin(lti.TF{Num: lti.Poly{1, 0.5}, Den: lti.Poly{0, 1}}, period)
+		outer := lti.Tustin(lti.TF{Num: lti.Poly{4, 1}, Den: lti.Poly{0, 1}}, period)
+		pre := lti.Tustin(lti.TF{Num: lti.Poly{1}, Den: lti.Poly{1, 0.25}}, period)
 		law := &lti.Law{Inner: inner}
 		loops, err := lti.NewTwoLoops(plant, 0, law)
 		if err != nil {
@@ -55,15 +57,35 @@ func TestVerifyRefusesCancellation(t *testing.T) {
 		}
 		// s^2 + 4s + 4(-zero) - 1: 1e-3 for the sampling, half a millisecond of delay.
 		near(t, "growing pole", fastest, -2+math.Sqrt(5+4*zero), 1e-3)
+		// Until the settling time and a quarter more the reference step looks as the spec wants it.
+		ref := make([]float64, 2500)
+		for k := range ref {
+			ref[k] = r.spec.Step
+		}
+		tr, err := lti.Run{Plant: plant, Period: period, Law: &lti.Law{Inner: inner, Outer: &outer, Prefilter: &pre}, Steps: len(ref), Reference: ref}.Simulate()
+		if err != nil {
+			t.Fatal(err)
+		}
+		for k, y := range tr.YTrue {
+			if over := y/r.spec.Step - 1; over > r.spec.Overshoot || k >= 2000 && math.Abs(over) > r.spec.Band {
+				t.Fatalf("zero at %v: the step does not look perfect: %.3g after %.3g s", zero, y/r.spec.Step, float64(k)*period)
+			}
+		}
 		l := lawLoops(inner)
 		l.Outer = &Block{Discrete: Rational{outer.Num, outer.Den}}
+		l.Prefilter = &Block{Discrete: Rational{pre.Num, pre.Den}}
 		l.pointMissing = true
 		got, err := Verify(t.Context(), m, r.rig(), l, Options{Seed: 1, Plants: 60})
 		var refused *ident.RefusedError
 		if !errors.As(err, &refused) || got.Verdict != Refused {
 			t.Fatalf("zero at %v: %v", zero, err)
 		}
-		if !strings.Contains(refused.What, "grows by e every 1 s") || got.Promise.Stable != 0 {
+		// Both loops closed, L = 4 (s - zero)/((s-1)(s+1)) (1 + (s+4)/s): s^3 + 8 s^2 + (15 - 8 zero) s - 16 zero has its
+		// unstable root in the rate; half a millisecond of delay is left.
+		cubic := lti.Poly{-16 * zero, 15 - 8*zero, 8, 1}
+		root := slices.MaxFunc(cubic.Roots(), func(a, b complex128) int { return cmp.Compare(real(a), real(b)) })
+		near(t, "rate of the mode", got.Hidden.Growth.Rate[0], real(root), 2e-3)
+		if !strings.Contains(refused.What, "grows by e every") || !strings.Contains(refused.What, "noise alone takes") || got.Promise.Stable != 0 {
 			t.Errorf("zero at %v: %q, %d of %d stable", zero, refused.What, got.Promise.Stable, got.Promise.Plants)
 		}
 	}
@@ -87,16 +109,16 @@ func TestVerifySeesOuterCancellation(t *testing.T) {
 	law := &lti.Law{Inner: lti.Gain(1, period)}
 	outer := lti.Tustin(lti.TF{Num: lti.Poly{-1}, Den: lti.Poly{0, 1}}, period) // 1 + K2 = (s - 1)/s
 	law.Outer = &outer
-	if r := p.cancellations(law); r == nil || !strings.Contains(r.What, "1 + K2") {
+	if _, r := p.hidden(law); r == nil || !strings.Contains(r.What, "1 + K2") {
 		t.Errorf("%v", r)
 	}
 	outer = lti.Tustin(lti.TF{Num: lti.Poly{1}, Den: lti.Poly{0, 1}}, period)
-	if r := p.cancellations(law); r != nil {
+	if _, r := p.hidden(law); r != nil {
 		t.Errorf("a plain integrator: %v", r)
 	}
 	// A zero of K1 at the integrator of K2.
 	law.Inner = lti.Tustin(lti.TF{Num: lti.Poly{1e-5, 1}, Den: lti.Poly{1, 0.1}}, period)
-	if r := p.cancellations(law); r == nil || !strings.Contains(r.What, "integrator") {
+	if _, r := p.hidden(law); r == nil || !strings.Contains(r.What, "integrator") {
 		t.Errorf("%v", r)
 	}
 }
