@@ -377,6 +377,7 @@ const (
 	streamBounds
 	streamProof
 	streamNoise
+	streamMargins
 )
 
 // stream returns the seed of one stream; attempt counts the proofs.

@@ -83,7 +83,7 @@ func Design(ctx context.Context, model *ident.Model, rig *data.Rig, opt Options)
 		}
 		aim = targets{0.88, 0.85}
 	}
-	if l.Margins, err = p.margins(l.LTI(), model.TF()); err != nil {
+	if l.Margins, err = p.allMargins(ctx, l.LTI(), opt); err != nil {
 		return nil, err
 	}
 	p.firstClosure(l, opt.Seed)

@@ -101,6 +101,19 @@ type LoopMargins struct {
 	PlantInput *Margins `json:"plant_input"` // both loops closed, loop gain G K1 (1 + K2)
 	InnerAlone *Margins `json:"inner_alone"` // what is left when the outer loop is clamped or off
 	OuterBreak *Margins `json:"outer_break"` // loop gain K2 G K1 / (1 + G K1); looks better than the loop is
+
+	Worst *WorstMargins `json:"worst"` // at the plant input, over drawn plants
+}
+
+// WorstMargins are the least margins over drawn plants, each from the plant that has it least; as in Margins.
+type WorstMargins struct {
+	Plants          int      `json:"plants"`
+	Stable          int      `json:"stable"` // of these; the others have no margin
+	GainUp          *float64 `json:"gain_up"`
+	GainDown        *float64 `json:"gain_down"`
+	PhaseDeg        *float64 `json:"phase_deg"`
+	Delay           *float64 `json:"delay"` // s
+	PeakSensitivity float64  `json:"peak_sensitivity"`
 }
 
 // Margins of one loop gain. GainUp and GainDown are factors.

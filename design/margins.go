@@ -1,10 +1,12 @@
 package design
 
 import (
+	"context"
 	"math"
 	"math/cmplx"
 
 	"steadyrig/fit/lti"
+	"steadyrig/ident"
 )
 
 // onCircle is the distance from the unit circle within which an open-loop pole counts as lying on it.
@@ -71,6 +73,63 @@ func (p *problem) margins(law *lti.Law, g lti.TF) (*LoopMargins, error) {
 		m.OuterBreak = marginsFile(lti.LoopMargins(t.OuterBreak, lo, hi, n, axis...), stable(t))
 	}
 	return m, nil
+}
+
+// marginDraws is the number of drawn plants over which the worst margins are taken.
+const marginDraws = 200
+
+// allMargins computes the margins about the nominal plant, and the worst over drawn plants.
+func (p *problem) allMargins(ctx context.Context, law *lti.Law, opt Options) (*LoopMargins, error) {
+	m, err := p.margins(law, p.model.TF())
+	if err != nil {
+		return nil, err
+	}
+	m.Worst, err = p.worstMargins(ctx, law, p.drawTFs(marginDraws, streamMargins, opt.Seed), opt.Workers)
+	return m, err
+}
+
+// worstMargins takes each margin at the plant input, both loops closed, from the drawn plant on which it is least. Plants
+// that the loops do not hold have none; they are counted.
+func (p *problem) worstMargins(ctx context.Context, law *lti.Law, draws []lti.TF, workers int) (*WorstMargins, error) {
+	each := make([]*Margins, len(draws))
+	first := p.newProver(law)
+	if err := ident.Each(ctx, len(draws), workers, func(i int) error {
+		g := draws[i]
+		pl, err := p.newPlant(g)
+		if err != nil {
+			return nil // nothing holds what cannot be sampled
+		}
+		if both, _, err := first.another().holds(g, &pl); err != nil || !both {
+			return err
+		}
+		t, err := lti.NewTwoLoops(g, p.compute, law)
+		if err != nil {
+			return err
+		}
+		n, axis := openPoles(p.period, pl.tf, &law.Inner, law.Outer)
+		each[i] = marginsFile(lti.LoopMargins(t.LoopAtInput, p.omega[1], math.Pi/p.period, n, axis...), true)
+		return nil
+	}); err != nil {
+		return nil, err
+	}
+	w := &WorstMargins{Plants: len(draws)}
+	lesser := func(a **float64, b *float64, sign float64) {
+		if b != nil && (*a == nil || sign*(*b) < sign*(**a)) {
+			*a = b
+		}
+	}
+	for _, m := range each {
+		if m == nil {
+			continue
+		}
+		w.Stable++
+		lesser(&w.GainUp, m.GainUp, 1)
+		lesser(&w.GainDown, m.GainDown, -1)
+		lesser(&w.PhaseDeg, m.PhaseDeg, 1)
+		lesser(&w.Delay, m.Delay, 1)
+		w.PeakSensitivity = math.Max(w.PeakSensitivity, m.PeakSensitivity)
+	}
+	return w, nil
 }
 
 // stableWithin is how far inside the unit circle a closed-loop pole has to lie to count as stable: a mode that

@@ -50,7 +50,7 @@ func Verify(ctx context.Context, model *ident.Model, rig *data.Rig, loops *Loops
 	}
 	var hidden *ident.RefusedError
 	l.Hidden, hidden = p.hidden(law)
-	if l.Margins, err = p.margins(law, model.TF()); err != nil {
+	if l.Margins, err = p.allMargins(ctx, law, opt); err != nil {
 		return nil, err
 	}
 	if l.Promise, err = p.prove(ctx, law, opt, 1); err != nil {
