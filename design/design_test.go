@@ -324,19 +324,22 @@ func TestModelThatItsTestsReject(t *testing.T) {
 	r := testRigs()[1]
 	own := designed(t, r.name)
 	for _, c := range []struct {
-		whiteness, cross, memories float64
-		verdict, first             string
+		whiteness, cross, linearity, memories float64
+		verdict, first                        string
 	}{
-		{0.3, 0.4, 500, Sound, ""},
-		{1e-8, 0.4, 500, Weak, "structure that the log contradicts"},
-		{0.3, 1e-8, 500, Weak, "structure that the log contradicts"},
-		{0.3, 0.4, 12, Weak, "intervals that are optimistic"},
-		{1e-30, 0.4, 500, Refused, ""},
-		{0.3, 0, 500, Refused, ""},
+		{0.3, 0.4, 0.2, 500, Sound, ""},
+		{1e-8, 0.4, 0.2, 500, Weak, "structure that the log contradicts"},
+		{0.3, 1e-8, 0.2, 500, Weak, "structure that the log contradicts"},
+		{0.3, 0.4, 0.2, 12, Weak, "intervals that are optimistic"},
+		{0.3, 0.4, 1e-5, 500, Weak, "motion as large as in the log, where the output moved by 0.3 "},
+		{0.3, 0.4, 0, 500, Weak, "motion as large as in the log"},
+		{1e-30, 0.4, 0.2, 500, Refused, ""},
+		{0.3, 0, 0.2, 500, Refused, ""},
 	} {
 		m := r.model(t)
-		m.Evidence.Residuals = ident.Residuals{Lags: 20, Whiteness: c.whiteness, CrossInput: c.cross}
+		m.Evidence.Residuals = ident.Residuals{Lags: 20, Whiteness: c.whiteness, CrossInput: c.cross, Linearity: c.linearity}
 		m.Evidence.Memories = c.memories
+		m.Evidence.ExplainedShare = 1 - m.Noise.SD*m.Noise.SD/(0.3*0.3) // of an output with a deviation of 0.3
 		for name, run := range map[string]func() (*Loops, error){
 			"design": func() (*Loops, error) { return Design(t.Context(), m, r.rig(), Options{Seed: 1, Plants: 700}) },
 			"verify": func() (*Loops, error) {

@@ -71,8 +71,10 @@ func pose(model *ident.Model, rig *data.Rig) (*problem, error) {
 	if len(model.Plant.Denominator) == 0 {
 		return p, &ident.RefusedError{What: "the model holds no plant: the fit was refused", Do: "take a log as the fit's refusal says, and fit again"}
 	}
-	if text := doubtful(model); text != "" {
-		p.doubts = append(p.doubts, text)
+	for _, text := range []string{doubtful(model), nonlinear(model)} {
+		if text != "" {
+			p.doubts = append(p.doubts, text)
+		}
 	}
 	p.rounds = SignalPair(model.Evidence.Resolution)
 	if q := rig.Limits.InputResolution; q != nil {
@@ -122,6 +124,23 @@ func doubtful(m *ident.Model) string {
 		return fmt.Sprintf("the promise rests on intervals that are optimistic: the log is only %.0f predictor memories long, %d are the least", e.Memories, fewestMemories)
 	}
 	return ""
+}
+
+// linearFails is the probability below which the model's test of linearity speaks against it, as in its own verdict.
+const linearFails = 1e-3
+
+// nonlinear says about what motion a promise on a rig that answers nonlinearly speaks; empty if no test found it so.
+func nonlinear(m *ident.Model) string {
+	e := &m.Evidence
+	if e.Residuals.Lags == 0 || !(e.Residuals.Linearity < linearFails) {
+		return ""
+	}
+	text := fmt.Sprintf("the rig answers nonlinearly (probability %.2g), so the promise speaks only of motion as large as in the log", e.Residuals.Linearity)
+	// The explained share is 1 - var(prediction error)/var(output).
+	if sd := m.Noise.SD / math.Sqrt(1-e.ExplainedShare); sd > 0 && !math.IsInf(sd, 0) {
+		text += fmt.Sprintf(", where the output moved by %.3g (standard deviation)", sd)
+	}
+	return text
 }
 
 // contradicted refuses a model whose structure its log plainly contradicts.
