@@ -40,7 +40,8 @@
 //  8. First closure: levels, hand-over and what faults look like, simulated at the nominal plant.
 //
 // Controllers are tuned in continuous parameters and mapped by Tustin's rule; plants are sampled exactly, with
-// delays of any length. The tuner works on plain arrays (its counts of unstable poles are by the argument principle
+// delays of any length. What is judged while tuning is the mapped controller in the sampled loop, so that this is a
+// direct discrete design in other coordinates: the mapping approximates nothing and costs nothing. The tuner works on plain arrays (its counts of unstable poles are by the argument principle
 // on a grid); every verdict is on the eigenvalues of the realised, interconnected blocks and on simulated runs. Only
 // where a plant has more than 24 states, delay included, does the argument principle decide in the proof as well.
 //
@@ -51,8 +52,9 @@
 // the interconnection, or of the inner loop alone, is not inside the unit circle, or when the step reaches the trip
 // limits. A failed proof may be tried once more, with tighter targets and fresh plants; it then has half of the
 // error, 2.5 %. The promise is conditional on the model's structure and covariance. A maximum over draws is not a
-// theorem for the whole set. Where the model's residual tests fail (below 1e-6), or its log is shorter than 20 predictor
-// memories, the verdict is weak at most; below 1e-12 the structure is taken as wrong and there is no promise.
+// theorem for the whole set. Where the model's residual tests fail (below 1e-6), or its test of linearity (below 1e-3),
+// or its log is shorter than 20 predictor memories, the verdict is weak at most; residual tests below 1e-12 mean that
+// the structure is wrong, and there is no promise.
 //
 // # The loop that will run
 //
@@ -80,7 +82,19 @@
 // # Zeros that are not allowed
 //
 // No zero of K1 or of 1 + K2 may lie within the 95 % region of a pole that may be unstable, widened by a quarter of
-// its size; none of K1 at the integrator of K2. Verify applies the same rule to loops of any origin.
+// its size; none of K1 at the integrator of K2. Verify applies the same rule to loops of any origin, and to unstable
+// poles of controllers under zeros of the plant, of the other controller or of their own. It follows the closed loop's
+// mode that such a pair leaves: an eigenvalue of the realised and joined blocks, its residue from a step at the plant
+// input and from the identified noise, and the seconds until either has driven the output to its trip or the input to
+// its limit. Where the loop is stable about the nominal plant, these are figures of the plant with its pole at the zero.
+//
+// # The user's own loops
+//
+// Controllers come as coefficients in z^-1 or as expressions (ParseController), in which no factor is ever cancelled.
+// One in s is mapped by Tustin's rule, the same prewarped at crossover, matched poles and zeros, step and ramp invariance;
+// taken is the mapping whose sampled closed loop has the least |S - Sc|, Sc that of the continuous controller, among those
+// that hold the nominal plant. Loops read from a file and not verified are mapped by Tustin's rule.
+//
 // Their limits and rate count as far as the rig file's allow, and the trips stay where the rig file has them when their
 // operating point is another.
 //

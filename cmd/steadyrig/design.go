@@ -3,6 +3,7 @@ package main
 import (
 	"context"
 	"errors"
+	"fmt"
 
 	"github.com/spf13/cobra"
 
@@ -43,15 +44,28 @@ loops.json, or the file that --out names.`,
 
 func newVerify(a *app) *cobra.Command {
 	var s settings
+	var own data.Controllers
 	cmd := &cobra.Command{
-		Use:   "verify RIG.toml MODEL.json LOOPS.json",
+		Use:   "verify RIG.toml MODEL.json [LOOPS.json]",
 		Short: "Prove a pair of loops, the tool's or your own",
-		Long: `verify judges loops against a model: bounds, zeros that would cancel an
-unstable pole, margins, and the promise over the plants that the data allow.
-The loops may be your own, with discrete or continuous coefficients. --out
-writes them with margins and promise made anew.`,
-		Example: "  steadyrig verify rig.toml model.json loops.json",
-		Args:    wants(3, 3, "a rig file, a model and loops"),
+		Long: `verify judges loops against a model: bounds, hidden modes and zeros that would
+cancel an unstable pole, margins, and the promise over the plants that the data
+allow. The loops are those of LOOPS.json or, without it, of [loops] in the rig
+file; --inner, --outer and --prefilter replace single ones. --out writes them
+with margins and promise made anew.
+
+A controller is a rational expression in s or in z, or lists of coefficients:
+
+  2.4*(s + 30)/(0.002*s + 1)        (2.4 - 2.2 z^-1)/(1 - 0.4 z^-1)
+  [2.4, 72] / [0.002, 1] in s       falling powers of s
+  [2.4, -2.2] / [1, -0.4] in z^-1   rising powers of 1/z ("in z": falling of z)
+
+One in s is brought to the sample period by the mapping that changes the closed
+loop least.`,
+		Example: `  steadyrig verify rig.toml model.json loops.json
+  steadyrig verify rig.toml model.json --inner "2.4*(s+30)/(0.002*s+1)" \
+      --outer "0.5 + 2/s"`,
+		Args: wants(2, 3, "a rig file and a model, and loops or --inner"),
 		RunE: func(cmd *cobra.Command, args []string) error {
 			if err := a.checkTarget(&s, ""); err != nil {
 				return err
@@ -60,7 +74,7 @@ writes them with margins and promise made anew.`,
 			if err != nil {
 				return err
 			}
-			given, _, err := load(a, args[2], design.ReadLoops)
+			given, err := a.loopsToVerify(rig, args[2:], &own, &s)
 			if err != nil {
 				return err
 			}
@@ -78,7 +92,66 @@ writes them with margins and promise made anew.`,
 	}
 	s.add(cmd, "write the loops with margins and promise made anew here")
 	s.addSeed(cmd)
+	f := cmd.Flags()
+	f.StringVar(&own.Inner, "inner", "", "your inner `controller`, in s or z")
+	f.StringVar(&own.Outer, "outer", "", "your outer `controller`; \"none\": no outer loop")
+	f.StringVar(&own.Prefilter, "prefilter", "", "your `prefilter` of the reference; 1: none")
 	return cmd
+}
+
+// noLoop is what --outer takes for no outer loop.
+const noLoop = "none"
+
+// loopsToVerify reads the loops of a file or, without one, of the rig file, each controller replaced by that of its
+// flag.
+func (a *app) loopsToVerify(rig *data.Rig, files []string, flags *data.Controllers, s *settings) (*design.Loops, error) {
+	if err := rig.NeedDesign(); err != nil {
+		return nil, inputError(err)
+	}
+	loops := design.NewLoops(rig.Loop.SamplePeriod)
+	var written data.Controllers // in the rig file
+	switch {
+	case len(files) > 0:
+		var err error
+		if loops, _, err = load(a, files[0], design.ReadLoops); err != nil {
+			return nil, err
+		}
+		if rig.Loops != nil {
+			a.warn(s, []string{fmt.Sprintf("the loops are those of %s: [loops] of the rig file is not looked at", files[0])})
+		}
+	case rig.Loops != nil:
+		written = *rig.Loops
+		loops.OuterLimits = written.OuterLimits
+	}
+	for _, c := range []struct{ name, flag, text string }{
+		{"inner", flags.Inner, written.Inner}, {"outer", flags.Outer, written.Outer}, {"prefilter", flags.Prefilter, written.Prefilter},
+	} {
+		text, fail := c.flag, func(err error) error { return callErrorf("--%s, %w", c.name, err) }
+		if text == "" {
+			text = c.text
+			fail = func(err error) error {
+				key := "loops." + c.name
+				return inputError(&data.ParseError{File: rig.File(), Line: rig.Line(key), Err: fmt.Errorf("%s, %w", key, err)})
+			}
+		}
+		if text == "" {
+			continue
+		}
+		var block *design.Block
+		if text != noLoop || c.name != "outer" {
+			var err error
+			if block, err = design.ParseController(text); err != nil {
+				return nil, fail(err)
+			}
+		}
+		if err := loops.Set(c.name, block); err != nil {
+			return nil, fail(err)
+		}
+	}
+	if loops.Inner == nil {
+		return nil, callErrorf("no loops to verify: name a LOOPS.json, write [loops] in the rig file, or give --inner; see steadyrig verify --help")
+	}
+	return loops, nil
 }
 
 // design designs loops. A refusal comes with the loops; any other error without them.

@@ -61,6 +61,9 @@ func showControllers(p *page, l *design.Loops, u data.Units) {
 		if b.IsOne() {
 			return
 		}
+		if form == "" {
+			form = b.Given
+		}
 		if form != "" {
 			p.item(name, form)
 			name = ""
@@ -76,6 +79,7 @@ func showControllers(p *page, l *design.Loops, u data.Units) {
 	if l.OuterLimits != nil {
 		p.item("outer limits", words.Unit(words.Number(l.OuterLimits[0])+" to "+words.Number(l.OuterLimits[1]), u.Output)+", deviation")
 	}
+	showMappings(p, l.Sampling)
 	if len(l.Forms) == 0 {
 		return
 	}
@@ -90,6 +94,30 @@ func showControllers(p *page, l *design.Loops, u data.Units) {
 		peak, noise = append(peak, words.Number(f.PeakSensitivity)), append(noise, words.Unit(words.Number(f.InputNoise), u.Input))
 	}
 	p.table(columns("loop", loop, "form", form, ">peak |S|", peak, ">input noise", noise, " ", chosen))
+}
+
+// showMappings prints how controllers in s were brought to the sample period.
+func showMappings(p *page, s *design.Sampling) {
+	if s == nil || s.Mapping == "" {
+		return
+	}
+	head := "From s to z: no mapping holds the nominal plant"
+	if s.ContinuousPeak > 0 {
+		head = fmt.Sprintf("From s to z; in continuous time peak |S| is %s", words.Brief(s.ContinuousPeak))
+	}
+	p.heading(head)
+	var name, peak, off, chosen []string
+	for _, m := range s.Mappings {
+		mark, figure := "", words.Brief(m.PeakSensitivity)
+		if m.Chosen {
+			mark = "chosen"
+		}
+		if !m.Stable {
+			figure = "lost"
+		}
+		name, peak, off, chosen = append(name, m.Mapping), append(peak, figure), append(off, words.Brief(m.Mismatch)), append(chosen, mark)
+	}
+	p.table(columns("mapping", name, ">peak |S|", peak, ">S changes by at most", off, " ", chosen))
 }
 
 func showMargins(p *page, l *design.Loops) {
@@ -112,7 +140,17 @@ func showMargins(p *page, l *design.Loops) {
 		peak = append(peak, words.Brief(m.m.PeakSensitivity))
 		cross = append(cross, words.Brief(m.m.Crossover))
 	}
+	if m := l.Margins.Worst; m != nil && m.Stable > 0 {
+		where = append(where, fmt.Sprintf("plant input, worst of %d", m.Plants))
+		gain = append(gain, factor(m.GainDown)+" to "+factor(m.GainUp))
+		phase = append(phase, orAny(m.PhaseDeg, func(x float64) string { return words.Brief(x) + "°" }))
+		delay = append(delay, orAny(m.Delay, words.Seconds))
+		peak, cross = append(peak, words.Brief(m.PeakSensitivity)), append(cross, "")
+	}
 	p.table(columns("loop", where, ">gain times", gain, ">phase", phase, ">delay", delay, ">peak |S|", peak, ">crossing", cross))
+	if m := l.Margins.Worst; m != nil && m.Stable < m.Plants {
+		p.line("  %d of %d drawn plants are lost and have no margin.", m.Plants-m.Stable, m.Plants)
+	}
 }
 
 func factor(x *float64) string { return orAny(x, words.Brief) }

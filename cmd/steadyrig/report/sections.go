@@ -316,6 +316,9 @@ func loopsSection(in Input) section {
 		if b.block.IsOne() {
 			continue
 		}
+		if b.form == "" {
+			b.form = b.block.Given
+		}
 		continuous := ""
 		if c := b.block.Continuous; c != nil {
 			continuous = "(" + words.Polynomial(c.Numerator, "s") + ") / (" + words.Polynomial(c.Denominator, "s") + ")"
@@ -354,6 +357,11 @@ func marginsSection(in Input) section {
 				t.Rows = append(t.Rows, []string{m.name, strings.TrimPrefix(factors(m.m), "times "), orAny(m.m.PhaseDeg, func(x float64) string { return words.Brief(x) + "°" }),
 					orAny(m.m.Delay, words.Seconds), words.Brief(m.m.PeakSensitivity), words.Brief(m.m.PeakSensitivityAt), words.Brief(m.m.Crossover)})
 			}
+		}
+		if w := l.Margins.Worst; w != nil && w.Stable > 0 {
+			m := &design.Margins{GainUp: w.GainUp, GainDown: w.GainDown}
+			t.Rows = append(t.Rows, []string{fmt.Sprintf("plant input, worst of %d drawn plants", w.Plants), strings.TrimPrefix(factors(m), "times "), orAny(w.PhaseDeg, func(x float64) string { return words.Brief(x) + "°" }),
+				orAny(w.Delay, words.Seconds), words.Brief(w.PeakSensitivity), "", ""})
 		}
 		s.Tables = []table{t}
 	}
