@@ -47,9 +47,13 @@ func Design(ctx context.Context, model *ident.Model, rig *data.Rig, opt Options)
 	if err != nil {
 		return l.passOn(err)
 	}
-	l.Bounds = p.bounds(ctx, p.drawTFs(boundDraws, streamBounds, opt.Seed))
+	draws := p.drawTFs(boundDraws, streamBounds, opt.Seed)
+	l.Bounds = p.bounds(ctx, draws)
 	if err := ctx.Err(); err != nil {
 		return nil, err
+	}
+	if r := p.unheld(draws); r != nil {
+		return l.refuse(r)
 	}
 	if r := outOfReach(l.Bounds); r != nil {
 		return l.refuse(r)
@@ -86,6 +90,7 @@ func Design(ctx context.Context, model *ident.Model, rig *data.Rig, opt Options)
 	if l.Margins, err = p.allMargins(ctx, l.LTI(), opt); err != nil {
 		return nil, err
 	}
+	p.relaxed(l)
 	p.firstClosure(l, opt.Seed)
 	p.conclude(l)
 	if r := l.Promise.broken(&p.spec); r != nil {

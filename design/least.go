@@ -4,6 +4,7 @@ import (
 	"math"
 	"math/cmplx"
 	"slices"
+	"sort"
 
 	"gonum.org/v1/gonum/mat"
 
@@ -22,6 +23,107 @@ func LeastPeakDelay(p, tau float64) float64 { return math.Exp(math.Max(0, p) * t
 //
 // Source: Freudenberg & Looze (1985), IEEE Trans. Automatic Control 30, 555-565; Zames & Francis (1983).
 func LeastPeakZero(p, z float64) float64 { return (z + p) / math.Abs(z-p) }
+
+// leastPeakZeros returns the least peak of |S| and of |T| for unstable poles and right-half-plane zeros, any number of
+// them, and a delay tau. By the maximum modulus |S| is at least the product of |z + p|/|z - p| over all poles at each
+// zero, and |T| that over all zeros at each pole times e^{p tau}; the least peaks of S and T are equal.
+//
+// Source: Freudenberg & Looze (1985); Skogestad & Postlethwaite (2005), Multivariable Feedback Control, sec. 5.3.
+func leastPeakZeros(poles, zeros []complex128, tau float64) float64 {
+	factor := func(a, b complex128) float64 { return cmplx.Abs(a+cmplx.Conj(b)) / cmplx.Abs(a-b) }
+	peak := 1.0
+	for _, z := range zeros {
+		s := 1.0
+		for _, p := range poles {
+			s *= factor(z, p)
+		}
+		peak = math.Max(peak, s)
+	}
+	for _, p := range poles {
+		t := math.Exp(real(p) * tau)
+		for _, z := range zeros {
+			t *= factor(p, z)
+		}
+		peak = math.Max(peak, t)
+	}
+	return peak
+}
+
+// LeastUndershoot returns the least that the output moves the wrong way, as a share of its final value, when it settles
+// within band from the time settling (s) on, for a plant with a real zero z > 0 (rad/s): (1 - band)/(e^{z settling} - 1).
+// No controller, no second degree of freedom and no prefilter changes that: Y(z) = G(z) U(z) = 0 for every input that
+// is bounded. A delay of the plant is taken off settling by the caller.
+//
+// Source: Middleton (1991), Trade-offs in linear control system design, Automatica 27, 281-292; Seron, Braslavsky &
+// Goodwin (1997), Fundamental Limitations in Filtering and Control, sec. 1.3.
+func LeastUndershoot(z, settling, band float64) float64 {
+	if settling <= 0 {
+		return math.Inf(1)
+	}
+	return (1 - band) / math.Expm1(z*settling)
+}
+
+// leastOvershoot returns the least overshoot, as a share of the step, of any loop u = K (r - y) about a sampled plant
+// with a real pole z > 1 that settles within band from sample n on: its error obeys sum e[k] z^-k = 0, being 1 until
+// the first effect, at least 1 - authority sum |g| while the input's limits hold it back, and then at least minus the
+// overshoot, or minus the band. authority is the largest |u| per unit of step. +Inf if n is not past the first effect.
+//
+// Source: the sampled form of Middleton (1991), Automatica 27, 281-292; Seron, Braslavsky & Goodwin (1997), sec. 1.3.
+func leastOvershoot(pl *plant, z, n, band, authority float64) float64 {
+	steps := int(math.Ceil(n - 1e-9))
+	if steps <= pl.lag {
+		return math.Inf(1)
+	}
+	const far = 2             // the output could be there: an overshoot of 1
+	var least, upTo []float64 // the error's least value, falling; the sum of it z^-k over the samples before
+	reach, total, w := 0.0, 0.0, 1.0
+	for _, g := range pl.impulse(min(steps, 4000)) {
+		if reach += authority * math.Abs(g); reach > far {
+			break
+		}
+		least, upTo = append(least, 1-reach), append(upTo, total)
+		total, w = total+w*(1-reach), w/z
+	}
+	upTo = append(upTo, total)
+	rest := func(k int) float64 { return math.Pow(z, -float64(k)) / (1 - 1/z) } // sum of z^-j from j = k on
+	sum := func(over float64) float64 {
+		k := sort.Search(len(least), func(i int) bool { return least[i] <= -over })
+		return upTo[k] - over*(rest(k)-rest(steps)) - math.Min(over, band)*rest(steps)
+	}
+	lo, hi := 0.0, 1.0
+	for sum(hi) > 0 && hi < 1e6 {
+		hi *= 2
+	}
+	for range 50 {
+		if mid := (lo + hi) / 2; sum(mid) > 0 {
+			lo = mid
+		} else {
+			hi = mid
+		}
+	}
+	return hi
+}
+
+// leastKickPeak returns the least that the output moves after a unit step at the plant's input: the first answer to it
+// comes after twice the delay, and until then the plant is alone.
+func leastKickPeak(pl *plant) float64 {
+	peak, y := 0.0, 0.0
+	for _, g := range pl.impulse(2 * pl.lag) {
+		y += g
+		peak = math.Max(peak, math.Abs(y))
+	}
+	return peak
+}
+
+// impulse returns the first n samples of the plant's response to one sample of input.
+func (pl *plant) impulse(n int) []float64 {
+	g := make([]float64, n)
+	if n > pl.lag {
+		g[pl.lag] = 1
+		lti.DTF{Num: pl.num, Den: pl.den}.Filter(g[pl.lag:], g[pl.lag:])
+	}
+	return g
+}
 
 // LeastPeakBandwidth returns the least peak of |S| when S may differ from 1 only up to the rate wa (rad/s):
 // exp(pi sum(p)/wa) with sum(p) the sum of the real parts of the unstable poles. In a sampled loop wa is at most
@@ -104,7 +206,7 @@ func StronglyStabilisable(g lti.TF) bool {
 
 // mostPick is the largest delay in samples for which several poles are looked at together: the work grows with its
 // cube.
-const mostPick = 60
+const mostPick = 40
 
 // leastPeak returns the least peak |S| over all stabilising controllers of a sampled plant with d >= 1 samples
 // from the input to its first effect, its poles and zeros outside the unit circle given in z. One real pole and no
@@ -125,8 +227,8 @@ func leastPeak(d int, poles, zeros []complex128) float64 {
 		return peak
 	}
 	if d > mostPick {
-		// With one pole and the zeros left out of account the limit is lower, and holds all the same.
-		peak := 1.0
+		// Less delay, or one pole and no zero, has a lower limit, which holds all the same.
+		peak := leastPeakPick(mostPick, poles, zeros)
 		for _, z := range poles {
 			peak = math.Max(peak, math.Pow(cmplx.Abs(z), float64(d)))
 		}
@@ -165,7 +267,7 @@ func leastPeakPick(d int, poles, zeros []complex128) float64 {
 		for j := 1; j <= i && j < len(den); j++ {
 			g[i] -= den[j] * g[i-j]
 		}
-		g[i] /= den[0]
+		g[i] = complex(real(g[i]/den[0]), 0) // poles come in pairs
 	}
 	n := d + len(zeros)
 	gram, x := make([]complex128, n*n), make([]complex128, n*n) // gram[i,j] = <e_j, e_i>
@@ -207,23 +309,30 @@ func mulC(p, q []complex128) []complex128 {
 // operatorNorm returns the norm of the operator with matrix x in a basis with the given Gram matrix. A complex
 // matrix is handled as a real one of twice the size, which doubles each singular value.
 func operatorNorm(x, gram []complex128, n int) float64 {
+	isComplex := func(v complex128) bool { return imag(v) != 0 }
+	size := n
+	if slices.ContainsFunc(x, isComplex) || slices.ContainsFunc(gram, isComplex) {
+		size = 2 * n
+	}
 	realOf := func(c []complex128) *mat.Dense {
-		r := mat.NewDense(2*n, 2*n, nil)
+		r := mat.NewDense(size, size, nil)
 		for i := range n {
 			for j := range n {
 				v := c[i*n+j]
 				r.Set(i, j, real(v))
-				r.Set(n+i, n+j, real(v))
-				r.Set(i, n+j, -imag(v))
-				r.Set(n+i, j, imag(v))
+				if size > n {
+					r.Set(n+i, n+j, real(v))
+					r.Set(i, n+j, -imag(v))
+					r.Set(n+i, j, imag(v))
+				}
 			}
 		}
 		return r
 	}
 	gr := realOf(gram)
-	sym := mat.NewSymDense(2*n, nil)
-	for i := range 2 * n {
-		for j := i; j < 2*n; j++ {
+	sym := mat.NewSymDense(size, nil)
+	for i := range size {
+		for j := i; j < size; j++ {
 			sym.SetSym(i, j, (gr.At(i, j)+gr.At(j, i))/2)
 		}
 	}
@@ -237,14 +346,14 @@ func operatorNorm(x, gram []complex128, n int) float64 {
 	// Directions that hardly exist (a zero far out is nearly one more sample of delay) are left out: the result is
 	// then a little low, never high.
 	keep := 0
-	for keep < 2*n && values[keep] < 1e-10*values[2*n-1] {
+	for keep < size && values[keep] < 1e-10*values[size-1] {
 		keep++
 	}
-	m := 2*n - keep
-	half, inv := mat.NewDense(2*n, m, nil), mat.NewDense(2*n, m, nil)
+	m := size - keep
+	half, inv := mat.NewDense(size, m, nil), mat.NewDense(size, m, nil)
 	for c := range m {
 		s := math.Sqrt(values[keep+c])
-		for r := range 2 * n {
+		for r := range size {
 			half.Set(r, c, vec.At(r, keep+c)*s)
 			inv.Set(r, c, vec.At(r, keep+c)/s)
 		}

@@ -7,6 +7,8 @@ import (
 	"fmt"
 	"io"
 	"math"
+
+	"steadyrig/fit/lti"
 )
 
 // LoopsSchema is the schema name of loops.json.
@@ -89,11 +91,14 @@ type Bound struct {
 	Asked    *float64    `json:"asked"`     // nil: the spec asks nothing here
 	OK       bool        `json:"reachable"` // judged at the unfavourable end of the interval
 	Source   string      `json:"source"`
-	Advice   string      `json:"advice,omitempty"` // nearest spec within reach and what to change, when not reachable
+	Advice   string      `json:"advice,omitempty"`  // nearest spec within reach and what to change, when not reachable
+	Relaxed  string      `json:"relaxed,omitempty"` // why two loops with a prefilter are not held to it
 
-	key     string  // of the spec, that asks too much
-	nearest float64 // value of key at which this bound is kept; 0: none is
-	other   string  // what else helps
+	key      string   // of the spec, that asks too much
+	nearest  float64  // value of key at which this bound is kept; 0: none is
+	plants   []lti.TF // the drawn plants, from the unfavourable end on
+	other    string   // what to change at the rig
+	together string   // likewise, so that all broken bounds are kept
 }
 
 // LoopMargins are the margins of the sampled loop at three places.

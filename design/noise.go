@@ -209,6 +209,21 @@ func (p *problem) whole(dst []float64, rnd *rand.Rand) {
 	copy(dst, fourier.NewFFT(n).Sequence(nil, half))
 }
 
+// onMode is the standard deviation of what the disturbance takes of the input on the way of a mode x+ = a x + b (u + d),
+// a > 1: whoever brings the mode back has to make up for (1 - 1/a) sum a^-k d[k], which a constant d makes d. For white
+// noise through a lag, of correlation rho from sample to sample, the variance of that sum is a geometric series.
+func (q *noise) onMode(a, period float64) float64 {
+	v := 0.0
+	for _, part := range q.parts {
+		rho := 0.0
+		if part.rate > 0 {
+			rho = math.Exp(-part.rate * period)
+		}
+		v += part.sd * part.sd * (1 - 1/a) * (1 + rho/a) / ((1 + 1/a) * (1 - rho/a))
+	}
+	return math.Sqrt(v)
+}
+
 // sensorPSD is the variance density of the sensor's part of v at frequency j on a plant, times |A|^2.
 func (q *noise) sensorPSD(j int, a complex128) float64 {
 	if q.split {

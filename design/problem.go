@@ -4,6 +4,7 @@ import (
 	"fmt"
 	"math"
 	"math/cmplx"
+	"strings"
 
 	"steadyrig/data"
 	"steadyrig/fit/lti"
@@ -203,6 +204,44 @@ const mostLag = 500
 // hopelessPeak is a peak |S| beyond which its figure says nothing: no spec asks for more.
 const hopelessPeak = 10.0
 
+// unheld refuses a plant that no stable controller stabilises, and a model that allows more of them than a promise may
+// miss. An unstable one would do, but not in a loop whose input has limits: while it is at a limit nothing holds the
+// controller itself.
+func (p *problem) unheld(draws []lti.TF) *ident.RefusedError {
+	n := 0
+	for _, g := range draws {
+		if !StronglyStabilisable(g) {
+			n++
+		}
+	}
+	const why = "an odd number of real unstable poles lies between two real right-half-plane zeros, infinity counted (parity interlacing, Youla, Bongiorno & Lu (1974)), and an unstable controller is lost whenever the input is at a limit"
+	nominal := StronglyStabilisable(p.model.TF())
+	if nominal && float64(n) <= (1-PromisedShare)*float64(len(draws)) {
+		return nil
+	}
+	if nominal {
+		return &ident.RefusedError{
+			What: fmt.Sprintf("no stable controller holds %d of %d plants that the data allow: %s", n, len(draws), why),
+			Do:   "take a longer log, which tells the right-half-plane zero and the unstable pole apart, or move the sensor or the actuator, which moves the zero",
+		}
+	}
+	return &ident.RefusedError{
+		What: fmt.Sprintf("no stable controller holds this plant, poles %s, zeros %s: %s", rootsText(p.model.TF().Poles()), rootsText(p.model.TF().Zeros()), why),
+		Do:   "move the sensor or the actuator, which moves the zeros",
+	}
+}
+
+// rootsText lists the roots in the right half-plane, in rad/s.
+func rootsText(roots []complex128) string {
+	text := ""
+	for _, s := range roots {
+		if real(s) >= 0 && imag(s) == 0 {
+			text += fmt.Sprintf(" and %.4g", real(s))
+		}
+	}
+	return strings.TrimPrefix(text, " and ") + " rad/s"
+}
+
 // tooLate refuses a delay of too many samples before anything of that size is built.
 func (p *problem) tooLate() error {
 	g := p.model.TF()
@@ -261,8 +300,8 @@ type plant struct {
 	unstable int          // poles outside the unit circle
 }
 
-// newPlant samples a plant behind the hold.
-func (p *problem) newPlant(g lti.TF) (plant, error) {
+// behindHold samples a plant behind the hold, without its values at the frequencies.
+func (p *problem) behindHold(g lti.TF) (plant, error) {
 	g.Delay += p.compute
 	if g.Delay > mostLag*p.period {
 		return plant{}, fmt.Errorf("a delay of %.4g s is more than %d samples", g.Delay, mostLag)
@@ -280,14 +319,22 @@ func (p *problem) newPlant(g lti.TF) (plant, error) {
 		return plant{}, fmt.Errorf("the plant answers at once (as many zeros as poles and no delay): no sampled loop can be closed about it")
 	}
 	pl.unstable = g.UnstablePoles(0)
+	return pl, nil
+}
+
+// newPlant samples a plant behind the hold.
+func (p *problem) newPlant(g lti.TF) (plant, error) {
+	pl, err := p.behindHold(g)
+	if err != nil {
+		return pl, err
+	}
 	n := len(p.omega)
 	buf := make([]complex128, 4*n)
 	pl.a, pl.b, pl.ai, pl.bi = buf[:n], buf[n:2*n], buf[2*n:3*n], buf[3*n:]
+	num, den := append(make(lti.Poly, pl.lag), pl.num...), lti.Poly(pl.den)
 	for j := range p.omega {
-		pl.a[j] = d.Den.Eval(p.z1[j])
-		pl.b[j] = d.Num.Eval(p.z1[j])
-		pl.ai[j] = d.Den.Eval(p.inner[j])
-		pl.bi[j] = d.Num.Eval(p.inner[j])
+		pl.a[j], pl.b[j] = den.Eval(p.z1[j]), num.Eval(p.z1[j])
+		pl.ai[j], pl.bi[j] = den.Eval(p.inner[j]), num.Eval(p.inner[j])
 	}
 	return pl, nil
 }

@@ -32,6 +32,9 @@ func showBounds(p *page, l *design.Loops) {
 		if b.Advice != "" {
 			text += b.Advice + ". "
 		}
+		if b.Relaxed != "" {
+			text += b.Relaxed + ". "
+		}
 		p.line("  %s", b.Name)
 		wrap(p.w, "      ", text+"Source: "+b.Source+".")
 	}
@@ -45,7 +48,7 @@ func showBoundsBriefly(p *page, l *design.Loops) {
 	var name, bound, asked, ok []string
 	for _, b := range l.Bounds {
 		value, _, ask := words.Bound(b)
-		name, bound, asked, ok = append(name, b.Name), append(bound, value), append(asked, ask), append(ok, words.YesNo(b.OK))
+		name, bound, asked, ok = append(name, b.Name), append(bound, value), append(asked, ask), append(ok, words.InReach(b))
 	}
 	p.table(columns("bound", name, ">no better than", bound, ">asked", asked, "in reach", ok))
 }

@@ -282,7 +282,7 @@ func boundsSection(in Input) section {
 		if interval == "" {
 			interval = "–" // the same for all plants
 		}
-		t.Rows = append(t.Rows, []string{b.Name, value, interval, ask, words.YesNo(b.OK), b.Source})
+		t.Rows = append(t.Rows, []string{b.Name, value, interval, ask, words.InReach(b), b.Source})
 		if b.Advice != "" {
 			s.Lead = append(s.Lead, sentence(b.Name+": "+b.Advice))
 		}

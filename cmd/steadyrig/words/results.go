@@ -443,6 +443,14 @@ func Bound(b design.Bound) (value, interval, asked string) {
 	return value, interval, asked
 }
 
+// InReach tells whether what is asked can be had: where one loop could not, because there are two.
+func InReach(b design.Bound) string {
+	if b.Relaxed != "" && b.Asked != nil && b.OK && *b.Asked < b.Value {
+		return "by two loops"
+	}
+	return YesNo(b.OK)
+}
+
 // Bands tells of each band its frequencies in rad/s and Hz, its share of the probe's power and of what the log tells,
 // how much more power it could get and what that would be worth.
 func Bands(i *ident.Informative) [][]string {
