@@ -186,6 +186,12 @@ func (p *problem) sample() error {
 	if err := p.tooLate(); err != nil {
 		return err
 	}
+	if p.model.TF().DC() == 0 {
+		return &ident.RefusedError{
+			What: "the plant has a zero at s = 0: no steady input moves its output for good, so no step of the reference can be followed",
+			Do:   "take an output that stays when the input does, a position instead of a rate, or one without a high-pass filter",
+		}
+	}
 	p.grid(p.model.TF().Delay + p.compute)
 	var err error
 	if p.nominal, err = p.newPlant(p.model.TF()); err != nil {
