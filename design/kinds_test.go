@@ -71,7 +71,7 @@ func kinds() []kind {
 		refused("peak sensitivity", often(rig("pole too fast for the delay", fromRoots(5, nil, []complex128{4, -10}, 0.25), 0.02, 4, 40))),
 		refused("peak sensitivity", rig("pole too fast for the sampling", fromRoots(5, nil, []complex128{9, -10}, 0), 0.1, 4, 40)),
 		refused("zero at s = 0", often(rig("no steady output", fromRoots(5, []complex128{0}, []complex128{1, -10}, 0), 0.02, 4, 40))),
-		refused("steady input for the step", with(rig("weak actuator", fromRoots(1, nil, []complex128{2.2, -2.6}, 0), 0.03, 5, 4), func(k *kind) { k.sensor = 1e-4 })),
+		refused("reach above the operating point", with(rig("weak actuator", fromRoots(1, nil, []complex128{2.2, -2.6}, 0), 0.03, 5, 4), func(k *kind) { k.sensor = 1e-4 })),
 	}
 }
 

@@ -443,10 +443,10 @@ func Bound(b design.Bound) (value, interval, asked string) {
 	return value, interval, asked
 }
 
-// InReach tells whether what is asked can be had: where one loop could not, because there are two.
+// InReach tells whether what is asked can be had, and where one loop could not but two can, that the limit is relaxed.
 func InReach(b design.Bound) string {
 	if b.Relaxed != "" && b.Asked != nil && b.OK && *b.Asked < b.Value {
-		return "by two loops"
+		return "relaxed"
 	}
 	return YesNo(b.OK)
 }
