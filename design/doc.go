@@ -22,7 +22,9 @@
 //
 //  1. Bounds: limits that hold for any controller, each at the nominal model and, as a 95 % interval, over plants
 //     drawn from the model. A limit is judged at the unfavourable end of its interval. A spec beyond one is refused
-//     before any tuning, with the nearest spec that is within reach.
+//     before any tuning, with the nearest spec that is within reach and what to change at the rig, with the number.
+//     Before that, plants without a steady output or without a stable controller (parity interlacing) are refused.
+//     The overshoot that one loop could not avoid is told and not asked: two loops and a prefilter are free of it.
 //  2. Noise: |A H|^2 is split into white sensor noise and disturbance at the input where that fits (the reverse of
 //     spectral factorisation); input_noise is about the sensor's part. Where it does not fit, the whole prediction
 //     error counts, and a warning says so. H of an unstable plant has unstable poles, but they are the plant's, and
