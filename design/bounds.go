@@ -180,7 +180,11 @@ func (p *problem) bounds(ctx context.Context, draws []lti.TF) []Bound {
 	least(BoundNoise, units.Input, &s.noise, "least H2 norm of K S, Havre & Skogestad (2003)", "input_noise", "a quieter sensor or a shorter delay")
 	least(BoundEffort, ratioUnit(units.Input, units.Output), nil, "1/|G| at the pole, pole mirrored, Havre & Skogestad (2003)", "", "")
 	p.addAuthority(&out, nominal, interval)
-	least(BoundDeadTime, "s", &s.settling, "nothing moves before the delay and one sample have passed", "settling", faster)
+	settling := &s.settling
+	if p.assumed {
+		settling = nil
+	}
+	least(BoundDeadTime, "s", settling, "nothing moves before the delay and one sample have passed", "settling", faster)
 	modeAsked := worst(stepMode)
 	for _, name := range []string{BoundReachUp, BoundReachDown} {
 		unfavourable := nominal[name]
