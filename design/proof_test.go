@@ -138,7 +138,7 @@ func TestWholePredictionErrorActs(t *testing.T) {
 
 // Rounding in the loop: up to steps of three deviations of the sensor the output moves as the linear loop does with
 // q^2/12 more noise (Widrow 1961); far coarser steps keep a limit cycle alive, which the long run sees, and the noise-free
-// step does not settle.
+// step does not settle, or trips.
 func TestRoundingInTheLoop(t *testing.T) {
 	r := testRigs()[0]
 	law := designed(t, r.name).LTI()
@@ -161,12 +161,12 @@ func TestRoundingInTheLoop(t *testing.T) {
 		if err != nil {
 			t.Fatal(err)
 		}
-		sum, after := 0.0, v.trace.Y[2*p.handOverSteps():]
+		sum, after := 0.0, v.trace.Y[min(2*p.handOverSteps(), len(v.trace.Y)-1):] // a trip cuts the run short
 		for _, y := range after {
 			sum += (y - law.Y0) * (y - law.Y0) / float64(len(after))
 		}
 		ratio := math.Sqrt(sum) / p.expectedSD(&v.pl, v.grid).Output
-		if c.fine && (len(o.misses) > 0 || !endures || math.Abs(ratio-1) > 0.05) || !c.fine && (endures || !slices.Contains(o.misses, missSettling)) {
+		if c.fine && (len(o.misses) > 0 || !endures || math.Abs(ratio-1) > 0.05) || !c.fine && (endures || !slices.Contains(o.misses, missSettling) && !slices.Contains(o.misses, missTrip)) {
 			t.Errorf("steps of %v deviations: misses %v, endures %v, deviation over that of the linear loop %v", c.deviations, o.misses, endures, ratio)
 		}
 		for _, y := range v.trace.Y {
