@@ -19,7 +19,7 @@ func TestCrosscheck(t *testing.T) {
 		}
 	}
 	if python == "" {
-		t.Skip("no Python with SciPy and statsmodels here, so random cases were not checked against them: apt-get install python3-scipy python3-statsmodels")
+		t.Skip("skipped: no Python with SciPy and statsmodels here, random cases were not checked against them; apt-get install python3-scipy python3-statsmodels")
 	}
 	var lines, fault bytes.Buffer
 	ours := exec.Command("go", "run", "./crosscheck", "-cases", "20")
