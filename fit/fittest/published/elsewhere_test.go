@@ -18,7 +18,7 @@ var elsewhere = []struct{ ids, what, file, test string }{
 	{"D27, D28, D32, D33", "discrete Riccati equations, DAREX", "fit/lti/equations_test.go", "TestDARE"},
 	{"E01, E02", "overshoot and settling as the proof measures them", "design/textbook_test.go", "TestProofMeasuresTextbookSteps"},
 	{"E03, E04", "margins and peak of 1/(s(s + 2z))", "fit/lti/margins_test.go", "TestMarginsSecondOrder"},
-	{"E05", "margins that a peak of |S| guarantees", "design/loop_test.go", "TestGuaranteedMargins"},
+	{"E05", "margins that a peak of S guarantees", "design/loop_test.go", "TestGuaranteedMargins"},
 	{"E06", "margins obey both peaks", "fit/lti/margins_test.go", "TestMarginsObeyPeaks"},
 	{"E14-E21", "nu-gap", "fit/lti/nugap_test.go", "TestNuGap"},
 	{"E24", "unstable pole with dead time", "design/bounds_test.go", "TestLeastPeakDelay"},

@@ -12,6 +12,7 @@ import (
 	"gonum.org/v1/gonum/mat"
 
 	"steadyrig/fit/lti"
+	"steadyrig/ident"
 )
 
 func dense(rows ...[]float64) *mat.Dense {
@@ -303,6 +304,17 @@ func TestPublishedPlants(t *testing.T) {
 		temp, p := poles(c.tank, c.lo, c.hi)
 		s.check(c.id, c.what, c.source, c.status, append([]value{rel("temperature, K", temp, c.temp, 1e-11)}, roots("pole", p, c.want, 1e-9)...)...)
 	}
+	var back ident.Interval
+	for _, x := range []float64{0.1, 1. / 3, math.MaxFloat64, math.Ldexp(1, -52), math.SmallestNonzeroFloat64} {
+		b, err := ident.Interval{Lo: -x, Hi: x}.MarshalJSON()
+		if err == nil {
+			err = back.UnmarshalJSON(b)
+		}
+		if err != nil || back.Lo != -x || back.Hi != x {
+			t.Errorf("%v is written as %s and read as %v, %v", x, b, back, err)
+		}
+	}
+	s.check("G06", "numbers in files, 17 digits", "IEEE 754; C99, 5.2.4.2.2", closed, verdict("an interval is read as it was written, to the last bit", !t.Failed(), true))
 	s.check("F08", "short period with relaxed stability", "McRuer, Ashkenas & Graham, Aircraft Dynamics and Automatic Control, 1973", closed,
 		append(roots("-1, -1, 6: pole", lti.TF{Num: lti.Poly{1}, Den: lti.Poly{-5, 2, 1}}.Poles(), []complex128{-3.449489742783178, 1.449489742783178}, 1e-14),
 			roots("-1, -0.5, 20: pole", lti.TF{Num: lti.Poly{1}, Den: lti.Poly{-19.5, 1.5, 1}}.Poles(), []complex128{-5.229118216792229, 3.729118216792229}, 1e-14)...)...)
