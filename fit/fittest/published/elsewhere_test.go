@@ -34,6 +34,9 @@ var elsewhere = []struct{ ids, what, file, test string }{
 	{"E38, E39", "ranges of stabilising gains", "fit/lti/margins_test.go", "TestGainRanges"},
 	{"E40, E41", "the same, sampled", "fit/lti/margins_test.go", "TestSampledGainRanges"},
 	{"F10", "parity of poles", "design/bounds_test.go", "TestStronglyStabilisable"},
+	{"G07", "back-calculation", "fit/lti/law_test.go", "TestHeldOutputsAreBackCalculation"},
+	{"", "rounding as noise of a twelfth", "fit/lti/law_test.go", "TestRoundingIsNoiseOfATwelfth"},
+	{"", "triangles of a rate limit", "fit/lti/law_test.go", "TestRateLimitMakesTriangles"},
 	{"H07", "coverage of sign-perturbed sums", "fit/signsums_test.go", "TestSignSumsCover"},
 }
 

@@ -180,7 +180,14 @@ func (s *section) compare() {
 		return
 	}
 	if !*update {
-		s.t.Errorf("section %q of %s is not what the tests find; run go test ./fit/fittest/published -update and read the difference\nfound:\n%s", s.name, page, s.text.String())
+		var line string
+		for l := range strings.Lines(table) {
+			if !strings.Contains(tiny.ReplaceAllString(old[from:to], ""), tiny.ReplaceAllString(l, "")) {
+				line = l
+				break
+			}
+		}
+		s.t.Errorf("section %q of %s is not what the tests find; run go test ./fit/fittest/published -update and read the difference\nfirst line not there: %s", s.name, page, line)
 		return
 	}
 	if err := os.WriteFile(page, []byte(old[:from]+table+old[to:]), 0o644); err != nil {
