@@ -14,6 +14,13 @@ import (
 	"steadyrig/fit/fittest/conform"
 )
 
+func nearC(t *testing.T, what string, got, want complex128, rel float64) {
+	t.Helper()
+	if !(cmplx.Abs(got-want) <= rel*cmplx.Abs(want)) {
+		t.Errorf("%s: %.12g, want %.12g within %g relative", what, got, want, rel)
+	}
+}
+
 // claims are what each method reaches on the rigs of fittest, from 2 000 rows on, structure known; the numbers behind them
 // are measured by
 //
