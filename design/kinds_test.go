@@ -88,7 +88,7 @@ func TestAllKindsOfPlants(t *testing.T) {
 		t.Run(k.name, func(t *testing.T) {
 			m, rig := k.model(t), k.rig()
 			began := time.Now()
-			l, err := Design(t.Context(), m, rig, Options{Seed: 1, Plants: 600})
+			l, err := Design(t.Context(), m, rig, Options{Seed: 1, Plants: 1000})
 			took := time.Since(began).Seconds()
 			var no *ident.RefusedError
 			if k.refused != "" {

@@ -1,6 +1,7 @@
 package design
 
 import (
+	"cmp"
 	"fmt"
 	"math"
 	"math/cmplx"
@@ -160,10 +161,10 @@ func (r testRig) model(t testing.TB) *ident.Model {
 	m.Noise = ident.Noise{Numerator: c, Denominator: den, SD: math.Sqrt(variance), SamplePeriod: r.period}
 	// Spread of the poles over draws.
 	draws := m.Draw(400, 99)
-	for i, p := range r.truth.Poles() {
+	for _, p := range r.truth.Poles() {
 		var re, im, re2, im2, unstable float64
 		for _, g := range draws {
-			q := g.Poles()[i]
+			q := slices.MinFunc(g.Poles(), func(a, b complex128) int { return cmp.Compare(cmplx.Abs(a-p), cmplx.Abs(b-p)) })
 			re, im = re+real(q), im+imag(q)
 			re2, im2 = re2+real(q)*real(q), im2+imag(q)*imag(q)
 			if real(q) > 0 {

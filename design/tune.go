@@ -3,6 +3,7 @@ package design
 import (
 	"cmp"
 	"context"
+	"errors"
 	"fmt"
 	"math"
 	"slices"
@@ -89,7 +90,38 @@ func withWorst(set, pool []plant, order []int, n int) []plant {
 }
 
 // tune finds a pair of loops for the worst of the plants. start, if it holds a pair, is where a second attempt begins.
+// Where the form that seemed enough on few plants is not on many, the less simple inner forms have their turn.
 func (t *tuner) tune(ctx context.Context, l *Loops, start pair, aim targets) (pair, error) {
+	best, err := t.tuneWith(ctx, l, start, aim)
+	if err != nil || best.ratios.worst() <= 1 {
+		return best, err
+	}
+	richer := *t
+	richer.inner = t.inner[slices.Index(t.inner, best.inner.form)+1:]
+	if len(richer.inner) == 0 {
+		return best, nil
+	}
+	forms := l.Forms
+	other, err := richer.tuneWith(ctx, l, pair{}, aim)
+	var refused *ident.RefusedError
+	if err != nil && !errors.As(err, &refused) {
+		return best, err
+	}
+	if err != nil || other.cost >= best.cost {
+		l.Forms = forms
+		return best, nil
+	}
+	t.set = richer.set
+	first := slices.IndexFunc(forms, func(f FormResult) bool { return f.Form == richer.inner[0] || f.Loop == "outer" })
+	simpler := slices.Clone(forms[:max(0, first)])
+	for i := range simpler {
+		simpler[i].Chosen = false
+	}
+	l.Forms = append(simpler, l.Forms...)
+	return other, nil
+}
+
+func (t *tuner) tuneWith(ctx context.Context, l *Loops, start pair, aim targets) (pair, error) {
 	best := start
 	if best.form == "" {
 		t.set = append([]plant{t.p.nominal}, t.pool[:min(len(t.pool), tuningPlants)]...)
