@@ -81,6 +81,8 @@ func TestCARE(t *testing.T) {
 		// LQR of x'' = p2 x + u (Anderson & Moore): X22 = sqrt(2 X12 + q2), X11 = X22 (X12 - p2).
 		{"pendulum p2 1", dense([]float64{0, 1}, []float64{1, 0}), column(0, 1), diag(1, 0), one,
 			[][]float64{{3.10754794806007, 2.41421356237310}, {2.41421356237310, 2.19736822693562}}, 1e-12},
+		{"pendulum p2 9", dense([]float64{0, 1}, []float64{9, 0}), column(0, 1), diag(1, 0), one,
+			[][]float64{{math.Sqrt(2*(9+sqrt(82))) * sqrt(82), 9 + sqrt(82)}, {9 + sqrt(82), math.Sqrt(2 * (9 + sqrt(82)))}}, 1e-12},
 		{"pendulum p2 20.601", dense([]float64{0, 1}, []float64{20.601, 0}), column(0, 1), diag(1, 1), one,
 			[][]float64{{188.416557552460, 41.2262563862852}, {41.2262563862852, 9.13523468623387}}, 1e-12},
 		// Least energy mirrors the poles (Kwakernaak & Sivan, Linear Optimal Control Systems, 1972, sec. 3.8).
@@ -99,6 +101,33 @@ func TestCARE(t *testing.T) {
 				}
 			}
 		})
+	}
+	// Gains and closed-loop poles of the same.
+	for _, c := range []struct {
+		name    string
+		a, b, q *mat.Dense
+		k       []float64
+		poles   []complex128
+		tol     float64
+	}{
+		// A double pole scatters by the root of the rounding.
+		{"CAREX 1.1", dense([]float64{0, 1}, []float64{0, 0}), column(0, 1), diag(1, 2), []float64{1, 2}, []complex128{-1, -1}, 1e-6},
+		{"CAREX 1.2", dense([]float64{4, 3}, []float64{-4.5, -3.5}), column(1, -1), dense(q24[0], q24[1]),
+			[]float64{7.24264068711929, 4.82842712474619}, []complex128{complex(-sqrt(2), 0), -0.5}, 1e-10},
+		{"CAREX 2.1, e 1e-6", diag(1, -2), column(1e-6, 0), dense([]float64{1, 1}, []float64{1, 1}),
+			[]float64{2000000.0000005, 0.333333333333278e-6}, []complex128{-2, -1}, 1e-6},
+		{"pendulum p2 20.601", dense([]float64{0, 1}, []float64{20.601, 0}), column(0, 1), diag(1, 1),
+			[]float64{41.2262563862852, 9.13523468623387}, []complex128{-5.05533837696, -4.07989630927}, 1e-10},
+		{"least energy", dense([]float64{0, 1}, []float64{9, 0}), column(0, 1), diag(0, 0), []float64{18, 6}, []complex128{-3, -3}, 1e-6},
+	} {
+		_, k, err := CARE(c.a, c.b, c.q, one)
+		if err != nil {
+			t.Fatal(c.name, err)
+		}
+		wantMatrix(t, k, [][]float64{c.k}, 1e-12)
+		p := eigenvalues(closed(c.a, c.b, k))
+		sortRoots(p)
+		wantPoles(t, p, c.poles, c.tol)
 	}
 	// CAREX 2.5 with e = 0: Hamiltonian eigenvalues on the axis.
 	if x, _, err := CARE(dense([]float64{3, 1}, []float64{4, 2}), column(1, 1), dense([]float64{-11, -5}, []float64{-5, -2}), one); err == nil {
@@ -129,6 +158,8 @@ func TestDARE(t *testing.T) {
 			[]float64{1.85410196624969, 1.23606797749979}, []complex128{-0.5, 0.381966011250105}, 1e-12},
 		{"singular A", dense([]float64{0, 1}, []float64{0, 0}), column(0, 1), dense([]float64{1, 2}, []float64{2, 4}), one,
 			[][]float64{{1, 2}, {2, 2 + math.Sqrt(5)}}, []float64{0, 0.381966011250105}, []complex128{-0.381966011250105, 0}, 1e-12},
+		{"badly scaled", dense([]float64{0, 1e6}, []float64{0, 0}), column(0, 1), diag(1, 1), one,
+			[][]float64{{1, 0}, {0, 1e12 + 1}}, []float64{0, 0}, []complex128{0, 0}, 1e-12},
 		{"scalar, q 1", diag(1.25), column(0.5), one, one, [][]float64{{4.2019410160110378}}, []float64{1.2807764064044151},
 			[]complex128{0.60961179679779243}, 1e-13},
 		{"scalar, q 0", diag(1.25), column(0.5), diag(0), one, [][]float64{{2.25}}, []float64{0.9}, []complex128{0.8}, 1e-13},

@@ -61,6 +61,41 @@ func NuGap(p1, p2 TF) (gap, at float64, err error) {
 	return math.Min(gap, 1), at, nil
 }
 
+// SampledNuGap is NuGap for sampled plants of one period. With x = z^-1, P = b/a in powers of x and b*, a* their values at
+// 1/x, the winding condition is that b2* b1 + a2* a1 goes round 0 no more than back on the unit circle: divided by the
+// spectral factors of |a|^2 + |b|^2, which have neither poles nor zeros in the disc and so do not turn, it is the inner
+// product of the two graphs (ibid., sec. 3). Delays and poles on the circle need no care of their own.
+func SampledNuGap(p1, p2 DTF) (gap, at float64, err error) {
+	chord := func(x complex128) complex128 {
+		b1, a1, b2, a2 := p1.Num.Eval(x), p1.Den.Eval(x), p2.Num.Eval(x), p2.Den.Eval(x)
+		return (b1*a2 - b2*a1) / complex(hypot(a1, b1)*hypot(a2, b2), 0)
+	}
+	gap, at = sampledPeak(chord, p1, p2)
+	inner := func(w float64) complex128 {
+		x := cmplx.Exp(complex(0, -w*p1.Period))
+		return cmplx.Conj(p2.Num.Eval(x))*p1.Num.Eval(x) + cmplx.Conj(p2.Den.Eval(x))*p1.Den.Eval(x)
+	}
+	lo, hi := sampledRange(p1, p2)
+	turn, before := 0.0, 0.0
+	for _, w := range Grid(lo, hi, 2+int(perDecade*math.Log10(hi/lo))) {
+		from := before
+		part, err := turnAlong(func(s complex128) complex128 { return inner(real(s)) },
+			func(t float64) complex128 { return complex(from+t*(w-from), 0) })
+		if errors.Is(err, errThrough) {
+			return 1, at, nil
+		}
+		if err != nil {
+			return 0, 0, fmt.Errorf("measuring the distance of two plants: %w", err)
+		}
+		turn += part
+		before = w
+	}
+	if math.Abs(turn) > math.Pi/2 {
+		return 1, at, nil
+	}
+	return math.Min(gap, 1), at, nil
+}
+
 // winds reports whether the winding condition holds for p1 against p2.
 func winds(p1, p2 TF) (bool, error) {
 	if p1.Delay == p2.Delay {

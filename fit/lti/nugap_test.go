@@ -50,6 +50,18 @@ func TestNuGap(t *testing.T) {
 			if c.at >= 0 && !near(at, c.at, 2e-5*(1+c.at)) { // printed digits, flat top
 				t.Errorf("%s (swapped %v): at %g, want %g", c.name, swap, at, c.at)
 			}
+			// The map s = (2/T)(z - 1)/(z + 1) leaves the distance as it is.
+			const period = 0.05
+			gap, at, err = SampledNuGap(Tustin(a, period), Tustin(b, period))
+			if err != nil {
+				t.Fatal(err)
+			}
+			if !near(gap, c.gap, math.Max(c.tol, 1e-11)) {
+				t.Errorf("%s, sampled (swapped %v): %.13g, want %.13g", c.name, swap, gap, c.gap)
+			}
+			if mapped := 2 / period * math.Tan(at*period/2); c.at >= 0 && !near(mapped, c.at, 2e-5*(1+c.at)) {
+				t.Errorf("%s, sampled (swapped %v): at %g, want %g", c.name, swap, mapped, c.at)
+			}
 		}
 	}
 }
@@ -97,5 +109,20 @@ func TestNuGapDelay(t *testing.T) {
 	}
 	if !near(gap, want, 1e-6) {
 		t.Errorf("delay error: %.9g, want %.9g", gap, want)
+	}
+}
+
+// An integrator against itself a sample later, T = 1: with a = 1 - z^-1 the distance is |a| |a|/(1 + |a|^2), 4/5 at pi.
+func TestSampledNuGapDelay(t *testing.T) {
+	p := DTF{Num: Poly{0, 1}, Den: Poly{1, -1}, Period: 1}
+	late := DTF{Num: Poly{0, 0, 1}, Den: Poly{1, -1}, Period: 1}
+	gap, at, err := SampledNuGap(p, late)
+	if err != nil || !near(gap, 0.8, 1e-12) || !near(at, math.Pi, 1e-5) {
+		t.Errorf("%.12g at %.6g, want 0.8 at pi (%v)", gap, at, err)
+	}
+	// Four samples later b2* b1 + |a|^2 is e^{4iw} + 2 - 2 cos w: 1 at w = 0, 1 - sqrt2 at pi/4, so it goes round 0.
+	later := DTF{Num: Poly{0, 0, 0, 0, 0, 1}, Den: Poly{1, -1}, Period: 1}
+	if gap, _, err := SampledNuGap(p, later); err != nil || gap != 1 {
+		t.Errorf("four samples later: %.12g, %v", gap, err)
 	}
 }
