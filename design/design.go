@@ -91,6 +91,10 @@ func Design(ctx context.Context, model *ident.Model, rig *data.Rig, opt Options)
 		return nil, err
 	}
 	p.relaxed(l)
+	proven := model.Draw(l.Promise.Plants, stream(opt.Seed, streamProof, l.Promise.Attempts))
+	if l.Yardstick, err = p.measure(ctx, l.LTI(), proven, opt.Workers); err != nil {
+		return nil, err
+	}
 	p.firstClosure(l, opt.Seed)
 	p.conclude(l)
 	if r := l.Promise.broken(&p.spec); r != nil {

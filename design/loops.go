@@ -48,6 +48,7 @@ type Loops struct {
 	OuterLimits    *[2]float64    `json:"outer_limits"`         // deviation of v; nil: none
 	Bounds         []Bound        `json:"bounds"`
 	Margins        *LoopMargins   `json:"margins"`
+	Yardstick      *Yardstick     `json:"yardstick"`       // nil: not measured
 	Forms          []FormResult   `json:"forms,omitempty"` // what each step of simplicity costs
 	Sampling       *Sampling      `json:"sampling,omitempty"`
 	Hidden         *HiddenMode    `json:"hidden_mode,omitempty"` // nil: none was found

@@ -24,13 +24,53 @@ import (
 // kick, and how fast an offset goes away, are left out, which makes the yardstick the sterner; see leastPeakHolding.
 // |S| at the input does not depend on units: the scaling by ranges is the margins' affair alone.
 func (p *problem) leastPeakS(noise float64) (lo, hi float64) {
-	return p.newYard(noise).least(noise, nil)
+	if math.IsInf(noise, 1) {
+		return p.leastPeakFree()
+	}
+	return p.newYard().least(noise, nil)
+}
+
+// leastPeakFree is leastPeakS without a limit on the noise. The least norm of a T = q^d B_z h that is 1 at the poles is
+// that of the inverse of q^d B_z on their span (see malmquist), and S = 1 - T has the same least norm (Sarason (1967)).
+func (p *problem) leastPeakFree() (lo, hi float64) {
+	poles, zeros := p.nominal.unstableInQ(p.period)
+	n := len(poles)
+	if n == 0 {
+		return 1, 1
+	}
+	m := newMalmquist(poles)
+	inverse, one := make([]complex128, n*n), make([]complex128, n*n)
+	for i := range n {
+		c := make([]complex128, n)
+		c[i], one[i*n+i] = 1, 1
+		m.divide(c, p.nominal.lag, zeros)
+		for k, v := range c {
+			inverse[k*n+i] = v
+		}
+	}
+	least := operatorNorm(inverse, one, n)
+	return least, least
+}
+
+// unstableInQ returns the places in q = z^-1 of the poles and zeros outside the unit circle.
+func (pl *plant) unstableInQ(period float64) (poles, zeros []complex128) {
+	for _, s := range pl.tf.Poles() {
+		if real(s) > 0 {
+			poles = append(poles, cmplx.Exp(-s*complex(period, 0)))
+		}
+	}
+	for _, z := range (lti.DTF{Num: pl.num, Den: pl.den, Period: period}).Zeros() {
+		if cmplx.Abs(z) > 1+1e-6 {
+			zeros = append(zeros, 1/z)
+		}
+	}
+	return poles, zeros
 }
 
 // leastPeakHolding is the lower end of leastPeakS for controllers that hold slow disturbances as well as a law does:
 // up to the frequency of the law's own peak their |S| is no larger than the law's, give or take heldWell.
 func (p *problem) leastPeakHolding(noise float64, law *lti.Law) float64 {
-	y := p.newYard(noise)
+	y := p.newYard()
 	size := func(w float64) float64 { return cmplx.Abs(p.sensitivity(&p.nominal, law, w)) }
 	at, peak := 0.0, 0.0
 	for _, w := range p.omega {
@@ -74,8 +114,8 @@ func (p *problem) sensitivity(pl *plant, law *lti.Law, omega float64) complex128
 // so): close at low frequencies, and no further apart at high ones than the delay's phase allows.
 type yard struct {
 	n      int
-	omega  []float64    // rad/s, from both halves of the circle
-	b      []complex128 // 1 where the noise does not count
+	omega  []float64 // rad/s, from both halves of the circle
+	b      []complex128
 	k0     []complex128 // B_z q^d h
 	theta  []complex128 // B_p B_z q^d
 	v      []float64
@@ -93,7 +133,7 @@ const (
 	yardLeap   = 4     // largest growth of a multiplier in one round
 )
 
-func (p *problem) newYard(limit float64) *yard {
+func (p *problem) newYard() *yard {
 	pl := &p.nominal
 	// slow: rate per sample of the slowest thing that S has to tell apart; fast: phase of the delay per sample.
 	slow, fast := 20*p.omega[1], float64(pl.lag)
@@ -111,28 +151,25 @@ func (p *problem) newYard(limit float64) *yard {
 	y := &yard{n: n, fft: fourier.NewCmplxFFT(n), buf: make([]complex128, n), o: make([]complex128, n), r: make([]float64, n)}
 	a := complex((1-stretch)/(1+stretch), 0)
 	inside := func(q complex128) bool { return cmplx.Abs((q-a)/(1-a*q)) < 1-20/float64(n) }
-	var poles, zeros, mirrored []complex128
-	for _, s := range pl.tf.Poles() {
-		if q := cmplx.Exp(-s * complex(p.period, 0)); real(s) > 0 && inside(q) {
-			poles = append(poles, q)
-		}
-	}
-	gain := complex(1, 0)
+	// What lies on the circle, or nearer to it than the grid can tell, is passed over.
+	near := func(q complex128) bool { return !inside(q) }
+	poles, zeros := pl.unstableInQ(p.period)
+	poles, zeros = slices.DeleteFunc(poles, near), slices.DeleteFunc(zeros, near)
+	var mirrored []complex128
+	gain := complex(pl.num[0], 0)
 	for _, z := range (lti.DTF{Num: pl.num, Den: pl.den, Period: p.period}).Zeros() {
 		if cmplx.Abs(z) > 1 {
-			if inside(1 / z) {
-				zeros = append(zeros, 1/z)
-			}
 			gain *= z
 			z = 1 / cmplx.Conj(z)
 		}
 		mirrored = append(mirrored, z)
 	}
-	gain *= complex(pl.num[0], 0)
-	if math.IsInf(limit, 1) {
-		gain, mirrored = 1, nil
+	m := newMalmquist(poles)
+	h := m.one()
+	m.divide(h, pl.lag, zeros)
+	for _, z := range mirrored {
+		m.over(h, 1, -z)
 	}
-	h := interpolant(poles, zeros, mirrored, pl.lag)
 	for j := range n {
 		phi := 2 * math.Pi * (float64(j) + 0.5) / float64(n)
 		x := cmplx.Exp(complex(0, -phi))
@@ -143,7 +180,7 @@ func (p *problem) newYard(limit float64) *yard {
 			b *= 1 - z*q
 		}
 		y.b = append(y.b, b)
-		y.k0 = append(y.k0, g*h(q)/gain)
+		y.k0 = append(y.k0, g*m.at(h, q)/gain)
 		y.theta = append(y.theta, g*blaschke(poles, q))
 		t := math.Tan(phi / 2)
 		w := 2 * math.Atan(stretch*math.Abs(t)) / p.period
@@ -173,64 +210,88 @@ func blaschke(roots []complex128, q complex128) complex128 {
 	return b
 }
 
-// interpolant returns an analytic h with q^d B_z(q) prod(1 - m q) h(q) = 1 at the poles, multiple ones with their
-// derivatives; m are the mirrored zeros. On the span of the Malmquist basis e_1 … e_n of the poles multiplication by q is a triangular matrix with the poles on its
-// diagonal, the compressed shift (Sarason (1967), Trans. AMS 127, 179-203; Nikolski (1986), Treatise on the Shift
-// Operator, lecture 3), and h solves shift^d B_z(shift) prod(1 - m shift) h = P 1. Nothing is divided by the distance of two poles.
-func interpolant(poles, zeros, mirrored []complex128, d int) func(q complex128) complex128 {
+// A malmquist is the space of the functions e_1 … e_n, e_k = norm_k/(1 - conj(a_k) q) times the Blaschke product of the
+// poles before a_k: what remains of an analytic function when B_p times another is taken off. Multiplication by q is a
+// triangular matrix there with the poles on its diagonal, the compressed shift (Sarason (1967), Generalized interpolation
+// in H-infinity, Trans. AMS 127, 179-203; Nikolski (1986), Treatise on the Shift Operator, lecture 3). To be 1 at the
+// poles, multiple ones with their derivatives, thus becomes a linear equation in which nothing is divided by the
+// distance of two poles.
+type malmquist struct {
+	poles []complex128
+	norm  []float64
+	shift []complex128 // n×n, row-major, lower triangular
+}
+
+func newMalmquist(poles []complex128) *malmquist {
 	n := len(poles)
-	norm := make([]float64, n) // e_k = norm_k/(1 - conj(a_k) q) times the Blaschke product of the poles before it
+	m := &malmquist{poles, make([]float64, n), make([]complex128, n*n)}
 	for k, a := range poles {
-		norm[k] = math.Sqrt(1 - real(a)*real(a) - imag(a)*imag(a))
+		m.norm[k] = math.Sqrt(1 - real(a)*real(a) - imag(a)*imag(a))
 	}
-	shift, c := make([]complex128, n*n), make([]complex128, n)
-	before := complex(1, 0)
 	for k, a := range poles {
-		c[k] = cmplx.Conj(complex(norm[k], 0) * before)
-		before *= -a
-		shift[k*n+k] = a
-		between := complex(norm[k], 0)
+		m.shift[k*n+k] = a
+		between := complex(m.norm[k], 0)
 		for i := k + 1; i < n; i++ {
-			shift[i*n+k] = between * complex(norm[i], 0)
+			m.shift[i*n+k] = between * complex(m.norm[i], 0)
 			between *= -cmplx.Conj(poles[i])
 		}
 	}
-	// solve replaces c by (x + y shift)^-1 c, times replaces it by (x + y shift) c.
-	solve := func(x, y complex128) {
-		for k := range n {
-			for i := range k {
-				c[k] -= y * shift[k*n+i] * c[i]
-			}
-			c[k] /= x + y*shift[k*n+k]
-		}
+	return m
+}
+
+// one returns the coefficients of the constant 1.
+func (m *malmquist) one() []complex128 {
+	c := make([]complex128, len(m.poles))
+	before := complex(1, 0)
+	for k, a := range m.poles {
+		c[k] = cmplx.Conj(complex(m.norm[k], 0) * before)
+		before *= -a
 	}
-	times := func(x, y complex128) {
-		for k := n - 1; k >= 0; k-- {
-			sum := x * c[k]
-			for i := range k + 1 {
-				sum += y * shift[k*n+i] * c[i]
-			}
-			c[k] = sum
+	return c
+}
+
+// over replaces c by c/(x + y q).
+func (m *malmquist) over(c []complex128, x, y complex128) {
+	n := len(c)
+	for k := range n {
+		for i := range k {
+			c[k] -= y * m.shift[k*n+i] * c[i]
 		}
+		c[k] /= x + y*m.shift[k*n+k]
 	}
+}
+
+// times replaces c by (x + y q) c.
+func (m *malmquist) times(c []complex128, x, y complex128) {
+	n := len(c)
+	for k := n - 1; k >= 0; k-- {
+		sum := x * c[k]
+		for i := range k + 1 {
+			sum += y * m.shift[k*n+i] * c[i]
+		}
+		c[k] = sum
+	}
+}
+
+// divide replaces c by c/(q^d B_z(q)).
+func (m *malmquist) divide(c []complex128, d int, zeros []complex128) {
 	for range d {
-		solve(0, 1)
+		m.over(c, 0, 1)
 	}
-	for _, b := range zeros {
-		times(1, -cmplx.Conj(b))
-		solve(-b, 1)
+	for _, z := range zeros {
+		m.times(c, 1, -cmplx.Conj(z))
+		m.over(c, -z, 1)
 	}
-	for _, m := range mirrored {
-		solve(1, -m)
+}
+
+// at returns the function at q.
+func (m *malmquist) at(c []complex128, q complex128) complex128 {
+	sum, before := complex(0, 0), complex(1, 0)
+	for k, a := range m.poles {
+		sum += c[k] * complex(m.norm[k], 0) * before / (1 - cmplx.Conj(a)*q)
+		before *= (q - a) / (1 - cmplx.Conj(a)*q)
 	}
-	return func(q complex128) complex128 {
-		sum, before := complex(0, 0), complex(1, 0)
-		for k, a := range poles {
-			sum += c[k] * complex(norm[k], 0) * before / (1 - cmplx.Conj(a)*q)
-			before *= (q - a) / (1 - cmplx.Conj(a)*q)
-		}
-		return sum
-	}
+	return sum
 }
 
 // filter multiplies the coefficients of x^k, k = 0, 1 … n/2-1, and those of all the others by factors, in place.
@@ -286,13 +347,10 @@ func (y *yard) least(limit float64, hold []float64) (lo, hi float64) {
 		u[j] = 1
 	}
 	k, quiet := make([]complex128, y.n), make([]complex128, y.n)
-	mu, l := 0.0, 0.0 // multiplier of the noise, likewise
-	if !math.IsInf(limit, 1) {
-		mu = 1
-		y.quadratic(quiet, w, 1)
-		if y.noise(quiet) > limit {
-			return math.Inf(1), math.Inf(1)
-		}
+	mu := 1.0 // multiplier of the noise, likewise
+	y.quadratic(quiet, w, 1)
+	if y.noise(quiet) > limit {
+		return math.Inf(1), math.Inf(1)
 	}
 	g := 1.5 // the present guess
 	bound := func(j int) (b float64, free bool) {
@@ -313,41 +371,39 @@ func (y *yard) least(limit float64, hold []float64) (lo, hi float64) {
 				held += v / n
 			}
 		}
-		if mu > 0 {
-			l = mu / (limit * limit)
-		}
-		least := y.quadratic(k, w, l)
+		least := y.quadratic(k, w, mu/(limit*limit))
 		ratio := math.Sqrt(least / (open + held + mu))
 		if !(ratio > 0) || math.IsInf(ratio, 1) {
 			break // the weights have left the range of numbers: what is known stays
 		}
 		lo = math.Max(lo, g*math.Sqrt(math.Max(0, (least-held-mu)/open)))
-		noise, share := 0.0, 0.0
-		if mu > 0 {
-			if noise = y.noise(k); noise > limit {
-				share = y.share(k, quiet, limit)
-			}
-			noise /= limit * ratio
-			mu *= math.Pow(noise, lawson(noise))
+		noise, share := y.noise(k), 0.0
+		if noise > limit {
+			share = y.share(k, quiet, limit)
 		}
-		peak := 0.0
+		noise /= limit * ratio
+		mu = math.Max(yardFloor, mu*math.Pow(noise, lawson(noise)))
+		peak, broken := 0.0, 0.0
 		for j, v := range k {
 			b, free := bound(j)
 			if e := cmplx.Abs(1-y.b[j]*v) / (b * ratio); e > 0 {
 				u[j] = math.Max(yardFloor, u[j]*math.Min(yardLeap, math.Pow(e, lawson(e))))
 			}
+			size := cmplx.Abs(1 - y.b[j]*(v+complex(share, 0)*(quiet[j]-v)))
 			if free {
-				peak = math.Max(peak, cmplx.Abs(1-y.b[j]*(v+complex(share, 0)*(quiet[j]-v))))
+				peak = math.Max(peak, size)
+			} else {
+				broken = math.Max(broken, size/b-1)
 			}
 		}
 		smooth(u)
 		hi = math.Min(hi, peak)
-		if hi <= lo*(1+yardGap) {
+		if hi <= lo*(1+yardGap) && broken <= yardGap {
 			break
 		}
 		g *= math.Sqrt(ratio)
 	}
-	return math.Min(lo, hi), hi
+	return lo, math.Max(lo, hi)
 }
 
 // lawson is the power with which a multiplier follows its constraint. Lawson's is 1; with 2 for those to be let go and

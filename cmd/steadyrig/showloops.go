@@ -15,6 +15,7 @@ func showLoops(p *page, l *design.Loops, u data.Units) {
 	showBounds(p, l)
 	showControllers(p, l, u)
 	showMargins(p, l)
+	showYardstick(p, l, u)
 	showPromise(p, l, u)
 	showClosure(p, l, u)
 }
@@ -153,6 +154,16 @@ func showMargins(p *page, l *design.Loops) {
 	p.table(columns("loop", where, ">gain times", gain, ">phase", phase, ">delay", delay, ">peak |S|", peak, ">crossing", cross))
 	if m := l.Margins.Worst; m != nil && m.Stable < m.Plants {
 		p.line("  %d of %d drawn plants are lost and have no margin.", m.Plants-m.Stable, m.Plants)
+	}
+}
+
+func showYardstick(p *page, l *design.Loops, u data.Units) {
+	if l.Yardstick == nil {
+		return
+	}
+	p.heading("Against the best that any controller could do, nominal plant")
+	for _, f := range words.Yardstick(l.Yardstick, u) {
+		p.item(f[0], f[1])
 	}
 }
 

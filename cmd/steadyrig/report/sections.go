@@ -365,6 +365,11 @@ func marginsSection(in Input) section {
 		}
 		s.Tables = []table{t}
 	}
+	if l.Yardstick != nil {
+		for _, f := range words.Yardstick(l.Yardstick, in.Rig.Units) {
+			s.Facts = append(s.Facts, fact{sentenceStart(f[0]), f[1]})
+		}
+	}
 	curves, err := l.Sensitivity(in.Model, in.Rig, drawnSpectra, in.Seed)
 	if err != nil { // the figures are missed, the rest is not lost
 		s.Lead = append(s.Lead, sentence("No curves: "+err.Error()))

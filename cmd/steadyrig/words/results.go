@@ -478,3 +478,43 @@ func part(x float64) string {
 	}
 	return fmt.Sprintf("%.1f %%", 100*x)
 }
+
+// muchAbove is the excess over the yardstick from which on the reason is given.
+const muchAbove = 0.25
+
+// Yardstick says in labelled lines how near the loops come to the best that any controller could do.
+func Yardstick(y *design.Yardstick, u data.Units) [][2]string {
+	least := map[string]string{}
+	for _, s := range y.Steps {
+		least[s.Demand] = Number(s.Least)
+	}
+	known := ""
+	if y.Reached != nil {
+		known = fmt.Sprintf(" (%s is reached)", Number(*y.Reached))
+	}
+	out := [][2]string{
+		{"least peak |S|", fmt.Sprintf("%s for any controller within the input noise asked%s, %s without that limit. The reference's path is free, so overshoot and settling bind no feedback.",
+			Number(y.Least), known, least[design.DemandStable])},
+		{"these loops", fmt.Sprintf("%s, %s above", Number(y.Pair), percent(y.Excess))},
+	}
+	if y.Excess > muchAbove {
+		out = append(out, [2]string{"why", fmt.Sprintf("with no more input noise than theirs the least is %s, with their hold on slow disturbances too %s; the rest is what forms this simple and all the plants drawn cost",
+			least[design.DemandQuiet], least[design.DemandHold])})
+	}
+	margin := Number(y.Margin)
+	if y.Best != nil {
+		margin += " of at most " + Number(*y.Best)
+	}
+	out = append(out, [2]string{"coprime margin", fmt.Sprintf("%s, inner loop alone %s; input counted by %s, output by %s", margin, Number(y.MarginInner),
+		Unit(Number(y.InputRange), u.Input), Unit(Number(y.OutputRange), u.Output))})
+	gap := fmt.Sprintf("%s from the nominal plant to the farthest of %d drawn: ", Number(y.LargestGap), y.Plants)
+	if y.Stabilised == design.Theorem {
+		gap += "less than the margins, so that every plant as near is held is a theorem (Vinnicombe 1993)"
+	} else {
+		gap += "more than the margins cover, so that the plants are held is a count on draws and no theorem"
+	}
+	return append(out, [2]string{"nu-gap", gap})
+}
+
+// percent formats a share without decimals.
+func percent(x float64) string { return fmt.Sprintf("%.0f %%", 100*x) }
