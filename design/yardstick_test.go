@@ -120,12 +120,15 @@ func TestLeastPeakHolding(t *testing.T) {
 // admissible for any coefficients. None of them gives the quietest loop, regulator and estimator with the pole mirrored
 // (Kwakernaak & Sivan (1972), sec. 6.5). A simplex search over six, started afresh from where it ended, meets the limit
 // by a penalty: it gets no lower than the lower bound, and as near to the upper one as six coefficients and a simplex do.
+// The same with |S| held below that of the proportional law K, whose peak is at pi: a bound at each frequency, among which
+// a simplex finds its way less well, so 4 % instead of 2 %.
 func TestYardstickBySearch(t *testing.T) {
 	p := yardOf(t, yardPlants[0].g, yardPlants[0].period, 4)
 	a, b := complex(-p.nominal.den[1], 0), complex(p.nominal.num[0], 0)
 	least := leastNoise(append(lti.Poly{0}, p.nominal.num...), p.nominal.den, []complex128{a})
 	const terms, points, r = 6, 100, 0.5
-	figures := func(x []float64) (peak, noise float64) {
+	law := &lti.Law{Inner: lti.Gain(5*(real(a)-1)/real(b), p.period)}
+	figures := func(x []float64) (peak, noise, held float64) {
 		for j := range points {
 			q := cmplx.Exp(complex(0, -math.Pi*(float64(j)+0.5)/points))
 			sum, m := complex(0, 0), q
@@ -137,26 +140,43 @@ func TestYardstickBySearch(t *testing.T) {
 			peak = math.Max(peak, cmplx.Abs(s))
 			ks := cmplx.Abs((1 - s) * (1 - a*q) / (b * q))
 			noise += ks * ks / points
+			held = math.Max(held, cmplx.Abs(s)/math.Hypot(heldWell, cmplx.Abs((1-a*q)/(1-a*q+b*q*complex(law.Inner.Num[0], 0)))))
 		}
-		return peak, math.Sqrt(noise)
+		return peak, math.Sqrt(noise), held
 	}
-	if _, noise := figures(nil); math.Abs(noise/least-1) > 1e-9 {
+	if _, noise, _ := figures(nil); math.Abs(noise/least-1) > 1e-9 {
 		t.Fatalf("quietest loop: noise %.12g, want %.12g", noise, least)
 	}
-	for _, times := range []float64{1.1, 1.5} {
-		limit := times * least
+	for _, c := range []struct {
+		times float64
+		hold  bool
+	}{{1.1, false}, {1.5, false}, {8, true}} {
+		limit := c.times * least
 		x := make([]float64, terms)
 		for range 10 {
 			x, _ = minimise(t.Context(), func(x []float64) float64 {
-				peak, noise := figures(x)
-				return peak + 30*math.Max(0, noise/limit-1)
+				peak, noise, held := figures(x)
+				cost := peak + 30*math.Max(0, noise/limit-1)
+				if c.hold {
+					cost += 30 * math.Max(0, held-1)
+				}
+				return cost
 			}, x, 0.1, 1000)
 		}
-		peak, noise := figures(x)
+		peak, noise, held := figures(x)
 		lo, hi := p.leastPeakS(limit)
-		t.Logf("%g times the least noise: in [%.5f, %.5f], by search %.5f at %.5f of the limit", times, lo, hi, peak, noise/limit)
-		if !(noise <= limit*(1+1e-3)) || !(peak >= lo*(1-1e-3)) || !(peak <= hi*1.02) {
-			t.Errorf("%g times the least noise: in [%.5f, %.5f], by search %.5f at %.5f of the limit", times, lo, hi, peak, noise/limit)
+		near := 0.02
+		if c.hold {
+			free := hi
+			near = 0.04
+			lo = p.leastPeakHolding(limit, law)
+			if hi = lo * (1 + yardGap); !(lo > free*1.05 && held < 1+1e-3) {
+				t.Errorf("held: %.5g, without %.5g; the search holds by %.5g", lo, free, held)
+			}
+		}
+		t.Logf("%+v: in [%.5f, %.5f], by search %.5f at %.5f of the limit", c, lo, hi, peak, noise/limit)
+		if !(noise <= limit*(1+1e-3)) || !(peak >= lo*(1-1e-3)) || !(peak <= hi*(1+near)) {
+			t.Errorf("%+v: in [%.5f, %.5f], by search %.5f at %.5f of the limit", c, lo, hi, peak, noise/limit)
 		}
 	}
 }

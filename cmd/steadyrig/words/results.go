@@ -498,7 +498,7 @@ func Yardstick(y *design.Yardstick, u data.Units) [][2]string {
 		{"these loops", fmt.Sprintf("%s, %s above", Number(y.Pair), percent(y.Excess))},
 	}
 	if y.Excess > muchAbove {
-		out = append(out, [2]string{"why", fmt.Sprintf("with no more input noise than theirs the least is %s, with their hold on slow disturbances too %s; the rest is what forms this simple and all the plants drawn cost",
+		out = append(out, [2]string{"why", fmt.Sprintf("with no more input noise than theirs the least is %s, with their hold on slow disturbances too %s; the rest goes to forms this simple, tuned to the spec on all plants drawn",
 			least[design.DemandQuiet], least[design.DemandHold])})
 	}
 	margin := Number(y.Margin)
