@@ -198,3 +198,37 @@ func TestWithin(t *testing.T) {
 		}
 	}
 }
+
+// Far above the yardstick the reason is said, and outside the margins there is no theorem.
+func TestYardstick(t *testing.T) {
+	reached, best := 1.101, 0.2873
+	y := &design.Yardstick{
+		Least: 1.096, Reached: &reached, Pair: 1.463, Excess: 0.3349, InputRange: 3, OutputRange: 4,
+		Steps: []design.YardstickStep{
+			{Demand: design.DemandStable, Least: 1.058}, {Demand: design.DemandNoise, Least: 1.096},
+			{Demand: design.DemandQuiet, Least: 1.17}, {Demand: design.DemandHold, Least: 1.197},
+		},
+		Best: &best, Margin: 0.049, MarginInner: 0.052, LargestGap: 0.061, Plants: 2000, Stabilised: design.Count,
+	}
+	text := func() (s string) {
+		for _, l := range Yardstick(y, data.Units{Input: "A", Output: "mm"}) {
+			s += l[0] + ": " + l[1] + "\n"
+		}
+		return s
+	}
+	for _, want := range []string{
+		"least peak |S|: 1.096 for any", "(1.101 is reached), 1.058 without", "these loops: 1.463, 33 % above",
+		"why: with no more input noise than theirs the least is 1.17, with their hold on slow disturbances too 1.197",
+		"0.049 of at most 0.2873, inner loop alone 0.052; input counted by 3 A, output by 4 mm", "count on draws and no theorem",
+	} {
+		if !strings.Contains(text(), want) {
+			t.Errorf("%q is not in\n%s", want, text())
+		}
+	}
+	y.Excess, y.Reached, y.Best, y.Stabilised = 0.2, nil, nil, design.Theorem
+	for _, not := range []string{"why", "reached", "at most", "count on"} {
+		if strings.Contains(text(), not) {
+			t.Errorf("%q is in\n%s", not, text())
+		}
+	}
+}
