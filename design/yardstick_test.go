@@ -32,6 +32,7 @@ var yardPlants = []struct {
 	{"pair", fromRoots(5, []complex128{-5}, []complex128{complex(0.2, 3), complex(0.2, -3), -6}, 0), 0.04, false},
 	{"two real poles", fromRoots(3, nil, []complex128{1, 0.4, -4}, 0.05), 0.05, false},
 	{"double pole", fromRoots(3, nil, []complex128{1, 1, -4}, 0.07), 0.05, true},
+	{"three poles", fromRoots(3, nil, []complex128{1, complex(0.3, 2), complex(0.3, -2), -6}, 0.05), 0.05, false},
 	{"delay of 5 and a part", fromRoots(2, nil, []complex128{1, -3}, 0.27), 0.05, false},
 	{"delay of 40", fromRoots(2, nil, []complex128{1, -3}, 0.4), 0.01, false},
 	{"pair with delay", fromRoots(5, nil, []complex128{complex(0.5, 3), complex(0.5, -3)}, 0.18), 0.03, false},
@@ -82,6 +83,20 @@ func TestYardstickClosedForms(t *testing.T) {
 		}
 		if len(poles) == 0 {
 			continue
+		}
+		// A louder S, mixed with the quietest, comes out at the limit.
+		loud, w := make([]complex128, y.n), make([]float64, y.n)
+		for j := range w {
+			w[j] = 1
+		}
+		y.quadratic(loud, w, 1e-3/(least*least))
+		limit := (y.noise(k) + y.noise(loud)) / 2
+		share := complex(y.share(loud, k, limit), 0)
+		for j, v := range loud {
+			loud[j] += share * (k[j] - v)
+		}
+		if got := y.noise(loud); !(math.Abs(got/limit-1) < 1e-9) {
+			t.Errorf("%s: noise %.10g of the mixture, want %.10g", c.name, got, limit)
 		}
 		if lo, hi := p.leastPeakS(0.9 * least); !math.IsInf(lo, 1) || !math.IsInf(hi, 1) {
 			t.Errorf("%s: [%.4g, %.4g] with less noise than the least", c.name, lo, hi)

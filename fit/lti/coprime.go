@@ -82,9 +82,6 @@ func sampledPeak(f func(x complex128) complex128, blocks ...DTF) (value, at floa
 	if v := cmplx.Abs(f(1)); v > value {
 		value, at = v, 0
 	}
-	if v := cmplx.Abs(f(-1)); v > value {
-		value, at = v, hi
-	}
 	return value, at
 }
 
