@@ -88,7 +88,7 @@ type Limits struct {
 type Spec struct {
 	Step            float64 `toml:"step"`             // reference step the spec is for, units of output
 	Overshoot       float64 `toml:"overshoot"`        // fraction of the step
-	Settling        float64 `toml:"settling"`         // s, to within Band for good
+	Settling        float64 `toml:"settling"`         // s, to within Band for good; 0: left to the design
 	Band            float64 `toml:"band"`             // fraction of the step
 	PeakSensitivity float64 `toml:"peak_sensitivity"` // largest |S| at the plant input, both loops closed
 	InputNoise      float64 `toml:"input_noise"`      // largest sd of the input due to noise; 0: a twentieth of the range

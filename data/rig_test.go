@@ -155,6 +155,8 @@ func TestReadRigDefects(t *testing.T) {
 		{"period nan", "[loop]\nsample_period = 0.001", "[loop]\nsample_period = nan", `rig.toml: line 27: loop.sample_period is NaN; give a finite number above 0`},
 		{"loop without period", "[loop]\nsample_period = 0.001", "[loop]", `rig.toml: line 26: [loop] has no sample_period; add it or take the table out`},
 		{"spec without band", "band              = 0.02\n", "", `rig.toml: line 36: [spec] has no band; add it or take the table out`},
+		{"spec without settling", "settling          = 0.05\n", "", ``},
+		{"settling zero", "settling          = 0.05", "settling = 0", `rig.toml: line 39: spec.settling is 0; give a finite number above 0`},
 		{"kick without peak", "kick_peak         = 0.4\n", "", `rig.toml: line 36: [spec] has only one of kick and kick_peak; kick says how hard the push is, kick_peak how far it may move the output: give both or neither`},
 		{"overshoot in percent", `overshoot         = 0.10`, `overshoot = 10`, `rig.toml: line 38: spec.overshoot is 10; a fraction of the step, 0 to 1: write 0.10 for 10 %`},
 		{"band in percent", `band              = 0.02`, `band = 2`, `rig.toml: line 40: spec.band is 2; a fraction of the step, below 1: write 0.02 for 2 %`},
@@ -223,7 +225,7 @@ func TestRigNeeds(t *testing.T) {
 			"rig.toml: no input in [limits]; say what the actuator can do, absolute: input = [lowest, highest]"},
 		{"no period", "[log]\ninput='u'\noutput='y'\n[loop]\nsample_period=1\n[limits]\ninput=[0,1]",
 			"rig.toml: line 1: [log] has neither time nor sample_period; name the column of the stamps, or give the period in s",
-			"rig.toml: no [spec]; say what the loop has to do: step, overshoot, settling, band, peak_sensitivity"},
+			"rig.toml: no [spec]; say what the loop has to do: step, overshoot, band, peak_sensitivity, and settling unless it is to be chosen"},
 	} {
 		t.Run(c.name, func(t *testing.T) {
 			g, err := ReadRig(strings.NewReader(c.text), "rig.toml")

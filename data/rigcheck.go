@@ -190,7 +190,7 @@ func (g *Rig) checkSpec() error {
 	for _, c := range []struct {
 		key string
 		x   float64
-	}{{"spec.step", s.Step}, {"spec.settling", s.Settling}, {"spec.band", s.Band}} {
+	}{{"spec.step", s.Step}, {"spec.band", s.Band}} {
 		if err := g.positive(c.key, c.x); err != nil {
 			return err
 		}
@@ -198,7 +198,7 @@ func (g *Rig) checkSpec() error {
 	for _, c := range []struct {
 		key string
 		x   float64
-	}{{"spec.input_noise", s.InputNoise}, {"spec.kick", s.Kick}, {"spec.kick_peak", s.KickPeak}} {
+	}{{"spec.settling", s.Settling}, {"spec.input_noise", s.InputNoise}, {"spec.kick", s.Kick}, {"spec.kick_peak", s.KickPeak}} {
 		if err := g.optional(c.key, c.x); err != nil {
 			return err
 		}
@@ -280,7 +280,7 @@ func (g *Rig) NeedDesign() error {
 	case g.Limits.Input == nil:
 		return g.fault("limits", "say what the actuator can do, absolute: input = [lowest, highest]", "no input in [limits]")
 	case g.Spec == nil:
-		return g.fault("", "say what the loop has to do: step, overshoot, settling, band, peak_sensitivity", "no [spec]")
+		return g.fault("", "say what the loop has to do: step, overshoot, band, peak_sensitivity, and settling unless it is to be chosen", "no [spec]")
 	}
 	return nil
 }

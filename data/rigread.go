@@ -369,7 +369,7 @@ var required = map[string][]string{
 	"operating_point": {"input", "output"},
 	"stopgap":         {"numerator", "denominator"},
 	"loop":            {"sample_period"},
-	"spec":            {"step", "overshoot", "settling", "band", "peak_sensitivity"},
+	"spec":            {"step", "overshoot", "band", "peak_sensitivity"},
 }
 
 func (g *Rig) checkRequired(meta *toml.MetaData) error {
