@@ -25,7 +25,7 @@ const fineness = 4
 // StepResponses simulates the spec's reference step on the nominal plant and on plants drawn with the seed, for two
 // settling times. It panics where the loops hold no inner controller.
 func (l *Loops) StepResponses(model *ident.Model, rig *data.Rig, plants int, seed uint64) (*Responses, error) {
-	p, err := newProblem(model, rig)
+	p, err := newProblem(model, l.Asked(rig))
 	if err != nil {
 		return nil, err
 	}
@@ -84,7 +84,7 @@ type Curves struct {
 
 // Sensitivity computes the curves on the nominal plant and on plants drawn with the seed.
 func (l *Loops) Sensitivity(model *ident.Model, rig *data.Rig, plants int, seed uint64) (*Curves, error) {
-	p, err := newProblem(model, rig)
+	p, err := newProblem(model, l.Asked(rig))
 	if err != nil {
 		return nil, err
 	}

@@ -2,7 +2,6 @@ package design
 
 import (
 	"bytes"
-	"cmp"
 	"context"
 	"crypto/sha256"
 	"encoding/hex"
@@ -20,22 +19,20 @@ type Options struct {
 	Seed     uint64                // of all draws; the same seed gives the same loops, whatever Workers
 	Workers  int                   // at most so many goroutines; 0: one per core
 	Plants   int                   // fresh plants in the proof; 0: DefaultPlants
+	Inner    string                // form of the inner controller, one of InnerForms; "": the simplest that does
+	Outer    string                // form of the outer controller, one of OuterForms; "": the simplest that does
 	Progress func(done, total int) // called during the proof, from several goroutines; nil: not called
 }
-
-// Sizes of the tuning set: so many plants at first, so many of the worst of the pool added after each round.
-const (
-	tuningPool   = 120
-	tuningPlants = 8
-	tuningAdds   = 3
-	tuningRounds = 3
-)
 
 // Design finds two loops for a model: bounds first, then the inner loop, then the outer one, tuned for the worst of
 // plants drawn from the model, then the promise on fresh plants. When physics or the promise says no, it returns the
 // partial result, its verdict "refused", together with an *ident.RefusedError that says what and what to do. Any
 // other error comes without a result: the rig file or the model cannot be worked with, or ctx ended.
 func Design(ctx context.Context, model *ident.Model, rig *data.Rig, opt Options) (*Loops, error) {
+	inner, outer, err := opt.forms()
+	if err != nil {
+		return nil, err
+	}
 	p, err := pose(model, rig)
 	if p == nil {
 		return nil, err
@@ -64,18 +61,25 @@ func Design(ctx context.Context, model *ident.Model, rig *data.Rig, opt Options)
 	if r := contradicted(model); r != nil {
 		return l.refuse(r)
 	}
-	pool, err := p.plants(tuningPool, stream(opt.Seed, streamTuning, 0))
-	if err != nil {
-		return l.refuse(&ident.RefusedError{What: "the model allows plants that cannot be sampled: " + err.Error(), Do: "take a longer log, so that the model is surer"})
+	t := tuner{p: p, workers: opt.Workers, inner: inner, outer: outer}
+	if t.pool, err = p.pool(ctx, tuningPool, stream(opt.Seed, streamTuning, 0), opt.Workers); err != nil {
+		return l.passOn(err)
 	}
-	tuning := append([]plant{p.nominal}, pool[:tuningPlants]...)
-	aim := targets{0.95, 0.95}
-	var best pair
-	for attempt := 1; ; attempt++ {
-		if best, tuning, err = p.tune(ctx, l, best, pool, tuning, aim, opt.Workers); err != nil {
+	if least, _ := p.leastPeakS(p.spec.noise); !math.IsInf(least, 0) {
+		t.yard = least
+	}
+	if p.assumed {
+		if err := t.settle(ctx, l); err != nil {
 			return l.passOn(err)
 		}
-		if err := p.assemble(l, best, tuning); err != nil {
+	}
+	aim := p.aim(1, p.spec.settling)
+	var best pair
+	for attempt := 1; ; attempt++ {
+		if best, err = t.tune(ctx, l, best, aim); err != nil {
+			return l.passOn(err)
+		}
+		if err := p.assemble(l, best, t.set); err != nil {
 			return nil, err
 		}
 		l.Promise, err = p.prove(ctx, l.LTI(), opt, attempt)
@@ -85,7 +89,15 @@ func Design(ctx context.Context, model *ident.Model, rig *data.Rig, opt Options)
 		if l.Promise.kept() || attempt == 2 {
 			break
 		}
-		aim = targets{0.88, 0.85}
+		// The plants of the proof are not looked at: what it has shown is that the tails of the tuning's are too short.
+		more, err := p.pool(ctx, tuningTail, stream(opt.Seed, streamTuning, attempt), opt.Workers)
+		if err != nil {
+			return l.passOn(err)
+		}
+		t.pool, aim = append(t.pool, more...), p.aim(attempt+1, p.spec.settling)
+	}
+	if err := t.front(ctx, l, best); err != nil {
+		return nil, err
 	}
 	if l.Margins, err = p.allMargins(ctx, l.LTI(), opt); err != nil {
 		return nil, err
@@ -95,6 +107,7 @@ func Design(ctx context.Context, model *ident.Model, rig *data.Rig, opt Options)
 	if l.Yardstick, err = p.measure(ctx, l.LTI(), proven, opt.Workers); err != nil {
 		return nil, err
 	}
+	l.Choice = t.why(best, l.Margins.PlantInput.PeakSensitivity)
 	p.firstClosure(l, opt.Seed)
 	p.conclude(l)
 	if r := l.Promise.broken(&p.spec); r != nil {
@@ -140,145 +153,19 @@ func (l *Loops) passOn(err error) (*Loops, error) {
 	return nil, err
 }
 
-// tune finds a pair of loops for the worst of the tuning plants. The set grows by those plants of the pool on which
-// the pair does worst. start, if it holds a pair, is where a second attempt begins.
-func (p *problem) tune(ctx context.Context, l *Loops, start pair, pool, tuning []plant, aim targets, workers int) (pair, []plant, error) {
-	best := start
-	if best.form == "" {
-		var err error
-		if best, err = p.firstPair(ctx, l, tuning, aim, workers); err != nil {
-			return best, tuning, err
-		}
-	} else {
-		best = p.rejudge(best, tuning, aim)
-		best = p.polishBoth(ctx, best, tuning, aim, 300)
-	}
-	for range tuningRounds {
-		if err := ctx.Err(); err != nil {
-			return best, tuning, err
-		}
-		worse := p.worstOf(best, pool, aim)
-		added := 0
-		for _, i := range worse {
-			if added == tuningAdds {
-				break
-			}
-			if !slices.ContainsFunc(tuning, func(t plant) bool { return t.tf.Equal(pool[i].tf) }) {
-				tuning = append(tuning, pool[i])
-				added++
-			}
-		}
-		before := best.ratios.worst()
-		again := p.rejudge(best, tuning, aim)
-		if w := again.ratios.worst(); w <= meets || w <= 1.01*before && before <= 1 {
-			best = again
-			break
-		}
-		best = p.polishBoth(ctx, again, tuning, aim, 350)
-	}
-	return best, tuning, nil
-}
-
-// firstPair tunes inner forms from the simplest on, and outer forms about each, until a pair meets the spec on the
-// tuning plants.
-func (p *problem) firstPair(ctx context.Context, l *Loops, tuning []plant, aim targets, workers int) (pair, error) {
-	inners, chosen, err := p.tuneInner(ctx, tuning, workers)
-	if err != nil {
-		return pair{}, err
-	}
-	if chosen < 0 && !StronglyStabilisable(p.nominal.tf) {
-		return pair{}, &ident.RefusedError{
-			What: "no stable controller holds this plant: an odd number of its real unstable poles lies between two of its real right-half-plane zeros, infinity counted (parity interlacing), and an unstable controller is lost whenever the input saturates",
-			Do:   "move the sensor or the actuator, which moves the zeros",
-		}
-	}
-	if chosen < 0 {
-		return pair{}, &ident.RefusedError{
-			What: "no inner loop of the forms gain, lead, lead with roll-off holds all plants that the data allow",
-			Do:   fmt.Sprintf("shorten the delay (%.4g s in all) or the sample period (%.4g s), or take a longer log, so that fewer plants are allowed", p.nominal.tf.Delay, p.period),
-		}
-	}
-	var best pair
-	var rows []FormResult
-	for i, in := range inners {
-		if in.sound() || i == chosen {
-			rows = append(rows, FormResult{Loop: "inner", Form: in.form, Order: in.block.order, PeakSensitivity: in.peakS, InputNoise: in.noise})
-		}
-		if i < chosen || !in.stable || best.form != "" && best.ratios.worst() <= 1 {
-			continue
-		}
-		tried, err := p.tuneOuter(ctx, in, tuning, aim, workers)
-		if err != nil {
-			return pair{}, err
-		}
-		last := tried[len(tried)-1]
-		if last.ratios.worst() > meets {
-			last = p.polishBoth(ctx, last, tuning, aim, 400)
-		}
-		if best.form == "" || last.cost < best.cost {
-			best = last
-			rows = slices.DeleteFunc(rows, func(r FormResult) bool { return r.Loop == "outer" })
-			for _, t := range tried {
-				demand := t.ratios.worst()
-				if math.IsInf(demand, 0) {
-					demand = 0
-				}
-				rows = append(rows, FormResult{
-					Loop: "outer", Form: t.form, Order: t.outer.order, PeakSensitivity: t.ratios.peakSAt,
-					InputNoise: t.ratios.noiseAt, Demand: demand, Chosen: t.form == best.form,
-				})
-			}
-		}
-	}
-	for i := range rows {
-		if rows[i].Loop == "inner" && rows[i].Form == best.inner.form {
-			rows[i].Chosen = true
-		}
-	}
-	slices.SortStableFunc(rows, func(a, b FormResult) int { return cmp.Compare(a.Loop, b.Loop) })
-	l.Forms = rows
-	if !best.ratios.stable {
-		return best, &ident.RefusedError{
-			What: "an inner loop was found, but no outer loop of the forms I, PI, PI with lead keeps every tuning plant stable",
-			Do:   "ask for a longer settling time, or take a longer log, so that fewer plants are allowed",
-		}
-	}
-	return best, nil
-}
-
-// rejudge recomputes a pair's figures on other plants or for other targets.
-func (p *problem) rejudge(s pair, plants []plant, aim targets) pair {
-	var g gridLoop
-	var sim simulator
-	s.ratios = p.judge(s.inner.block, s.outer, s.pre, plants, aim, &g, &sim)
-	s.cost = s.ratios.cost()
-	return s
-}
-
-// worstOf returns the indices of the pool in order of how badly the pair does on them.
-func (p *problem) worstOf(s pair, pool []plant, aim targets) []int {
-	var g gridLoop
-	var sim simulator
-	cost := make([]float64, len(pool))
-	index := make([]int, len(pool))
-	for i := range pool {
-		cost[i] = p.judge(s.inner.block, s.outer, s.pre, pool[i:i+1], aim, &g, &sim).worst()
-		index[i] = i
-	}
-	slices.SortStableFunc(index, func(a, b int) int { return cmp.Compare(cost[b], cost[a]) })
-	return index
-}
+// limitPlants is the number of tuning plants on which the limits of v are tried.
+const limitPlants = 6
 
 // assemble writes a pair into the loops, with the limits of v.
 func (p *problem) assemble(l *Loops, s pair, tuning []plant) error {
 	l.InnerForm, l.OuterForm = s.inner.form, s.form
-	l.Inner, l.Outer, l.Prefilter = s.inner.block.file(p.period), s.outer.file(p.period), s.pre.file(p.period)
+	l.Inner, l.Outer, l.Prefilter = s.inner.block.file(), s.outer.file(), s.pre.file()
 	l.OuterLimits = nil
 	law := l.LTI()
 	if err := law.Validate(); err != nil {
 		return fmt.Errorf("designing loops: %w", err)
 	}
-	limits, short := p.outerLimits(law, tuning[:min(len(tuning), 6)], s.ratios.vs)
+	limits, short := p.outerLimits(law, tuning[:min(len(tuning), limitPlants)], s.ratios.vs)
 	l.OuterLimits = &limits
 	const text = "the spec's step or kick moves v so far that the outer limits leave less authority to stabilise than is prudent: ask for a smaller step or kick, or a slower one"
 	l.Warnings = slices.DeleteFunc(l.Warnings, func(w string) bool { return w == text })

@@ -279,19 +279,6 @@ func TestDesignStops(t *testing.T) {
 	}
 }
 
-func BenchmarkDesign(b *testing.B) {
-	for _, r := range testRigs() {
-		m := r.model(b)
-		b.Run(r.name, func(b *testing.B) {
-			for b.Loop() {
-				if _, err := Design(b.Context(), m, r.rig(), Options{Seed: 1}); err != nil {
-					b.Fatal(err)
-				}
-			}
-		})
-	}
-}
-
 func BenchmarkProof(b *testing.B) {
 	for _, r := range testRigs() {
 		m := r.model(b)

@@ -29,21 +29,32 @@
 //     spectral factorisation); input_noise is about the sensor's part. Where it does not fit, the whole prediction
 //     error counts, and a warning says so. H of an unstable plant has unstable poles, but they are the plant's, and
 //     A cancels in K S H: nothing unstable is ever simulated open loop.
-//  3. Inner loop: gain, lead, lead with roll-off. A lattice of rates, angles and gains finds starts on the nominal
-//     plant (signs included: nothing assumes a positive gain); simplexes polish them for the least worst peak |S|
-//     over the tuning plants, with input noise, slow poles, forbidden zeros and a least steady gain as constraints.
-//     The simplest form within 8 % of the best is taken.
-//  4. Outer loop: I, PI, PI with lead, each with a first-order prefilter, tuned for the worst ratio of reached to
-//     asked: overshoot, error after the settling time, peak |S|, input noise, use of the input, kick. The first form
-//     that meets all of them with a margin is taken; if none does, inner and outer loop are polished together.
-//  5. The tuning set starts with the nominal plant and a few draws and grows by the worst of a larger pool.
-//  6. Outer limits: as wide as leaves the inner loop alone able to come through any step of v between them.
-//  7. Proof on fresh draws, in the simulator of fit/lti: the loop that will run, see below.
-//  8. First closure: levels, hand-over and what faults look like, simulated at the nominal plant.
+//  3. Inner loop: the forms of InnerForms. A lattice of rates, angles and gains, or of weights for the observer-based
+//     one, finds starts on the nominal plant (signs included: nothing assumes a positive gain); simplexes polish them
+//     for the least worst peak |S| over the tuning plants, with input noise, slow poles, forbidden zeros, a least
+//     steady gain and a controller that is stable itself as constraints.
+//  4. Outer loop: the forms of OuterForms, each with a first-order prefilter, tuned for the worst ratio of reached to
+//     asked: overshoot, error after the settling time, peak |S|, input noise, use of the input, kick; where all are
+//     met with a margin, for the least peak |S|, noise and effort.
+//  5. Choice: pairs are tried from the simplest inner form on, and within it from the simplest outer one. The first is
+//     taken that meets the spec with a margin and whose peak |S| on the nominal plant is within 25 % of the yardstick,
+//     the least that any controllers reach under the same input noise; else the best. Loops.Choice says which it was.
+//  6. The tuning set starts with the nominal plant and a few draws and grows by the worst of a pool as large as the
+//     proof's draws, first for the inner loop alone, then for both. A second attempt draws a larger one: the plants of a
+//     proof are never tuned on.
+//  7. Outer limits: as wide as leaves the inner loop alone able to come through any step of v between them.
+//  8. Proof on fresh draws, in the simulator of fit/lti: the loop that will run, see below.
+//  9. Front: the pair is retuned for faster and slower steps, the outer form growing where it has to; points that are
+//     neither faster nor take less effort (peak input and three deviations of its noise) than another are left out.
+//  10. First closure: levels, hand-over and what faults look like, simulated at the nominal plant.
 //
-// Controllers are tuned in continuous parameters and mapped by Tustin's rule; plants are sampled exactly, with
-// delays of any length. What is judged while tuning is the mapped controller in the sampled loop, so that this is a
-// direct discrete design in other coordinates: the mapping approximates nothing and costs nothing. The tuner works on plain arrays (its counts of unstable poles are by the argument principle
+// Where the rig file asks for no settling time, the front is walked first, from a guess by the fastest unstable pole, and
+// its knee is designed for: the point furthest below the chord in logarithms. Loops.Assumed says so.
+//
+// Controllers are tuned in continuous parameters and mapped by Tustin's rule, but for the observer-based one, which is
+// designed on the sampled plant; plants are sampled exactly, with delays of any length. What is judged while tuning is
+// the mapped controller in the sampled loop, so that this is a direct discrete design in other coordinates: the mapping
+// approximates nothing and costs nothing. The tuner works on plain arrays (its counts of unstable poles are by the argument principle
 // on a grid); every verdict is on the eigenvalues of the realised, interconnected blocks and on simulated runs. Only
 // where a plant has more than 24 states, delay included, does the argument principle decide in the proof as well.
 //
@@ -107,7 +118,7 @@
 //
 // # What is not done
 //
-// One input, one output. No inner controller beyond second order with one zero: plants that need more, or that no
-// stable controller stabilises, are refused with that sentence. Overshoot and settling in the promise are those of
-// runs without noise. Delays of more than 500 samples are refused: e^(p tau) says no for an unstable plant, and a stable one gains nothing from samples that short.
+// One input, one output. No unstable inner controller: plants that no stable one stabilises are refused with that
+// sentence. Overshoot and settling in the promise are those of runs without noise. Delays of more than 500 samples are
+// refused: e^(p tau) says no for an unstable plant, and a stable one gains nothing from samples that short.
 package design

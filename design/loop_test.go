@@ -124,7 +124,7 @@ func TestGainRange(t *testing.T) {
 				t.Fatal(err)
 			}
 			var g gridLoop
-			g.on(p.z1, block{0, [3]float64{gain}, [3]float64{1}}.tustin(c.period), nil)
+			g.on(p.z1, continuous(lti.Poly{gain}, lti.Poly{1}, c.period).z, nil)
 			if out := p.frequency(&p.nominal, &g).outside; (out == 0) != k.want {
 				t.Errorf("%s, gain %v: %d poles outside on the grid, stable is %v", c.name, gain, out, k.want)
 			}
@@ -168,12 +168,12 @@ func TestNoiseInTheLoop(t *testing.T) {
 		near(t, r.name+": disturbance", p.noise.disturbance, r.disturbance, tol)
 
 		// A plain lead that holds the rig, without limits.
-		inners, chosen, err := p.tuneInner(t.Context(), []plant{p.nominal}, 0)
+		inners, err := p.tuneInner(t.Context(), InnerForms(), []plant{p.nominal}, nil, 0)
+		chosen := simplestInner(inners)
 		if err != nil || chosen < 0 {
 			t.Fatalf("%s: %v %d", r.name, err, chosen)
 		}
-		b := inners[chosen].block.file(r.period)
-		law := &lti.Law{Inner: b.lti(r.period)}
+		law := &lti.Law{Inner: inners[chosen].block.z}
 		const n = 200000
 		rnd := rand.New(rand.NewPCG(7, 7))
 		noise, dist := make([]float64, n), make([]float64, n)
@@ -215,12 +215,10 @@ func TestTunerSimulates(t *testing.T) {
 		if err != nil {
 			t.Fatal(err)
 		}
-		inner := block{2, [3]float64{0.3, 0.2}, [3]float64{1, 0.08, 0.004}}
-		outer := block{2, [3]float64{0.5, 0.4, 0.1}, [3]float64{0, 1, 0.3}}
-		pre := block{1, [3]float64{1, 0.05}, [3]float64{1, 0.2}}
-		law := &lti.Law{Inner: inner.file(r.period).lti(r.period)}
-		k2, f := outer.file(r.period).lti(r.period), pre.file(r.period).lti(r.period)
-		law.Outer, law.Prefilter = &k2, &f
+		inner := continuous(lti.Poly{0.3, 0.2, 0.01}, lti.Poly{1, 0.08, 0.004, 3e-5, 1e-7}, r.period)
+		outer := continuous(lti.Poly{0.5, 0.4, 0.1}, lti.Poly{0, 1, 0.3, 0.01}, r.period)
+		pre := continuous(lti.Poly{1, 0.05}, lti.Poly{1, 0.2}, r.period)
+		law := &lti.Law{Inner: inner.z, Outer: &outer.z, Prefilter: &pre.z}
 		const n = 60 // the loop need not be stable, and grows
 		ref := make([]float64, n)
 		for k := range ref {
@@ -238,7 +236,7 @@ func TestTunerSimulates(t *testing.T) {
 				t.Fatal(err)
 			}
 			var sim simulator
-			got := sim.step(&p.nominal, inner.tustin(r.period), outer.tustin(r.period), pre.tustin(r.period), n, r.period, n*r.period/2, 0.02, kick)
+			got := sim.step(&p.nominal, inner.z, outer.z, pre.z, n, r.period, n*r.period/2, 0.02, kick)
 			size := 0.0
 			for k := range n {
 				size = math.Max(size, math.Abs(tr.YTrue[k]))

@@ -48,8 +48,11 @@ type Loops struct {
 	OuterLimits    *[2]float64    `json:"outer_limits"`         // deviation of v; nil: none
 	Bounds         []Bound        `json:"bounds"`
 	Margins        *LoopMargins   `json:"margins"`
-	Yardstick      *Yardstick     `json:"yardstick"`       // nil: not measured
-	Forms          []FormResult   `json:"forms,omitempty"` // what each step of simplicity costs
+	Yardstick      *Yardstick     `json:"yardstick"`         // nil: not measured
+	Forms          []FormResult   `json:"forms,omitempty"`   // what each step of simplicity costs
+	Choice         string         `json:"choice,omitempty"`  // why these forms
+	Front          []FrontPoint   `json:"front,omitempty"`   // speed against effort, fastest first
+	Assumed        *Assumed       `json:"assumed,omitempty"` // nil: the rig file left nothing open
 	Sampling       *Sampling      `json:"sampling,omitempty"`
 	Hidden         *HiddenMode    `json:"hidden_mode,omitempty"` // nil: none was found
 	Promise        *Promise       `json:"promise"`

@@ -23,9 +23,11 @@ type pair struct {
 // ratios are reached over asked for the worst plant, one per demand: below 1 meets the spec.
 type ratios struct {
 	stable                                        bool
+	lost                                          float64 // how far from stable, in shares of the plants; 2: a zero is forbidden
 	overshoot, settling, peakS, noise             float64
 	input, rate, kick, trip                       float64
 	alone                                         float64 // peak |S| of the inner loop alone, against aloneShare
+	effort                                        float64 // share of the authority that the step takes, noise included
 	peakSAt, noiseAt, overshootAt, settlingAt, vs float64 // the figures behind, in their own units; vs: largest |v|
 }
 
@@ -36,39 +38,71 @@ func (r ratios) worst() float64 {
 	return max(r.overshoot, r.settling, r.peakS, r.noise, r.input, r.rate, r.kick, r.trip, r.alone)
 }
 
-// cost is what the tuner minimises: the worst ratio, with a little of the others so that it does not stand still on
-// a plateau.
+// Weights in the tuner's cost beside the worst ratio: of overshoot and settling, so that it does not stand still on a
+// plateau; of the peak |S|, so that once the spec is met what is left goes into margin; of the effort and of the
+// input's noise, which are not worth the last hundredth of margin.
+const (
+	calm       = 0.02
+	calmPeak   = 0.3
+	calmEffort = 0.15
+)
+
+// cost is what the tuner minimises: the worst ratio, down to where it meets the spec with some margin, and a little of
+// the others.
 func (r ratios) cost() float64 {
 	if !r.stable {
-		return 1e3
+		return 1e3 * (1 + r.lost)
 	}
-	return r.worst() + 0.03*(r.overshoot+r.settling+r.peakS+r.noise+r.input)
+	return math.Max(r.worst(), meets) + calm*(r.overshoot+r.settling) + calmPeak*(r.peakSAt+noiseWeight*r.noise) + calmEffort*r.effort
 }
 
-// runLength is the length of a tuning run, in samples: three settling times.
-func (p *problem) runLength(pl *plant) int {
-	n := int(math.Ceil(3*p.spec.settling/p.period)) + pl.lag + 1
+// lose counts poles outside the circle of one of the plants.
+func (r *ratios) lose(outside int, plants []plant) {
+	if outside != 0 {
+		r.stable = false
+		r.lost += 1 / float64(len(plants))
+	}
+}
+
+// targets are what tuning aims at, tighter than the spec.
+type targets struct {
+	settling, overshoot, band float64
+	peak                      float64 // share of the peak |S|'s part above 1
+}
+
+// aim says what to tune for so that a settling time is met: tighter than asked before the first proof, tighter still after
+// one that failed. The band shrinks threefold as much as the time, because an output that turns just outside it settles
+// much later.
+func (p *problem) aim(attempt int, settling float64) targets {
+	time, peak := 0.95, 0.95
+	if attempt > 1 {
+		time, peak = 0.88, 0.85
+	}
+	return targets{time * settling, time * p.spec.overshoot, (1 - 3*(1-time)) * p.spec.band, peak}
+}
+
+// runLength is the length of a tuning run, in samples: two settling times.
+func (p *problem) runLength(pl *plant, t targets) int {
+	n := int(math.Ceil(2*t.settling/p.period)) + pl.lag + 1
 	return min(max(n, 30), 4000)
 }
-
-// targets tighten the spec for tuning: 1 aims at the spec itself.
-type targets struct{ time, peak float64 }
 
 // judge computes the ratios of a pair of loops over plants.
 func (p *problem) judge(inner, outer, pre block, plants []plant, t targets, g *gridLoop, sim *simulator) ratios {
 	r := ratios{stable: true}
 	if !p.zerosAllowed(inner, &outer) {
-		return ratios{}
+		return ratios{lost: 2}
 	}
-	k1, k2, f := inner.tustin(p.period), outer.tustin(p.period), pre.tustin(p.period)
+	k1, k2, f := inner.z, outer.z, pre.z
 	// The inner loop alone must hold every plant.
 	g.on(p.z1, k1, nil)
 	for i := range plants {
 		f := p.frequency(&plants[i], g)
-		if f.outside != 0 {
-			return ratios{}
-		}
+		r.lose(f.outside, plants)
 		r.alone = math.Max(r.alone, f.peakS/(aloneShare*p.spec.peakS))
+	}
+	if !r.stable {
+		return ratios{lost: 1 + r.lost}
 	}
 	g.on(p.z1, k1, &k2)
 	s := &p.spec
@@ -77,15 +111,15 @@ func (p *problem) judge(inner, outer, pre block, plants []plant, t targets, g *g
 	for i := range plants {
 		pl := &plants[i]
 		fq := p.frequency(pl, g)
-		if fq.outside != 0 {
-			return ratios{}
+		if r.lose(fq.outside, plants); !r.stable {
+			continue
 		}
 		r.peakSAt, r.noiseAt = math.Max(r.peakSAt, fq.peakS), math.Max(r.noiseAt, fq.noise)
-		n := p.runLength(pl)
-		st := sim.step(pl, k1, k2, f, n, p.period, s.settling*t.time, s.band, false)
+		n := p.runLength(pl, t)
+		st := sim.step(pl, k1, k2, f, n, p.period, t.settling, s.band, false)
 		r.overshootAt, early = math.Max(r.overshootAt, st.peak-1), math.Max(early, st.early)
 		r.settlingAt = math.Max(r.settlingAt, float64(st.settled)*p.period)
-		r.settling = math.Max(r.settling, settlingRatio(st.after/s.band))
+		r.settling = math.Max(r.settling, settlingRatio(st.after/t.band))
 		r.input = math.Max(r.input, st.uMax*s.step/authority)
 		r.vs = math.Max(r.vs, st.vMax*s.step)
 		if p.rate > 0 {
@@ -96,12 +130,15 @@ func (p *problem) judge(inner, outer, pre block, plants []plant, t targets, g *g
 			r.trip = math.Max(r.trip, math.Max(st.peak, -st.low)*s.step/room)
 		}
 		if s.kick > 0 && s.kickPeak > 0 {
-			kk := sim.step(pl, k1, k2, f, n, p.period, s.settling, s.band, true)
+			kk := sim.step(pl, k1, k2, f, n, p.period, t.settling, s.band, true)
 			r.kick = math.Max(r.kick, math.Max(kk.peak, -kk.low)*s.kick/s.kickPeak)
 			r.vs = math.Max(r.vs, kk.vMax*s.kick)
 		}
 	}
-	over := r.overshootAt - s.overshoot*t.time
+	if !r.stable {
+		return ratios{lost: r.lost}
+	}
+	over := r.overshootAt - t.overshoot
 	if over <= 0 && s.overshoot < 0.01 {
 		// Next to no overshoot asked: the margin is how far below its end the output stays while it settles.
 		over = early - (1 - 0.15*s.band)
@@ -109,8 +146,12 @@ func (p *problem) judge(inner, outer, pre block, plants []plant, t targets, g *g
 	r.overshoot = 1 + over/math.Max(s.overshoot, 0.05)
 	r.peakS = 1 + (r.peakSAt-t.peak*(s.peakS-1)-1)/math.Max(s.peakS-1, 0.2)*0.5
 	r.noise = r.noiseAt / s.noise
+	r.effort = r.input + surest*r.noiseAt/authority
 	return r
 }
+
+// surest is the number of standard deviations of noise that count to the effort of a step.
+const surest = 3
 
 // settlingRatio turns the largest error after the settling time, in bands, into a number that grows slowly, so that
 // the tuner sees a slope from far away and a margin when near.
@@ -137,105 +178,74 @@ func (p *problem) outerStarts(form string, inner innerResult, t targets) []pair 
 		sign = -1
 	}
 	level := math.Min(math.Max(math.Abs(dc), 0.02), 50)
-	try := func(x []float64) {
-		k, f := outerBlocks(form, x, sign, p.spec.settling)
+	outerLattice(form, level, func(x ...float64) {
+		k, f := p.outerBlocks(form, x, sign, p.spec.settling)
 		r := p.judge(inner.block, k, f, nominal, t, &g, &sim)
 		out = append(out, pair{form: form, x: x, sign: sign, inner: inner, outer: k, pre: f, ratios: r, cost: r.cost()})
-	}
-	for _, lag := range []float64{0.03, 0.1, 0.25} {
-		for _, ki := range []float64{0.1, 0.3, 0.8, 2, 5, 12} {
-			x := []float64{math.Log(lag), 0, math.Log(ki / level)}
-			if form == formI {
-				try(x)
-				continue
-			}
-			for _, a := range []float64{0.03, 0.1, 0.25} {
-				y := append(slices.Clone(x), math.Log(a))
-				if form == formPI {
-					try(y)
-					continue
-				}
-				for _, b := range []float64{0.02, 0.07} {
-					try(append(slices.Clone(y), math.Log(b), math.Log(3)))
-				}
-			}
-		}
-	}
+	})
 	slices.SortStableFunc(out, func(a, b pair) int { return cmp.Compare(a.cost, b.cost) })
-	return out[:min(len(out), 3)]
+	return out[:min(len(out), 2)]
 }
 
 // innerDC is the steady gain of the inner loop from v to y.
 func innerDC(pl *plant, k block) float64 {
 	// With B/A the plant at z = 1 and k0 the controller: k0 B/(A + k0 B); right for integrators too, where A = 0.
-	k0 := k.num[0] / k.den[0]
+	k0 := k.z.DC()
 	return k0 * real(pl.b[0]) / (real(pl.a[0]) + k0*real(pl.b[0]))
 }
 
-// tuneOuter tunes the outer forms about an inner controller, simplest first, and stops at the first that meets the
-// spec on all plants with some margin. It returns all that were tried, the chosen one last.
-func (p *problem) tuneOuter(ctx context.Context, inner innerResult, plants []plant, t targets, workers int) ([]pair, error) {
+// tuneOuter tunes outer forms about an inner controller, simplest first, and stops at the first that is good enough.
+// It returns all that were tried, the best one last.
+func (t *tuner) tuneOuter(ctx context.Context, inner innerResult, aim targets) ([]pair, error) {
 	var tried []pair
-	for _, form := range []string{formI, formPI, formPILead} {
-		starts := p.outerStarts(form, inner, t)
+	best := 0
+	for i, form := range t.outer {
+		starts := t.p.outerStarts(form, inner, aim)
 		done := make([]pair, len(starts))
-		if err := ident.Each(ctx, len(starts), workers, func(i int) error {
-			done[i] = p.polishOuter(ctx, starts[i], plants, t)
+		if err := ident.Each(ctx, len(starts), t.workers, func(i int) error {
+			done[i] = t.p.polishOuter(ctx, starts[i], inner.set, aim)
 			return nil
 		}); err != nil {
 			return nil, err
 		}
-		best := done[0]
-		for _, d := range done[1:] {
-			if d.cost < best.cost {
-				best = d
+		tried = append(tried, slices.MinFunc(done, func(a, b pair) int { return cmp.Compare(a.cost, b.cost) }))
+		if enough := t.enough(tried[i]); enough || t.better(tried[i], tried[best]) {
+			if best = i; enough {
+				break
 			}
 		}
-		tried = append(tried, best)
-		if best.ratios.worst() <= meets {
-			break
-		}
 	}
-	slices.SortStableFunc(tried, func(a, b pair) int {
-		// The chosen one goes last; the others keep their order.
-		return cmp.Compare(rank(a, tried), rank(b, tried))
-	})
-	return tried, nil
-}
-
-// rank is 1 for the best of the tried pairs, 0 for the others.
-func rank(a pair, all []pair) int {
-	for _, b := range all {
-		if b.cost < a.cost {
-			return 0
-		}
-	}
-	return 1
+	last := tried[best]
+	return append(slices.Delete(tried, best, best+1), last), nil
 }
 
 func (p *problem) polishOuter(ctx context.Context, s pair, plants []plant, t targets) pair {
 	var g gridLoop
 	var sim simulator
-	eval := func(x []float64) ratios {
-		k, f := outerBlocks(s.form, x, s.sign, p.spec.settling)
-		return p.judge(s.inner.block, k, f, plants, t, &g, &sim)
+	eval := func(x []float64) (k, f block, r ratios) {
+		k, f = p.outerBlocks(s.form, x, s.sign, p.spec.settling)
+		return k, f, p.judge(s.inner.block, k, f, plants, t, &g, &sim)
 	}
-	x, _ := minimise(ctx, func(x []float64) float64 { return eval(x).cost() }, s.x, 0.3, 60*len(s.x))
-	s.x = x
-	s.outer, s.pre = outerBlocks(s.form, x, s.sign, p.spec.settling)
-	s.ratios = eval(x)
+	s.x, _ = minimise(ctx, func(x []float64) float64 {
+		_, _, r := eval(x)
+		return r.cost()
+	}, s.x, 0.3, 60*len(s.x))
+	s.outer, s.pre, s.ratios = eval(s.x)
 	s.cost = s.ratios.cost()
 	return s
 }
 
-// polishBoth tunes inner and outer controller together, from a pair that does not meet the spec.
+// polishBoth tunes inner and outer controller together.
 func (p *problem) polishBoth(ctx context.Context, s pair, plants []plant, t targets, budget int) pair {
 	var g gridLoop
 	var sim simulator
 	n := len(s.inner.x)
 	eval := func(x []float64) (block, block, block, ratios) {
-		k1 := innerBlock(s.inner.form, x[:n], s.inner.scale, p.period)
-		k2, f := outerBlocks(s.form, x[n:], s.sign, p.spec.settling)
+		k1, ok := p.innerBlock(s.inner.form, x[:n], s.inner.scale)
+		k2, f := p.outerBlocks(s.form, x[n:], s.sign, p.spec.settling)
+		if !ok {
+			return k1, k2, f, ratios{lost: 2}
+		}
 		return k1, k2, f, p.judge(k1, k2, f, plants, t, &g, &sim)
 	}
 	x0 := append(slices.Clone(s.inner.x), s.x...)

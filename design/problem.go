@@ -27,6 +27,9 @@ type problem struct {
 	spec    demands
 	noise   noise
 	nominal plant
+	assumed bool // no settling time is asked: that of the spec is a guess
+
+	estimated estimated // the nominal plant, for observers
 
 	omega []float64    // rad/s, from 0 to pi/period
 	z1    []complex128 // e^{-i omega period}
@@ -100,6 +103,9 @@ func pose(model *ident.Model, rig *data.Rig) (*problem, error) {
 	}
 	if rig.Loop.Hold == data.HoldBandLimited {
 		p.warnings = append(p.warnings, "the loops were designed for an input held between samples (zero-order); a band-limited hold adds its own delay")
+	}
+	if p.assumed = s.Settling == 0; p.assumed {
+		p.spec.settling = p.guessSettling()
 	}
 	return p, p.about()
 }
@@ -195,6 +201,9 @@ func (p *problem) sample() error {
 	p.grid(p.model.TF().Delay + p.compute)
 	var err error
 	if p.nominal, err = p.newPlant(p.model.TF()); err != nil {
+		return err
+	}
+	if p.estimated, err = newEstimated(p.nominal.tf, p.period); err != nil {
 		return err
 	}
 	p.noise = p.splitNoise()

@@ -39,7 +39,7 @@ type Record struct {
 // Simulate runs the loops on the model's own plant, with the disturbances as identified, and returns what a logger
 // would have written. Draws depend on the seed only. It panics where the loops hold no inner controller.
 func (l *Loops) Simulate(model *ident.Model, rig *data.Rig, t Test) (*Record, error) {
-	p, err := newProblem(model, rig)
+	p, err := newProblem(model, l.Asked(rig))
 	if err != nil {
 		return nil, err
 	}

@@ -19,6 +19,10 @@ func Verify(ctx context.Context, model *ident.Model, rig *data.Rig, loops *Loops
 	if loops.Inner == nil {
 		panic(noInner)
 	}
+	rig = loops.Asked(rig)
+	if rig.Spec != nil && rig.Spec.Settling == 0 {
+		return nil, fmt.Errorf("[spec] has no settling, and the loops do not say which they were designed for: give one to judge them by")
+	}
 	p, err := pose(model, rig)
 	if p == nil {
 		return nil, err
@@ -33,7 +37,7 @@ func Verify(ctx context.Context, model *ident.Model, rig *data.Rig, loops *Loops
 		return nil, err
 	}
 	l := p.newLoops()
-	l.Inner, l.Outer, l.Prefilter, l.OuterLimits = loops.Inner, loops.Outer, loops.Prefilter, loops.OuterLimits
+	l.Inner, l.Outer, l.Prefilter, l.OuterLimits, l.Assumed = loops.Inner, loops.Outer, loops.Prefilter, loops.OuterLimits, loops.Assumed
 	if err := p.sample(); err != nil {
 		return l.passOn(err)
 	}
