@@ -220,15 +220,15 @@ func (p *problem) bounds(ctx context.Context, draws []lti.TF) []Bound {
 	least(BoundEffort, ratioUnit(units.Input, units.Output), nil, "1/|G| at the pole, pole mirrored, Havre & Skogestad (2003)", "")
 	p.addAuthority(&out, nominal[BoundStepInput], [2]unfavourable{at(BoundStepInput, 0.025), at(BoundStepInput, 0.975)})
 	settling := &s.settling
-	if p.assumed {
+	if p.assumed { // nobody asks for it, and what depends on it is left out
 		settling = nil
 	}
 	least(BoundDeadTime, "s", settling, "nothing moves before the delay and one sample have passed", "settling")
-	if v := worst(BoundOvershoot); v > 0 {
+	if v := worst(BoundOvershoot); v > 0 && !p.assumed {
 		b := add(BoundOvershoot, "least", "", nil, "any loop u = K (r - y): the integral of (1-y) e^(-pt) is zero, Middleton (1991), Automatica 27; Seron, Braslavsky & Goodwin (1997)", "", 0)
 		b.Asked, b.Relaxed = &s.overshoot, relaxedByPrefilter
 	}
-	if nominal[BoundReverse] > 0 && !p.assumed { // else it depends on a guess
+	if nominal[BoundReverse] > 0 && !p.assumed {
 		var room *float64
 		nearest := 0.0
 		if p.output != nil {

@@ -21,11 +21,16 @@ func newDesign(a *app) *cobra.Command {
 		Short: "Design an inner and an outer loop, and prove them",
 		Long: `design says first what physics allows, then tunes an inner loop that stabilises
 and an outer loop that meets the spec, for the worst of plants drawn from the
-model, and counts on fresh draws how many keep the promise. It writes
-loops.json, or the file that --out names.`,
-		Example: "  steadyrig design rig.toml model.json",
+model, and counts on fresh draws how many keep the promise. Of the forms that
+do, the simplest is taken; --inner and --outer ask for one. Without settling
+in [spec] it is chosen where faster steps begin to cost more than they gain.
+It writes loops.json, or the file that --out names.`,
+		Example: "  steadyrig design rig.toml model.json\n  steadyrig design rig.toml model.json --inner observer-based --outer PI",
 		Args:    wants(2, 2, "a rig file and a model"),
 		RunE: func(cmd *cobra.Command, args []string) error {
+			if err := s.checkForms(); err != nil {
+				return err
+			}
 			if err := a.checkTarget(&s, loopsFile); err != nil {
 				return err
 			}
@@ -39,6 +44,7 @@ loops.json, or the file that --out names.`,
 	}
 	s.add(cmd, "write the loops here instead of to loops.json")
 	s.addSeed(cmd)
+	s.addForms(cmd)
 	return cmd
 }
 
@@ -158,7 +164,9 @@ func (a *app) loopsToVerify(rig *data.Rig, files []string, flags *data.Controlle
 func (a *app) design(ctx context.Context, model *ident.Model, rig *data.Rig, s *settings, modelSum string) (*design.Loops, error) {
 	bar := a.progress("design", s.quiet)
 	defer bar.wipe()
-	loops, refusal := design.Design(ctx, model, rig, design.Options{Seed: s.seed, Progress: bar.step})
+	opt := s.design()
+	opt.Progress = bar.step
+	loops, refusal := design.Design(ctx, model, rig, opt)
 	if err := a.finishLoops(ctx, loops, refusal, modelSum); err != nil {
 		return nil, err
 	}

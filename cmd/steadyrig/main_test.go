@@ -221,6 +221,8 @@ func TestBadCalls(t *testing.T) {
 		{"design rig.toml model.json --out l.json", "schema"},
 		{"design rig.toml text.json --out l.json", "text.json:1"},
 		{"design rig.toml absent.json --out l.json", "absent.json"},
+		{"design rig.toml model.json --inner PI --out l.json", "choose one of gain, lead, lead with roll-off, second order, observer-based"},
+		{"run whole.toml log.csv --outer gain --dir a", "choose one of I, PI, PI with lag, PI with lead, PID with roll-off"},
 		{"demo --rig boat", "hover"},
 		{"demo hover", "--rig"},
 		{"run whole.toml log.csv --dir rig.toml", "a file; name a folder"},

@@ -169,7 +169,7 @@ func draftRig(h *data.LogHeader, name string) string {
 	line("# [spec]  # fill in: what the loop has to do")
 	line("# step             = 0.1   # size of the reference step, units of output")
 	line("# overshoot        = 0.15  # fraction of the step")
-	line("# settling         = 1.0   # s, to within the band for good")
+	line("# settling         = 1.0   # s, to within the band for good; leave out and it is chosen")
 	line("# band             = 0.02  # fraction of the step")
 	line("# peak_sensitivity = 2.0   # largest |S| at the plant input, both loops closed")
 	return b.String()

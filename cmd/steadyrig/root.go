@@ -5,6 +5,8 @@ import (
 	"strings"
 
 	"github.com/spf13/cobra"
+
+	"steadyrig/design"
 )
 
 const rootLong = `steadyrig takes closed-loop logs of a rig that cannot be left open loop and
@@ -82,6 +84,8 @@ type settings struct {
 	force bool
 	seed  uint64
 	exact bool
+
+	inner, outer string // forms asked for
 }
 
 // defaultSeed serves where --seed is not given, so that a call without it can be repeated, too.
@@ -100,6 +104,25 @@ func (s *settings) add(cmd *cobra.Command, out string) {
 // addSeed adds --seed to a command that draws random numbers.
 func (s *settings) addSeed(cmd *cobra.Command) {
 	cmd.Flags().Uint64Var(&s.seed, "seed", defaultSeed, "seed of all random draws")
+}
+
+// addForms adds --inner and --outer to a command that designs.
+func (s *settings) addForms(cmd *cobra.Command) {
+	f := cmd.Flags()
+	f.StringVar(&s.inner, "inner", "", "form of the inner controller: "+strings.Join(design.InnerForms(), ", ")+" (default: the simplest that does)")
+	f.StringVar(&s.outer, "outer", "", "form of the outer controller: "+strings.Join(design.OuterForms(), ", ")+" (default: the simplest that does)")
+}
+
+// checkForms refuses a form that there is not, before any work.
+func (s *settings) checkForms() error {
+	if err := s.design().Check(); err != nil {
+		return callErrorf("%w", err)
+	}
+	return nil
+}
+
+func (s *settings) design() design.Options {
+	return design.Options{Seed: s.seed, Inner: s.inner, Outer: s.outer}
 }
 
 // addExact adds --exact to a command that fits.

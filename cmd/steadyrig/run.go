@@ -37,6 +37,9 @@ rig.toml, audit.json, model.json, loops.json and report.html into one folder.`,
 		Example: "  steadyrig run rig.toml run7.csv run8.csv --dir study",
 		Args:    wants(2, -1, "a rig file and one or more logs"),
 		RunE: func(cmd *cobra.Command, args []string) error {
+			if err := s.checkForms(); err != nil {
+				return err
+			}
 			text, err := a.text(args[0])
 			if err != nil {
 				return err
@@ -60,6 +63,7 @@ rig.toml, audit.json, model.json, loops.json and report.html into one folder.`,
 	}
 	s.addFolder(cmd)
 	s.addSeed(cmd)
+	s.addForms(cmd)
 	s.addExact(cmd)
 	return cmd
 }
@@ -79,6 +83,9 @@ one.`,
 		RunE: func(cmd *cobra.Command, args []string) error {
 			if list {
 				return a.listRigs(&s)
+			}
+			if err := s.checkForms(); err != nil {
+				return err
 			}
 			demo, ok := demorig.ByName(name)
 			if !ok {
@@ -111,6 +118,7 @@ one.`,
 	}
 	s.addFolder(cmd)
 	s.addSeed(cmd)
+	s.addForms(cmd)
 	cmd.Flags().StringVar(&name, "rig", demorig.All()[0].Name, "built-in rig")
 	cmd.Flags().BoolVar(&list, "list", false, "list the built-in rigs and stop")
 	return cmd

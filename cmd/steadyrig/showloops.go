@@ -14,6 +14,7 @@ func showLoops(p *page, l *design.Loops, u data.Units) {
 	p.verdict(l.Verdict, words.Loops(l))
 	showBounds(p, l)
 	showControllers(p, l, u)
+	showFront(p, l, u)
 	showMargins(p, l)
 	showYardstick(p, l, u)
 	showPromise(p, l, u)
@@ -88,16 +89,43 @@ func showControllers(p *page, l *design.Loops, u data.Units) {
 		return
 	}
 	p.heading("What simplicity costs, on the worst of the tuning plants")
-	var loop, form, peak, noise, chosen []string
+	var loop, form, order, peak, noise, chosen []string
 	for _, f := range l.Forms {
 		mark := ""
 		if f.Chosen {
 			mark = "chosen"
 		}
-		loop, form, chosen = append(loop, f.Loop), append(form, f.Form), append(chosen, mark)
+		loop, form, order, chosen = append(loop, f.Loop), append(form, f.Form), append(order, fmt.Sprint(f.Order)), append(chosen, mark)
 		peak, noise = append(peak, words.Number(f.PeakSensitivity)), append(noise, words.Unit(words.Number(f.InputNoise), u.Input))
 	}
-	p.table(columns("loop", loop, "form", form, ">peak |S|", peak, ">input noise", noise, " ", chosen))
+	p.table(columns("loop", loop, "form", form, ">order", order, ">peak |S|", peak, ">input noise", noise, " ", chosen))
+	if l.Choice != "" {
+		p.line("")
+		p.item("chosen", l.Choice)
+	}
+}
+
+func showFront(p *page, l *design.Loops, u data.Units) {
+	if len(l.Front) == 0 {
+		return
+	}
+	p.heading("Speed against effort of the step, worst tuning plant (input: of its range)")
+	var settling, over, input, noise, peak, form, chosen []string
+	for _, f := range l.Front {
+		mark := ""
+		if f.Chosen {
+			mark = "chosen"
+		}
+		settling, over, input = append(settling, words.Seconds(f.Settling)), append(over, words.Share(f.Overshoot)), append(input, words.Share(f.PeakInput))
+		noise, peak = append(noise, words.Unit(words.Number(f.InputNoise), u.Input)), append(peak, words.Number(f.PeakSensitivity))
+		form, chosen = append(form, f.OuterForm), append(chosen, mark)
+	}
+	p.table(columns(">settling", settling, ">overshoot", over, ">input", input, ">input noise", noise, ">peak |S|", peak, "outer", form, " ", chosen))
+	p.line("")
+	if l.Assumed != nil {
+		p.item("settling", fmt.Sprintf("%s, chosen: %s", words.Seconds(l.Assumed.Settling), l.Assumed.Why))
+	}
+	p.item("another point", "its controllers are under front in loops.json; ask for its settling in [spec] to have it proven")
 }
 
 // showMappings prints how controllers in s were brought to the sample period.

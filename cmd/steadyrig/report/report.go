@@ -27,6 +27,8 @@ type Input struct {
 	Tool    string
 	Made    time.Time
 	Seed    uint64 // of the plants drawn for the figures
+
+	settlingChosen bool // the rig file gives none
 }
 
 //go:embed page.html
@@ -79,6 +81,9 @@ func (t table) Column(j int) string {
 
 // Write writes the report.
 func Write(w io.Writer, in Input) error {
+	asked := in.Rig
+	in.Rig = in.Loops.Asked(in.Rig)
+	in.settlingChosen = in.Rig != asked
 	v := view{
 		Rig: in.Rig.Name, About: in.About, Word: strings.ToUpper(in.Verdict[:1]) + in.Verdict[1:], Class: in.Verdict,
 		Command: in.Command, Tool: in.Tool,

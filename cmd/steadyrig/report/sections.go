@@ -66,7 +66,7 @@ func headFacts(in Input) []fact {
 			f = append(f,
 				fact{"Peak |S|, worst plant", words.Number(q.PeakS.Worst) + asked(in, func() float64 { return in.Rig.Spec.PeakSensitivity }, "")},
 				fact{"Overshoot, worst plant", words.Share(q.Overshoot.Worst) + asked(in, func() float64 { return 100 * in.Rig.Spec.Overshoot }, "%")},
-				fact{"Settling, worst plant", words.Seconds(q.Settling.Worst) + askedText(in, func() string { return words.Seconds(in.Rig.Spec.Settling) })},
+				fact{"Settling, worst plant", words.Seconds(q.Settling.Worst) + settlingText(in)},
 				fact{"Comes back from", words.Unit(words.Number(q.Recoverable), u.Output)},
 			)
 		}
@@ -95,6 +95,13 @@ func askedText(in Input, get func() string) string {
 		return ""
 	}
 	return " (asked: " + get() + ")"
+}
+
+func settlingText(in Input) string {
+	if in.settlingChosen {
+		return " (none asked, " + words.Seconds(in.Rig.Spec.Settling) + " chosen)"
+	}
+	return askedText(in, func() string { return words.Seconds(in.Rig.Spec.Settling) })
 }
 
 func factors(m *design.Margins) string {
@@ -326,16 +333,38 @@ func loopsSection(in Input) section {
 		blocks.Rows = append(blocks.Rows, []string{b.name, b.form, continuous, words.Fraction(b.block.Discrete, "z")})
 	}
 	s.Tables = append(s.Tables, blocks)
-	forms := table{Caption: "What simplicity costs, on the worst of the tuning plants", Head: []string{"Loop", "Form", "Peak |S|", "Input noise, sd", ""}, Right: []bool{false, false, true, true}}
+	forms := table{Caption: "What simplicity costs, on the worst of the tuning plants", Head: []string{"Loop", "Form", "Order", "Peak |S|", "Input noise, sd", ""}, Right: []bool{false, false, true, true, true}}
 	for _, f := range l.Forms {
 		mark := ""
 		if f.Chosen {
 			mark = "chosen"
 		}
-		forms.Rows = append(forms.Rows, []string{f.Loop, f.Form, words.Number(f.PeakSensitivity), words.Unit(words.Number(f.InputNoise), u.Input), mark})
+		forms.Rows = append(forms.Rows, []string{f.Loop, f.Form, fmt.Sprint(f.Order), words.Number(f.PeakSensitivity), words.Unit(words.Number(f.InputNoise), u.Input), mark})
+	}
+	if l.Choice != "" {
+		forms.Notes = []string{sentence("Chosen: " + l.Choice)}
 	}
 	if len(forms.Rows) > 0 {
 		s.Tables = append(s.Tables, forms)
+	}
+	front := table{
+		Caption: "Speed against effort of the spec's step, on the worst of the tuning plants",
+		Head:    []string{"Settling", "Overshoot", "Of the input's range", "Input noise, sd", "Peak |S|", "Outer form", ""}, Right: []bool{true, true, true, true, true},
+		Notes: []string{"The controllers of each point are in loops.json. To have another one proven, ask for its settling in the rig file."},
+	}
+	for _, f := range l.Front {
+		mark := ""
+		if f.Chosen {
+			mark = "chosen"
+		}
+		front.Rows = append(front.Rows, []string{words.Seconds(f.Settling), words.Share(f.Overshoot), words.Share(f.PeakInput),
+			words.Unit(words.Number(f.InputNoise), u.Input), words.Number(f.PeakSensitivity), f.OuterForm, mark})
+	}
+	if len(front.Rows) > 0 {
+		s.Tables = append(s.Tables, front)
+	}
+	if l.Assumed != nil {
+		s.Facts = append(s.Facts, fact{"Settling", fmt.Sprintf("%s, chosen: %s", words.Seconds(l.Assumed.Settling), l.Assumed.Why)})
 	}
 	return s
 }
