@@ -96,7 +96,8 @@ type innerScale struct {
 // innerBlock builds an inner controller from its parameters: x[0] = ln of the gain at scale.rate relative to
 // scale.gain; x[1] = the angle between stiffness (0) and damping (pi/2), so that no sign is fixed beforehand;
 // x[2] = ln of the roll-off rate relative to scale.rate; of the second order also x[3] = the angle by which the
-// numerator leans to s^2, x[4] = ln of the roll-off's damping. For those of an observer-based one see observer. False where there is none.
+// numerator leans to s^2, x[4] = ln of the roll-off's damping. For those of an observer-based one see observer. False
+// where there is none.
 func (p *problem) innerBlock(form string, x []float64, scale innerScale) (block, bool) {
 	if form == formObserver {
 		return p.observer(x)

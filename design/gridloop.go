@@ -100,7 +100,8 @@ func (t *turning) to(c complex128) {
 	t.last, t.quadrant = c, q
 }
 
-// outside is the number of roots outside the circle of a polynomial in z^-1 that was followed from z = 1 to z = -1: each turns it back by half a turn.
+// outside is the number of roots outside the circle of a polynomial in z^-1 that was followed from z = 1 to z = -1: each
+// turns it back by half a turn.
 func (t *turning) outside() int { return -t.quarters / 2 }
 
 // stepFigures of the linear, noise-free sampled loop after a unit step of the reference (or of the plant input).

@@ -33,7 +33,8 @@ const noiseWeight = 0.2
 // leastGrip is the least steady gain from v to y that the inner loop is asked for.
 const leastGrip = 0.25
 
-// After a first tuning of the inner forms the pool is looked through so many times, and so many plants on which each form does worst are added.
+// After a first tuning of the inner forms the pool is looked through so many times, and so many plants on which each
+// form does worst are added.
 const (
 	innerTails = 2
 	innerAdds  = 2
