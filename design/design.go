@@ -44,6 +44,7 @@ func Design(ctx context.Context, model *ident.Model, rig *data.Rig, opt Options)
 	if err != nil {
 		return l.passOn(err)
 	}
+	l.Warnings = p.said() // sampling may have added to them
 	draws := p.drawTFs(boundDraws, streamBounds, opt.Seed)
 	l.Bounds = p.bounds(ctx, draws)
 	if err := ctx.Err(); err != nil {
@@ -121,12 +122,15 @@ func (p *problem) newLoops() *Loops {
 	l := &Loops{
 		Schema: LoopsSchema, Tool: p.model.Tool, Rig: p.rig.Name, Made: p.model.Made, ModelSHA256: modelSum(p.model),
 		SamplePeriod: p.period, ComputeDelay: p.rig.Loop.ComputeDelay, OperatingPoint: p.point, Law: LawText,
-		InputRate: p.rate, Verdict: Sound, Warnings: append(slices.Clone(p.doubts), p.warnings...), Bounds: []Bound{},
+		InputRate: p.rate, Verdict: Sound, Warnings: p.said(), Bounds: []Bound{},
 	}
 	lim := p.limits
 	l.InputLimits = &lim
 	return l
 }
+
+// said lists what there is to warn about so far.
+func (p *problem) said() []string { return append(slices.Clone(p.doubts), p.warnings...) }
 
 // modelSum is the checksum of the model file as the tool writes it.
 func modelSum(m *ident.Model) string {

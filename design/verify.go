@@ -41,6 +41,7 @@ func Verify(ctx context.Context, model *ident.Model, rig *data.Rig, loops *Loops
 	if err := p.sample(); err != nil {
 		return l.passOn(err)
 	}
+	l.Warnings = p.said()
 	if l.Sampling, err = p.mapControllers(l); err != nil {
 		return nil, err
 	}
@@ -61,6 +62,9 @@ func Verify(ctx context.Context, model *ident.Model, rig *data.Rig, loops *Loops
 		return nil, err
 	}
 	if l.Margins.PlantInput.Stable {
+		if l.Yardstick, err = p.measure(ctx, law, model.Draw(l.Promise.Plants, stream(opt.Seed, streamProof, 1)), opt.Workers); err != nil {
+			return nil, err
+		}
 		p.firstClosure(l, opt.Seed) // loops that do not hold the plant are not to be closed at all
 	}
 	p.conclude(l)
