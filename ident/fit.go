@@ -113,6 +113,7 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 	if err := m.sample(ctx, p, f, ranked, opt); err != nil {
 		return m, err
 	}
+	m.weighIntegrators(ranked)
 	m.Evidence.Structures = structures(ranked)
 	whole, filled, err := s.restored(f)
 	if err != nil {

@@ -125,3 +125,27 @@ func (m *Model) loosen(p *fit.Predictor, f *fit.Prediction, ranked []*candidate)
 	}
 	return nil
 }
+
+// weighIntegrators takes into account that a slow free pole may be an integrator
+// after all: what structures of as many poles with more integrators weigh,
+// exp(-ΔBIC/2) each (Kass & Raftery 1995), is taken from the probability that
+// the slowest free poles are unstable.
+func (m *Model) weighIntegrators(ranked []*candidate) {
+	held, most := ranked[0].integrators, ranked[0].integrators
+	var total, freer float64
+	for _, c := range ranked {
+		if c.poles != ranked[0].poles {
+			continue
+		}
+		w := math.Exp((ranked[0].bic - c.bic) / 2)
+		if total += w; c.integrators <= held {
+			freer += w
+		} else if w >= leastWeight {
+			most = max(most, c.integrators)
+		}
+	}
+	for _, r := range bySpeed(m.Poles)[held:most] {
+		i := slices.IndexFunc(m.Poles, func(p Root) bool { return p.Re == r.Re && p.Im == r.Im })
+		m.Poles[i].ProbabilityUnstable = r.ProbabilityUnstable * freer / total
+	}
+}
