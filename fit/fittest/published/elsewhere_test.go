@@ -25,6 +25,8 @@ var elsewhere = []struct{ ids, what, file, test string }{
 	{"E06", "margins that a peak of T guarantees", "design/facts_test.go", "TestMarginsByComplementarySensitivity"},
 	{"E07", "margins of least-squares feedback", "design/facts_test.go", "TestMarginsOfLeastSquaresFeedback"},
 	{"E08", "the same, sampled", "design/facts_test.go", "TestMarginsOfSampledLeastSquaresFeedback"},
+	{"E09-E12", "optimal coprime margins", "fit/lti/coprime_test.go", "TestCoprimeMargin"},
+	{"E13", "coprime margin of a gain", "fit/lti/coprime_test.go", "TestFeedbackMargin"},
 	{"E14-E21", "nu-gap", "fit/lti/nugap_test.go", "TestNuGap"},
 	{"E22, E23", "what a nu-gap takes of a margin", "design/facts_test.go", "TestMarginLossByNuGap"},
 	{"E24", "unstable pole with dead time", "design/bounds_test.go", "TestLeastPeakDelay"},
