@@ -12,12 +12,18 @@ func (l *log) findFlaws() {
 	l.findLimits()
 	l.findTrips()
 	l.findStuck()
+	l.findRest()
 	l.findSpikes()
 	for _, i := range []int{l.u, l.y} {
 		l.findQuantisation(i)
 		l.findDrift(i)
 	}
 	l.findConstant()
+	l.findSlowTelemetry()
+	l.compareClocks()
+	l.findLines()
+	l.findCycle()
+	l.findActuator()
 }
 
 // findConstant names a dither that never moves, and a reference that does not where there is no dither that does.
@@ -229,35 +235,40 @@ func (l *log) findTrips() {
 		Detail: fmt.Sprintf("output beyond [limits] output [%s, %s]", number(lim[0]), number(lim[1])), Effect: effect})
 }
 
-// findStuck marks stretches in which the output repeats one value far longer than it usually does. A segment ends before
-// a long one, of MinSegment rows or more.
+// longRest returns the number of rows from which on a column that repeats its value is at rest, and not by chance.
 //
-// Were the output to repeat itself from row to row with probability q, independently, a stretch of n rows would have
+// Were it to repeat itself from row to row with probability q, independently, a stretch of n rows would have
 // probability q^n; q is taken from the share of stretches longer than one row, which a few long ones cannot raise. The
 // bound of one false alarm in a million logs is trebled because real stretches are not independent.
-func (l *log) findStuck() {
+func (l *log) longRest(x []float64, fewest int) int {
 	const (
 		alarm   = 1e-6
 		slower  = 3
-		fewest  = 20
 		longest = 1 << 30
 	)
-	y := l.columns[l.y]
 	stretches, longer := 0, 0
-	l.stretches(func(from, to int) {
+	l.stretches(x, func(from, to int) {
 		stretches++
 		if to-from > 1 {
 			longer++
 		}
 	})
 	q := (float64(longer) + 1) / (float64(stretches) + 2)
-	limit := fewest
-	if n := slower * math.Log(alarm/float64(l.rows)) / math.Log(q); n > fewest {
-		limit = int(min(n, longest))
+	if n := slower * math.Log(alarm/float64(l.rows)) / math.Log(q); n > float64(fewest) {
+		return int(min(n, longest))
 	}
+	return fewest
+}
+
+// findStuck marks stretches in which the output repeats one value far longer than it usually does. A segment ends before
+// a long one, of MinSegment rows or more.
+func (l *log) findStuck() {
+	const fewest = 20
+	y := l.columns[l.y]
+	limit := l.longRest(y, fewest)
 	count, first, rows, most := 0, 0, 0, 0
 	value := 0.0
-	l.stretches(func(from, to int) {
+	l.stretches(y, func(from, to int) {
 		if to-from < limit {
 			return
 		}
@@ -284,12 +295,47 @@ func (l *log) findStuck() {
 	}
 }
 
-// stretches calls f with [from, to) of each stretch of equal outputs among the rows used.
-func (l *log) stretches(f func(from, to int)) {
-	y := l.columns[l.y]
+// findRest marks stretches in which the input, between its extremes, stays where it is far longer than it usually does:
+// before a start, or after a trip that no limit of the output tells.
+func (l *log) findRest() {
+	u := l.columns[l.u]
+	lo, hi := math.Inf(1), math.Inf(-1)
+	for k, x := range u {
+		if l.dropped[k]&isUnused == 0 {
+			lo, hi = min(lo, x), max(hi, x)
+		}
+	}
+	slack := limitSlack * (hi - lo)
+	limit := l.longRest(u, MinSegment)
+	count, first, rows := 0, 0, 0
+	l.stretches(u, func(from, to int) {
+		if to-from < limit || u[from] <= lo+slack || u[from] >= hi-slack {
+			return
+		}
+		if count == 0 {
+			first = l.lines.at(from)
+		}
+		count++
+		rows += to - from
+		for k := from; k < to; k++ {
+			l.dropped[k] |= isResting
+		}
+	})
+	if count > 0 {
+		l.idle(count, first, rows)
+	}
+}
+
+func (l *log) idle(count, line, rows int) {
+	l.flaw(Flaw{Name: FlawIdle, Column: l.column(l.u), Count: count, Line: line,
+		Detail: plural(rows, "row", "rows") + " in stretches in which the input never moves", Effect: "not used: the loop was not closed"})
+}
+
+// stretches calls f with [from, to) of each stretch of equal values of a column among the rows used.
+func (l *log) stretches(x []float64, f func(from, to int)) {
 	from := 0
-	for k := 1; k <= len(y); k++ {
-		if k < len(y) && y[k] == y[from] && l.dropped[k] == l.dropped[from]&isUnused {
+	for k := 1; k <= len(x); k++ {
+		if k < len(x) && x[k] == x[from] && l.dropped[k] == l.dropped[from]&isUnused {
 			continue
 		}
 		if l.dropped[from]&isUnused == 0 {

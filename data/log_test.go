@@ -4,6 +4,7 @@ import (
 	"bytes"
 	"compress/gzip"
 	"crypto/sha256"
+	"encoding/binary"
 	"errors"
 	"fmt"
 	"io"
@@ -17,6 +18,7 @@ import (
 	"testing"
 	"testing/fstest"
 	"testing/iotest"
+	"unicode/utf16"
 )
 
 // A plainLog is a log without flaws, to be spoilt by tests: a noisy first-order lag under a random input.
@@ -154,6 +156,8 @@ func TestReadLogLayouts(t *testing.T) {
 		{"crlf", strings.ReplaceAll(plain, "\n", "\r\n")},
 		{"bare cr", strings.ReplaceAll(plain, "\n", "\r")},
 		{"bom", "\xef\xbb\xbf" + plain},
+		{"utf-16, little end first", "\xff\xfe" + wide(plain, binary.LittleEndian)},
+		{"utf-16, big end first", "\xfe\xff" + wide(strings.Replace(plain, "t,", "# Größe 𝛥\nt,", 1), binary.BigEndian)},
 		{"bom and crlf", "\xef\xbb\xbf" + strings.ReplaceAll(plain, "\n", "\r\n")},
 		{"no end of last line", strings.TrimSuffix(plain, "\n")},
 		{"semicolon", strings.ReplaceAll(plain, ",", ";")},
@@ -335,6 +339,15 @@ func TestReadLogOneColumnTwoParts(t *testing.T) {
 	}
 }
 
+// wide writes text as UTF-16.
+func wide(text string, order binary.AppendByteOrder) string {
+	var b []byte
+	for _, c := range utf16.Encode([]rune(text)) {
+		b = order.AppendUint16(b, c)
+	}
+	return string(b)
+}
+
 func withStamp(i int, line, stamp string) string {
 	if i == 0 {
 		return line
@@ -368,6 +381,78 @@ func TestReadLogGzip(t *testing.T) {
 	_, err = ReadLog(bytes.NewReader(spoilt), "log.csv.gz", plainRig())
 	if got, want := message(err), "log.csv.gz: gzip: invalid checksum; the packed file is damaged: copy it again"; got != want {
 		t.Errorf("damaged: got %s, want %s", got, want)
+	}
+}
+
+// A sign of four bytes may be cut by any buffer.
+func TestReadLogWideInPieces(t *testing.T) {
+	p := newPlainLog(200)
+	text := "\xff\xfe" + wide(strings.Replace(p.csv(), "u,", "𝛥u,", 1), binary.LittleEndian)
+	g := plainRig()
+	g.Log.Input = "𝛥u"
+	for name, r := range map[string]io.Reader{"bytes": iotest.OneByteReader(strings.NewReader(text)), "half": iotest.HalfReader(strings.NewReader(text))} {
+		exp, err := ReadLog(r, "log.csv", g)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if !slices.Equal(exp.Segments[0].U, p.u) || exp.Layout != "UTF-16, commas between cells, names on line 1, numbers from line 2" {
+			t.Errorf("%s: %s", name, exp.Layout)
+		}
+	}
+}
+
+// What the rig file says of the layout counts, where recognising it would go wrong.
+func TestReadLogLayoutGiven(t *testing.T) {
+	p := newPlainLog(200)
+	plain := p.csv()
+	rows := strings.SplitN(plain, "\n", 2)[1]
+	line := func(n int) *int { return &n }
+	for _, c := range []struct {
+		name, text string
+		given      Layout
+		says       string
+	}{
+		{"bars", strings.ReplaceAll(plain, ",", "|"), Layout{Delimiter: "|"}, `"|" between cells, names on line 1, numbers from line 2, as [layout] says`},
+		{"tab", strings.ReplaceAll(plain, ",", "\t"), Layout{Delimiter: "tab"}, "tabs between cells, names on line 1, numbers from line 2, as [layout] says"},
+		{"blanks", strings.ReplaceAll(plain, ",", "  "), Layout{Delimiter: "blanks"}, "blanks between cells, names on line 1, numbers from line 2, as [layout] says"},
+		{"decimal comma", strings.ReplaceAll(strings.ReplaceAll(plain, ",", ";"), ".", ","), Layout{DecimalMark: ","},
+			"semicolons between cells, decimal comma, names on line 1, numbers from line 2, as [layout] says"},
+		{"a header of calibrated numbers", "t,u,y,r\n1.5,2.5,3.5,4.5\n" + rows, Layout{NumbersLine: 3}, "commas between cells, names on line 1, numbers from line 3, as [layout] says"},
+		{"names not next to the rows", "t,u,y,r\nchannel 1,channel 2,channel 3,channel 4\n\n" + rows, Layout{NamesLine: line(1), UnitsLine: line(0), NumbersLine: 4},
+			"commas between cells, names on line 1, numbers from line 4, as [layout] says"},
+		{"two rows of text, names below", "one,two,three,four\nt,u,y,r\n" + rows, Layout{NamesLine: line(2)}, "commas between cells, names on line 2, numbers from line 3, as [layout] says"},
+		{"names in a comment that is not the last", "; t u y r\n; and so on and on\n" + rows, Layout{NamesLine: line(1), Comment: ";"},
+			`commas between cells, names on line 1, numbers from line 3, comments after ";", as [layout] says`},
+		{"units apart", "A,mm,s,V\n\nt,u,y,r\nA,s,mm,V\n" + rows, Layout{UnitsLine: line(4)}, "commas between cells, names on line 3, units on line 4, numbers from line 5, as [layout] says"},
+		{"own comments", strings.ReplaceAll(plain, "\n0.5,", "\n!half time\n0.5,"), Layout{Comment: "!"}, `commas between cells, names on line 1, numbers from line 2, comments after "!", as [layout] says`},
+	} {
+		t.Run(c.name, func(t *testing.T) {
+			g := plainRig()
+			g.Layout = c.given
+			if err := g.checkLayout(); err != nil {
+				t.Fatal(err)
+			}
+			exp := mustRead(t, c.text, g)
+			if s := exp.Segments[0]; exp.Rows != 200 || !slices.Equal(s.U, p.u) || !slices.Equal(s.Y, p.y) || exp.Layout != c.says {
+				t.Errorf("%d rows, %s, want %s", exp.Rows, exp.Layout, c.says)
+			}
+		})
+	}
+	for _, c := range []struct {
+		name, text string
+		given      Layout
+		want       string
+	}{
+		{"no such line", plain, Layout{NamesLine: line(400)}, "log.csv: line 400: no such line in the head of the log, but [layout] names_line names it; correct the rig file"},
+		{"names of another number", "Logger X\n" + plain, Layout{NamesLine: line(1)}, "log.csv: line 1: 1 cell, but the rows have 4 ([layout] names_line); correct [layout] in the rig file"},
+		{"another delimiter", plain, Layout{Delimiter: ";"}, "log.csv: line 1: no row of two or more numbers below this line; correct [layout] in the rig file"},
+		{"rows from where there are none", plain, Layout{NumbersLine: 300}, "log.csv: line 300: no such line in the head of the log, but [layout] numbers_line names it; correct the rig file"},
+	} {
+		g := plainRig()
+		g.Layout = c.given
+		if _, err := ReadLog(strings.NewReader(c.text), "log.csv", g); message(err) != c.want {
+			t.Errorf("%s: got %v, want %s", c.name, err, c.want)
+		}
 	}
 }
 
@@ -458,8 +543,9 @@ func TestReadLogRefuses(t *testing.T) {
 		{"header too short", strings.Replace(plain, "t,u,y,r", "t,u,y", 1), `log.csv: line 1: 3 names in the header, 4 cells in the rows below; one name a column`},
 		{"decimal commas between commas", "t,u,y\n" + strings.Repeat("0,1,0,2,0,3\n", 9), `log.csv: line 1: 3 names in the header, 6 cells in the rows below; decimal commas cannot be told from commas between cells: export with ';' between cells`},
 		{"spreadsheet", "PK\x03\x04\x00\x00", `log.csv: a spreadsheet or an archive, no text; export the log as CSV`},
-		{"binary", "t,u,y,r\n0,1,\x00,3\n", `log.csv: line 2: a zero byte, so no text; export the log as CSV`},
-		{"utf-16", "\xff\xfet\x00,\x00", `log.csv: text in UTF-16; save it as UTF-8`},
+		{"binary", "t,u,y,r\n0,1,\x00,3\n", `log.csv: line 2: a zero byte, so no text; export the log as CSV, in UTF-8, or in UTF-16 with a byte order mark`},
+		{"utf-16 without its mark", "t\x00,\x00u\x00", `log.csv: line 1: a zero byte, so no text; export the log as CSV, in UTF-8, or in UTF-16 with a byte order mark`},
+		{"utf-16, cut within a sign", "\xff\xfet\x00,", `log.csv: line 1: no row of two or more numbers below this line; a log has a header and rows of numbers, separated by commas, semicolons, tabs or blanks`},
 		{"line without end", "t,u,y,r\n" + strings.Repeat("1,", headSize), `log.csv: line 2: longer than 131072 bytes; a log has one row a line`},
 	} {
 		t.Run(c.name, func(t *testing.T) {

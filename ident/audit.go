@@ -67,6 +67,7 @@ type Flaw struct {
 	Line   int    `json:"line"`
 	Detail string `json:"detail"`
 	Effect string `json:"effect"`
+	Remedy string `json:"remedy"` // what to do about it
 }
 
 // glanceRows is the part of a log that the audit's quick fit looks at.
@@ -80,7 +81,7 @@ func Audit(ctx context.Context, exps []*data.Experiment, rig *data.Rig) (*AuditR
 	for _, e := range exps {
 		a.Logs = append(a.Logs, LogUse{File: e.File, SHA256: e.SHA256, Rows: e.Rows, Used: e.Used, Segments: len(e.Segments)})
 		for _, f := range e.Flaws {
-			a.Flaws = append(a.Flaws, Flaw{e.File, f.Name, f.Column, f.Count, f.Line, f.Detail, f.Effect})
+			a.Flaws = append(a.Flaws, Flaw{e.File, f.Name, f.Column, f.Count, f.Line, f.Detail, f.Effect, f.Remedy()})
 		}
 	}
 	recs, period, err := records(exps)

@@ -1,0 +1,269 @@
+package data
+
+import (
+	"fmt"
+	"math"
+	"math/cmplx"
+	"slices"
+
+	"gonum.org/v1/gonum/dsp/fourier"
+)
+
+// longestStretch returns [from, to) of the longest stretch of rows in use, at most so many rows of it; to is from where
+// it is shorter than fewest.
+func (l *log) longestStretch(fewest, most int) (from, to int) {
+	l.runs(func(a, b int) {
+		if b-a > to-from {
+			from, to = a, b
+		}
+	})
+	if to-from < fewest {
+		return from, from
+	}
+	return from, min(to, from+most)
+}
+
+// periodogram returns that of x less its straight line under Hann's window, frequencies 0 to half of the rows' rate.
+func periodogram(x []float64) []float64 {
+	n := len(x)
+	w := window(n)
+	tapered := make([]float64, n)
+	a, b := straight(x)
+	for k, v := range x {
+		tapered[k] = (v - a - b*float64(k)) * w[k]
+	}
+	p := make([]float64, n/2+1)
+	for j, c := range fourier.NewFFT(n).Coefficients(nil, tapered) {
+		p[j] = real(c)*real(c) + imag(c)*imag(c)
+	}
+	return p
+}
+
+// straight fits a + b k to x by least squares.
+func straight(x []float64) (a, b float64) {
+	n := float64(len(x))
+	var sx, skx float64
+	for k, v := range x {
+		sx += v
+		skx += (float64(k) - (n-1)/2) * v
+	}
+	b = skx * 12 / (n * (n*n - 1))
+	return sx/n - b*(n-1)/2, b
+}
+
+// around is how many frequencies on each side of a line, less the lineWidth nearest to it, tell what it stands out of.
+const (
+	around    = 8
+	lineWidth = 2
+)
+
+// standsOut returns p[j] over the mean of its neighbours: for a smooth spectrum F-distributed with 2 and 2m degrees, so
+// that it exceeds x with probability (1 + x/m)^-m, m neighbours (D. B. Percival & A. T. Walden, Spectral Analysis for
+// Physical Applications, Cambridge 1993, sec. 10.9 on tests for lines over a coloured background).
+func standsOut(p []float64, j int) (ratio float64, m int) {
+	sum := 0.0
+	for i := max(1, j-around); i <= min(len(p)-1, j+around); i++ {
+		if i < j-lineWidth || i > j+lineWidth {
+			sum += p[i]
+			m++
+		}
+	}
+	if sum == 0 || m == 0 {
+		return 0, m
+	}
+	return p[j] / (sum / float64(m)), m
+}
+
+// A peak is a frequency at which a spectrum stands out.
+type peak struct{ hz, amplitude float64 }
+
+// peaks returns those of column i within rows [from, to), but for those that reference or dither have, too. A false one
+// shows in a log in a million.
+func (l *log) peaks(i, from, to int) []peak {
+	const alarm = 1e-6
+	p := periodogram(l.columns[i][from:to])
+	var outside [][]float64
+	for _, c := range []int{l.r, l.d} {
+		if c >= 0 && c != i {
+			outside = append(outside, periodogram(l.columns[c][from:to]))
+		}
+	}
+	var out []peak
+	for j := around; j < len(p)-1; j++ {
+		if p[j] < p[j-1] || p[j] < p[j+1] {
+			continue
+		}
+		ratio, m := standsOut(p, j)
+		if float64(m)*math.Log1p(ratio/float64(m)) < math.Log(float64(len(p))/alarm) {
+			continue
+		}
+		const little = 5 // as much as one frequency in a hundred stands out by
+		if slices.ContainsFunc(outside, func(q []float64) bool {
+			for k := j - 1; k <= j+1; k++ {
+				if ratio, _ := standsOut(q, k); ratio > little {
+					return true
+				}
+			}
+			return false
+		}) {
+			continue
+		}
+		// Hann's main lobe in logarithms is nearly a parabola.
+		a, b, c := math.Log(p[j-1]), math.Log(p[j]), math.Log(p[j+1])
+		shift := 0.0
+		if bend := a - 2*b + c; bend < 0 {
+			shift = (a - c) / (2 * bend)
+		}
+		at := float64(j) + shift
+		n := float64(to - from)
+		// A sine of amplitude A has p = (A n/4)² at its frequency.
+		out = append(out, peak{hz: at / (n * l.period), amplitude: 4 * math.Sqrt(p[j]) / n})
+	}
+	return out
+}
+
+// findLines looks for what swings at one frequency without an outside signal that does: a hum, which may have been
+// folded from above half of the rows' rate, and for power that grows towards that. A loop that swings by itself is
+// findCycle's.
+func (l *log) findLines() {
+	const (
+		fewest  = 1024
+		most    = 1 << 16
+		few     = 3     // lines; more are those of a periodic probe
+		mains   = 0.002 // its frequency's tolerance
+		highest = 3     // harmonic of the mains that is thought of
+	)
+	from, to := l.longestStretch(fewest, most)
+	if from == to {
+		return
+	}
+	name := l.column(l.y)
+	lines := l.peaks(l.y, from, to)
+	rate := 1 / l.period
+	bin := rate / float64(to-from)
+	if len(lines) > few {
+		lines = nil
+	}
+	for _, line := range lines {
+		what, alias := "no logged signal has it", false
+		for _, grid := range []float64{50, 60} {
+			for h := 1.0; h <= highest; h++ {
+				f := h * grid
+				folded := math.Abs(f - rate*math.Round(f*l.period))
+				if math.Abs(folded-line.hz) > mains*f+bin {
+					continue
+				}
+				if f < rate/2 {
+					what, alias = fmt.Sprintf("mains, %g Hz", f), false
+				} else if what == "no logged signal has it" {
+					what, alias = fmt.Sprintf("%g Hz mains shows there in rows %s s apart", f, number(l.period)), true
+				}
+			}
+		}
+		f := Flaw{Name: FlawPeriodic, Column: name, Count: 1, Line: l.lines.at(from),
+			Detail: fmt.Sprintf("a line of amplitude %s at %s Hz: %s", number(line.amplitude), number(line.hz), what),
+			Effect: "used; the disturbance is fitted without lines, so that the test for whiteness may fail"}
+		if alias {
+			f.Name = FlawAlias
+		}
+		l.flaw(f)
+	}
+	l.findRise(periodogram(l.columns[l.y][from:to]), from)
+}
+
+// findRise looks for a spectrum that grows towards half of the rows' rate, which a plant of more poles than zeros under
+// white noise of the sensor cannot have: what moves faster is folded onto it, or the loop rings from row to row.
+func (l *log) findRise(p []float64, from int) {
+	const times = 2 // the density over the upper half, below the top eighth
+	n := len(p)
+	density := func(lo, hi int) float64 { return mean(p[lo:hi]) }
+	top, below := density(n*7/8, n), density(n/2, n*3/4)
+	if top < times*below {
+		return
+	}
+	l.flaw(Flaw{Name: FlawAlias, Column: l.column(l.y), Count: 1, Line: l.lines.at(from),
+		Detail: fmt.Sprintf("the output's power grows by %.2g times towards %s Hz, half of the rows' rate: faster motion is folded there, or the loop rings from row to row",
+			top/below, number(0.5/l.period)),
+		Effect: "used as if nothing moved between rows"})
+}
+
+// findCycle looks for a loop that swings by itself at one amplitude: half and more of the output's variance within a
+// quarter of a frequency, at which no outside signal has a line, and an envelope too even for noise. The squared
+// envelope A² of Gaussian noise in a band is exponential, E A⁴ = 2 (E A²)², that of a sine constant, E A⁴ = (E A²)², the
+// kurtosis of 3 or 1.5 by which lines are told from resonances (N.-J. Jacobsen, P. Andersen & R. Brincker, "Eliminating
+// the influence of harmonic components in operational modal analysis", Proc. IMAC XXV, 2007). With n independent
+// values the first ratio scatters by 2/sqrt(n); half way to the second are more than four of these.
+func (l *log) findCycle() {
+	const (
+		fewest    = 1024
+		most      = 1 << 16
+		lower     = 0.8
+		upper     = 1.25
+		share     = 0.5
+		even      = 1.4
+		envelopes = 60 // independent values at the least
+	)
+	from, to := l.longestStretch(fewest, most)
+	if from == to {
+		return
+	}
+	n := to - from
+	y := l.columns[l.y][from:to]
+	p := periodogram(y)
+	j, total := 1, 0.0
+	for i := 1; i < len(p); i++ {
+		total += p[i]
+		if p[i]*float64(i) > p[j]*float64(j) { // power per octave
+			j = i
+		}
+	}
+	lo, hi := int(lower*float64(j)), min(int(upper*float64(j))+1, len(p))
+	inBand := func(p []float64) float64 {
+		sum, all := 0.0, 0.0
+		for i := 1; i < len(p); i++ {
+			all += p[i]
+			if lo <= i && i < hi {
+				sum += p[i]
+			}
+		}
+		if all == 0 {
+			return 0
+		}
+		return sum / all
+	}
+	if lo < 3 || hi-lo < envelopes || inBand(p) < share {
+		return
+	}
+	for _, c := range []int{l.r, l.d} {
+		if c >= 0 && inBand(periodogram(l.columns[c][from:to])) > share/2 {
+			return
+		}
+	}
+	square, fourth := 0.0, 0.0
+	a, b := straight(y)
+	x := make([]complex128, n)
+	for k, v := range y {
+		x[k] = complex(v-a-b*float64(k), 0)
+	}
+	fft := fourier.NewCmplxFFT(n)
+	c := fft.Coefficients(nil, x)
+	for i := range c {
+		if i < lo || i >= hi {
+			c[i] = 0
+		}
+	}
+	for _, v := range fft.Sequence(x, c) {
+		e := cmplx.Abs(v) * cmplx.Abs(v)
+		square += e
+		fourth += e * e
+	}
+	if ratio := fourth * float64(n) / (square * square); ratio > even {
+		return
+	}
+	amplitude := 2 * math.Sqrt(square/float64(n)) / float64(n)
+	hz := float64(j) / (float64(n) * l.period)
+	l.flaw(Flaw{Name: FlawCycle, Column: l.column(l.y), Count: int(float64(n) * l.period * hz), Line: l.lines.at(from),
+		Detail: fmt.Sprintf("swings at %s Hz with an even amplitude of about %s, %.0f %% of its power; no logged signal does: the loop hunts by itself, or a periodic signal acts that is not logged",
+			number(hz), number(amplitude), 100*inBand(p)),
+		Effect: "used; a linear plant has no such cycle, and its amplitude is what sets the apparent gain"})
+}
