@@ -5,27 +5,27 @@ import (
 	"math"
 	"slices"
 
+	"gonum.org/v1/gonum/floats"
 	"gonum.org/v1/gonum/mat"
 )
 
-// findActuator looks for a dead zone, for play and for friction: what a linear plant would answer to the part of the
+// findActuator looks for a dead zone, for play (a hysteresis without memory of speed) and for friction: what a linear plant would answer to the part of the
 // input that each of them takes away is held against what a long linear model leaves of the output.
 //
 // The model is y by 20 past rows of y and u. With b its coefficients of u, a plant behind the element f answers by
 // b (u - f(u)) less: the coefficient of that one more regressor is -1 behind that element and 0 without it (a test of
 // extra sum of squares, as in N. R. Draper & H. Smith, Applied Regression Analysis, 3rd ed., Wiley 1998, ch. 6; the model is
 // Hammerstein's, K. S. Narendra & P. G. Gallman, IEEE Trans. Automatic Control 11(3), 1966, 546-550). It is said where
-// the coefficient lies near -1, takes away a good part of the error, and is larger than its deviation as chance would
-// have it in one log in a million.
+// the coefficient has that sign and size (an element that takes much away has made b too small, so that it may be far
+// beyond -1), takes away a good part of the error, and cannot be chance.
 func (l *log) findActuator() {
 	const (
 		lags   = 20
-		most   = 12_000 // rows looked at
+		most   = 8000 // rows looked at
 		fewest = 1000
-		sure   = 7    // deviations: there are about ten tries a log
-		gains  = 0.01 // of the squared error, at the least
+		sure   = 6    // deviations: chance reaches them once in ten million logs, with some twenty tries each
+		gains  = 0.01 // of the squared error, at the least: what a model of so many past rows misses is far below
 	)
-	u, y := l.columns[l.u], l.columns[l.y]
 	var rows []int
 	l.runs(func(from, to int) {
 		for k := from + lags; k < to && len(rows) < most; k++ {
@@ -35,8 +35,14 @@ func (l *log) findActuator() {
 	if len(rows) < fewest {
 		return
 	}
-	level := slices.Clone(u[rows[0] : rows[len(rows)-1]+1])
-	level = slices.DeleteFunc(level, math.IsNaN)
+	line := l.lines.at(rows[0])
+	start := rows[0] - lags
+	end := rows[len(rows)-1] + 1
+	u, y := l.columns[l.u][start:end], l.columns[l.y][start:end]
+	for i := range rows {
+		rows[i] -= start
+	}
+	level := slices.DeleteFunc(slices.Clone(u), math.IsNaN)
 	slices.Sort(level)
 	middle, reach := level[len(level)/2], level[len(level)*9/10]-level[len(level)/10]
 	if reach == 0 {
@@ -54,22 +60,20 @@ func (l *log) findActuator() {
 	if !past.solve() {
 		return
 	}
-	b := past.coef[1+lags:]
+	b := slices.Clone(past.coef[1+lags:])
+	slices.Reverse(b)
 	taken := make([]float64, len(u)) // u - f(u)
 	z := make([]float64, len(rows))
 	found := Flaw{}
 	best := 0.0
 	try := func(name, words string, lo, hi float64) {
 		for i, k := range rows {
-			z[i] = 0
-			for j, b := range b {
-				z[i] += b * taken[k-1-j]
-			}
+			z[i] = floats.Dot(b, taken[k-lags:k])
 		}
 		coef, t, gain := past.add(z)
 		if coef < hi && coef > lo && -t > sure && gain > gains && gain > best {
 			best = gain
-			found = Flaw{Name: name, Column: l.column(l.u), Count: len(rows), Line: l.lines.at(rows[0]),
+			found = Flaw{Name: name, Column: l.column(l.u), Count: len(rows), Line: line,
 				Detail: fmt.Sprintf("%s explains %.0f %% of what a linear model misses, %.1f standard deviations", words, 100*gain, -t),
 				Effect: "used; a linear fit averages over it, and its gain and poles hold for moves of this size only"}
 		}
@@ -83,7 +87,7 @@ func (l *log) findActuator() {
 			for k, v := range u {
 				taken[k] = min(max(v-centre, -d), d)
 			}
-			try(FlawDeadZone, fmt.Sprintf("a dead zone of about +-%s around %s", number3(d), number3(centre)), -1.6, -0.4)
+			try(FlawDeadZone, fmt.Sprintf("a dead zone of about +-%s around %s", number3(d), number3(centre)), -10, -0.4)
 		}
 		at := u[rows[0]]
 		for k, v := range u { // play
@@ -92,9 +96,9 @@ func (l *log) findActuator() {
 			}
 			taken[k] = v - at
 		}
-		try(FlawStiction, fmt.Sprintf("play of about +-%s in the input", number3(d)), -1.6, -0.4)
+		try(FlawStiction, fmt.Sprintf("play of about +-%s in the input", number3(d)), -10, -0.4)
 	}
-	for _, w := range []int{1, 4} { // friction acts against the motion, of which w rows tell the direction
+	for _, w := range []int{1, 2, 4, 8} { // friction acts against the motion, of which w rows tell the direction
 		for k := range u {
 			taken[k] = 0
 			if k >= w {
@@ -107,8 +111,6 @@ func (l *log) findActuator() {
 		l.flaw(found)
 	}
 }
-
-func number3(x float64) string { return fmt.Sprintf("%.3g", x) }
 
 func sign(x float64) float64 {
 	switch {

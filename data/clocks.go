@@ -95,7 +95,7 @@ func (l *log) compareClocks() {
 }
 
 // parts writes a skew.
-func parts(rate float64) string { return fmt.Sprintf("%.3g parts in a million", 1e6*rate) }
+func parts(rate float64) string { return fmt.Sprintf("%.0f parts in a million", 1e6*rate) }
 
 // stampSkew fits a line to the stamps of the input less those of the output: offset at the first row in s, rate, and
 // its standard deviation.
@@ -212,22 +212,22 @@ func (l *log) slippage() (slippage, bool) {
 	}
 	weight := float64(pieces) * float64(min(stride, size)) / size // independent pieces, at most the rows looked at
 	// likelihood of the skew that moves the rows by x over the span
+	turned := make([]complex128, size/2)
 	likelihood := func(x float64) float64 {
+		clear(turned)
+		for i := range sum {
+			sin, cos := math.Sincos(-2 * math.Pi / size * x * sum[i].at / span)
+			step, turn := complex(cos, sin), complex(1, 0)
+			for j, c := range sum[i].cross {
+				turned[j] += c * turn
+				turn *= step
+			}
+		}
 		out := 0.0
 		for j := 2; j < size/2; j++ { // the lowest frequency holds drifts
-			if pu[j] == 0 || py[j] == 0 {
-				continue
+			if c := turned[j]; pu[j] > 0 && py[j] > 0 {
+				out -= weight * math.Log1p(-math.Min(0.999, (real(c)*real(c)+imag(c)*imag(c))/(pu[j]*py[j])))
 			}
-			var c complex128
-			for i := range sum {
-				if sum[i].pieces > 0 {
-					phase := -2 * math.Pi * float64(j) / size * x * sum[i].at / span
-					s, co := math.Sincos(phase)
-					c += sum[i].cross[j] * complex(co, s)
-				}
-			}
-			coherence := math.Min(0.999, (real(c)*real(c)+imag(c)*imag(c))/(pu[j]*py[j]))
-			out -= weight * math.Log1p(-coherence)
 		}
 		return out
 	}

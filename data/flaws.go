@@ -22,8 +22,9 @@ func (l *log) findFlaws() {
 	l.findSlowTelemetry()
 	l.compareClocks()
 	l.findLines()
-	l.findCycle()
-	l.findActuator()
+	if !l.has(FlawClocks) { // which would pass for play
+		l.findActuator()
+	}
 }
 
 // findConstant names a dither that never moves, and a reference that does not where there is no dither that does.
@@ -99,7 +100,8 @@ func (l *log) findLimits() {
 				Effect: "clipped to the limits, past which the actuator was not told to go; log the input after its limits"})
 		}
 		l.saturated(name, low, high, first, lim[0], lim[1])
-	} else {
+	}
+	if lim := l.rig.Limits.Input; lim == nil || !l.has(FlawSaturated) && l.clipped == 0 {
 		l.findFlatTops(u, name)
 	}
 	if rate := l.rig.Limits.InputRate; rate > 0 {
@@ -122,6 +124,10 @@ func (l *log) findLimits() {
 				Effect: "used as logged, which the actuator cannot have followed"})
 		}
 	}
+}
+
+func (l *log) has(name string) bool {
+	return slices.ContainsFunc(l.flaws, func(f Flaw) bool { return f.Name == name })
 }
 
 func (l *log) saturated(name string, low, high, first int, lo, hi float64) {
@@ -295,8 +301,8 @@ func (l *log) findStuck() {
 	}
 }
 
-// findRest marks stretches in which the input, between its extremes, stays where it is far longer than it usually does:
-// before a start, or after a trip that no limit of the output tells.
+// findRest marks stretches in which the input stays where it is far longer than it usually does: before a start, or after a
+// trip that no limit of the output tells. At its extremes it may stay for a while, but not to the end.
 func (l *log) findRest() {
 	u := l.columns[l.u]
 	lo, hi := math.Inf(1), math.Inf(-1)
@@ -309,8 +315,9 @@ func (l *log) findRest() {
 	limit := l.longRest(u, MinSegment)
 	count, first, rows := 0, 0, 0
 	l.stretches(u, func(from, to int) {
-		if to-from < limit || u[from] <= lo+slack || u[from] >= hi-slack {
-			return
+		within := from > 0 && to < l.rows && (l.dropped[from]&startsSegment|l.dropped[from-1]&isUnused|l.dropped[to]) == 0
+		if to-from < limit || within && (u[from] <= lo+slack || u[from] >= hi-slack) {
+			return // short, or at a limit and back
 		}
 		if count == 0 {
 			first = l.lines.at(from)
@@ -380,7 +387,7 @@ func (l *log) findSpikes() {
 	if sd == 0 {
 		return
 	}
-	bound := max(far*sd, flicker*grid(l.levels(y)))
+	bound := max(far*sd, flicker*grid(l.levels(y), fewestOutput))
 	var rows []int
 	l.runs(func(from, to int) {
 		for k := from + 4; k+4 < to; k++ {
@@ -419,13 +426,16 @@ func (l *log) levels(x []float64) []float64 {
 	return slices.Compact(out)
 }
 
+// Levels that make a grid: fewer values of an input are just some settings, but an output has none.
+const (
+	fewestInput  = 8
+	fewestOutput = 2
+)
+
 // grid returns the step of the grid that sorted numbers lie on, or 0 where they lie on none, or on one too fine to
 // tell. Each may be off its grid line by a fraction of the step: the text of a number is rounded, too.
-func grid(levels []float64) float64 {
-	const (
-		fewest = 8    // levels that make a grid and not just some settings
-		slack  = 0.15 // of a step
-	)
+func grid(levels []float64, fewest int) float64 {
+	const slack = 0.15 // of a step
 	n := len(levels)
 	if n < fewest {
 		return 0
@@ -459,7 +469,11 @@ const (
 
 func (l *log) findQuantisation(index int) {
 	x := l.columns[index]
-	step := grid(l.levels(x))
+	fewest := fewestInput
+	if index == l.y {
+		fewest = fewestOutput
+	}
+	step := grid(l.levels(x), fewest)
 	if step == 0 {
 		return
 	}

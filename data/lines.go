@@ -3,14 +3,15 @@ package data
 import (
 	"fmt"
 	"math"
-	"math/cmplx"
+	"math/bits"
 	"slices"
 
 	"gonum.org/v1/gonum/dsp/fourier"
+	"gonum.org/v1/gonum/floats"
 )
 
-// longestStretch returns [from, to) of the longest stretch of rows in use, at most so many rows of it; to is from where
-// it is shorter than fewest.
+// longestStretch returns [from, to) of the longest stretch of rows in use, at most so many rows of it and a number of them
+// that is quickly transformed, 4 to 7 times a power of two; to is from where it is shorter than fewest.
 func (l *log) longestStretch(fewest, most int) (from, to int) {
 	l.runs(func(a, b int) {
 		if b-a > to-from {
@@ -20,7 +21,9 @@ func (l *log) longestStretch(fewest, most int) (from, to int) {
 	if to-from < fewest {
 		return from, from
 	}
-	return from, min(to, from+most)
+	n := min(to-from, most)
+	shift := max(0, bits.Len(uint(n))-3)
+	return from, from + n>>shift<<shift
 }
 
 // periodogram returns that of x less its straight line under Hann's window, frequencies 0 to half of the rows' rate.
@@ -122,9 +125,9 @@ func (l *log) peaks(i, from, to int) []peak {
 	return out
 }
 
-// findLines looks for what swings at one frequency without an outside signal that does: a hum, which may have been
-// folded from above half of the rows' rate, and for power that grows towards that. A loop that swings by itself is
-// findCycle's.
+// findLines looks for what swings at one frequency without an outside signal that does: the loop itself, where the line
+// is a good part of the output, else a hum, which may have been folded from above half of the rows' rate; and for power
+// that grows towards that.
 func (l *log) findLines() {
 	const (
 		fewest  = 1024
@@ -132,6 +135,7 @@ func (l *log) findLines() {
 		few     = 3     // lines; more are those of a periodic probe
 		mains   = 0.002 // its frequency's tolerance
 		highest = 3     // harmonic of the mains that is thought of
+		swing   = 0.3   // of the variance of the output, from which on it is the loop
 	)
 	from, to := l.longestStretch(fewest, most)
 	if from == to {
@@ -144,7 +148,17 @@ func (l *log) findLines() {
 	if len(lines) > few {
 		lines = nil
 	}
+	var all spread
+	for _, v := range l.columns[l.y][from:to] {
+		all.add(v)
+	}
+	cycle := false
 	for _, line := range lines {
+		if part := line.amplitude * line.amplitude / 2 / (all.sd() * all.sd()); part > swing {
+			cycle = true
+			l.cycle(from, to, line.hz, line.amplitude, part)
+			continue
+		}
 		what, alias := "no logged signal has it", false
 		for _, grid := range []float64{50, 60} {
 			for h := 1.0; h <= highest; h++ {
@@ -161,14 +175,26 @@ func (l *log) findLines() {
 			}
 		}
 		f := Flaw{Name: FlawPeriodic, Column: name, Count: 1, Line: l.lines.at(from),
-			Detail: fmt.Sprintf("a line of amplitude %s at %s Hz: %s", number(line.amplitude), number(line.hz), what),
+			Detail: fmt.Sprintf("a line of amplitude %s at %s Hz: %s", number3(line.amplitude), number3(line.hz), what),
 			Effect: "used; the disturbance is fitted without lines, so that the test for whiteness may fail"}
 		if alias {
 			f.Name = FlawAlias
 		}
 		l.flaw(f)
 	}
-	l.findRise(periodogram(l.columns[l.y][from:to]), from)
+	p := periodogram(l.columns[l.y][from:to])
+	l.findRise(p, from)
+	if !cycle {
+		l.findCycle(p, from, to)
+	}
+}
+
+// cycle says that the loop swings by itself.
+func (l *log) cycle(from, to int, hz, amplitude, part float64) {
+	l.flaw(Flaw{Name: FlawCycle, Column: l.column(l.y), Count: int(float64(to-from) * l.period * hz), Line: l.lines.at(from),
+		Detail: fmt.Sprintf("swings at %s Hz with an even amplitude of about %s, %.0f %% of its variance; no logged signal does: the loop hunts by itself, or a periodic signal acts that is not logged",
+			number3(hz), number3(amplitude), 100*part),
+		Effect: "used; a linear plant has no such cycle, and its amplitude is what sets the apparent gain"})
 }
 
 // findRise looks for a spectrum that grows towards half of the rows' rate, which a plant of more poles than zeros under
@@ -187,51 +213,35 @@ func (l *log) findRise(p []float64, from int) {
 		Effect: "used as if nothing moved between rows"})
 }
 
-// findCycle looks for a loop that swings by itself at one amplitude: half and more of the output's variance within a
-// quarter of a frequency, at which no outside signal has a line, and an envelope too even for noise. The squared
-// envelope A² of Gaussian noise in a band is exponential, E A⁴ = 2 (E A²)², that of a sine constant, E A⁴ = (E A²)², the
-// kurtosis of 3 or 1.5 by which lines are told from resonances (N.-J. Jacobsen, P. Andersen & R. Brincker, "Eliminating
-// the influence of harmonic components in operational modal analysis", Proc. IMAC XXV, 2007). With n independent
-// values the first ratio scatters by 2/sqrt(n); half way to the second are more than four of these.
-func (l *log) findCycle() {
+// findCycle looks for a loop that swings by itself at one amplitude but not so evenly that it shows as a line: half and
+// more of the output's power p in the half octave about one frequency, in which no outside signal has much, and an
+// envelope too even for noise. The squared envelope A² of Gaussian noise in a band is exponential, E A⁴ = 2 (E A²)², that
+// of a sine constant, E A⁴ = (E A²)²: the kurtosis of 3 or 1.5 by which lines are told from resonances (N.-J. Jacobsen, P.
+// Andersen & R. Brincker, "Eliminating the influence of harmonic components in operational modal analysis", Proc. IMAC
+// XXV, 2007). With n independent values the first ratio scatters by 2/sqrt(n).
+func (l *log) findCycle(p []float64, from, to int) {
 	const (
-		fewest    = 1024
-		most      = 1 << 16
-		lower     = 0.8
-		upper     = 1.25
+		lower     = 0.7
+		upper     = 1.4
 		share     = 0.5
 		even      = 1.4
-		envelopes = 60 // independent values at the least
+		envelopes = 80 // independent values at the least: 2 less 1.4 is 2.7 times their scatter
 	)
-	from, to := l.longestStretch(fewest, most)
-	if from == to {
-		return
-	}
 	n := to - from
-	y := l.columns[l.y][from:to]
-	p := periodogram(y)
-	j, total := 1, 0.0
-	for i := 1; i < len(p); i++ {
-		total += p[i]
+	j := 1
+	for i := range p {
 		if p[i]*float64(i) > p[j]*float64(j) { // power per octave
 			j = i
 		}
 	}
 	lo, hi := int(lower*float64(j)), min(int(upper*float64(j))+1, len(p))
 	inBand := func(p []float64) float64 {
-		sum, all := 0.0, 0.0
-		for i := 1; i < len(p); i++ {
-			all += p[i]
-			if lo <= i && i < hi {
-				sum += p[i]
-			}
+		if all := floats.Sum(p[1:]); all > 0 {
+			return floats.Sum(p[lo:hi]) / all
 		}
-		if all == 0 {
-			return 0
-		}
-		return sum / all
+		return 0
 	}
-	if lo < 3 || hi-lo < envelopes || inBand(p) < share {
+	if lo < 1 || hi-lo < envelopes || inBand(p) < share {
 		return
 	}
 	for _, c := range []int{l.r, l.d} {
@@ -239,7 +249,7 @@ func (l *log) findCycle() {
 			return
 		}
 	}
-	square, fourth := 0.0, 0.0
+	y := l.columns[l.y][from:to]
 	a, b := straight(y)
 	x := make([]complex128, n)
 	for k, v := range y {
@@ -247,23 +257,16 @@ func (l *log) findCycle() {
 	}
 	fft := fourier.NewCmplxFFT(n)
 	c := fft.Coefficients(nil, x)
-	for i := range c {
-		if i < lo || i >= hi {
-			c[i] = 0
-		}
-	}
+	clear(c[:lo])
+	clear(c[hi:])
+	square, fourth := 0.0, 0.0
 	for _, v := range fft.Sequence(x, c) {
-		e := cmplx.Abs(v) * cmplx.Abs(v)
+		e := real(v)*real(v) + imag(v)*imag(v)
 		square += e
 		fourth += e * e
 	}
-	if ratio := fourth * float64(n) / (square * square); ratio > even {
+	if fourth*float64(n) > even*square*square {
 		return
 	}
-	amplitude := 2 * math.Sqrt(square/float64(n)) / float64(n)
-	hz := float64(j) / (float64(n) * l.period)
-	l.flaw(Flaw{Name: FlawCycle, Column: l.column(l.y), Count: int(float64(n) * l.period * hz), Line: l.lines.at(from),
-		Detail: fmt.Sprintf("swings at %s Hz with an even amplitude of about %s, %.0f %% of its power; no logged signal does: the loop hunts by itself, or a periodic signal acts that is not logged",
-			number(hz), number(amplitude), 100*inBand(p)),
-		Effect: "used; a linear plant has no such cycle, and its amplitude is what sets the apparent gain"})
+	l.cycle(from, to, float64(j)/(float64(n)*l.period), 2*math.Sqrt(square/float64(n))/float64(n), inBand(p))
 }

@@ -18,6 +18,7 @@ import (
 	"testing"
 	"testing/fstest"
 	"testing/iotest"
+	"time"
 	"unicode/utf16"
 )
 
@@ -453,6 +454,88 @@ func TestReadLogLayoutGiven(t *testing.T) {
 		if _, err := ReadLog(strings.NewReader(c.text), "log.csv", g); message(err) != c.want {
 			t.Errorf("%s: got %v, want %s", c.name, err, c.want)
 		}
+	}
+}
+
+// Stamps in local time: without a zone an hour that the clock is set by shows; with it, or in UTC, the rows go on.
+func TestReadLogDaylightSaving(t *testing.T) {
+	p := newPlainLog(600)
+	at := func(k int, from time.Time) time.Time { return from.Add(time.Duration(k-300) * 10 * time.Millisecond) }
+	for _, c := range []struct {
+		name   string
+		change time.Time     // in UTC
+		before time.Duration // the zone
+		after  time.Duration
+	}{
+		{"spring", time.Date(2025, 3, 30, 1, 0, 0, 0, time.UTC), time.Hour, 2 * time.Hour},
+		{"autumn", time.Date(2025, 10, 26, 1, 0, 0, 0, time.UTC), 2 * time.Hour, time.Hour},
+	} {
+		for format, local := range map[string]bool{"2006-01-02T15:04:05.000": true, "15:04:05.000": true, "2006-01-02T15:04:05.000-07:00": false} {
+			var b strings.Builder
+			b.WriteString("t,u,y,r\n")
+			for k := range p.t {
+				zone := c.before
+				if k >= 300 {
+					zone = c.after
+				}
+				stamp := at(k, c.change).In(time.FixedZone("", int(zone.Seconds()))).Format(format)
+				fmt.Fprintf(&b, "%s,%s,%s,%s\n", stamp, text(p.u[k]), text(p.y[k]), text(p.r[k]))
+			}
+			exp := mustRead(t, b.String(), plainRig())
+			if exp.Period != 0.01 || exp.Used != 600 {
+				t.Errorf("%s, %s: period %v, %d rows used", c.name, format, exp.Period, exp.Used)
+			}
+			if !local {
+				if len(exp.Flaws) > 0 || len(exp.Segments) != 1 {
+					t.Errorf("%s, %s: %+v", c.name, format, exp.Flaws)
+				}
+				continue
+			}
+			want := Flaw{FlawHour, "t", 1, 302, "the stamps jump by one hour to the row, as local time does when daylight saving begins or ends", "a new segment starts there; no row is lost"}
+			if got := findFlaw(t, exp, FlawHour); got != want || len(exp.Flaws) != 1 || len(exp.Segments) != 2 {
+				t.Errorf("%s, %s: got %+v, want %+v of %q, %d segments", c.name, format, got, want, flawNames(exp), len(exp.Segments))
+			}
+		}
+	}
+	// Stamps that count do not know daylight saving: an hour is an hour.
+	q := newPlainLog(600)
+	for k := 300; k < 600; k++ {
+		q.t[k] += 3600
+	}
+	if exp := mustRead(t, q.csv(), plainRig()); !slices.Equal(flawNames(exp), []string{FlawGap}) {
+		t.Errorf("stamps in s: %q", flawNames(exp))
+	}
+}
+
+// The stamps of the input by a clock of its own: fast by 200 parts in a million and 1.5 s ahead.
+func TestReadLogInputTime(t *testing.T) {
+	p := newPlainLog(3000)
+	write := func(output, input func(s float64) string) string {
+		var b strings.Builder
+		b.WriteString("t,u,y,r,tu\n")
+		for k, s := range p.t {
+			fmt.Fprintf(&b, "%s,%s,%s,%s,%s\n", output(s), text(p.u[k]), text(p.y[k]), text(p.r[k]), input(s))
+		}
+		return b.String()
+	}
+	g := plainRig()
+	g.Log.InputTime = "tu"
+	plain := func(s float64) string { return strconv.FormatFloat(s, 'f', 6, 64) }
+	epoch := func(s float64) string { return strconv.FormatFloat(s+1764512345, 'f', 6, 64) }
+	iso := func(s float64) string {
+		return time.Unix(1764512345, 0).UTC().Add(time.Duration(math.Round(s * 1e9))).Format("2006-01-02T15:04:05.000000Z")
+	}
+	fast := func(f func(float64) string) func(float64) string {
+		return func(s float64) string { return f(1.5 + s*1.0002) }
+	}
+	for name, log := range map[string]string{"s": write(plain, fast(plain)), "since 1970": write(epoch, fast(epoch)), "ISO 8601": write(iso, fast(iso))} {
+		f := findFlaw(t, mustRead(t, log, g), FlawClocks)
+		if want := "the stamps of the input lie 1.5 s after those of the output at first and run fast by 200 parts in a million, 0.6 rows over the log"; f.Detail != want || f.Column != "u" {
+			t.Errorf("%s: %+v, want %s", name, f, want)
+		}
+	}
+	if exp := mustRead(t, write(plain, plain), g); len(exp.Flaws) > 0 {
+		t.Errorf("one clock: %+v", exp.Flaws)
 	}
 }
 
