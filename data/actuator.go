@@ -9,8 +9,8 @@ import (
 	"gonum.org/v1/gonum/mat"
 )
 
-// findActuator looks for a dead zone, for play (a hysteresis without memory of speed) and for friction: what a linear plant would answer to the part of the
-// input that each of them takes away is held against what a long linear model leaves of the output.
+// findActuator looks for a dead zone, for play (hysteresis) and for friction: what a linear plant would answer to the part
+// of the input that each of them takes away is held against what a long linear model leaves of the output.
 //
 // The model is y by 20 past rows of y and u. With b its coefficients of u, a plant behind the element f answers by
 // b (u - f(u)) less: the coefficient of that one more regressor is -1 behind that element and 0 without it (a test of

@@ -129,7 +129,7 @@ func (l *log) stampSkew() (offset, rate, sd float64, ok bool) {
 	return md + rate*(t[0]-mt) + apart, rate, sd, stt > 0 && !math.IsInf(rate, 0)
 }
 
-// A slippage is what the columns show of two clocks.
+// A slippage is what the columns show of two clocks: the skew, and the rows that it makes over the log.
 type slippage struct{ rate, rows, sd float64 }
 
 // slippage looks for a lag of the output behind the input that changes in proportion to time, by cross-correlation.
@@ -146,8 +146,8 @@ type slippage struct{ rate, rows, sd float64 }
 func (l *log) slippage() (slippage, bool) {
 	const (
 		size    = 128     // rows of a piece
-		blocks  = 32      // over the log, in each of which the pieces are added unturned
-		most    = 1 << 16 // rows looked at
+		blocks  = 32      // of them, in each of which the pieces are added unturned
+		most    = 1 << 16 // rows looked at, the first: clocks run apart evenly
 		fewest  = 2000
 		surely  = 40
 		atLeast = 0.2
@@ -155,7 +155,7 @@ func (l *log) slippage() (slippage, bool) {
 	var recs [][2]int
 	total := 0
 	l.runs(func(from, to int) {
-		if to-from >= size {
+		if to = min(to, from+most-total); to-from >= size {
 			recs = append(recs, [2]int{from, to})
 			total += to - from
 		}
@@ -186,10 +186,9 @@ func (l *log) slippage() (slippage, bool) {
 		}
 		fft.Coefficients(dst, piece)
 	}
-	stride := size / 2 * max(1, total/most)
 	pieces := 0
 	for _, r := range recs {
-		for k := r[0]; k+size <= r[1]; k += stride {
+		for k := r[0]; k+size <= r[1]; k += size / 2 {
 			spectrum(bu, l.columns[l.u][k:k+size])
 			spectrum(by, l.columns[l.y][k:k+size])
 			middle := float64(k+size/2-first) - span/2
@@ -210,7 +209,7 @@ func (l *log) slippage() (slippage, bool) {
 			sum[i].at /= float64(n)
 		}
 	}
-	weight := float64(pieces) * float64(min(stride, size)) / size // independent pieces, at most the rows looked at
+	weight := float64(pieces) / 2 // independent pieces, half overlapped
 	// likelihood of the skew that moves the rows by x over the span
 	turned := make([]complex128, size/2)
 	likelihood := func(x float64) float64 {
@@ -268,7 +267,8 @@ func (l *log) slippage() (slippage, bool) {
 	if 2*(best-none) < surely || math.Abs(at) < atLeast || !(bend > 0) {
 		return slippage{}, false
 	}
-	return slippage{rate: at / span, rows: at, sd: 1 / math.Sqrt(bend)}, true
+	over := float64(l.rows) / span
+	return slippage{rate: at / span, rows: over * at, sd: over / math.Sqrt(bend)}, true
 }
 
 func mean(x []float64) float64 {
