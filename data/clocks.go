@@ -65,7 +65,7 @@ func (l *log) undoSkew() {
 		l.columns[l.d] = moved[1]
 	}
 	if slips > 0 {
-		l.flaw(Flaw{Name: FlawClocks, Column: l.column(l.u), Count: slips, Line: l.lines.at(first),
+		l.flaw(Flaw{Name: FlawSkew, Column: l.column(l.u), Count: slips, Line: l.lines.at(first),
 			Detail: fmt.Sprintf("[log] clock_skew %s moves the input by %s over the log", number(l.rig.Log.ClockSkew), plural(abs(last), "row", "rows")),
 			Effect: fmt.Sprintf("moved as asked; a new segment starts at each row of it, %s not used", plural(lost, "row", "rows"))})
 	}
@@ -76,21 +76,18 @@ func abs(i int) int { return max(i, -i) }
 // compareClocks says by how much the clocks of input and output run apart: by the columns themselves, and by the stamps
 // of the input where it has its own.
 func (l *log) compareClocks() {
-	var said []string
-	effect := ""
 	if l.tu >= 0 {
 		if offset, rate, sd, ok := l.stampSkew(); ok && (math.Abs(rate) > 5*sd || math.Abs(offset) > regularStep*l.period) {
-			text := fmt.Sprintf("the stamps of the input lie %s s after those of the output at first and run fast by %s", number(offset), parts(rate))
-			said = append(said, text+fmt.Sprintf(", %.2g rows over the log", math.Abs(rate)*float64(l.rows)))
-			effect = "used as paired; the stamps alone do not tell whether rows or only clocks run apart"
+			l.flaw(Flaw{Name: FlawSkew, Column: l.column(l.tu), Count: l.rows, Line: l.lines.at(0),
+				Detail: fmt.Sprintf("the stamps of the input lie %s s after those of the output at first and run fast by %s, %.2g rows over the log",
+					number(offset), parts(rate), math.Abs(rate)*float64(l.rows)),
+				Effect: "used as paired; whether rows run apart, and not only stamps, the columns themselves tell"})
 		}
 	}
 	if s, ok := l.slippage(); ok {
-		said = append(said, fmt.Sprintf("against the output the input runs ahead by %.2g +- %.1g rows over the log, %s", s.rows, s.sd, parts(s.rate)))
-		effect = fmt.Sprintf("used as paired, which blurs the delay; [log] clock_skew = %s undoes it", number(l.rig.Log.ClockSkew+s.rate))
-	}
-	if len(said) > 0 {
-		l.flaw(Flaw{Name: FlawClocks, Column: l.column(l.u), Count: 1, Line: l.lines.at(0), Detail: strings.Join(said, "; "), Effect: effect})
+		l.flaw(Flaw{Name: FlawClocks, Column: l.column(l.u), Count: l.rows, Line: l.lines.at(0),
+			Detail: fmt.Sprintf("against the output the input runs ahead by %.2g +- %.1g rows over the log, %s", s.rows, s.sd, parts(s.rate)),
+			Effect: fmt.Sprintf("used as paired, which blurs the delay; [log] clock_skew = %s undoes it", number(l.rig.Log.ClockSkew+s.rate))})
 	}
 }
 

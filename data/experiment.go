@@ -58,6 +58,7 @@ const (
 	FlawBackward  = "backward stamp"       // a stamp before the one before
 	FlawHour      = "hour jump"            // local time set ahead or back by an hour
 	FlawClocks    = "two clocks"           // input and output logged by clocks that run apart
+	FlawSkew      = "clock skew"           // stamps of input and output run apart, or [log] clock_skew moved the input
 	FlawTelemetry = "slow telemetry"       // the loop that ran moved the input between rows
 	FlawHeader    = "repeated header"      // the header again among the rows
 	FlawCut       = "cut last line"        // the file ends within a row
@@ -92,7 +93,8 @@ var remedies = map[string]string{
 	FlawRepeat:    "look at the rows there; stamps with more digits tell apart what was sampled apart",
 	FlawBackward:  "split the log there, or sort its rows",
 	FlawHour:      "log in UTC or with the zone (+01:00): then the rows go on without a break",
-	FlawClocks:    "sample both by one clock; or set or take out [log] clock_skew in the rig file",
+	FlawClocks:    "sample both by one clock, or set [log] clock_skew in the rig file",
+	FlawSkew:      "sample both by one clock, or set or take out [log] clock_skew in the rig file",
 	FlawTelemetry: "log every sample of the loop, or the mean of the input over each row",
 	FlawHeader:    "give the logs one by one",
 	FlawCut:       "nothing; the logger was stopped while it wrote",

@@ -529,8 +529,8 @@ func TestReadLogInputTime(t *testing.T) {
 		return func(s float64) string { return f(1.5 + s*1.0002) }
 	}
 	for name, log := range map[string]string{"s": write(plain, fast(plain)), "since 1970": write(epoch, fast(epoch)), "ISO 8601": write(iso, fast(iso))} {
-		f := findFlaw(t, mustRead(t, log, g), FlawClocks)
-		if want := "the stamps of the input lie 1.5 s after those of the output at first and run fast by 200 parts in a million, 0.6 rows over the log"; f.Detail != want || f.Column != "u" {
+		f := findFlaw(t, mustRead(t, log, g), FlawSkew)
+		if want := "the stamps of the input lie 1.5 s after those of the output at first and run fast by 200 parts in a million, 0.6 rows over the log"; f.Detail != want || f.Column != "tu" {
 			t.Errorf("%s: %+v, want %s", name, f, want)
 		}
 	}

@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"math"
 	"runtime"
+	"slices"
 
 	"steadyrig/data"
 	"steadyrig/fit"
@@ -229,6 +230,7 @@ func (a *AuditReport) glance(ctx context.Context, recs []fit.Record, rig *data.R
 
 // conclude sets the verdict and the one next step.
 func (a *AuditReport) conclude() error {
+	flaw := slices.IndexFunc(a.Flaws, func(f Flaw) bool { return slices.Contains(doubtfulFlaws, f.Name) })
 	switch {
 	case a.Pairing.Rows != 0:
 		a.Verdict = Refused
@@ -243,6 +245,9 @@ func (a *AuditReport) conclude() error {
 	case a.Law != nil && a.Law.Unexplained > 0.9:
 		a.Verdict = Weak
 		a.NextStep = "correct [stopgap] in the rig file, or leave it out: " + a.Law.Words
+	case flaw >= 0:
+		a.Verdict = Weak
+		a.NextStep = fmt.Sprintf("mend the flaw %q: %s", a.Flaws[flaw].Name, a.Flaws[flaw].Remedy)
 	case a.Memories > 0 && a.Memories < soundMemories:
 		a.Verdict = Weak
 		a.NextStep = fmt.Sprintf("log a longer run: this one holds %.0f memories of the predictor, intervals want %d", a.Memories, soundMemories)
