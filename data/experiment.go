@@ -70,6 +70,7 @@ const (
 	FlawStuck     = "stuck sensor"         // output repeats one value far longer than usual
 	FlawSpike     = "spike"                // one sample of the output far off its neighbours
 	FlawQuantised = "quantisation"         // values on a grid
+	FlawFew       = "few levels"           // an output on a grid so coarse that its rounding is no noise any more
 	FlawDrift     = "drift"                // the mean moves through the log
 	FlawIdle      = "input at rest"        // a long stretch without a move of the input
 	FlawDeadZone  = "dead zone"            // small inputs do not act
@@ -106,6 +107,7 @@ var remedies = map[string]string{
 	FlawStuck:     "look at the sensor and its link; cut these rows out if the rig stood still there",
 	FlawSpike:     "shield the sensor's line; a log without spikes loses no rows",
 	FlawQuantised: "log more digits, or use a finer converter or a narrower range",
+	FlawFew:       "log more digits, or use a finer converter or a narrower range; a probe that moves the output more helps, too",
 	FlawDrift:     "log a shorter run, or let the rig settle first",
 	FlawIdle:      "give [limits] output if the rig tripped; log with the loop closed",
 	FlawDeadZone:  "put a stronger probe on the input, or bias the actuator out of the dead zone; give a log without it",

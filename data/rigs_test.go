@@ -183,7 +183,7 @@ func TestHuntingLoops(t *testing.T) {
 	}
 }
 
-// A hum of half the sensor's deviations and more is named by its frequency; one above half of the rows' rate by where it
+// A hum of three deviations of the sensor's noise is named by its frequency; one above half of the rows' rate by where it
 // shows: 60 Hz at 40 Hz in 100 rows a second.
 func TestHum(t *testing.T) {
 	for _, c := range []struct {
@@ -199,7 +199,7 @@ func TestHum(t *testing.T) {
 		for seed := range uint64(logsPerRig(t, 1)) {
 			s := r.Signals(r.Rows, seed)
 			for k := range s.Noise {
-				s.Noise[k] += 1.5 * r.SensorNoise * math.Sin(2*math.Pi*c.hz*float64(k)*r.Period+float64(seed))
+				s.Noise[k] += 3 * r.SensorNoise * math.Sin(2*math.Pi*c.hz*float64(k)*r.Period+float64(seed))
 			}
 			found := false
 			for _, f := range mustRead(t, r, s, mustRun(t, r, s), seed).Flaws {

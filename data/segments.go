@@ -189,7 +189,7 @@ func (l *log) because() string {
 	var list []string
 	for _, f := range l.flaws {
 		switch f.Name {
-		case FlawSaturated, FlawQuantised, FlawDrift, FlawJitter, FlawClock, FlawConstant, FlawRate, FlawShort, FlawHour, FlawSkew, FlawClocks, FlawTelemetry, FlawDeadZone, FlawStiction, FlawCycle, FlawPeriodic, FlawAlias:
+		case FlawSaturated, FlawQuantised, FlawFew, FlawDrift, FlawJitter, FlawClock, FlawConstant, FlawRate, FlawShort, FlawHour, FlawSkew, FlawClocks, FlawTelemetry, FlawDeadZone, FlawStiction, FlawCycle, FlawPeriodic, FlawAlias:
 			continue
 		}
 		where := f.Name

@@ -331,7 +331,8 @@ func (m *Model) clipped(exps []*data.Experiment) {
 }
 
 // doubtfulFlaws are those that a linear plant fitted to the log inherits.
-var doubtfulFlaws = []string{data.FlawClocks, data.FlawTelemetry, data.FlawRate, data.FlawDeadZone, data.FlawStiction, data.FlawCycle}
+var doubtfulFlaws = []string{data.FlawClocks, data.FlawTelemetry, data.FlawRate, data.FlawDeadZone, data.FlawStiction, data.FlawCycle,
+	data.FlawPeriodic, data.FlawAlias, data.FlawFew}
 
 // doubt calls a model weak where a log has such a flaw.
 func (m *Model) doubt(exps []*data.Experiment) {

@@ -241,7 +241,8 @@ func Ways() []Way {
 			p.rig.InputLimits[1] = p.rig.U0 + p.between(0.5, 0.9)
 			return nil
 		}},
-		{Name: "coarse output", Want: data.FlawQuantised, before: func(p *draft) Element { p.rig.Resolution = p.between(0.05, 0.3); return nil }},
+		{Name: "coarse output", Want: data.FlawQuantised, before: func(p *draft) Element { p.rig.Resolution = p.between(0.02, 0.1); return nil }},
+		{Name: "few levels of output", Want: data.FlawFew, before: func(p *draft) Element { p.rig.Resolution = p.between(0.18, 0.3); return nil }},
 		{Name: "drift", Want: data.FlawDrift, after: func(p *draft) {
 			slope := p.sign() * p.between(1, 4) / float64(len(p.lines))
 			p.each(firstRow, cY, func(y float64, k int) float64 { return y + slope*float64(k) })
