@@ -255,7 +255,7 @@ func Ways() []Way {
 			return DeadZone(p.between(0.4, 0.8), p.rig.U0)
 		}},
 		{Name: "hum", Want: data.FlawPeriodic, before: func(p *draft) Element {
-			hz, size, phase := p.between(22, 38), p.between(2, 6)*p.rig.SensorNoise, 6*p.rnd.Float64()
+			hz, size, phase := p.between(22, 38), p.between(3, 8)*p.rig.SensorNoise, 6*p.rnd.Float64()
 			for k := range p.s.Noise {
 				p.s.Noise[k] += size * math.Sin(2*math.Pi*hz*float64(k)*p.rig.Period+phase)
 			}
