@@ -73,7 +73,7 @@ func (l *log) findActuator() {
 		coef, t, gain := past.add(z)
 		if coef < hi && coef > lo && -t > sure && gain > gains && gain > best {
 			best = gain
-			found = Flaw{Name: name, Column: l.column(l.u), Count: len(rows), Line: line,
+			found = Flaw{Name: name, Column: l.column(l.u), Count: 1, Line: line,
 				Detail: fmt.Sprintf("%s explains %.0f %% of what a linear model misses, %.1f standard deviations", words, 100*gain, -t),
 				Effect: "used; a linear fit averages over it, and its gain and poles hold for moves of this size only"}
 		}

@@ -78,14 +78,14 @@ func abs(i int) int { return max(i, -i) }
 func (l *log) compareClocks() {
 	if l.tu >= 0 {
 		if offset, rate, sd, ok := l.stampSkew(); ok && (math.Abs(rate) > 5*sd || math.Abs(offset) > regularStep*l.period) {
-			l.flaw(Flaw{Name: FlawSkew, Column: l.column(l.tu), Count: l.rows, Line: l.lines.at(0),
+			l.flaw(Flaw{Name: FlawSkew, Column: l.column(l.tu), Count: 1, Line: l.lines.at(0),
 				Detail: fmt.Sprintf("the stamps of the input lie %s s after those of the output at first and run fast by %s, %.2g rows over the log",
 					number(offset), parts(rate), math.Abs(rate)*float64(l.rows)),
 				Effect: "used as paired; whether rows run apart, and not only stamps, the columns themselves tell"})
 		}
 	}
 	if s, ok := l.slippage(); ok {
-		l.flaw(Flaw{Name: FlawClocks, Column: l.column(l.u), Count: l.rows, Line: l.lines.at(0),
+		l.flaw(Flaw{Name: FlawClocks, Column: l.column(l.u), Count: 1, Line: l.lines.at(0),
 			Detail: fmt.Sprintf("against the output the input runs ahead by %.2g +- %.1g rows over the log, %s", s.rows, s.sd, parts(s.rate)),
 			Effect: fmt.Sprintf("used as paired, which blurs the delay; [log] clock_skew = %s undoes it", number(l.rig.Log.ClockSkew+s.rate))})
 	}
