@@ -3,6 +3,7 @@ package data
 import (
 	"bufio"
 	"bytes"
+	"compress/flate"
 	"compress/gzip"
 	"crypto/sha256"
 	"encoding/binary"
@@ -260,10 +261,11 @@ func inFile(file string, err error) error {
 }
 
 func readingError(file string, err error) error {
+	var corrupt flate.CorruptInputError
 	switch {
 	case errors.Is(err, io.ErrUnexpectedEOF):
 		return &ParseError{File: file, Err: errors.New("the packed file ends before its end"), Hint: "copy it again"}
-	case errors.Is(err, gzip.ErrChecksum), errors.Is(err, gzip.ErrHeader):
+	case errors.Is(err, gzip.ErrChecksum), errors.Is(err, gzip.ErrHeader), errors.As(err, &corrupt):
 		return &ParseError{File: file, Err: err, Hint: "the packed file is damaged: copy it again"}
 	}
 	return fmt.Errorf("reading %q: %w", file, err)

@@ -292,6 +292,29 @@ func TestFlawSlowTelemetry(t *testing.T) {
 	}
 }
 
+// Noise through a lightly damped resonance swings, too, but not at one amplitude; a swing of one amplitude whose phase
+// wanders shows no line.
+func TestResonanceIsNoCycle(t *testing.T) {
+	for seed := range uint64(6) {
+		noise, swing := newPlainLog(4000), newPlainLog(4000)
+		rnd := rand.New(rand.NewPCG(8, seed))
+		const damping, angle = 0.97, 0.6
+		a, b, phase := 0.0, 0.0, 0.0
+		for k := range noise.y {
+			a, b = 2*damping*math.Cos(angle)*a-damping*damping*b+rnd.NormFloat64(), a
+			noise.y[k] = a
+			phase += angle + 0.08*rnd.NormFloat64()
+			swing.y[k] = math.Sin(phase) + 0.1*rnd.NormFloat64()
+		}
+		if exp := mustRead(t, noise.csv(), plainRig()); len(exp.Flaws) > 0 {
+			t.Errorf("noise, seed %d: %+v", seed, exp.Flaws)
+		}
+		if f := findFlaw(t, mustRead(t, swing.csv(), plainRig()), FlawCycle); !strings.HasPrefix(f.Detail, "swings at 9.") {
+			t.Errorf("swing of %g Hz, seed %d: %+v", 100*angle/(2*math.Pi), seed, f)
+		}
+	}
+}
+
 // Every flaw says what to do about it, on lines that a console takes.
 func TestRemedies(t *testing.T) {
 	names := constants(t, "experiment.go", "Flaw")

@@ -497,6 +497,19 @@ func TestReadLogDaylightSaving(t *testing.T) {
 			}
 		}
 	}
+	// An hour that is lost by a clock with a zone is a gap.
+	var b strings.Builder
+	b.WriteString("t,u,y,r\n")
+	for k := range p.t {
+		stamp := time.Date(2025, 3, 30, 1, k/300, 0, 10e6*k, time.UTC)
+		if k >= 300 {
+			stamp = time.Date(2025, 3, 30, 2, 0, 0, 10e6*k, time.UTC)
+		}
+		fmt.Fprintf(&b, "%s,%s,%s,%s\n", stamp.Format("2006-01-02T15:04:05.000Z"), text(p.u[k]), text(p.y[k]), text(p.r[k]))
+	}
+	if exp := mustRead(t, b.String(), plainRig()); !slices.Equal(flawNames(exp), []string{FlawGap}) {
+		t.Errorf("an hour lost in UTC: %q", flawNames(exp))
+	}
 	// Stamps that count do not know daylight saving: an hour is an hour.
 	q := newPlainLog(600)
 	for k := 300; k < 600; k++ {
