@@ -80,14 +80,13 @@ func standsOut(p []float64, j int) (ratio float64, m int) {
 // A peak is a frequency at which a spectrum stands out.
 type peak struct{ hz, amplitude float64 }
 
-// peaks returns those of column i within rows [from, to), but for those that reference or dither have, too. A false one
-// shows in a log in a million.
-func (l *log) peaks(i, from, to int) []peak {
+// peaks returns those of the periodogram p of the output in rows [from, to), but for those that reference or dither have,
+// too. A false one shows in a log in a million.
+func (l *log) peaks(p []float64, from, to int) []peak {
 	const alarm = 1e-6
-	p := periodogram(l.columns[i][from:to])
 	var outside [][]float64
 	for _, c := range []int{l.r, l.d} {
-		if c >= 0 && c != i {
+		if c >= 0 {
 			outside = append(outside, periodogram(l.columns[c][from:to]))
 		}
 	}
@@ -142,7 +141,8 @@ func (l *log) findLines() {
 		return
 	}
 	name := l.column(l.y)
-	lines := l.peaks(l.y, from, to)
+	p := periodogram(l.columns[l.y][from:to])
+	lines := l.peaks(p, from, to)
 	rate := 1 / l.period
 	bin := rate / float64(to-from)
 	if len(lines) > few {
@@ -182,7 +182,6 @@ func (l *log) findLines() {
 		}
 		l.flaw(f)
 	}
-	p := periodogram(l.columns[l.y][from:to])
 	l.findRise(p, from)
 	if !cycle {
 		l.findCycle(p, from, to)
