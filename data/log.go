@@ -162,7 +162,7 @@ func (l *log) experiment() (*Experiment, error) {
 	if err := l.timeBase(); err != nil {
 		return nil, err
 	}
-	exp.InputStep, exp.OutputStep = grid(l.levels(l.columns[l.u])), grid(l.levels(l.columns[l.y]))
+	exp.InputStep, exp.OutputStep = grid(l.levels(l.columns[l.u]), fewestInput), grid(l.levels(l.columns[l.y]), fewestInput)
 	l.undoSkew()
 	l.findFlaws()
 	if 2*l.clipped > l.rows {
