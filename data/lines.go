@@ -99,7 +99,7 @@ func (l *log) peaks(p []float64, from, to int) []peak {
 		if float64(m)*math.Log1p(ratio/float64(m)) < math.Log(float64(len(p))/alarm) {
 			continue
 		}
-		const little = 5 // as much as one frequency in a hundred stands out by
+		const little = 20 // a line that comes from outside stands out there at least as much as here; chance, once in 100 000 times
 		if slices.ContainsFunc(outside, func(q []float64) bool {
 			for k := j - 1; k <= j+1; k++ {
 				if ratio, _ := standsOut(q, k); ratio > little {
