@@ -54,7 +54,7 @@ func BenchmarkReadTable(b *testing.B) {
 	b.SetBytes(int64(len(text)))
 	b.ReportAllocs()
 	for b.Loop() {
-		_, err := readTable(bytes.NewReader(text), "log.csv", func(*layout) ([]int, int, error) { return []int{0, 1, 2, 3, 4}, 0, nil })
+		_, err := readTable(bytes.NewReader(text), "log.csv", &Layout{}, func(*layout) ([]int, []int, error) { return []int{0, 1, 2, 3, 4}, []int{0}, nil })
 		if err != nil {
 			b.Fatal(err)
 		}

@@ -3,8 +3,10 @@ package data
 import (
 	"bufio"
 	"bytes"
+	"compress/flate"
 	"compress/gzip"
 	"crypto/sha256"
+	"encoding/binary"
 	"encoding/hex"
 	"errors"
 	"fmt"
@@ -12,14 +14,17 @@ import (
 	"io"
 	"math"
 	"strings"
+	"unicode/utf16"
+	"unicode/utf8"
 )
 
-// A source is a log's bytes, unpacked where they came packed, and their checksum as they came.
+// A source is a log's bytes, unpacked where they came packed, as UTF-8 where they came as UTF-16, and their checksum as
+// they came.
 type source struct {
 	io.Reader
-	raw  io.Reader
-	sum  hash.Hash
-	gzip bool
+	raw io.Reader
+	sum hash.Hash
+	how string // they came, for people: "gzip, UTF-16, "
 }
 
 func newSource(r io.Reader) (*source, error) {
@@ -32,9 +37,66 @@ func newSource(r io.Reader) (*source, error) {
 		if err != nil {
 			return nil, err
 		}
-		s.Reader, s.gzip = unpacked, true
+		buffered = bufio.NewReaderSize(unpacked, 1<<16)
+		s.Reader, s.how = buffered, "gzip, "
+	}
+	switch mark, _ := buffered.Peek(2); string(mark) {
+	case "\xff\xfe":
+		s.Reader, s.how = &wideText{from: buffered, order: binary.LittleEndian}, s.how+"UTF-16, "
+	case "\xfe\xff":
+		s.Reader, s.how = &wideText{from: buffered, order: binary.BigEndian}, s.how+"UTF-16, "
 	}
 	return s, nil
+}
+
+// A wideText reads UTF-16 as UTF-8.
+type wideText struct {
+	from  io.Reader
+	order binary.ByteOrder
+	raw   [4096]byte
+	have  int // bytes of raw not yet decoded
+	text  []byte
+	err   error
+}
+
+func (w *wideText) Read(p []byte) (int, error) {
+	for len(w.text) == 0 {
+		if w.err != nil {
+			return 0, w.err
+		}
+		var n int
+		n, w.err = io.ReadAtLeast(w.from, w.raw[w.have:], 1)
+		w.have += n
+		w.decode()
+	}
+	n := copy(p, w.text)
+	w.text = w.text[n:]
+	return n, nil
+}
+
+// decode decodes what there is, but half of a character at the end of raw unless nothing follows it.
+func (w *wideText) decode() {
+	w.text = w.text[:0]
+	at := 0
+	for at+2 <= w.have {
+		r := rune(w.order.Uint16(w.raw[at:]))
+		size := 2
+		if utf16.IsSurrogate(r) {
+			if at+4 > w.have && w.err == nil {
+				break
+			}
+			second := rune(utf8.RuneError)
+			if at+4 <= w.have {
+				second = rune(w.order.Uint16(w.raw[at+2:]))
+			}
+			if r = utf16.DecodeRune(r, second); r != utf8.RuneError {
+				size = 4
+			}
+		}
+		w.text = utf8.AppendRune(w.text, r)
+		at += size
+	}
+	w.have = copy(w.raw[:], w.raw[at:w.have])
 }
 
 // checksum reads what is left and returns the SHA-256 of all bytes in hex.
@@ -48,8 +110,8 @@ func (s *source) checksum() (string, error) {
 // A table holds the wanted columns of a log, row by row; NaN where a cell holds no number.
 type table struct {
 	layout
-	columns [][]float64 // as asked for; the one of the stamps, if any, in s
-	clock   clock
+	columns [][]float64 // as asked for; those of stamps in s
+	clocks  []clock     // of the columns of stamps
 	lines   lineMap
 	rows    int
 	ragged  int // line of a last line that ends within its row, or 0
@@ -86,10 +148,10 @@ func (m *lineMap) at(row int) int {
 type reader struct {
 	table
 	file   string
-	want   []int // column asked for -> field
-	stamps int   // field of the stamps, or -1
-	part   []int // field -> column asked for, or -1
-	last   int   // last field wanted
+	want   []int    // column asked for -> field
+	clock  []*clock // field -> clock that it is read by, nil: plain numbers
+	part   []int    // field -> column asked for, or -1
+	last   int      // last field wanted
 	values []float64
 	header []byte // for a header that comes again
 	cells  [][]byte
@@ -154,14 +216,14 @@ func readHead(src io.Reader, file string) (head []byte, whole bool, err error) {
 	return bytes.TrimPrefix(head[:n], []byte("\xef\xbb\xbf")), whole, nil
 }
 
-// readTable reads a log. choose is told the layout and returns the fields wanted, and which of them holds stamps (an
-// index into them, or -1).
-func readTable(src io.Reader, file string, choose func(*layout) (fields []int, stamps int, err error)) (*table, error) {
+// readTable reads a log. choose is told the layout and returns the fields wanted, and which of them hold stamps (indices
+// into them). given is what the rig file says of the layout.
+func readTable(src io.Reader, file string, given *Layout, choose func(*layout) (fields, stamps []int, err error)) (*table, error) {
 	head, whole, err := readHead(src, file)
 	if err != nil {
 		return nil, err
 	}
-	l, err := recognise(head, whole)
+	l, err := recognise(head, whole, given)
 	if err != nil {
 		return nil, inFile(file, err)
 	}
@@ -169,7 +231,7 @@ func readTable(src io.Reader, file string, choose func(*layout) (fields []int, s
 	if err != nil {
 		return nil, inFile(file, err)
 	}
-	r := &reader{table: table{layout: *l}, file: file, want: fields, stamps: -1}
+	r := &reader{table: table{layout: *l}, file: file, want: fields}
 	r.columns = make([][]float64, len(fields))
 	r.values = make([]float64, len(fields))
 	r.part = make([]int, len(l.names))
@@ -179,9 +241,10 @@ func readTable(src io.Reader, file string, choose func(*layout) (fields []int, s
 	for i, f := range fields {
 		r.part[f] = i
 		r.last = max(r.last, f)
-		if i == stamps {
-			r.stamps = f
-		}
+	}
+	r.clock, r.clocks = make([]*clock, len(l.names)), make([]clock, len(stamps))
+	for i, k := range stamps {
+		r.clock[fields[k]] = &r.clocks[i]
 	}
 	if err := r.read(head, src, whole); err != nil {
 		return nil, err
@@ -198,10 +261,11 @@ func inFile(file string, err error) error {
 }
 
 func readingError(file string, err error) error {
+	var corrupt flate.CorruptInputError
 	switch {
 	case errors.Is(err, io.ErrUnexpectedEOF):
 		return &ParseError{File: file, Err: errors.New("the packed file ends before its end"), Hint: "copy it again"}
-	case errors.Is(err, gzip.ErrChecksum), errors.Is(err, gzip.ErrHeader):
+	case errors.Is(err, gzip.ErrChecksum), errors.Is(err, gzip.ErrHeader), errors.As(err, &corrupt):
 		return &ParseError{File: file, Err: err, Hint: "the packed file is damaged: copy it again"}
 	}
 	return fmt.Errorf("reading %q: %w", file, err)
@@ -271,7 +335,12 @@ func (r *reader) line(text []byte, line int, open bool) {
 
 // quick reads a row of plain numbers into r.values. It returns false for any other line, which slow then reads.
 func (r *reader) quick(text []byte) bool {
-	if r.stamps >= 0 && (!r.clock.started || r.clock.iso || r.clock.base != 0) || r.part[0] < 0 && isComment(text) {
+	for i := range r.clocks {
+		if c := &r.clocks[i]; !c.started || c.iso || c.base != 0 {
+			return false
+		}
+	}
+	if r.part[0] < 0 && r.isComment(text) {
 		return false
 	}
 	if r.delimiter == ' ' {
@@ -299,8 +368,8 @@ func (r *reader) quick(text []byte) bool {
 		for pos < len(text) && text[pos] == ' ' {
 			pos++
 		}
-		if f == r.stamps {
-			x *= r.clock.scale
+		if c := r.clock[f]; c != nil {
+			x *= c.scale
 		}
 		r.values[i] = x
 		if pos == len(text) {
@@ -345,8 +414,8 @@ func (r *reader) quickBlanks(text []byte) bool {
 			if pos < len(text) && text[pos] != ' ' && text[pos] != '\t' {
 				return false
 			}
-			if f == r.stamps {
-				x *= r.clock.scale
+			if c := r.clock[f]; c != nil {
+				x *= c.scale
 			}
 			r.values[i] = x
 		} else {
@@ -360,7 +429,7 @@ func (r *reader) quickBlanks(text []byte) bool {
 
 // slow reads any line into r.values, notes what is wrong with it, and tells whether it is a row.
 func (r *reader) slow(text []byte, line int, open bool) bool {
-	if isBlank(text) || isComment(text) {
+	if isBlank(text) || r.isComment(text) {
 		return false
 	}
 	r.cells = r.layout.cells(r.cells, text)
@@ -394,7 +463,7 @@ func (r *reader) slow(text []byte, line int, open bool) bool {
 func (r *reader) badCell(cell []byte, line, f int) *ParseError {
 	e := &ParseError{File: r.file, Line: line, Column: f + 1, Hint: "mend or remove these lines; an empty cell or NaN may stand for a missing value"}
 	what := "is no number"
-	if f == r.stamps {
+	if r.clock[f] != nil {
 		what = "is no time stamp"
 		e.Hint = "write s, or ISO 8601 like 2025-12-17T20:58:11.705"
 	} else if x, n := scanNumber(cell, r.mark); n == len(cell) && math.IsInf(x, 0) {
@@ -409,13 +478,11 @@ func (r *reader) number(cell []byte, f int) (float64, bool) {
 	if isMissing(cell) {
 		return math.NaN(), true
 	}
-	if f == r.stamps {
-		if !r.clock.started {
-			if !r.clock.start(cell, r.mark, r.unit(f)) {
-				return math.NaN(), false
-			}
+	if c := r.clock[f]; c != nil {
+		if !c.started && !c.start(cell, r.mark, r.unit(f)) {
+			return math.NaN(), false
 		}
-		return r.clock.read(cell, r.mark)
+		return c.read(cell, r.mark)
 	}
 	x, n := scanNumber(cell, r.mark)
 	if n == len(cell) && !math.IsInf(x, 0) {

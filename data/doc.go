@@ -27,6 +27,9 @@
 //	stamps      s; s, ms, us or ns since 1970, told by their size; ms, us, ns, min, h where the unit says so; ISO 8601
 //	            with or without zone; time of day
 //	packing     gzip, told by its first bytes
+//	encoding    UTF-8 or any of one byte a sign; UTF-16 with a byte order mark
+//
+// What is recognised wrongly the rig file's [layout] puts right.
 //
 // Faults that leave doubt about the numbers are errors, with file, line and column: text where a number should be, a row
 // with more or fewer cells, a period that is not the rig file's. All bad rows are counted, the first few shown.
@@ -37,7 +40,11 @@
 // unless the stamps are back on their grid within ten rows without ever running backward: then a logger was late and
 // stamped some rows together. Nothing is interpolated and no row is moved. Where stamps repeat because their resolution is
 // coarser than the period, [log] sample_period has to be given and is checked against the whole length. A period that
-// changes by more than one per cent within the log is an error.
+// changes by more than one per cent within the log is an error. Stamps in local time that jump by one hour lost no row, but
+// start a segment all the same.
+//
+// Where input and output were logged by two clocks, [log] input_time names the input's own stamps, which are compared, and
+// [log] clock_skew moves the rows of the input. Nothing is moved without it.
 //
 // # Pairing
 //
@@ -47,7 +54,8 @@
 //
 // # Flaws
 //
-// What a fit should not take silently is a [Flaw], each with count, first line, figures and what was done about it:
+// What a fit should not take silently is a [Flaw], each with count, first line, figures, what was done about it, and what
+// its owner can do ([Flaw.Remedy]):
 //
 //	time unit        stamps in another unit than s                  converted
 //	jitter           steps off the period by more than 2 %          rows taken as evenly spaced
@@ -56,6 +64,10 @@
 //	short step       step shorter than half a period                new segment
 //	repeated stamp   row twice: taken once; other values:           new segment
 //	backward stamp   clock set back, rows swapped, logs joined      new segment
+//	hour jump        local time set on or back              new segment
+//	clock skew       stamps of input and output run apart   used as paired; moved by [log] clock_skew
+//	two clocks       the columns themselves run apart       used as paired
+//	slow telemetry   [log] controller_period below a row's  used
 //	repeated header  the header among the rows                      new segment
 //	cut last line    the file ends within a row                     row not used
 //	missing value    no number in a column that is used             row not used
@@ -66,13 +78,20 @@
 //	stuck sensor     output repeats a value far longer than usual   rows not used
 //	spike            one output far off its neighbours              row not used
 //	quantisation     values on a grid that is not fine              used
+//	few levels       output on a grid as coarse as its motion       used
 //	drift            a mean that runs away through the log          used
 //	constant column  reference or dither that never moves           used
-//	input at rest    a whole stretch without a move of the input    not used
+//	input at rest    a long stretch without a move of the input     not used
+//	dead zone        small inputs do not act                        used
+//	stiction         play in the input, or friction                 used
+//	limit cycle      the loop swings by itself                      used
+//	periodic disturbance  a line in the output's spectrum           used
+//	aliasing         folded mains; power that grows up to Nyquist   used
 //	short segment    less than MinSegment rows                      not used
 //
-// A row that is not used ends its segment; the next row starts another. Flaws that take two columns or a model to see
-// (dead zone, pairing, input logged at another rate, what the log can tell) are not looked for here.
+// A row that is not used ends its segment; the next row starts another. Flaws that take a model to see (pairing, what the
+// log can tell) are not looked for here; those from dead zone to aliasing are looked for on the
+// first rows, some ten thousand, of what a long linear regression and a spectrum show.
 //
 // # Symbols
 //

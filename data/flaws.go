@@ -12,12 +12,19 @@ func (l *log) findFlaws() {
 	l.findLimits()
 	l.findTrips()
 	l.findStuck()
+	l.findRest()
 	l.findSpikes()
 	for _, i := range []int{l.u, l.y} {
 		l.findQuantisation(i)
 		l.findDrift(i)
 	}
 	l.findConstant()
+	l.findSlowTelemetry()
+	l.compareClocks()
+	l.findLines()
+	if !l.has(FlawClocks) { // which would pass for play
+		l.findActuator()
+	}
 }
 
 // findConstant names a dither that never moves, and a reference that does not where there is no dither that does.
@@ -93,7 +100,8 @@ func (l *log) findLimits() {
 				Effect: "clipped to the limits, past which the actuator was not told to go; log the input after its limits"})
 		}
 		l.saturated(name, low, high, first, lim[0], lim[1])
-	} else {
+	}
+	if lim := l.rig.Limits.Input; lim == nil || !l.has(FlawSaturated) && l.clipped == 0 {
 		l.findFlatTops(u, name)
 	}
 	if rate := l.rig.Limits.InputRate; rate > 0 {
@@ -116,6 +124,10 @@ func (l *log) findLimits() {
 				Effect: "used as logged, which the actuator cannot have followed"})
 		}
 	}
+}
+
+func (l *log) has(name string) bool {
+	return slices.ContainsFunc(l.flaws, func(f Flaw) bool { return f.Name == name })
 }
 
 func (l *log) saturated(name string, low, high, first int, lo, hi float64) {
@@ -229,35 +241,40 @@ func (l *log) findTrips() {
 		Detail: fmt.Sprintf("output beyond [limits] output [%s, %s]", number(lim[0]), number(lim[1])), Effect: effect})
 }
 
-// findStuck marks stretches in which the output repeats one value far longer than it usually does. A segment ends before
-// a long one, of MinSegment rows or more.
+// longRest returns the number of rows from which on a column that repeats its value is at rest, and not by chance.
 //
-// Were the output to repeat itself from row to row with probability q, independently, a stretch of n rows would have
+// Were it to repeat itself from row to row with probability q, independently, a stretch of n rows would have
 // probability q^n; q is taken from the share of stretches longer than one row, which a few long ones cannot raise. The
 // bound of one false alarm in a million logs is trebled because real stretches are not independent.
-func (l *log) findStuck() {
+func (l *log) longRest(x []float64, fewest int) int {
 	const (
 		alarm   = 1e-6
 		slower  = 3
-		fewest  = 20
 		longest = 1 << 30
 	)
-	y := l.columns[l.y]
 	stretches, longer := 0, 0
-	l.stretches(func(from, to int) {
+	l.stretches(x, func(from, to int) {
 		stretches++
 		if to-from > 1 {
 			longer++
 		}
 	})
 	q := (float64(longer) + 1) / (float64(stretches) + 2)
-	limit := fewest
-	if n := slower * math.Log(alarm/float64(l.rows)) / math.Log(q); n > fewest {
-		limit = int(min(n, longest))
+	if n := slower * math.Log(alarm/float64(l.rows)) / math.Log(q); n > float64(fewest) {
+		return int(min(n, longest))
 	}
+	return fewest
+}
+
+// findStuck marks stretches in which the output repeats one value far longer than it usually does. A segment ends before
+// a long one, of MinSegment rows or more.
+func (l *log) findStuck() {
+	const fewest = 20
+	y := l.columns[l.y]
+	limit := l.longRest(y, fewest)
 	count, first, rows, most := 0, 0, 0, 0
 	value := 0.0
-	l.stretches(func(from, to int) {
+	l.stretches(y, func(from, to int) {
 		if to-from < limit {
 			return
 		}
@@ -284,12 +301,48 @@ func (l *log) findStuck() {
 	}
 }
 
-// stretches calls f with [from, to) of each stretch of equal outputs among the rows used.
-func (l *log) stretches(f func(from, to int)) {
-	y := l.columns[l.y]
+// findRest marks stretches in which the input stays where it is far longer than it usually does: before a start, or after a
+// trip that no limit of the output tells. At its extremes it may stay for a while, but not to the end.
+func (l *log) findRest() {
+	u := l.columns[l.u]
+	lo, hi := math.Inf(1), math.Inf(-1)
+	for k, x := range u {
+		if l.dropped[k]&isUnused == 0 {
+			lo, hi = min(lo, x), max(hi, x)
+		}
+	}
+	slack := limitSlack * (hi - lo)
+	limit := l.longRest(u, MinSegment)
+	count, first, rows := 0, 0, 0
+	l.stretches(u, func(from, to int) {
+		within := from > 0 && to < l.rows && (l.dropped[from]&startsSegment|l.dropped[from-1]&isUnused|l.dropped[to]) == 0
+		if to-from < limit || within && (u[from] <= lo+slack || u[from] >= hi-slack) {
+			return // short, or at a limit and back
+		}
+		if count == 0 {
+			first = l.lines.at(from)
+		}
+		count++
+		rows += to - from
+		for k := from; k < to; k++ {
+			l.dropped[k] |= isResting
+		}
+	})
+	if count > 0 {
+		l.idle(count, first, rows)
+	}
+}
+
+func (l *log) idle(count, line, rows int) {
+	l.flaw(Flaw{Name: FlawIdle, Column: l.column(l.u), Count: count, Line: line,
+		Detail: plural(rows, "row", "rows") + " in stretches in which the input never moves", Effect: "not used: the loop was not closed"})
+}
+
+// stretches calls f with [from, to) of each stretch of equal values of a column among the rows used.
+func (l *log) stretches(x []float64, f func(from, to int)) {
 	from := 0
-	for k := 1; k <= len(y); k++ {
-		if k < len(y) && y[k] == y[from] && l.dropped[k] == l.dropped[from]&isUnused {
+	for k := 1; k <= len(x); k++ {
+		if k < len(x) && x[k] == x[from] && l.dropped[k] == l.dropped[from]&isUnused {
 			continue
 		}
 		if l.dropped[from]&isUnused == 0 {
@@ -334,7 +387,7 @@ func (l *log) findSpikes() {
 	if sd == 0 {
 		return
 	}
-	bound := max(far*sd, flicker*grid(l.levels(y)))
+	bound := max(far*sd, flicker*grid(l.levels(y), fewestOutput))
 	var rows []int
 	l.runs(func(from, to int) {
 		for k := from + 4; k+4 < to; k++ {
@@ -373,13 +426,16 @@ func (l *log) levels(x []float64) []float64 {
 	return slices.Compact(out)
 }
 
+// Levels that make a grid: fewer values of an input are just some settings, but an output has none.
+const (
+	fewestInput  = 8
+	fewestOutput = 2
+)
+
 // grid returns the step of the grid that sorted numbers lie on, or 0 where they lie on none, or on one too fine to
 // tell. Each may be off its grid line by a fraction of the step: the text of a number is rounded, too.
-func grid(levels []float64) float64 {
-	const (
-		fewest = 8    // levels that make a grid and not just some settings
-		slack  = 0.15 // of a step
-	)
+func grid(levels []float64, fewest int) float64 {
+	const slack = 0.15 // of a step
 	n := len(levels)
 	if n < fewest {
 		return 0
@@ -409,11 +465,19 @@ func grid(levels []float64) float64 {
 const (
 	stepToSD   = 0.05
 	stepToMove = 0.5
+	// stepNoNoise, in standard deviations of the output, is where rounding ceases to act as independent noise of a twelfth
+	// of the squared step: fits of three logs of flap each at 0.1, 0.25 and 0.5 are unbiased, at 1 their fast pole is off
+	// by one to three deviations.
+	stepNoNoise = 0.7
 )
 
 func (l *log) findQuantisation(index int) {
 	x := l.columns[index]
-	step := grid(l.levels(x))
+	fewest := fewestInput
+	if index == l.y {
+		fewest = fewestOutput
+	}
+	step := grid(l.levels(x), fewest)
 	if step == 0 {
 		return
 	}
@@ -429,9 +493,13 @@ func (l *log) findQuantisation(index int) {
 	if !(step > stepToSD*all.sd()) && !(step > stepToMove*move.sd()) {
 		return
 	}
-	l.flaw(Flaw{Name: FlawQuantised, Column: l.column(index), Count: all.n, Line: l.lines.at(0),
+	f := Flaw{Name: FlawQuantised, Column: l.column(index), Count: all.n, Line: l.lines.at(0),
 		Detail: fmt.Sprintf("step %s, %.2g of the standard deviation %s", number(step), step/all.sd(), number(all.sd())),
-		Effect: fmt.Sprintf("used; it adds noise of standard deviation %s", number(step/math.Sqrt(12)))})
+		Effect: fmt.Sprintf("used; it adds noise of standard deviation %s", number(step/math.Sqrt(12)))}
+	if index == l.y && step > stepNoNoise*all.sd() {
+		f.Name, f.Effect = FlawFew, "used; rounding as coarse as this follows the signal, and biases a fit"
+	}
+	l.flaw(f)
 }
 
 // A spread gathers mean and standard deviation (B. P. Welford, "Note on a method for calculating corrected sums of

@@ -3,6 +3,9 @@ package data
 import (
 	"errors"
 	"fmt"
+	"go/ast"
+	"go/parser"
+	"go/token"
 	"math"
 	"math/rand/v2"
 	"slices"
@@ -233,6 +236,120 @@ func TestFlawIdle(t *testing.T) {
 	if got := findFlaw(t, exp, FlawIdle); got != want || exp.Used != 200 {
 		t.Errorf("got  %+v\nwant %+v\n%d rows used", got, want, exp.Used)
 	}
+}
+
+// A stretch in which the input rests, between others in which it moves: a trip that no limit tells.
+func TestFlawRest(t *testing.T) {
+	p := newPlainLog(1000)
+	for k := 600; k < 800; k++ {
+		p.u[k] = 0.5
+	}
+	exp := mustRead(t, p.csv(), plainRig())
+	want := Flaw{FlawIdle, "u", 1, 602, "200 rows in stretches in which the input never moves", "not used: the loop was not closed"}
+	if got := findFlaw(t, exp, FlawIdle); got != want || exp.Used != 800 || len(exp.Segments) != 2 || len(exp.Flaws) != 1 {
+		t.Errorf("got  %+v\nwant %+v\n%d rows used, flaws %q", got, want, exp.Used, flawNames(exp))
+	}
+	// The actuator may be switched off to where its limit is.
+	p = newPlainLog(1000)
+	for k := 600; k < 1000; k++ {
+		p.u[k] = -9
+	}
+	if exp := mustRead(t, p.csv(), plainRig()); exp.Used != 600 || findFlaw(t, exp, FlawIdle).Line != 602 {
+		t.Errorf("off at the limit: %d rows used, flaws %q", exp.Used, flawNames(exp))
+	}
+	// An input that is held for many rows, or lies at its limit, rests nowhere.
+	held, limited := newPlainLog(3000), newPlainLog(1000)
+	for k := range held.u {
+		held.u[k] = held.u[k-k%100]
+	}
+	for k := range limited.u {
+		limited.u[k] = min(limited.u[k], 0.5)
+		if k >= 600 && k < 800 {
+			limited.u[k] = 0.5
+		}
+	}
+	for name, p := range map[string]*plainLog{"held": held, "limited": limited} {
+		if exp := mustRead(t, p.csv(), plainRig()); slices.Contains(flawNames(exp), FlawIdle) {
+			t.Errorf("%s: %+v", name, findFlaw(t, exp, FlawIdle))
+		}
+	}
+}
+
+func TestFlawSlowTelemetry(t *testing.T) {
+	g := plainRig()
+	g.Log.ControllerPeriod = 0.002
+	exp := mustRead(t, strings.Replace(newPlainLog(300).csv(), "t,u,y,r", "t,u,y,r_u_Mean", 1), func() *Rig { h := *g; h.Log.Reference = ""; return &h }())
+	want := Flaw{FlawTelemetry, "u", 300, 2, "a row every 0.01 s, but the loop ran every 0.002 s ([log] controller_period): the input moved 5 times a row",
+		`used as if the input had been held for a row, which moves delay and fast poles; column "r_u_Mean", its mean over a row, could serve as input`}
+	if got := findFlaw(t, exp, FlawTelemetry); got != want || len(exp.Flaws) != 1 {
+		t.Errorf("got  %+v\nwant %+v", got, want)
+	}
+	for _, same := range []float64{0.01, 0.05} {
+		g.Log.ControllerPeriod = same
+		if exp := mustRead(t, newPlainLog(300).csv(), g); len(exp.Flaws) > 0 {
+			t.Errorf("loop every %g s: %+v", same, exp.Flaws)
+		}
+	}
+}
+
+// Noise through a lightly damped resonance swings, too, but not at one amplitude; a swing of one amplitude whose phase
+// wanders shows no line.
+func TestResonanceIsNoCycle(t *testing.T) {
+	for seed := range uint64(6) {
+		noise, swing := newPlainLog(4000), newPlainLog(4000)
+		rnd := rand.New(rand.NewPCG(8, seed))
+		const damping, angle = 0.97, 0.6
+		a, b, phase := 0.0, 0.0, 0.0
+		for k := range noise.y {
+			a, b = 2*damping*math.Cos(angle)*a-damping*damping*b+rnd.NormFloat64(), a
+			noise.y[k] = a
+			phase += angle + 0.08*rnd.NormFloat64()
+			swing.y[k] = math.Sin(phase) + 0.1*rnd.NormFloat64()
+		}
+		if exp := mustRead(t, noise.csv(), plainRig()); len(exp.Flaws) > 0 {
+			t.Errorf("noise, seed %d: %+v", seed, exp.Flaws)
+		}
+		if f := findFlaw(t, mustRead(t, swing.csv(), plainRig()), FlawCycle); !strings.HasPrefix(f.Detail, "swings at 9.") {
+			t.Errorf("swing of %g Hz, seed %d: %+v", 100*angle/(2*math.Pi), seed, f)
+		}
+	}
+}
+
+// Every flaw says what to do about it, on lines that a console takes.
+func TestRemedies(t *testing.T) {
+	names := constants(t, "experiment.go", "Flaw")
+	if len(names) < 28 {
+		t.Fatalf("flaws %q", names)
+	}
+	for _, name := range names {
+		if r := (Flaw{Name: name}).Remedy(); r == "" || strings.HasSuffix(r, ".") {
+			t.Errorf("%s: remedy %q", name, r)
+		}
+	}
+	if len(remedies) != len(names) {
+		t.Errorf("%d remedies for %d flaws", len(remedies), len(names))
+	}
+}
+
+// constants returns the texts of the constants of a file whose names start so.
+func constants(t *testing.T, file, prefix string) []string {
+	t.Helper()
+	f, err := parser.ParseFile(token.NewFileSet(), file, nil, 0)
+	if err != nil {
+		t.Fatal(err)
+	}
+	var out []string
+	ast.Inspect(f, func(n ast.Node) bool {
+		if v, ok := n.(*ast.ValueSpec); ok && strings.HasPrefix(v.Names[0].Name, prefix) && len(v.Values) == 1 {
+			text, err := strconv.Unquote(v.Values[0].(*ast.BasicLit).Value)
+			if err != nil {
+				t.Fatal(err)
+			}
+			out = append(out, text)
+		}
+		return true
+	})
+	return out
 }
 
 func TestNoSegmentLeft(t *testing.T) {
@@ -636,7 +753,7 @@ func TestGrid(t *testing.T) {
 			return x
 		}, 0},
 	} {
-		if got := grid(c.levels()); math.Abs(got-c.want) > 1e-9 {
+		if got := grid(c.levels(), fewestInput); math.Abs(got-c.want) > 1e-9 {
 			t.Errorf("%s: step %v, want %v", c.name, got, c.want)
 		}
 	}

@@ -2,7 +2,11 @@ package data
 
 import (
 	"bytes"
+	"encoding/binary"
 	"errors"
+	"fmt"
+	"io"
+	"runtime"
 	"strings"
 	"testing"
 )
@@ -21,7 +25,8 @@ func checkParseError(t *testing.T, err error, file string) {
 
 func FuzzReadRig(f *testing.F) {
 	for _, s := range []string{hoverPuck, "", "[log]\ninput='u'\noutput='y'\nsample_period=1e-3\n", "log.input = 'u'\nlog = 3", "[log]\nx.y.z=1\n[[spec]]\n",
-		"[limits]\ninput=[nan,inf]\noutput=[1,[2]]", "name=\"\"\"\na\n\"\"\"\nlog={input='a',output=\"b\"}\n", "[loop]\nsample_period=1_0\nhold=1979-05-27\n"} {
+		"[limits]\ninput=[nan,inf]\noutput=[1,[2]]", "name=\"\"\"\na\n\"\"\"\nlog={input='a',output=\"b\"}\n",
+		"[layout]\ndelimiter=\"|\"\nnames_line=3\nunits_line=4\nnumbers_line=5\ncomment=\"é\"\n[log]\nclock_skew=nan\ninput_time=\"x\"\n", "[layout]\ndelimiter=\"\\u0000\"\nnames_line=9223372036854775807\n", "[loop]\nsample_period=1_0\nhold=1979-05-27\n"} {
 		f.Add([]byte(s))
 	}
 	f.Fuzz(func(t *testing.T, text []byte) {
@@ -41,19 +46,45 @@ func FuzzReadRig(f *testing.F) {
 	})
 }
 
+// The settings under which FuzzReadLog reads a log, by the bits of a byte.
+func fuzzRig(how byte) *Rig {
+	g := &Rig{Log: LogColumns{Time: "t", Input: "u", Output: "y"}, Limits: Limits{Input: &[2]float64{-1, 1}, Output: &[2]float64{-2, 2}, InputRate: 1}}
+	if how&1 != 0 {
+		g.Log = LogColumns{Input: "c2", Output: "c3", SamplePeriod: 0.5, InputRow: InputBefore}
+	}
+	if how&2 != 0 {
+		g.Log.Dither, g.Log.ClockSkew, g.Log.ControllerPeriod = "r", 0.01, 1e-3
+	}
+	if how&4 != 0 && g.Log.Time != "" {
+		g.Log.InputTime = "r"
+		g.Log.Dither = ""
+	}
+	line := func(n int) *int { return &n }
+	if how&8 != 0 {
+		g.Layout = Layout{Delimiter: "|", DecimalMark: ",", Comment: "!", NumbersLine: 3}
+	}
+	if how&16 != 0 {
+		g.Layout.NamesLine, g.Layout.UnitsLine = line(1), line(2)
+	}
+	if how&32 != 0 {
+		g.Layout.NamesLine, g.Layout.Delimiter = line(0), DelimiterBlanks
+	}
+	return g
+}
+
 func FuzzReadLog(f *testing.F) {
 	plain := newPlainLog(70).csv()
 	for _, s := range []string{plain, strings.ReplaceAll(strings.ReplaceAll(plain, ",", ";"), ".", ","), strings.ReplaceAll(plain, ",", " "),
 		"# t u y r\n" + strings.SplitN(plain, "\n", 2)[1], "\xef\xbb\xbf\"t\",\"u\",y\r\ns,A,\"m\"\"m\"\r\n2025-12-17T20:58:11.7Z,1,2\r\n2025-12-17T20:58:11.8Z,,NaN\r\n",
-		"t,u,y\r1,2,3\r2,3,4", "1764512345678901234;1;2\n1764512345678901235;3;4\n", "\x1f\x8b\x08\x00", "t;u;y;\n23:59:59;1e999;0x1;\n", "%\n\n,,,\n\"\n"} {
-		f.Add([]byte(s), false)
-		f.Add([]byte(s), true)
-	}
-	f.Fuzz(func(t *testing.T, text []byte, named bool) {
-		g := &Rig{Log: LogColumns{Time: "t", Input: "u", Output: "y"}, Limits: Limits{Input: &[2]float64{-1, 1}, Output: &[2]float64{-2, 2}, InputRate: 1}}
-		if !named {
-			g.Log = LogColumns{Input: "c2", Output: "c3", SamplePeriod: 0.5, InputRow: InputBefore}
+		"t,u,y\r1,2,3\r2,3,4", "1764512345678901234;1;2\n1764512345678901235;3;4\n", "\x1f\x8b\x08\x00", "t;u;y;\n23:59:59;1e999;0x1;\n", "%\n\n,,,\n\"\n",
+		strings.ReplaceAll(strings.ReplaceAll(plain, ",", "|"), ".", ","), "\xff\xfe" + wide(plain, binary.LittleEndian), "\xfe\xff\xd8\x00\x00t\x00,\xdc",
+		"t,u,y,r\n2025-03-30T01:59:59,1,2,3\n2025-03-30T03:00:00,2,1,4\n", "t,u,y,r\n9223372036854775807,1e308,-1e308,1e-400\n-9223372036854775808,2,3,4\n"} {
+		for _, how := range []byte{0, 1, 2, 5, 8, 16, 24, 34} {
+			f.Add([]byte(s), how)
 		}
+	}
+	f.Fuzz(func(t *testing.T, text []byte, how byte) {
+		g := fuzzRig(how)
 		exp, err := ReadLog(bytes.NewReader(text), "log.csv", g)
 		if err != nil {
 			checkParseError(t, err, "log.csv: ")
@@ -68,4 +99,85 @@ func FuzzReadLog(f *testing.F) {
 			checkParseError(t, err, "log.csv: ")
 		}
 	})
+}
+
+// A repeated is text that goes on for a number of bytes, and counts how many of them were taken.
+type repeated struct {
+	head, text string
+	size       int64
+	taken      int64
+}
+
+func (r *repeated) Read(p []byte) (int, error) {
+	if r.taken >= r.size {
+		return 0, io.EOF
+	}
+	n := 0
+	for n < len(p) && r.taken < r.size {
+		var c int
+		if at := r.taken; at < int64(len(r.head)) {
+			c = copy(p[n:], r.head[at:])
+		} else {
+			c = copy(p[n:], r.text[(at-int64(len(r.head)))%int64(len(r.text)):])
+		}
+		n += c
+		r.taken += int64(c)
+	}
+	return n, nil
+}
+
+// What is hostile, or no log, is refused before much of it was read, and takes no more memory than is read.
+func TestHostileLogs(t *testing.T) {
+	const (
+		size   = 100 << 20
+		little = 4 << 20
+	)
+	head := newPlainLog(12_000).csv() // longer than what is looked at for the layout
+	for _, c := range []struct{ name, head, text string }{
+		{"a line of 100 MB", "t,u,y,r\n0,1,2,3\n", "1,"},
+		{"a header of a million columns and more", "", "t,u,y,r,"},
+		{"a line of 100 MB below good rows", head, "1,"},
+		{"a quoted cell of 100 MB", head + "1,\"", "x"},
+		{"zeros", "t,u,y,r\n", "\x00"},
+		{"prose", "", "This is no log at all, but goes on. "},
+		{"UTF-16 of one line", "\xff\xfe", "a\x00"},
+		{"half signs", "\xff\xfe", "\x00\xd8"},
+	} {
+		var before, after runtime.MemStats
+		runtime.ReadMemStats(&before)
+		r := &repeated{head: c.head, text: c.text, size: size}
+		_, err := ReadLog(r, "log.csv", plainRig())
+		runtime.ReadMemStats(&after)
+		if err == nil {
+			t.Errorf("%s: read", c.name)
+			continue
+		}
+		checkParseError(t, err, "log.csv: ")
+		if r.taken > little || after.TotalAlloc-before.TotalAlloc > 8*little {
+			t.Errorf("%s: %d bytes taken, %d allocated: %v", c.name, r.taken, after.TotalAlloc-before.TotalAlloc, err)
+		}
+	}
+	// A long line of a rig file, and a long rig file.
+	for _, text := range []string{"name = \"x", "# x\n"} {
+		r := &repeated{text: text, size: size}
+		if _, err := ReadRig(r, "rig.toml"); err == nil || r.taken > little {
+			t.Errorf("%q: %d bytes taken: %v", text, r.taken, err)
+		}
+	}
+}
+
+// A log of nothing but bad rows is counted, not kept.
+func TestBadRowsAreCounted(t *testing.T) {
+	r := &repeated{head: "t,u,y,r\n0,1,2,3\n1,2,3,4\n2,3,4,5\n", text: "3,ERR,4,5\n", size: 8 << 20}
+	var before, after runtime.MemStats
+	runtime.ReadMemStats(&before)
+	_, err := ReadLog(r, "log.csv", plainRig())
+	runtime.ReadMemStats(&after)
+	rows := (8<<20 - len(r.head)) / len(r.text)
+	if err == nil || !strings.Contains(err.Error(), fmt.Sprintf("and %d more", rows+1-faultsShown)) && !strings.Contains(err.Error(), fmt.Sprintf("and %d more", rows-faultsShown)) {
+		t.Errorf("%d rows: %v", rows, err)
+	}
+	if n := after.TotalAlloc - before.TotalAlloc; n > 160<<20 {
+		t.Errorf("%d bytes allocated", n)
+	}
 }

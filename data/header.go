@@ -52,11 +52,11 @@ func Header(r io.Reader, file string) (*LogHeader, error) {
 	if err != nil {
 		return nil, err
 	}
-	l, err := recognise(head, whole)
+	l, err := recognise(head, whole, &Layout{})
 	if err != nil {
 		return nil, inFile(file, err)
 	}
-	h := &LogHeader{File: file, Layout: l.describe()}
+	h := &LogHeader{File: file, Layout: src.how + l.describe()}
 	h.describe(l, l.frame(l.headLines(head, whole)))
 	h.guess()
 	h.measure(l, l.headLines(head, whole))

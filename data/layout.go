@@ -9,26 +9,30 @@ import (
 	"unicode/utf8"
 )
 
-// headSize is how much of a log is looked at to recognise its layout, in bytes; maxLine is the longest line accepted.
+// headSize is how much of a log is looked at to recognise its layout, in bytes, maxHeadLines in lines; maxLine is the
+// longest line accepted.
 const (
-	headSize = 1 << 18
-	maxLine  = headSize / 2
+	headSize     = 1 << 18
+	maxHeadLines = 500
+	maxLine      = headSize / 2
 )
 
 // A layout is how a log is written: what separates its cells, where its numbers start, what its columns are called.
 type layout struct {
-	delimiter byte // ',' ';' '\t'; ' ' for any run of blanks and tabs
-	mark      byte // decimal mark, '.' or ','
-	marked    bool // the head has a decimal mark, so that the other one is no number
-	lineEnd   byte // '\n', or '\r' where lines end in that alone
-	trailing  bool // each row ends in a delimiter that starts no cell
+	delimiter byte   // ',' ';' '\t'; ' ' for any run of blanks and tabs
+	mark      byte   // decimal mark, '.' or ','
+	marked    bool   // the head has a decimal mark, so that the other one is no number
+	lineEnd   byte   // '\n', or '\r' where lines end in that alone
+	trailing  bool   // each row ends in a delimiter that starts no cell
+	comment   []byte // what a line for people starts with; nil: #, % or //
+	given     bool   // the rig file says some of it
 
-	names    []string // of the columns, c1, c2, … where the log gives none
-	named    bool     // the names are the log's own
-	units    []string // nil: no units row
-	header   int      // 1-based line of the names; 0: none
-	from     int      // 1-based line of the first row of numbers
-	preamble int      // lines above the header that are neither comments nor blank
+	names     []string // of the columns, c1, c2, … where the log gives none
+	named     bool     // the names are the log's own
+	units     []string // nil: no units row
+	header    int      // 1-based line of the names; 0: none
+	unitsLine int      // 1-based line of the units; 0: none
+	from      int      // 1-based line of the first row of numbers
 }
 
 // A headLine is one line of the head.
@@ -39,12 +43,18 @@ type headLine struct {
 	blank   bool
 }
 
-// recognise finds the layout of a log from its first bytes. whole tells that head is all there is.
-func recognise(head []byte, whole bool) (*layout, error) {
+// recognise finds the layout of a log from its first bytes, but for what is given. whole tells that head is all there is.
+func recognise(head []byte, whole bool, given *Layout) (*layout, error) {
 	if err := checkText(head); err != nil {
 		return nil, err
 	}
-	l := &layout{lineEnd: '\n'}
+	l := &layout{lineEnd: '\n', delimiter: given.delimiter(), given: *given != Layout{}}
+	if given.DecimalMark != "" {
+		l.mark, l.marked = given.DecimalMark[0], true
+	}
+	if given.Comment != "" {
+		l.comment = []byte(given.Comment)
+	}
 	if bytes.IndexByte(head, '\n') < 0 && bytes.IndexByte(head, '\r') >= 0 {
 		l.lineEnd = '\r'
 	}
@@ -62,14 +72,106 @@ func recognise(head []byte, whole bool) (*layout, error) {
 		}
 		rest = rest[i+1:]
 	}
-	first := l.chooseDelimiter(lines)
-	if first < 0 {
-		return nil, noNumbers(lines)
+	above := 0 // lines that certainly are no rows
+	for above < len(lines) && lines[above].number < given.NumbersLine {
+		above++
 	}
-	if err := l.findNames(lines, first); err != nil {
+	if n := given.NumbersLine; n > 0 && above == len(lines) {
+		return nil, noLine(n, "numbers_line")
+	}
+	first := l.chooseDelimiter(lines[above:])
+	if first < 0 {
+		err := noNumbers(lines[above:])
+		if l.given {
+			err.Hint = "correct [layout] in the rig file"
+		}
+		return nil, err
+	}
+	first += above
+	if given.NamesLine == nil {
+		if err := l.findNames(lines, first); err != nil {
+			return nil, err
+		}
+	}
+	if err := l.takeNames(lines, first, given); err != nil {
 		return nil, err
 	}
 	return l, nil
+}
+
+// takeNames takes names, units and the first row of numbers from the lines that are given.
+func (l *layout) takeNames(lines []headLine, first int, given *Layout) error {
+	if given.NamesLine != nil {
+		for i := range l.names {
+			l.names[i] = fmt.Sprintf("c%d", i+1)
+		}
+		l.named, l.header = *given.NamesLine > 0, *given.NamesLine
+		if l.named {
+			names, err := l.textLine(lines, "names_line", l.header)
+			if err != nil {
+				return err
+			}
+			for i, n := range names {
+				if n != "" {
+					l.names[i] = n
+				}
+			}
+		}
+	}
+	if given.UnitsLine != nil {
+		l.units, l.unitsLine = nil, *given.UnitsLine
+		if l.unitsLine > 0 {
+			units, err := l.textLine(lines, "units_line", l.unitsLine)
+			if err != nil {
+				return err
+			}
+			for i, u := range units {
+				units[i] = strings.Trim(u, "[]() ")
+			}
+			l.units = units
+		}
+	}
+	switch {
+	case given.NumbersLine > 0:
+		l.from = given.NumbersLine
+	case given.NamesLine != nil || given.UnitsLine != nil:
+		l.from = lines[first].number
+		for _, line := range lines {
+			if line.number > max(l.header, l.unitsLine) && !line.comment && !line.blank {
+				l.from = line.number
+				break
+			}
+		}
+	}
+	return nil
+}
+
+func noLine(number int, key string) error {
+	return &ParseError{Line: number, Err: fmt.Errorf("no such line in the head of the log, but [layout] %s names it", key), Hint: "correct the rig file"}
+}
+
+// textLine returns the cells of a line given by number, which may be a comment.
+func (l *layout) textLine(lines []headLine, key string, number int) ([]string, error) {
+	if number > len(lines) {
+		return nil, noLine(number, key)
+	}
+	line := lines[number-1]
+	var cells []string
+	if line.comment {
+		cells = l.commentWords(line.text)
+	} else {
+		for _, c := range l.cells(nil, line.text) {
+			cells = append(cells, readable(c))
+		}
+	}
+	if n := len(l.names); len(cells) == n+1 && cells[n] == "" {
+		cells = cells[:n]
+	}
+	if len(cells) != len(l.names) {
+		return nil, &ParseError{Line: number, Err: fmt.Errorf("%s, but the rows have %d ([layout] %s)", plural(len(cells), "cell", "cells"), len(l.names), key),
+			Hint: "correct [layout] in the rig file"}
+	}
+	return cells, nil
 }
 
 func tooLong(line int) error {
@@ -81,20 +183,17 @@ func checkText(head []byte) error {
 	switch {
 	case bytes.HasPrefix(head, []byte("PK\x03\x04")), bytes.HasPrefix(head, []byte("\xd0\xcf\x11\xe0")):
 		return &ParseError{Err: errors.New("a spreadsheet or an archive, no text"), Hint: "export the log as CSV"}
-	case bytes.HasPrefix(head, []byte("\xff\xfe")), bytes.HasPrefix(head, []byte("\xfe\xff")):
-		return &ParseError{Err: errors.New("text in UTF-16"), Hint: "save it as UTF-8"}
 	}
 	if i := bytes.IndexByte(head, 0); i >= 0 {
-		return &ParseError{Line: 1 + bytes.Count(head[:i], []byte{'\n'}), Err: errors.New("a zero byte, so no text"), Hint: "export the log as CSV"}
+		return &ParseError{Line: 1 + bytes.Count(head[:i], []byte{'\n'}), Err: errors.New("a zero byte, so no text"), Hint: "export the log as CSV, in UTF-8, or in UTF-16 with a byte order mark"}
 	}
 	return nil
 }
 
-// headLines cuts the head into at most 500 lines, without the last one where it may go on beyond the head.
+// headLines cuts the head into at most maxHeadLines lines, without the last one where it may go on beyond the head.
 func (l *layout) headLines(head []byte, whole bool) []headLine {
-	const most = 500
 	var lines []headLine
-	for number := 1; len(head) > 0 && len(lines) < most; number++ {
+	for number := 1; len(head) > 0 && len(lines) < maxHeadLines; number++ {
 		text := head
 		i := bytes.IndexByte(head, l.lineEnd)
 		if i < 0 && !whole {
@@ -106,14 +205,17 @@ func (l *layout) headLines(head []byte, whole bool) []headLine {
 			text, head = head[:i], head[i+1:]
 		}
 		text = bytes.TrimSuffix(text, []byte{'\r'})
-		lines = append(lines, headLine{number, text, isComment(text), isBlank(text)})
+		lines = append(lines, headLine{number, text, l.isComment(text), isBlank(text)})
 	}
 	return lines
 }
 
 // isComment tells whether a line is for people only.
-func isComment(line []byte) bool {
+func (l *layout) isComment(line []byte) bool {
 	line = bytes.TrimLeft(line, " \t")
+	if l.comment != nil {
+		return bytes.HasPrefix(line, l.comment)
+	}
 	return len(line) > 0 && (line[0] == '#' || line[0] == '%') && !bytes.HasPrefix(bytes.ToLower(line[:min(len(line), 4)]), []byte("#n/a")) ||
 		bytes.HasPrefix(line, []byte("//"))
 }
@@ -215,14 +317,21 @@ func (l *layout) kind(cell []byte) int {
 	return cellText
 }
 
-// chooseDelimiter tries all ways to cut the lines, keeps the one that makes most cells numbers, and returns the
-// index of the first row of numbers, or -1.
+// chooseDelimiter tries all ways to cut the lines that are not ruled out already, keeps the one that makes most cells
+// numbers, and returns the index of the first row of numbers, or -1.
 func (l *layout) chooseDelimiter(lines []headLine) int {
 	best, bestScore, bestFirst := *l, 0, -1
-	for _, try := range []struct{ delimiter, mark byte }{
-		{'\t', '.'}, {';', '.'}, {',', '.'}, {' ', '.'}, {'\t', ','}, {';', ','}, {' ', ','},
-	} {
-		c := layout{lineEnd: l.lineEnd, delimiter: try.delimiter, mark: try.mark}
+	ways := []struct{ delimiter, mark byte }{{'\t', '.'}, {';', '.'}, {',', '.'}, {' ', '.'}, {'\t', ','}, {';', ','}, {' ', ','}}
+	if d := l.delimiter; d != 0 && d != '\t' && d != ';' && d != ',' && d != ' ' {
+		ways = append(ways[:0], ways[0], ways[4])
+		ways[0].delimiter, ways[1].delimiter = d, d
+	}
+	for _, try := range ways {
+		if l.delimiter != 0 && try.delimiter != l.delimiter || l.mark != 0 && try.mark != l.mark {
+			continue
+		}
+		c := *l
+		c.delimiter, c.mark = try.delimiter, try.mark
 		if score, first := c.try(lines); score > bestScore {
 			best, bestScore, bestFirst = c, score, first
 		}
@@ -393,7 +502,7 @@ func (l *layout) findNames(lines []headLine, first int) error {
 	}
 	end := header
 	if i := header + 1; i < len(lines) && slices.Contains(texts, i) {
-		l.units = make([]string, n)
+		l.units, l.unitsLine = make([]string, n), lines[i].number
 		for j, c := range l.cells(cells, lines[i].text) {
 			l.units[j] = strings.Trim(readable(c), "[]() ")
 		}
@@ -403,11 +512,6 @@ func (l *layout) findNames(lines []headLine, first int) error {
 		if !lines[i].comment && !lines[i].blank {
 			l.from = lines[i].number
 			break
-		}
-	}
-	for i := range header {
-		if !lines[i].comment && !lines[i].blank {
-			l.preamble++
 		}
 	}
 	return nil
@@ -445,19 +549,9 @@ func (l *layout) namesFromComment(lines []headLine, first int) {
 		if !lines[i].comment {
 			return
 		}
-		text := strings.TrimLeft(readable(lines[i].text), "#%/ \t")
-		if text == "" {
+		words := l.commentWords(lines[i].text)
+		if len(words) == 0 {
 			continue
-		}
-		if label, rest, ok := strings.Cut(text, ":"); ok && !strings.ContainsAny(label, ",;\t") {
-			text = rest
-		}
-		words := strings.Fields(text)
-		if l.delimiter != ' ' && strings.IndexByte(text, l.delimiter) >= 0 {
-			words = nil
-			for _, c := range l.cells(nil, []byte(text)) {
-				words = append(words, string(c))
-			}
 		}
 		if len(words) == len(l.names) {
 			copy(l.names, words)
@@ -465,6 +559,22 @@ func (l *layout) namesFromComment(lines []headLine, first int) {
 		}
 		return
 	}
+}
+
+// commentWords returns the words of a comment, after an optional label that ends in ':'.
+func (l *layout) commentWords(line []byte) []string {
+	text := strings.TrimLeft(readable(bytes.TrimPrefix(bytes.TrimLeft(line, " \t"), l.comment)), "#%/ \t")
+	if label, rest, ok := strings.Cut(text, ":"); ok && !strings.ContainsAny(label, ",;\t") {
+		text = rest
+	}
+	if l.delimiter == ' ' || strings.IndexByte(text, l.delimiter) < 0 {
+		return strings.Fields(text)
+	}
+	var words []string
+	for _, c := range l.cells(nil, []byte(text)) {
+		words = append(words, string(c))
+	}
+	return words
 }
 
 // readable returns text as UTF-8: as it is, or read as Latin-1 where it is not UTF-8.
@@ -479,7 +589,7 @@ func readable(text []byte) string {
 	return string(runes)
 }
 
-func noNumbers(lines []headLine) error {
+func noNumbers(lines []headLine) *ParseError {
 	for _, line := range lines {
 		if !line.comment && !line.blank {
 			return &ParseError{Line: line.number, Err: errors.New("no row of two or more numbers below this line"),
@@ -492,8 +602,12 @@ func noNumbers(lines []headLine) error {
 // describe says the layout in words.
 func (l *layout) describe() string {
 	var b strings.Builder
-	b.WriteString(map[byte]string{',': "commas", ';': "semicolons", '\t': "tabs", ' ': "blanks"}[l.delimiter])
-	b.WriteString(" between cells")
+	switch name, known := map[byte]string{',': "commas", ';': "semicolons", '\t': "tabs", ' ': "blanks"}[l.delimiter]; known {
+	case true:
+		b.WriteString(name + " between cells")
+	default:
+		b.WriteString(quote(string(rune(l.delimiter))) + " between cells")
+	}
 	if l.mark == ',' {
 		b.WriteString(", decimal comma")
 	}
@@ -503,8 +617,14 @@ func (l *layout) describe() string {
 		b.WriteString(", no names")
 	}
 	if l.units != nil {
-		fmt.Fprintf(&b, ", units on line %d", l.header+1)
+		fmt.Fprintf(&b, ", units on line %d", l.unitsLine)
 	}
 	fmt.Fprintf(&b, ", numbers from line %d", l.from)
+	if l.comment != nil {
+		fmt.Fprintf(&b, ", comments after %s", quote(string(l.comment)))
+	}
+	if l.given {
+		b.WriteString(", as [layout] says")
+	}
 	return b.String()
 }

@@ -48,7 +48,7 @@ func ReadLog(r io.Reader, file string, rig *Rig) (*Experiment, error) {
 		return nil, readingError(file, err)
 	}
 	l := &log{file: file, rig: rig}
-	t, err := readTable(src, file, l.choose)
+	t, err := readTable(src, file, &rig.Layout, l.choose)
 	if err != nil {
 		return nil, err
 	}
@@ -61,10 +61,7 @@ func ReadLog(r io.Reader, file string, rig *Rig) (*Experiment, error) {
 	if err != nil {
 		return nil, err
 	}
-	exp.SHA256 = sum
-	if src.gzip {
-		exp.Layout = "gzip, " + exp.Layout
-	}
+	exp.SHA256, exp.Layout = sum, src.how+exp.Layout
 	return exp, nil
 }
 
@@ -74,12 +71,12 @@ type log struct {
 	file string
 	rig  *Rig
 
-	fields           []int // of the columns read
-	time, u, y, r, d int   // index into columns, or -1
-	dropped          []uint8
-	clipped          int // rows of the input beyond its limits
-	period           float64
-	flaws            []Flaw
+	fields               []int // of the columns read
+	time, u, y, r, d, tu int   // index into columns, or -1; tu: stamps of the input by a clock of its own
+	dropped              []uint8
+	clipped              int // rows of the input beyond its limits
+	period               float64
+	flaws                []Flaw
 }
 
 // Reasons why a row is not used, bits of log.dropped.
@@ -88,13 +85,13 @@ const (
 	isMissingRow
 	isTripped
 	isStuck
+	isResting
 	isWrong  // the output only, in a row or a few: the segment goes on
 	isUnused = ^startsSegment
 )
 
 // choose finds the columns that the rig file names.
-func (l *log) choose(lay *layout) (fields []int, stamps int, err error) {
-	stamps = -1
+func (l *log) choose(lay *layout) (fields, stamps []int, err error) {
 	var parts []string
 	for _, c := range []struct {
 		key, name string
@@ -102,6 +99,7 @@ func (l *log) choose(lay *layout) (fields []int, stamps int, err error) {
 	}{
 		{"time", l.rig.Log.Time, &l.time}, {"input", l.rig.Log.Input, &l.u}, {"output", l.rig.Log.Output, &l.y},
 		{"reference", l.rig.Log.Reference, &l.r}, {"dither", l.rig.Log.Dither, &l.d},
+		{"input_time", l.rig.Log.InputTime, &l.tu},
 	} {
 		*c.index = -1
 		if c.name == "" {
@@ -111,15 +109,15 @@ func (l *log) choose(lay *layout) (fields []int, stamps int, err error) {
 		if err != nil {
 			e := err.(*ParseError)
 			e.Err = fmt.Errorf("[log] %s %s (%s): %w", c.key, quote(c.name), l.rig.where("log."+c.key), e.Err)
-			return nil, 0, e
+			return nil, nil, e
 		}
 		if i := slices.Index(fields, f); i >= 0 {
-			return nil, 0, &ParseError{Line: lay.header, Hint: "each part needs a column of its own",
+			return nil, nil, &ParseError{Line: lay.header, Hint: "each part needs a column of its own",
 				Err: fmt.Errorf("[log] %s and %s (%s) are both column %d, %s", parts[i], c.key, l.rig.where("log."+parts[i]), f+1, quote(lay.names[f]))}
 		}
 		*c.index = len(fields)
-		if c.key == "time" {
-			stamps = len(fields)
+		if c.key == "time" || c.key == "input_time" {
+			stamps = append(stamps, len(fields))
 		}
 		fields, parts = append(fields, f), append(parts, c.key)
 	}
@@ -164,7 +162,8 @@ func (l *log) experiment() (*Experiment, error) {
 	if err := l.timeBase(); err != nil {
 		return nil, err
 	}
-	exp.InputStep, exp.OutputStep = grid(l.levels(l.columns[l.u])), grid(l.levels(l.columns[l.y]))
+	exp.InputStep, exp.OutputStep = grid(l.levels(l.columns[l.u]), fewestInput), grid(l.levels(l.columns[l.y]), fewestInput)
+	l.undoSkew()
 	l.findFlaws()
 	if 2*l.clipped > l.rows {
 		return nil, l.mostlyBeyond()

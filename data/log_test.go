@@ -4,6 +4,7 @@ import (
 	"bytes"
 	"compress/gzip"
 	"crypto/sha256"
+	"encoding/binary"
 	"errors"
 	"fmt"
 	"io"
@@ -17,6 +18,8 @@ import (
 	"testing"
 	"testing/fstest"
 	"testing/iotest"
+	"time"
+	"unicode/utf16"
 )
 
 // A plainLog is a log without flaws, to be spoilt by tests: a noisy first-order lag under a random input.
@@ -154,6 +157,8 @@ func TestReadLogLayouts(t *testing.T) {
 		{"crlf", strings.ReplaceAll(plain, "\n", "\r\n")},
 		{"bare cr", strings.ReplaceAll(plain, "\n", "\r")},
 		{"bom", "\xef\xbb\xbf" + plain},
+		{"utf-16, little end first", "\xff\xfe" + wide(plain, binary.LittleEndian)},
+		{"utf-16, big end first", "\xfe\xff" + wide(strings.Replace(plain, "t,", "# Größe 𝛥\nt,", 1), binary.BigEndian)},
 		{"bom and crlf", "\xef\xbb\xbf" + strings.ReplaceAll(plain, "\n", "\r\n")},
 		{"no end of last line", strings.TrimSuffix(plain, "\n")},
 		{"semicolon", strings.ReplaceAll(plain, ",", ";")},
@@ -335,6 +340,15 @@ func TestReadLogOneColumnTwoParts(t *testing.T) {
 	}
 }
 
+// wide writes text as UTF-16.
+func wide(text string, order binary.AppendByteOrder) string {
+	var b []byte
+	for _, c := range utf16.Encode([]rune(text)) {
+		b = order.AppendUint16(b, c)
+	}
+	return string(b)
+}
+
 func withStamp(i int, line, stamp string) string {
 	if i == 0 {
 		return line
@@ -368,6 +382,173 @@ func TestReadLogGzip(t *testing.T) {
 	_, err = ReadLog(bytes.NewReader(spoilt), "log.csv.gz", plainRig())
 	if got, want := message(err), "log.csv.gz: gzip: invalid checksum; the packed file is damaged: copy it again"; got != want {
 		t.Errorf("damaged: got %s, want %s", got, want)
+	}
+}
+
+// A sign of four bytes may be cut by any buffer.
+func TestReadLogWideInPieces(t *testing.T) {
+	p := newPlainLog(200)
+	text := "\xff\xfe" + wide(strings.Replace(p.csv(), "u,", "𝛥u,", 1), binary.LittleEndian)
+	g := plainRig()
+	g.Log.Input = "𝛥u"
+	for name, r := range map[string]io.Reader{"bytes": iotest.OneByteReader(strings.NewReader(text)), "half": iotest.HalfReader(strings.NewReader(text))} {
+		exp, err := ReadLog(r, "log.csv", g)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if !slices.Equal(exp.Segments[0].U, p.u) || exp.Layout != "UTF-16, commas between cells, names on line 1, numbers from line 2" {
+			t.Errorf("%s: %s", name, exp.Layout)
+		}
+	}
+}
+
+// What the rig file says of the layout counts, where recognising it would go wrong.
+func TestReadLogLayoutGiven(t *testing.T) {
+	p := newPlainLog(200)
+	plain := p.csv()
+	rows := strings.SplitN(plain, "\n", 2)[1]
+	line := func(n int) *int { return &n }
+	for _, c := range []struct {
+		name, text string
+		given      Layout
+		says       string
+	}{
+		{"bars", strings.ReplaceAll(plain, ",", "|"), Layout{Delimiter: "|"}, `"|" between cells, names on line 1, numbers from line 2, as [layout] says`},
+		{"tab", strings.ReplaceAll(plain, ",", "\t"), Layout{Delimiter: "tab"}, "tabs between cells, names on line 1, numbers from line 2, as [layout] says"},
+		{"blanks", strings.ReplaceAll(plain, ",", "  "), Layout{Delimiter: "blanks"}, "blanks between cells, names on line 1, numbers from line 2, as [layout] says"},
+		{"decimal comma", strings.ReplaceAll(strings.ReplaceAll(plain, ",", ";"), ".", ","), Layout{DecimalMark: ","},
+			"semicolons between cells, decimal comma, names on line 1, numbers from line 2, as [layout] says"},
+		{"a header of calibrated numbers", "t,u,y,r\n1.5,2.5,3.5,4.5\n" + rows, Layout{NumbersLine: 3}, "commas between cells, names on line 1, numbers from line 3, as [layout] says"},
+		{"names not next to the rows", "t,u,y,r\nchannel 1,channel 2,channel 3,channel 4\n\n" + rows, Layout{NamesLine: line(1), UnitsLine: line(0), NumbersLine: 4},
+			"commas between cells, names on line 1, numbers from line 4, as [layout] says"},
+		{"two rows of text, names below", "one,two,three,four\nt,u,y,r\n" + rows, Layout{NamesLine: line(2)}, "commas between cells, names on line 2, numbers from line 3, as [layout] says"},
+		{"names in a comment that is not the last", "; t u y r\n; and so on and on\n" + rows, Layout{NamesLine: line(1), Comment: ";"},
+			`commas between cells, names on line 1, numbers from line 3, comments after ";", as [layout] says`},
+		{"units apart", "A,mm,s,V\n\nt,u,y,r\nA,s,mm,V\n" + rows, Layout{UnitsLine: line(4)}, "commas between cells, names on line 3, units on line 4, numbers from line 5, as [layout] says"},
+		{"own comments", strings.ReplaceAll(plain, "\n0.5,", "\n!half time\n0.5,"), Layout{Comment: "!"}, `commas between cells, names on line 1, numbers from line 2, comments after "!", as [layout] says`},
+	} {
+		t.Run(c.name, func(t *testing.T) {
+			g := plainRig()
+			g.Layout = c.given
+			if err := g.checkLayout(); err != nil {
+				t.Fatal(err)
+			}
+			exp := mustRead(t, c.text, g)
+			if s := exp.Segments[0]; exp.Rows != 200 || !slices.Equal(s.U, p.u) || !slices.Equal(s.Y, p.y) || exp.Layout != c.says {
+				t.Errorf("%d rows, %s, want %s", exp.Rows, exp.Layout, c.says)
+			}
+		})
+	}
+	for _, c := range []struct {
+		name, text string
+		given      Layout
+		want       string
+	}{
+		{"no such line", plain, Layout{NamesLine: line(400)}, "log.csv: line 400: no such line in the head of the log, but [layout] names_line names it; correct the rig file"},
+		{"names of another number", "Logger X\n" + plain, Layout{NamesLine: line(1)}, "log.csv: line 1: 1 cell, but the rows have 4 ([layout] names_line); correct [layout] in the rig file"},
+		{"another delimiter", plain, Layout{Delimiter: ";"}, "log.csv: line 1: no row of two or more numbers below this line; correct [layout] in the rig file"},
+		{"rows from where there are none", plain, Layout{NumbersLine: 300}, "log.csv: line 300: no such line in the head of the log, but [layout] numbers_line names it; correct the rig file"},
+	} {
+		g := plainRig()
+		g.Layout = c.given
+		if _, err := ReadLog(strings.NewReader(c.text), "log.csv", g); message(err) != c.want {
+			t.Errorf("%s: got %v, want %s", c.name, err, c.want)
+		}
+	}
+}
+
+// Stamps in local time: without a zone an hour that the clock is set by shows; with it, or in UTC, the rows go on.
+func TestReadLogDaylightSaving(t *testing.T) {
+	p := newPlainLog(600)
+	at := func(k int, from time.Time) time.Time { return from.Add(time.Duration(k-300) * 10 * time.Millisecond) }
+	for _, c := range []struct {
+		name   string
+		change time.Time     // in UTC
+		before time.Duration // the zone
+		after  time.Duration
+	}{
+		{"spring", time.Date(2025, 3, 30, 1, 0, 0, 0, time.UTC), time.Hour, 2 * time.Hour},
+		{"autumn", time.Date(2025, 10, 26, 1, 0, 0, 0, time.UTC), 2 * time.Hour, time.Hour},
+	} {
+		for format, local := range map[string]bool{"2006-01-02T15:04:05.000": true, "15:04:05.000": true, "2006-01-02T15:04:05.000-07:00": false} {
+			var b strings.Builder
+			b.WriteString("t,u,y,r\n")
+			for k := range p.t {
+				zone := c.before
+				if k >= 300 {
+					zone = c.after
+				}
+				stamp := at(k, c.change).In(time.FixedZone("", int(zone.Seconds()))).Format(format)
+				fmt.Fprintf(&b, "%s,%s,%s,%s\n", stamp, text(p.u[k]), text(p.y[k]), text(p.r[k]))
+			}
+			exp := mustRead(t, b.String(), plainRig())
+			if exp.Period != 0.01 || exp.Used != 600 {
+				t.Errorf("%s, %s: period %v, %d rows used", c.name, format, exp.Period, exp.Used)
+			}
+			if !local {
+				if len(exp.Flaws) > 0 || len(exp.Segments) != 1 {
+					t.Errorf("%s, %s: %+v", c.name, format, exp.Flaws)
+				}
+				continue
+			}
+			want := Flaw{FlawHour, "t", 1, 302, "the stamps jump by one hour to the row, as local time does when daylight saving begins or ends", "a new segment starts there; no row is lost"}
+			if got := findFlaw(t, exp, FlawHour); got != want || len(exp.Flaws) != 1 || len(exp.Segments) != 2 {
+				t.Errorf("%s, %s: got %+v, want %+v of %q, %d segments", c.name, format, got, want, flawNames(exp), len(exp.Segments))
+			}
+		}
+	}
+	// An hour that is lost by a clock with a zone is a gap.
+	var b strings.Builder
+	b.WriteString("t,u,y,r\n")
+	for k := range p.t {
+		stamp := time.Date(2025, 3, 30, 1, k/300, 0, 10e6*k, time.UTC)
+		if k >= 300 {
+			stamp = time.Date(2025, 3, 30, 2, 0, 0, 10e6*k, time.UTC)
+		}
+		fmt.Fprintf(&b, "%s,%s,%s,%s\n", stamp.Format("2006-01-02T15:04:05.000Z"), text(p.u[k]), text(p.y[k]), text(p.r[k]))
+	}
+	if exp := mustRead(t, b.String(), plainRig()); !slices.Equal(flawNames(exp), []string{FlawGap}) {
+		t.Errorf("an hour lost in UTC: %q", flawNames(exp))
+	}
+	// Stamps that count do not know daylight saving: an hour is an hour.
+	q := newPlainLog(600)
+	for k := 300; k < 600; k++ {
+		q.t[k] += 3600
+	}
+	if exp := mustRead(t, q.csv(), plainRig()); !slices.Equal(flawNames(exp), []string{FlawGap}) {
+		t.Errorf("stamps in s: %q", flawNames(exp))
+	}
+}
+
+// The stamps of the input by a clock of its own: fast by 200 parts in a million and 1.5 s ahead.
+func TestReadLogInputTime(t *testing.T) {
+	p := newPlainLog(3000)
+	write := func(output, input func(s float64) string) string {
+		var b strings.Builder
+		b.WriteString("t,u,y,r,tu\n")
+		for k, s := range p.t {
+			fmt.Fprintf(&b, "%s,%s,%s,%s,%s\n", output(s), text(p.u[k]), text(p.y[k]), text(p.r[k]), input(s))
+		}
+		return b.String()
+	}
+	g := plainRig()
+	g.Log.InputTime = "tu"
+	plain := func(s float64) string { return strconv.FormatFloat(s, 'f', 6, 64) }
+	epoch := func(s float64) string { return strconv.FormatFloat(s+1764512345, 'f', 6, 64) }
+	iso := func(s float64) string {
+		return time.Unix(1764512345, 0).UTC().Add(time.Duration(math.Round(s * 1e9))).Format("2006-01-02T15:04:05.000000Z")
+	}
+	fast := func(f func(float64) string) func(float64) string {
+		return func(s float64) string { return f(1.5 + s*1.0002) }
+	}
+	for name, log := range map[string]string{"s": write(plain, fast(plain)), "since 1970": write(epoch, fast(epoch)), "ISO 8601": write(iso, fast(iso))} {
+		f := findFlaw(t, mustRead(t, log, g), FlawSkew)
+		if want := "the stamps of the input lie 1.5 s after those of the output at first and run fast by 200 parts in a million, 0.6 rows over the log"; f.Detail != want || f.Column != "tu" {
+			t.Errorf("%s: %+v, want %s", name, f, want)
+		}
+	}
+	if exp := mustRead(t, write(plain, plain), g); len(exp.Flaws) > 0 {
+		t.Errorf("one clock: %+v", exp.Flaws)
 	}
 }
 
@@ -458,8 +639,9 @@ func TestReadLogRefuses(t *testing.T) {
 		{"header too short", strings.Replace(plain, "t,u,y,r", "t,u,y", 1), `log.csv: line 1: 3 names in the header, 4 cells in the rows below; one name a column`},
 		{"decimal commas between commas", "t,u,y\n" + strings.Repeat("0,1,0,2,0,3\n", 9), `log.csv: line 1: 3 names in the header, 6 cells in the rows below; decimal commas cannot be told from commas between cells: export with ';' between cells`},
 		{"spreadsheet", "PK\x03\x04\x00\x00", `log.csv: a spreadsheet or an archive, no text; export the log as CSV`},
-		{"binary", "t,u,y,r\n0,1,\x00,3\n", `log.csv: line 2: a zero byte, so no text; export the log as CSV`},
-		{"utf-16", "\xff\xfet\x00,\x00", `log.csv: text in UTF-16; save it as UTF-8`},
+		{"binary", "t,u,y,r\n0,1,\x00,3\n", `log.csv: line 2: a zero byte, so no text; export the log as CSV, in UTF-8, or in UTF-16 with a byte order mark`},
+		{"utf-16 without its mark", "t\x00,\x00u\x00", `log.csv: line 1: a zero byte, so no text; export the log as CSV, in UTF-8, or in UTF-16 with a byte order mark`},
+		{"utf-16, cut within a sign", "\xff\xfet\x00,", `log.csv: line 1: no row of two or more numbers below this line; a log has a header and rows of numbers, separated by commas, semicolons, tabs or blanks`},
 		{"line without end", "t,u,y,r\n" + strings.Repeat("1,", headSize), `log.csv: line 2: longer than 131072 bytes; a log has one row a line`},
 	} {
 		t.Run(c.name, func(t *testing.T) {

@@ -5,6 +5,7 @@ package data
 type Rig struct {
 	Name           string          `toml:"name"` // the file's name without its ending where not given
 	Log            LogColumns      `toml:"log"`
+	Layout         Layout          `toml:"layout"`
 	Units          Units           `toml:"units"`
 	OperatingPoint *OperatingPoint `toml:"operating_point"` // nil: not given
 	Stopgap        *Stopgap        `toml:"stopgap"`         // nil: not given
@@ -31,6 +32,9 @@ type LogColumns struct {
 
 	SamplePeriod     float64 `toml:"sample_period"`     // s between rows; 0: from the stamps
 	ControllerPeriod float64 `toml:"controller_period"` // s, of the loop that ran; 0: that of the rows
+
+	InputTime string  `toml:"input_time"` // stamps of the input, where another clock made them than those of the output
+	ClockSkew float64 `toml:"clock_skew"` // how much faster the input's clock runs; its rows are moved to undo it
 }
 
 // Settings of LogColumns.
@@ -40,6 +44,36 @@ const (
 	InputApplied  = "applied"  // the input is logged when it changes at the actuator
 	InputComputed = "computed" // the input is logged when it is computed: delay of the loop that ran included
 )
+
+// Layout says how a log is written where that is recognised wrongly. Each key left out is recognised. Lines count from 1
+// and lie among the first maxHeadLines.
+type Layout struct {
+	Delimiter   string `toml:"delimiter"`    // one sign, or DelimiterTab or DelimiterBlanks
+	DecimalMark string `toml:"decimal_mark"` // "." or ","
+	NamesLine   *int   `toml:"names_line"`   // 0: no names, the columns are c1, c2, …
+	UnitsLine   *int   `toml:"units_line"`   // 0: none
+	NumbersLine int    `toml:"numbers_line"` // of the first row
+	Comment     string `toml:"comment"`      // what a line for people only starts with
+}
+
+// Words for Layout.Delimiter.
+const (
+	DelimiterTab    = "tab"
+	DelimiterBlanks = "blanks" // any run of blanks and tabs
+)
+
+// delimiter returns the byte that separates cells, ' ' for DelimiterBlanks, 0 where it is to be recognised.
+func (l *Layout) delimiter() byte {
+	switch l.Delimiter {
+	case "":
+		return 0
+	case DelimiterTab:
+		return '\t'
+	case DelimiterBlanks:
+		return ' '
+	}
+	return l.Delimiter[0]
+}
 
 // Units are names for axes and tables, never converted.
 type Units struct {

@@ -3,12 +3,13 @@ package data
 import (
 	"fmt"
 	"math"
+	"strings"
 )
 
 // Validate reports the first value that is not finite, out of its range, or at odds with another one, as a
 // *ParseError. It does not ask for what a command needs: see NeedLog and NeedDesign.
 func (g *Rig) Validate() error {
-	for _, check := range []func() error{g.checkLog, g.checkLimits, g.checkOperatingPoint, g.checkStopgap, g.checkLoop, g.checkSpec, g.checkModel, g.checkLoops} {
+	for _, check := range []func() error{g.checkLog, g.checkLayout, g.checkLimits, g.checkOperatingPoint, g.checkStopgap, g.checkLoop, g.checkSpec, g.checkModel, g.checkLoops} {
 		if err := check(); err != nil {
 			return err
 		}
@@ -73,7 +74,7 @@ func (g *Rig) checkLog() error {
 	part := map[string]string{}
 	for _, c := range []struct{ key, column string }{
 		{"log.time", log.Time}, {"log.input", log.Input}, {"log.output", log.Output},
-		{"log.reference", log.Reference}, {"log.dither", log.Dither},
+		{"log.reference", log.Reference}, {"log.dither", log.Dither}, {"log.input_time", log.InputTime},
 	} {
 		if c.column == "" {
 			if g.lines[c.key] > 0 {
@@ -95,7 +96,53 @@ func (g *Rig) checkLog() error {
 	if err := g.optional("log.sample_period", log.SamplePeriod); err != nil {
 		return err
 	}
-	return g.optional("log.controller_period", log.ControllerPeriod)
+	if err := g.optional("log.controller_period", log.ControllerPeriod); err != nil {
+		return err
+	}
+	if log.InputTime != "" && log.Time == "" {
+		return g.fault("log.input_time", "name the column of the output's stamps, too", "log.input_time without log.time")
+	}
+	if !(math.Abs(log.ClockSkew) <= maxSkew) {
+		return g.fault("log.clock_skew", fmt.Sprintf("a fraction: write 1.2e-4 where the input's clock runs fast by 120 parts in a million; at most %g", maxSkew),
+			"log.clock_skew is %s", number(log.ClockSkew))
+	}
+	return nil
+}
+
+func (g *Rig) checkLayout() error {
+	l := &g.Layout
+	const numeric = `0123456789+-.eE"`
+	switch d := l.Delimiter; {
+	case d == "" && g.lines["layout.delimiter"] > 0, d != "" && d != DelimiterTab && d != DelimiterBlanks && (len(d) > 1 || d < "\t" || d > "~" || strings.Contains(numeric+"\n\r", d)):
+		return g.fault("layout.delimiter", `write one sign that is part of no number, "tab" or "blanks"`, "layout.delimiter is %s", quote(d))
+	case l.DecimalMark != "" && l.DecimalMark == d:
+		return g.fault("layout.decimal_mark", "one sign cannot be both", "layout.decimal_mark and layout.delimiter are %s", quote(d))
+	case l.Comment != "" && strings.Contains(numeric+" \t", l.Comment[:1]):
+		return g.fault("layout.comment", "rows start like that", "layout.comment is %s", quote(l.Comment))
+	}
+	if err := g.choice("layout.decimal_mark", l.DecimalMark, ".", ","); err != nil {
+		return err
+	}
+	line := func(p *int) int {
+		if p == nil {
+			return 0
+		}
+		return *p
+	}
+	above := 0
+	for _, c := range []struct {
+		key  string
+		line int
+	}{{"layout.names_line", line(l.NamesLine)}, {"layout.units_line", line(l.UnitsLine)}, {"layout.numbers_line", l.NumbersLine}} {
+		switch {
+		case c.line < 0 || c.line > maxHeadLines:
+			return g.fault(c.key, fmt.Sprintf("lines count from 1, and these lie among the first %d", maxHeadLines), "%s is %d", c.key, c.line)
+		case c.line > 0 && c.line <= above:
+			return g.fault(c.key, "names come first, then units, then numbers", "%s is %d", c.key, c.line)
+		}
+		above = max(above, c.line)
+	}
+	return nil
 }
 
 func (g *Rig) checkLimits() error {

@@ -36,8 +36,7 @@ func (l *log) segments() []Segment {
 		out = append(out, s)
 	})
 	if idle > 0 {
-		l.flaw(Flaw{Name: FlawIdle, Column: l.column(l.u), Count: idle, Line: firstIdle, Detail: plural(idleRows, "row", "rows") + " in stretches in which the input never moves",
-			Effect: "not used: the loop was not closed"})
+		l.idle(idle, firstIdle, idleRows)
 	}
 	if short > 0 {
 		l.flaw(Flaw{Name: FlawShort, Count: short, Line: first, Detail: plural(shortRows, "row", "rows") + " in stretches of less than " + fmt.Sprint(MinSegment),
@@ -190,7 +189,7 @@ func (l *log) because() string {
 	var list []string
 	for _, f := range l.flaws {
 		switch f.Name {
-		case FlawSaturated, FlawQuantised, FlawDrift, FlawJitter, FlawClock, FlawConstant, FlawRate, FlawShort:
+		case FlawSaturated, FlawQuantised, FlawFew, FlawDrift, FlawJitter, FlawClock, FlawConstant, FlawRate, FlawShort, FlawHour, FlawSkew, FlawClocks, FlawTelemetry, FlawDeadZone, FlawStiction, FlawCycle, FlawPeriodic, FlawAlias:
 			continue
 		}
 		where := f.Name

@@ -1,6 +1,9 @@
 package data
 
-import "math"
+import (
+	"bytes"
+	"math"
+)
 
 // scanStamp reads an ISO 8601 stamp such as 2025-12-17T20:58:11.705923+01:00 (also with a blank for T, '/' for '-',
 // a comma before the fraction, without zone, or the time of day alone). It returns whole seconds since 1970-01-01
@@ -72,6 +75,11 @@ func scanStamp(b []byte) (seconds int64, fraction float64, ok bool) {
 	return days*86400 + int64(3600*hour+60*minute+second-zone), fraction, true
 }
 
+// hasZone tells whether a stamp that scanStamp reads says how far from UTC it is.
+func hasZone(b []byte) bool {
+	return b[len(b)-1]|0x20 == 'z' || bytes.LastIndexByte(b, '+') > 0 || bytes.LastIndexByte(b, '-') > bytes.IndexByte(b, ':')
+}
+
 // digits reads up to four digits.
 func digits(b []byte) (int, bool) {
 	x := 0
@@ -100,6 +108,7 @@ func civilDays(year, month, day int) int64 {
 type clock struct {
 	started bool
 	iso     bool
+	local   bool    // ISO 8601 without zone: hours may be set
 	base    int64   // subtracted before the stamp becomes a float64
 	scale   float64 // s per unit of the column
 	last    int64   // last time of day, for midnight
@@ -143,6 +152,7 @@ func (c *clock) start(cell []byte, mark byte, unit string) bool {
 	s, _, ok := scanStamp(cell)
 	if ok {
 		c.iso, c.base, c.last, c.started, c.unit = true, s, s, true, "ISO 8601"
+		c.local = !hasZone(cell)
 		if s < 86400 {
 			c.base = 0
 		}

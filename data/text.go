@@ -32,3 +32,6 @@ func plural(n int, one, many string) string {
 
 // number formats a figure for a message: six digits are more than a person reads.
 func number(x float64) string { return strconv.FormatFloat(x, 'g', 6, 64) }
+
+// number3 is for figures that are estimates.
+func number3(x float64) string { return strconv.FormatFloat(x, 'g', 3, 64) }

@@ -18,6 +18,8 @@ const (
 	coarseShare = 0.2
 	// periodTolerance is the accepted relative difference between stamps and [log] sample_period.
 	periodTolerance = 0.002
+	// hour is what daylight saving moves a clock by, s.
+	hour = 3600
 	// longestBurst is the number of rows that a late logger may stamp together before it counts as a gap.
 	longestBurst = 10
 )
@@ -40,9 +42,9 @@ func (l *log) timeBase() error {
 		l.period = l.rig.Log.SamplePeriod
 		return nil
 	}
-	if l.clock.unit != "s" && l.clock.unit != "ISO 8601" {
+	if unit := l.clocks[0].unit; unit != "s" && unit != "ISO 8601" {
 		l.flaw(Flaw{Name: FlawClock, Column: l.column(l.time), Count: l.rows, Line: l.lines.at(0),
-			Detail: "stamps in " + l.clock.unit, Effect: "converted to s"})
+			Detail: "stamps in " + unit, Effect: "converted to s"})
 	}
 	if err := l.dropRepeats(); err != nil {
 		return err
@@ -176,7 +178,7 @@ func (l *log) steps() error {
 		}
 		t.count++
 	}
-	var gaps, shorts, repeats, backs, jitter tally
+	var gaps, shorts, repeats, backs, hours, jitter tally
 	missed, longest, squares := 0.0, 0.0, 0.0
 	lo, hi := math.Inf(1), math.Inf(-1)
 	for i := 1; i < len(t); i++ {
@@ -205,6 +207,8 @@ func (l *log) steps() error {
 		}
 		l.dropped[i] |= startsSegment
 		switch {
+		case l.clocks[0].local && math.Abs(math.Abs(off)-hour) <= regularStep*period && period < hour/3:
+			note(&hours, i)
 		case d < 0:
 			note(&backs, i)
 		case d == 0:
@@ -235,6 +239,10 @@ func (l *log) steps() error {
 			Effect: effect})
 	}
 	const restart = "a new segment starts there"
+	if hours.count > 0 {
+		l.flaw(Flaw{Name: FlawHour, Column: l.column(l.time), Count: hours.count, Line: hours.first,
+			Detail: "the stamps jump by one hour to the row, as local time does when daylight saving begins or ends", Effect: restart + "; no row is lost"})
+	}
 	if gaps.count > 0 {
 		l.flaw(Flaw{Name: FlawGap, Column: l.column(l.time), Count: gaps.count, Line: gaps.first,
 			Detail: fmt.Sprintf("%.0f rows missing, longest step %s s", missed, number(longest)), Effect: "a new segment starts after each; nothing is interpolated"})

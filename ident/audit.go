@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"math"
 	"runtime"
+	"slices"
 
 	"steadyrig/data"
 	"steadyrig/fit"
@@ -67,6 +68,7 @@ type Flaw struct {
 	Line   int    `json:"line"`
 	Detail string `json:"detail"`
 	Effect string `json:"effect"`
+	Remedy string `json:"remedy"` // what to do about it
 }
 
 // glanceRows is the part of a log that the audit's quick fit looks at.
@@ -80,7 +82,7 @@ func Audit(ctx context.Context, exps []*data.Experiment, rig *data.Rig) (*AuditR
 	for _, e := range exps {
 		a.Logs = append(a.Logs, LogUse{File: e.File, SHA256: e.SHA256, Rows: e.Rows, Used: e.Used, Segments: len(e.Segments)})
 		for _, f := range e.Flaws {
-			a.Flaws = append(a.Flaws, Flaw{e.File, f.Name, f.Column, f.Count, f.Line, f.Detail, f.Effect})
+			a.Flaws = append(a.Flaws, Flaw{e.File, f.Name, f.Column, f.Count, f.Line, f.Detail, f.Effect, f.Remedy()})
 		}
 	}
 	recs, period, err := records(exps)
@@ -228,6 +230,7 @@ func (a *AuditReport) glance(ctx context.Context, recs []fit.Record, rig *data.R
 
 // conclude sets the verdict and the one next step.
 func (a *AuditReport) conclude() error {
+	flaw := slices.IndexFunc(a.Flaws, func(f Flaw) bool { return slices.Contains(doubtfulFlaws, f.Name) })
 	switch {
 	case a.Pairing.Rows != 0:
 		a.Verdict = Refused
@@ -242,6 +245,9 @@ func (a *AuditReport) conclude() error {
 	case a.Law != nil && a.Law.Unexplained > 0.9:
 		a.Verdict = Weak
 		a.NextStep = "correct [stopgap] in the rig file, or leave it out: " + a.Law.Words
+	case flaw >= 0:
+		a.Verdict = Weak
+		a.NextStep = fmt.Sprintf("mend the flaw %q: %s", a.Flaws[flaw].Name, a.Flaws[flaw].Remedy)
 	case a.Memories > 0 && a.Memories < soundMemories:
 		a.Verdict = Weak
 		a.NextStep = fmt.Sprintf("log a longer run: this one holds %.0f memories of the predictor, intervals want %d", a.Memories, soundMemories)

@@ -137,6 +137,7 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 		return m, err
 	}
 	m.judge(ranked, out, f)
+	m.doubt(exps)
 	if err := m.finite(); err != nil {
 		return newModel(exps, rig).refuse(&RefusedError{What: "the log does not determine the plant: " + err.Error(), Do: "log a longer run or a stronger probe"})
 	}

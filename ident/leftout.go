@@ -329,3 +329,19 @@ func (m *Model) clipped(exps []*data.Experiment) {
 		}
 	}
 }
+
+// doubtfulFlaws are those that a linear plant fitted to the log inherits.
+var doubtfulFlaws = []string{data.FlawClocks, data.FlawTelemetry, data.FlawRate, data.FlawDeadZone, data.FlawStiction, data.FlawCycle,
+	data.FlawPeriodic, data.FlawAlias, data.FlawFew}
+
+// doubt calls a model weak where a log has such a flaw.
+func (m *Model) doubt(exps []*data.Experiment) {
+	for _, e := range exps {
+		for _, f := range e.Flaws {
+			if slices.Contains(doubtfulFlaws, f.Name) {
+				m.Verdict = Weak
+				m.Warnings = append(m.Warnings, fmt.Sprintf("%s in %s: %s; %s", f.Name, e.File, f.Detail, f.Remedy()))
+			}
+		}
+	}
+}

@@ -9,6 +9,9 @@ import (
 	"io/fs"
 	"math"
 	"os"
+	"path/filepath"
+	"slices"
+	"strings"
 
 	"steadyrig/cmd/steadyrig/words"
 	"steadyrig/data"
@@ -58,7 +61,12 @@ func (a *app) rigAndLogs(args []string) (*data.Rig, []*data.Experiment, error) {
 	return rig, exps, err
 }
 
-func (a *app) logs(rig *data.Rig, paths []string) ([]*data.Experiment, error) {
+// logs reads logs by their names or by patterns such as "run*.csv", which shells pass on where they stand in quotes.
+func (a *app) logs(rig *data.Rig, names []string) ([]*data.Experiment, error) {
+	paths, err := expand(names)
+	if err != nil {
+		return nil, err
+	}
 	var exps []*data.Experiment
 	for _, path := range paths {
 		exp, _, err := load(a, path, func(r io.Reader, name string) (*data.Experiment, error) {
@@ -76,9 +84,38 @@ func (a *app) logs(rig *data.Rig, paths []string) ([]*data.Experiment, error) {
 				}
 			}
 		}
+		for _, other := range exps {
+			if exp.SHA256 == other.SHA256 {
+				return nil, &data.ParseError{File: exp.File, Err: fmt.Errorf("the same bytes as %s", other.File), Hint: "give each log once: twice the same rows are no more evidence"}
+			}
+		}
 		exps = append(exps, exp)
 	}
 	return exps, nil
+}
+
+// expand puts the files that a pattern matches in its place, by name; each file once. What is a file's name is no pattern.
+func expand(names []string) ([]string, error) {
+	var paths []string
+	for _, name := range names {
+		if _, err := os.Stat(name); err == nil || !strings.ContainsAny(name, "*?[") {
+			paths = append(paths, name)
+			continue
+		}
+		found, err := filepath.Glob(name)
+		switch {
+		case err != nil:
+			return nil, callErrorf("%s: %w; write run*.csv, run?.csv or run[1-3].csv", name, err)
+		case len(found) == 0:
+			return nil, callErrorf("%s: no file matches; check the pattern and the folder", name)
+		}
+		for _, path := range found {
+			if !slices.Contains(paths, path) {
+				paths = append(paths, path)
+			}
+		}
+	}
+	return paths, nil
 }
 
 // rigAndModel reads a rig file and a model, and the model's SHA-256.

@@ -593,3 +593,39 @@ func golden(t *testing.T, name, text string) {
 
 // sourceFolder is the working folder that the tests start in.
 var sourceFolder, _ = os.Getwd()
+
+// Patterns reach the command where the shell leaves them, in quotes.
+func TestLogsByPattern(t *testing.T) {
+	inFolder(t, map[string]string{"run1.csv": "", "run2.csv": "", "run10.csv": "", "odd[1].csv": "", "odd1.csv": ""})
+	for _, c := range []struct{ names, want []string }{
+		{[]string{"run?.csv"}, []string{"run1.csv", "run2.csv"}},
+		{[]string{"run2.csv", "run*.csv"}, []string{"run2.csv", "run1.csv", "run10.csv"}},
+		{[]string{"run[12].csv", "-"}, []string{"run1.csv", "run2.csv", "-"}},
+		{[]string{"odd[1].csv"}, []string{"odd[1].csv"}},
+		{[]string{"none.csv"}, []string{"none.csv"}},
+	} {
+		got, err := expand(c.names)
+		if err != nil || !slices.Equal(got, c.want) {
+			t.Errorf("%q: got %q, %v, want %q", c.names, got, err, c.want)
+		}
+	}
+	for name, want := range map[string]string{"walk*.csv": "walk*.csv: no file matches", "run[.csv": "run[.csv: syntax error in pattern"} {
+		if _, err := expand([]string{name}); err == nil || !strings.HasPrefix(err.Error(), want) {
+			t.Errorf("%s: got %v, want %s", name, err, want)
+		}
+	}
+}
+
+// The same rows twice would look like twice the evidence.
+func TestLogGivenTwice(t *testing.T) {
+	log := "t,u,y\n"
+	for k := range 60 {
+		log += fmt.Sprintf("%d,%d,%d\n", k, k%3, k%5)
+	}
+	inFolder(t, map[string]string{"rig.toml": smallRig, "run1.csv": log, "copy.csv": log})
+	status, _, stderr := call(t, "audit", "rig.toml", "run1.csv", "copy.csv")
+	if status != statusCall {
+		t.Errorf("exit status %d", status)
+	}
+	oneErrorLine(t, stderr, "copy.csv", "the same bytes as run1.csv")
+}

@@ -126,6 +126,17 @@ func draftRig(h *data.LogHeader, name string) string {
 	default:
 		line("# sample_period = 0.001  # s, fill in: it could not be measured")
 	}
+	line("# controller_period = 0.001  # s, of the loop that ran, where it is not that of the rows")
+	line("# input_time  = \"\"           # column of the input's own stamps, where another clock made them")
+	line("# clock_skew  = 0.0          # part by which the input's clock runs fast, to be undone; audit measures it")
+	line("")
+	line("# [layout]  # only where the line in brackets above is wrong: how the log is written")
+	line("# delimiter    = \",\"  # one sign, \"tab\" or \"blanks\"")
+	line("# decimal_mark = \".\"  # or \",\"")
+	line("# names_line   = 1    # lines count from 1; 0: the log has none")
+	line("# units_line   = 0")
+	line("# numbers_line = 2    # the first row")
+	line("# comment      = \"#\"  # what lines for people start with")
 	line("")
 	line("[units]  # names for tables and axes, never converted")
 	for _, p := range []string{"input", "output"} {

@@ -62,7 +62,7 @@ func showAudit(p *page, r *ident.AuditReport, exps []*data.Experiment, rig *data
 	p.heading(fmt.Sprintf("Flaws: %s", map[bool]string{true: "none found", false: fmt.Sprint(len(r.Flaws))}[len(r.Flaws) == 0]))
 	for _, f := range r.Flaws {
 		p.line("  %s", words.Flaw(f, len(r.Logs) > 1))
-		wrap(p.w, "    ", strings.TrimSuffix(f.Detail, ".")+". "+f.Effect)
+		wrap(p.w, "    ", strings.TrimSuffix(f.Detail, ".")+". "+f.Effect+". What to do: "+f.Remedy+".")
 	}
 }
 

@@ -175,7 +175,7 @@ func logSection(in Input) section {
 		if f.Line > 0 {
 			line = fmt.Sprint(f.Line)
 		}
-		flaws.Rows = append(flaws.Rows, []string{f.Name, f.Column, fmt.Sprint(f.Count), line, f.Detail, f.Effect})
+		flaws.Rows = append(flaws.Rows, []string{f.Name, f.Column, fmt.Sprint(f.Count), line, f.Detail, f.Effect + "; what to do: " + f.Remedy})
 	}
 	if len(flaws.Rows) > 0 {
 		s.Tables = append(s.Tables, flaws)
