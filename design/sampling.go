@@ -224,7 +224,7 @@ func (p *problem) periodCost() *PeriodCost {
 	}
 	// With a delay tau in all, d samples pass where tau/d < T <= tau/(d-1).
 	tau := p.nominal.tf.Delay
-	for d := 1; d <= mostPick && c.LongestPeriod == 0; d++ {
+	for d := 1; d <= mostLag && c.LongestPeriod == 0; d++ {
 		lo, hi := tau/float64(d), tau/float64(d-1)
 		if d == 1 {
 			hi = math.Max(2*lo, 1/rightmost)

@@ -25,31 +25,11 @@ import (
 // |S| at the input does not depend on units: the scaling by ranges is the margins' affair alone.
 func (p *problem) leastPeakS(noise float64) (lo, hi float64) {
 	if math.IsInf(noise, 1) {
-		return p.leastPeakFree()
+		poles, zeros := p.nominal.unstableInQ(p.period)
+		least := leastPeakInQ(p.nominal.lag, poles, zeros)
+		return least, least
 	}
 	return p.newYard().least(noise, nil)
-}
-
-// leastPeakFree is leastPeakS without a limit on the noise. The least norm of a T = q^d B_z h that is 1 at the poles is
-// that of the inverse of q^d B_z on their span (see malmquist), and S = 1 - T has the same least norm (Sarason (1967)).
-func (p *problem) leastPeakFree() (lo, hi float64) {
-	poles, zeros := p.nominal.unstableInQ(p.period)
-	n := len(poles)
-	if n == 0 {
-		return 1, 1
-	}
-	m := newMalmquist(poles)
-	inverse, one := make([]complex128, n*n), make([]complex128, n*n)
-	for i := range n {
-		c := make([]complex128, n)
-		c[i], one[i*n+i] = 1, 1
-		m.divide(c, p.nominal.lag, zeros)
-		for k, v := range c {
-			inverse[k*n+i] = v
-		}
-	}
-	least := operatorNorm(inverse, one, n)
-	return least, least
 }
 
 // unstableInQ returns the places in q = z^-1 of the poles and zeros outside the unit circle.
