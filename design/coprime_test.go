@@ -11,6 +11,9 @@ import (
 // the theorem is claimed no drawn plant is lost. Vinnicombe's inequality asin b(P, C) >= asin b(P0, C) - asin nu-gap(P0, P)
 // (IEEE Trans. Automatic Control 38 (1993) 1371-1383) binds margins and gaps of drawn plants together.
 func TestMeasure(t *testing.T) {
+	if testing.Short() {
+		t.Skip("measures five designs")
+	}
 	theorems := 0
 	for _, r := range testRigs() {
 		l := designed(t, r.name)

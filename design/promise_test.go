@@ -90,6 +90,9 @@ func TestAuthorityIsKept(t *testing.T) {
 
 // The limit on input noise is a constraint from the start: a tenth of what the loops would take is kept to.
 func TestQuietInput(t *testing.T) {
+	if testing.Short() {
+		t.Skip("designs loops")
+	}
 	r := testRigs()[1]
 	loud := designed(t, r.name).Promise.InputNoise.Worst
 	r.spec.InputNoise = loud / 4
@@ -110,6 +113,9 @@ func TestQuietInput(t *testing.T) {
 
 // A kick at the plant input is part of the spec when given.
 func TestKick(t *testing.T) {
+	if testing.Short() {
+		t.Skip("designs two pairs of loops")
+	}
 	r := testRigs()[0]
 	r.spec.Kick = 0.3
 	kick := func(law *lti.Law) float64 {
@@ -253,6 +259,9 @@ func TestLongDelay(t *testing.T) {
 
 // A spec without overshoot is met with a margin, not by chance.
 func TestNoOvershoot(t *testing.T) {
+	if testing.Short() {
+		t.Skip("designs loops")
+	}
 	r := testRigs()[0]
 	r.spec.Overshoot = 0
 	l, err := Design(t.Context(), r.model(t), r.rig(), Options{Seed: 1, Plants: 1000})
