@@ -36,7 +36,7 @@ func (c *chooser) look(s structure, near *fit.Prediction) *fit.Prediction {
 	found := list[0]
 	if before != nil && before.fit != nil {
 		known := refined(c.glance, []*fit.Prediction{before.fit}, 1, glanceSteps)
-		if len(known) > 0 && found.Objective() >= known[0].Objective()*(1-worthALook/float64(c.glance.Rows())) {
+		if len(known) > 0 && c.criterion(found) >= c.criterion(known[0])-worthALook {
 			return nil
 		}
 	}

@@ -24,13 +24,13 @@ const (
 // How hard a structure is fitted while it is only compared with others, and
 // how hard the winner.
 const (
-	glanceStarts = 4
+	glanceStarts = 6
 	glanceSteps  = 4
 	startRows    = 3000
 	hopeless     = 10   // reaches behind, from where no step more is spent
 	glanceReach  = 60   // in BIC on the glance's rows: odds of exp(30)
 	sameOptimum  = 1e-7 // relative difference of two sums of squares
-	worthALook   = 0.5  // least gain in -2 log likelihood for which a structure is fitted again
+	worthALook   = 0.5  // least gain in the criterion for which a structure is fitted again
 	compareTol   = 1e-5
 	compareStep  = 25
 	finalTol     = 1e-11
