@@ -193,7 +193,7 @@ func blaschke(roots []complex128, q complex128) complex128 {
 // A malmquist is the space of the functions e_1 … e_n, e_k = norm_k/(1 - conj(a_k) q) times the Blaschke product of the
 // poles before a_k: what remains of an analytic function when B_p times another is taken off. Multiplication by q is a
 // triangular matrix there with the poles on its diagonal, the compressed shift (Sarason (1967), Generalized interpolation
-// in H-infinity, Trans. AMS 127, 179-203; Nikolski (1986), Treatise on the Shift Operator, lecture 3). To be 1 at the
+// in H-infinity, Trans. AMS 127, 179-203; Nikolski (1986), Treatise on the Shift Operator, Springer). To be 1 at the
 // poles, multiple ones with their derivatives, thus becomes a linear equation in which nothing is divided by the
 // distance of two poles.
 type malmquist struct {
