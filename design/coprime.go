@@ -126,15 +126,11 @@ func (p *problem) measureGaps(ctx context.Context, y *Yardstick, law *lti.Law, d
 	y.MarginInner, _ = lti.FeedbackMargin(nominal, inner)
 
 	gaps := make([]float64, len(draws))
-	const chunk = 50
-	if err := ident.Each(ctx, (len(draws)+chunk-1)/chunk, workers, func(c int) error {
-		for i := c * chunk; i < min((c+1)*chunk, len(draws)); i++ {
-			gaps[i] = 1 // a plant that cannot be sampled is as far off as any
-			if pl, err := p.newPlant(draws[i]); err == nil {
-				gaps[i] = p.gapOnGrid(&pl, scale)
-			}
+	if err := inBatches(ctx, len(draws), workers, func(i int) {
+		gaps[i] = 1 // a plant that cannot be sampled is as far off as any
+		if pl, err := p.newPlant(draws[i]); err == nil {
+			gaps[i] = p.gapOnGrid(&pl, scale)
 		}
-		return nil
 	}); err != nil {
 		return err
 	}

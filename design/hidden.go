@@ -1,6 +1,7 @@
 package design
 
 import (
+	"cmp"
 	"fmt"
 	"math"
 	"math/cmplx"
@@ -155,15 +156,7 @@ func (p *problem) growth(law *lti.Law, poleOf string, pole, zero complex128, rea
 // moved returns g with the pole nearest to from, and its conjugate, at to.
 func moved(g lti.TF, from, to complex128) lti.TF {
 	poles := g.Poles()
-	nearest := slices.MinFunc(poles, func(a, b complex128) int {
-		switch d := cmplx.Abs(a-from) - cmplx.Abs(b-from); {
-		case d < 0:
-			return -1
-		case d > 0:
-			return 1
-		}
-		return 0
-	})
+	nearest := slices.MinFunc(poles, func(a, b complex128) int { return cmp.Compare(cmplx.Abs(a-from), cmplx.Abs(b-from)) })
 	var rest []complex128
 	for _, s := range poles {
 		if s != nearest && s != cmplx.Conj(nearest) {

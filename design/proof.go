@@ -103,13 +103,7 @@ func (p *problem) refinePeakS(pl *plant, law *lti.Law, g *gridLoop) float64 {
 			at, best = j, v
 		}
 	}
-	s := func(w float64) float64 {
-		x := cmplx.Exp(complex(0, -w*p.period))
-		d, k := lawAt(law, x)
-		da := d * lti.Poly(pl.den).Eval(x)
-		b := lti.Poly(pl.num).Eval(x) * cmplx.Exp(complex(0, -w*p.period*float64(pl.lag)))
-		return cmplx.Abs(da / (da + k*b))
-	}
+	s := func(w float64) float64 { return cmplx.Abs(p.sensitivity(pl, law, w)) }
 	lo, hi := p.omega[max(at-1, 0)], p.omega[min(at+1, len(p.omega)-1)]
 	for range 30 { // golden section by thirds: the peak is smooth between grid points
 		a, b := lo+(hi-lo)/3, hi-(hi-lo)/3

@@ -77,7 +77,8 @@ func (p *problem) sensitivity(pl *plant, law *lti.Law, omega float64) complex128
 	x := cmplx.Exp(complex(0, -omega*p.period))
 	d, k := lawAt(law, x)
 	da := d * lti.Poly(pl.den).Eval(x)
-	return da / (da + k*lti.Poly(pl.num).Eval(x)*cmplx.Exp(complex(0, -omega*p.period*float64(pl.lag))))
+	b := lti.Poly(pl.num).Eval(x) * cmplx.Exp(complex(0, -omega*p.period*float64(pl.lag)))
+	return da / (da + k*b)
 }
 
 // A yard is the convex problem behind leastPeakS, on a grid of the unit circle. With q = z^-1, B_p and B_z the Blaschke
