@@ -426,7 +426,7 @@ func (l *Loops) complete(file string) error {
 // complete validates one block and makes its discrete form where it has the continuous one alone.
 func (b *Block) complete(period float64) (err error) {
 	if len(b.Discrete.Numerator) == 0 && len(b.Discrete.Denominator) == 0 && b.Continuous != nil {
-		if b.Discrete, err = tustinRational(*b.Continuous, period); err != nil {
+		if b.Discrete, err = b.tustin(period); err != nil {
 			return err
 		}
 		b.mapped = true
@@ -455,49 +455,19 @@ func (b *Block) complete(period float64) (err error) {
 	return nil
 }
 
-// tustinRational maps a continuous controller (descending powers of s) by s = (2/T)(1 - z^-1)/(1 + z^-1).
-func tustinRational(c Rational, period float64) (Rational, error) {
-	num, den := leadingNonzero(c.Numerator), leadingNonzero(c.Denominator)
-	if len(den) == 0 || len(num) == 0 {
+// tustin maps the block's continuous form by Tustin's rule.
+func (b *Block) tustin(period float64) (Rational, error) {
+	g := b.continuousTF()
+	switch {
+	case g.Den.Degree() < 0 || g.Num.Degree() < 0:
 		return Rational{}, errors.New("the continuous numerator or denominator is empty or zero")
-	}
-	n := len(den) - 1
-	if len(num) > len(den) {
-		return Rational{}, fmt.Errorf("the continuous controller has more zeros (%d) than poles (%d): add roll-off so that it can be built", len(num)-1, n)
-	}
-	expand := func(desc []float64) []float64 {
-		sum := make([]float64, n+1)
-		for i, v := range desc {
-			p := len(desc) - 1 - i // power of s
-			term := []float64{v * math.Pow(2/period, float64(p))}
-			for j := 0; j < n; j++ {
-				sign := 1.0
-				if j < p {
-					sign = -1
-				}
-				next := make([]float64, len(term)+1)
-				for k, t := range term {
-					next[k] += t
-					next[k+1] += sign * t
-				}
-				term = next
-			}
-			for k, t := range term {
-				sum[k] += t
-			}
-		}
-		return sum
-	}
-	zn, zd := expand(num), expand(den)
-	if zd[0] == 0 {
+	case g.RelDegree() < 0:
+		return Rational{}, fmt.Errorf("the continuous controller has more zeros (%d) than poles (%d): add roll-off so that it can be built", g.Num.Degree(), g.Den.Degree())
+	case g.Den.Eval(complex(2/period, 0)) == 0:
 		return Rational{}, fmt.Errorf("the continuous controller has a pole at 2/T = %g rad/s, which Tustin's rule cannot map: shorten the sample period or move the pole", 2/period)
 	}
-	lead := zd[0]
-	for i := range zd {
-		zn[i] /= lead
-		zd[i] /= lead
-	}
-	return Rational{zn, zd}, nil
+	d := lti.Tustin(g, period)
+	return Rational{d.Num, d.Den}, nil
 }
 
 func leadingNonzero(p []float64) []float64 {

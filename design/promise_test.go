@@ -208,11 +208,11 @@ func TestLongDelay(t *testing.T) {
 		t.Fatal(err)
 	}
 	// The same continuous controllers with a little more gain than the nominal plant bears at the longer period.
-	inner, err := tustinRational(*l.Inner.Continuous, r.period)
+	inner, err := l.Inner.tustin(r.period)
 	if err != nil {
 		t.Fatal(err)
 	}
-	outer, err := tustinRational(*l.Outer.Continuous, r.period)
+	outer, err := l.Outer.tustin(r.period)
 	if err != nil {
 		t.Fatal(err)
 	}
