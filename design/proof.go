@@ -23,13 +23,13 @@ func (p *problem) conditions(long int) string {
 		text += " and kick"
 	}
 	text += " in both directions from rest at the operating point, without noise, in the sampled loop with its delay, limits, rate and trips acting; the output is looked at between the samples too; "
-	step := func(q float64) string {
+	step := func(q float64, unit string) string {
 		if q > 0 {
-			return fmt.Sprintf("rounded to %.3g", q)
+			return fmt.Sprintf("rounded to %.3g%s", q, unitOf(unit))
 		}
 		return "not rounded, as no step is known"
 	}
-	text += fmt.Sprintf("input %s, output %s; ", step(p.rounds.Input), step(p.rounds.Output))
+	text += fmt.Sprintf("input %s, output %s; ", step(p.rounds.Input, p.rig.Units.Input), step(p.rounds.Output, p.rig.Units.Output))
 	text += "the trips also count in a step more per plant"
 	text += fmt.Sprintf(" and, on %d plants, in %.4g s at rest", long, float64(p.longSteps())*p.period)
 	if _, why := p.stopgap(); why == "" {

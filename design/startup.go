@@ -98,7 +98,7 @@ func (p *problem) stopLevels(law *lti.Law, sd SignalPair, recoverable float64) S
 	if d := z * sd.Input; law.U0-d > p.limits[0] && law.U0+d < p.limits[1] {
 		s.Input = &[2]float64{law.U0 - d, law.U0 + d}
 	} else {
-		s.Note = fmt.Sprintf("No level of the input tells a fault: in an hour correct running may move it by %.3g, beyond its limits. ", d)
+		s.Note = fmt.Sprintf("No level of the input tells a fault: in an hour correct running may move it by %.3g%s, beyond its limits. ", d, unitOf(p.rig.Units.Input))
 	}
 	room, what := recoverable, "the loops come back from"
 	if p.output != nil && math.Min(-p.output[0], p.output[1]) < room {
@@ -107,7 +107,7 @@ func (p *problem) stopLevels(law *lti.Law, sd SignalPair, recoverable float64) S
 	if d := z * sd.Output; d < room {
 		s.Output = &[2]float64{law.Y0 - d, law.Y0 + d}
 	} else {
-		s.Note += fmt.Sprintf("No level of the output tells a fault in time: in an hour correct running may move it by %.3g, %s only %.3g.", d, what, room)
+		s.Note += fmt.Sprintf("No level of the output tells a fault in time: in an hour correct running may move it by %.3g%s, %s only %.3g.", d, unitOf(p.rig.Units.Output), what, room)
 	}
 	return s
 }
