@@ -307,13 +307,7 @@ func (m *Model) describe(p *fit.Predictor, f *fit.Prediction, rig *data.Rig) {
 func (m *Model) derive() {
 	nz, n := len(m.Plant.Numerator), len(m.Plant.Denominator)-1
 	at := func(i, j int) float64 { return m.Plant.Covariance[i][j] }
-	den := uncertain{p: reversed(m.Plant.Denominator), cov: mat.NewSymDense(n+1, nil)}
-	for i := range n {
-		for j := i; j < n; j++ {
-			den.cov.SetSym(i, j, at(nz+n-1-i, nz+n-1-j))
-		}
-	}
-	m.Poles = den.roots()
+	m.Poles = m.denominator().roots()
 	m.Zeros = []Root{}
 	if nz > 1 {
 		num := uncertain{p: reversed(m.Plant.Numerator), cov: mat.NewSymDense(nz, nil)}
@@ -334,6 +328,18 @@ func (m *Model) derive() {
 		v := at(0, 0)/(an*an) + dc*dc*sd*sd/(an*an) - 2*dc*at(0, nz+n-1)/(an*an)
 		m.Gain.DC = estimate(dc, math.Sqrt(math.Max(0, v)))
 	}
+}
+
+// denominator returns the plant's denominator with its covariance.
+func (m *Model) denominator() uncertain {
+	nz, n := len(m.Plant.Numerator), len(m.Plant.Denominator)-1
+	den := uncertain{p: reversed(m.Plant.Denominator), cov: mat.NewSymDense(n+1, nil)}
+	for i := range n {
+		for j := i; j < n; j++ {
+			den.cov.SetSym(i, j, m.Plant.Covariance[nz+n-1-i][nz+n-1-j])
+		}
+	}
+	return den
 }
 
 func estimate(v, sd float64) *Estimate {

@@ -131,10 +131,34 @@ type outcome struct {
 	squares, crb float64 // of the error and of the bound, 0 without one
 }
 
+// factor grades the two slowest poles of m by the coefficients a and b of
+// their factor s² + a s + b, which are regular where the two meet: a double
+// integrator's are zero. It returns none without that many poles.
+func (o *outcome) factor(m, limit *Model, right bool, product bool) {
+	slow := bySpeed(m.Poles)
+	if len(slow) < 2 {
+		return
+	}
+	of := func(m *Model, p, q Root) (v, variance float64) {
+		a, b, cov := m.denominator().factor(complex(p.Re, p.Im), complex(q.Re, q.Im))
+		if product {
+			return b, cov[1][1]
+		}
+		return a, cov[0][0]
+	}
+	v, variance := of(m, slow[0], slow[1])
+	o.in = math.Abs(v) <= z95*math.Sqrt(variance)
+	if right {
+		l := bySpeed(limit.Poles)
+		_, o.crb = of(limit, l[0], l[1])
+		o.squares = v * v
+	}
+}
+
 // trial is the fit of one log beside the truth.
 type trial struct {
 	refused, sound, right, exact, all, invented, memories bool
-	numbers                                               []outcome // each pole; gain; delay where there is one
+	numbers                                               []outcome // each pole; gain; delay; sum and product of a double integrator
 	tells                                                 bool      // every bound is under a third of its pole's modulus
 	note                                                  string
 }
@@ -148,6 +172,10 @@ func one(t testing.TB, r demorig.Rig, truth *fit.Prediction, seed uint64) (c tri
 	c.numbers = make([]outcome, len(poles)+1)
 	if truth.FreeDelay {
 		c.numbers = append(c.numbers, outcome{})
+	}
+	double := r.Truth.Den[0] == 0 && r.Truth.Den[1] == 0
+	if double {
+		c.numbers = append(c.numbers, outcome{}, outcome{})
 	}
 	var refused *RefusedError
 	if errors.As(err, &refused) {
@@ -226,6 +254,11 @@ func one(t testing.TB, r demorig.Rig, truth *fit.Prediction, seed uint64) (c tri
 			o.crb = limit.Plant.Covariance[len(limit.Plant.Covariance)-1][len(limit.Plant.Covariance)-1]
 		}
 	}
+	if double {
+		pair := c.numbers[len(c.numbers)-2:]
+		pair[0].factor(m, limit, c.right, false)
+		pair[1].factor(m, limit, c.right, true)
+	}
 	return c
 }
 
@@ -265,6 +298,9 @@ func study(t testing.TB, r demorig.Rig, from uint64, logs int) (*tally, []trial)
 	c.names = append(c.names, "gain")
 	if truth.FreeDelay {
 		c.names = append(c.names, "delay")
+	}
+	if r.Truth.Den[0] == 0 && r.Truth.Den[1] == 0 {
+		c.names = append(c.names, "sum", "product")
 	}
 	n := len(c.names)
 	c.bounded, c.in = make([]int, n), make([]int, n)
