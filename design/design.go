@@ -22,6 +22,7 @@ type Options struct {
 	Inner    string                // form of the inner controller, one of InnerForms; "": the simplest that does
 	Outer    string                // form of the outer controller, one of OuterForms; "": the simplest that does
 	Progress func(done, total int) // called during the proof, from several goroutines; nil: not called
+	Limits   func([]Bound)         // called with what physics allows before anything is tuned or tried; nil: not called
 }
 
 // Design finds two loops for a model: bounds first, then the inner loop, then the outer one, tuned for the worst of
@@ -49,6 +50,9 @@ func Design(ctx context.Context, model *ident.Model, rig *data.Rig, opt Options)
 	l.Bounds = p.bounds(ctx, draws)
 	if err := ctx.Err(); err != nil {
 		return nil, err
+	}
+	if opt.Limits != nil {
+		opt.Limits(l.Bounds)
 	}
 	if r := p.unheld(draws); r != nil {
 		return l.refuse(r)

@@ -38,8 +38,8 @@ It writes loops.json, or the file that --out names.`,
 			if err != nil {
 				return err
 			}
-			loops, refusal := a.design(cmd.Context(), model, rig, &s, sum)
-			return a.deliverLoops(&s, loopsFile, loops, rig.Units, refusal)
+			loops, refusal := a.design(cmd.Context(), model, rig, &s, sum, a.limits(&s))
+			return a.deliverLoops(&s, loopsFile, loops, refusal, func(p *page) { showDesign(p, loops, rig.Units) })
 		},
 	}
 	s.add(cmd, "write the loops here instead of to loops.json")
@@ -93,7 +93,7 @@ loop least.`,
 			if given.ModelSHA256 != "" && given.ModelSHA256 != sum {
 				a.warn(&s, []string{"the loops were designed for another model than " + args[1]})
 			}
-			return a.deliverLoops(&s, "", loops, rig.Units, refusal)
+			return a.deliverLoops(&s, "", loops, refusal, func(p *page) { showLoops(p, loops, rig.Units) })
 		},
 	}
 	s.add(cmd, "write the loops with margins and promise made anew here")
@@ -160,12 +160,25 @@ func (a *app) loopsToVerify(rig *data.Rig, files []string, flags *data.Controlle
 	return loops, nil
 }
 
-// design designs loops. A refusal comes with the loops; any other error without them.
-func (a *app) design(ctx context.Context, model *ident.Model, rig *data.Rig, s *settings, modelSum string) (*design.Loops, error) {
+// limits prints what physics allows as soon as it is known, nil under --json.
+func (a *app) limits(s *settings) func([]design.Bound) {
+	if s.json {
+		return nil
+	}
+	return func(b []design.Bound) {
+		p := a.page()
+		showBounds(p, b)
+		p.line("")
+	}
+}
+
+// design designs loops and calls limits, if any, before it tunes them. A refusal comes with the loops; any other error
+// without them.
+func (a *app) design(ctx context.Context, model *ident.Model, rig *data.Rig, s *settings, modelSum string, limits func([]design.Bound)) (*design.Loops, error) {
 	bar := a.progress("design", s.quiet)
 	defer bar.wipe()
 	opt := s.design()
-	opt.Progress = bar.step
+	opt.Progress, opt.Limits = bar.step, limits
 	loops, refusal := design.Design(ctx, model, rig, opt)
 	if err := a.finishLoops(ctx, loops, refusal, modelSum); err != nil {
 		return nil, err
@@ -189,7 +202,7 @@ func (a *app) finishLoops(ctx context.Context, loops *design.Loops, err error, m
 }
 
 // deliverLoops shows loops, and ends the command with the refusal if there was one.
-func (a *app) deliverLoops(s *settings, usual string, loops *design.Loops, u data.Units, refusal error) error {
+func (a *app) deliverLoops(s *settings, usual string, loops *design.Loops, refusal error, show func(*page)) error {
 	if loops == nil {
 		return refusal
 	}
@@ -198,7 +211,7 @@ func (a *app) deliverLoops(s *settings, usual string, loops *design.Loops, u dat
 		return err
 	}
 	a.warn(s, warningsBeside(loops.Warnings, refusal))
-	if err := a.deliver(s, usual, content, func(p *page) { showLoops(p, loops, u) }); err != nil {
+	if err := a.deliver(s, usual, content, show); err != nil {
 		return err
 	}
 	return refusal

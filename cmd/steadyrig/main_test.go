@@ -491,7 +491,11 @@ func TestPages(t *testing.T) {
 	}{
 		{"audit", func(p *page) { showAudit(p, &audit, []*data.Experiment{exp}, rig) }},
 		{"fit", func(p *page) { showModel(p, model, rig.Units) }},
-		{"design", func(p *page) { showLoops(p, loops, rig.Units) }},
+		{"design", func(p *page) {
+			showBounds(p, loops.Bounds)
+			p.line("")
+			showDesign(p, loops, rig.Units)
+		}},
 		{"run", func(p *page) {
 			j := job{rig: rig, dir: "study", audit: &audit, model: model, loops: loops, files: []file{{name: "model.json"}}}
 			j.show(p)

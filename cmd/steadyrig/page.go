@@ -18,9 +18,13 @@ func (a *app) page() *page { return &page{w: a.stdout, colour: inColour(a.stdout
 
 func (p *page) line(format string, args ...any) { fmt.Fprintf(p.w, format+"\n", args...) }
 
-// heading starts a part of the page.
+// heading starts a part of the page, title one at its top.
 func (p *page) heading(text string) {
 	fmt.Fprintln(p.w)
+	p.title(text)
+}
+
+func (p *page) title(text string) {
 	if p.colour {
 		text = "\x1b[1m" + text + "\x1b[0m"
 	}

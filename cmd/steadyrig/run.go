@@ -233,7 +233,7 @@ func (a *app) whole(ctx context.Context, j *job, s *settings) error {
 	loops := refusedLoops(j.rig, "no design was tried: the log was refused")
 	loops.Tool, loops.Made, loops.ModelSHA256 = a.tool, a.made(), sha256Of(modelText)
 	if refusal == nil {
-		designed, err := a.design(ctx, model, j.rig, s, sha256Of(modelText))
+		designed, err := a.design(ctx, model, j.rig, s, sha256Of(modelText), nil)
 		if designed == nil && statusOf(err) != statusRefused {
 			return err
 		}
@@ -322,7 +322,10 @@ func (j *job) show(p *page) {
 			p.item("intervals", text)
 		}
 	}
-	showBoundsBriefly(p, j.loops)
+	if b := j.loops.Bounds; len(b) > 0 {
+		p.line("")
+		showLimits(p, b)
+	}
 	showMargins(p, j.loops)
 	showPromise(p, j.loops, u)
 	if c := j.loops.FirstClosure; c != nil {

@@ -9,10 +9,23 @@ import (
 	"steadyrig/design"
 )
 
-// showLoops prints a design: the verdict and the promise, then bounds, loops, margins, and how to close them.
+// showLoops prints loops: the verdict and the promise, then limits, controllers, margins, and how to close them.
 func showLoops(p *page, l *design.Loops, u data.Units) {
 	p.verdict(l.Verdict, words.Loops(l))
-	showBounds(p, l)
+	if len(l.Bounds) > 0 {
+		p.line("")
+		showBounds(p, l.Bounds)
+	}
+	showBody(p, l, u)
+}
+
+// showDesign prints a design whose limits were printed before it was tuned.
+func showDesign(p *page, l *design.Loops, u data.Units) {
+	p.verdict(l.Verdict, words.Loops(l))
+	showBody(p, l, u)
+}
+
+func showBody(p *page, l *design.Loops, u data.Units) {
 	showControllers(p, l, u)
 	showFront(p, l, u)
 	showMargins(p, l)
@@ -21,9 +34,15 @@ func showLoops(p *page, l *design.Loops, u data.Units) {
 	showClosure(p, l, u)
 }
 
-func showBounds(p *page, l *design.Loops) {
-	showBoundsBriefly(p, l)
-	for i, b := range l.Bounds {
+// showBounds prints what physics allows, with sources.
+func showBounds(p *page, bounds []design.Bound) {
+	showLimits(p, bounds)
+	showSources(p, bounds)
+}
+
+// showSources prints where each limit comes from and what is left of it over the plants allowed.
+func showSources(p *page, bounds []design.Bound) {
+	for i, b := range bounds {
 		if i == 0 {
 			p.line("")
 		}
@@ -42,13 +61,11 @@ func showBounds(p *page, l *design.Loops) {
 	}
 }
 
-func showBoundsBriefly(p *page, l *design.Loops) {
-	if len(l.Bounds) == 0 {
-		return
-	}
-	p.heading("What physics allows, whatever the controller")
+// showLimits prints what physics allows beside what is asked.
+func showLimits(p *page, bounds []design.Bound) {
+	p.title("What physics allows, whatever the controller")
 	var name, bound, asked, ok []string
-	for _, b := range l.Bounds {
+	for _, b := range bounds {
 		value, _, ask := words.Bound(b)
 		name, bound, asked, ok = append(name, b.Name), append(bound, value), append(asked, ask), append(ok, words.InReach(b))
 	}

@@ -2,6 +2,7 @@ package main
 
 import (
 	"bytes"
+	"context"
 	"encoding/json"
 	"fmt"
 	"math"
@@ -10,6 +11,7 @@ import (
 	"regexp"
 	"strconv"
 	"strings"
+	"sync"
 	"testing"
 
 	"steadyrig/design"
@@ -210,5 +212,31 @@ func TestVerifyRefusesCancellingController(t *testing.T) {
 			t.Errorf("off by %g: %g s said, %g s in simulation", off, said, simulated)
 		}
 		t.Log(last)
+	}
+}
+
+// What physics allows is printed before anything is tuned or tried: when the
+// first plant is tried, all limits with their sources are on the page.
+func TestLimitsAreToldFirst(t *testing.T) {
+	inFolder(t, kept(t, "rig.toml", "model.json"))
+	var out bytes.Buffer
+	a := &app{stdout: &out}
+	rig, model, _, err := a.rigAndModel([]string{"rig.toml", "model.json"}, &settings{})
+	if err != nil {
+		t.Fatal(err)
+	}
+	var once sync.Once
+	loops, err := design.Design(context.Background(), model, rig, design.Options{Plants: 20, Limits: a.limits(&settings{}), Progress: func(int, int) {
+		once.Do(func() { out.WriteString("plants are tried") })
+	}})
+	if loops == nil {
+		t.Fatal(err)
+	}
+	told, _, tried := strings.Cut(out.String(), "plants are tried")
+	if got := strings.Count(told, "Source: "); !tried || got != len(loops.Bounds) || !strings.HasPrefix(told, "What physics allows") {
+		t.Errorf("before plants are tried %d of %d limits are told:\n%s", got, len(loops.Bounds), told)
+	}
+	if a.limits(&settings{json: true}) != nil {
+		t.Error("limits are printed beside the JSON document")
 	}
 }
