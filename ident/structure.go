@@ -380,11 +380,11 @@ func (c *chooser) try(ctx context.Context, list []structure, near []*fit.Predict
 // A plant's pole and zero within dipole of the plant's mean speed nearly
 // cancel. Such a pair is more often a disturbance's pole, or the zero on the
 // unit circle of a noise that was differenced once too often, where the
-// approximation behind BIC fails, than a plant's: it must bring dipolePenalty
+// approximation behind BIC fails, than a plant's: it must bring surcharge
 // more, odds of 150 to 1.
 const (
-	dipole        = 0.1
-	dipolePenalty = 10
+	dipole    = 0.1
+	surcharge = 10
 )
 
 func cancels(f *fit.Prediction) bool {
@@ -420,11 +420,6 @@ func vanishes(f *fit.Prediction) bool {
 // the log does not show it.
 const withinRow = 4
 
-// delayPenalty is what a free delay costs beyond its parameter, odds of seven
-// to one: every actuator and sensor lags, and on a short log a lag faster than
-// the probe looks like a delay.
-const delayPenalty = 4
-
 // criterion is BIC with some amendments.
 //
 // On a short log BIC drops the slow colour of a disturbance, for which the
@@ -433,24 +428,18 @@ const delayPenalty = 4
 //
 // A plant's pole under a zero, and a noise zero on the unit circle
 // without a plant pole beside it that it could be the mirror of, mean that the
-// approximation behind BIC fails; they cost dipolePenalty each, and so
-// does a plant pole that decays within a row. A free delay costs delayPenalty.
+// approximation behind BIC fails; they cost the surcharge each, and so
+// do a plant pole that decays within a row and a free delay: every actuator and
+// sensor lags, and on a short log a lag faster than the probe looks like a delay.
 func (c *chooser) criterion(f *fit.Prediction) float64 {
 	v := f.BIC()
 	if f.Rows < shortRows && f.Shape.Colour > 0 {
 		v -= 2 * (math.Log(float64(f.Rows)) - 2)
 	}
-	if cancels(f) {
-		v += dipolePenalty
-	}
-	if pinned(f) {
-		v += dipolePenalty
-	}
-	if f.FreeDelay {
-		v += delayPenalty
-	}
-	if vanishes(f) || alternates(f) {
-		v += dipolePenalty
+	for _, doubtful := range []bool{cancels(f), pinned(f), f.FreeDelay, vanishes(f) || alternates(f)} {
+		if doubtful {
+			v += surcharge
+		}
 	}
 	return v
 }
