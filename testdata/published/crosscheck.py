@@ -95,6 +95,16 @@ def coherence(c):
     return signal.coherence(c["x"], c["y"], 1, "hann", c["length"], c["length"] // 2, detrend="constant")[1][1:]
 
 
+def multiple_coherence(c):
+    def csd(x, y):
+        return signal.csd(c[x], c[y], 1, "hann", c["length"], c["length"] // 2, detrend="constant")[1][1:]
+
+    inputs = np.array([[csd(i, j) for j in "ab"] for i in "ab"]).transpose(2, 0, 1)
+    cross = np.array([csd(i, "y") for i in "ab"]).T
+    explained = np.einsum("ki,ki->k", cross.conj(), np.linalg.solve(inputs, cross[..., None])[..., 0])
+    return explained.real / csd("y", "y").real
+
+
 def ols(part):
     return lambda c: np.ravel(part(OLS(np.array(c["y"]), np.array(c["x"])).fit()))
 
@@ -156,6 +166,7 @@ REFERENCE = {
     # Quantiles by bisection on the incomplete beta function, in both.
     "F quantile": (lambda c: [stats.f.ppf(c["p"], c["d1"], c["d2"])], 1e-10),
     "Clopper and Pearson": (clopper_pearson, 1e-11),
+    "multiple coherence": (multiple_coherence, 1e-11),
 }
 
 

@@ -215,6 +215,18 @@ var quantities = []struct {
 		k := r.IntN(n + 1)
 		return of("k", k, "n", n, "confidence", c), []float64{design.ClopperPearsonLower(k, n, c), design.ClopperPearsonUpper(k, n, c)}, nil
 	}},
+	{"multiple coherence", func(r *rand.Rand) (map[string]any, []float64, error) {
+		a, b, y, length := normal(r, 600), normal(r, 600), normal(r, 600), 2*(8+r.IntN(30))
+		for i := range y {
+			b[i] += 0.5 * a[i]
+			y[i] += a[i] - b[i]
+		}
+		e, err := fit.Explain([][][]float64{{a}, {b}}, [][]float64{y}, 1, length)
+		if err != nil {
+			return nil, nil, err
+		}
+		return of("a", a, "b", b, "y", y, "length", length), e.Coherence[1:], nil
+	}},
 }
 
 func regression(part func(*fit.LSResult) []float64) func(*rand.Rand) (map[string]any, []float64, error) {
