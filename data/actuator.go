@@ -87,7 +87,7 @@ func (l *log) findActuator() {
 			for k, v := range u {
 				taken[k] = min(max(v-centre, -d), d)
 			}
-			try(FlawDeadZone, fmt.Sprintf("a dead zone of about +-%s around %s", number3(d), number3(centre)), -10, -0.4)
+			try(FlawDeadZone, fmt.Sprintf("a dead zone of about ± %s around %s", number3(d), number3(centre)), -10, -0.4)
 		}
 		at := u[rows[0]]
 		for k, v := range u { // play
@@ -96,7 +96,7 @@ func (l *log) findActuator() {
 			}
 			taken[k] = v - at
 		}
-		try(FlawStiction, fmt.Sprintf("play of about +-%s in the input", number3(d)), -10, -0.4)
+		try(FlawStiction, fmt.Sprintf("play of about ± %s in the input", number3(d)), -10, -0.4)
 	}
 	for _, w := range []int{1, 2, 4, 8} { // friction acts against the motion, of which w rows tell the direction
 		for k := range u {

@@ -86,7 +86,7 @@ func (l *log) compareClocks() {
 	}
 	if s, ok := l.slippage(); ok {
 		l.flaw(Flaw{Name: FlawClocks, Column: l.column(l.u), Count: 1, Line: l.lines.at(0),
-			Detail: fmt.Sprintf("against the output the input runs ahead by %.2g +- %.1g rows over the log, %s", s.rows, s.sd, parts(s.rate)),
+			Detail: fmt.Sprintf("against the output the input runs ahead by %.2g ± %.1g rows over the log, %s", s.rows, s.sd, parts(s.rate)),
 			Effect: fmt.Sprintf("used as paired, which blurs the delay; [log] clock_skew = %s undoes it", number(l.rig.Log.ClockSkew+s.rate))})
 	}
 }

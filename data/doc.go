@@ -71,7 +71,7 @@
 //	repeated header  the header among the rows                      new segment
 //	cut last line    the file ends within a row                     row not used
 //	missing value    no number in a column that is used             row not used
-//	beyond limits    input past [limits] input                      row not used
+//	beyond limits    input past [limits] input                      clipped to them
 //	beyond rate      input faster than [limits] input_rate          used
 //	saturation       input flat at its limits, given or found       used
 //	trip             output beyond [limits] output                  only rows in which the rig evidently runs are used

@@ -97,7 +97,7 @@ func (l *log) findLimits() {
 		if beyond > 0 {
 			l.flaw(Flaw{Name: FlawBeyond, Column: name, Count: beyond, Line: beyondFirst,
 				Detail: fmt.Sprintf("up to %s past [limits] input [%s, %s]: logged before its limits, or the limits are wrong", number(far), number(lim[0]), number(lim[1])),
-				Effect: "clipped to the limits, past which the actuator was not told to go; log the input after its limits"})
+				Effect: "clipped to the limits, past which the actuator was not told to go"})
 		}
 		l.saturated(name, low, high, first, lim[0], lim[1])
 	}

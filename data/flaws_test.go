@@ -475,7 +475,7 @@ func TestFlawBeyondLimits(t *testing.T) {
 	g.Limits.Input = &[2]float64{-4, 4}
 	exp := mustRead(t, p.csv(), g)
 	want := Flaw{FlawBeyond, "u", 2, 302, "up to 3 past [limits] input [-4, 4]: logged before its limits, or the limits are wrong",
-		"clipped to the limits, past which the actuator was not told to go; log the input after its limits"}
+		"clipped to the limits, past which the actuator was not told to go"}
 	s := exp.Segments[0]
 	if got := findFlaw(t, exp, FlawBeyond); got != want || exp.Used != 1000 || len(exp.Segments) != 1 || s.U[300] != 4 || s.U[700] != -4 || !slices.Equal(s.U[301:700], p.u[301:700]) {
 		t.Errorf("got  %+v\nwant %+v\n%d rows used", got, want, exp.Used)
