@@ -33,6 +33,8 @@ type AuditReport struct {
 	Law            *LawCheck      `json:"stopgap"`     // null where the rig file has no law
 	Memories       float64        `json:"memories"`    // length of the logs in memories of a glance's predictor; 0: unknown
 	Informative    *Informative   `json:"informative"` // null where a glance finds no plant
+	Excitation     []Excitation   `json:"excitation"`  // of what is logged from outside, or stands in for it
+	Coherence      *Coherence     `json:"coherence"`   // null where nothing acts from outside, or the log is too short
 	Flaws          []Flaw         `json:"flaws"`
 	NextStep       string         `json:"next_step"`
 }
@@ -78,7 +80,7 @@ const glanceRows = 20000
 // where logs do not belong together; a log that says nothing comes back with
 // the verdict refused and a RefusedError.
 func Audit(ctx context.Context, exps []*data.Experiment, rig *data.Rig) (*AuditReport, error) {
-	a := &AuditReport{Schema: AuditSchema, Rig: rig.Name, Verdict: Sound, Flaws: []Flaw{}}
+	a := &AuditReport{Schema: AuditSchema, Rig: rig.Name, Verdict: Sound, Excitation: []Excitation{}, Flaws: []Flaw{}}
 	for _, e := range exps {
 		a.Logs = append(a.Logs, LogUse{File: e.File, SHA256: e.SHA256, Rows: e.Rows, Used: e.Used, Segments: len(e.Segments)})
 		for _, f := range e.Flaws {
@@ -109,6 +111,8 @@ func Audit(ctx context.Context, exps []*data.Experiment, rig *data.Rig) (*AuditR
 		a.OperatingPoint = OperatingPoint{o.Input, o.Output}
 	}
 	a.Outside = outside(exps)
+	a.Excitation = append(a.Excitation, excitation(exps, a.Outside)...)
+	a.Coherence = coherence(exps, a.Outside, period)
 	a.Law = checkLaw(exps, rig)
 	if a.Outside.Quiet {
 		a.Verdict = Refused
@@ -127,6 +131,9 @@ func Audit(ctx context.Context, exps []*data.Experiment, rig *data.Rig) (*AuditR
 	}
 	if err := a.glance(ctx, recs, rig, period); err != nil {
 		return a, err
+	}
+	if a.Informative != nil {
+		a.Informative.weigh(a, exps, rig)
 	}
 	if err := refuseShifted(a.Law, rig); err != nil {
 		a.Verdict, a.Pairing = Refused, Pairing{Rows: a.Law.Rows, Words: a.Law.Words}
@@ -231,7 +238,14 @@ func (a *AuditReport) glance(ctx context.Context, recs []fit.Record, rig *data.R
 // conclude sets the verdict and the one next step.
 func (a *AuditReport) conclude() error {
 	flaw := slices.IndexFunc(a.Flaws, func(f Flaw) bool { return slices.Contains(doubtfulFlaws, f.Name) })
+	named := func(name string) int { return slices.IndexFunc(a.Flaws, func(f Flaw) bool { return f.Name == name }) }
+	mend := func(i int) string { return fmt.Sprintf("mend the flaw %q: %s", a.Flaws[i].Name, a.Flaws[i].Remedy) }
 	switch {
+	case a.Pairing.Rows != 0 && named(data.FlawClocks) >= 0:
+		a.Verdict = Refused
+		a.Pairing.Words = "not known: by the rows input and output do not belong together, as where two clocks run apart"
+		a.NextStep = mend(named(data.FlawClocks))
+		return &RefusedError{What: "input and output were logged by clocks that run apart", Do: a.NextStep}
 	case a.Pairing.Rows != 0:
 		a.Verdict = Refused
 		a.NextStep = `set input_row = "before" in [log], or shift the input column by a row`
@@ -242,32 +256,35 @@ func (a *AuditReport) conclude() error {
 	case a.Law != nil && a.Law.Rows != 0:
 		a.Verdict = Weak
 		a.NextStep = "find out which row the input belongs to: " + a.Law.Words
+	case a.Law != nil && a.Law.Unexplained > 0.9 && named(data.FlawDrift) >= 0:
+		a.Verdict = Weak
+		a.NextStep = mend(named(data.FlawDrift)) + "; the law of the rig file does not explain an input whose output drifts"
 	case a.Law != nil && a.Law.Unexplained > 0.9:
 		a.Verdict = Weak
 		a.NextStep = "correct [stopgap] in the rig file, or leave it out: " + a.Law.Words
 	case flaw >= 0:
 		a.Verdict = Weak
-		a.NextStep = fmt.Sprintf("mend the flaw %q: %s", a.Flaws[flaw].Name, a.Flaws[flaw].Remedy)
+		a.NextStep = mend(flaw)
 	case a.Memories > 0 && a.Memories < soundMemories:
 		a.Verdict = Weak
-		a.NextStep = fmt.Sprintf("log a longer run: this one holds %.0f memories of the predictor, intervals want %d", a.Memories, soundMemories)
+		a.NextStep = fmt.Sprintf("log a longer run: this one holds %s memories of the predictor, intervals want %d", three(a.Memories), soundMemories)
 	case a.Outside.Share < faintShare:
 		a.Verdict = Weak
-		a.NextStep = "log a run with a stronger probe" + a.Informative.where() + ": the intervals rest on little"
+		a.NextStep = "log a run with more power from outside, since the intervals of this one rest on little" + a.Informative.most()
 	case a.Informative.isWide():
 		a.Verdict = Weak
-		a.NextStep = fmt.Sprintf("log a run with a stronger probe%s, or one %s times as long: the interval of the rightmost pole will be wide",
-			a.Informative.where(), three(a.Informative.enough()))
+		a.NextStep = fmt.Sprintf("log a run that tells more, since the interval of the rightmost pole will be wide: %s times as long with the same probe%s",
+			three(a.Informative.enough()), a.Informative.most())
 	case a.Informative.onShape():
 		a.Verdict = Weak
-		a.NextStep = "log a run with a stronger probe" + a.Informative.where() + ": this one tells the rightmost pole by the shape assumed for the disturbance"
+		a.NextStep = "log a run with more power from outside, since this one tells the rightmost pole by the shape assumed for the disturbance" + a.Informative.most()
 	case a.LoopRate.Growth > 2:
 		a.Verdict = Weak
 		a.NextStep = "log faster: the unstable pole more than doubles the output within a row"
 	case a.LoopRate.Growth > 1.35:
 		a.NextStep = "fit the log; a faster log would tell the fast poles better"
-	case a.Informative != nil && a.Informative.Lacking:
-		a.NextStep = "fit the log; in the next one put more of the probe" + a.Informative.where()
+	case a.Informative.most() != "":
+		a.NextStep = "fit the log" + a.Informative.most()
 	default:
 		a.NextStep = "fit the log"
 	}

@@ -38,8 +38,24 @@ type Informative struct {
 	Lacking bool    `json:"lacking"` // it would be worth a log of lackWorth times the length
 	Words   string  `json:"words"`
 	Advice  string  `json:"advice"`
+	// NextTests are this one with single changes, the one that narrows the pole's interval most first.
+	NextTests []NextTest `json:"next_tests"`
 
 	halves []float64 // half the interval, rad/s, in logs longStep^k times as long
+	spectra
+}
+
+// spectra is what the covariance was predicted from, at the bins of a periodogram from the first above zero to Nyquist.
+type spectra struct {
+	model  *fit.Prediction
+	law    *fit.ARX
+	slopes []slope
+	eta    []float64     // sum of squares of what acts from outside
+	rest   *mat.SymDense // information that the disturbance brings
+	all    *mat.SymDense // information in all
+	rows   int
+	power  float64 // sum of squares of the input from outside
+	moved  float64 // sum of squares of the output, in all
 }
 
 // Band is a range of frequencies.
@@ -61,8 +77,8 @@ const (
 	blockRows = 1 << 14 // transformed at once
 	fewBins   = 8       // of the spectrum, below which bands are not told apart
 	lackWorth = 4       // of added power, from which a band lacks it
-	longStep  = 4       // between lengths of log that are looked at
-	longSteps = 11      // of them
+	longStep  = 2       // between lengths of log that are looked at
+	longSteps = 21      // of them
 )
 
 // informative predicts the covariance of the plant's parameters from spectra,
@@ -88,16 +104,15 @@ func informative(recs []fit.Record, f *fit.Prediction, law *fit.ARX) *Informativ
 	}
 	bins := len(eta) - 1
 	step := math.Pi / (float64(bins) * f.Period)
-	bands := bandsBetween(fewBins*step, math.Pi/f.Period)
+	bands := bandsBetween(lowest(recs, f.Period), math.Pi/f.Period)
 	g := newSlopes(f, law)
 	n := g.plant + g.noise
 	told, could := make([]*mat.SymDense, len(bands)), make([]*mat.SymDense, len(bands))
 	for i := range bands {
 		told[i], could[i] = mat.NewSymDense(n, nil), mat.NewSymDense(n, nil)
 	}
-	all := mat.NewSymDense(n, nil)
+	sp := spectra{model: f, law: law, eta: eta[1:], rest: mat.NewSymDense(n, nil), all: mat.NewSymDense(n, nil), rows: rows}
 	answer, swing := make([]float64, len(bands)), make([]float64, len(bands)) // of input and output to a flat dither
-	var power float64
 	at := 0
 	for k := 1; k <= bins; k++ { // the constants take what is at rest
 		w := float64(k) * step
@@ -108,36 +123,38 @@ func informative(recs []fit.Record, f *fit.Prediction, law *fit.ARX) *Informativ
 		move := eta[k] * s.fromOutside
 		addSquare(told[at], move*s.overNoise, s.gain)
 		addSquare(could[at], s.fromDither*s.overNoise, s.gain)
-		addSquare(all, float64(rows)/float64(bins), s.errors)
+		addSquare(sp.rest, float64(rows)/float64(bins), s.errors)
 		bands[at].Power += move
-		power += move
+		sp.power += move
 		answer[at] += s.fromDither
 		swing[at] += s.fromDither * s.gainSquare
+		s.errors = nil
+		sp.slopes = append(sp.slopes, s)
 	}
+	sp.all.CopySym(sp.rest)
 	for _, t := range told {
-		all.AddSym(all, t)
+		sp.all.AddSym(sp.all, t)
 	}
-	cov := inverse(all)
+	cov := inverse(sp.all)
 	if cov == nil {
 		return nil
 	}
-	inf := &Informative{Bands: bands, Seconds: float64(rows) * f.Period, Noise: 1}
+	for _, r := range recs {
+		sp.moved += about(r.Y)
+	}
+	inf := &Informative{Bands: bands, Seconds: float64(rows) * f.Period, Noise: 1, spectra: sp}
 	along := inf.expect(f, cov)
 	var x mat.VecDense
 	x.MulVec(cov, along)
 	variance := mat.Dot(along, &x)
-	var moved float64 // the output, in all
-	for _, r := range recs {
-		moved += about(r.Y)
-	}
 	for i := range bands {
 		b := &bands[i]
-		b.Power /= power
+		b.Power /= sp.power
 		b.Information = mat.Inner(&x, told[i], &x) / variance
 		inf.Noise -= b.Information
-		b.Added = math.Min(1, moved*answer[i]/(power*swing[i]))
-		could[i].ScaleSym(b.Added*power/answer[i], could[i])
-		could[i].AddSym(could[i], all)
+		b.Added = math.Min(1, sp.moved*answer[i]/(sp.power*swing[i]))
+		could[i].ScaleSym(b.Added*sp.power/answer[i], could[i])
+		could[i].AddSym(could[i], sp.all)
 		b.Worth = 1
 		if c := inverse(could[i]); c != nil {
 			if w := inf.longer(half(rootsOf(f, c))); w > 1 {
@@ -292,15 +309,6 @@ func (inf *Informative) say() {
 	}
 }
 
-// where ends a clause by saying in which band more power helps most; nothing
-// where that is not known.
-func (inf *Informative) where() string {
-	if inf == nil {
-		return ""
-	}
-	return " between " + inf.Bands[inf.Best].words()
-}
-
 func (b Band) words() string {
 	const turn = 2 * math.Pi
 	return fmt.Sprintf("%s and %s rad/s (%s and %s Hz)", three(b.From), three(b.To), three(b.From/turn), three(b.To/turn))
@@ -358,37 +366,42 @@ func periodogram(recs []fit.Record, law *fit.ARX) (power []float64, rows int) {
 	if white == nil {
 		return nil, 0
 	}
-	var blocks [][]float64
+	x := white.Residuals(eta)
 	n := 8
-	for _, x := range white.Residuals(eta) {
-		rows += len(x)
-		for len(x) > 0 {
-			m := min(len(x), blockRows)
-			blocks, x = append(blocks, x[:m]), x[m:]
-			for n < m {
-				n *= 2
+	for _, v := range x {
+		rows += len(v)
+		for n < min(len(v), blockRows) {
+			n *= 2
+		}
+	}
+	power = squares(x, n)
+	for k := range power {
+		power[k] /= square(lti.Poly(white.A).Eval(cmplx.Exp(complex(0, -2*math.Pi*float64(k)/float64(n)))))
+	}
+	return power, rows
+}
+
+// squares spreads the sum of squares of x, taken n rows at once, over the frequencies from 0 to Nyquist.
+func squares(x [][]float64, n int) []float64 {
+	fft := fourier.NewFFT(n)
+	power, work := make([]float64, n/2+1), make([]float64, n)
+	var c []complex128
+	for _, v := range x {
+		for len(v) > 0 {
+			clear(work[copy(work, v):])
+			v = v[min(len(v), n):]
+			c = fft.Coefficients(c, work)
+			for k, z := range c {
+				power[k] += square(z)
 			}
 		}
 	}
-	fft := fourier.NewFFT(n)
-	power = make([]float64, n/2+1)
-	work := make([]float64, n)
-	var c []complex128
-	for _, x := range blocks {
-		clear(work[copy(work, x):])
-		c = fft.Coefficients(c, work)
-		for k, v := range c {
-			power[k] += square(v)
-		}
-	}
 	for k := range power {
-		scale := 2 / float64(n)
-		if k == 0 || k == n/2 {
-			scale /= 2
-		}
-		power[k] *= scale / square(lti.Poly(white.A).Eval(cmplx.Exp(complex(0, -2*math.Pi*float64(k)/float64(n)))))
+		power[k] *= 2 / float64(n)
 	}
-	return power, rows
+	power[0] /= 2
+	power[n/2] /= 2
+	return power
 }
 
 func square(x complex128) float64 { return real(x)*real(x) + imag(x)*imag(x) }
@@ -461,9 +474,11 @@ func (g *slopes) at(x complex128) slope {
 
 // addSquare adds the real part of weight g g*.
 func addSquare(dst *mat.SymDense, weight float64, g []complex128) {
+	raw := dst.RawSymmetric()
 	for i, a := range g {
-		for j, b := range g[i:] {
-			dst.SetSym(i, i+j, dst.At(i, i+j)+weight*(real(a)*real(b)+imag(a)*imag(b)))
+		row := raw.Data[i*raw.Stride:]
+		for j := i; j < len(g); j++ {
+			row[j] += weight * (real(a)*real(g[j]) + imag(a)*imag(g[j]))
 		}
 	}
 }

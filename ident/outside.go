@@ -20,6 +20,9 @@ const (
 	faintShare = 1e-2
 )
 
+// mostLogged is the part of what acts from outside from which what is logged stands for it.
+const mostLogged = 0.5
+
 // Shares of what the law leaves that the rounding of the columns explains, from
 // which it explains all of it and beyond which it cannot have been an error.
 // Quiet logs with columns rounded after the law ran lie between 0.7 and 1.6
@@ -39,7 +42,7 @@ const lawOrder = 12
 type Outside struct {
 	Share float64 `json:"share"` // of the input's variance
 	// Logged is the part of Share that the logged reference and dither
-	// explain; null where neither is logged.
+	// explain; null where neither is logged, or neither moves.
 	Logged *float64 `json:"logged"`
 	// Rounding is the part of Share that the rounding of the columns explains,
 	// if the law saw them before it; it may exceed 1 where the law saw them after.
@@ -74,14 +77,12 @@ func outside(exps []*data.Experiment) Outside {
 		return m
 	}
 	var total float64
-	var reference, dither bool
 	for _, e := range exps {
 		for _, s := range e.Pieces() {
 			total += about(s.U)
-			reference = reference || s.R != nil
-			dither = dither || s.D != nil
 		}
 	}
+	reference, dither := loggable[0].moves(exps), loggable[1].moves(exps)
 	if total == 0 {
 		return Outside{Quiet: true, Words: "the input does not move"}
 	}
@@ -117,12 +118,12 @@ func outside(exps []*data.Experiment) Outside {
 			logged = math.Max(0, 1-less.RSS/law.RSS)
 		}
 		o.Logged = &logged
-		if less != nil && logged >= 0.5 {
+		if less != nil && o.logged() {
 			o.law = less
 		}
 	}
 	switch {
-	case o.Share < quietShare && (o.Logged == nil || *o.Logged < 0.5):
+	case o.Share < quietShare && !o.logged():
 		o.Quiet = true
 		o.Words = fmt.Sprintf("nothing from outside moves the input: the law explains all but %.2g of it", o.Share)
 	case o.Rounding > allRounding && (o.Rounding < tooMuch || o.Share < faintShare) && (o.Logged == nil || *o.Logged*o.Share < quietShare):
@@ -133,12 +134,15 @@ func outside(exps []*data.Experiment) Outside {
 	default:
 		o.Words = fmt.Sprintf("%.0f %% of the input's variance comes from outside the loop", 100*o.Share)
 	}
-	if !o.Quiet {
+	switch {
+	case o.Quiet && (reference || dither):
+		o.Words += fmt.Sprintf("; the logged %s moves, but so regularly that past rows foretell it, or without acting on the input", named(reference, dither))
+	case !o.Quiet:
 		switch {
 		case o.Logged == nil:
 			o.Words += "; what acted is not logged, which a fit can do without"
-		case *o.Logged < 0.5:
-			o.Words += fmt.Sprintf("; the logged reference and dither explain %.0f %% of that", 100**o.Logged)
+		case !o.logged():
+			o.Words += fmt.Sprintf("; the logged %s explains %.0f %% of that", named(reference, dither), 100**o.Logged)
 		default:
 			o.Words += ", from the logged " + named(reference, dither)
 		}
@@ -203,7 +207,7 @@ func named(reference, dither bool) string {
 func refuseQuiet(o Outside) error {
 	return &RefusedError{
 		What: o.Words + ", so the log shows the stopgap law and not the plant",
-		Do:   "log a run with a probe added to the input, or with steps of the reference",
+		Do:   "log a run with a probe of random levels added to the input, or with random steps of the reference",
 	}
 }
 
