@@ -2,7 +2,7 @@ package main
 
 import (
 	"fmt"
-	"strings"
+	"math"
 
 	"github.com/go-gota/gota/dataframe"
 	"github.com/go-gota/gota/series"
@@ -30,24 +30,38 @@ func showAudit(p *page, r *ident.AuditReport, exps []*data.Experiment, rig *data
 	p.item("pairing", r.Pairing.Words)
 	p.item("loop rate", r.LoopRate.Words)
 	p.item("from outside", r.Outside.Words)
+	if text := words.Excitation(r.Excitation, u); text != "" {
+		p.item("excitation", text)
+	}
+	p.item("signal and noise", words.SignalAndNoise(r))
 	if r.Memories > 0 {
 		p.item("length", words.Memories(r.Memories))
 	}
 	if r.Law != nil {
 		p.item("stopgap law", r.Law.Words)
 	}
-	if i := r.Informative; i != nil {
-		p.item("to expect", i.Words)
+	p.item("to expect", words.ToExpect(r))
+	if i := r.Informative; i != nil && i.Lacking {
 		p.item("probe power", i.Advice)
 	}
 	if r.NextStep != "" {
 		p.item("next step", r.NextStep)
 	}
 
+	if c := r.Coherence; c != nil {
+		p.heading("Coherence with " + words.CoherenceWith(c) + ", by band")
+		p.table(coherencePlot(c))
+		wrap(p.w, "  ", words.CoherenceNote(c))
+	}
 	if i := r.Informative; i != nil {
 		p.heading("Where what the log tells of the rightmost pole comes from")
 		p.table(dataframe.LoadRecords(append([][]string{bandHead}, words.Bands(i)...), dataframe.DetectTypes(false), dataframe.DefaultType(series.String)))
 		wrap(p.w, "  ", words.BandNote(i))
+		p.heading(words.NextTests(i))
+		for _, n := range i.NextTests {
+			h, text := words.NextTest(n)
+			p.item(h, text)
+		}
 	}
 
 	p.heading("Columns, rows in use")
@@ -62,8 +76,26 @@ func showAudit(p *page, r *ident.AuditReport, exps []*data.Experiment, rig *data
 	p.heading(fmt.Sprintf("Flaws: %s", map[bool]string{true: "none found", false: fmt.Sprint(len(r.Flaws))}[len(r.Flaws) == 0]))
 	for _, f := range r.Flaws {
 		p.line("  %s", words.Flaw(f, len(r.Logs) > 1))
-		wrap(p.w, "    ", strings.TrimSuffix(f.Detail, ".")+". "+f.Effect+". What to do: "+f.Remedy+".")
+		wrap(p.w, "    ", words.FlawText(f))
 	}
+}
+
+// coherencePlot draws coherence as bars, as wide as the page allows.
+func coherencePlot(c *ident.Coherence) dataframe.DataFrame {
+	const widest, number = 16, len("0.00 ")
+	var rad, hz, in, out, ratio []string
+	widths := make([]int, 2)
+	for _, b := range c.Bands {
+		r, h := words.Range(b.From, b.To)
+		rad, hz, ratio = append(rad, r), append(hz, h), append(ratio, words.SignalToNoise(b))
+		widths[0], widths[1] = max(widths[0], len(r)), max(widths[1], len(h))
+	}
+	bar := min(widest, (pageWidth-len("  ")-widths[0]-widths[1]-2*number-4*len("  ")-len("S/N, dB"))/2)
+	for _, b := range c.Bands {
+		in = append(in, fmt.Sprintf("%.2f %s", b.Input.Coherence, words.Bar(b.Input, bar)))
+		out = append(out, fmt.Sprintf("%.2f %s", b.Output.Coherence, words.Bar(b.Output, bar)))
+	}
+	return columns(">rad/s", rad, ">Hz", hz, "of the input", in, "of the output", out, ">S/N, dB", ratio)
 }
 
 // bandHead names the columns of words.Bands.
@@ -93,6 +125,9 @@ func describe(exps []*data.Experiment, rig *data.Rig) dataframe.DataFrame {
 			continue
 		}
 		m, d := stat.MeanStdDev(x, nil)
+		if math.Abs(m) < 1e-12*d {
+			m = 0
+		}
 		part, column, unit = append(part, q.part), append(column, q.column), append(unit, q.unit)
 		mean, sd, low, high = append(mean, m), append(sd, d), append(low, floats.Min(x)), append(high, floats.Max(x))
 	}

@@ -89,19 +89,66 @@ func logFigures(e *data.Experiment, rig *data.Rig) []figure {
 	}
 }
 
+// stairs lays a figure of each band over its frequencies; from(i) is where band i begins and to(i) where it ends.
+func stairs(n int, from, to, value func(i int) float64) (x, y []float64) {
+	for i := range n {
+		left := from(i)
+		if left == 0 {
+			left = to(i) / 2 // a log axis has no zero
+		}
+		x, y = append(x, left, to(i)), append(y, value(i), value(i))
+	}
+	return x, y
+}
+
+// coherenceFigure draws how much of input and output moves with what acts from outside, by band.
+func coherenceFigure(c *ident.Coherence) figure {
+	p := newPlot("frequency, rad/s", "coherence")
+	logAxis(&p.X)
+	over := func(value func(b ident.CoherenceBand) float64) (x, y []float64) {
+		return stairs(len(c.Bands), func(i int) float64 { return c.Bands[i].From }, func(i int) float64 { return c.Bands[i].To }, func(i int) float64 { return value(c.Bands[i]) })
+	}
+	x, chance := over(func(b ident.CoherenceBand) float64 { return math.Max(b.Input.ByChance, b.Output.ByChance) })
+	shade := faint(stone, 0x30)
+	addBand(p, x, make([]float64, len(x)), chance, shade)
+	_, in := over(func(b ident.CoherenceBand) float64 { return b.Input.Coherence })
+	addLine(p, x, in, otherLine)
+	_, out := over(func(b ident.CoherenceBand) float64 { return b.Output.Coherence })
+	addLine(p, x, out, mainLine)
+	p.X.Min, p.X.Max, p.Y.Min, p.Y.Max = x[0], x[len(x)-1], 0, 1.05
+	return figure{drawn(p, "Coherence of input and output with what acts from outside, by band of frequencies"), "Coherence with " + words.CoherenceWith(c),
+		[]key{{Stroke: mainLine, Label: "of the output"}, {Stroke: otherLine, Label: "of the input"}, {Band: &shade, Label: "no more than chance"}},
+		words.CoherenceMeans(c)}
+}
+
+// noiseFigure draws the output's signal-to-noise ratio by band.
+func noiseFigure(c *ident.Coherence) figure {
+	p := newPlot("frequency, rad/s", "signal to noise, dB")
+	logAxis(&p.X)
+	x, ratio := stairs(len(c.Bands), func(i int) float64 { return c.Bands[i].From }, func(i int) float64 { return c.Bands[i].To }, func(i int) float64 {
+		if r := c.Bands[i].SignalToNoise; r != nil {
+			return 10 * math.Log10(*r)
+		}
+		return math.NaN()
+	})
+	addLevel(p, x[0], x[len(x)-1], 0, limitLine)
+	addLine(p, x, ratio, mainLine)
+	p.X.Min, p.X.Max = x[0], x[len(x)-1]
+	room(&p.Y)
+	return figure{drawn(p, "Power of the output that comes from outside over all other power of it, by band of frequencies"), "Signal to noise in the output",
+		[]key{{Stroke: mainLine, Label: "power from outside over all other power"}, {Stroke: limitLine, Label: "as much of either"}},
+		"No line where there is no more than chance."}
+}
+
 // bandFigure draws how the probe's power and what the log tells of the rightmost pole lie over the bands.
 func bandFigure(i *ident.Informative) figure {
 	p := newPlot("frequency, rad/s", "share, %")
 	logAxis(&p.X)
-	var x, power, tells []float64
-	for k, b := range i.Bands {
-		from := b.From
-		if k == 0 {
-			from = b.To / 2 // a log axis has no zero
-		}
-		x = append(x, from, b.To)
-		power, tells = append(power, 100*b.Power, 100*b.Power), append(tells, 100*b.Information, 100*b.Information)
+	over := func(value func(b ident.Band) float64) (x, y []float64) {
+		return stairs(len(i.Bands), func(k int) float64 { return i.Bands[k].From }, func(k int) float64 { return i.Bands[k].To }, func(k int) float64 { return 100 * value(i.Bands[k]) })
 	}
+	x, power := over(func(b ident.Band) float64 { return b.Power })
+	_, tells := over(func(b ident.Band) float64 { return b.Information })
 	best := i.Bands[i.Best]
 	shade := faint(rust, 0x18)
 	top := 1.1 * math.Max(slices.Max(power), slices.Max(tells))

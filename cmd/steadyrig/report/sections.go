@@ -143,14 +143,19 @@ func logSection(in Input) section {
 		{"Loop rate", a.LoopRate.Words},
 		{"From outside", a.Outside.Words},
 	}
+	if text := words.Excitation(a.Excitation, u); text != "" {
+		s.Facts = append(s.Facts, fact{"Excitation", text})
+	}
+	s.Facts = append(s.Facts, fact{"Signal and noise", words.SignalAndNoise(a)})
 	if a.Memories > 0 {
 		s.Facts = append(s.Facts, fact{"Length", words.Memories(a.Memories)})
 	}
 	if a.Law != nil {
 		s.Facts = append(s.Facts, fact{"Stopgap law", a.Law.Words})
 	}
-	if i := a.Informative; i != nil {
-		s.Facts = append(s.Facts, fact{"To expect", i.Words}, fact{"Probe power", i.Advice})
+	s.Facts = append(s.Facts, fact{"To expect", words.ToExpect(a)})
+	if i := a.Informative; i != nil && i.Lacking {
+		s.Facts = append(s.Facts, fact{"Probe power", i.Advice})
 	}
 	if a.NextStep != "" {
 		s.Facts = append(s.Facts, fact{"Next step", a.NextStep})
@@ -162,12 +167,21 @@ func logSection(in Input) section {
 		}
 		s.Figures = append(s.Figures, logFigures(e, in.Rig)...)
 	}
+	if a.Coherence != nil {
+		s.Figures = append(s.Figures, coherenceFigure(a.Coherence), noiseFigure(a.Coherence))
+	}
 	if i := a.Informative; i != nil {
 		s.Figures = append(s.Figures, bandFigure(i))
 		s.Tables = append(s.Tables, table{
 			Caption: "Where what the log tells of the rightmost pole comes from", Head: []string{"rad/s", "Hz", "Power", "Tells", "Could add", "Worth"},
 			Right: []bool{true, true, true, true, true, true}, Rows: words.Bands(i), Notes: []string{words.BandNote(i)},
 		})
+		next := table{Caption: words.NextTests(i), Head: []string{"Pole", "Change"}, Right: []bool{true, false}}
+		for _, n := range i.NextTests {
+			h, text := words.NextTest(n)
+			next.Rows = append(next.Rows, []string{h, text})
+		}
+		s.Tables = append(s.Tables, next)
 	}
 	flaws := table{Caption: "Flaws found in the log", Head: []string{"Flaw", "Column", "Count", "First line", "What", "Effect"}, Right: []bool{false, false, true, true, false, false}}
 	for _, f := range a.Flaws {

@@ -283,6 +283,11 @@ func Flaw(f ident.Flaw, named bool) string {
 	return text
 }
 
+// FlawText tells in sentences what a flaw is, what was done about it, and what its owner can do.
+func FlawText(f ident.Flaw) string {
+	return sentence(strings.TrimSuffix(f.Detail, ".")) + " " + sentence(f.Effect) + " What to do: " + f.Remedy + "."
+}
+
 // Miss tells the worst figure of what a promise missed and what was asked, each with its unit; both empty for what is
 // kept or not, without a figure.
 func Miss(m design.MissReason, u data.Units) (worst, asked string) {
@@ -405,7 +410,12 @@ func ExactNotes(e *ident.Exact) []string {
 }
 
 // sentence gives a text a capital and a full stop.
-func sentence(s string) string { return strings.ToUpper(s[:1]) + s[1:] + "." }
+func sentence(s string) string {
+	if s == "" {
+		return ""
+	}
+	return strings.ToUpper(s[:1]) + s[1:] + "."
+}
 
 // SteadyGain is the gain at rest, ratio the unit of output over input, or why there is none.
 func SteadyGain(m *ident.Model, ratio string) string {
@@ -456,12 +466,18 @@ func InReach(b design.Bound) string {
 func Bands(i *ident.Informative) [][]string {
 	var rows [][]string
 	for _, b := range i.Bands {
+		rad, hz := Range(b.From, b.To)
 		rows = append(rows, []string{
-			Brief(b.From) + " to " + Brief(b.To), Brief(b.From/(2*math.Pi)) + " to " + Brief(b.To/(2*math.Pi)),
-			part(b.Power), part(b.Information), Brief(100*b.Added) + " %", Brief(b.Worth),
+			rad, hz, part(b.Power), part(b.Information), Brief(100*b.Added) + " %", Brief(b.Worth),
 		})
 	}
 	return rows
+}
+
+// Range is one of frequencies, given in rad/s, in rad/s and in Hz.
+func Range(from, to float64) (rad, hz string) {
+	const turn = 2 * math.Pi
+	return Brief(from) + " to " + Brief(to), Brief(from/turn) + " to " + Brief(to/turn)
 }
 
 // BandNote says what the figures of Bands are.
@@ -469,6 +485,113 @@ func BandNote(i *ident.Informative) string {
 	return "Power: of what moves the input from outside the loop. Tells: of what the log tells of the pole; the rest, " + part(i.Noise) +
 		", rests on the shape assumed for the disturbance. Could add: so much of today's power more, by an even dither in the band, would move the output no more than it moves now. " +
 		"Worth: as a log so many times as long."
+}
+
+// Excitation tells how rich the signals are that act from outside, and what that is good for; empty where there are none.
+func Excitation(list []ident.Excitation, u data.Units) string {
+	var parts []string
+	for _, e := range list {
+		name, unit := "the "+e.Signal, u.Input
+		switch e.Signal {
+		case "reference":
+			unit = u.Output
+		case "law":
+			name = "what the law leaves unexplained of the input"
+		}
+		text := fmt.Sprintf("%s is of order %d", name, e.Order)
+		switch {
+		case e.Order == 0 && e.Noise > 0:
+			text = name + " does not stand out (order 0)"
+		case e.Order == 0:
+			text = name + " does not move (order 0)"
+		case e.AtLeast:
+			text += " at least"
+		}
+		if e.Noise > 0 {
+			text += ", above rounding of " + Unit(Brief(e.Noise), unit)
+		}
+		parts = append(parts, text)
+	}
+	if len(parts) == 0 {
+		return ""
+	}
+	return strings.Join(parts, "; ") + ". A plant of n poles and m zeros takes order n + m + 1"
+}
+
+// Bar draws a share of 1 in so many signs, with a mark where chance may reach.
+func Bar(s ident.Share, width int) string {
+	at := func(x float64) int { return min(width, max(0, int(math.Round(x*float64(width))))) }
+	bar := []byte(strings.Repeat("#", at(s.Coherence)) + strings.Repeat(".", width-at(s.Coherence)))
+	bar[min(width-1, at(s.ByChance))] = '|'
+	return string(bar)
+}
+
+// SignalToNoise is a ratio of powers in dB, "none" where there is none.
+func SignalToNoise(b ident.CoherenceBand) string {
+	if b.SignalToNoise == nil {
+		return "none"
+	}
+	return fmt.Sprintf("%.1f", math.Round(100*math.Log10(*b.SignalToNoise))/10+0) // -0 becomes 0
+}
+
+// CoherenceWith names what coherence is taken with.
+func CoherenceWith(c *ident.Coherence) string {
+	if c.Signals[0] == "law" {
+		return "what the law leaves of the input"
+	}
+	return "the " + strings.Join(c.Signals, " and the ")
+}
+
+// CoherenceMeans says what coherence is and how it was found.
+func CoherenceMeans(c *ident.Coherence) string {
+	return fmt.Sprintf("Coherence: the share of a band's power that moves with %s, bias taken off; as good as %s segments of %s, averaged.",
+		CoherenceWith(c), Brief(c.Segments), Seconds(c.Seconds))
+}
+
+// CoherenceNote says what the figures of a Coherence are.
+func CoherenceNote(c *ident.Coherence) string {
+	return CoherenceMeans(c) + fmt.Sprintf(" | is what unrelated signals exceed in %s of bands. S/N: power of the output that moves with it over all other power of the output; "+
+		"0 dB is as much, 10 dB ten times as much, above 20 dB it may be more than shown; none is no more than chance.", percent(1-c.Level))
+}
+
+// SignalAndNoise tells in which bands the output follows what acts from outside, or why that is not known.
+func SignalAndNoise(a *ident.AuditReport) string {
+	switch {
+	case a.Coherence != nil:
+		return a.Coherence.Words
+	case a.Outside.Quiet:
+		return "not known: nothing acts from outside that input and output could be seen to follow"
+	}
+	return "not known: the log is too short, or in pieces too short, to tell bands of frequencies apart"
+}
+
+// ToExpect tells how well a fit will know the rightmost pole, or why that is not known.
+func ToExpect(a *ident.AuditReport) string {
+	switch {
+	case a.Informative != nil:
+		return a.Informative.Words
+	case a.Verdict == ident.Refused:
+		return "not known: no plant was looked for in this log"
+	}
+	return "not known: a glance finds no plain plant whose parameters the log tells apart"
+}
+
+// NextTests heads the list of next tests.
+func NextTests(i *ident.Informative) string {
+	iv := i.Pole.Interval95
+	return fmt.Sprintf("The rightmost pole after a next test with one change; now ± %s rad/s", Brief((iv.Hi-iv.Lo)/2))
+}
+
+// NextTest is half the interval that a change brings, and what to do for it.
+func NextTest(n ident.NextTest) (halfWidth, text string) {
+	text = n.Words
+	if n.What != "longer" && n.What != "logged" {
+		text += fmt.Sprintf(": as good as a log %s times as long", Brief(n.Worth))
+	}
+	if n.HeldBy != "" {
+		text += "; held back by " + n.HeldBy
+	}
+	return "± " + Brief(n.HalfWidth) + " rad/s", text
 }
 
 // part formats a share among others.
