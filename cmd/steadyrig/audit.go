@@ -18,9 +18,10 @@ func newAudit(a *app) *cobra.Command {
 		Long: `audit checks logs before a fit is believed: the sign of the plant, the
 operating point, whether input and output of a row belong together, the loop
 rate against the likely unstable pole, whether anything moves the rig from
-outside, how well a fit will know that pole and which frequencies lack power for
-it, and flaws column by column. It ends with one next step. --out writes
-audit.json.`,
+outside and how rich that is, how much of input and output follows it by band of
+frequencies, how well a fit will know that pole, which frequencies lack power
+for it, what a next test with one change would bring, and flaws by column. It
+names one next step. --out writes audit.json.`,
 		Example: "  steadyrig audit rig.toml run7.csv",
 		Args:    wants(2, -1, "a rig file and one or more logs"),
 		RunE: func(cmd *cobra.Command, args []string) error {
