@@ -85,6 +85,8 @@ type settings struct {
 	seed  uint64
 	exact bool
 
+	noHistory bool
+
 	inner, outer string // forms asked for
 }
 
