@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"math"
 	"slices"
+	"strings"
 
 	"steadyrig/data"
 )
@@ -102,4 +103,65 @@ func (m *Model) Followed(u data.Units) *Followed {
 		f.Covariance = append(f.Covariance, row)
 	}
 	return f
+}
+
+// enough is the share of plants that must have all of what is followed.
+const enough = 2.0 / 3
+
+// FollowedNames chooses what plants are compared by: the rightmost pole and one gain, if at least two in three plants
+// have them, else what most of them have. It looks at names alone, not at values. Of two gains that are there as often
+// the steady one is taken.
+func FollowedNames(list []*Followed) []string {
+	gain, times := "", make(map[string]int)
+	for _, f := range list {
+		for _, name := range f.Names {
+			times[name]++
+		}
+	}
+	for _, f := range list {
+		for _, name := range f.Names {
+			if strings.HasPrefix(name, "log_") && times[name] > times[gain] {
+				gain = name
+			}
+		}
+	}
+	var best []string
+	most := 0
+	for _, names := range [][]string{{"pole_re", "pole_im", gain}, {"pole_re", gain}, {gain}, {"pole_re", "pole_im"}, {"pole_re"}} {
+		n := 0
+		for _, f := range list {
+			if !slices.ContainsFunc(names, func(name string) bool { return !slices.Contains(f.Names, name) }) {
+				n++
+			}
+		}
+		if n > most {
+			best, most = names, n
+		}
+		if float64(n) >= enough*float64(len(list)) {
+			break
+		}
+	}
+	return best
+}
+
+// Pick returns the values of names and their covariance; nil where one of them is missing.
+func (f *Followed) Pick(names []string) *Followed {
+	p := &Followed{Names: names}
+	var at []int
+	for _, name := range names {
+		i := slices.Index(f.Names, name)
+		if i < 0 {
+			return nil
+		}
+		at = append(at, i)
+		p.Values = append(p.Values, f.Values[i])
+	}
+	for _, i := range at {
+		var row []float64
+		for _, j := range at {
+			row = append(row, f.Covariance[i][j])
+		}
+		p.Covariance = append(p.Covariance, row)
+	}
+	return p
 }

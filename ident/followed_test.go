@@ -114,3 +114,27 @@ func TestFollowedLeavesOut(t *testing.T) {
 		t.Errorf("a model without a plant: followed %+v", got)
 	}
 }
+
+// What most plants have is compared, the pole and the steady gain where there is a choice.
+func TestFollowedNames(t *testing.T) {
+	of := func(names ...string) *Followed { return &Followed{Names: names} }
+	all, lead := of("pole_re", "log_gain -", "log_lead 2"), of("pole_re", "log_lead 2")
+	pair, gain := of("pole_re", "pole_im", "log_gain"), of("log_lead 2")
+	for _, c := range []struct {
+		name string
+		list []*Followed
+		want []string
+	}{
+		{"all alike", []*Followed{all, all}, []string{"pole_re", "log_gain -"}},
+		{"one without a steady gain", []*Followed{all, lead, all}, []string{"pole_re", "log_lead 2"}},
+		{"pairs", []*Followed{pair, pair, pair, all}, []string{"pole_re", "pole_im", "log_gain"}},
+		{"a pair among real poles", []*Followed{all, all, all, pair}, []string{"pole_re", "log_gain -"}},
+		{"poles seldom", []*Followed{gain, gain, lead}, []string{"log_lead 2"}},
+		{"half of each", []*Followed{pair, all}, []string{"pole_re"}},
+		{"nothing", nil, nil},
+	} {
+		if got := FollowedNames(c.list); !slices.Equal(got, c.want) {
+			t.Errorf("%s: %q, want %q", c.name, got, c.want)
+		}
+	}
+}

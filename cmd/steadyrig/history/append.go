@@ -11,14 +11,9 @@ import (
 // Append adds entries at the end of the file, which it makes where there is none, and returns once they are on the
 // disk. Only Schema is filled in.
 func Append(path string, entries ...Entry) (err error) {
-	var text []byte
-	for _, e := range entries {
-		e.Schema = Schema
-		line, err := json.Marshal(e)
-		if err != nil {
-			return fmt.Errorf("encoding an entry: %w", err)
-		}
-		text = append(append(text, line...), '\n')
+	text, err := encode(entries)
+	if err != nil {
+		return err
 	}
 	f, err := os.OpenFile(path, os.O_RDWR|os.O_CREATE|os.O_APPEND, 0o644)
 	if err != nil {
@@ -39,6 +34,20 @@ func Append(path string, entries ...Entry) (err error) {
 		return err
 	}
 	return f.Sync()
+}
+
+// encode is entries as lines.
+func encode(entries []Entry) ([]byte, error) {
+	var text []byte
+	for _, e := range entries {
+		e.Schema = Schema
+		line, err := json.Marshal(e)
+		if err != nil {
+			return nil, fmt.Errorf("encoding an entry: %w", err)
+		}
+		text = append(append(text, line...), '\n')
+	}
+	return text, nil
 }
 
 // cutOff reports whether the last line of a file does not end: its writer was stopped.

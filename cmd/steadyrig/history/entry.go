@@ -2,6 +2,7 @@ package history
 
 import (
 	"cmp"
+	"encoding/json"
 	"math"
 	"strings"
 
@@ -36,6 +37,9 @@ type Entry struct {
 	Plant       *Plant   `json:"plant,omitempty"` // of a fit, and of a recheck's new logs; missing where there is none
 	Loops       *Loops   `json:"loops,omitempty"`
 	Changed     *Changed `json:"changed,omitempty"`
+
+	Line int             `json:"-"` // where it was read, from 1
+	Text json.RawMessage `json:"-"` // as it was read, unknown fields included
 }
 
 // A Log is told by its bytes, whatever it is called.
@@ -53,15 +57,15 @@ type Plant struct {
 	Followed     *ident.Followed `json:"followed,omitempty"`
 }
 
-// A Pole with its deviations and 95 % intervals, rad/s.
+// A Pole with its deviations and 95 % intervals, rad/s. What a real pole has no use for is left out.
 type Pole struct {
-	Re                  float64        `json:"re"`
-	Im                  float64        `json:"im"`
-	ReSD                float64        `json:"re_sd"`
-	ImSD                float64        `json:"im_sd"`
-	Re95                ident.Interval `json:"re_95"`
-	Im95                ident.Interval `json:"im_95"`
-	ProbabilityUnstable float64        `json:"probability_unstable"`
+	Re                  float64         `json:"re"`
+	Im                  float64         `json:"im,omitempty"`
+	ReSD                float64         `json:"re_sd"`
+	ImSD                float64         `json:"im_sd,omitempty"`
+	Re95                ident.Interval  `json:"re_95"`
+	Im95                *ident.Interval `json:"im_95,omitempty"`
+	ProbabilityUnstable float64         `json:"probability_unstable"`
 }
 
 // Gain is the steady gain ("dc") or, of a plant that integrates, the leading coefficient of the numerator
@@ -102,7 +106,11 @@ func OfModel(m *ident.Model, u data.Units, sum string) Entry {
 	}
 	e.Plant = &Plant{Poles: []Pole{}, NoiseSD: m.Noise.SD, SamplePeriod: m.Noise.SamplePeriod, Followed: m.Followed(u)}
 	for _, r := range m.Poles {
-		e.Plant.Poles = append(e.Plant.Poles, Pole{r.Re, r.Im, r.ReSD, r.ImSD, r.Re95, r.Im95, r.ProbabilityUnstable})
+		p := Pole{Re: r.Re, Im: r.Im, ReSD: r.ReSD, ImSD: r.ImSD, Re95: r.Re95, ProbabilityUnstable: r.ProbabilityUnstable}
+		if r.Im95 != (ident.Interval{}) {
+			p.Im95 = &r.Im95
+		}
+		e.Plant.Poles = append(e.Plant.Poles, p)
 	}
 	of, g := "dc", m.Gain.DC
 	if g == nil {
