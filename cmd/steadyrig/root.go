@@ -63,6 +63,7 @@ func newRoot(a *app) *cobra.Command {
 		newVerify(a),
 		newSimulate(a),
 		newDemo(a),
+		newHistory(a),
 	)
 	return root
 }

@@ -117,3 +117,6 @@ func reading(f *ident.Followed, names []string) (fit.Reading, error) {
 
 // Time is when the entry was made.
 func (e *Entry) Time() (time.Time, error) { return time.Parse(time.RFC3339, e.Made) }
+
+// Day is the date on which the entry was made, where it was made.
+func (e *Entry) Day() string { return e.Made[:len("2006-01-02")] }
