@@ -193,7 +193,7 @@ func showHistory(p *page, entries []history.Entry, t history.Tested) {
 	last := entries[len(entries)-1]
 	word, meaning := t.Verdict()
 	p.verdict(word, last.Rig+": "+meaning)
-	wrap(p.w, "", t.Promise()+" "+history.Counted)
+	wrap(p.w, "", strings.Join(t.Notes(), " "))
 	if len(t.Changes) > 0 {
 		p.heading("Changes")
 		var since, what, before, after, moved []string

@@ -16,6 +16,7 @@ type Tested struct {
 	Level    float64    `json:"level"`
 	By       []string   `json:"by"` // names of what is compared, see ident.Followed
 	Evidence []Evidence `json:"evidence"`
+	Lacking  int        `json:"lacking"` // logs that count but do not tell all of By
 	Changes  []Change   `json:"changes"`
 }
 
@@ -63,6 +64,7 @@ func Test(entries []Entry) Tested {
 			t.Evidence = append(t.Evidence, counted[i])
 		}
 	}
+	t.Lacking = len(counted) - len(readings)
 	if len(readings) == 0 {
 		return t
 	}

@@ -313,22 +313,32 @@ func TestWhatCounts(t *testing.T) {
 	for _, e := range got.Evidence {
 		pairs = append(pairs, [2]int{e.Line, e.Plant})
 	}
-	if want := [][2]int{{1, 6}, {3, 3}, {7, 7}}; !slices.Equal(pairs, want) {
-		t.Errorf("evidence %v, want %v", pairs, want)
+	if want := [][2]int{{1, 6}, {3, 3}, {7, 7}}; !slices.Equal(pairs, want) || got.Lacking != 0 {
+		t.Errorf("evidence %v, %d lacking, want %v and none", pairs, got.Lacking, want)
+	}
+	c.Plant.Followed = &ident.Followed{Names: []string{"pole_re"}, Values: []float64{36}, Covariance: [][]float64{{1}}}
+	if got := Test(numbered([]Entry{a, b, c})); len(got.Evidence) != 2 || got.Lacking != 1 {
+		t.Errorf("%d logs count and %d lack the gain, want 2 and 1", len(got.Evidence), got.Lacking)
 	}
 	if got := Test(nil); len(got.Changes) != 0 {
 		t.Errorf("an empty history changed: %+v", got)
 	}
 }
 
-// A log fitted a hundred times is no evidence of a change, however far the second log lies by chance.
+// A log fitted a hundred times is no more evidence of a change than fitted once.
 func TestRepeatsAreNoEvidence(t *testing.T) {
-	list := []Entry{entry("a.csv", 36, 1.8)}
+	list := drawn(5, 2, 5, 0)
 	for range 100 {
-		list = append(list, entry("b.csv", 36.5, 1.81)) // 1.8 joint deviations away
+		list = append(list, entry("far.csv", 36.5, 1.81)) // 2.5 deviations away
 	}
-	if got := Test(numbered(list)); len(got.Changes) > 0 || len(got.Evidence) != 2 {
-		t.Errorf("%+v", got)
+	if got := Test(numbered(list)); len(got.Changes) > 0 || len(got.Evidence) != 6 {
+		t.Errorf("%d logs count, changes %+v", len(got.Evidence), got.Changes)
+	}
+	for i := range list {
+		list[i].Logs = []Log{{"", strconv.Itoa(i)}}
+	}
+	if got := Test(numbered(list)); len(got.Changes) != 1 {
+		t.Errorf("a hundred logs make changes %+v, want one", got.Changes)
 	}
 }
 

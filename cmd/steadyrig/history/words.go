@@ -87,10 +87,26 @@ func (t Tested) Verdict() (word, meaning string) {
 	}
 }
 
-// Promise says what a mark is worth.
-func (t Tested) Promise() string {
-	return fmt.Sprintf("With a probability of at least %g %% no change is marked that did not happen, however long the history grows and however often it is looked at, if the intervals of the logs hold what they say.", 100*(1-t.Level))
-}
+// counted says which entries are evidence.
+const counted = "A log counts once, by the plant that was fitted to it last. Pooled logs that counted before, designs and refused models do not count."
 
-// Counted says which entries are evidence.
-const Counted = "A log counts once, by the plant that was fitted to it last. Pooled logs that counted before, designs and refused models do not count."
+// Notes say what marks are worth and what they rest on, a sentence or two each.
+func (t Tested) Notes() []string {
+	notes := []string{
+		fmt.Sprintf("With a probability of at least %g %% no change is marked that did not happen, however long the history grows and however often it is looked at, if the intervals of the logs hold what they say.", 100*(1-t.Level)),
+		counted,
+	}
+	weak := 0
+	for _, e := range t.Evidence {
+		if e.Entry.Verdict == ident.Weak {
+			weak++
+		}
+	}
+	if weak > 0 {
+		notes = append(notes, fmt.Sprintf("%s of %d gave a weak model: its intervals may be too narrow, and marks that rest on it are less sure.", words.Count(weak, "log"), len(t.Evidence)))
+	}
+	if t.Lacking > 0 {
+		notes = append(notes, fmt.Sprintf("%s left out of the test: not all of %s can be told from it.", words.Count(t.Lacking, "log"), t.Compared()))
+	}
+	return notes
+}

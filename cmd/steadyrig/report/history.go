@@ -46,7 +46,7 @@ func WriteHistory(w io.Writer, in HistoryInput) error {
 	if n := len(in.Bad); n > 0 {
 		v.Facts = append(v.Facts, fact{"Left out", words.Count(n, "line") + " that cannot be read, the first of them line " + fmt.Sprint(in.Bad[0].Line) + ": " + in.Bad[0].Why})
 	}
-	course := section{ID: "course", Title: "Pole and gain", Lead: []string{in.Tested.Promise(), history.Counted}}
+	course := section{ID: "course", Title: "Pole and gain", Lead: in.Tested.Notes()}
 	for _, c := range in.Tested.Courses(drawnLogs) {
 		if lo, hi := c.Frame(); len(c.Logs) > 1 && hi > lo {
 			course.Figures = append(course.Figures, courseFigure(c, in.Tested.Changes))
