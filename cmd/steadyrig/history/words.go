@@ -92,6 +92,9 @@ const counted = "A log counts once, by the plant that was fitted to it last. Poo
 
 // Notes say what marks are worth and what they rest on, a sentence or two each.
 func (t Tested) Notes() []string {
+	if len(t.Evidence) < 2 {
+		return []string{counted}
+	}
 	notes := []string{
 		fmt.Sprintf("With a probability of at least %g %% no change is marked that did not happen, however long the history grows and however often it is looked at, if the intervals of the logs hold what they say.", 100*(1-t.Level)),
 		counted,
