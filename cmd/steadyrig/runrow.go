@@ -285,12 +285,13 @@ func testColumns(u data.Units) []testColumn {
 // sheetOf makes the run table.
 func sheetOf(tests []test, u data.Units) *data.Sheet {
 	var heads []data.SheetColumn
-	for _, c := range testColumns(u) {
+	columns := testColumns(u)
+	for _, c := range columns {
 		heads = append(heads, c.SheetColumn)
 	}
 	rows := make([][]string, len(tests))
 	for i := range tests {
-		for _, c := range testColumns(u) {
+		for _, c := range columns {
 			rows[i] = append(rows[i], c.of(&tests[i]))
 		}
 	}

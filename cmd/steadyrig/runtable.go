@@ -410,6 +410,11 @@ func showTable(p *page, sheet *data.Sheet, tests []test, chosen bool) {
 			shown[j] = true
 		}
 	}
+	if !slices.ContainsFunc(sheet.Columns, func(c data.SheetColumn) bool { return c.Unit != "" && shown[slices.Index(sheet.Columns, c)] }) {
+		for i := 1; i < len(pairs); i += 2 {
+			pairs[i] = pairs[i].([]string)[1:] // no line of units
+		}
+	}
 	if len(pairs) > 0 {
 		p.line("")
 		p.table(columns(pairs...))
