@@ -289,8 +289,12 @@ func (s *Sheet) Join(other *Sheet, on string) (joined *Sheet, alone []string, er
 			return nil, nil, fmt.Errorf("%s: column %s would stand there twice; rename it", other.label, quote(columns[j].Name))
 		}
 	}
+	wanted := map[string]bool{} // our keys, true: with a row there
+	for _, key := range have {
+		wanted[key] = false
+	}
 	var rows [][]string
-	seen := map[string]bool{"": true}
+	seen := map[string]bool{}
 	for i, row := range other.Rows() {
 		if keys[i] == "" {
 			continue
@@ -299,17 +303,20 @@ func (s *Sheet) Join(other *Sheet, on string) (joined *Sheet, alone []string, er
 			return nil, nil, fmt.Errorf("%s: %s stands twice in column %s; a key wants one row", other.label, quote(keys[i]), quote(theirs))
 		}
 		seen[keys[i]] = true
-		rows = append(rows, row)
-		if !slices.Contains(have, keys[i]) {
+		if _, ours := wanted[keys[i]]; !ours {
 			alone = append(alone, keys[i])
+			continue
 		}
+		wanted[keys[i]] = true
+		rows = append(rows, row)
 	}
 	// A key that the other sheet lacks gets an empty row there: gota would write NaN.
-	for i, key := range have {
-		if (key == "" || !seen[key]) && slices.Index(have, key) == i {
+	for _, key := range have {
+		if !wanted[key] {
 			row := make([]string, len(columns))
 			row[other.index(theirs)] = key
 			rows = append(rows, row)
+			wanted[key] = true
 		}
 	}
 	both := s.frame.LeftJoin(NewSheet(columns, rows).frame, ours)
