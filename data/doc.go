@@ -10,6 +10,7 @@
 //  3. [ReadLog] reads one log as the rig file says and returns an [Experiment]. Long logs stream: only the columns that
 //     the rig file names are kept.
 //  4. [Header] describes a log's columns without a rig file, for the first draft of one.
+//  5. [ReadSheet] reads a table that somebody keeps of tests, to be selected, sorted and joined as a [Sheet].
 //
 // # How a log may be written
 //

@@ -6,9 +6,14 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"math"
+	"regexp"
 	"runtime"
+	"slices"
+	"strconv"
 	"strings"
 	"testing"
+	"time"
 )
 
 // checkParseError fails unless err is a ParseError of one line that says where.
@@ -97,6 +102,140 @@ func FuzzReadLog(f *testing.F) {
 		}
 		if _, err := Header(bytes.NewReader(text), "log.csv"); err != nil {
 			checkParseError(t, err, "log.csv: ")
+		}
+	})
+}
+
+// A log is read under any layout that a rig file may give.
+func FuzzLayout(f *testing.F) {
+	plain := newPlainLog(70).csv()
+	spaced := "! rig\n" + strings.ReplaceAll(strings.ReplaceAll(plain, ",", "|"), ".", ",")
+	for _, c := range []struct {
+		text, delimiter, mark, comment string
+		names, units, numbers          int
+	}{
+		{plain, "", "", "", -1, -1, 0}, {plain, ",", ".", "#", 1, 0, 2}, {spaced, "|", ",", "!", 2, -1, 3}, {strings.ReplaceAll(plain, ",", "\t"), "tab", ".", "", 1, -1, 2},
+		{plain, "blanks", ",", "é", 0, 0, 5}, {plain, ";", ",", "\x00", 499, 500, 500}, {plain, ",", ",", "t", 1, 1, 1},
+	} {
+		f.Add([]byte(c.text), c.delimiter, c.mark, c.comment, c.names, c.units, c.numbers)
+	}
+	rig := plainRig()
+	rig.lines = nil // else what they name is taken for given, and for wrong
+	if err := rig.Validate(); err != nil {
+		f.Fatal(err)
+	}
+	f.Fuzz(func(t *testing.T, text []byte, delimiter, mark, comment string, names, units, numbers int) {
+		g := *rig
+		g.Layout = Layout{Delimiter: delimiter, DecimalMark: mark, Comment: comment, NumbersLine: numbers}
+		if names >= 0 {
+			g.Layout.NamesLine = &names
+		}
+		if units >= 0 {
+			g.Layout.UnitsLine = &units
+		}
+		if g.Validate() != nil {
+			return
+		}
+		exp, err := ReadLog(bytes.NewReader(text), "log.csv", &g)
+		if err != nil {
+			checkParseError(t, err, "log.csv: ")
+			return
+		}
+		checkExperiment(t, exp)
+	})
+}
+
+// What the standard library takes for a number, the scanner does, to the last bit.
+func FuzzNumber(f *testing.F) {
+	for _, s := range []string{"0", "-0.0", "1e5", "12.375", ".5", "5.", "+1", "1e-400", "-1e999", "123456789012345678901234567890e-20", "9007199254740993", "1e23", "2.2250738585072011e-308"} {
+		f.Add(s)
+	}
+	plain := regexp.MustCompile(`^[-+]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][-+]?[0-9]+)?$`)
+	f.Fuzz(func(t *testing.T, text string) {
+		x, n := scanNumber([]byte(text), '.')
+		if n < 0 || n > len(text) {
+			t.Fatalf("%d bytes of %q", n, text)
+		}
+		if !plain.MatchString(text) {
+			return
+		}
+		if want, _ := strconv.ParseFloat(text, 64); n != len(text) || math.Float64bits(x) != math.Float64bits(want) {
+			t.Fatalf("%q is %v of %d bytes, want %v", text, x, n, want)
+		}
+	})
+}
+
+// What the standard library takes for a stamp of RFC 3339, the clock does, and to the same moment.
+func FuzzStamp(f *testing.F) {
+	for _, s := range []string{"2025-12-17T20:58:11.705923+01:00", "2025-03-30 01:59:59", "0000-01-01T00:00:00Z", "2000-02-29T23:59:60z", "23:59:59,5", "2025/01/02 24:00", "9999-12-31T23:59:59.999999999-23:59", "1764512345678901234", "1.5"} {
+		f.Add(s, "ms")
+		f.Add(s, "")
+	}
+	f.Fuzz(func(t *testing.T, text, unit string) {
+		if len(text) == 0 {
+			return // cells without anything are no stamps to the reader
+		}
+		var k clock
+		if k.start([]byte(text), '.', unit) {
+			if x, ok := k.read([]byte(text), '.'); ok && (math.IsNaN(x) || math.IsInf(x, 0)) {
+				t.Fatalf("%q in %q is %v", text, unit, x)
+			}
+		}
+		want, err := time.Parse(time.RFC3339Nano, text)
+		if err != nil {
+			return
+		}
+		s, part, ok := scanStamp([]byte(text))
+		// A nanosecond: the library cuts what is finer.
+		if !ok || s != want.Unix() || math.Abs(part-1e-9*float64(want.Nanosecond())) > 1.001e-9 {
+			t.Fatalf("%q is %d s and %v (%v), want %d s and %d ns", text, s, part, ok, want.Unix(), want.Nanosecond())
+		}
+	})
+}
+
+// A table that is read, selected, sorted and joined with itself stays a table, and what is written of it reads as the same.
+func FuzzSheet(f *testing.F) {
+	for _, where := range []string{"payload > 1.5", `operator has "b"`, `"payload" != ""`, "file=run1.csv", "payload >= 1e999", `x = "`, "a has"} {
+		f.Add([]byte(tests), where, "file, -payload", "-payload,operator", "file")
+	}
+	f.Add([]byte("\xef\xbb\xbfa;b c;\n1,5;\"x\n;y\";\n;;\n"), `"b c" has x`, `"b c"`, "- a", "a=b c")
+	f.Add([]byte("a\tb\n\x00\t\x1b[2J\n"), "a = NaN", "a,a", "b,b,b", "b")
+	f.Fuzz(func(t *testing.T, text []byte, where, list, by, on string) {
+		s, err := ReadSheet(bytes.NewReader(text), "record.csv")
+		if err != nil {
+			checkParseError(t, err, "record.csv: ")
+			return
+		}
+		check := func(got *Sheet, err error) {
+			if err != nil {
+				if strings.ContainsAny(err.Error(), "\n\r\x00\x1b") {
+					t.Fatalf("no error of one line: %q", err)
+				}
+				return
+			}
+			if len(got.Rows()) > 0 && len(got.Rows()[0]) != len(got.Columns) {
+				t.Fatalf("%d cells for %d columns", len(got.Rows()[0]), len(got.Columns))
+			}
+		}
+		some, err := s.Where(where)
+		check(some, err)
+		check(s.Select(list))
+		sorted, err := s.Sort(by)
+		check(sorted, err)
+		if err == nil && len(sorted.Rows()) != len(s.Rows()) {
+			t.Fatal("rows lost in sorting")
+		}
+		both, _, err := s.Join(s, on)
+		check(both, err)
+		if err == nil && len(both.Rows()) != len(s.Rows()) {
+			t.Fatal("rows lost in joining")
+		}
+		if strings.ContainsAny(s.text(), ";\t") || len(s.Columns) == 1 {
+			return // such names could be told from their delimiters no more, and a row of one empty cell is no row
+		}
+		again, err := ReadSheet(strings.NewReader(s.text()), "again.csv")
+		if err != nil || again.text() != s.text() || !slices.Equal(again.Columns, s.Columns) {
+			t.Fatalf("round trip differs (%v):\n%q\n%q", err, s.text(), again.text())
 		}
 	})
 }

@@ -99,8 +99,9 @@ func civilDays(year, month, day int) int64 {
 		year--
 		month += 12
 	}
+	year += 400 // the winter of year 0 belongs to year -1, and division cuts towards zero
 	days := 365*year + year/4 - year/100 + year/400
-	return int64(days + (153*(month-3)+2)/5 + day - 1 - 719468)
+	return int64(days + (153*(month-3)+2)/5 + day - 1 - 719468 - 146097)
 }
 
 // A clock turns the cells of the time column into s since its first stamp, or into s as they stand where they are

@@ -7,6 +7,7 @@ import (
 	"fmt"
 	"io"
 	"math"
+	"slices"
 
 	"steadyrig/fit/lti"
 )
@@ -286,12 +287,21 @@ func (e *LoopsError) Error() string {
 
 func (e *LoopsError) Unwrap() error { return e.Err }
 
+// What a loops file may hold; looking at it costs the cube of an order.
+const (
+	largestFile  = 16 << 20 // bytes
+	largestOrder = 100      // of one controller
+)
+
 // ReadLoops reads loops.json, the tool's or the user's own. A block may be given by its continuous form alone: it
 // is then mapped by Tustin's rule and a warning in the result says so; Verify chooses a mapping by checking. The file's name serves the messages.
 func ReadLoops(r io.Reader, name string) (*Loops, error) {
-	text, err := io.ReadAll(r)
+	text, err := io.ReadAll(io.LimitReader(r, largestFile+1))
 	if err != nil {
 		return nil, &LoopsError{File: name, Err: err}
+	}
+	if len(text) > largestFile {
+		return nil, &LoopsError{File: name, Err: fmt.Errorf("longer than %d MB; is this a loops file?", largestFile>>20)}
 	}
 	l := new(Loops)
 	if err := json.Unmarshal(text, l); err != nil {
@@ -425,6 +435,13 @@ func (l *Loops) complete(file string) error {
 
 // complete validates one block and makes its discrete form where it has the continuous one alone.
 func (b *Block) complete(period float64) (err error) {
+	most := max(len(b.Discrete.Numerator), len(b.Discrete.Denominator))
+	if b.Continuous != nil {
+		most = max(most, len(b.Continuous.Numerator), len(b.Continuous.Denominator))
+	}
+	if most > largestOrder+1 {
+		return fmt.Errorf("a controller of order %d; want %d at the most", most-1, largestOrder)
+	}
 	if len(b.Discrete.Numerator) == 0 && len(b.Discrete.Denominator) == 0 && b.Continuous != nil {
 		if b.Discrete, err = b.tustin(period); err != nil {
 			return err
@@ -435,22 +452,23 @@ func (b *Block) complete(period float64) (err error) {
 	if len(d.Numerator) == 0 || len(d.Denominator) == 0 {
 		return errors.New("want discrete numerator and denominator in powers of z^-1, one of them is empty")
 	}
-	for _, v := range append(append([]float64(nil), d.Numerator...), d.Denominator...) {
-		if math.IsNaN(v) || math.IsInf(v, 0) {
-			return fmt.Errorf("coefficient %v is not a finite number", v)
-		}
-	}
-	if lead := d.Denominator[0]; lead == 0 {
+	switch lead := d.Denominator[0]; lead {
+	case 0:
 		return errors.New("the first coefficient of the discrete denominator is zero; it multiplies the present output and must not be")
-	} else if lead != 1 {
-		num, den := make([]float64, len(d.Numerator)), make([]float64, len(d.Denominator))
-		for i, v := range d.Numerator {
-			num[i] = v / lead
+	case 1:
+	default:
+		d = Rational{slices.Clone(d.Numerator), slices.Clone(d.Denominator)}
+		for _, p := range [][]float64{d.Numerator, d.Denominator} {
+			for i := range p {
+				p[i] /= lead
+			}
 		}
-		for i, v := range d.Denominator {
-			den[i] = v / lead
+		b.Discrete = d
+	}
+	for _, v := range slices.Concat(d.Numerator, d.Denominator) {
+		if math.IsNaN(v) || math.IsInf(v, 0) {
+			return fmt.Errorf("coefficient %v, over the denominator's first one, is not a finite number", v)
 		}
-		b.Discrete = Rational{num, den}
 	}
 	return nil
 }

@@ -334,6 +334,9 @@ func (m *Model) clipped(exps []*data.Experiment) {
 var doubtfulFlaws = []string{data.FlawClocks, data.FlawTelemetry, data.FlawRate, data.FlawDeadZone, data.FlawStiction, data.FlawCycle,
 	data.FlawPeriodic, data.FlawAlias, data.FlawFew}
 
+// Doubtful tells whether a linear plant fitted to the log inherits the flaw, so that the model is weak.
+func (f Flaw) Doubtful() bool { return slices.Contains(doubtfulFlaws, f.Name) }
+
 // doubt calls a model weak where a log has such a flaw.
 func (m *Model) doubt(exps []*data.Experiment) {
 	for _, e := range exps {

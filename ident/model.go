@@ -349,12 +349,21 @@ func (m *Model) Write(w io.Writer) error {
 	return err
 }
 
+// What a model file may hold; looking at it costs the cube of an order.
+const (
+	largestFile  = 16 << 20 // bytes
+	largestOrder = 50       // of plant and noise
+)
+
 // ReadModel reads a model file and checks that its parts fit together. name
 // is the file's, for messages.
 func ReadModel(r io.Reader, name string) (*Model, error) {
-	b, err := io.ReadAll(r)
+	b, err := io.ReadAll(io.LimitReader(r, largestFile+1))
 	if err != nil {
 		return nil, fmt.Errorf("reading %q: %w", name, err)
+	}
+	if len(b) > largestFile {
+		return nil, fmt.Errorf("%s: longer than %d MB: is this a model file?", name, largestFile>>20)
 	}
 	m := new(Model)
 	if err := json.Unmarshal(b, m); err != nil {
@@ -394,7 +403,10 @@ func (m *Model) validate() error {
 		return nil
 	}
 	if len(num) == 0 || len(den) < 2 || den[0] != 1 || len(num) >= len(den) {
-		return fmt.Errorf("plant has numerator %v and denominator %v, want a denominator that starts with 1 and is longer than the numerator", num, den)
+		return fmt.Errorf("plant has a numerator of %d and a denominator of %d coefficients, want a denominator that starts with 1 and is longer than the numerator", len(num), len(den))
+	}
+	if n := max(len(den), len(m.Noise.Numerator), len(m.Noise.Denominator)) - 1; n > largestOrder {
+		return fmt.Errorf("plant or noise is of order %d, want %d at the most", n, largestOrder)
 	}
 	for _, v := range append(append([]float64{m.Plant.Delay, m.Noise.SD, m.Noise.SamplePeriod}, num...), den...) {
 		if math.IsNaN(v) || math.IsInf(v, 0) {
@@ -454,20 +466,10 @@ func (m *Model) validate() error {
 			}
 		}
 	}
-	for _, name := range m.Plant.Parameters {
-		var index int
-		switch {
-		case name == "delay":
-		case len(name) > 1 && name[0] == 'b':
-			if _, err := fmt.Sscanf(name, "b%d", &index); err != nil || index < 0 || index >= len(num) {
-				return fmt.Errorf("parameter %q is not in the numerator", name)
-			}
-		case len(name) > 1 && name[0] == 'a':
-			if _, err := fmt.Sscanf(name, "a%d", &index); err != nil || index < 1 || index >= len(den) {
-				return fmt.Errorf("parameter %q is not in the denominator", name)
-			}
-		default:
-			return fmt.Errorf("parameter %q is none of b0 …, a1 …, delay", name)
+	known := append(parameterNames(len(num)-1, len(den)-1), "delay")
+	for i, name := range m.Plant.Parameters {
+		if !slices.Contains(known, name) || slices.Contains(m.Plant.Parameters[:i], name) {
+			return fmt.Errorf("parameter %q is none of b0 to b%d, a1 to a%d and delay, each once", name, len(num)-1, len(den)-1)
 		}
 	}
 	return nil

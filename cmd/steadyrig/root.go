@@ -59,6 +59,7 @@ func newRoot(a *app) *cobra.Command {
 		newRun(a),
 		newAudit(a),
 		newFit(a),
+		newTable(a),
 		newDesign(a),
 		newVerify(a),
 		newSimulate(a),

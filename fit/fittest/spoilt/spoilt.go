@@ -298,6 +298,17 @@ func Ways() []Way {
 	}
 }
 
+// Named tells whether what reading made of the log, its flaws or its error, names what was done to it.
+func (w Way) Named(e *data.Experiment, err error) bool {
+	switch {
+	case err != nil:
+		return w.Want != "" && strings.Contains(err.Error(), w.Want)
+	case w.Want == "":
+		return len(e.Flaws) == 0
+	}
+	return slices.ContainsFunc(e.Flaws, func(f data.Flaw) bool { return f.Name == w.Want })
+}
+
 // Make spoils a log of the rig flap, of so many rows, as seed draws it: log and rig file. The same seed gives the same bytes.
 func (w Way) Make(rows int, seed uint64) (log, file string, err error) {
 	flap, _ := demorig.ByName("flap")
