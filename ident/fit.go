@@ -112,6 +112,7 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 		return m, err
 	}
 	m.describe(p, f, rig)
+	m.conditions(p, recs, f, rig)
 	if err := m.loosen(p, f, ranked); err != nil {
 		return m, err
 	}
@@ -145,7 +146,8 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 	}
 	m.judge(ranked, out, f)
 	if opt.known != nil {
-		m.outgrown()
+		m.fitted = &refitted{p: p, f: f, recs: recs}
+		m.outgrown(tried)
 	}
 	m.doubt(exps)
 	if err := m.finite(); err != nil {

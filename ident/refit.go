@@ -154,15 +154,26 @@ func against(tried []*candidate) []Structure {
 	return list
 }
 
-// outgrown says where another structure fits clearly better than the earlier one.
-func (m *Model) outgrown() {
-	for _, s := range m.Evidence.Structures {
-		if s.BIC < -clearly {
-			m.Verdict = Weak
-			other := structure{s.Poles, s.Zeros, s.Colour, s.Delay != m.Plant.Delay, s.Integrators}
-			m.Warnings = append(m.Warnings, fmt.Sprintf("the log asks for another structure than the earlier model has: %s instead of %s fits better by %.0f in BIC; fit the log by itself",
-				other, m.form(), -s.BIC))
-			return
-		}
+// outgrown says where another structure fits clearly better than the earlier one,
+// which is the first that was tried.
+func (m *Model) outgrown(tried []*candidate) {
+	if len(tried) > 1 && tried[1].bic < tried[0].bic {
+		m.fitted.other, m.fitted.behind = &tried[1].structure, tried[0].bic-tried[1].bic
 	}
+	if m.fitted.behind > clearly {
+		m.Verdict = Weak
+		m.Warnings = append(m.Warnings, fmt.Sprintf("the log asks for another structure than the earlier model has: %s instead of %s fits better by %.0f in BIC",
+			tried[1].structure, tried[0].structure, tried[0].bic-tried[1].bic))
+	}
+}
+
+// refitted is what a refit was made with.
+type refitted struct {
+	p    *fit.Predictor
+	f    *fit.Prediction
+	recs []fit.Record
+	// other is the structure that fits best where that is not the earlier one, which
+	// is behind by so much.
+	other  *structure
+	behind float64
 }
