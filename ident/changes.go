@@ -216,7 +216,10 @@ func kindOf(kind string, c cluster) string {
 
 // name tells c from the plant's other roots.
 func (c cluster) name(kind string) string {
-	return fmt.Sprintf("%s near %.3g rad/s", kindOf(kind, c), real(c.middle()))
+	if len(c) > 1 {
+		return fmt.Sprintf("%s pair near %.3g rad/s", kindOf(kind, c), math.Sqrt(cmplx.Abs(c[0]*c[1])))
+	}
+	return fmt.Sprintf("%s near %.3g rad/s", kindOf(kind, c), real(c[0]))
 }
 
 // nearest takes the roots that lie nearest to those of c.
@@ -353,11 +356,11 @@ func matched(kind string, b, a side, letter byte) []number {
 		case len(c) == 1:
 			add(short, name, "rad/s", func(c cluster) float64 { return real(c[0]) })
 		case clear(ub, c) && clear(ua, d):
-			add(short+" pair's frequency", name+" pair, frequency", "rad/s", func(c cluster) float64 { return cmplx.Abs(c[0]) })
-			add(short+" pair's damping ratio", name+" pair, damping ratio", "", func(c cluster) float64 { return -real(c[0]) / cmplx.Abs(c[0]) })
+			add(short+" pair's frequency", name+", frequency", "rad/s", func(c cluster) float64 { return cmplx.Abs(c[0]) })
+			add(short+" pair's damping ratio", name+", damping ratio", "", func(c cluster) float64 { return -real(c[0]) / cmplx.Abs(c[0]) })
 		default:
-			add("sum of two "+short+"s", "two "+name+", sum", "rad/s", func(c cluster) float64 { return real(c[0] + c[1]) })
-			add("product of two "+short+"s", "two "+name+", product", "(rad/s)^2", func(c cluster) float64 { return real(c[0] * c[1]) })
+			add("sum of two "+short+"s", name+", sum", "rad/s", func(c cluster) float64 { return real(c[0] + c[1]) })
+			add("product of two "+short+"s", name+", product", "(rad/s)^2", func(c cluster) float64 { return real(c[0] * c[1]) })
 		}
 	}
 	return out
