@@ -293,7 +293,7 @@ func (t *jointTest) predict(before, after *Model) error {
 	if !before.Evidence.Residuals.misses() && !after.Evidence.Residuals.misses() {
 		return nil
 	}
-	q.Misfit = misfit(after.fitted.recs, f)
+	q.Misfit = after.fitted.misfit()
 	part := 1.0
 	if q.Unlike != nil {
 		part = math.Min(1, (*q.Unlike-1)*(*q.Unlike-1)/(4**q.Unlike))
@@ -302,15 +302,24 @@ func (t *jointTest) predict(before, after *Model) error {
 	return nil
 }
 
-// misfit is what a long model gains over f on its records, in -2 log likelihood,
-// beyond what its parameters gain by chance.
-func misfit(recs []fit.Record, f *fit.Prediction) float64 {
-	long, _ := fit.ChooseARX(recs, fit.ChooseOptions{Delay: 1, Criterion: fit.AICc})
+// misfit is what a long model gains over the refit, in -2 log likelihood, beyond what
+// its parameters gain by chance, on the rows that structures are compared on and as
+// much on the others.
+func (r *refitted) misfit() float64 {
+	f := r.f
+	if r.sp != r.p {
+		var err error
+		if f, err = r.sp.Fit(copyOf(f), compareTol, compareStep); err != nil {
+			return 0
+		}
+	}
+	long, _ := fit.ChooseARX(r.some, fit.ChooseOptions{Delay: 1, Criterion: fit.AICc})
 	if long == nil {
 		return 0
 	}
 	n := float64(f.Rows)
-	return math.Max(0, n*math.Log(f.Objective()/n/(long.RSS/float64(long.Rows)))-float64(2*long.Order-f.Free()))
+	gain := n*math.Log(f.Objective()/n/(long.RSS/float64(long.Rows))) - float64(2*long.Order-f.Free())
+	return math.Max(0, gain*float64(r.f.Rows)/n)
 }
 
 // perGain is the most that a change of the plant which gains one unit of -2 log

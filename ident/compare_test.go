@@ -55,7 +55,7 @@ func knownFit(t testing.TB, r demorig.Rig, seed uint64, start *fit.Prediction) *
 	if err := m.sample(context.Background(), p, f, ranked, Options{Seed: seed, Workers: 1}); err != nil {
 		t.Fatal(err)
 	}
-	m.fitted = &refitted{p: p, f: f, recs: recs}
+	m.fitted = &refitted{p: p, f: f, sp: p, some: recs}
 	return m
 }
 
@@ -156,6 +156,7 @@ func TestStudyOfChanges(t *testing.T) {
 			clear             map[string]int
 		}
 		rows := make([]row, len(changesOfRigs))
+		pooled, inside, numbers, narrower := 0, 0, 0, 0.0
 		sizes := make(map[string][]float64)
 		for i := range pairs {
 			before := knownFit(t, r, uint64(20000+6*i), from)
@@ -173,6 +174,18 @@ func TestStudyOfChanges(t *testing.T) {
 				}
 				if got.Moved {
 					o.moved++
+				}
+				if m, err := Pool(before, after); (err == nil) == got.Moved {
+					t.Errorf("%s, %s: moved is %v, pooling says %v", r.Name, c.name, got.Moved, err)
+				} else if err == nil && c.name == "nothing" {
+					pooled++
+					for i, p := range sorted(r.Truth.Den.Roots()) {
+						q := m.Poles[i]
+						if numbers++; q.Re95.Contains(real(p)) && (imag(p) == 0 || q.Im95.Contains(imag(p))) {
+							inside++
+						}
+						narrower += math.Log(q.ReSD/before.Poles[i].ReSD) / float64(len(m.Poles))
+					}
 				}
 				for _, x := range got.Changes {
 					if x.Clear {
@@ -198,6 +211,11 @@ func TestStudyOfChanges(t *testing.T) {
 				slices.Sort(s)
 				visible += fmt.Sprintf(" %s by %.2g %%", name, 100*s[len(s)/2])
 			}
+		}
+		t.Logf("%s: pooled %d, of %d poles %d inside their intervals, deviation %.2f times that of the earlier log", r.Name, pooled, numbers, inside, math.Exp(narrower/float64(pooled)))
+		// As if the poles of a pair of logs held or failed together.
+		if most := mostByChance(pooled, 1-Confidence) * len(r.Truth.Poles()); numbers-inside > most {
+			t.Errorf("%s: %d of %d pooled intervals miss the pole", r.Name, numbers-inside, numbers)
 		}
 		for k, c := range changesOfRigs {
 			o := rows[k]

@@ -112,7 +112,7 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 		return m, err
 	}
 	m.describe(p, f, rig)
-	m.conditions(p, recs, f, rig)
+	m.conditions(p, some, f, rig)
 	if err := m.loosen(p, f, ranked); err != nil {
 		return m, err
 	}
@@ -146,7 +146,7 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 	}
 	m.judge(ranked, out, f)
 	if opt.known != nil {
-		m.fitted = &refitted{p: p, f: f, recs: recs}
+		m.fitted = &refitted{p: p, f: f, some: some, sp: sp}
 		m.outgrown(tried)
 	}
 	m.doubt(exps)

@@ -169,9 +169,11 @@ func (m *Model) outgrown(tried []*candidate) {
 
 // refitted is what a refit was made with.
 type refitted struct {
-	p    *fit.Predictor
-	f    *fit.Prediction
-	recs []fit.Record
+	p *fit.Predictor
+	f *fit.Prediction
+	// The rows that structures were compared on.
+	sp   *fit.Predictor
+	some []fit.Record
 	// other is the structure that fits best where that is not the earlier one, which
 	// is behind by so much.
 	other  *structure
