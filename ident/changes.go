@@ -34,19 +34,18 @@ type number struct {
 	before, after func(lti.TF) float64
 }
 
-// side is one of two models with what it says of the parameters.
+// side is the plant of one of two models with what that says of the parameters.
 type side struct {
-	m     *Model
 	g     lti.TF
 	names []string
 	cov   *mat.SymDense
 	drawn []lti.TF // empty: the estimate is normal
 }
 
-func newSide(m *Model, names []string, info *mat.SymDense) side {
-	s := side{m: m, g: m.TF(), names: names, cov: inverse(info)}
+func newSide(m *Model, names []string, info *mat.SymDense, seed uint64) side {
+	s := side{g: m.TF(), names: names, cov: inverse(info)}
 	if len(m.sameForm()) >= drawn/4 && m.form().integrators == 0 {
-		for _, g := range m.Draw(comparedDraws, 0) {
+		for _, g := range m.Draw(comparedDraws, seed) {
 			if len(g.Num) == len(m.Plant.Numerator) {
 				s.drawn = append(s.drawn, g)
 			}
@@ -116,8 +115,8 @@ func (s side) polynomial(letter byte) uncertain {
 // numbers are the changes of the plant: its gain, each pole and zero, the delay. Two
 // roots that are a pair in one of the models or may have met are compared by what
 // is regular there.
-func (t *jointTest) numbers(before, after *Model, rig *data.Rig) []Change {
-	b, a := newSide(before, t.at, t.before.Info), newSide(after, t.at, t.after.Info)
+func (t *jointTest) numbers(before, after *Model, rig *data.Rig, seed uint64) []Change {
+	b, a := newSide(before, t.at, t.before.Info, seed), newSide(after, t.at, t.after.Info, seed+1)
 	form := before.form()
 	var list []number
 	ratio := cmp.Or(rig.Units.Output, before.Units.Output, "output") + "/" + cmp.Or(rig.Units.Input, before.Units.Input, "input")
@@ -147,7 +146,7 @@ func (t *jointTest) numbers(before, after *Model, rig *data.Rig) []Change {
 	}
 	out := make([]Change, 0, len(list))
 	for _, n := range list {
-		if x, ok := n.change(b, a); ok {
+		if x, ok := n.change(b, a, seed); ok {
 			out = append(out, x)
 		}
 	}
@@ -155,7 +154,7 @@ func (t *jointTest) numbers(before, after *Model, rig *data.Rig) []Change {
 }
 
 // change tests one number.
-func (n number) change(b, a side) (Change, bool) {
+func (n number) change(b, a side, seed uint64) (Change, bool) {
 	x := Change{Name: n.name, Unit: n.unit, Before: n.before(b.g), After: n.after(a.g), plant: true, short: n.short}
 	x.Ratio = n.ratio && x.Before*x.After > 0
 	of1, of2 := n.before, n.after
@@ -172,7 +171,7 @@ func (n number) change(b, a side) (Change, bool) {
 	iv := Interval{d - z95*sd, d + z95*sd}
 	x.ProbabilityByChance = twoSided(d / sd)
 	if len(b.drawn)+len(a.drawn) > 0 {
-		rnd := rand.New(rand.NewPCG(0, 0))
+		rnd := rand.New(rand.NewPCG(seed, 2))
 		draws := make([]float64, comparedDraws)
 		for k := range draws {
 			draws[k] = a.some(of2, v2, sd2, k, rnd) - b.some(of1, v1, sd1, k, rnd)
@@ -537,7 +536,7 @@ func (t *jointTest) away(h, g lti.TF) *mat.VecDense {
 // the chi-square test of what is left, one degree of freedom less. Numbers that are
 // known badly by themselves may be known well if nothing else moved.
 func (t *jointTest) alone(before *Model, after *Model) []Alone {
-	b, g := newSide(before, t.at, t.before.Info), after.TF()
+	b, g := side{g: before.TF(), names: t.at, cov: inverse(t.before.Info)}, after.TF()
 	list := []Alone{}
 	for _, s := range scalings(b) {
 		x, sd, left := 0.0, 0.0, math.Inf(1) // x is the logarithm of the factor

@@ -108,7 +108,8 @@ type PredictionCheck struct {
 }
 
 // Compare says what moved between an earlier model and a later one, which has to
-// come from Refit with the earlier one and the logs exps. It errs where the two
+// come from Refit with the earlier one and the logs exps; opt.Seed is that of the draws
+// where a log was short. It errs where the two
 // cannot be compared.
 //
 // The statistic is that of the likelihood ratio on the new log, with the earlier
@@ -151,7 +152,7 @@ func Compare(ctx context.Context, before, after *Model, exps []*data.Experiment,
 	c.ProbabilityByChance, c.Moved = t.probability, t.probability < MovedLevel
 	c.Prediction = t.prediction
 	c.structure(after)
-	c.changes(before, after, exps, rig, t)
+	c.changes(before, after, exps, rig, t, opt.Seed)
 	if c.visible(before, t); c.Moved {
 		c.Alone = t.alone(before, after)
 	}
@@ -161,12 +162,7 @@ func Compare(ctx context.Context, before, after *Model, exps []*data.Experiment,
 
 // comparable says why two models cannot be compared.
 func comparable(before, after *Model, rig *data.Rig) error {
-	b, a := before.Units, Units{rig.Units.Input, rig.Units.Output}
-	differ := func(x, y string) bool { return x != "" && y != "" && x != y }
 	switch {
-	case differ(b.Input, a.Input) || differ(b.Output, a.Output):
-		return fmt.Errorf("the earlier model is in %s and %s, [units] of the rig file says %s and %s: give the new log and the rig file in the units of the model, or fit anew",
-			b.Input, b.Output, cmp.Or(a.Input, b.Input), cmp.Or(a.Output, b.Output))
 	case len(after.Plant.Denominator) == 0:
 		return errors.New("the new log gave no plant to compare")
 	case before.form() != after.form():
@@ -174,7 +170,7 @@ func comparable(before, after *Model, rig *data.Rig) error {
 	case after.fitted == nil:
 		panic(notRefitted)
 	}
-	return nil
+	return sameUnits(before, rig)
 }
 
 const notRefitted = "ident: the later model does not come from Refit"
@@ -476,8 +472,8 @@ func (c *Comparison) structure(after *Model) {
 }
 
 // changes lists the numbers and tests each.
-func (c *Comparison) changes(before, after *Model, exps []*data.Experiment, rig *data.Rig, t *jointTest) {
-	c.Changes = append(c.Changes, t.numbers(before, after, rig)...)
+func (c *Comparison) changes(before, after *Model, exps []*data.Experiment, rig *data.Rig, t *jointTest, seed uint64) {
+	c.Changes = append(c.Changes, t.numbers(before, after, rig, seed)...)
 	c.Changes = append(c.Changes, noiseLevel(before, after, rig)...)
 	c.Changes = append(c.Changes, offset(before, after, rig)...)
 	c.Changes = append(c.Changes, actuator(exps, rig)...)

@@ -1,6 +1,7 @@
 package ident
 
 import (
+	"cmp"
 	"context"
 	"fmt"
 	"math"
@@ -22,13 +23,27 @@ const clearly = 10
 // is found, too. Whether the structure still fits is tested as in Fit, and by all
 // its neighbours: where one fits clearly better Evidence.Structures lists it and
 // the model is weak. The result is a model like any other; its errors are those of
-// Fit, and one for an earlier model without a plant.
+// Fit, and one for an earlier model without a plant or in other units.
 func Refit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, before *Model, opt Options) (*Model, error) {
 	if len(before.Plant.Denominator) == 0 {
 		return nil, fmt.Errorf("the earlier model of %s holds no plant: its verdict was %s; fit the new log by itself", before.Rig, before.Verdict)
 	}
+	if err := sameUnits(before, rig); err != nil {
+		return nil, err
+	}
 	opt.known = before
 	return Fit(ctx, exps, rig, opt)
+}
+
+// sameUnits says where a rig file names other units than the model; units that are not
+// named are taken to be the same.
+func sameUnits(m *Model, rig *data.Rig) error {
+	differ := func(x, y string) bool { return x != "" && y != "" && x != y }
+	if a, b := m.Units, rig.Units; differ(a.Input, b.Input) || differ(a.Output, b.Output) {
+		return fmt.Errorf("the earlier model is in %s and %s, [units] of the rig file says %s and %s: give log and rig file in the units of the model, or fit the new log by itself",
+			a.Input, a.Output, cmp.Or(b.Input, a.Input), cmp.Or(b.Output, a.Output))
+	}
+	return nil
 }
 
 // form is the structure of a fitted model.
