@@ -71,7 +71,7 @@ func (m *Model) prediction(period float64) *fit.Prediction {
 	copy(f.D, colour.Den)
 	copy(f.C, colour.Num)
 	if ratio := period / m.Noise.SamplePeriod; math.Abs(ratio-1) > samePeriod {
-		f.D, f.C = resampled(f.D, ratio), resampled(f.C, ratio)
+		f.D, f.C = paced(f.D, ratio), paced(f.C, ratio)
 	}
 	return f
 }
@@ -79,9 +79,9 @@ func (m *Model) prediction(period float64) *fit.Prediction {
 // samePeriod is the relative difference up to which two sample periods are one.
 const samePeriod = 1e-3
 
-// resampled moves the roots of a monic polynomial in powers of z^-1 to where they
+// paced moves the roots of a monic polynomial in powers of z^-1 to where they
 // are with ratio times the period.
-func resampled(p []float64, ratio float64) []float64 {
+func paced(p []float64, ratio float64) []float64 {
 	roots := zRoots(p)
 	for i, z := range roots {
 		switch size := math.Pow(cmplx.Abs(z), ratio); {
