@@ -31,6 +31,8 @@
 // covariance (PoleEstimate), so that they can be compared with one another where poles meet, too. Package conform runs
 // all of them on rigs of every kind.
 //
+// Changes tells where a sequence of estimates of the same numbers changed.
+//
 // LjungBox, PastInputs, CrossCorrelation and FTest judge residuals; Welch estimates spectra. The quotient of the spectra
 // of y and u is not the plant in closed loop.
 //

@@ -86,17 +86,22 @@ func pairs(a, b complex128) bool {
 	return imag(a) == 0 && imag(b) == 0 || a == cmplx.Conj(b)
 }
 
-// simple treats a root that is clearly apart from all others.
-func (u uncertain) simple(r complex128, all float64) Root {
-	n := len(u.p)
+// gradient returns how a simple root moves with each coefficient: by
+// -δp(r)/p'(r).
+func (u uncertain) gradient(r complex128) (re, im []float64) {
 	slope := u.p.Deriv().Eval(r)
-	re, im := make([]float64, n), make([]float64, n)
 	power := complex(1, 0)
-	for i := range n {
+	for range u.p {
 		g := -power / slope
-		re[i], im[i] = real(g), imag(g)
+		re, im = append(re, real(g)), append(im, imag(g))
 		power *= r
 	}
+	return re, im
+}
+
+// simple treats a root that is clearly apart from all others.
+func (u uncertain) simple(r complex128, all float64) Root {
+	re, im := u.gradient(r)
 	root := Root{Re: real(r), Im: imag(r), ReSD: math.Sqrt(u.variance(re))}
 	if root.Im != 0 {
 		root.ImSD = math.Sqrt(u.variance(im))

@@ -7,6 +7,7 @@ import (
 
 	"github.com/spf13/cobra"
 
+	"steadyrig/cmd/steadyrig/history"
 	"steadyrig/data"
 	"steadyrig/design"
 	"steadyrig/ident"
@@ -39,12 +40,17 @@ It writes loops.json, or the file that --out names.`,
 				return err
 			}
 			loops, refusal := a.design(cmd.Context(), model, rig, &s, sum, a.limits(&s))
-			return a.deliverLoops(&s, loopsFile, loops, refusal, func(p *page) { showDesign(p, loops, rig.Units) })
+			err = a.deliverLoops(&s, loopsFile, loops, refusal, func(p *page) { showDesign(p, loops, rig.Units) })
+			if loops != nil && err == refusal {
+				a.record(&s, args[0], history.OfLoops(loops))
+			}
+			return err
 		},
 	}
 	s.add(cmd, "write the loops here instead of to loops.json")
 	s.addSeed(cmd)
 	s.addForms(cmd)
+	s.addHistory(cmd)
 	return cmd
 }
 

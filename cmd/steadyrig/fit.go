@@ -6,6 +6,7 @@ import (
 
 	"github.com/spf13/cobra"
 
+	"steadyrig/cmd/steadyrig/history"
 	"steadyrig/data"
 	"steadyrig/ident"
 )
@@ -46,12 +47,14 @@ They need the probe or the reference in the log.`,
 			if err := a.deliver(&s, modelFile, content, func(p *page) { showModel(p, model, rig.Units) }); err != nil {
 				return err
 			}
+			a.record(&s, args[0], history.OfModel(model, rig.Units, sha256Of(content)))
 			return refusal
 		},
 	}
 	s.add(cmd, "write the model here instead of to model.json")
 	s.addSeed(cmd)
 	s.addExact(cmd)
+	s.addHistory(cmd)
 	return cmd
 }
 

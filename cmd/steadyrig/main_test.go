@@ -415,7 +415,7 @@ func TestSameSeedSameBytes(t *testing.T) {
 			t.Fatalf("exit status %d: %s", status, stderr)
 		}
 	}
-	for _, name := range []string{"rig.toml", "log.csv", "audit.json", "model.json", "loops.json", "report.html"} {
+	for _, name := range []string{"rig.toml", "log.csv", "audit.json", "model.json", "loops.json", "report.html", "rig.history.jsonl"} {
 		read := func(dir string) string {
 			text, err := os.ReadFile(filepath.Join(dir, name))
 			if err != nil {
@@ -524,7 +524,7 @@ func TestHelp(t *testing.T) {
 	inFolder(t, nil)
 	_, text, _ := call(t)
 	golden(t, "help", text)
-	for _, name := range []string{"new", "run", "audit", "fit", "design", "verify", "simulate", "demo"} {
+	for _, name := range []string{"new", "run", "audit", "fit", "design", "verify", "simulate", "demo", "history"} {
 		status, text, stderr := call(t, "help", name)
 		if status != statusDone || stderr != "" {
 			t.Errorf("help %s: exit status %d: %s", name, status, stderr)

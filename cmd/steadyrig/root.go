@@ -63,6 +63,7 @@ func newRoot(a *app) *cobra.Command {
 		newVerify(a),
 		newSimulate(a),
 		newDemo(a),
+		newHistory(a),
 	)
 	return root
 }
@@ -84,6 +85,8 @@ type settings struct {
 	force bool
 	seed  uint64
 	exact bool
+
+	noHistory bool
 
 	inner, outer string // forms asked for
 }

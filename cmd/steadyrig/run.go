@@ -11,6 +11,7 @@ import (
 
 	"github.com/spf13/cobra"
 
+	"steadyrig/cmd/steadyrig/history"
 	"steadyrig/cmd/steadyrig/report"
 	"steadyrig/cmd/steadyrig/words"
 	"steadyrig/data"
@@ -128,6 +129,7 @@ one.`,
 func (s *settings) addFolder(cmd *cobra.Command) {
 	s.add(cmd, "the same as --dir")
 	cmd.Flags().StringVar(&s.dir, "dir", "", "folder to write (default: named by rig and time)")
+	s.addHistory(cmd)
 }
 
 func (a *app) listRigs(s *settings) error {
@@ -230,6 +232,7 @@ func (a *app) whole(ctx context.Context, j *job, s *settings) error {
 	if err != nil {
 		return err
 	}
+	entries := []history.Entry{history.OfModel(model, j.rig.Units, sha256Of(modelText))}
 	loops := refusedLoops(j.rig, "no design was tried: the log was refused")
 	loops.Tool, loops.Made, loops.ModelSHA256 = a.tool, a.made(), sha256Of(modelText)
 	if refusal == nil {
@@ -240,6 +243,7 @@ func (a *app) whole(ctx context.Context, j *job, s *settings) error {
 		refuse(err)
 		if designed != nil {
 			loops = designed
+			entries = append(entries, history.OfLoops(loops))
 		}
 	}
 	j.audit, j.model, j.loops = audit, model, loops
@@ -268,6 +272,7 @@ func (a *app) whole(ctx context.Context, j *job, s *settings) error {
 	if err := writeFolder(j.dir, s.force, j.files); err != nil {
 		return err
 	}
+	a.record(s, filepath.Join(j.dir, rigFile), entries...)
 	a.warn(s, warningsBeside(append(append([]string(nil), model.Warnings...), loops.Warnings...), refusal))
 	if s.json {
 		err = printJSON(a.stdout, map[string]any{"folder": j.dir, "verdict": j.verdict(), "audit": audit, "model": model, "loops": loops})

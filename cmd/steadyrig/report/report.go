@@ -39,6 +39,7 @@ var page = template.Must(template.New("page").Parse(pageText))
 // A view is what the page shows.
 type view struct {
 	Rig, About    string
+	What          string // the page is of
 	Word, Class   string
 	Summary       []string
 	Facts         []fact
@@ -85,7 +86,7 @@ func Write(w io.Writer, in Input) error {
 	in.Rig = in.Loops.Asked(in.Rig)
 	in.settlingChosen = in.Rig != asked
 	v := view{
-		Rig: in.Rig.Name, About: in.About, Word: strings.ToUpper(in.Verdict[:1]) + in.Verdict[1:], Class: in.Verdict,
+		Rig: in.Rig.Name, About: in.About, What: "Plant and loops from closed-loop logs", Word: strings.ToUpper(in.Verdict[:1]) + in.Verdict[1:], Class: in.Verdict,
 		Command: in.Command, Tool: in.Tool,
 		Made: in.Made.Format("2 January 2006, 15:04 MST"), MadeRFC: in.Made.Format(time.RFC3339),
 	}
