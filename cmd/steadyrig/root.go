@@ -61,6 +61,7 @@ func newRoot(a *app) *cobra.Command {
 		newFit(a),
 		newDesign(a),
 		newVerify(a),
+		newRecheck(a),
 		newSimulate(a),
 		newDemo(a),
 		newHistory(a),
