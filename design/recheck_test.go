@@ -38,7 +38,10 @@ func estimatedOf(m *ident.Model, seed uint64) *ident.Model {
 // is, were the level 95 % exactly, at least the 1e-4 quantile of the binomial. The estimate itself is above the true gap
 // in most cases, which is why it needs an interval that is not about it alone.
 func TestIntervalOfTheNuGap(t *testing.T) {
-	cases := 40
+	if testing.Short() {
+		t.Skip("measures many gaps")
+	}
+	cases := 30
 	if v := os.Getenv("STEADYRIG_STUDY"); v != "" {
 		cases, _ = strconv.Atoi(v)
 	}
@@ -316,7 +319,7 @@ func TestVerdictsOfARecheck(t *testing.T) {
 		{"moved a little", sinceOf(scaled(1.05), stopgap, 1.05, 1e-4), loops, Keep, "has moved"},
 		{"spec missed", sinceOf(scaled(0.5), stopgap, 0.5, 1e-9), loops, Retune, "hold the rig, but"},
 		{"lost", sinceOf(scaled(0.2), stopgap, 0.2, 1e-9), loops, Stop, "hold 0 of 600 plants"},
-		{"another unit", sinceOf(scaled(1000), stopgap, 1000, 1e-9), loops, Stop, "another unit"},
+		{"another unit", sinceOf(scaled(1000), stopgap, 1000, 1e-9), nil, Stop, "another unit"},
 		{"refused", Since{Logs: []*data.Experiment{stopgap}, Model: p.model, Refusal: refused}, loops, Stop, "nothing moves the input"},
 		{"tripped under the stopgap law", sinceOf(p.model, &tripped, 1, 0.6), loops, Keep, "nothing moved"},
 		{"tripped under the loops", sinceOf(p.model, underLoops, 1, 0.6), loops, Stop, "under the present loops the rig tripped"},
