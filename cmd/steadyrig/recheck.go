@@ -184,7 +184,7 @@ func (a *app) compare(ctx context.Context, j *recheckJob, s *settings) (since de
 	opt := ident.Options{Seed: s.seed, Progress: bar.step}
 	var refused *ident.RefusedError
 	if j.after, err = ident.Refit(ctx, j.exps, j.rig, j.model, opt); err != nil && !(errors.As(err, &refused) && j.after != nil) {
-		return since, err
+		return since, a.inputErrorUnless(ctx, err)
 	}
 	j.after.Tool, j.after.Made = a.tool, a.made()
 	j.judged, since.Refusal = j.after, err

@@ -31,7 +31,7 @@ type RecheckInput struct {
 var (
 	beforeLine = stroke{rust, 1.4, []float64{5, 2.5}}
 	beforeBand = faint(rust, 0x2c)
-	retuneLine = stroke{ink, 1.3, []float64{1.5, 2.5}}
+	retuneLine = stroke{ink, 1.8, []float64{2, 2}}
 )
 
 // WriteRecheck writes the page of a recheck, the earlier plant and the new one laid over each other.
