@@ -572,6 +572,7 @@ const (
 	streamProof
 	streamNoise
 	streamMargins
+	streamGap
 )
 
 // stream returns the seed of one stream; attempt counts the proofs.

@@ -65,10 +65,7 @@ const mostStates = 60
 
 // measure compares a law with what any controller could reach, over the plants drawn for the proof.
 func (p *problem) measure(ctx context.Context, law *lti.Law, draws []lti.TF, workers int) (*Yardstick, error) {
-	y := &Yardstick{InputNoise: p.spec.noise, InputRange: p.limits[1] - p.limits[0], OutputRange: trialSteps * p.spec.step, Plants: len(draws)}
-	if p.output != nil {
-		y.OutputRange = p.output[1] - p.output[0]
-	}
+	y := &Yardstick{InputNoise: p.spec.noise, InputRange: p.limits[1] - p.limits[0], OutputRange: p.outputRange(), Plants: len(draws)}
 	g := p.lawGrid(law)
 	own := p.frequency(&p.nominal, g).noise
 	y.Pair = p.refinePeakS(&p.nominal, law, g)
@@ -117,11 +114,7 @@ func (p *problem) measureGaps(ctx context.Context, y *Yardstick, law *lti.Law, d
 		}
 	}
 	nominal := p.nominal.scaled(scale, p.period)
-	inner := lti.DTF{Num: law.Inner.Num.Scale(1 / scale), Den: law.Inner.Den, Period: p.period}
-	both := inner
-	if law.Outer != nil {
-		both.Num, both.Den = both.Num.Mul(law.Outer.Num.Add(law.Outer.Den)), both.Den.Mul(law.Outer.Den)
-	}
+	inner, both := controllers(law, scale)
 	y.Margin, _ = lti.FeedbackMargin(nominal, both)
 	y.MarginInner, _ = lti.FeedbackMargin(nominal, inner)
 
@@ -156,6 +149,24 @@ func (p *problem) measureGaps(ctx context.Context, y *Yardstick, law *lti.Law, d
 		y.Stabilised = Theorem
 	}
 	return nil
+}
+
+// outputRange is the output's range between the trips, or else in steps of the spec.
+func (p *problem) outputRange() float64 {
+	if p.output != nil {
+		return p.output[1] - p.output[0]
+	}
+	return trialSteps * p.spec.step
+}
+
+// controllers returns K1 and K1 (1 + K2), what the plant times scale sees of a law.
+func controllers(law *lti.Law, scale float64) (inner, both lti.DTF) {
+	inner = lti.DTF{Num: law.Inner.Num.Scale(1 / scale), Den: law.Inner.Den, Period: law.Inner.Period}
+	both = inner
+	if law.Outer != nil {
+		both.Num, both.Den = both.Num.Mul(law.Outer.Num.Add(law.Outer.Den)), both.Den.Mul(law.Outer.Den)
+	}
+	return inner, both
 }
 
 // scaled returns the sampled plant times scale.

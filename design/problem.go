@@ -45,8 +45,8 @@ type demands struct {
 	step, overshoot, settling, band, peakS, noise, kick, kickPeak float64
 }
 
-// noiseShare is the default limit on the input's standard deviation due to sensor noise, as a share of the range.
-const noiseShare = 1.0 / 20
+// NoiseShare is the default limit on the input's standard deviation due to sensor noise, as a share of the range.
+const NoiseShare = 1.0 / 20
 
 // decayPerSettling sets the slowest decay that the inner loop may have, in units of 1/settling: an outer loop
 // cannot settle faster than what the inner one leaves behind.
@@ -90,7 +90,7 @@ func pose(model *ident.Model, rig *data.Rig) (*problem, error) {
 	s := rig.Spec
 	p.spec = demands{s.Step, s.Overshoot, s.Settling, s.Band, s.PeakSensitivity, s.InputNoise, s.Kick, s.KickPeak}
 	if p.spec.noise == 0 {
-		p.spec.noise = noiseShare * (p.limits[1] - p.limits[0])
+		p.spec.noise = NoiseShare * (p.limits[1] - p.limits[0])
 	}
 	p.compute = rig.Loop.ComputeDelay
 	if rig.Log.InputStamp == data.InputComputed {

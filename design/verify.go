@@ -145,7 +145,7 @@ func (p *problem) adopt(l *Loops) error {
 		text := fmt.Sprintf("the loops work about input %.4g, output %.4g, the rig file and the model about %.4g, %.4g: away from its point the plant may be another",
 			p.point.Input, p.point.Output, own.Input, own.Output)
 		switch full := p.rig.Limits.Input[1] - p.rig.Limits.Input[0]; {
-		case dy > pointWeak*p.spec.step || du > noiseShare*full:
+		case dy > pointWeak*p.spec.step || du > NoiseShare*full:
 			p.doubts = append(p.doubts, text)
 		case dy > pointNoted*p.spec.step || du > pointNoted*full:
 			p.warnings = append(p.warnings, text)

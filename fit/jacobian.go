@@ -20,6 +20,7 @@ func (s *search) information(x point, q shifted) (*mat.SymDense, []float64) {
 	q.delta = lti.SampleDelta(x.num, x.den, x.tau, s.h)
 	h, grad := s.normal(q, s.shape.size())
 	s.addDeterminant(x, q, h, grad)
+	s.prior.add(x, s.shape, s.rss/float64(s.rows), h, grad)
 	return h, grad
 }
 

@@ -210,7 +210,7 @@ func unshifted(p []float64, n int) []float64 {
 // result takes a point back to the log's units, with its covariance.
 func (s *search) result(x point, steps int, converged bool) *Prediction {
 	n := s.shape.Poles
-	m := &Prediction{Shape: s.shape, Period: s.Period, RSS: s.rss * s.sy * s.sy, LogDet: s.logDet, Rows: s.rows, Steps: steps, Converged: converged, Delay: x.tau / s.w0}
+	m := &Prediction{Shape: s.shape, Period: s.Period, RSS: s.rss * s.sy * s.sy, LogDet: s.logDet + s.apriori, Rows: s.rows, Steps: steps, Converged: converged, Delay: x.tau / s.w0}
 	unit := s.units()
 	m.Num, m.Den = make(lti.Poly, len(x.num)), make(lti.Poly, n+1)
 	for i := range x.num {

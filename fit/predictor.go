@@ -164,6 +164,8 @@ type search struct {
 	rss, logDet float64   // parts of the objective at the last point looked at
 	sums        []float64 // of squares in each log
 	shared      float64   // log det of the information about constants that records share
+	prior       *near     // nil: none
+	apriori     float64   // the prior's part of -2 log likelihood at the last point looked at
 
 	probe     transient // for differences of the determinant
 	probeGaps gaps
@@ -327,7 +329,8 @@ func (s *search) errorsAt(x point) (float64, shifted, bool) {
 		}
 	}
 	s.rss = s.pooled()
-	return s.rss * math.Exp(s.logDet/float64(s.rows)), q, true
+	s.apriori = s.prior.square(x, s.shape)
+	return s.rss * math.Exp((s.logDet+s.apriori)/float64(s.rows)), q, true
 }
 
 // start is where record i's errors start in its workspace.

@@ -19,6 +19,8 @@ type Options struct {
 	Seed     uint64                // of the draws of a short log
 	Workers  int                   // structures fitted at once; 0: one a core
 	Progress func(done, total int) // called as structures are done; total 0: unknown
+
+	known *Model // whose structure Refit takes
 }
 
 // Thresholds of the verdict.
@@ -68,7 +70,7 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 		return m.refuse(err)
 	}
 
-	sc := scopeOf(rig, period)
+	sc := scopeOf(rig, period).with(opt.known)
 	s, err := search(ctx, recs, period, sc, opt)
 	var refused *RefusedError
 	if errors.As(err, &refused) {
@@ -86,7 +88,10 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 		return m.refuse(err)
 	}
 
-	if ranked, err = settleIntegrators(sp, ranked); err != nil {
+	tried, finalists := ranked, triedStructures
+	if opt.known != nil {
+		ranked, finalists = notBetter(ranked), 1
+	} else if ranked, err = settleIntegrators(sp, ranked); err != nil {
 		return m, err
 	}
 	best := ranked[0]
@@ -96,7 +101,7 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 			Do:   "log a longer run",
 		})
 	}
-	f, ranked, err := finish(p, ranked)
+	f, ranked, err := finish(p, ranked, finalists)
 	if err != nil {
 		return m.refuse(err)
 	}
@@ -107,6 +112,7 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 		return m, err
 	}
 	m.describe(p, f, rig)
+	m.conditions(p, some, f, rig)
 	if err := m.loosen(p, f, ranked); err != nil {
 		return m, err
 	}
@@ -114,7 +120,9 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 		return m, err
 	}
 	m.weighIntegrators(ranked)
-	m.Evidence.Structures = structures(ranked)
+	if m.Evidence.Structures = structures(ranked); opt.known != nil {
+		m.Evidence.Structures = against(tried)
+	}
 	whole, filled, err := s.restored(f)
 	if err != nil {
 		return m, err
@@ -137,6 +145,10 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 		return m, err
 	}
 	m.judge(ranked, out, f)
+	if opt.known != nil {
+		m.fitted = &refitted{p: p, f: f, some: some, sp: sp}
+		m.outgrown(tried)
+	}
 	m.doubt(exps)
 	if err := m.finite(); err != nil {
 		return newModel(exps, rig).refuse(&RefusedError{What: "the log does not determine the plant: " + err.Error(), Do: "log a longer run or a stronger probe"})
@@ -145,9 +157,9 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 }
 
 // finish fits the best structure whose parameters the log tells apart to the
-// end, and puts it first.
-func finish(p *fit.Predictor, ranked []*candidate) (*fit.Prediction, []*candidate, error) {
-	for i, c := range ranked[:min(triedStructures, len(ranked))] {
+// end, and puts it first. It looks at the first few.
+func finish(p *fit.Predictor, ranked []*candidate, few int) (*fit.Prediction, []*candidate, error) {
+	for i, c := range ranked[:min(few, len(ranked))] {
 		if c.bic > ranked[0].bic+farBehind {
 			break
 		}

@@ -110,7 +110,11 @@ func (s *searched) choose(ctx context.Context, period float64, sc scope, opt Opt
 	if s.chooser, err = newChooser(s.sp, s.some, sc, opt.Workers); err != nil {
 		return &RefusedError{What: "no long model could be fitted: " + err.Error(), Do: "log a run in which input and output move"}
 	}
-	s.ranked, err = s.chooser.choose(ctx, opt.Progress)
+	if opt.known != nil {
+		s.ranked, err = s.chooser.around(ctx, opt.known, opt.Progress)
+	} else {
+		s.ranked, err = s.chooser.choose(ctx, opt.Progress)
+	}
 	return err
 }
 

@@ -36,7 +36,8 @@ type Model struct {
 	Schema         string         `json:"schema"`
 	Tool           string         `json:"tool"`
 	Rig            string         `json:"rig"`
-	Made           string         `json:"made"` // RFC 3339
+	Units          Units          `json:"units"` // those of the numbers here, empty where the rig file names none
+	Made           string         `json:"made"`  // RFC 3339
 	Logs           []LogUse       `json:"logs"`
 	Verdict        string         `json:"verdict"`
 	Warnings       []string       `json:"warnings"`
@@ -51,6 +52,8 @@ type Model struct {
 	FrequencyResponse *Responses `json:"frequency_response"`
 	Evidence          Evidence   `json:"evidence"`
 	Exact             *Exact     `json:"exact,omitempty"` // null where not asked for
+
+	fitted *refitted // what Refit found the model with
 }
 
 // LogUse says which rows of which log a model rests on.
@@ -215,6 +218,10 @@ type Evidence struct {
 	// Resolution is the step of the grid on which the values of the input and of the output lie in the logs, the coarsest
 	// of several; 0: none was found.
 	Resolution OperatingPoint `json:"resolution"`
+	// Rest and InputBands are what a later log is held against; Rest is null where
+	// the plant has none.
+	Rest       *Rest       `json:"rest"`
+	InputBands []InputBand `json:"input_bands"`
 	// LeftOut counts outputs that were taken for unknown because they are wrong.
 	LeftOut []LeftOut `json:"left_out"`
 }

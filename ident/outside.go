@@ -7,6 +7,8 @@ import (
 
 	"gonum.org/v1/gonum/floats"
 
+	"gonum.org/v1/gonum/stat/distuv"
+
 	"steadyrig/data"
 	"steadyrig/fit"
 )
@@ -307,37 +309,76 @@ const clearLaw = 0.1
 // lawResidual is the share of the input's variance that the law leaves with the
 // input moved by shift rows and the dither by its own.
 func lawResidual(exps []*data.Experiment, law *data.Stopgap, shift, ditherShift int, sign float64) float64 {
+	by := make([]float64, len(law.Numerator))
+	for i, c := range law.Numerator {
+		by[i] = sign * c
+	}
 	var rss, all float64
+	lawErrors(exps, law.Denominator, by, by, shift, ditherShift, func(w, v []float64) {
+		rss += about(w)
+		all += about(v)
+	})
+	if all == 0 {
+		return math.Inf(1)
+	}
+	return rss / all
+}
+
+// LawLeaves returns the share of the input's variance that the linear law
+// den (u - u0 - d) = byR (r - y0) - byY (y - y0) leaves in logs of its own period,
+// coefficients of rising powers of z^-1: next to 0 where it ran. It goes by the
+// median of the squares, over that of a normal variable, so that rows in which a
+// limit held something back do not count unless they are most. A reference that is
+// not logged counts as constant.
+func LawLeaves(exps []*data.Experiment, den, byY, byR []float64) float64 {
+	var left []float64
+	var all float64
+	middle := func(x []float64) float64 {
+		slices.Sort(x)
+		return x[len(x)/2]
+	}
+	lawErrors(exps, den, byY, byR, 0, 0, func(w, v []float64) {
+		all += about(v)
+		at := middle(slices.Clone(w))
+		for _, x := range w {
+			left = append(left, (x-at)*(x-at))
+		}
+	})
+	if all == 0 {
+		return math.Inf(1)
+	}
+	return middle(left) / distuv.ChiSquared{K: 1}.Quantile(0.5) * float64(len(left)) / all
+}
+
+// lawErrors calls f for each piece of the logs with the errors of a law and with
+// its left-hand side, the input moved by shift rows and the dither by its own.
+func lawErrors(exps []*data.Experiment, den, byY, byR []float64, shift, ditherShift int, f func(w, v []float64)) {
 	for _, e := range exps {
 		for _, s := range e.Pieces() {
-			n := max(len(law.Numerator), len(law.Denominator))
+			n := max(len(den), len(byY), len(byR))
 			var w, v []float64
 			for k := n + 1; k < len(s.Y)-1; k++ {
 				var left, right float64
-				for i, c := range law.Denominator {
+				for i, c := range den {
 					u := s.U[k+shift-i]
 					if s.D != nil {
 						u -= s.D[k+ditherShift-i]
 					}
 					left += c * u
 				}
-				for i, c := range law.Numerator {
-					y := s.Y[k-i]
-					if s.R != nil {
-						y -= s.R[k-i]
+				for i, c := range byY {
+					right += c * s.Y[k-i]
+				}
+				if s.R != nil {
+					for i, c := range byR {
+						right -= c * s.R[k-i]
 					}
-					right += sign * c * y
 				}
 				w, v = append(w, left+right), append(v, left)
 			}
 			if len(w) > 0 {
-				rss += about(w)
-				all += about(v)
+				f(w, v)
 			}
 		}
 	}
-	if all == 0 {
-		return math.Inf(1)
-	}
-	return rss / all
 }

@@ -37,7 +37,7 @@ type Agreement struct {
 	// Changes lists poles, zeros, gains and delay in the odd log, or in the second
 	// of two, against the others taken together, the clearest difference first;
 	// empty where there is no such log.
-	Changes []Change `json:"changes"`
+	Changes []LogChange `json:"changes"`
 }
 
 // LogFit is what one log alone says.
@@ -49,8 +49,8 @@ type LogFit struct {
 	Probability *float64 `json:"probability"`
 }
 
-// Change is one number of the plant in a log and in the others.
-type Change struct {
+// LogChange is one number of the plant in a log and in the others.
+type LogChange struct {
 	Name        string   `json:"name"`
 	Unit        string   `json:"unit"`
 	Here        Estimate `json:"here"`
@@ -126,7 +126,7 @@ func (m *Model) compare(ctx context.Context, exps []*data.Experiment, rig *data.
 	if err != nil {
 		return err
 	}
-	a := &Agreement{Probability: 1, Agree: true, Changes: []Change{}}
+	a := &Agreement{Probability: 1, Agree: true, Changes: []LogChange{}}
 	m.Evidence.Agreement = a
 	for i, e := range exps {
 		l := LogFit{File: e.File}
@@ -341,9 +341,9 @@ func (a *alone) model(f *fit.Prediction) *Model {
 }
 
 // changes lists the numbers of a plant in one log and in the others.
-func (m *Model) changes(rig *data.Rig, f *fit.Prediction, one, rest *alone) []Change {
+func (m *Model) changes(rig *data.Rig, f *fit.Prediction, one, rest *alone) []LogChange {
 	here, others := one.model(f), rest.model(f)
-	list := []Change{}
+	list := []LogChange{}
 	if here == nil || others == nil {
 		return list
 	}
@@ -352,7 +352,7 @@ func (m *Model) changes(rig *data.Rig, f *fit.Prediction, one, rest *alone) []Ch
 			return
 		}
 		z := math.Abs(a.Value-b.Value) / math.Hypot(a.SD, b.SD)
-		list = append(list, Change{name, unit, *a, *b, 2 * distuv.UnitNormal.Survival(z)})
+		list = append(list, LogChange{name, unit, *a, *b, 2 * distuv.UnitNormal.Survival(z)})
 	}
 	roots := func(kind string, joint, a, b []Root) {
 		for i, r := range joint {
@@ -379,8 +379,8 @@ func (m *Model) changes(rig *data.Rig, f *fit.Prediction, one, rest *alone) []Ch
 		}
 		add("delay", "s", delay(here), delay(others))
 	}
-	slices.SortStableFunc(list, func(a, b Change) int {
-		z := func(c Change) float64 {
+	slices.SortStableFunc(list, func(a, b LogChange) int {
+		z := func(c LogChange) float64 {
 			return math.Abs(c.Here.Value-c.Others.Value) / math.Hypot(c.Here.SD, c.Others.SD)
 		}
 		return cmp.Compare(z(b), z(a))

@@ -214,6 +214,12 @@ func (c *chooser) choose(ctx context.Context, progress func(done, total int)) ([
 		}
 		first = first[n:]
 	}
+	return c.climb(ctx, progress)
+}
+
+// climb tries what lies around the two best until all that lies around the winner
+// has been tried.
+func (c *chooser) climb(ctx context.Context, progress func(done, total int)) ([]*candidate, error) {
 	expanded := make(map[structure]bool)
 	for range 24 {
 		ranked := c.ranked()

@@ -6,6 +6,9 @@ import (
 	"strings"
 
 	"github.com/go-gota/gota/dataframe"
+
+	"steadyrig/design"
+	"steadyrig/ident"
 )
 
 // A page is text for a person: lines that fit a terminal of 80 columns, colour where it is seen.
@@ -38,7 +41,10 @@ func (p *page) table(t dataframe.DataFrame) { printTable(p.w, "  ", t) }
 
 // verdict is the first line of a result: the word, then what it means here.
 func (p *page) verdict(word, meaning string) {
-	ansi := map[string]string{"sound": "\x1b[1;32m", "weak": "\x1b[1;33m", "refused": "\x1b[1;31m"}[word]
+	ansi := map[string]string{
+		ident.Sound: "\x1b[1;32m", ident.Weak: "\x1b[1;33m", ident.Refused: "\x1b[1;31m",
+		design.Keep: "\x1b[1;32m", design.Retune: "\x1b[1;33m", design.Stop: "\x1b[1;31m",
+	}[word]
 	shown := strings.ToUpper(word)
 	if p.colour && ansi != "" {
 		// The colour takes no room on the line, so it is put in after wrapping.

@@ -62,6 +62,7 @@ func newRoot(a *app) *cobra.Command {
 		newTable(a),
 		newDesign(a),
 		newVerify(a),
+		newRecheck(a),
 		newSimulate(a),
 		newDemo(a),
 		newHistory(a),

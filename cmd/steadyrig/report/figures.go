@@ -205,17 +205,34 @@ func fitFigures(m *ident.Model, exps []*data.Experiment, u data.Units) []figure 
 
 // poleFigure draws poles and zeros with their intervals.
 func poleFigure(m *ident.Model) figure {
+	p := rootPlot(rooted{m, mainLine, otherLine})
+	shade := faint(rust, 0x18)
+	return figure{drawn(p, "Poles and zeros of the plant with their 95 % intervals; "+words.Unstable(m.Poles)), "Poles × and zeros ○ of the plant",
+		[]key{{Stroke: stroke{faint(petrol, 0xa0), 3.2, nil}, Label: "95 % interval of a pole"}, {Band: &shade, Label: "unstable half-plane"}},
+		"An interval narrower than its mark does not show; the table has the numbers."}
+}
+
+// A rooted model is drawn by its poles and zeros, in the colours of two strokes.
+type rooted struct {
+	m            *ident.Model
+	poles, zeros stroke
+}
+
+// rootPlot draws poles and zeros of models with their intervals.
+func rootPlot(models ...rooted) *plot.Plot {
 	p := newPlot("real part, rad/s", "imaginary part, rad/s")
 	lo, hi, top := 0.0, 0.0, 0.0
-	for _, r := range append(slices.Clone(m.Poles), m.Zeros...) {
-		lo, hi, top = math.Min(lo, r.Re), math.Max(hi, r.Re), math.Max(top, math.Abs(r.Im))
-		for _, v := range []float64{r.Re95.Lo, r.Re95.Hi} {
-			if finite(v) && math.Abs(v) < 3*math.Max(hi-lo, math.Abs(r.Re)) {
-				lo, hi = math.Min(lo, v), math.Max(hi, v)
+	for _, c := range models {
+		for _, r := range append(slices.Clone(c.m.Poles), c.m.Zeros...) {
+			lo, hi, top = math.Min(lo, r.Re), math.Max(hi, r.Re), math.Max(top, math.Abs(r.Im))
+			for _, v := range []float64{r.Re95.Lo, r.Re95.Hi} {
+				if finite(v) && math.Abs(v) < 3*math.Max(hi-lo, math.Abs(r.Re)) {
+					lo, hi = math.Min(lo, v), math.Max(hi, v)
+				}
 			}
-		}
-		if finite(r.Im95.Hi) && r.Im != 0 {
-			top = math.Max(top, math.Min(r.Im95.Hi, 3*r.Im))
+			if finite(r.Im95.Hi) && r.Im != 0 {
+				top = math.Max(top, math.Min(r.Im95.Hi, 3*r.Im))
+			}
 		}
 	}
 	width := hi - lo
@@ -253,13 +270,12 @@ func poleFigure(m *ident.Model) figure {
 		sc.GlyphStyle = draw.GlyphStyle{Color: s.colour, Radius: vg.Points(4.5), Shape: shape}
 		p.Add(sc)
 	}
-	add(m.Poles, mark{}, mainLine)
-	add(m.Zeros, mark{round: true}, otherLine)
+	for _, c := range models {
+		add(c.m.Poles, mark{}, c.poles)
+		add(c.m.Zeros, mark{round: true}, c.zeros)
+	}
 	p.X.Min, p.X.Max, p.Y.Min, p.Y.Max = lo, hi, -top, top
-	shade := faint(rust, 0x18)
-	return figure{drawn(p, "Poles and zeros of the plant with their 95 % intervals; "+words.Unstable(m.Poles)), "Poles × and zeros ○ of the plant",
-		[]key{{Stroke: stroke{faint(petrol, 0xa0), 3.2, nil}, Label: "95 % interval of a pole"}, {Band: &shade, Label: "unstable half-plane"}},
-		"An interval narrower than its mark does not show; the table has the numbers."}
+	return p
 }
 
 // methodFigure sets the rightmost pole that is or may be unstable, by each method, beside the interval of the final
@@ -387,16 +403,8 @@ func sensitivityFigures(c *design.Curves, asked float64) []figure {
 // stepFigures draws the spec's reference step and the input that it takes.
 func stepFigures(r *design.Responses, l *design.Loops, spec *data.Spec, u data.Units) []figure {
 	y, in := newPlot("time, s", axis("output", u.Output)), newPlot("time, s", axis("input", u.Input))
-	for i := len(r.Output) - 1; i >= 0; i-- {
-		s := drawnLine
-		if i == 0 {
-			s = mainLine
-		}
-		tx, ty := thinned(r.Time, r.Output[i], stretches)
-		addLine(y, tx, ty, s)
-		tx, ty = thinned(r.Time, r.Input[i], stretches)
-		addLine(in, tx, ty, s)
-	}
+	drawSteps(y, r.Time, r.Output, mainLine, drawnLine)
+	drawSteps(in, r.Time, r.Input, mainLine, drawnLine)
 	addLine(y, r.Time, r.Reference, otherLine)
 	end := r.Time[len(r.Time)-1]
 	target := r.Reference[len(r.Reference)-1]

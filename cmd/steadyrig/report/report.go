@@ -5,7 +5,6 @@ import (
 	"fmt"
 	"html/template"
 	"io"
-	"strings"
 	"time"
 
 	"steadyrig/data"
@@ -86,7 +85,7 @@ func Write(w io.Writer, in Input) error {
 	in.Rig = in.Loops.Asked(in.Rig)
 	in.settlingChosen = in.Rig != asked
 	v := view{
-		Rig: in.Rig.Name, About: in.About, What: "Plant and loops from closed-loop logs", Word: strings.ToUpper(in.Verdict[:1]) + in.Verdict[1:], Class: in.Verdict,
+		Rig: in.Rig.Name, About: in.About, What: "Plant and loops from closed-loop logs", Word: sentenceStart(in.Verdict), Class: in.Verdict,
 		Command: in.Command, Tool: in.Tool,
 		Made: in.Made.Format("2 January 2006, 15:04 MST"), MadeRFC: in.Made.Format(time.RFC3339),
 	}

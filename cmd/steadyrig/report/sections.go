@@ -475,9 +475,6 @@ func stepsSection(in Input) section {
 	return s
 }
 
-// defaultNoiseShare is the input noise that a rig file without one asks for, a share of the input's range.
-const defaultNoiseShare = 1.0 / 20
-
 // askedNoise is the largest standard deviation of the input that the spec asks for.
 func askedNoise(in Input) float64 {
 	for _, b := range in.Loops.Bounds {
@@ -489,7 +486,7 @@ func askedNoise(in Input) float64 {
 		return ask
 	}
 	if lim := in.Rig.Limits.Input; lim != nil {
-		return defaultNoiseShare * (lim[1] - lim[0])
+		return design.NoiseShare * (lim[1] - lim[0])
 	}
 	return 0
 }
