@@ -16,38 +16,27 @@ import (
 type CUSUM struct {
 	Reference, Limit, Clip float64
 
-	up, down           float64
-	upSince, downSince int // values since that sum left zero
+	up, down float64
 }
 
-// Add takes a value. alarm is +1 or -1 where the mean has moved up or down, else 0; since is how many of the last
-// values the sum that is the larger was above zero, by which time the change came.
-func (c *CUSUM) Add(z float64) (alarm, since int) {
+// Add takes a value and returns +1 or -1 where the mean has moved up or down, else 0.
+func (c *CUSUM) Add(z float64) (alarm int) {
 	z = math.Max(-c.Clip, math.Min(c.Clip, z))
-	side := func(sum *float64, n *int, z float64) bool {
-		*sum += z - c.Reference
-		*n++
-		if *sum <= 0 {
-			*sum, *n = 0, 0
-		}
-		return *sum > c.Limit
-	}
-	up, down := side(&c.up, &c.upSince, z), side(&c.down, &c.downSince, -z)
-	since = c.upSince
-	if c.down > c.up {
-		since = c.downSince
-	}
+	c.up, c.down = math.Max(0, c.up+z-c.Reference), math.Max(0, c.down-z-c.Reference)
 	switch {
-	case up && c.up >= c.down:
+	case math.Max(c.up, c.down) <= c.Limit:
+		return 0
+	case c.up > c.down:
 		alarm = 1
-	case down:
+	default:
 		alarm = -1
 	}
-	if alarm != 0 {
-		*c = CUSUM{Reference: c.Reference, Limit: c.Limit, Clip: c.Clip}
-	}
-	return alarm, since
+	c.Restart()
+	return alarm
 }
+
+// Restart sets both sums to zero.
+func (c *CUSUM) Restart() { c.up, c.down = 0, 0 }
 
 // Level is the larger sum over the limit: an alarm comes above 1.
 func (c *CUSUM) Level() float64 { return math.Max(c.up, c.down) / c.Limit }

@@ -63,6 +63,7 @@ func newRoot(a *app) *cobra.Command {
 		newDesign(a),
 		newVerify(a),
 		newSimulate(a),
+		newWatch(a),
 		newDemo(a),
 		newHistory(a),
 	)
