@@ -29,7 +29,7 @@ func newWatchLines(p *page, w *ident.Watch, rig *data.Rig) *watchLines {
 }
 
 // quantities in words.
-var quantities = map[string]string{"gain": "gain", "pole": "unstable pole", "growth": "growth rate of the pair"}
+var quantities = map[string]string{"gain": "gain", "pole": "rightmost pole", "growth": "growth of the pair"}
 
 func (l *watchLines) start(m *ident.Model) {
 	seconds, rare := l.w.Window()

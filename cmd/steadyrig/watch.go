@@ -26,10 +26,10 @@ func newWatch(a *app) *cobra.Command {
 		Short: "Watch gain and unstable pole drift through a log, or as it is written",
 		Long: `watch runs through a log in windows and says in each how far gain and rightmost
 pole are from the model. It raises an alarm when one of them has moved, at a
-level at which an unchanged rig raises a false one in --false-alarm-every of log
-on average. A window that cannot tell, because nothing from outside moved the
-rig, the sensor stuck or rows are missing, says so. LOOPS.json are the loops that
-should be running; without it the rig file's stopgap law is looked for.
+level at which an unchanged rig raises a false one in --false-alarm-every of
+log on average. A window that cannot tell, because nothing from outside moved
+the rig, the sensor stuck or rows are missing, says so. LOOPS.json are the loops
+that should be running; without it the rig file's stopgap law is looked for.
 
 --follow waits for more where the log ends, until ctrl-C; LOG may be - for
 standard input. Memory does not grow with the log. Exit status 3: an alarm was
