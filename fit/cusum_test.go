@@ -70,21 +70,24 @@ func TestSelfStartingRate(t *testing.T) {
 	}
 	limit := fit.CUSUMLimit(runLength, 0.5, clip)
 	alarms := 0
-	var n, sum, squares, lag, beyond float64
+	var n, sum, squares, lag, beyond, early float64
 	for run := range runs {
 		rnd := rand.New(rand.NewPCG(42, uint64(run)))
 		factor := freedom / distuv.ChiSquared{K: freedom, Src: rand.NewPCG(43, uint64(run))}.Rand()
-		s := fit.Standardised{Variance: 0.1, Factor: 1, Freedom: freedom, Clip: clip}
+		s := fit.Standardised{Variance: 1, Factor: 1, Freedom: freedom, Clip: clip}
 		c := fit.CUSUM{Reference: 0.5, Limit: limit, Clip: clip}
-		mean := math.Sqrt(0.1*factor) * rnd.NormFloat64()
+		mean := math.Sqrt(factor) * rnd.NormFloat64()
 		last := 0.0
-		for range length {
+		for k := range length {
 			v := 0.5 + rnd.Float64()
 			z, ok := s.Next(mean+math.Sqrt(v*factor)*rnd.NormFloat64(), v)
 			if !ok {
 				t.Fatal("nothing to hold the first value against")
 			}
 			n, sum, squares, lag = n+1, sum+z, squares+z*z, lag+z*last
+			if k < 3 { // when all hangs on the prior
+				early += z * z / (3 * runs)
+			}
 			if math.Abs(z) > 3 {
 				beyond++
 			}
@@ -102,6 +105,7 @@ func TestSelfStartingRate(t *testing.T) {
 		{"mean", sum / n, 0, 4 * sd},
 		{"mean square", squares / n, 1, 4 * sd * math.Sqrt2},
 		{"product of neighbours", lag / n, 0, 4 * sd},
+		{"mean square of the first three", early, 1, 4 * math.Sqrt(2.0/(3*runs))},
 		{"share beyond 3", beyond / n, 0.0026998, 4 * sd * math.Sqrt(0.0027)},
 	} {
 		if math.Abs(c.got-c.want) > c.four {

@@ -50,8 +50,12 @@ const (
 )
 
 const (
-	linearRange   = 0.03 // of gain or pole, within which one step from the model finds the plant
-	farDeviations = 4    // by which a move beyond it has to be no chance
+	// A move of gain or pole beyond linearRange is not found by one step: for some windows it is then asked whether they say
+	// by farDeviations that it is more than stillFar from where the step led.
+	linearRange   = 0.1
+	movingWindows = 4
+	stillFar      = 0.03
+	farDeviations = 3
 
 	followKeep   = 0.8   // of a window's weight is left a window later, in what follows the plant
 	keptWindows  = 32    // whose sums are at hand when an alarm comes
@@ -92,7 +96,7 @@ type Watch struct {
 	kept    []data.Segment
 	noiseSD float64 // of the last window that told
 	lastE   float64 // the last prediction error
-	moving  bool    // the model was moved, perhaps not far enough
+	moving  int     // windows that see whether the model was moved far enough
 
 	run, stretches, longer int // equal outputs in a row, and how often they come
 	lastY                  float64
@@ -292,7 +296,7 @@ func (m *Model) variance(slopes []float64) float64 {
 	return v
 }
 
-// linearise predicts about f from the next row on. It reports false, and changes nothing, where the watched pole of f is
+// linearise predicts about the plant of f from the next row on. It reports false, and changes nothing, where the watched pole of f is
 // not of the model's kind.
 func (w *Watch) linearise(f *fit.Prediction) bool {
 	first, _ := w.model.watchedPole()
@@ -331,6 +335,7 @@ func (w *Watch) linearise(f *fit.Prediction) bool {
 			power *= p
 		}
 	}
+	f.C, f.D = w.at.C, w.at.D // a few windows may give the noise a zero on the unit circle, or on its own pole
 	w.at = f
 	w.tracker = fit.NewRecursive(f, w.model.OperatingPoint.Input, w.model.OperatingPoint.Output)
 	w.broken, w.followed, w.past, w.lastE = true, fit.Sums{}, nil, 0
@@ -578,12 +583,18 @@ func (w *Watch) lookAtLaw(win *WatchWindow, silent, note func(string, ...any)) {
 // compare takes a window that tells into the charts.
 func (w *Watch) compare(win *WatchWindow, drift *fit.Drift, sums fit.Sums) {
 	w.report.Told++
-	if w.moving && w.far(drift) {
-		w.linearise(w.at.Moved(drift.Moved))
-		w.report.Now = win.Moves
+	w.followed = w.followed.Forget(followKeep, sums)
+	followed, err := w.followed.Drift()
+	if err != nil {
+		followed = drift
+	}
+	w.report.Now = w.moves(followed)
+	if w.moving > 0 {
+		if w.moving--; w.beyond(followed, stillFar, farDeviations) {
+			w.linearise(w.at.Moved(followed.Moved))
+		}
 		return
 	}
-	w.moving = false
 	past := pastWindow{from: win.From, sums: sums}
 	var raised []int
 	for i := range w.charts {
@@ -601,19 +612,15 @@ func (w *Watch) compare(win *WatchWindow, drift *fit.Drift, sums fit.Sums) {
 	if w.past = append(w.past, past); len(w.past) > keptWindows {
 		w.past = w.past[1:]
 	}
-	w.followed = w.followed.Forget(followKeep, sums)
-	if f, err := w.followed.Drift(); err == nil {
-		w.report.Now = w.moves(f)
-	}
 	if len(raised) > 0 {
 		w.alarm(win, drift, raised)
 	}
 }
 
-// far reports whether a plant has moved so far from the linearisation that a step from there misses it.
-func (w *Watch) far(d *fit.Drift) bool {
+// beyond reports whether a quantity has moved from the linearisation by more than so much and so many deviations.
+func (w *Watch) beyond(d *fit.Drift, by, deviations float64) bool {
 	return slices.ContainsFunc(w.charts, func(c chart) bool {
-		return math.Abs(c.value(d)-c.base) > math.Max(linearRange, farDeviations*math.Sqrt(c.variance(d)))
+		return math.Abs(c.value(d)-c.base) > math.Max(by, deviations*math.Sqrt(c.variance(d)))
 	})
 }
 
@@ -638,7 +645,10 @@ func (w *Watch) alarm(win *WatchWindow, drift *fit.Drift, raised []int) {
 	}
 	w.report.Now = w.moves(drift)
 	before := w.past[first].before
-	w.moving = w.linearise(w.at.Moved(drift.Moved))
+	far := w.beyond(drift, linearRange, 0)
+	if w.linearise(w.at.Moved(drift.Moved)) && far {
+		w.moving = movingWindows
+	}
 	for i := range w.charts {
 		w.charts[i].scores = before[i] // the move is no scatter
 		w.charts[i].scores.Forget()
