@@ -54,7 +54,7 @@ const (
 	// by farDeviations that it is more than stillFar from where the step led.
 	linearRange   = 0.1
 	movingWindows = 4
-	stillFar      = 0.03
+	stillFar      = 0.01
 	farDeviations = 3
 
 	followKeep   = 0.8   // of a window's weight is left a window later, in what follows the plant
@@ -296,7 +296,7 @@ func (m *Model) variance(slopes []float64) float64 {
 	return v
 }
 
-// linearise predicts about the plant of f from the next row on. It reports false, and changes nothing, where the watched pole of f is
+// linearise predicts about f from the next row on. It reports false, and changes nothing, where the watched pole of f is
 // not of the model's kind.
 func (w *Watch) linearise(f *fit.Prediction) bool {
 	first, _ := w.model.watchedPole()
@@ -335,10 +335,29 @@ func (w *Watch) linearise(f *fit.Prediction) bool {
 			power *= p
 		}
 	}
-	f.C, f.D = w.at.C, w.at.D // a few windows may give the noise a zero on the unit circle, or on its own pole
+	if !w.distinct(f) {
+		f.C, f.D = w.at.C, w.at.D
+	}
 	w.at = f
 	w.tracker = fit.NewRecursive(f, w.model.OperatingPoint.Input, w.model.OperatingPoint.Output)
 	w.broken, w.followed, w.past, w.lastE = true, fit.Sums{}, nil, 0
+	return true
+}
+
+// distinct reports whether the noise zeros of f, which a few windows may have moved far, forget within a quarter of a window
+// and lie off the disturbance's own poles, where rows would not tell the two apart.
+func (w *Watch) distinct(f *fit.Prediction) bool {
+	zeros := zRoots(f.C)
+	if 4*memory(zeros) > float64(w.rows)/4 {
+		return false
+	}
+	for _, p := range zRoots(f.D) {
+		for _, z := range zeros {
+			if cmplx.Abs(z-p) < 0.2*(1-cmplx.Abs(p)) {
+				return false
+			}
+		}
+	}
 	return true
 }
 
