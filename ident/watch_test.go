@@ -102,8 +102,8 @@ func (l *livingRig) next() data.Row {
 	return row
 }
 
-// changed is the truth with its gain and its rightmost poles' modulus times the given factors.
-func changed(r demorig.Rig, gain, pole float64) lti.TF {
+// drifted is the truth with its gain and its rightmost poles' modulus times the given factors.
+func drifted(r demorig.Rig, gain, pole float64) lti.TF {
 	g := r.Truth
 	roots := g.Den.Roots()
 	p := rightmostRoot(roots)
@@ -243,7 +243,7 @@ func TestWatchFindsChanges(t *testing.T) {
 				before := 10*w.rows + (run*w.rows/runs)%w.rows
 				watch(t, w, l, 10+most, func(k int) {
 					if k == before {
-						l.become(changed(r, c.gain, c.pole))
+						l.become(drifted(r, c.gain, c.pole))
 					}
 				})
 				rep := w.Report()
@@ -285,7 +285,7 @@ func TestWatchFollowsFarMoves(t *testing.T) {
 	l := live(r, 51)
 	watch(t, w, l, 20, func(k int) {
 		if k == 8*w.rows+300 {
-			l.become(changed(l.rig, 1.5, 1))
+			l.become(drifted(l.rig, 1.5, 1))
 		}
 	})
 	rep := w.Report()
@@ -412,7 +412,7 @@ func TestWatchHoldsAgainstTheModel(t *testing.T) {
 		if w, err = NewWatch(w.model, w.rig, WatchOptions{}); err != nil {
 			t.Fatal(err)
 		}
-		l.become(changed(l.rig, 1.12, 1))
+		l.become(drifted(l.rig, 1.12, 1))
 		watch(t, w, l, 12, nil)
 		if n, want := len(w.Report().Alarms), map[string]int{ByCurvature: 1, BySandwich: 0}[by]; n != want {
 			t.Errorf("intervals by %s: %d alarms, want %d", by, n, want)
