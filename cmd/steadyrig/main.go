@@ -51,7 +51,11 @@ func run(ctx context.Context, args []string, stdin io.Reader, stdout, stderr io.
 	status = statusOf(err)
 	switch status {
 	case statusInterrupted:
-		fmt.Fprintln(stderr, "steadyrig: interrupted; no file was written")
+		var left *stopped
+		if !errors.As(err, &left) {
+			err = errors.New("interrupted; no file was written")
+		}
+		fmt.Fprintln(stderr, "steadyrig:", err)
 	case statusFault:
 		fmt.Fprintln(stderr, "steadyrig: fault in the tool:", oneLine(err.Error()))
 	default:

@@ -524,7 +524,7 @@ func TestHelp(t *testing.T) {
 	inFolder(t, nil)
 	_, text, _ := call(t)
 	golden(t, "help", text)
-	for _, name := range []string{"new", "run", "audit", "fit", "design", "verify", "recheck", "simulate", "demo", "history"} {
+	for _, name := range []string{"new", "run", "audit", "fit", "design", "verify", "recheck", "simulate", "watch", "demo", "history", "table"} {
 		status, text, stderr := call(t, "help", name)
 		if status != statusDone || stderr != "" {
 			t.Errorf("help %s: exit status %d: %s", name, status, stderr)

@@ -64,6 +64,7 @@ func newRoot(a *app) *cobra.Command {
 		newVerify(a),
 		newRecheck(a),
 		newSimulate(a),
+		newWatch(a),
 		newDemo(a),
 		newHistory(a),
 	)
