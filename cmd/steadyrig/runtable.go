@@ -60,7 +60,7 @@ quotes.
 Columns:
 ` + strings.TrimSuffix(b.String(), "\n"),
 		Example: `  steadyrig table rig.toml 'run*.csv' --out tests.csv
-  steadyrig table rig.toml */model.json --where 'delay > 0' --sort -unstable_pole
+  steadyrig table rig.toml */model.json --where 'delay > 0' --sort -gain
   steadyrig table rig.toml run*.csv --join record.csv --columns file,operator`,
 		Args: wants(2, -1, "a rig file and one or more logs or models"),
 		RunE: func(cmd *cobra.Command, args []string) error {
