@@ -131,7 +131,7 @@ func (g *regression) arx(t *triangle, opt ARXOptions) (*ARX, error) {
 		if g.without {
 			continue
 		}
-		sums := g.sums(g.data[i])
+		sums := g.sums(plain(g.data[i]))
 		c := sums[len(g.lags)]
 		for j := range q {
 			c -= s.coef[j] * sums[j]

@@ -35,7 +35,7 @@ func (p *Predictor) Influence(m *Prediction) (*Influence, error) {
 	}
 	_, q, ok := s.errorsAt(x)
 	if !ok {
-		return nil, ErrNoFit
+		return nil, s.failure()
 	}
 	var inv mat.Dense
 	if err := inv.Inverse(h); err != nil {
@@ -48,7 +48,7 @@ func (p *Predictor) Influence(m *Prediction) (*Influence, error) {
 	unit := s.units()
 	for i := range s.work {
 		w := &s.work[i]
-		s.filtered(w, q, s.start(i))
+		s.filterAll(w, q, s.start(i))
 		f.rows = append(f.rows, influences(&inv, s.derivatives(w, w, x.c, cols, free), s.rowErrors(w), free, unit))
 	}
 	return f, nil
@@ -70,7 +70,7 @@ func (s Shape) free() []int {
 }
 
 // rowErrors are a record's prediction errors from its first equation on.
-func (s *search) rowErrors(w *workspace) []float64 { return w.e[len(w.e)-len(w.step):] }
+func (s *search) rowErrors(w *workspace) []float64 { return w.e[len(w.e)-w.rows:] }
 
 // influences returns -inv d_k e_k for each row k, at the places of the free ones
 // of as many parameters as there are units.
@@ -94,7 +94,7 @@ func (s *search) curvature(x point) (*mat.Dense, error) {
 	const part = 1e-2
 	_, q, ok := s.errorsAt(x)
 	if !ok {
-		return nil, ErrNoFit
+		return nil, s.failure()
 	}
 	jj, _ := s.information(x, q)
 	sigma := math.Sqrt(s.rss / float64(s.rows))
@@ -109,7 +109,7 @@ func (s *search) curvature(x point) (*mat.Dense, error) {
 			y := s.moved(x, step)
 			_, q, ok := s.errorsAt(y)
 			if !ok {
-				return nil, ErrNoFit
+				return nil, s.failure()
 			}
 			_, g[side] = s.information(y, q)
 		}
@@ -128,26 +128,26 @@ func (s *search) curvature(x point) (*mat.Dense, error) {
 // signals in from under the transients of w, less what the record's constant
 // and start-up errors take of them. c is C in powers of δ.
 func (s *search) derivatives(w, from *workspace, c []float64, cols []column, which []int) [][]float64 {
-	t0 := len(w.e) - len(w.step)
-	h := gram(c, len(w.e)-t0)
+	t0 := len(w.e) - w.rows
+	h := gram(c, w.rows)
 	local := make([]float64, h.SymmetricDim())
 	g := make([]float64, len(local))
 	out := make([][]float64, len(which))
 	for i, k := range which {
-		d := make([]float64, len(w.e)-t0)
-		cols[k].at(d, from, t0)
+		d := make([]float64, w.rows)
+		cols[k].at(d, &from.filtered, t0)
 		// Lagged copies of a filtered signal did not start at rest at t0.
 		var past [1]float64
 		for j, free := range w.free {
-			cols[k].at(past[:], from, t0-j-1)
+			cols[k].at(past[:], &from.filtered, t0-j-1)
 			floats.AddScaled(d[:w.settled], -past[0], free[:w.settled])
 		}
-		g[0] = floats.Dot(w.step, d)
+		g[0] = w.alongStep(d)
 		for j, free := range w.free {
 			g[j+1] = -floats.Dot(free[:w.settled], d[:w.settled])
 		}
 		if solveScaled(local, h, g, 0) {
-			floats.AddScaled(d, -local[0], w.step)
+			w.addStep(d, -local[0])
 			for j, free := range w.free {
 				floats.AddScaled(d[:w.settled], local[j+1], free[:w.settled])
 			}
@@ -186,16 +186,39 @@ func (f *Influence) Covariance() *mat.SymDense {
 				if a == nil || b == nil {
 					continue
 				}
+				if len(a) > block {
+					sum += bartlett(a, b, lags)
+					continue
+				}
 				sum += floats.Dot(a, b)
 				for k := 1; k <= lags && k < len(a); k++ {
-					bartlett := 1 - float64(k)/float64(lags+1)
-					sum += bartlett * (floats.Dot(a[k:], b[:len(b)-k]) + floats.Dot(a[:len(a)-k], b[k:]))
+					weight := 1 - float64(k)/float64(lags+1)
+					sum += weight * (floats.Dot(a[k:], b[:len(b)-k]) + floats.Dot(a[:len(a)-k], b[k:]))
 				}
 			}
 			c.SetSym(i, j, scale*sum)
 		}
 	}
 	return c
+}
+
+// bartlett returns the sum of products of a and b in rows up to so many lags
+// apart, by Bartlett's weights, in as many steps as there are rows: two rows k
+// apart are together in lags+1-k of all stretches of lags+1 rows (Meketon &
+// Schmeiser, Overlapping batch means: something for nothing?, Proc. Winter
+// Simulation Conference 1984, 226-230).
+func bartlett(a, b []float64, lags int) float64 {
+	var sa, sb, sum float64 // over the stretch that ends in row k, over all of them
+	for k := range len(a) + lags {
+		if k < len(a) {
+			sa, sb = sa+a[k], sb+b[k]
+		}
+		if first := k - lags - 1; first >= 0 {
+			sa, sb = sa-a[first], sb-b[first]
+		}
+		sum += sa * sb
+	}
+	return sum / float64(lags+1)
 }
 
 // Difference is a test whether two estimates of one plant from the same rows

@@ -53,26 +53,34 @@ func (s *search) normal(q shifted, p int) (*mat.SymDense, []float64) {
 		if len(w.missing) > 0 && rows == len(w.e)-t0 {
 			heard = mat.NewDense(len(w.missing), all, nil)
 		}
+		s.rest()
+		for s.view.to < t0 {
+			s.advance(w, q, t0, min(t0, s.view.to+chunk))
+		}
 		for k := range p {
 			for i := 1; i <= nc; i++ {
 				var v [1]float64
-				cols[k].at(v[:], w, t0-i)
+				cols[k].at(v[:], &s.view.filtered, t0-i-s.view.from)
 				past[k*nc+i-1] = v[0]
 			}
 		}
 		for from := 0; from < rows; from += chunk {
+			if from%block == 0 && s.stop() {
+				return
+			}
 			m := min(chunk, rows-from)
 			col := func(k int) []float64 {
 				switch {
 				case k < p:
 					return s.buf[k*chunk : k*chunk+m]
 				case k == p:
-					return w.step[from : from+m]
+					return w.steps(from, from+m)
 				}
 				return w.free[k-p-1][from : from+m]
 			}
+			s.advance(w, q, t0, t0+from+m)
 			for k := range p {
-				cols[k].at(col(k), w, t0+from)
+				cols[k].at(col(k), &s.view.filtered, t0+from-s.view.from)
 			}
 			e := w.e[t0+from : t0+from+m]
 			live := all
@@ -166,7 +174,6 @@ func (s *search) normal(q shifted, p int) (*mat.SymDense, []float64) {
 	}
 	for i := range s.work {
 		w, t0 := &s.work[i], s.start(i)
-		s.filtered(w, q, t0)
 		share, kept := s.shareOf(i), p
 		if len(share) > 1 {
 			kept++
@@ -174,11 +181,10 @@ func (s *search) normal(q shifted, p int) (*mat.SymDense, []float64) {
 		weight := s.weight(s.recs[i].Log)
 		add(w, t0, len(w.e)-t0, kept, weight)
 		if warm := s.warm[i]; warm > 0 {
-			e := slices.Clone(w.e)
+			e := slices.Clone(w.e[s.pad : t0+warm])
 			w.restart(t0, warm)
-			w.errorsFiltered(q, t0)
 			add(w, t0, warm, kept, -weight)
-			copy(w.e, e)
+			copy(w.e[s.pad:], e)
 		}
 		if kept > p && i == share[len(share)-1] {
 			for k := range p {
@@ -268,7 +274,7 @@ type column struct {
 	whole      int
 }
 
-func (c *column) at(dst []float64, w *workspace, from int) {
+func (c *column) at(dst []float64, w *filtered, from int) {
 	for k := range dst {
 		dst[k] = 0
 	}
@@ -311,33 +317,4 @@ func (s *search) columns(q shifted) []column {
 		cols = append(cols, column{e: unit(nc, j, -1)})
 	}
 	return cols
-}
-
-// filtered fills the filtered signals of a record from its errors.
-func (s *search) filtered(w *workspace, q shifted, t0 int) {
-	if len(q.d) > 1 {
-		fir(w.dy[s.pad:], w.y, q.d, s.pad, 1, false)
-		fir(w.du[s.pad:], w.u, q.d, s.pad, 1, false)
-		// The first rows lack their past: the signals start there.
-		for k := s.pad; k < s.pad+len(q.d)-1; k++ {
-			w.dy[k], w.du[k] = 0, 0
-		}
-		first := s.pad + len(q.a) + len(q.b) + max(q.whole, 0)
-		fir(w.av[first:], w.y, q.a, first, 1, false)
-		fir(w.av[first:], w.u, q.b, first-q.whole, -1, true)
-		clear(w.vf[:first])
-		divide(w.vf, w.av, q.c, first)
-		divide(w.yf, w.dy, q.c, s.pad)
-		divide(w.uf, w.du, q.c, s.pad)
-	} else {
-		divide(w.yf, w.y, q.c, s.pad)
-		divide(w.uf, w.u, q.c, s.pad)
-	}
-	w.errorsFiltered(q, t0)
-}
-
-func (w *workspace) errorsFiltered(q shifted, t0 int) {
-	start := t0 - (len(q.c) - 1)
-	clear(w.ef[:start])
-	divide(w.ef, w.e, q.c, start)
 }

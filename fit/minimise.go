@@ -129,6 +129,9 @@ func (s *search) minimise(x point, tol float64, limit int) (point, float64, int,
 			floats.Scale(-1, step)
 			y := s.moved(x, step)
 			trial, qy, ok := s.errorsAt(y)
+			if s.stopped != nil {
+				return x, rss, it, false
+			}
 			if ok && trial < rss {
 				gain := (rss - trial) / rss
 				x, q, rss, better = y, qy, trial, true

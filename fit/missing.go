@@ -76,7 +76,7 @@ func (g *gaps) determinant(h *mat.SymDense, r *transient, ad, c []float64) float
 }
 
 func (g *gaps) eliminate(h *mat.SymDense, r *transient, ad, c []float64) bool {
-	n, rows := len(g.missing), len(r.step)
+	n, rows := len(g.missing), r.rows
 	g.echo = echoOf(ad, c, min(rows, longestEcho))
 	// Pairs of missing outputs by the rows between them, later ones last: R
 	// times itself so many rows later is summed once for all of them, over the
@@ -106,7 +106,9 @@ func (g *gaps) eliminate(h *mat.SymDense, r *transient, ad, c []float64) bool {
 	}
 	q := h.SymmetricDim()
 	g.cross = mat.NewDense(n, q, nil)
-	g.along(g.cross, 0, r.step, 0)
+	for from := 0; from < rows; from += block {
+		g.along(g.cross, 0, r.steps(from, min(rows, from+block)), from)
+	}
 	for i := 1; i < q; i++ {
 		g.along(g.cross, i, r.free[i-1][:r.settled], 0)
 	}

@@ -2,7 +2,6 @@ package fit
 
 import (
 	"math"
-	"slices"
 
 	"gonum.org/v1/gonum/floats"
 	"gonum.org/v1/gonum/mat"
@@ -40,12 +39,12 @@ func (p *Predictor) Outliers(m *Prediction) (*Outliers, error) {
 	defer s.done()
 	_, q, ok := s.errorsAt(x)
 	if !ok {
-		return nil, ErrNoFit
+		return nil, s.failure()
 	}
 	ad := lti.Poly(q.a).Mul(q.d)
 	n := len(p.given)
 	o := &Outliers{SD: make([]float64, len(p.logs)), log: make([]int, n), first: make([]int, n), errs: make([][]float64, n), along: make([][]float64, n)}
-	sizes := make([][]float64, len(p.logs))
+	byLog := make([][][]float64, len(p.logs))
 	longest := 0
 	for i := range s.work {
 		e := append([]float64(nil), s.work[i].e[s.start(i):]...)
@@ -53,14 +52,12 @@ func (p *Predictor) Outliers(m *Prediction) (*Outliers, error) {
 		o.first[p.of[i]], o.errs[p.of[i]], o.along[p.of[i]] = p.first[i], e, backwards(e, ad, q.c)
 		log := p.recs[i].Log
 		o.log[p.of[i]] = log
-		for _, v := range e {
-			sizes[log] = append(sizes[log], math.Abs(v))
-		}
+		byLog[log] = append(byLog[log], e)
 		longest = max(longest, len(e))
 	}
-	for log, x := range sizes {
-		if slices.Sort(x); len(x) > 0 {
-			o.SD[log] = x[len(x)/2] / 0.674490 // the median modulus of a standard normal variable
+	for log, x := range byLog {
+		if len(x) > 0 {
+			o.SD[log] = medianModulus(x) / 0.674490 // that of a standard normal variable
 		}
 	}
 	o.echo = echoOf(ad, q.c, min(longest, longestEcho))
@@ -75,20 +72,56 @@ func (p *Predictor) Outliers(m *Prediction) (*Outliers, error) {
 	return o, nil
 }
 
+// medianModulus returns the median modulus of numbers, of an even count the upper
+// one, without sorting them or a copy: the bits of moduli sort as they do, and
+// those of the median are found by counting, sixteen at a time.
+func medianModulus(x [][]float64) float64 {
+	const digit = 16
+	place := 0
+	for _, part := range x {
+		place += len(part)
+	}
+	place /= 2
+	count := make([]int, 1<<digit)
+	var bits uint64
+	for shift := 64 - digit; shift >= 0; shift -= digit {
+		clear(count)
+		for _, part := range x {
+			for _, v := range part {
+				if b := math.Float64bits(math.Abs(v)) >> shift; b>>digit == bits {
+					count[b&(1<<digit-1)]++
+				}
+			}
+		}
+		d := 0
+		for ; place >= count[d]; d++ {
+			place -= count[d]
+		}
+		bits = bits<<digit | uint64(d)
+	}
+	return math.Float64frombits(bits)
+}
+
 // backwards returns the products of e with the responses of A D/C to a pulse in
 // each of its rows: e through the same filter against the time.
 func backwards(e, ad, c []float64) []float64 {
-	n := len(e)
-	z, out := make([]float64, n), make([]float64, n)
-	for k := n - 1; k >= 0; k-- {
-		v := e[k]
-		for j := 1; j < len(c) && k+j < n; j++ {
-			v -= c[j] * z[k+j]
+	out := make([]float64, len(e))
+	z := make([]float64, chunk+max(len(ad), len(c))) // e/C from a row on; none behind the last
+	for to := len(e); to > 0; {
+		from := max(0, to-chunk)
+		copy(z[to-from:], z) // rows of the turn before
+		for k := to - 1; k >= from; k-- {
+			at := z[k-from:]
+			v := e[k]
+			for j := 1; j < len(c); j++ {
+				v -= c[j] * at[j]
+			}
+			at[0] = v
+			for j, a := range ad {
+				out[k] += a * at[j]
+			}
 		}
-		z[k] = v
-		for j := 0; j < len(ad) && k+j < n; j++ {
-			out[k] += ad[j] * z[k+j]
-		}
+		to = from
 	}
 	return out
 }

@@ -102,8 +102,8 @@ func (p *Predictor) Fit(start *Prediction, tol float64, limit int) (*Prediction,
 	s, x := p.begin(start)
 	defer s.done()
 	x, objective, steps, converged := s.minimise(x, tol, limit)
-	if !(objective < math.Inf(1)) {
-		return nil, ErrNoFit
+	if s.stopped != nil || !(objective < math.Inf(1)) {
+		return nil, s.failure()
 	}
 	return s.result(x, steps, converged), nil
 }
@@ -117,9 +117,12 @@ func (p *Predictor) Covariance(m *Prediction) error {
 	defer s.done()
 	_, q, ok := s.errorsAt(x)
 	if !ok {
-		return ErrNoFit
+		return s.failure()
 	}
 	h, _ := s.information(x, q)
+	if s.stopped != nil {
+		return s.failure()
+	}
 	n := s.shape.size()
 	s.hold(h, nil)
 	sd := make([]float64, n)
@@ -168,7 +171,7 @@ func (p *Predictor) Errors(m *Prediction) (errs, before [][]float64, err error) 
 	s, x := p.begin(m)
 	defer s.done()
 	if _, _, ok := s.errorsAt(x); !ok {
-		return nil, nil, ErrNoFit
+		return nil, nil, s.failure()
 	}
 	for i := range s.work {
 		e := append([]float64(nil), s.work[i].e[s.start(i)+s.warm[i]:]...)

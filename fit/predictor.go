@@ -19,11 +19,13 @@ type Predictor struct {
 	Lead   int     // rows of each record that serve as past only, or more where an output of them is missing
 	// DelayRange bounds a free delay, s.
 	DelayRange [2]float64
+	// Interrupt is asked every so many rows, from any goroutine; what runs ends with the error that it returns. nil: never.
+	Interrupt func() error
 
 	given  []Record  // all of them, missing outputs filled
 	of     []int     // which of given a record of the fit is
-	recs   []Record  // means removed, scaled to unit deviation, missing outputs filled
-	padded []Record  // the same behind pad zeros
+	padded []Record  // means removed, scaled to unit deviation, missing outputs filled, behind pad zeros
+	recs   []Record  // padded without the zeros
 	meanU  []float64 // by record: of all that share its constant
 	meanY  []float64
 	shares [][]int // the records of each constant
@@ -109,7 +111,9 @@ func NewPredictor(recs []Record, period, maxDelay float64) (*Predictor, error) {
 		mu, my = mu/rows, my/rows
 		for _, i := range share {
 			r := p.recs[i]
-			c := Record{U: make([]float64, len(r.U)), Y: make([]float64, len(r.Y)), Missing: r.Missing, Log: r.Log, Resumes: i != share[0]}
+			padded := Record{U: make([]float64, p.pad+len(r.U)), Y: make([]float64, p.pad+len(r.Y))}
+			c := Record{U: padded.U[p.pad:], Y: padded.Y[p.pad:], Missing: r.Missing, Log: r.Log, Resumes: i != share[0]}
+			p.padded = append(p.padded, padded)
 			for k := range r.U {
 				c.U[k], c.Y[k] = r.U[k]-mu, r.Y[k]-my
 				uu += c.U[k] * c.U[k]
@@ -130,10 +134,17 @@ func NewPredictor(recs []Record, period, maxDelay float64) (*Predictor, error) {
 	for _, r := range p.recs {
 		floats.Scale(1/p.su, r.U)
 		floats.Scale(1/p.sy, r.Y)
-		zeros := make([]float64, p.pad)
-		p.padded = append(p.padded, Record{U: append(zeros[:p.pad:p.pad], r.U...), Y: append(zeros[:p.pad:p.pad], r.Y...)})
 	}
 	return p, nil
+}
+
+// On prepares other records for fits as with p.
+func (p *Predictor) On(recs []Record) (*Predictor, error) {
+	q, err := NewPredictor(recs, p.Period, p.DelayRange[1])
+	if err == nil {
+		q.DelayRange, q.Interrupt = p.DelayRange, p.Interrupt
+	}
+	return q, err
 }
 
 // Rows returns the number of equations of every fit, less one for each missing output.
@@ -159,6 +170,7 @@ type search struct {
 	shape Shape
 	w0, h float64 // rad/s; scaled period
 	work  []workspace
+	view  window
 	buf   []float64 // a chunk of the Jacobian
 
 	rss, logDet float64   // parts of the objective at the last point looked at
@@ -167,17 +179,17 @@ type search struct {
 	prior       *near     // nil: none
 	apriori     float64   // the prior's part of -2 log likelihood at the last point looked at
 
+	stopped error // by Interrupt
+
 	probe     transient // for differences of the determinant
 	probeGaps gaps
 }
 
 // workspace holds the signals of one record; each starts with pad zeros.
 type workspace struct {
-	y, u       []float64 // padded data, with the estimates of missing outputs at the last point looked at
-	e          []float64 // prediction errors
-	yf, uf     []float64 // D y / C, D u / C
-	vf, ef     []float64 // (A y - B u) / C, e / C
-	dy, du, av []float64
+	y, u     []float64 // padded data, with the estimates of missing outputs at the last point looked at
+	e        []float64 // prediction errors
+	filtered           // all rows, where filterAll was asked for them
 	transient
 	gaps
 	all, first local   // over all rows, and over those that warm up
@@ -202,12 +214,8 @@ func (p *Predictor) newSearch(shape Shape, w0 float64) *search {
 	}
 	s.work = make([]workspace, len(p.recs))
 	for i, r := range p.recs {
-		n := p.pad + len(r.Y)
-		buf := make([]float64, 8*n)
 		w := &s.work[i]
-		for _, x := range []*[]float64{&w.e, &w.yf, &w.uf, &w.vf, &w.ef, &w.dy, &w.du, &w.av} {
-			*x, buf = buf[:n:n], buf[n:]
-		}
+		w.e = make([]float64, p.pad+len(r.Y))
 		w.y, w.u = p.padded[i].Y, p.padded[i].U
 		if len(r.Missing) > 0 {
 			w.y = append([]float64(nil), w.y...)
@@ -217,6 +225,22 @@ func (p *Predictor) newSearch(shape Shape, w0 float64) *search {
 		}
 	}
 	return s
+}
+
+// stop asks whether to stop.
+func (s *search) stop() bool {
+	if s.stopped == nil && s.Interrupt != nil {
+		s.stopped = s.Interrupt()
+	}
+	return s.stopped != nil
+}
+
+// failure is why no errors could be had.
+func (s *search) failure() error {
+	if s.stopped != nil {
+		return s.stopped
+	}
+	return ErrNoFit
 }
 
 // done hands the workspaces back.
@@ -286,13 +310,16 @@ func (s *search) errorsAt(x point) (float64, shifted, bool) {
 			w.all.h, w.first.h = gram(x.c, len(w.e)-t0), gram(x.c, s.warm[i])
 			w.logDet = logDet(w.all.h, 1) - logDet(w.first.h, 1)
 		}
-		y := s.padded[i].Y
-		fir(w.e[t0:], y, ad, t0, 1, false)
-		fir(w.e[t0:], w.u, bd, t0-q.whole, -1, true)
-		for k := s.pad; k < t0; k++ {
-			w.e[k] = 0
+		clear(w.e[s.pad:t0])
+		for from := t0; from < len(w.e); from += chunk {
+			if (from-t0)%block == 0 && s.stop() {
+				return math.Inf(1), q, false
+			}
+			to := min(len(w.e), from+chunk)
+			fir(w.e[from:to], s.padded[i].Y, ad, from, 1, false)
+			fir(w.e[from:to], w.u, bd, from-q.whole, -1, true)
+			divide(w.e[:to], w.e[:to], q.c, from)
 		}
-		divide(w.e, w.e, q.c, t0)
 		w.run(q.c, len(w.e)-t0)
 		if len(w.missing) > 0 {
 			w.logDet = w.determinant(w.all.h, &w.transient, ad, q.c) - startUp(x.c, s.warm[i])
@@ -471,12 +498,15 @@ func (p *Predictor) Rest(m *Prediction, record int, y float64) float64 {
 // missing samples most probably; those that no equation asks for stay on
 // straight lines.
 func (p *Predictor) Restored(m *Prediction) ([]Record, error) {
+	out := slices.Clone(p.given)
+	if !p.anyMissing() {
+		return out, nil
+	}
 	s, x := p.begin(m)
 	defer s.done()
 	if _, _, ok := s.errorsAt(x); !ok {
-		return nil, ErrNoFit
+		return nil, s.failure()
 	}
-	out := append([]Record(nil), p.given...)
 	for i, r := range p.recs {
 		if len(r.Missing) == 0 {
 			continue

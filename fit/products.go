@@ -2,6 +2,7 @@ package fit
 
 import (
 	"fmt"
+	"slices"
 
 	"gonum.org/v1/gonum/floats"
 	"gonum.org/v1/gonum/mat"
@@ -104,12 +105,12 @@ func (g *regression) products() *mat.SymDense {
 		longest[l.signal] = max(longest[l.signal], l.steps)
 	}
 	for _, i := range g.used {
-		x := make([][]float64, len(g.data[i]))
+		x := make([]about, len(g.data[i]))
 		for s := range longest {
-			x[s] = g.data[i][s]
+			x[s].x = g.data[i][s]
 			if !g.without {
 				// About their means the products do not cancel; the means of the shifted rows are then taken out exactly.
-				x[s] = lessMean(x[s])
+				x[s].mean = mean(x[s].x)
 			}
 		}
 		pair := map[[2]int][][]float64{}
@@ -121,7 +122,7 @@ func (g *regression) products() *mat.SymDense {
 			}
 		}
 		sums := g.sums(x)
-		rows := float64(len(x[output]) - g.first)
+		rows := float64(len(g.data[i][output]) - g.first)
 		for a, la := range all {
 			for b, lb := range all[a:] {
 				p1, p2 := la, lb
@@ -140,21 +141,56 @@ func (g *regression) products() *mat.SymDense {
 }
 
 // sums returns the sum over the rows of every lag and of y.
-func (g *regression) sums(x [][]float64) []float64 {
+func (g *regression) sums(x []about) []float64 {
 	all := g.columns()
 	byLag := make([][]float64, len(x))
 	out := make([]float64, len(all))
 	for j, l := range all {
 		if byLag[l.signal] == nil {
-			v := x[l.signal]
+			v := &x[l.signal]
 			s := make([]float64, g.first+1)
-			s[0] = floats.Sum(v[g.first:])
+			for from := g.first; from < len(v.x); from += block {
+				s[0] += floats.Sum(v.rows(from, min(len(v.x), from+block)))
+			}
 			for i := 1; i <= g.first; i++ {
-				s[i] = s[i-1] + v[g.first-i] - v[len(v)-i]
+				s[i] = s[i-1] + v.at(g.first-i) - v.at(len(v.x)-i)
 			}
 			byLag[l.signal] = s
 		}
 		out[j] = byLag[l.signal][l.steps]
+	}
+	return out
+}
+
+// about is x less a number, without a copy of all of it.
+type about struct {
+	x    []float64
+	mean float64
+	buf  []float64
+}
+
+func (a *about) at(k int) float64 { return a.x[k] - a.mean }
+
+// rows returns rows [from, to), until it is called again. They lie in memory as
+// even or odd as in x: the order of gonum's sums depends on that.
+func (a *about) rows(from, to int) []float64 {
+	if a.mean == 0 {
+		return a.x[from:to]
+	}
+	odd := from & 1
+	a.buf = slices.Grow(a.buf[:0], odd+to-from)[:odd+to-from]
+	out := a.buf[odd:]
+	for k, v := range a.x[from:to] {
+		out[k] = v - a.mean
+	}
+	return out
+}
+
+// plain is signals less nothing.
+func plain(x [][]float64) []about {
+	out := make([]about, len(x))
+	for i, v := range x {
+		out[i].x = v
 	}
 	return out
 }
@@ -180,24 +216,26 @@ func mean(x []float64) float64 {
 const productsChunk = 1024
 
 // laggedProducts returns S[i][j], the sum over k in [first, len) of a(k-i) b(k-j), i to maxA, j to maxB.
-func laggedProducts(a, b []float64, first, maxA, maxB int) [][]float64 {
-	n := len(a)
+func laggedProducts(a, b about, first, maxA, maxB int) [][]float64 {
+	n := len(a.x)
+	a.buf, b.buf = nil, nil // not each other's
 	s := make([][]float64, maxA+1)
 	for i := range s {
 		s[i] = make([]float64, maxB+1)
 	}
 	for from := first; from < n; from += productsChunk {
 		to := min(from+productsChunk, n)
+		x, y := a.rows(from-maxA, to), b.rows(from-maxB, to)
 		for j := range s[0] {
-			s[0][j] += floats.Dot(a[from:to], b[from-j:to-j])
+			s[0][j] += floats.Dot(x[maxA:], y[maxB-j:len(y)-j])
 		}
 		for i := 1; i <= maxA; i++ {
-			s[i][0] += floats.Dot(a[from-i:to-i], b[from:to])
+			s[i][0] += floats.Dot(x[maxA-i:len(x)-i], y[maxB:])
 		}
 	}
 	for i := 1; i <= maxA; i++ {
 		for j := 1; j <= maxB; j++ {
-			s[i][j] = s[i-1][j-1] + a[first-i]*b[first-j] - a[n-i]*b[n-j]
+			s[i][j] = s[i-1][j-1] + a.at(first-i)*b.at(first-j) - a.at(n-i)*b.at(n-j)
 		}
 	}
 	return s
@@ -221,7 +259,7 @@ func (g *regression) reduceRows() *triangle {
 		x := g.data[i]
 		offset := make([]float64, n)
 		if !g.without {
-			floats.ScaleTo(offset, 1/float64(len(x[output])-g.first), g.sums(x))
+			floats.ScaleTo(offset, 1/float64(len(x[output])-g.first), g.sums(plain(x)))
 		}
 		for k := g.first; k < len(x[output]); k++ {
 			if filled == n+block {

@@ -158,7 +158,7 @@ func (r *Recursive) Add(u, y []float64) []float64 {
 func (r *Recursive) take(from, to int) {
 	col := func(i int) []float64 { return r.columns[i*RecursiveChunk:][:to-from] }
 	for i := range r.cols {
-		r.cols[i].at(col(i), &r.w, from)
+		r.cols[i].at(col(i), &r.w.filtered, from)
 	}
 	floats.ScaleTo(col(len(r.cols)), -1, r.step[from:to])
 	e, s := r.w.e[from:to], &r.sums

@@ -184,7 +184,7 @@ func (s *search) solveStep(z *search, x point, free []int, mo *moments) (point, 
 func (s *search) moments(z *search, x point, free []int, zeta [][][]float64) (*moments, error) {
 	_, q, ok := s.errorsAt(x)
 	if !ok {
-		return nil, ErrNoFit
+		return nil, s.failure()
 	}
 	n := len(free)
 	m := &moments{zp: mat.NewDense(n, n, nil), zz: mat.NewDense(n, n, nil), pp: mat.NewDense(n, n, nil), ze: mat.NewVecDense(n, nil), zeta: zeta}
@@ -194,10 +194,10 @@ func (s *search) moments(z *search, x point, free []int, zeta [][][]float64) (*m
 	for i := range s.work {
 		w := &s.work[i]
 		if zeta == nil {
-			s.filtered(&z.work[i], q, t0)
+			s.filterAll(&z.work[i], q, t0)
 			m.zeta = append(m.zeta, s.derivatives(w, &z.work[i], x.c, cols, free))
 		}
-		s.filtered(w, q, t0)
+		s.filterAll(w, q, t0)
 		psi := s.derivatives(w, w, x.c, cols, free)
 		zi, e := m.zeta[i], s.rowErrors(w)
 		for a := range n {
@@ -215,7 +215,7 @@ func (s *search) moments(z *search, x point, free []int, zeta [][][]float64) (*m
 	}
 	m.merit = mat.Dot(m.ze, v) / (s.rss / float64(s.rows))
 	if math.IsNaN(m.merit) {
-		return nil, ErrNoFit
+		return nil, s.failure()
 	}
 	return m, nil
 }

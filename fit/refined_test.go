@@ -387,7 +387,7 @@ func TestDerivativesOfErrors(t *testing.T) {
 	_, q, _ := s.errorsAt(x)
 	q.delta = lti.SampleDelta(x.num, x.den, x.tau, s.h)
 	w := &s.work[0]
-	s.filtered(w, q, s.pad+s.Lead)
+	s.filterAll(w, q, s.pad+s.Lead)
 	which := []int{0, 1, 2, 3, 4, 5, 6}
 	d := s.derivatives(w, w, x.c, s.columns(q), which)
 	for _, k := range which {

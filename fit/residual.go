@@ -28,10 +28,15 @@ func autocovariances(e [][]float64, maxLag int) (sums []float64, pairs []int) {
 		if len(x) == 0 {
 			continue
 		}
-		x = lessMean(x)
-		for k := 0; k <= maxLag && k < len(x); k++ {
-			sums[k] += floats.Dot(x[k:], x[:len(x)-k])
-			pairs[k] += len(x) - k
+		v := about{x: x, mean: mean(x)}
+		for from := 0; from < len(x); from += block {
+			to := min(len(x), from+block)
+			rows := v.rows(from, min(len(x), to+maxLag))
+			for k := 0; k <= maxLag && from+k < len(x); k++ {
+				n := min(to, len(x)-k) - from
+				sums[k] += floats.Dot(rows[k:k+n], rows[:n])
+				pairs[k] += n
+			}
 		}
 	}
 	return sums, pairs

@@ -4,6 +4,7 @@ import (
 	"errors"
 	"math"
 	"math/bits"
+	"slices"
 
 	"gonum.org/v1/gonum/floats"
 	"gonum.org/v1/gonum/mat"
@@ -12,10 +13,39 @@ import (
 // transient holds the responses of 1/C from a record's first equation on: S to
 // a step, and G_i to a past error of one i+1 rows before.
 type transient struct {
-	step    []float64
-	free    [][]float64
-	settled int // rows after which S is constant and G vanishes
+	rows    int
+	settled int         // rows after which S is constant and G vanishes
+	step    []float64   // S over settled rows and a block more
+	free    [][]float64 // G over settled rows, and on to the end of their chunk
 	pulse   []float64
+}
+
+// block is how many rows at most a sum runs over at once that would else need as
+// many numbers as the record has rows.
+const block = 1 << 16
+
+// steps returns S over rows [from, to), at most a block of them.
+func (r *transient) steps(from, to int) []float64 {
+	at := min(from, r.settled)
+	return r.step[at : at+to-from]
+}
+
+// alongStep returns the product of S with x over its first rows.
+func (r *transient) alongStep(x []float64) float64 {
+	var sum float64
+	for from := 0; from < len(x); from += block {
+		to := min(len(x), from+block)
+		sum += floats.Dot(r.steps(from, to), x[from:to])
+	}
+	return sum
+}
+
+// addStep adds f S to the rows of x.
+func (r *transient) addStep(x []float64, f float64) {
+	for from := 0; from < len(x); from += block {
+		to := min(len(x), from+block)
+		floats.AddScaled(x[from:to], f, r.steps(from, to))
+	}
 }
 
 // settleBlock is after how many rows each it is asked whether responses have
@@ -28,43 +58,41 @@ func (r *transient) run(c []float64, rows int) {
 	n := len(c) - 1
 	const past = maxNoise // rows before the pulse
 	final := 1 / sum(c)
-	grow := func(x []float64, n int) []float64 {
-		if cap(x) < n {
-			return make([]float64, n)
-		}
-		return x[:n]
-	}
-	r.step = grow(r.step, rows)
-	r.pulse = grow(r.pulse, past+rows)
+	grow := func(x []float64, n int) []float64 { return slices.Grow(x[:0], n)[:n] }
+	r.rows = rows
+	r.step = r.step[:0]
+	r.pulse = grow(r.pulse, past)
 	for len(r.free) < n {
 		r.free = append(r.free, nil)
 	}
 	r.free = r.free[:n]
-	clear(r.pulse[:past])
-	g := r.pulse[past:]
+	clear(r.pulse)
 	last := 0.0 // of S
 	r.settled = 0
 	for settled := false; r.settled < rows && !settled; {
 		from, to := r.settled, min(rows, r.settled+settleBlock)
+		r.pulse = slices.Grow(r.pulse, to-from)[:past+to]
+		g := r.pulse[past:]
 		clear(g[from:to])
 		if from == 0 {
 			g[0] = 1
 		}
-		divide(r.pulse[:past+to], r.pulse[:past+to], c, past+from)
+		divide(r.pulse, r.pulse, c, past+from)
 		for k := from; k < to; k++ {
 			last += g[k]
-			r.step[k] = last
+			r.step = append(r.step, last)
 		}
 		r.settled, settled = to, true
 		for k := max(0, to-n-1); k < to; k++ {
 			settled = settled && math.Abs(r.step[k]-final) <= 1e-11*math.Abs(final) && math.Abs(g[k]) <= 1e-11
 		}
 	}
-	for k := r.settled; k < rows; k++ {
-		r.step[k] = final
+	for k := r.settled; k < min(rows, r.settled+block); k++ {
+		r.step = append(r.step, final)
 	}
+	g := r.pulse[past:]
 	for i := n - 1; i >= 0; i-- {
-		r.free[i] = grow(r.free[i], rows)
+		r.free[i] = grow(r.free[i], min(rows, (r.settled+chunk-1)/chunk*chunk))
 		out := r.free[i]
 		floats.ScaleTo(out[:r.settled], -c[i+1], g[:r.settled])
 		if i < n-1 && r.settled > 0 {
@@ -206,7 +234,7 @@ func (w *workspace) gather(l *local, e []float64) {
 		l.x, l.g = make([]float64, q), make([]float64, q)
 	}
 	l.x, l.g = l.x[:q], l.g[:q]
-	l.g[0] = floats.Dot(w.step[:len(e)], e)
+	l.g[0] = w.alongStep(e)
 	m := min(w.settled, len(e))
 	for i := 1; i < q; i++ {
 		l.g[i] = -floats.Dot(w.free[i-1][:m], e[:m])
@@ -283,7 +311,7 @@ func (l *local) squares(e []float64) float64 {
 // squares, prior included.
 func (w *workspace) apply(t0 int) float64 {
 	e, x := w.e[t0:], w.all.x
-	floats.AddScaled(e, -x[0], w.step)
+	w.addStep(e, -x[0])
 	var rss float64
 	for i := 1; i < len(x); i++ {
 		floats.AddScaled(e[:w.settled], x[i], w.free[i-1][:w.settled])
