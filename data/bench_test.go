@@ -54,10 +54,37 @@ func BenchmarkReadTable(b *testing.B) {
 	b.SetBytes(int64(len(text)))
 	b.ReportAllocs()
 	for b.Loop() {
-		_, err := readTable(bytes.NewReader(text), "log.csv", &Layout{}, func(*layout) ([]int, []int, error) { return []int{0, 1, 2, 3, 4}, []int{0}, nil })
+		_, err := readTable(b.Context(), bytes.NewReader(text), "log.csv", &Layout{}, func(*layout) ([]int, []int, error) { return []int{0, 1, 2, 3, 4}, []int{0}, nil })
 		if err != nil {
 			b.Fatal(err)
 		}
 	}
 	b.ReportMetric(rows*float64(b.N)/b.Elapsed().Seconds(), "rows/s")
+}
+
+// BenchmarkLog is what reading does with columns: all of it, and the search for flaws alone.
+func BenchmarkLog(b *testing.B) {
+	const rows = 200_000
+	g := &Rig{Log: LogColumns{Time: "t", Input: "u", Output: "y", Reference: "r", Dither: "d"}}
+	l := &log{file: "log.csv", rig: g}
+	var err error
+	if l.table, err = readTable(b.Context(), bytes.NewReader(wideLog(rows)), "log.csv", &Layout{}, l.choose); err != nil {
+		b.Fatal(err)
+	}
+	for name, do := range map[string]func() error{
+		"experiment": func() error { l.flaws = nil; _, err := l.experiment(b.Context()); return err },
+		"flaws":      func() error { l.flaws = nil; clear(l.dropped); return l.findFlaws(b.Context()) },
+	} {
+		b.Run(name, func(b *testing.B) {
+			if _, err := l.experiment(b.Context()); err != nil {
+				b.Fatal(err)
+			}
+			for b.Loop() {
+				if err := do(); err != nil {
+					b.Fatal(err)
+				}
+			}
+			b.ReportMetric(rows*float64(b.N)/b.Elapsed().Seconds(), "rows/s")
+		})
+	}
 }

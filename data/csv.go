@@ -5,6 +5,7 @@ import (
 	"bytes"
 	"compress/flate"
 	"compress/gzip"
+	"context"
 	"crypto/sha256"
 	"encoding/binary"
 	"encoding/hex"
@@ -13,6 +14,7 @@ import (
 	"hash"
 	"io"
 	"math"
+	"slices"
 	"strings"
 	"unicode/utf16"
 	"unicode/utf8"
@@ -25,10 +27,21 @@ type source struct {
 	raw io.Reader
 	sum hash.Hash
 	how string // they came, for people: "gzip, UTF-16, "
+
+	size int64
 }
+
+// sized is what knows how many bytes it has, as a bytes.Reader does.
+type sized interface{ Size() int64 }
+
+// Size returns 0 where that is not known, or bytes came packed.
+func (s *source) Size() int64 { return s.size }
 
 func newSource(r io.Reader) (*source, error) {
 	s := &source{sum: sha256.New()}
+	if r, ok := r.(sized); ok {
+		s.size = r.Size()
+	}
 	s.raw = io.TeeReader(r, s.sum)
 	buffered := bufio.NewReaderSize(s.raw, 1<<16)
 	s.Reader = buffered
@@ -38,7 +51,7 @@ func newSource(r io.Reader) (*source, error) {
 			return nil, err
 		}
 		buffered = bufio.NewReaderSize(unpacked, 1<<16)
-		s.Reader, s.how = buffered, "gzip, "
+		s.Reader, s.how, s.size = buffered, "gzip, ", 0
 	}
 	switch mark, _ := buffered.Peek(2); string(mark) {
 	case "\xff\xfe":
@@ -147,6 +160,7 @@ func (m *lineMap) at(row int) int {
 // A reader cuts a log into lines and those into numbers.
 type reader struct {
 	table
+	ctx    context.Context
 	file   string
 	want   []int    // column asked for -> field
 	clock  []*clock // field -> clock that it is read by, nil: plain numbers
@@ -216,9 +230,9 @@ func readHead(src io.Reader, file string) (head []byte, whole bool, err error) {
 	return bytes.TrimPrefix(head[:n], []byte("\xef\xbb\xbf")), whole, nil
 }
 
-// readTable reads a log. choose is told the layout and returns the fields wanted, and which of them hold stamps (indices
+// readTable reads a log, until ctx is done. choose is told the layout and returns the fields wanted, and which of them hold stamps (indices
 // into them). given is what the rig file says of the layout.
-func readTable(src io.Reader, file string, given *Layout, choose func(*layout) (fields, stamps []int, err error)) (*table, error) {
+func readTable(ctx context.Context, src io.Reader, file string, given *Layout, choose func(*layout) (fields, stamps []int, err error)) (*table, error) {
 	head, whole, err := readHead(src, file)
 	if err != nil {
 		return nil, err
@@ -231,7 +245,7 @@ func readTable(src io.Reader, file string, given *Layout, choose func(*layout) (
 	if err != nil {
 		return nil, inFile(file, err)
 	}
-	r := &reader{table: table{layout: *l}, file: file, want: fields}
+	r := &reader{table: table{layout: *l}, ctx: ctx, file: file, want: fields}
 	r.columns = make([][]float64, len(fields))
 	r.values = make([]float64, len(fields))
 	r.part = make([]int, len(l.names))
@@ -276,7 +290,11 @@ func (r *reader) read(head []byte, src io.Reader, whole bool) error {
 	buf := make([]byte, 0, 4*headSize)
 	buf = append(buf, head...)
 	line := 1
+	reserved := false
 	for {
+		if err := r.ctx.Err(); err != nil {
+			return err
+		}
 		rest := buf
 		for {
 			i := bytes.IndexByte(rest, r.lineEnd)
@@ -297,6 +315,10 @@ func (r *reader) read(head []byte, src io.Reader, whole bool) error {
 			}
 			break
 		}
+		if s, ok := src.(sized); ok && !reserved && r.rows > 0 {
+			r.reserve(float64(r.rows) / float64(len(buf)-len(rest)) * float64(s.Size()))
+			reserved = true
+		}
 		if len(rest) > maxLine {
 			return inFile(r.file, tooLong(line))
 		}
@@ -316,6 +338,17 @@ func (r *reader) read(head []byte, src io.Reader, whole bool) error {
 		return &ParseError{File: r.file, Err: fmt.Errorf("%w: none", ErrTooShort), Hint: "the log has a header and nothing else"}
 	}
 	return nil
+}
+
+// mostReserved bounds the rows that columns have room for from the start.
+const mostReserved = 1 << 24
+
+// reserve makes room for about so many rows: columns that grow are copied, and what they grew out of stays for a while.
+func (r *reader) reserve(rows float64) {
+	const more = 1.02
+	for i, c := range r.columns {
+		r.columns[i] = slices.Grow(c, max(0, int(min(more*rows, mostReserved))-len(c)))
+	}
 }
 
 // line reads one line of the part of the log where the rows are. open: the file ends in it, without a line end.

@@ -1,30 +1,30 @@
 package data
 
 import (
+	"context"
 	"fmt"
 	"math"
 	"slices"
 )
 
 // findFlaws looks at each column and marks the rows that a fit should not use.
-func (l *log) findFlaws() {
-	l.findMissing()
-	l.findLimits()
-	l.findTrips()
-	l.findStuck()
-	l.findRest()
-	l.findSpikes()
+func (l *log) findFlaws(ctx context.Context) error {
+	steps := []func(){l.findMissing, l.findLimits, l.findTrips, l.findStuck, l.findRest, l.findSpikes}
 	for _, i := range []int{l.u, l.y} {
-		l.findQuantisation(i)
-		l.findDrift(i)
+		steps = append(steps, func() { l.findQuantisation(i) }, func() { l.findDrift(i) })
 	}
-	l.findConstant()
-	l.findSlowTelemetry()
-	l.compareClocks()
-	l.findLines()
-	if !l.has(FlawClocks) { // which would pass for play
-		l.findActuator()
+	steps = append(steps, l.findConstant, l.findSlowTelemetry, l.compareClocks, l.findLines, func() {
+		if !l.has(FlawClocks) { // which would pass for play
+			l.findActuator()
+		}
+	})
+	for _, step := range steps {
+		if err := ctx.Err(); err != nil {
+			return err
+		}
+		step()
 	}
+	return nil
 }
 
 // findConstant names a dither that never moves, and a reference that does not where there is no dither that does.

@@ -1,6 +1,7 @@
 package data
 
 import (
+	"context"
 	"errors"
 	"fmt"
 	"io"
@@ -38,8 +39,14 @@ func Open(path string, open func(string) (fs.File, error)) (fs.File, error) {
 // ReadLog reads one log, plain or packed by gzip, as the rig file says. file is the log's name, for messages.
 //
 // What is wrong with the log but can be lived with is listed in the experiment's Flaws, each with what was done
-// about it; what cannot comes back as a *ParseError. The rig file lacking what NeedLog asks for is an error, too.
+// about it; what cannot comes back as a *ParseError. The rig file lacking what NeedLog asks for is an error, too. A
+// reader that tells its Size, as a bytes.Reader does, spares columns that grow.
 func ReadLog(r io.Reader, file string, rig *Rig) (*Experiment, error) {
+	return ReadLogContext(context.Background(), r, file, rig)
+}
+
+// ReadLogContext is ReadLog until ctx is done, whose error it then returns.
+func ReadLogContext(ctx context.Context, r io.Reader, file string, rig *Rig) (*Experiment, error) {
 	if err := rig.NeedLog(); err != nil {
 		return nil, err
 	}
@@ -48,7 +55,7 @@ func ReadLog(r io.Reader, file string, rig *Rig) (*Experiment, error) {
 		return nil, readingError(file, err)
 	}
 	l := &log{file: file, rig: rig}
-	t, err := readTable(src, file, &rig.Layout, l.choose)
+	t, err := readTable(ctx, src, file, &rig.Layout, l.choose)
 	if err != nil {
 		return nil, err
 	}
@@ -57,7 +64,7 @@ func ReadLog(r io.Reader, file string, rig *Rig) (*Experiment, error) {
 		return nil, readingError(file, err)
 	}
 	l.table = t
-	exp, err := l.experiment()
+	exp, err := l.experiment(ctx)
 	if err != nil {
 		return nil, err
 	}
@@ -148,7 +155,7 @@ func (l *log) fault(row int, hint, format string, args ...any) error {
 }
 
 // experiment turns the columns into segments.
-func (l *log) experiment() (*Experiment, error) {
+func (l *log) experiment(ctx context.Context) (*Experiment, error) {
 	exp := &Experiment{File: l.file, Rows: l.rows, Columns: l.names, Layout: l.describe()}
 	if l.rows == 1 {
 		return nil, l.fault(0, fmt.Sprintf("a fit needs %d rows at the very least", MinSegment), "%w: only this one", ErrTooShort)
@@ -164,7 +171,9 @@ func (l *log) experiment() (*Experiment, error) {
 	}
 	exp.InputStep, exp.OutputStep = grid(l.levels(l.columns[l.u]), fewestInput), grid(l.levels(l.columns[l.y]), fewestInput)
 	l.undoSkew()
-	l.findFlaws()
+	if err := l.findFlaws(ctx); err != nil {
+		return nil, err
+	}
 	if 2*l.clipped > l.rows {
 		return nil, l.mostlyBeyond()
 	}
