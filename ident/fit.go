@@ -18,9 +18,21 @@ import (
 type Options struct {
 	Seed     uint64                // of the draws of a short log
 	Workers  int                   // structures fitted at once; 0: one a core
-	Progress func(done, total int) // called as structures are done; total 0: unknown
+	Progress func(done, total int) // called as structures are done and rows gone through, from several goroutines; total 0: unknown
+	Referee  bool                  // the other methods see all rows of a long log, too, and not some of them
 
 	known *Model // whose structure Refit takes
+}
+
+// interrupt returns what a fit asks now and then: it reports that rows go by, and
+// ends with ctx.
+func (o Options) interrupt(ctx context.Context) func() error {
+	return func() error {
+		if o.Progress != nil {
+			o.Progress(0, 0)
+		}
+		return ctx.Err()
+	}
 }
 
 // Thresholds of the verdict.
@@ -53,7 +65,22 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 		return m, err
 	}
 	m.Noise.SamplePeriod = period
-	out := outside(exps)
+	var out Outside
+	var law *LawCheck
+	var deaf error
+	if err := Each(ctx, 3, opt.Workers, func(i int) error {
+		switch i {
+		case 0:
+			out = outside(exps)
+		case 1:
+			law = checkLaw(exps, rig)
+		case 2:
+			deaf = refuseDeaf(recs)
+		}
+		return nil
+	}); err != nil {
+		return m, err
+	}
 	m.Evidence.OutsideShare = out.Share
 	for _, e := range exps {
 		q := &m.Evidence.Resolution
@@ -62,12 +89,11 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 	if out.Quiet {
 		return m.refuse(refuseQuiet(out))
 	}
-	if err := refuseShifted(checkLaw(exps, rig), rig); err != nil {
+	if err := refuseShifted(law, rig); err != nil {
 		return m.refuse(err)
 	}
-
-	if err := refuseDeaf(recs); err != nil {
-		return m.refuse(err)
+	if deaf != nil {
+		return m.refuse(deaf)
 	}
 
 	sc := scopeOf(rig, period).with(opt.known)
@@ -101,9 +127,11 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 			Do:   "log a longer run",
 		})
 	}
-	f, ranked, err := finish(p, ranked, finalists)
-	if err != nil {
+	f, ranked, err := finish(ctx, p, ranked, finalists)
+	if errors.As(err, &refused) {
 		return m.refuse(err)
+	} else if err != nil {
+		return m, err
 	}
 	if err := m.tests(p, recs, f); err != nil {
 		return m, err
@@ -123,20 +151,16 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 	if m.Evidence.Structures = structures(ranked); opt.known != nil {
 		m.Evidence.Structures = against(tried)
 	}
-	whole, filled, err := s.restored(f)
+	seen, err := s.seen(f, outsideSignals(exps), opt.Referee)
 	if err != nil {
 		return m, err
-	}
-	signals := outsideSignals(exps)
-	if p != sp {
-		signals = spreadSignals(signals, chooseRows)
 	}
 	if err := Each(ctx, 2, opt.Workers, func(i int) (err error) {
 		if i == 0 {
 			m.FrequencyResponse = m.Responses(bandDraws, opt.Seed)
 			return nil
 		}
-		m.Evidence.Methods, err = methods(ctx, whole, filled, signals, f, m, opt.Workers)
+		m.Evidence.Methods, err = methods(ctx, seen, f, m, opt.Workers)
 		return err
 	}); err != nil {
 		return m, err
@@ -158,7 +182,7 @@ func Fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, opt Option
 
 // finish fits the best structure whose parameters the log tells apart to the
 // end, and puts it first. It looks at the first few.
-func finish(p *fit.Predictor, ranked []*candidate, few int) (*fit.Prediction, []*candidate, error) {
+func finish(ctx context.Context, p *fit.Predictor, ranked []*candidate, few int) (*fit.Prediction, []*candidate, error) {
 	for i, c := range ranked[:min(few, len(ranked))] {
 		if c.bic > ranked[0].bic+farBehind {
 			break
@@ -170,6 +194,9 @@ func finish(p *fit.Predictor, ranked []*candidate, few int) (*fit.Prediction, []
 		if err == nil {
 			rest := slices.Delete(slices.Clone(ranked), i, i+1)
 			return f, append([]*candidate{c}, rest...), nil
+		}
+		if ctx.Err() != nil {
+			return nil, nil, ctx.Err()
 		}
 	}
 	return nil, nil, &RefusedError{What: "the log does not tell the plant's parameters apart", Do: "log a run with a stronger probe"}
@@ -211,18 +238,27 @@ func records(exps []*data.Experiment) ([]fit.Record, float64, error) {
 	return recs, period, nil
 }
 
-// spreadOver takes about so many rows in blocks spread evenly over the records;
-// of short records some are taken whole, others not at all.
-func spreadOver(recs []fit.Record, rows int) []fit.Record {
+// stretch is samples [from, to) of a record. resumes: it shares the constant of
+// the stretch before.
+type stretch struct {
+	record, from, to int
+	resumes          bool
+}
+
+// stretches takes about so many rows in blocks spread evenly over the records;
+// of short records some are taken whole, others not at all. Of a log of more
+// than chooseRows rows a block lies where, in its share of the record, the input
+// moves most: the probe may have acted for a part of it only.
+func stretches(recs []fit.Record, rows int) []stretch {
 	const blocks, block = 5, 2000
 	var total int
 	for _, r := range recs {
 		total += len(r.Y)
 	}
-	var out []fit.Record
+	var out []stretch
 	due := 0.0       // rows not yet taken of those passed
 	resumed := false // the constant of the record before is among those taken
-	for _, r := range recs {
+	for i, r := range recs {
 		resumed = resumed && r.Resumes
 		due += float64(rows) * float64(len(r.Y)) / float64(total)
 		if due < float64(min(block, len(r.Y))) && len(recs) > 1 {
@@ -237,15 +273,40 @@ func spreadOver(recs []fit.Record, rows int) []fit.Record {
 			if k > 1 {
 				from = b * (len(r.Y) - size) / (k - 1)
 			}
-			to := min(from+size, len(r.Y))
-			cut := r.Rows(from, to)
-			cut.Resumes = resumed && k == 1
-			out = append(out, cut)
+			if total > chooseRows {
+				from = liveliest(r.U, b*len(r.U)/k, (b+1)*len(r.U)/k, size)
+			}
+			out = append(out, stretch{i, from, min(from+size, len(r.Y)), resumed && k == 1})
 		}
 		resumed = true
 	}
 	return out
 }
+
+// liveliest returns where in [from, to) of u so many rows start, to half of them,
+// in which it moves most.
+func liveliest(u []float64, from, to, rows int) int {
+	at, most := from, -1.0
+	for k := from; k+rows <= to; k += max(1, rows/2) {
+		if v := about(u[k : k+rows]); v > most {
+			at, most = k, v
+		}
+	}
+	return at
+}
+
+// taken cuts records to stretches.
+func taken(recs []fit.Record, list []stretch) []fit.Record {
+	var out []fit.Record
+	for _, s := range list {
+		cut := recs[s.record].Rows(s.from, s.to)
+		cut.Resumes = s.resumes
+		out = append(out, cut)
+	}
+	return out
+}
+
+func spreadOver(recs []fit.Record, rows int) []fit.Record { return taken(recs, stretches(recs, rows)) }
 
 func (s structure) String() string {
 	words := counted(s.poles, "pole")

@@ -66,6 +66,7 @@ type wrongOutput struct {
 // searched is what the search for a structure came to.
 type searched struct {
 	recs, some []fit.Record   // all rows, and those that structures are compared on
+	parts      []stretch      // which these are of recs; nil: all
 	p, sp      *fit.Predictor // of recs and of some
 	chooser    *chooser       // on some
 	ranked     []*candidate   // best first
@@ -86,6 +87,9 @@ func search(ctx context.Context, recs []fit.Record, period float64, sc scope, op
 			return s, err
 		}
 		more := s.look()
+		if err := ctx.Err(); err != nil {
+			return s, err
+		}
 		if len(more) == 0 || turn == leftOutSearch {
 			return s, nil
 		}
@@ -100,10 +104,12 @@ func (s *searched) choose(ctx context.Context, period float64, sc scope, opt Opt
 	if s.p, err = fit.NewPredictor(s.recs, period, maxDelay); err != nil {
 		return &RefusedError{What: err.Error(), Do: "log a longer run"}
 	}
-	s.some, s.sp = s.recs, s.p
+	s.p.Interrupt = opt.interrupt(ctx)
+	s.some, s.sp, s.parts = s.recs, s.p, nil
 	if s.p.Rows() > chooseRows {
-		s.some = spreadOver(s.recs, chooseRows)
-		if s.sp, err = fit.NewPredictor(s.some, period, maxDelay); err != nil {
+		s.parts = stretches(s.recs, chooseRows)
+		s.some = taken(s.recs, s.parts)
+		if s.sp, err = s.p.On(s.some); err != nil {
 			return err
 		}
 	}
@@ -137,11 +143,10 @@ func (s *searched) look() []wrongOutput {
 			return nil
 		}
 		recs = without(recs, more)
-		next, err := fit.NewPredictor(recs, p.Period, p.DelayRange[1])
+		next, err := p.On(recs)
 		if err != nil {
 			return nil
 		}
-		next.DelayRange = p.DelayRange
 		better, err := next.Fit(f, compareTol, compareStep)
 		if err != nil {
 			return nil
@@ -156,24 +161,6 @@ func (s *searched) leaveOut(more []wrongOutput) {
 	s.recs = without(s.recs, more)
 	s.wrong = append(s.wrong, more...)
 	slices.SortFunc(s.wrong, func(a, b wrongOutput) int { return cmp.Or(cmp.Compare(a.record, b.record), cmp.Compare(a.row, b.row)) })
-}
-
-// restored returns the rows that structures are compared on with the outputs left
-// out as f has them most probably, for estimators that know no missing ones.
-func (s *searched) restored(f *fit.Prediction) (*fit.Predictor, []fit.Record, error) {
-	if len(s.wrong) == 0 {
-		return s.sp, s.some, nil
-	}
-	recs, err := s.sp.Restored(f)
-	if err != nil {
-		return nil, nil, err
-	}
-	p, err := fit.NewPredictor(recs, s.sp.Period, s.sp.DelayRange[1])
-	if err != nil {
-		return nil, nil, err
-	}
-	p.DelayRange = s.sp.DelayRange
-	return p, recs, nil
 }
 
 // without returns records with more outputs missing.
@@ -233,22 +220,22 @@ func standOut(o *fit.Outliers, recs []fit.Record, known bool) []wrongOutput {
 	}
 	for n := range o.Records() {
 		first, last := o.Rows(n)
-		wrong := make([]float64, last-first)
-		for k := range wrong {
-			wrong[k], _ = o.Single(n, first+k)
-		}
-		for k, w := range wrong {
-			if taken[n][first+k] || !(math.Abs(w) > bound) {
+		for k := first; k < last; k++ {
+			if taken[n][k] {
 				continue
 			}
-			if _, large := o.Single(n, first+k); large*large > w*w+clearlyRig {
+			w, large := o.Single(n, k)
+			if !(math.Abs(w) > bound) || large*large > w*w+clearlyRig {
 				continue
 			}
-			near := wrong[max(0, k-o.Memory):min(len(wrong), k+o.Memory+1)]
-			if slices.ContainsFunc(near, func(v float64) bool { return math.Abs(v) > math.Abs(w) }) {
-				continue
+			largest := true
+			for j := max(first, k-o.Memory); j < min(last, k+o.Memory+1); j++ {
+				v, _ := o.Single(n, j)
+				largest = largest && math.Abs(v) <= math.Abs(w)
 			}
-			out = append(out, wrongOutput{n, first + k, WhySpike})
+			if largest {
+				out = append(out, wrongOutput{n, k, WhySpike})
+			}
 		}
 	}
 	return out

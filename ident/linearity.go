@@ -38,11 +38,10 @@ func linearity(p *fit.Predictor, recs []fit.Record, f *fit.Prediction) float64 {
 	if len(long) == 0 {
 		return 1
 	}
-	q, err := fit.NewPredictor(long, p.Period, p.DelayRange[1])
+	q, err := p.On(long)
 	if err != nil {
 		return 1
 	}
-	q.DelayRange = p.DelayRange
 	errs, _, err := q.Errors(f)
 	if err != nil {
 		return 1

@@ -45,30 +45,58 @@ func outsideSignals(exps []*data.Experiment) [][][]float64 {
 	return out
 }
 
-// spreadSignals takes the same rows of the signals of all records as spreadOver
-// takes of the records.
-func spreadSignals(signals [][][]float64, rows int) [][][]float64 {
-	var out [][][]float64
-	for j := 0; signals != nil && j < len(signals[0]); j++ {
-		var recs []fit.Record
-		for _, s := range signals {
-			recs = append(recs, fit.Record{U: s[j], Y: s[j]})
-		}
-		for b, part := range spreadOver(recs, rows) {
-			if j == 0 {
-				out = append(out, nil)
+// seen is what the other methods work on: records without missing outputs, the
+// signals from outside beside them, and how many rows there are.
+type seen struct {
+	p       *fit.Predictor // of recs
+	recs    []fit.Record
+	signals [][][]float64 // record, signal; nil: none is logged
+	rows    int           // known outputs of recs
+	all     int           // and of the logs
+}
+
+// seen takes the rows that structures were compared on, or all, with the outputs
+// left out as f has them most probably. signals are those of all records.
+func (s *searched) seen(f *fit.Prediction, signals [][][]float64, all bool) (*seen, error) {
+	e := &seen{p: s.sp, recs: s.some, signals: signals, all: knownRows(s.recs)}
+	switch {
+	case all:
+		e.p, e.recs = s.p, s.recs
+	case s.parts != nil && signals != nil:
+		e.signals = nil
+		for _, part := range s.parts {
+			var cut [][]float64
+			for _, x := range signals[part.record] {
+				cut = append(cut, x[part.from:part.to])
 			}
-			out[b] = append(out[b], part.U)
+			e.signals = append(e.signals, cut)
 		}
 	}
-	return out
+	e.rows = knownRows(e.recs)
+	if len(s.wrong) == 0 {
+		return e, nil
+	}
+	var err error
+	if e.recs, err = e.p.Restored(f); err == nil {
+		e.p, err = e.p.On(e.recs)
+	}
+	return e, err
+}
+
+// knownRows counts the outputs of records that are not missing.
+func knownRows(recs []fit.Record) int {
+	n := 0
+	for _, r := range recs {
+		n += len(r.Y) - len(r.Missing)
+	}
+	return n
 }
 
 // methods estimates the poles by other ways than maximum likelihood and says
-// whether they find the poles that matter where the model has them. p holds
-// recs, f is the estimate from them or from more of the same log.
-func methods(ctx context.Context, p *fit.Predictor, recs []fit.Record, signals [][][]float64, f *fit.Prediction, m *Model, workers int) ([]Method, error) {
-	own := Method{Name: "prediction", Agrees: true, Poles: [][2]float64{}, SD: []float64{}}
+// whether they find the poles that matter where the model has them. f is the
+// estimate from what they see or from more of the same logs.
+func methods(ctx context.Context, s *seen, f *fit.Prediction, m *Model, workers int) ([]Method, error) {
+	own := Method{Name: "prediction", Agrees: true, Poles: [][2]float64{}, SD: []float64{}, Rows: s.all}
 	for _, r := range m.Poles {
 		own.Poles = append(own.Poles, [2]float64{r.Re, r.Im})
 		own.SD = append(own.SD, math.Hypot(r.ReSD, r.ImSD))
@@ -79,13 +107,14 @@ func methods(ctx context.Context, p *fit.Predictor, recs []fit.Record, signals [
 	err := Each(ctx, len(others), workers, func(i int) error {
 		e := others[i]
 		if _, joint := e.(fit.OutsideMethod); joint {
-			if signals != nil && f.Converged {
-				list[i] = byOutside(p, signals, f, m)
+			if s.signals != nil && f.Converged {
+				list[i] = byOutside(s.p, s.signals, f, m)
+				list[i].Rows = s.rows
 			}
 			return nil
 		}
-		method := Method{Name: e.Name(), Poles: [][2]float64{}}
-		found, err := e.Estimate(recs, signals, f)
+		method := Method{Name: e.Name(), Poles: [][2]float64{}, Rows: s.rows}
+		found, err := e.Estimate(s.recs, s.signals, f)
 		if err != nil {
 			method.Note = "says nothing here: " + err.Error()
 		} else {

@@ -97,28 +97,37 @@ func TestOutsideShowsAWrongNoiseShape(t *testing.T) {
 	}
 }
 
-// Blocks of the signals are those of the records.
-func TestSpreadSignals(t *testing.T) {
-	var recs []fit.Record
+// The signals beside records are of the same rows: some of them, or all.
+func TestSignalsAreOfTheRowsSeen(t *testing.T) {
+	var s searched
 	var signals [][][]float64
-	for _, n := range []int{30000, 12000, 7} {
+	for _, n := range []int{60000, 12000, 7} {
 		x, z := make([]float64, n), make([]float64, n)
 		for k := range x {
 			x[k], z[k] = float64(n+k), float64(-k)
 		}
-		recs, signals = append(recs, fit.Record{U: x, Y: x}), append(signals, [][]float64{x, z})
+		s.recs, signals = append(s.recs, fit.Record{U: x, Y: x}), append(signals, [][]float64{x, z})
 	}
-	blocks, beside := spreadOver(recs, 20000), spreadSignals(signals, 20000)
-	if len(blocks) != len(beside) {
-		t.Fatalf("%d blocks of records, %d of signals", len(blocks), len(beside))
-	}
-	for i, b := range blocks {
-		if len(beside[i]) != 2 || !slices.Equal(beside[i][0], b.U) || len(beside[i][1]) != len(b.U) {
-			t.Errorf("block %d differs", i)
+	s.parts = stretches(s.recs, chooseRows)
+	s.some = taken(s.recs, s.parts)
+	for _, all := range []bool{false, true} {
+		e, err := s.seen(nil, signals, all)
+		if err != nil {
+			t.Fatal(err)
 		}
-	}
-	if spreadSignals(nil, 20000) != nil {
-		t.Error("signals from nothing")
+		rows := 0
+		for i, r := range e.recs {
+			rows += len(r.Y)
+			if len(e.signals[i]) != 2 || !slices.Equal(e.signals[i][0], r.U) || len(e.signals[i][1]) != len(r.U) {
+				t.Errorf("all %v: record %d differs", all, i)
+			}
+		}
+		if e.all != 72007 || e.rows != rows || all != (rows == 72007) || rows < chooseRows*9/10 {
+			t.Errorf("all %v: %d of %d rows seen, %d in the records", all, e.rows, e.all, rows)
+		}
+		if e, _ := s.seen(nil, nil, all); e.signals != nil {
+			t.Error("signals from nothing")
+		}
 	}
 }
 

@@ -246,6 +246,7 @@ type Method struct {
 	Poles  [][2]float64 `json:"poles"` // re, im in rad/s
 	SD     []float64    `json:"sd"`    // of each pole by the method's own account, rad/s; null: it gives none
 	Agrees bool         `json:"agrees"`
+	Rows   int          `json:"rows"` // of the logs that the method saw; 0 in files of older versions
 	// Probability is that of so large a difference from the final plant by
 	// chance; nil where it was not tested.
 	Probability *float64 `json:"probability_by_chance,omitempty"`

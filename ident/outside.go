@@ -65,8 +65,9 @@ func outside(exps []*data.Experiment) Outside {
 		var recs []fit.Record
 		for _, e := range exps {
 			for _, s := range e.Pieces() {
-				y, u := append([]float64(nil), s.Y...), append([]float64(nil), s.U...)
+				y, u := s.Y, s.U
 				if less != nil {
+					y, u = slices.Clone(y), slices.Clone(u)
 					less(s, y, u)
 				}
 				recs = append(recs, fit.Record{U: y, Y: u}) // the law's input is y, its output u
@@ -162,15 +163,21 @@ const roundingRows = 20000
 // switch.
 func rounding(exps []*data.Experiment, column func(data.Segment) []float64) float64 {
 	const fewest = 8
-	var all []float64
+	var pieces [][]float64
+	rows := 0
 	for _, e := range exps {
 		for _, s := range e.Pieces() {
-			all = append(all, column(s)...)
+			pieces = append(pieces, column(s))
+			rows += len(s.Y)
 		}
 	}
 	var x []float64
-	for k := 0; k < len(all); k += 1 + len(all)/roundingRows {
-		x = append(x, all[k])
+	k := 0 // in the piece, of the next value taken
+	for _, piece := range pieces {
+		for ; k < len(piece); k += 1 + rows/roundingRows {
+			x = append(x, piece[k])
+		}
+		k -= len(piece)
 	}
 	slices.Sort(x)
 	levels := slices.Compact(slices.Clone(x))
@@ -254,16 +261,19 @@ func checkLaw(exps []*data.Experiment, rig *data.Rig) *LawCheck {
 	if law == nil {
 		return nil
 	}
-	// The dither may have been logged in the input's row or in its own.
-	score := func(shift int, sign float64) float64 {
-		return math.Min(lawResidual(exps, law, shift, shift, sign), lawResidual(exps, law, shift, 0, sign))
-	}
+	left := lawResiduals(exps, law)
 	best := LawCheck{Unexplained: math.Inf(1)}
-	for _, sign := range []float64{1, -1} {
+	for turned := range 2 {
 		for _, shift := range []int{0, -1, 1} {
 			// A shift must clearly beat what the rig file says.
-			if v := score(shift, sign); v < 0.5*best.Unexplained {
-				best = LawCheck{Unexplained: v, Rows: shift, SignWrong: sign < 0}
+			v := math.Inf(1)
+			for i, g := range lawGuesses {
+				if g.shift == shift {
+					v = math.Min(v, left[i][turned])
+				}
+			}
+			if v < 0.5*best.Unexplained {
+				best = LawCheck{Unexplained: v, Rows: shift, SignWrong: turned == 1}
 			}
 		}
 	}
@@ -306,22 +316,73 @@ func refuseShifted(c *LawCheck, rig *data.Rig) error {
 // that ran.
 const clearLaw = 0.1
 
-// lawResidual is the share of the input's variance that the law leaves with the
-// input moved by shift rows and the dither by its own.
-func lawResidual(exps []*data.Experiment, law *data.Stopgap, shift, ditherShift int, sign float64) float64 {
-	by := make([]float64, len(law.Numerator))
-	for i, c := range law.Numerator {
-		by[i] = sign * c
+// lawGuesses are the rows by which input and dither may have been logged late.
+// The dither may have been logged in the input's row or in its own.
+var lawGuesses = []struct{ shift, dither int }{{0, 0}, {-1, -1}, {-1, 0}, {1, 1}, {1, 0}}
+
+// lawResiduals returns the share of the input's variance that the law leaves
+// under each of lawGuesses, as it is and with its sign turned.
+func lawResiduals(exps []*data.Experiment, law *data.Stopgap) [][2]float64 {
+	// What the law leaves, with either sign, and the input itself.
+	type signals [3]float64
+	n := len(lawGuesses)
+	total := make([]signals, n)
+	for _, e := range exps {
+		for _, s := range e.Pieces() {
+			first, last := max(len(law.Numerator), len(law.Denominator))+1, len(s.Y)-1
+			if first >= last {
+				continue
+			}
+			means, squares := make([]signals, n), make([]signals, n)
+			for _, mean := range []bool{true, false} {
+				for k := first; k < last; k++ {
+					var right float64
+					for i, c := range law.Numerator {
+						y := s.Y[k-i]
+						if s.R != nil {
+							y -= s.R[k-i]
+						}
+						right += c * y
+					}
+					for j, g := range lawGuesses {
+						var left float64
+						for i, c := range law.Denominator {
+							u := s.U[k+g.shift-i]
+							if s.D != nil {
+								u -= s.D[k+g.dither-i]
+							}
+							left += c * u
+						}
+						for i, v := range (signals{left + right, left - right, left}) {
+							if mean {
+								means[j][i] += v
+							} else {
+								v -= means[j][i]
+								squares[j][i] += v * v
+							}
+						}
+					}
+				}
+				for j := range means {
+					for i := range means[j] {
+						if mean {
+							means[j][i] /= float64(last - first)
+						} else {
+							total[j][i] += squares[j][i]
+						}
+					}
+				}
+			}
+		}
 	}
-	var rss, all float64
-	lawErrors(exps, law.Denominator, by, by, shift, ditherShift, func(w, v []float64) {
-		rss += about(w)
-		all += about(v)
-	})
-	if all == 0 {
-		return math.Inf(1)
+	out := make([][2]float64, n)
+	for j, t := range total {
+		out[j] = [2]float64{math.Inf(1), math.Inf(1)}
+		if t[2] != 0 {
+			out[j] = [2]float64{t[0] / t[2], t[1] / t[2]}
+		}
 	}
-	return rss / all
+	return out
 }
 
 // LawLeaves returns the share of the input's variance that the linear law
@@ -337,7 +398,7 @@ func LawLeaves(exps []*data.Experiment, den, byY, byR []float64) float64 {
 		slices.Sort(x)
 		return x[len(x)/2]
 	}
-	lawErrors(exps, den, byY, byR, 0, 0, func(w, v []float64) {
+	lawErrors(exps, den, byY, byR, func(w, v []float64) {
 		all += about(v)
 		at := middle(slices.Clone(w))
 		for _, x := range w {
@@ -351,8 +412,8 @@ func LawLeaves(exps []*data.Experiment, den, byY, byR []float64) float64 {
 }
 
 // lawErrors calls f for each piece of the logs with the errors of a law and with
-// its left-hand side, the input moved by shift rows and the dither by its own.
-func lawErrors(exps []*data.Experiment, den, byY, byR []float64, shift, ditherShift int, f func(w, v []float64)) {
+// its left-hand side.
+func lawErrors(exps []*data.Experiment, den, byY, byR []float64, f func(w, v []float64)) {
 	for _, e := range exps {
 		for _, s := range e.Pieces() {
 			n := max(len(den), len(byY), len(byR))
@@ -360,9 +421,9 @@ func lawErrors(exps []*data.Experiment, den, byY, byR []float64, shift, ditherSh
 			for k := n + 1; k < len(s.Y)-1; k++ {
 				var left, right float64
 				for i, c := range den {
-					u := s.U[k+shift-i]
+					u := s.U[k-i]
 					if s.D != nil {
-						u -= s.D[k+ditherShift-i]
+						u -= s.D[k-i]
 					}
 					left += c * u
 				}

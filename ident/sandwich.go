@@ -30,8 +30,10 @@ func (r Residuals) misses() bool {
 // (1982) 1-25). It says nothing of how far that best fit is from the true poles.
 func (m *Model) covariance(p *fit.Predictor, f *fit.Prediction) error {
 	m.Evidence.IntervalsBy = ByCurvature
-	if err := p.Covariance(f); err != nil {
-		return err
+	if f.Cov == nil {
+		if err := p.Covariance(f); err != nil {
+			return err
+		}
 	}
 	if !m.Evidence.Residuals.misses() || f.Rows > sandwichRows {
 		return nil

@@ -223,11 +223,10 @@ func fitAlone(one []*data.Experiment, p *fit.Predictor, f *fit.Prediction, opt O
 	if err != nil {
 		return nil, err
 	}
-	own, err := fit.NewPredictor(recs, p.Period, p.DelayRange[1])
+	own, err := p.On(recs)
 	if err != nil {
 		return nil, nil
 	}
-	own.DelayRange = p.DelayRange
 	est, err := own.Fit(copyOf(f), compareTol, compareStep)
 	if err != nil || own.Covariance(est) != nil {
 		return nil, nil

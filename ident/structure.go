@@ -113,14 +113,12 @@ type chooser struct {
 func newChooser(p *fit.Predictor, recs []fit.Record, sc scope, workers int) (*chooser, error) {
 	p.DelayRange = [2]float64{math.Min(sc.base, sc.delay[0]), math.Max(sc.base, sc.delay[1])}
 	c := &chooser{p: p, glance: p, best: math.Inf(1), reach: glanceReach, scope: sc, tried: make(map[structure]*candidate), workers: workers}
+	var err error
 	if p.Rows() > startRows+startRows/3 {
 		if r := busiest(recs, startRows); len(r.Y) == startRows {
-			g, err := fit.NewPredictor([]fit.Record{r}, p.Period, p.DelayRange[1])
-			if err != nil {
+			if c.glance, err = p.On([]fit.Record{r}); err != nil {
 				return nil, err
 			}
-			g.DelayRange = p.DelayRange
-			c.glance = g
 		}
 	}
 	long, err := fit.ChooseARX(recs, fit.ChooseOptions{Delay: 1, Criterion: fit.AICc})

@@ -42,7 +42,7 @@ func (m *Model) tests(p *fit.Predictor, recs []fit.Record, f *fit.Prediction) er
 		if n := len(whole) - 1; r.Resumes {
 			whole[n] = append(whole[n], r.Y...)
 		} else {
-			whole = append(whole, slices.Clone(r.Y))
+			whole = append(whole, slices.Clip(r.Y))
 		}
 	}
 	if len(whole) > 1 {
@@ -59,6 +59,9 @@ func (m *Model) tests(p *fit.Predictor, recs []fit.Record, f *fit.Prediction) er
 		m.Evidence.Residuals.CrossInput = 1
 	}
 	m.Evidence.Memories = float64(p.Rows()) / memory(decaying(f))
+	if p.Rows() > chooseRows {
+		recs = spreadOver(recs, chooseRows)
+	}
 	m.Evidence.ExplainedShare = explained(p, recs, f)
 	return nil
 }
@@ -99,20 +102,18 @@ func explained(p *fit.Predictor, recs []fit.Record, f *fit.Prediction) float64 {
 		first = append(first, r.Rows(0, cut))
 		rest = append(rest, r.Rows(cut, len(r.Y)))
 	}
-	a, err := fit.NewPredictor(first, p.Period, p.DelayRange[1])
+	a, err := p.On(first)
 	if err != nil {
 		return 0
 	}
-	a.DelayRange = p.DelayRange
 	part, err := a.Fit(f, compareTol, compareStep)
 	if err != nil {
 		return 0
 	}
-	b, err := fit.NewPredictor(rest, p.Period, p.DelayRange[1])
+	b, err := p.On(rest)
 	if err != nil {
 		return 0
 	}
-	b.DelayRange = p.DelayRange
 	e, _, err := b.Errors(part)
 	if err != nil {
 		return 0
