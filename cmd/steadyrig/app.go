@@ -1,6 +1,7 @@
 package main
 
 import (
+	"context"
 	"io"
 	"os"
 	"runtime/debug"
@@ -17,10 +18,12 @@ type app struct {
 	stderr io.Writer
 	now    time.Time
 	tool   string // name and version, as files carry it
+	ctx    context.Context
+	quiet  bool // no progress
 }
 
 func newApp(args []string, stdin io.Reader, stdout, stderr io.Writer) *app {
-	a := &app{args: args, stdin: stdin, stdout: stdout, stderr: stderr, now: time.Now(), tool: "steadyrig " + version()}
+	a := &app{args: args, stdin: stdin, stdout: stdout, stderr: stderr, now: time.Now(), tool: "steadyrig " + version(), ctx: context.Background()}
 	if s, err := strconv.ParseInt(os.Getenv("SOURCE_DATE_EPOCH"), 10, 64); err == nil {
 		a.now = time.Unix(s, 0).UTC()
 	}

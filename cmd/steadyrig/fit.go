@@ -24,7 +24,11 @@ for them. It writes model.json, or the file that --out names.
 
 With --exact it adds 95 % intervals of the poles that matter which rest on no
 long log and, where the probe was drawn at random, on nothing about the noise.
-They need the probe or the reference in the log.`,
+They need the probe or the reference in the log.
+
+The estimate is from all rows. On logs of more than 50000 structures are
+compared on so many, in stretches spread over the log, and the other methods
+check the poles there; with --referee these see all rows, too.`,
 		Example: "  steadyrig fit rig.toml run7.csv run8.csv",
 		Args:    wants(2, -1, "a rig file and one or more logs"),
 		RunE: func(cmd *cobra.Command, args []string) error {
@@ -55,6 +59,7 @@ They need the probe or the reference in the log.`,
 	s.addSeed(cmd)
 	s.addExact(cmd)
 	s.addHistory(cmd)
+	s.addReferee(cmd)
 	return cmd
 }
 
@@ -67,7 +72,7 @@ func (a *app) fit(ctx context.Context, exps []*data.Experiment, rig *data.Rig, s
 	}
 	bar := a.progress("fit", s.quiet)
 	defer bar.wipe()
-	model, err := ident.Fit(ctx, exps, rig, ident.Options{Seed: s.seed, Progress: bar.step})
+	model, err := ident.Fit(ctx, exps, rig, ident.Options{Seed: s.seed, Progress: bar.step, Referee: s.referee})
 	var refused *ident.RefusedError
 	if err != nil && !(errors.As(err, &refused) && model != nil) {
 		return nil, err

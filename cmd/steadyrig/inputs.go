@@ -10,6 +10,7 @@ import (
 	"math"
 	"os"
 	"path/filepath"
+	"runtime/debug"
 	"slices"
 	"strings"
 
@@ -69,9 +70,7 @@ func (a *app) logs(rig *data.Rig, names []string) ([]*data.Experiment, error) {
 	}
 	var exps []*data.Experiment
 	for _, path := range paths {
-		exp, _, err := load(a, path, func(r io.Reader, name string) (*data.Experiment, error) {
-			return data.ReadLog(r, name, rig)
-		})
+		exp, err := a.log(rig, path)
 		if err != nil {
 			return nil, err
 		}
@@ -91,8 +90,57 @@ func (a *app) logs(rig *data.Rig, names []string) ([]*data.Experiment, error) {
 		}
 		exps = append(exps, exp)
 	}
+	rows := 0
+	for _, exp := range exps {
+		rows += exp.Rows
+	}
+	if rows >= longLogs {
+		debug.SetGCPercent(longGarbage)
+	}
 	return exps, nil
 }
+
+// Of logs of so many rows and more, the columns are most of the memory; garbage may then come to less of it than usual,
+// and costs little to collect, since columns hold no pointers.
+const (
+	longLogs    = 1_000_000
+	longGarbage = 25 // per cent of what is in use
+)
+
+// log reads one log, and shows how far it is.
+func (a *app) log(rig *data.Rig, path string) (*data.Experiment, error) {
+	f, name, err := a.open(path)
+	if err != nil {
+		return nil, inputError(err)
+	}
+	defer f.Close()
+	in := &watched{Reader: f, bar: a.progress("read", a.quiet)}
+	defer in.bar.wipe()
+	if f, ok := f.(fs.File); ok {
+		if info, err := f.Stat(); err == nil && info.Mode().IsRegular() {
+			in.size = info.Size()
+		}
+	}
+	exp, err := data.ReadLogContext(a.ctx, in, name, rig)
+	return exp, inputError(err)
+}
+
+// watched is a reader that a bar follows.
+type watched struct {
+	io.Reader
+	bar        *progress
+	done, size int64 // size 0: unknown
+}
+
+func (w *watched) Read(p []byte) (int, error) {
+	n, err := w.Reader.Read(p)
+	w.done += int64(n)
+	w.bar.step(int(w.done), int(w.size))
+	return n, err
+}
+
+// Size returns how many bytes there are, where that is known.
+func (w *watched) Size() int64 { return w.size }
 
 // expand puts the files that a pattern matches in its place, by name; each file once. What is a file's name is no pattern.
 func expand(names []string) ([]string, error) {

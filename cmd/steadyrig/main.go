@@ -39,7 +39,9 @@ func run(ctx context.Context, args []string, stdin io.Reader, stdout, stderr io.
 			status = statusFault
 		}
 	}()
-	root := newRoot(newApp(args, stdin, stdout, stderr))
+	a := newApp(args, stdin, stdout, stderr)
+	a.ctx = ctx
+	root := newRoot(a)
 	root.SetArgs(append([]string{}, args...)) // nil would mean the process's own
 	root.SetIn(stdin)
 	root.SetOut(stdout)

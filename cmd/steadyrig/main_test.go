@@ -282,6 +282,35 @@ func TestInterrupted(t *testing.T) {
 	}
 }
 
+// onRead calls a function before the second read.
+type onRead struct {
+	io.Reader
+	reads int
+	call  func()
+}
+
+func (r *onRead) Read(p []byte) (int, error) {
+	if r.reads++; r.reads == 2 {
+		r.call()
+	}
+	return r.Reader.Read(p)
+}
+
+// ctrl-C in the middle of a log ends a fit, too.
+func TestInterruptedReading(t *testing.T) {
+	files := demoFiles(t, "hover", 1, func(r *demorig.Rig) { r.Rows = 20000 })
+	inFolder(t, map[string]string{"rig.toml": files["rig.toml"]})
+	ctx, cancel := context.WithCancel(context.Background())
+	status, stdout, stderr := callWith(t, ctx, &onRead{Reader: strings.NewReader(files["log.csv"]), call: cancel}, "fit", "rig.toml", "-")
+	if status != statusInterrupted || stdout != "" {
+		t.Errorf("exit status %d, standard output %q", status, stdout)
+	}
+	oneErrorLine(t, stderr, "interrupted")
+	if names := listing(t); !slices.Equal(names, []string{"rig.toml"}) {
+		t.Errorf("left behind: %v", names)
+	}
+}
+
 // A log without power from outside under a fixed linear law says nothing about the plant (Söderström & Stoica, System
 // Identification, 1989, ch. 10): it is refused with status 3 and a sentence that says what to do, and the partial
 // result is still written and printed.

@@ -5,6 +5,7 @@ import (
 	"strings"
 	"sync"
 	"testing"
+	"time"
 )
 
 // A bar is drawn from many goroutines, ends at 100 %, and is wiped off its line.
@@ -33,6 +34,15 @@ func TestProgress(t *testing.T) {
 	p.wipe()
 	if b.Len() != drawn {
 		t.Error("a line that is not there is wiped again")
+	}
+	// A block that knows no end stays within the bar.
+	for range 3 * barWidth {
+		p.last = time.Time{}
+		drawn = b.Len()
+		p.step(0, 0)
+		if line := b.String()[drawn:]; len(line) != len("\rdesign     [] 100 %")+barWidth || strings.Count(line, "====") != 1 {
+			t.Fatalf("drawn: %q", line)
+		}
 	}
 }
 

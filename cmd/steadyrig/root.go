@@ -35,6 +35,9 @@ func newRoot(a *app) *cobra.Command {
 			return nil
 		},
 		RunE: func(cmd *cobra.Command, args []string) error { return cmd.Help() },
+		PersistentPreRun: func(cmd *cobra.Command, args []string) {
+			a.quiet, _ = cmd.Flags().GetBool("quiet") // false where a command has none
+		},
 	}
 	// The template of the library lets flags run as wide as they are.
 	root.SetUsageTemplate(strings.ReplaceAll(root.UsageTemplate(), "FlagUsages |", fmt.Sprintf("FlagUsagesWrapped %d |", pageWidth)))
@@ -91,6 +94,8 @@ type settings struct {
 
 	noHistory bool
 
+	referee bool // the other methods of a fit see all rows
+
 	inner, outer string // forms asked for
 }
 
@@ -129,6 +134,11 @@ func (s *settings) checkForms() error {
 
 func (s *settings) design() design.Options {
 	return design.Options{Seed: s.seed, Inner: s.inner, Outer: s.outer}
+}
+
+// addReferee adds --referee to a command that fits.
+func (s *settings) addReferee(cmd *cobra.Command) {
+	cmd.Flags().BoolVar(&s.referee, "referee", false, "check a long log by the other methods on all of its rows, not on some of them")
 }
 
 // addExact adds --exact to a command that fits.

@@ -66,6 +66,7 @@ rig.toml, audit.json, model.json, loops.json and report.html into one folder.`,
 	s.addSeed(cmd)
 	s.addForms(cmd)
 	s.addExact(cmd)
+	s.addReferee(cmd)
 	return cmd
 }
 

@@ -86,6 +86,9 @@ func showMethods(p *page, m *ident.Model) {
 		poles, within, chance = append(poles, words.Rightmost(e.Poles)), append(within, words.Within(e)), append(chance, words.ByChance(e))
 	}
 	p.table(columns("method", name, "takes for granted", takes, ">rightmost pole", poles, ">95 %", within, "agrees", agrees, ">chance", chance))
+	if text := words.RowsSeen(m.Evidence.Methods); text != "" {
+		wrap(p.w, "  ", text)
+	}
 	for _, e := range m.Evidence.Methods {
 		if e.Note != "" && (!e.Agrees || len(e.Poles) == 0) {
 			p.item(e.Name, e.Note)

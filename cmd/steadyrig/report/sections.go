@@ -256,6 +256,9 @@ func plantSection(in Input) section {
 	for _, e := range m.Evidence.Methods {
 		methods.Rows = append(methods.Rows, []string{e.Name, words.Assumes[e.Name], words.Rightmost(e.Poles), words.Within(e), words.Agrees(e), words.ByChance(e), e.Note})
 	}
+	if text := words.RowsSeen(m.Evidence.Methods); text != "" {
+		methods.Notes = append(methods.Notes, text)
+	}
 	if len(methods.Rows) > 0 {
 		s.Tables = append(s.Tables, methods)
 	}

@@ -82,6 +82,17 @@ var Assumes = map[string]string{
 	"outside":    "only the outside signal",
 }
 
+// RowsSeen says where other methods worked on some rows of a long log only.
+func RowsSeen(methods []ident.Method) string {
+	for _, e := range methods {
+		if e.Rows < methods[0].Rows && e.Rows > 0 {
+			return fmt.Sprintf("%s saw all %d rows, the others %d of them, in stretches spread over the log; with --referee they see all.",
+				methods[0].Name, methods[0].Rows, e.Rows)
+		}
+	}
+	return ""
+}
+
 // Rightmost formats the pole with the largest real part.
 func Rightmost(poles [][2]float64) string {
 	if len(poles) == 0 {
