@@ -338,6 +338,9 @@ func (c *tally) row() string {
 		v := "-"
 		if c.bounded[i] > 0 {
 			v = fmt.Sprintf("%.2f", math.Sqrt(c.squares[i]/float64(c.bounded[i])))
+			if c.bounded[i] < c.right {
+				v += fmt.Sprintf(" (of %d)", c.bounded[i]) // the others hold it exactly
+			}
 		}
 		ratio = append(ratio, name+": "+v)
 		in = append(in, fmt.Sprintf("%s: %d", name, c.in[i]))
