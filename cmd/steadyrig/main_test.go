@@ -479,30 +479,40 @@ func TestNewDraft(t *testing.T) {
 	}
 }
 
+// openKept opens a result that testdata keeps, whatever the working folder.
+func openKept(t testing.TB, name string) *os.File {
+	t.Helper()
+	f, err := os.Open(filepath.Join(sourceFolder, "testdata", name))
+	if err != nil {
+		t.Fatal(err)
+	}
+	t.Cleanup(func() { f.Close() })
+	return f
+}
+
+// keptResults reads the rig file, model and loops that testdata keeps.
+func keptResults(t testing.TB) (*data.Rig, *ident.Model, *design.Loops) {
+	t.Helper()
+	rig, err := data.ReadRig(openKept(t, "rig.toml"), "rig.toml")
+	if err != nil {
+		t.Fatal(err)
+	}
+	model, err := ident.ReadModel(openKept(t, "model.json"), "model.json")
+	if err != nil {
+		t.Fatal(err)
+	}
+	loops, err := design.ReadLoops(openKept(t, "loops.json"), "loops.json")
+	if err != nil {
+		t.Fatal(err)
+	}
+	return rig, model, loops
+}
+
 // The pages as a person sees them, from results that are kept in testdata.
 func TestPages(t *testing.T) {
-	read := func(name string) *os.File {
-		f, err := os.Open(filepath.Join("testdata", name))
-		if err != nil {
-			t.Fatal(err)
-		}
-		t.Cleanup(func() { f.Close() })
-		return f
-	}
-	rig, err := data.ReadRig(read("rig.toml"), "rig.toml")
-	if err != nil {
-		t.Fatal(err)
-	}
-	model, err := ident.ReadModel(read("model.json"), "model.json")
-	if err != nil {
-		t.Fatal(err)
-	}
-	loops, err := design.ReadLoops(read("loops.json"), "loops.json")
-	if err != nil {
-		t.Fatal(err)
-	}
+	rig, model, loops := keptResults(t)
 	var audit ident.AuditReport
-	if err := json.NewDecoder(read("audit.json")).Decode(&audit); err != nil {
+	if err := json.NewDecoder(openKept(t, "audit.json")).Decode(&audit); err != nil {
 		t.Fatal(err)
 	}
 	small, err := data.ReadRig(strings.NewReader(smallRig), "small.toml")

@@ -11,7 +11,6 @@ import (
 	"sync"
 	"testing"
 
-	"steadyrig/data"
 	"steadyrig/design"
 	"steadyrig/ident"
 )
@@ -19,26 +18,7 @@ import (
 // watchedLog is what the rig of testdata writes under its loops, moved by a probe; from the middle on with gain times the gain.
 func watchedLog(t testing.TB, rows int, gain float64) string {
 	t.Helper()
-	read := func(name string) *os.File {
-		f, err := os.Open(filepath.Join(sourceFolder, "testdata", name))
-		if err != nil {
-			t.Fatal(err)
-		}
-		t.Cleanup(func() { f.Close() })
-		return f
-	}
-	rig, err := data.ReadRig(read("rig.toml"), "rig.toml")
-	if err != nil {
-		t.Fatal(err)
-	}
-	loops, err := design.ReadLoops(read("loops.json"), "loops.json")
-	if err != nil {
-		t.Fatal(err)
-	}
-	model, err := ident.ReadModel(read("model.json"), "model.json")
-	if err != nil {
-		t.Fatal(err)
-	}
+	rig, model, loops := keptResults(t)
 	var whole design.Record
 	for half := range 2 {
 		if half == 1 {
